@@ -150,11 +150,16 @@ class Canvas:
     def line(
         self, x1: float, y1: float, x2: float, y2: float, colour: Colour, width: float = 1.0, *, dashed: bool = False
     ) -> None:
-        """Draw a straight line, ``width`` in design units."""
-        pen = QPen(qcolour(colour), max(1.0, width * self.scale))
+        """Draw a straight line, ``width`` in design units; upright and level ones fall on whole pixels."""
+        thick = max(1, round(width * self.scale))
+        if x1 == x2:
+            x1 = x2 = math.floor(x1) + 0.5 if thick % 2 else float(round(x1))
+        if y1 == y2:
+            y1 = y2 = math.floor(y1) + 0.5 if thick % 2 else float(round(y1))
+        pen = QPen(qcolour(colour), thick)
         pen.setCapStyle(Qt.PenCapStyle.FlatCap)
         if dashed:
-            pen.setDashPattern([4.0, 3.0])
+            pen.setDashPattern([4.0 * self.scale / thick, 3.0 * self.scale / thick])
         self.painter.setPen(pen)
         self.painter.drawLine(QPointF(x1, y1), QPointF(x2, y2))
 

@@ -342,7 +342,7 @@ def _draw_message(canvas: Canvas, box: Box, snapshot: Snapshot) -> None:
     canvas.fill(box, theme.panel)
     canvas.frame(box, theme.edge)
     inner = Box(box.x + canvas.px(56), box.y, box.width - canvas.px(112), box.height)
-    heading, body, line = canvas.px(64), canvas.px(32), canvas.px(33)
+    heading, body, line = canvas.px(64), canvas.px(32), max(1, canvas.px(33))
     lines: list[tuple[str, bool]] = []
     for note in snapshot.notes:
         wrapped = canvas.wrap(note, inner.width - canvas.px(20), _LARGE, 3)

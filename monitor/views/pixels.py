@@ -10,11 +10,11 @@ from dsp.picture import EyeImage
 
 TIME_MIN_UI, TIME_MAX_UI = -1.0, 1.0
 # a single trace must stand out from the empty panel: this share of the ramp at least
-_FAINTEST = 0.15
+_FAINTEST = 0.16
 # traces in the fullest bin of a distribution below which bins are made wider
 _FULL_BIN = 120.0
 # bends the logarithm down, so that the crowded parts keep their relief
-_BEND = 1.3
+_BEND = 1.6
 # rows that hold less than this share of all traces may fall outside the picture
 _CUT_SHARE = 1e-5
 
@@ -62,7 +62,7 @@ def density_indices(
 ) -> NDArray[np.uint8]:
     """Index into a colour ramp for every pixel of one rail's eye, ``(height, width)``, top row first.
 
-    Up to ``steps - 1``, on a bent logarithm that ends at the 99.8 % quantile of what is there; a single trace still shows.
+    From 0 to ``steps - 1``, on a bent logarithm that ends at the 99.8 % quantile of what is there.
     """
     density = image.density[rail]
     pixels = shares_per_pixel(density, image.row_level, low, high, height)
@@ -75,7 +75,7 @@ def density_indices(
     full = max(float(np.quantile(filled[:: max(1, filled.size // 20000)], 0.998)), 1.0)
     tone = np.log1p(pixels.astype(np.float32)) / np.float32(math.log1p(full))
     np.power(tone, np.float32(_BEND), out=tone)
-    np.maximum(tone, np.minimum(pixels, 1.0) * _FAINTEST, out=tone, casting="same_kind")
+    np.maximum(tone, np.minimum(2.0 * pixels, 1.0) * _FAINTEST, out=tone, casting="same_kind")
     np.minimum(tone, 1.0, out=tone)
     tone = np.ascontiguousarray(tone.T[::-1]) * np.float32(steps - 1)
     ui = TIME_MIN_UI + (TIME_MAX_UI - TIME_MIN_UI) * (np.arange(width) + 0.5) / width

@@ -1,0 +1,68 @@
+import dataclasses
+
+import pytest
+
+from dsp.reading import READING_KEYS, Budget, Reading
+from monitor.views.wording import budget_rows, figure_groups, interval_text, plain, power_of_ten, signed
+from tests.monitor.views.synthetic_eyes import full_reading, make_eye
+
+
+@pytest.mark.parametrize(
+    ("value", "digits", "text"),
+    [(0.0, 1, "0.0"), (-0.04, 1, "0.0"), (-12.44, 1, "−12.4"), (1234567.0, 0, "1,234,567"), (99.96, 1, "100.0")],
+)
+def test_numbers_have_a_true_minus_and_grouped_thousands(value, digits, text):
+    assert plain(value, digits) == text
+
+
+def test_signed_numbers_carry_a_plus_only_above_zero():
+    assert [signed(value, 1) for value in (1.0, -1.0, 0.0, 0.01, -0.01)] == ["+1.0", "−1.0", "0.0", "0.0", "0.0"]
+
+
+@pytest.mark.parametrize(
+    ("value", "text"),
+    [
+        (3.14e-7, "3.1 × 10⁻⁷"),
+        (9.96e-5, "1.0 × 10⁻⁴"),
+        (0.0123, "0.012"),
+        (1e-12, "1.0 × 10⁻¹²"),
+        (0.0, "below 10⁻¹⁸"),
+    ],
+)
+def test_error_rates_are_powers_of_ten(value, text):
+    assert power_of_ten(value) == text
+
+
+def test_an_unknown_figure_has_no_line():
+    assert figure_groups(Reading(symbols=10)) == ()
+    (group,) = figure_groups(Reading(symbols=10, snr_db=20.0))
+    assert [(figure.label, figure.value) for figure in group.figures] == [("SNR", "20.0 dB")]
+
+
+@pytest.mark.parametrize("bad", [float("nan"), float("inf")])
+def test_a_figure_that_is_not_finite_has_no_line(bad):
+    assert figure_groups(Reading(symbols=10, snr_db=bad, timing_tolerance_ui=(bad, 0.1))) == ()
+
+
+def test_every_scalar_figure_of_a_reading_has_a_line_of_its_own():
+    image, eyes = make_eye(2, symbols=50)
+    full = full_reading(image, eyes)
+    elsewhere = {"symbols", "opening_pct", "opening_low_pct", "opening_high_pct", "eyes", "budget", "verdict"}
+
+    def lines(reading):
+        return sum(len(group.figures) for group in figure_groups(reading))
+
+    for key in set(READING_KEYS) - elsewhere:
+        assert lines(dataclasses.replace(full, **{key: None})) == lines(full) - 1, key
+
+
+def test_the_interval_needs_both_ends():
+    assert interval_text(Reading(1, 70.0, 68.5, 71.54)) == "68.5 to 71.5 %"
+    assert interval_text(Reading(1, 70.0, None, 71.5)) is None
+    assert interval_text(Reading(1, 70.0, 68.5, float("nan"))) is None
+
+
+def test_the_budget_is_sorted_and_leaves_out_what_is_unknown():
+    rows = budget_rows(Budget(isi_pct=3.0, noise_pct=9.0, unexplained_pct=-1.0))
+    assert rows == [("Noise", 9.0), ("Neighbouring symbols", 3.0), ("Not explained", -1.0)]
+    assert budget_rows(Budget()) == []
