@@ -16,7 +16,10 @@ _OUT = types.Array(types.float64, 1, "C")
     fastmath={"reassoc", "contract"},
 )
 def sum_regular(u, values, first, table, after, out):
-    """``out[i] = sum_k values[k - first] g(u[i] - k)`` with ``table[p, m] = g(p / phases + after - m)``, linear between rows."""
+    """``out[i] = sum_k values[k - first] g(u[i] - k)``: the pulses of symbols on a regular grid.
+
+    ``table[p, m] = g(p / phases + after - m)``, read linearly between rows.
+    """
     phases = table.shape[0] - 1
     taps = table.shape[1]
     for i in range(u.size):
@@ -58,12 +61,13 @@ def sum_regular(u, values, first, table, after, out):
 def sum_moved(u, weights, moves, settled, slopes, first, table, low, points, end_slope, after, before, out):
     """Sum of ``weights[k] f(u - k - moves[k])`` for symbols each at an instant of its own.
 
-    ``f`` is 0 below ``low``, ``table`` at ``points`` a UI from there on, and a line of slope ``end_slope`` past its end. All
-    symbols up to ``floor(u) - after`` have ended: together they give ``settled + slopes * (u - k)`` of the last of them.
+    ``f`` is 0 below ``low``, ``table`` at ``points`` a UI from there on, and a line of slope ``end_slope`` past its
+    end. All symbols up to ``floor(u) - after`` have ended: together they give ``settled + slopes * (u - k)`` of the
+    last of them.
     """
     last = table.size - 1
     for i in range(u.size):
-        whole = int(math.floor(u[i]))
+        whole = math.floor(u[i])
         oldest = whole - after - first
         total = settled[oldest] + slopes[oldest] * (u[i] - (whole - after))
         for j in range(oldest + 1, whole + before - first + 1):
@@ -78,16 +82,16 @@ def sum_moved(u, weights, moves, settled, slopes, first, table, low, points, end
 
 @njit(types.void(_LINE, _LINE, types.float64, _OUT), nogil=True, cache=True)
 def settle(values, edges, ratio, state):
-    """Response of a one-pole low-pass at each edge: ``state[k]`` at ``edges[k]``; ``state[0]`` is given, ``ratio`` is T/tau."""
+    """One-pole low-pass (T/tau = ``ratio``) at each edge: ``state[k]`` at ``edges[k]``; ``state[0]`` is given."""
     for k in range(values.size - 1):
         state[k + 1] = values[k] + (state[k] - values[k]) * math.exp(-(edges[k + 1] - edges[k]) * ratio)
 
 
 @njit(types.void(_LINE, _LINE, _LINE, _LINE, types.int64, types.int64, types.float64, _OUT), nogil=True, cache=True)
 def sum_held(u, values, edges, state, first, reach, ratio, out):
-    """Rectangular symbols from edge to edge, behind a one-pole low-pass if ``ratio`` (T/tau) is above 0; one half on an edge."""
+    """Symbols held from edge to edge, behind a one-pole low-pass if ``ratio`` (T/tau) > 0; half-way on an edge."""
     for i in range(u.size):
-        k = int(math.floor(u[i] + 0.5)) + reach - first
+        k = math.floor(u[i] + 0.5) + reach - first
         while edges[k] > u[i]:
             k -= 1
         if ratio > 0.0:

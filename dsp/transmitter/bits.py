@@ -34,10 +34,11 @@ def _period(order: int) -> NDArray[np.uint8]:
 
 
 def prbs(order: int, count: int, start: int = 0) -> NDArray[np.uint8]:
-    """``count`` bits of the pseudo-random sequence of period 2**order - 1 from its bit ``start`` on (negative too), uint8.
+    """``count`` bits of the pseudo-random sequence of period 2**order - 1, from bit ``start`` on (negative too), uint8.
 
-    Order 7, 9, 15 or 23; bit 0 is the first that leaves the shift register filled with ones. Raises DspError for another order.
-    Source: ITU-T O.150, which sends 2**15 - 1 and 2**23 - 1 inverted (polynomials and inversion from memory).
+    Order 7, 9, 15 or 23; bit 0 is the first that leaves the shift register filled with ones. Raises DspError for
+    another order. Source: ITU-T O.150, which sends 2**15 - 1 and 2**23 - 1 inverted (polynomials and inversion from
+    memory).
     """
     if order not in PRBS_TAPS:
         raise DspError(f"order must be one of {sorted(PRBS_TAPS)}, got {order!r}")
@@ -54,9 +55,10 @@ def from_gray(code: NDArray[np.int64]) -> NDArray[np.int64]:
 
 
 def map_bits(bits: NDArray[np.uint8], scheme: Scheme) -> NDArray[np.int64]:
-    """Index into ``scheme.points()`` of each symbol, from ``scheme.bits`` bits each, most significant first, Gray coded.
+    """Index into ``scheme.points()`` of each symbol, from ``scheme.bits`` Gray coded bits each, most significant first.
 
-    QAM and QPSK: the first half of the bits chooses I, the second Q. pi4dqpsk: the *change* of the point, in quarter turns
+    QAM and QPSK: the first half of the bits chooses I, the second Q. pi4dqpsk: the *change* of the point, in quarter
+    turns
     (0 1 3 2 for 00 01 10 11); `accumulate` adds them up. Source of the latter: ETSI EN 300 392-2, sec. 5 (from memory).
     """
     groups = bits.reshape(-1, scheme.bits).astype(np.int64)

@@ -18,8 +18,8 @@ _FREQUENCY_PULSE = {"msk": "rect", "gmsk": "gauss", "gfsk": "gauss"}
 class TransmitSpec:
     """A stream to be made: one link and its defects. Raises DspError for what cannot be made.
 
-    The symbols go through, in this order: pulse with jitter, one-pole low-pass, I/Q imbalance, echoes, carrier and phase noise,
-    drop-outs, (real passband), noise, DC, gain, clipping.
+    The symbols go through, in this order: pulse with jitter, one-pole low-pass, I/Q imbalance, echoes, carrier and
+    phase noise, drop-outs, (real passband), noise, DC, gain, clipping.
 
     Attributes
     ----------
@@ -28,26 +28,31 @@ class TransmitSpec:
     symbol_rate_hz, sample_rate_hz
         Nominal rates; any ratio from 2 to 2000 samples a symbol.
     pulse
-        Transmit pulse: rrc (unit energy), rc (1 at 0), rect (1), gauss (rect behind a Gaussian low-pass). For frequency schemes the
-        pulse of the frequency, area 1 UI. rect and gauss are held from edge to edge, and jitter moves the edges.
+        Transmit pulse: rrc (unit energy), rc (1 at 0), rect (1), gauss (rect behind a Gaussian low-pass). For frequency
+        schemes the pulse of the frequency, area 1 UI. rect and gauss are held from edge to edge, and jitter moves the
+        edges.
     symbols
-        How many symbols long the stream is at nominal rate: ``round(symbols * sample_rate_hz / symbol_rate_hz)`` samples.
+        How many symbols long the stream is at nominal rate: ``round(symbols * sample_rate_hz / symbol_rate_hz)``
+        samples.
     seed
         Of all that is random.
     bits
         ``random`` or a sequence of ITU-T O.150; symbol 0 takes its first bits. pam3 takes random levels only.
     delay_ui
-        Later start of symbol 0, 0 to 1; at 0 its instant is sample ``(samples per symbol - 1) / 2``, so that no edge of a
-        rectangular pulse at a whole number of samples a symbol falls on a sample.
+        Later start of symbol 0, 0 to 1; at 0 its instant is sample ``(samples per symbol - 1) / 2``, so that no edge of
+        a rectangular pulse at a whole number of samples a symbol falls on a sample.
     snr_db
-        None: no noise. Otherwise white noise such that ``E|a|**2`` over the variance of the noise behind the receive filter
-        (`dsp.pulses.receive_filter`, gain 1 for the symbols) is this: Es/N0 of the transmit pulse, N0 the variance density of the
-        complex noise (real baseband: of the real noise). Per sample that is ``gain**2 * E|a|**2 * E_g * sps / snr``, E_g the
-        transmit pulse's energy in UI; for rc, whose receiver has no filter, ``gain**2 * E|a|**2 / snr``; for frequency schemes
-        (envelope 1) ``gain**2 * sps / snr``. Real passband: a quarter of the complex one, so that the band about the carrier
-        has the same Es/N0. Taken from the signal before one-pole low-pass, echoes, I/Q imbalance and clipping.
+        None: no noise. Otherwise white noise such that ``E|a|**2`` over the variance of the noise behind the receive
+        filter
+        (`dsp.pulses.receive_filter`, gain 1 for the symbols) is this: Es/N0 of the transmit pulse, N0 the variance
+        density of the complex noise (real baseband: of the real noise). Per sample that is ``gain**2 * E|a|**2 * E_g *
+        sps / snr``, E_g the transmit pulse's energy in UI; for rc, whose receiver has no filter, ``gain**2 * E|a|**2 /
+        snr``; for frequency schemes
+        (envelope 1) ``gain**2 * sps / snr``. Real passband: a quarter of the complex one, so that the band about the
+        carrier has the same Es/N0. Taken from the signal before one-pole low-pass, echoes, I/Q imbalance and clipping.
     modulation_index
-        Frequency schemes: distance of neighbouring tones over the symbol rate, h; None: 1 (fsk2, fsk4) or 0.5; msk, gmsk: 0.5 only.
+        Frequency schemes: distance of neighbouring tones over the symbol rate, h; None: 1 (fsk2, fsk4) or 0.5; msk,
+        gmsk: 0.5 only.
     carrier_hz, carrier_phase_deg
         Offset of the carrier and its phase at sample 0.
     passband
@@ -63,13 +68,15 @@ class TransmitSpec:
     echoes
         ``(delay in UI, gain)`` each; the gain is complex for I/Q.
     t_over_tau
-        T/tau of a one-pole low-pass (for frequency schemes: ahead of the modulator); None: no low-pass. Closed form for rect.
+        T/tau of a one-pole low-pass (for frequency schemes: ahead of the modulator); None: no low-pass. Closed form for
+        rect.
     iq_gain_db, iq_skew_deg
         ``y_Q = g (x_Q cos skew + x_I sin skew)``, ``y_I = x_I``, on the transmitter's side of the carrier.
     dc
         Added constant in level units (frequency schemes: in units of the envelope); complex for I/Q.
     gain
-        Sample value of one level unit (of the envelope); None: such that no noise-free sample and no noise below 5 sigma passes 0.9.
+        Sample value of one level unit (of the envelope); None: such that no noise-free sample and no noise below 5
+        sigma passes 0.9.
     clipping, clip_at
         Of each rail, last of all: ``hard`` at ``clip_at``, ``soft``: ``clip_at * tanh(x / clip_at)``, in sample values.
     dropouts
@@ -148,7 +155,7 @@ class TransmitSpec:
                 raise DspError(f"{name} must be {low:g} to {high:g}, got {value!r}")
         seconds = self.symbols / self.symbol_rate_hz
         if abs(self.clock_ppm + self.clock_drift_ppm_s * seconds) > 1e5:
-            raise DspError(f"clock_drift_ppm_s {self.clock_drift_ppm_s:g} takes the clock 10 % off within {seconds:g} s")
+            raise DspError(f"clock_drift_ppm_s {self.clock_drift_ppm_s:g} takes the clock 10 % off in {seconds:g} s")
         for delay, gain in self.echoes:
             if not (0.0 <= delay <= 1000.0 and abs(gain) <= 10.0):
                 raise DspError(f"echoes need a delay of 0 to 1000 UI and a gain up to 10, got {(delay, gain)!r}")

@@ -3,6 +3,7 @@
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,7 @@ from dsp.transmitter.bits import accumulate, map_bits, prbs
 from dsp.transmitter.spec import TransmitSpec
 from dsp.transmitter.waveform import Floats, Rail, Shape, pulse_energy
 
+Wave = NDArray[np.float64] | NDArray[np.complex128]
 _CHUNK = 1 << 16  # samples made at a time, always from multiples of it, so that no cut can change a sample
 
 
@@ -25,11 +27,12 @@ class Transmission:
     samples
         Shape ``(n,)``, float32 or complex64.
     symbols
-        Ideal points of the symbols due in this stretch, shape ``(m,)``, in the level units of `dsp.link.Scheme.points` and its
-        turning frame (pi4dqpsk: before the turn by 1/8 from symbol to symbol); float64 for one rail, complex128 for two.
+        Ideal points of the symbols due in this stretch, shape ``(m,)``, in the level units of `dsp.link.Scheme.points`
+        and its turning frame (pi4dqpsk: before the turn by 1/8 from symbol to symbol); float64 for one rail, complex128
+        for two.
     instants
-        When each symbol's pulse has its centre, in samples since the start of the *stream*, jitter included, shape ``(m,)``, float64.
-        The Q rail of oqpsk is half a symbol later.
+        When each symbol's pulse has its centre, in samples since the start of the *stream*, jitter included, shape
+        ``(m,)``, float64. The Q rail of oqpsk is half a symbol later.
     bits
         ``scheme.bits`` a symbol, uint8, most significant first; empty for pam3.
     start
@@ -41,7 +44,7 @@ class Transmission:
     """
 
     samples: Samples
-    symbols: Floats | NDArray[np.complex128]
+    symbols: Wave
     instants: Floats
     bits: NDArray[np.uint8]
     start: int
@@ -76,37 +79,47 @@ def _cut(spec: TransmitSpec, size: int) -> Iterator[Transmission]:
             pending.append(chunk)
             held += chunk.size
             made += chunk.size
-        joined = np.concatenate(pending) if len(pending) > 1 else pending[0]
+        joined = cast("Samples", np.concatenate(pending)) if len(pending) > 1 else pending[0]
         pending = [joined[wanted:]]
         held -= wanted
         symbols, instants, bits = sender.due(start, start + wanted)
-        samples = np.ascontiguousarray(joined[:wanted])
+        samples: Samples = joined[:wanted].copy()
         yield Transmission(samples, symbols, instants, bits, start, sender.gain, sender.noise_rms)
 
 
 class _Symbols:
-    """The symbols in order, from index ``first`` on; those from 0 on are the stream's own, earlier ones lead in."""
+    """The symbols in order, from index ``first`` on: before 0 they lead in, from 0 on they are the stream's own.
+
+    The lead-in has generators of its own and is drawn backwards from symbol -1, so that its length changes nothing
+    else.
+    """
 
     def __init__(self, spec: TransmitSpec, first: int) -> None:
         self._spec = spec
         self._scheme = spec.link_scheme
-        seeds = np.random.SeedSequence(spec.seed).spawn(5)
-        self._lead_in, self._payload, jitter, phase, noise = (np.random.Generator(np.random.PCG64(s)) for s in seeds)
-        self._jitter, self._phase, self.noise = jitter, phase, noise
+        seeds = np.random.SeedSequence(spec.seed).spawn(7)
+        generators = [np.random.Generator(np.random.PCG64(seed)) for seed in seeds]
+        self.noise = generators[0]
+        # of the lead-in and of the stream
+        self._bits = generators[1], generators[2]
+        self._jitter = generators[3], generators[4]
+        self._phase = generators[5], generators[6]
         self._quadrant = 0
         self.next = first
         self._turned = 0.0
 
     def take(self, count: int) -> tuple[NDArray[np.uint8], NDArray[np.complex128]]:
-        """Bits and points of the next ``count`` symbols, which must not straddle index 0."""
+        """Bits and points of the next ``count`` symbols: the whole lead-in at once, or from index 0 on."""
         scheme = self._scheme
-        random = self._lead_in if self.next < 0 else self._payload
+        random = self._bits[self.next >= 0]
         if scheme.name == "pam3":
             index = random.integers(0, 3, size=count)
+            index = index[::-1] if self.next < 0 else index
             bits = np.zeros(0, dtype=np.uint8)
         else:
             if self._spec.bits == "random":
                 bits = random.integers(0, 2, size=count * scheme.bits).astype(np.uint8)
+                bits = bits[::-1] if self.next < 0 else bits
             else:
                 bits = prbs(int(self._spec.bits[4:]), count * scheme.bits, self.next * scheme.bits)
             index = map_bits(bits, scheme)
@@ -120,14 +133,18 @@ class _Symbols:
         spec = self._spec
         moves = np.zeros(due.size)
         if spec.jitter_rms_ui:
-            moves += np.clip(self._jitter.standard_normal(due.size), -8.0, 8.0) * spec.jitter_rms_ui
+            moves += np.clip(self._normals(self._jitter, due), -8.0, 8.0) * spec.jitter_rms_ui
         if spec.jitter_sine_ui:
             moves += spec.jitter_sine_ui * np.sin(2 * np.pi * spec.jitter_sine_hz * seconds)
         return moves
 
-    def turns(self, count: int) -> Floats:
-        """Carrier phase in radians at the next ``count`` symbols."""
-        steps = self._phase.standard_normal(count) * math.radians(self._spec.phase_noise_deg)
+    @staticmethod
+    def _normals(pair: tuple[np.random.Generator, np.random.Generator], due: Floats) -> Floats:
+        return pair[0].standard_normal(due.size)[::-1] if due[0] < 0 else pair[1].standard_normal(due.size)
+
+    def turns(self, due: Floats) -> Floats:
+        """Carrier phase in radians at the symbols due at ``due``."""
+        steps = self._normals(self._phase, due) * math.radians(self._spec.phase_noise_deg)
         walked = np.cumsum(np.concatenate(([self._turned], steps)))[1:]
         self._turned = float(walked[-1])
         return walked
@@ -218,14 +235,14 @@ class _Sender:
             if self._complex:
                 self._rails[1].extend(np.ascontiguousarray(sent.imag), moves)
             if self._spec.phase_noise_deg:
-                self._theta = np.concatenate((self._theta, self._symbols.turns(count)))
+                self._theta = np.concatenate((self._theta, self._symbols.turns(due)))
             if start >= 0:
                 self._waiting_points = np.concatenate((self._waiting_points, points))
                 self._waiting_bits = np.concatenate((self._waiting_bits, bits))
                 self._waiting_instants = np.concatenate((self._waiting_instants, self._when(due + moves)))
 
-    def due(self, start: int, stop: int) -> tuple[Floats | NDArray[np.complex128], Floats, NDArray[np.uint8]]:
-        """Points, instants and bits of the symbols that the clock, without jitter, puts at samples ``start`` to ``stop``."""
+    def due(self, start: int, stop: int) -> tuple[Wave, Floats, NDArray[np.uint8]]:
+        """Points, instants, bits of the symbols that the clock, without jitter, puts from ``start`` to ``stop``."""
         first, last = (max(0, math.ceil(u)) for u in self._clock(np.array([start, stop], dtype=np.float64)))
         count = last - first
         skip = first - self._waiting_first
@@ -239,7 +256,7 @@ class _Sender:
         self._waiting_first = last
         return (points.copy() if self._complex else points.real.copy()), instants.copy(), bits.copy()
 
-    def _envelope(self, u: Floats) -> Floats | NDArray[np.complex128]:
+    def _envelope(self, u: Floats) -> Wave:
         """The transmitter's output at ``u``, before the channel."""
         main = self._rails[0].at(u)
         if self._scheme.kind == "baseband":
@@ -263,10 +280,10 @@ class _Sender:
         n = np.arange(start, start + count, dtype=np.float64)
         u = self._clock(n)
         self._extend(math.floor(u[-1]) + self._ahead + 1)
-        wave = self._envelope(u)
+        wave: Wave = self._envelope(u)
         for delay, gain in spec.echoes:
             late = self._envelope(u - delay)
-            wave = wave + late * (gain if np.iscomplexobj(late) else complex(gain).real)
+            wave = cast("Wave", wave + late * (gain if np.iscomplexobj(late) else complex(gain).real))
         if self._scheme.kind != "baseband":
             wave = self._on_carrier(wave, n, u)
         for begin, duration in spec.dropouts:
@@ -274,9 +291,7 @@ class _Sender:
         self._forget(math.floor(self._clock(np.array([start + count], dtype=np.float64))[0]) - self._behind)
         return self._at_output(wave)
 
-    def _on_carrier(
-        self, wave: Floats | NDArray[np.complex128], n: Floats, u: Floats
-    ) -> Floats | NDArray[np.complex128]:
+    def _on_carrier(self, wave: Wave, n: Floats, u: Floats) -> Wave:
         spec = self._spec
         if not (spec.carrier_hz or spec.carrier_phase_deg or spec.phase_noise_deg):
             return wave
@@ -289,9 +304,9 @@ class _Sender:
             return wave.real * np.cos(phase) - wave.imag * np.sin(phase)
         return wave * (np.cos(phase) + 1j * np.sin(phase))
 
-    def _at_output(self, wave: Floats | NDArray[np.complex128]) -> Samples:
+    def _at_output(self, wave: Wave) -> Samples:
         spec = self._spec
-        scaled = wave * self.gain
+        scaled: Wave = wave * self.gain
         if self.noise_rms:
             if spec.real:
                 scaled = scaled + self._symbols.noise.standard_normal(scaled.size) * self.noise_rms
@@ -299,15 +314,14 @@ class _Sender:
                 noise = self._symbols.noise.standard_normal(2 * scaled.size).view(np.complex128)
                 scaled = scaled + noise * (self.noise_rms * math.sqrt(0.5))
         if spec.dc:
-            scaled = scaled + self.gain * (complex(spec.dc).real if spec.real else complex(spec.dc))
+            scaled = cast("Wave", scaled + self.gain * (complex(spec.dc).real if spec.real else complex(spec.dc)))
         if spec.real:
-            return self._clipped(scaled).astype(np.float32)
+            return self._clipped(scaled.real).astype(np.float32)
         rails = np.ascontiguousarray(scaled, dtype=np.complex128).view(np.float64)
         return self._clipped(rails).view(np.complex128).astype(np.complex64)
 
-    def _clipped(self, rails: Floats | NDArray[np.complex128]) -> Floats:
+    def _clipped(self, real: Floats) -> Floats:
         spec = self._spec
-        real: Floats = rails.real
         if spec.clipping == "hard":
             return np.clip(real, -spec.clip_at, spec.clip_at)
         if spec.clipping == "soft":

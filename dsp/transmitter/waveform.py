@@ -1,7 +1,7 @@
 """One rail of a transmission: the exact sum of its pulses at any instants.
 
-Time is the transmitter's own, in symbols: symbol ``k`` is due at ``k``. Pulses come from tables of `POINTS` a symbol, read
-linearly (error below -90 dB); rectangular pulses from their closed form.
+Time is the transmitter's own, in symbols: symbol ``k`` is due at ``k``. Pulses come from tables of `POINTS` a symbol,
+read linearly (error below -90 dB); rectangular pulses from their closed form.
 """
 
 import math
@@ -23,15 +23,15 @@ Way = Literal["regular", "pulse", "step", "ramp", "phase", "held"]
 
 
 def half_span(pulse: Pulse) -> float:
-    """Symbols on each side of a transmit pulse beyond which lies less than -75 dB of the energy of an rrc or rc pulse.
+    """Symbols on each side of a transmit pulse beyond which lies less than -80 dB of the energy of an rrc or rc pulse.
 
     From the tails ``1/(4 pi a t**2)`` and ``1/(4 pi a**2 t**3)`` of the two (derived); gauss: where erfc is below 3e-9.
     """
     number = pulse.number or 0.0
     if pulse.family == "rrc":
-        return math.ceil((10**7.5 / (48 * math.pi**2 * number**2)) ** (1 / 3))
+        return float(math.ceil((1e8 / (48 * math.pi**2 * number**2)) ** (1 / 3)))
     if pulse.family == "rc":
-        return max(8, math.ceil((10**7.5 / (160 * math.pi**2 * number**4)) ** (1 / 5)))
+        return float(max(8, math.ceil((1e8 / (160 * math.pi**2 * number**4)) ** (1 / 5))))
     return 0.5 if pulse.family == "rect" else 0.5 + 4.2 / _steepness(pulse)
 
 
@@ -62,13 +62,14 @@ def _table(pulse: Pulse, way: Way) -> tuple[Floats, int, float]:
     number = pulse.number or 0.0
     shape = {"rrc": root_raised_cosine, "rc": raised_cosine, "gauss": gaussian_rectangle}[pulse.family](t, number)
     if way != "phase":
+        shape[-1] = 0.0  # where it stays
         return shape, -reach, 0.0
     area = np.concatenate(([0.0], np.cumsum(0.5 * (shape[1:] + shape[:-1]))))
     return area / area[-1], -reach, 0.0
 
 
 def low_pass(table: Floats, points: float, ratio: float, end_slope: float) -> Floats:
-    """``table`` behind a one-pole low-pass of T/tau = ``ratio``, longer by the tail; exact for straight lines between points.
+    """``table`` behind a one-pole low-pass of T/tau = ``ratio``, longer by the tail; exact for lines between points.
 
     The line before the table is taken as constant, the one past it as of ``end_slope`` a symbol.
     """
@@ -79,7 +80,7 @@ def low_pass(table: Floats, points: float, ratio: float, end_slope: float) -> Fl
     rh = ratio / points
     decay = math.exp(-rh)
     mean = -math.expm1(-rh) / rh
-    return np.asarray(lfilter([1.0 - mean, mean - decay], [1.0, -decay], longer)) + table[0]
+    return np.asarray(lfilter([1.0 - mean, mean - decay], [1.0, -decay], longer), dtype=np.float64) + float(table[0])
 
 
 @dataclass(frozen=True)
@@ -128,7 +129,7 @@ class Shape:
     def after(self) -> int:
         """Symbols before an instant that are still heard at it."""
         if self.way == "regular":
-            return self.table.shape[1] - 1 + self.low
+            return int(self.table.shape[1]) - 1 + self.low
         if self.way == "held":
             return self.reach + 1 + (math.ceil(2 * _FORGOTTEN / self.ratio) if self.ratio else 0)
         return math.ceil(self.low + (self.table.size - 1) / POINTS) + self.reach
@@ -171,8 +172,11 @@ class Rail:
         if way in ("pulse", "phase"):
             self._moves = np.concatenate((self._moves, moves))
             self._weights = self._values
-            running = np.cumsum(np.concatenate(([self._total], values)))[1:] if way == "phase" else np.zeros(values.size)
-            self._total = float(running[-1]) if running.size else self._total
+            running = np.zeros(values.size)
+            if way == "phase":
+                running = np.cumsum(np.concatenate(([self._total], values)))[1:]
+                running -= 0.0 if start else running[-1]  # phase 0 where the first batch ends, however long it is
+                self._total = float(running[-1])
             self._settled = np.concatenate((self._settled, running))
             self._slopes = np.zeros(self._values.size)
             return
@@ -205,6 +209,7 @@ class Rail:
         keep = max(start - 1, 0)
         steps = self._values[keep:-1] * np.diff(self._edges[keep:])
         areas = np.cumsum(np.concatenate(([self._total], steps)))
+        areas -= 0.0 if start else areas[-1]  # phase 0 at the last edge of the first batch, however long it is
         self._total = float(areas[-1])
         table = self._shape.table
         late = self._shape.low + (table.size - 1) / POINTS - float(table[-1])

@@ -13,7 +13,8 @@ from dsp.transmitter.bits import from_gray, map_bits
 
 @pytest.mark.parametrize(
     ("order", "bits"),
-    # first bits of x^7 + x^6 + 1 and x^9 + x^5 + 1 from a register of ones (ITU-T O.150; polynomials from memory, bits recomputed)
+    # first bits of x^7 + x^6 + 1 and x^9 + x^5 + 1 from a register of ones (ITU-T O.150; polynomials from memory, bits
+    # recomputed)
     [(7, "11111110000001000001"), (9, "11111111100000111101")],
 )
 def test_prbs_starts_with_the_published_polynomials_first_bits(order, bits):
@@ -34,7 +35,10 @@ def test_prbs_is_a_maximum_length_sequence_of_komm_somewhere_in_its_period(order
     period = 2**order - 1
     reference = np.asarray(komm.LFSRSequence(feedback_polynomial=polynomial).bit_sequence).astype(np.uint8)
     ours = prbs(order, period)
-    turned = [np.array_equal(np.roll(ours, k), reference) or np.array_equal(np.roll(ours, k)[::-1], reference) for k in range(period)]
+    turned = [
+        np.array_equal(np.roll(ours, k), reference) or np.array_equal(np.roll(ours, k)[::-1], reference)
+        for k in range(period)
+    ]
     assert any(turned)
 
 

@@ -1,4 +1,4 @@
-"""The pulses of `dsp.pulses` against published values, other libraries, and what follows from the formulas by brute force."""
+"""The pulses of `dsp.pulses` against published values, other libraries, and their own formulas by brute force."""
 
 import math
 
@@ -42,13 +42,21 @@ def test_values_for_rolloff_a_quarter_are_those_of_the_komm_documentation():
 )
 def test_singular_points_take_their_analytic_limits(rolloff, rrc_peak, rrc_edge, rc_half, rc_edge):
     edge = 1 / (4 * rolloff)
-    np.testing.assert_allclose(root_raised_cosine([0.0, edge, -edge], rolloff), [rrc_peak, rrc_edge, rrc_edge], atol=1e-6)
-    np.testing.assert_allclose(raised_cosine([0.5, 2 * edge, -2 * edge], rolloff), [rc_half, rc_edge, rc_edge], atol=1e-6)
+    np.testing.assert_allclose(
+        root_raised_cosine([0.0, edge, -edge], rolloff), [rrc_peak, rrc_edge, rrc_edge], atol=1e-6
+    )
+    np.testing.assert_allclose(
+        raised_cosine([0.5, 2 * edge, -2 * edge], rolloff), [rc_half, rc_edge, rc_edge], atol=1e-6
+    )
 
 
 @pytest.mark.parametrize("rolloff", [0.05, 0.2, 0.35, 0.5, 1.0])
 def test_pulses_are_continuous_across_their_singular_points(rolloff):
-    for function, point in ((root_raised_cosine, 0.0), (root_raised_cosine, 0.25 / rolloff), (raised_cosine, 0.5 / rolloff)):
+    for function, point in (
+        (root_raised_cosine, 0.0),
+        (root_raised_cosine, 0.25 / rolloff),
+        (raised_cosine, 0.5 / rolloff),
+    ):
         near = function(point + np.array([-2e-6, 0.0, 2e-6]), rolloff)
         assert np.ptp(near) < 2e-4  # slope below 10 a symbol, and what cancellation leaves near 0/0
 
@@ -116,7 +124,9 @@ def test_worst_case_eye_of_raised_cosine_is_as_derived(rolloff, at_a_tenth, widt
         assert 2 * half == pytest.approx(width, abs=2e-4)
 
 
-@pytest.mark.parametrize(("rolloff", "slope"), [(0.2, 3.78810), (0.5, np.pi / 2 + 2 * np.log(2) - 1), (1.0, 2 * (2 * np.log(2) - 1))])
+@pytest.mark.parametrize(
+    ("rolloff", "slope"), [(0.2, 3.78810), (0.5, np.pi / 2 + 2 * np.log(2) - 1), (1.0, 2 * (2 * np.log(2) - 1))]
+)
 def test_timing_sensitivity_of_raised_cosine_is_as_derived(rolloff, slope):
     # derived: 2 sum |cos(pi a k)| / (k |1 - 4 a^2 k^2|), checked by brute force
     small = 1e-6
