@@ -137,12 +137,10 @@ def pip_problem(output: str) -> str:
     """One line for what made pip fail, read from all it printed."""
     if "No space left on device" in output:
         return "the disk is full: make room and run this again"
-    unreachable = (
-        "NewConnectionError|ConnectTimeoutError|ReadTimeoutError|ProxyError|Network is unreachable|name resolution"
-    )
+    unreachable = "connection broken by|ConnectionError|ConnectTimeoutError|ReadTimeoutError|ProxyError|name resolution"
     if re.search(unreachable, output):
         return "no network: pip cannot reach its package index; connect (or set a proxy) and run this again"
-    errors = re.findall(r"^ERROR: (.+)$", output, flags=re.MULTILINE)
+    errors = re.findall(r"^\s*ERROR: (.+)$", output, flags=re.MULTILINE)
     reason = errors[-1].strip() if errors else "it gave no reason"
     return f"pip could not install the project: {reason}; all of its output is in {PIP_LOG}"
 

@@ -89,6 +89,8 @@ def test_the_packages_agree_with_the_package_database(start):
         ("  Temporary failure in name resolution\nERROR: Could not find a version that satisfies numpy", "no network"),
         ("ERROR: Could not install packages due to an OSError: [Errno 28] No space left on device", "disk is full"),
         ("Collecting x\nERROR: first\nERROR: Failed to build llvmlite\n", "Failed to build llvmlite"),
+        ("      ERROR: No matching distribution found for hatchling\n      [end of output]", "for hatchling"),
+        ("WARNING: Retrying (Retry(total=1)) after connection broken by 'NameResolutionError(...)'", "no network"),
         ("", "no reason"),
     ],
 )
