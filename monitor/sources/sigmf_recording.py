@@ -41,6 +41,8 @@ class Recording:
         The name for error texts.
     data_path, offset, size
         The file that holds the samples, and which of its bytes; ``size`` ``None``: to its end.
+    missing
+        Bytes that an archive announces beyond its end.
     """
 
     meta: bytes | None
@@ -48,6 +50,7 @@ class Recording:
     data_path: str | None = None
     offset: int = 0
     size: int | None = None
+    missing: int = 0
 
 
 @dataclass(frozen=True, slots=True)
@@ -95,7 +98,7 @@ def _pair(meta_path: str, data_path: str | None) -> Recording:
 
 def _archive(path: str) -> Recording:
     """Find the first recording in a tar archive without unpacking it."""
-    sizes = os.path.getsize(path)
+    file_bytes = os.path.getsize(path)
     members: dict[str, tarfile.TarInfo] = {}
     try:
         with tarfile.open(path, "r:") as archive:
@@ -124,7 +127,8 @@ def _archive(path: str) -> Recording:
         raise InputError(f"{name}: its data file is not in the archive")
     if data.issparse():
         raise InputError(f"{path}: the samples are stored sparse; unpack the archive")
-    return Recording(text, name, path, data.offset_data, min(data.size, max(0, sizes - data.offset_data)))
+    present = min(data.size, max(0, file_bytes - data.offset_data))
+    return Recording(text, name, path, data.offset_data, present, data.size - present)
 
 
 def _dataset_name(text: bytes) -> str | None:
@@ -159,6 +163,11 @@ def open_recording(uri: str, recording: Recording, options: SampleOptions, block
     layout = RawLayout(stored, n_channels, choice)
     captures = _captures(meta, notes)
     size = recording.size if recording.size is not None else os.path.getsize(path)
+    if recording.missing:
+        notes.append(
+            f"cut short: the archive announces {size + recording.missing} bytes of samples, there are {size}; "
+            "what is there is measured"
+        )
     size -= min(size, _integer(about, "core:trailing_bytes", 0, notes))
     stretches = lay_out(captures, recording.offset, size, layout.frame_bytes, notes)
     if not stretches:
