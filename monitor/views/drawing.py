@@ -237,14 +237,14 @@ def _draw_curve(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | 
     caption, gutter, axis, key = page.curve_caption, page.curve_gutter, page.time_axis, page.key
     if box is None or caption is None or gutter is None or axis is None or key is None:
         return
-    top = 100.0
+    top = pixels.OPENING_TOP_PCT
     floor = pixels.opening_floor(image.opening_pct)
     title = Box(box.x, caption.y, box.width, caption.height - canvas.px(4))
     canvas.write("Opening if decided at this instant", title, _TEXT, theme.ink, bold=True)
     canvas.fill(box, theme.panel)
 
     text_height = canvas.px(16)
-    step = max(50.0, pixels.tick_step(top - floor, max(2, box.height // canvas.px(30) if canvas.px(30) else 2)))
+    step = max(50.0, pixels.tick_step(100.0 - floor, max(2, box.height // canvas.px(30) if canvas.px(30) else 2)))
     first = math.ceil(floor / step)
     for tick in range(first, int(top // step) + 1):
         value = tick * step

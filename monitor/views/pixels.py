@@ -9,6 +9,8 @@ from numpy.typing import NDArray
 from dsp.picture import EyeImage
 
 TIME_MIN_UI, TIME_MAX_UI = -1.0, 1.0
+# the opening axis ends above 100 %, so that a perfect eye's curve is clear of the frame
+OPENING_TOP_PCT = 110.0
 # a single trace must stand out from the empty panel: this share of the ramp at least
 _FAINTEST = 0.16
 # traces in the fullest bin of a distribution below which bins are made wider

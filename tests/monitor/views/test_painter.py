@@ -127,7 +127,7 @@ def test_the_width_is_marked_on_the_zero_line_where_the_curve_crosses_it(snapsho
     picture = drawn(replace(snapshot, image=image))
     curve = picture.page.curve
     area = crop(as_array(picture.image).astype(int), curve)
-    zero = round(curve.height * 100 / 150)
+    zero = round(curve.height * 110 / 160)
     ink = np.abs(area[zero] - rgb(find_theme("light").ink)).sum(axis=1) < 60
     held = np.flatnonzero(ink)
     assert held[0] == pytest.approx(curve.width * 0.3, abs=2)
@@ -142,7 +142,7 @@ def test_the_opening_curve_breaks_at_unknown_columns(snapshots):
     picture = drawn(replace(snapshot, image=replace(snapshot.image, opening_pct=opening)))
     curve = picture.page.curve
     area = crop(as_array(picture.image).astype(int), curve)
-    y = round(curve.height * 40 / 150)
+    y = round(curve.height * 50 / 160)
     copper = (np.abs(area[y - 2 : y + 3] - rgb(find_theme("light").accent)).sum(axis=2) < 60).any(axis=0)
     assert copper[round(curve.width * 0.1)]
     assert not copper[round(curve.width * 0.22) : round(curve.width * 0.28)].any()
