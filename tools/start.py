@@ -73,11 +73,12 @@ FONT_PACKAGE = "fonts-dejavu-core"
 _QT_PROBE = """
 import importlib.util, json, os, sys
 os.environ["QT_QPA_PLATFORM"] = "offscreen"
-found = {"families": None, "error": None, "folder": os.path.dirname(importlib.util.find_spec("PySide6").origin)}
+found = {"fonts": None, "error": None, "folder": os.path.dirname(importlib.util.find_spec("PySide6").origin)}
 try:
     from PySide6 import QtGui, QtWidgets
     app = QtGui.QGuiApplication(sys.argv[:1])
-    found["families"] = len(QtGui.QFontDatabase.families())
+    # Without fonts Qt still names families and draws boxes; a real font has a character map.
+    found["fonts"] = QtGui.QRawFont.fromFont(QtGui.QFont()).fontTable("cmap").size() > 0
 except ImportError as error:
     found["error"] = str(error)
 print(json.dumps(found))
@@ -328,7 +329,7 @@ def qt_problem() -> str:
             (line for line in reversed(probe.stderr.splitlines()) if line.strip()), f"status {probe.returncode}"
         )
         return f"Qt does not start: {reason}"
-    if found["error"] is None and found["families"]:
+    if found["error"] is None and found["fonts"]:
         return ""
     libraries = set(library_of_import_error(found["error"] or ""))
     folder = Path(found["folder"])
@@ -339,7 +340,7 @@ def qt_problem() -> str:
         libraries.update(missing_libraries(ldd.stdout))
     except OSError:
         pass  # no ldd here: the loader's own message names one library at least
-    fonts_missing = found["families"] == 0 or "libfontconfig.so.1" in libraries
+    fonts_missing = found["fonts"] is False or "libfontconfig.so.1" in libraries
     if found["error"] and not libraries:
         return f"Qt does not load: {found['error'].splitlines()[0]}"
     what = f"missing system libraries: {', '.join(sorted(libraries))}" if libraries else "no fonts are installed"
