@@ -1,0 +1,216 @@
+"""From symbol instants to the class raster and the crossings. Behind `dsp.eye`; arguments arrive validated.
+
+A rail's wave is kept symbol by symbol, phase by phase: ``wave[phase, symbol]``, so that every inner loop runs along symbols.
+"""
+
+import numpy as np
+from numba import njit, types
+
+from dsp._kernels.tracking import _at
+
+_F32 = types.Array(types.float32, 1, "C", readonly=True)
+_F32_2 = types.Array(types.float32, 2, "C", readonly=True)
+_F64 = types.Array(types.float64, 1, "C", readonly=True)
+_I32 = types.Array(types.int32, 1, "C", readonly=True)
+_I8 = types.Array(types.int8, 1, "C", readonly=True)
+_OUT2 = types.float32[:, ::1]
+_FAST = {"contract", "nsz", "reassoc"}
+_FINITE = {"contract", "nsz", "reassoc", "nnan", "ninf"}  # samples are finite: sources see to it
+_TILE = 512
+
+
+@njit(types.void(_F32, _F32_2, _F64, types.float64, types.float32, types.float32, _OUT2, types.int64),
+      nogil=True, cache=True, fastmath=_FAST)  # fmt: skip
+def resample_real(x, table, instants, shift, scale, zero, wave, column):
+    """Put the wave at ``instants[k] + shift`` and between, scaled about ``zero``, into ``wave[:, column + k]``."""
+    n_phases = wave.shape[0]
+    for k in range(instants.size - 1):
+        t = instants[k] + shift
+        step = (instants[k + 1] - instants[k]) / n_phases
+        for p in range(n_phases):
+            wave[p, column + k] = (_at(x, t + step * p, table) - zero) * scale
+
+
+@njit(types.void(_F32, _F32, _F32_2, _F64, types.float64, types.float64, _F32, _F32, _F32, _F32,
+                 types.float32, types.float32, types.float32, types.float32, types.boolean, _OUT2, _OUT2, types.int64),
+      nogil=True, cache=True, fastmath=_FAST)  # fmt: skip
+def resample_turned(x_i, x_q, table, instants, shift, stagger, cos, sin, step_cos, step_sin,
+                    scale_i, scale_q, zero_i, zero_q, both, wave_i, wave_q, column):  # fmt: skip
+    """As `resample_real` for I/Q: each point is turned by the carrier's phase at its own instant.
+
+    ``cos``, ``sin``: of the phase at each instant; ``step_*``: of its advance by one phase step. ``stagger`` samples of
+    delay on the Q rail, whose phase advances by half the phases.
+    """
+    n_phases = wave_i.shape[0]
+    half = n_phases // 2
+    for k in range(instants.size - 1):
+        t = instants[k] + shift
+        step = (instants[k + 1] - instants[k]) / n_phases
+        c, s = cos[k], sin[k]
+        dc, ds = step_cos[k], step_sin[k]
+        for p in range(n_phases):
+            where = t + step * p
+            a = _at(x_i, where, table)
+            b = _at(x_q, where, table)
+            wave_i[p, column + k] = (a * c + b * s - zero_i) * scale_i
+            if both and stagger == 0.0:
+                wave_q[p, column + k] = (b * c - a * s - zero_q) * scale_q
+            c, s = c * dc - s * ds, s * dc + c * ds
+        if both and stagger > 0.0:
+            c, s = cos[k], sin[k]
+            for _ in range(half):
+                c, s = c * dc - s * ds, s * dc + c * ds
+            for p in range(n_phases):
+                where = t + stagger + step * p
+                a = _at(x_i, where, table)
+                b = _at(x_q, where, table)
+                wave_q[p, column + k] = (b * c - a * s - zero_q) * scale_q
+                c, s = c * dc - s * ds, s * dc + c * ds
+
+
+@njit(types.int64(_F32_2, types.int64, types.int64, _F32_2, _I32, _I32, types.boolean, types.int64, types.int64,
+                  types.int64, types.float32, types.float32, types.uint32[:, ::1], types.uint32[:, ::1]),
+      nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
+def fill(wave, first, count, expand, base_left, base_right, both, every, start, n_rows, row_scale, row_zero,
+         left, right):  # fmt: skip
+    """Count the traces of symbols ``first .. first + count`` of ``wave`` column by column; return how many were drawn.
+
+    Between two phases of the wave ``expand`` puts its points. ``left[column, base_left[k] + row]`` counts the trace from
+    symbol k to k + 1; if ``both``, ``right[column, base_right[k] + row]`` does too. Every ``every``-th symbol is drawn, from ``start`` on.
+    """
+    n_phases = wave.shape[0]
+    factor = expand.shape[0]
+    drawn = 0
+    line = np.empty(_TILE, np.int32)
+    top = types.float32(n_rows) - types.float32(0.5)
+    for tile in range(0, count, _TILE):
+        n = min(_TILE, count - tile)
+        at = first + tile
+        skip = (start - tile) % every
+        drawn += (n - skip + every - 1) // every if skip < n else 0
+        for q in range(n_phases):
+            x0 = wave[(q - 3) % n_phases, at + (q - 3) // n_phases : at + (q - 3) // n_phases + n]
+            x1 = wave[(q - 2) % n_phases, at + (q - 2) // n_phases : at + (q - 2) // n_phases + n]
+            x2 = wave[(q - 1) % n_phases, at + (q - 1) // n_phases : at + (q - 1) // n_phases + n]
+            x3 = wave[q, at : at + n]
+            x4 = wave[(q + 1) % n_phases, at + (q + 1) // n_phases : at + (q + 1) // n_phases + n]
+            x5 = wave[(q + 2) % n_phases, at + (q + 2) // n_phases : at + (q + 2) // n_phases + n]
+            x6 = wave[(q + 3) % n_phases, at + (q + 3) // n_phases : at + (q + 3) // n_phases + n]
+            x7 = wave[(q + 4) % n_phases, at + (q + 4) // n_phases : at + (q + 4) // n_phases + n]
+            for s in range(factor):
+                w = expand[s]
+                for k in range(n):
+                    v = (w[0] * x0[k] + w[1] * x1[k] + w[2] * x2[k] + w[3] * x3[k]) + (
+                        w[4] * x4[k] + w[5] * x5[k] + w[6] * x6[k] + w[7] * x7[k]
+                    )
+                    line[k] = types.int32(min(max(v * row_scale + row_zero, types.float32(0.0)), top))
+                column = q * factor + s
+                counts = left[column]
+                bl = base_left[tile : tile + n]
+                if both:
+                    br = base_right[tile : tile + n]
+                    others = right[column]
+                    for k in range(skip, n, every):
+                        counts[bl[k] + line[k]] += types.uint32(1)
+                        others[br[k] + line[k]] += types.uint32(1)
+                else:
+                    for k in range(skip, n, every):
+                        counts[bl[k] + line[k]] += types.uint32(1)
+    return drawn
+
+
+@njit(types.int64(_F32_2, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
+                  types.float64[:, ::1], types.float64[:, ::1]),
+      nogil=True, cache=True)  # fmt: skip
+def crossings(wave, first, count, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
+    """Times at which traces between mirror-image levels cross 0, in UI from the left symbol; return how many.
+
+    ``classes`` is aligned with the columns of ``wave``. ``bins`` counts times over one UI; ``groups[g]`` = count, sum, sum of squares
+    (about ``origin``) for the pattern of classes at the offsets ``around``; ``edges[rising]`` = count, sum.
+    """
+    n_phases = wave.shape[0]
+    n_bins = bins.size
+    found = 0
+    for k in range(first, first + count):
+        left = classes[k]
+        if left + classes[k + 1] != n_levels - 1 or left == classes[k + 1]:
+            continue
+        low = -1
+        high = -1
+        before = wave[0, k]
+        for p in range(n_phases):
+            after = wave[p + 1, k] if p + 1 < n_phases else wave[0, k + 1]
+            if (before > 0.0) != (after > 0.0):
+                if low < 0:
+                    low = p
+                high = p
+            before = after
+        if low < 0:
+            continue
+        total = 0.0
+        for which in range(2):
+            p = low if which == 0 else high
+            y0 = wave[p - 1, k] if p > 0 else wave[n_phases - 1, k - 1]
+            y1 = wave[p, k]
+            y2 = wave[p + 1, k] if p + 1 < n_phases else wave[0, k + 1]
+            y3 = wave[p + 2, k] if p + 2 < n_phases else wave[p + 2 - n_phases, k + 1]
+            # regula falsi on the cubic through four phases
+            a, fa, b, fb = 0.0, types.float64(y1), 1.0, types.float64(y2)
+            u = 0.5
+            for _ in range(4):
+                u = a - fa * (b - a) / (fb - fa)
+                f = (
+                    -u * (u - 1) * (u - 2) / 6 * y0
+                    + (u + 1) * (u - 1) * (u - 2) / 2 * y1
+                    - (u + 1) * u * (u - 2) / 2 * y2
+                    + (u + 1) * u * (u - 1) / 6 * y3
+                )
+                if (f > 0.0) == (fa > 0.0):
+                    a, fa = u, f
+                else:
+                    b, fb = u, f
+                if fb == fa:
+                    break
+            total += (p + u) / n_phases
+        time = 0.5 * total
+        bins[min(max(int(time * n_bins), 0), n_bins - 1)] += 1
+        group = 0
+        for offset in around:
+            group = group * n_levels + classes[k + offset]
+        about = time - origin
+        groups[group, 0] += 1.0
+        groups[group, 1] += about
+        groups[group, 2] += about * about
+        rising = 1 if classes[k + 1] > left else 0
+        edges[rising, 0] += 1.0
+        edges[rising, 1] += time
+        found += 1
+    return found
+
+
+@njit(types.void(_F32, _F32, types.int64, types.int64, types.int64, types.int64, types.boolean, types.float64[:, :]),
+      nogil=True, cache=True, fastmath=_FAST)  # fmt: skip
+def add_gram(a, b, first, last, earliest, n_lags, same, gram):
+    """``gram[i, j] += sum over k in first .. last of a[k - lag i] b[k - lag j]``; both rails carry ``n_lags`` beyond either end.
+
+    Each diagonal follows from its first entry: stepping both lags by one moves the sum's ends by one symbol.
+    """
+    n = last - first
+    for border in range(2 * n_lags - 1):
+        # first row, then the rest of the first column
+        i = 0 if border < n_lags else border - n_lags + 1
+        j = border if border < n_lags else 0
+        if same and border >= n_lags:
+            break
+        x = a[first - earliest - i : first - earliest - i + n]
+        y = b[first - earliest - j : first - earliest - j + n]
+        total = types.float32(0.0)
+        for k in range(n):
+            total += x[k] * y[k]
+        value = types.float64(total)
+        for step in range(n_lags - max(i, j)):
+            gram[i + step, j + step] += value
+            if same and i + step != j + step:
+                gram[j + step, i + step] += value
+            lag_i, lag_j = earliest + i + step, earliest + j + step
+            value += a[first - 1 - lag_i] * b[first - 1 - lag_j] - a[last - 1 - lag_i] * b[last - 1 - lag_j]

@@ -1,0 +1,271 @@
+"""The symbol-rate loop: timing and carrier, one pass, no look-ahead beyond one symbol. Behind `dsp.tracking`.
+
+`state` and `setup` are float64 vectors whose entries the constants below name; `Tracker` in `dsp.tracking` owns both.
+"""
+
+import math
+
+from numba import njit, types
+
+# state
+INSTANT, RATE, PREVIOUS, PHASE, TURN, OLD_I, OLD_Q, MID_I, MID_Q, OLD_A_I, OLD_A_Q = range(11)
+N_STATE = 11
+# setup
+(
+    SPS,
+    DETECTOR,
+    TIMING_K1,
+    TIMING_K2,
+    CARRIER_K1,
+    CARRIER_K2,
+    OFFSET,
+    STAGGER,
+    ROTATION,
+    LEVELS,
+    SHAPE,
+    ENERGY,
+    LEVEL_STEP,
+    TIMING_BIAS,
+) = range(14)
+N_SETUP = 14
+GARDNER, MUELLER_MULLER, DERIVATIVE = 0.0, 1.0, 2.0
+PAM, BPSK, QAM, PSK8 = 0.0, 1.0, 2.0, 3.0
+
+TEMPLATE = 16  # taps of the pattern-noise template, for symbols -8 .. +7 about the one in hand
+AHEAD = 8
+
+_F32 = types.Array(types.float32, 1, "C", readonly=True)
+_TABLE = types.Array(types.float32, 2, "C", readonly=True)
+_F64 = types.Array(types.float64, 1, "C", readonly=True)
+_OUT32 = types.float32[::1]
+_OUT64 = types.float64[::1]
+_FAST = {"contract", "nsz", "reassoc", "arcp"}
+
+
+@njit(types.float32(_F32, types.float64, _TABLE), nogil=True, cache=True, fastmath=_FAST, inline="always")
+def _at(samples, instant, table):
+    i = int(instant)
+    row = int((instant - i) * 512.0 + 0.5)
+    w = table[row]
+    x = samples[i - 3 : i + 5]
+    total = types.float32(0.0)
+    for m in range(8):
+        total += w[m] * x[m]
+    return total
+
+
+@njit(nogil=True, cache=True, inline="always")
+def _slot(value, means, n):
+    index = 0
+    for m in range(n - 1):
+        if value > 0.5 * (means[m] + means[m + 1]):
+            index += 1
+    return index
+
+
+@njit(
+    types.int64(
+        _F32,
+        _F32,
+        types.boolean,
+        _TABLE,
+        _TABLE,
+        _F64,
+        types.float64[:, ::1],
+        _F64,
+        _F64,
+        _F64,
+        _F32,
+        _OUT64,
+        types.int64,
+        _OUT64,
+        _OUT64,
+        types.float32[:, ::1],
+        types.float32[:, ::1],
+        types.float32[:, ::1],
+        types.int8[:, ::1],
+    ),
+    nogil=True,
+    cache=True,
+    fastmath=_FAST,
+)
+def track(
+    x_i, x_q, complex_in, table, slope_table, setup, means, gain, zero, nominal, template,
+    state, history, instants, phases, decided, slopes, values, classes,
+):  # fmt: skip
+    """Run until the samples are used up; return how many symbols came out.
+
+    ``instants`` and ``phases`` (unwrapped, cycles) get one entry a symbol; ``decided``, ``slopes`` (level units, per UI),
+    ``values`` (level units) and ``classes`` get theirs behind ``history`` entries of the symbols before.
+    """
+    sps = setup[SPS]
+    detector = setup[DETECTOR]
+    k1, k2 = setup[TIMING_K1], setup[TIMING_K2]
+    c1, c2 = setup[CARRIER_K1], setup[CARRIER_K2]
+    offset = setup[OFFSET] * sps
+    stagger = setup[STAGGER] * sps
+    rotation = setup[ROTATION]
+    n_levels = int(setup[LEVELS])
+    shape = setup[SHAPE]
+    level_step = setup[LEVEL_STEP]
+    bias = setup[TIMING_BIAS]
+    t, rate, t_old = state[INSTANT], state[RATE], state[PREVIOUS]
+    phase, freq = state[PHASE], state[TURN]
+    old_i, old_q = state[OLD_I], state[OLD_Q]
+    mid_i_old, mid_q_old = state[MID_I], state[MID_Q]
+    a_old_i, a_old_q = state[OLD_A_I], state[OLD_A_Q]
+    cos, sin = math.cos(2 * math.pi * phase), math.sin(2 * math.pi * phase)
+    rot_c, rot_s = math.cos(2 * math.pi * rotation), math.sin(2 * math.pi * rotation)
+    half_c, half_s = math.cos(math.pi * rotation), math.sin(math.pi * rotation)
+    scale_i, scale_q = 1.0 / gain[0], 1.0 / gain[1]
+    carrier_scale = 1.0 / setup[ENERGY]
+    last = x_i.size - 6.0 - 2.0 * sps - abs(offset)
+    room = instants.size
+    n = 0
+    while t < last and n < room:
+        k = history + n
+        # the sample that is decided, turned upright
+        where = t + offset
+        y_i = _at(x_i, where, table)
+        z_q = 0.0
+        if complex_in:
+            y_q = _at(x_q, where, table)
+            z_i = y_i * cos + y_q * sin
+            cross_q = y_q * cos - y_i * sin
+            z_q = cross_q
+            cross_i = z_i
+            if stagger > 0.0:
+                y_i = _at(x_i, where + stagger, table)
+                y_q = _at(x_q, where + stagger, table)
+                z_q = y_q * cos - y_i * sin
+                cross_i = y_i * cos + y_q * sin
+        else:
+            z_i = y_i
+
+        m_i = _slot(z_i, means[0], n_levels)
+        a_i = nominal[m_i]
+        m_q = 0
+        a_q = 0.0
+        if shape == QAM:
+            m_q = _slot(z_q, means[1], n_levels)
+            a_q = nominal[m_q]
+        elif shape == PSK8:
+            wide = abs(z_i * scale_i) > abs(z_q * scale_q)
+            m_i = (3 if wide else 2) if z_i > 0 else (0 if wide else 1)
+            m_q = (2 if wide else 3) if z_q > 0 else (1 if wide else 0)
+            a_i, a_q = nominal[m_i], nominal[m_q]
+        means[0, m_i] += level_step * (z_i - means[0, m_i])
+        if shape >= QAM:
+            means[1, m_q] += level_step * (z_q - means[1, m_q])
+
+        # timing error, late positive, in UI after the scaling that setup's gains carry
+        error = 0.0
+        d_i = 0.0
+        d_q = 0.0
+        if detector == GARDNER:
+            here_i, here_q = z_i, z_q
+            if offset != 0.0 or stagger > 0.0:
+                here_i = _at(x_i, t, table)
+                if complex_in:
+                    y_q = _at(x_q, t, table)
+                    here_q = y_q * cos - here_i * sin
+                    here_i = here_i * cos + y_q * sin
+            middle = 0.5 * (t + t_old)
+            mid_i = _at(x_i, middle, table)
+            mid_q = 0.0
+            if complex_in:
+                y_q = _at(x_q, middle, table)
+                back_c, back_s = cos * half_c + sin * half_s, sin * half_c - cos * half_s
+                mid_q = y_q * back_c - mid_i * back_s
+                mid_i = mid_i * back_c + y_q * back_s
+            if stagger > 0.0:
+                error = mid_i * (here_i - old_i) * scale_i * scale_i
+                error += old_q * (mid_q - mid_q_old) * scale_q * scale_q
+            else:
+                error = mid_i * (here_i - old_i) * scale_i * scale_i
+                if shape >= QAM:
+                    error += mid_q * (here_q - old_q) * scale_q * scale_q
+            old_i, old_q = here_i, here_q
+            mid_i_old, mid_q_old = mid_i, mid_q
+        elif detector == MUELLER_MULLER:
+            here_i, here_q = z_i, z_q
+            if offset != 0.0:
+                here_i = _at(x_i, t, table)
+                if complex_in:
+                    y_q = _at(x_q, t, table)
+                    here_q = y_q * cos - here_i * sin
+                    here_i = here_i * cos + y_q * sin
+                    if stagger > 0.0:
+                        y_i = _at(x_i, t + stagger, table)
+                        y_q = _at(x_q, t + stagger, table)
+                        here_q = y_q * cos - y_i * sin
+            error = (a_old_i * here_i - a_i * old_i) * scale_i
+            if shape >= QAM:
+                error += (a_old_q * here_q - a_q * old_q) * scale_q
+            old_i, old_q = here_i, here_q
+            a_old_i, a_old_q = a_i, a_q
+        else:
+            d_i = _at(x_i, t, slope_table)
+            if complex_in:
+                y_q = _at(x_q, t, slope_table)
+                d_q = y_q * cos - d_i * sin
+                d_i = d_i * cos + y_q * sin
+                if stagger > 0.0:
+                    y_i = _at(x_i, t + stagger, slope_table)
+                    y_q = _at(x_q, t + stagger, slope_table)
+                    d_q = y_q * cos - y_i * sin
+            slopes[0, k] = d_i * scale_i * sps
+            slopes[1, k] = d_q * scale_q * sps
+            decided[0, k] = a_i
+            decided[1, k] = a_q
+            # pattern noise of the symbol AHEAD back: everything that its decided neighbours put into its slope
+            centre = k - AHEAD
+            past = decided[0, k - TEMPLATE + 1 : k + 1]
+            total = types.float32(0.0)
+            for m in range(TEMPLATE):
+                total += template[m] * past[m]
+            error = decided[0, centre] * (slopes[0, centre] - total)
+            if shape >= QAM:
+                past = decided[1, k - TEMPLATE + 1 : k + 1]
+                total = types.float32(0.0)
+                for m in range(TEMPLATE):
+                    total += template[m] * past[m]
+                error += decided[1, centre] * (slopes[1, centre] - total)
+        error -= bias
+        decided[0, k] = a_i
+        decided[1, k] = a_q
+        values[0, k] = (z_i - zero[0]) * scale_i
+        values[1, k] = (z_q - zero[1]) * scale_q
+        classes[0, k] = m_i
+        classes[1, k] = m_q
+        instants[n] = t
+        phases[n] = phase
+
+        # an impulse must not throw the clock: the loop moves by a tenth of a symbol at most, its rate stays near nominal
+        rate = min(max(rate - min(max(k2 * error, -0.01), 0.01), -0.02), 0.02)
+        t_old = t
+        t += sps * (1.0 + rate - min(max(k1 * error, -0.1), 0.1))
+
+        if complex_in:
+            if shape == BPSK:
+                twist = a_i * z_q * scale_i
+            else:
+                twist = (a_i * cross_q * scale_q - a_q * cross_i * scale_i)
+            twist = min(max(twist * carrier_scale, -1.0), 1.0)
+            freq += c2 * twist
+            step = freq + c1 * twist
+            phase += step + rotation
+            d = 2 * math.pi * step
+            d2 = d * d
+            dc = 1.0 - d2 * (0.5 - d2 * (1.0 / 24 - d2 * (1.0 / 720)))
+            ds = d * (1.0 - d2 * (1.0 / 6 - d2 * (1.0 / 120 - d2 * (1.0 / 5040))))
+            if rotation != 0.0:
+                cos, sin = cos * rot_c - sin * rot_s, sin * rot_c + cos * rot_s
+            cos, sin = cos * dc - sin * ds, sin * dc + cos * ds
+        n += 1
+    state[INSTANT], state[RATE], state[PREVIOUS] = t, rate, t_old
+    state[PHASE], state[TURN] = phase, freq
+    state[OLD_I], state[OLD_Q] = old_i, old_q
+    state[MID_I], state[MID_Q] = mid_i_old, mid_q_old
+    state[OLD_A_I], state[OLD_A_Q] = a_old_i, a_old_q
+    return n

@@ -1,0 +1,522 @@
+"""Finding a link in a stretch of rails: is its symbol clock there at all, and where do the loops begin?
+
+Feed-forward throughout: the clock from its spectral line, the carrier from the M-th power's line, the best instant by trying
+them all, then one run of the loops themselves over the stretch, whose straight lines give the start.
+"""
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dsp._kernels.tracking import AHEAD, TEMPLATE
+from dsp.filters import Oscillator
+from dsp.frontend import FrontPlan, matched_filter, wants_corners
+from dsp.interpolation import BEFORE, PHASES, TAPS
+from dsp.link import Link, Scheme
+from dsp.tracking import (
+    TEMPLATE_LAGS,
+    Detector,
+    Rails,
+    Tracker,
+    TrackStart,
+    level_units,
+    tables_for,
+)
+
+CHANCE = 1e-8  # of taking noise for a clock line, an attempt
+RATE_SPAN = 2e-3  # the symbol rate is looked for this far to either side, as a fraction
+_SCAN = 32  # instants a symbol that are tried
+
+# MER in dB that decisions on Gaussian noise reach by themselves: the distortion of the best quantiser of so many levels.
+# Source: J. Max, Quantizing for minimum distortion, IRE Trans. Inf. Theory 6(1), 1960, table I (2, 3, 4, 8 levels).
+_NOISE_MER_DB = {2: 4.40, 3: 7.21, 4: 9.30, 8: 14.62}
+
+
+@dataclass(frozen=True, slots=True)
+class Acquired:
+    """A link found: where loops begin and how sure that is.
+
+    ``carrier`` is the turn taken out before the matched filter, cycles a rail sample; ``start.instant`` counts filtered samples
+    from the stretch's first; ``noise_like_db`` is the MER below which decisions say nothing.
+    """
+
+    carrier: float
+    start: TrackStart
+    chance: float
+    mer_db: float
+    noise_like_db: float
+
+
+@dataclass(frozen=True, slots=True)
+class NotFound:
+    """No link in this stretch, and why."""
+
+    reason: str
+
+
+def interpolate(rail: NDArray[np.float32], instants: NDArray[np.float64], table: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Value (or slope) of a rail at fractional ``instants``, any count; instants must lie 4 samples inside."""
+    whole = np.floor(instants).astype(np.int64)
+    rows = np.rint((instants - whole) * PHASES).astype(np.int64)
+    index = whole[:, None] + np.arange(-BEFORE, TAPS - BEFORE)
+    return np.asarray(np.einsum("nm,nm->n", rail[index], table[rows]))
+
+
+@dataclass(frozen=True, slots=True)
+class ClockLine:
+    """A spectral line at the symbol rate: cycles a sample, the phase of its crest in samples, chance that noise made it."""
+
+    frequency: float
+    crest: float
+    chance: float
+
+
+def clock_line(power: NDArray[np.float32], sps: float, span: float = RATE_SPAN) -> ClockLine:
+    """The line nearest to the symbol rate in a power-like sequence ``(n,)``.
+
+    Source: M. Oerder and H. Meyr, Digital filter and square timing recovery, IEEE Trans. Commun. 36(5), 1988. The chance
+    compares the peak to the floor beside it: ratio of an exponential to the mean of ``k`` others, times the bins searched.
+    """
+    block = max(round(16 * sps), 1)
+    blocks = power.size // block
+    if blocks < 12:
+        return ClockLine(1.0 / sps, 0.0, 1.0)
+    centred = power[: blocks * block] - np.mean(power[: blocks * block], dtype=np.float64)
+    cycle = np.exp(-2j * np.pi * np.arange(blocks * block) / sps).astype(np.complex64)
+    sums = (centred.astype(np.float32) * cycle).reshape(blocks, block).sum(axis=1)
+    length = 8 * 2 ** math.ceil(math.log2(blocks))
+    spectrum = np.fft.fft(sums, length)
+    level = np.abs(spectrum) ** 2
+    per_symbol = np.fft.fftfreq(length) * sps / block  # cycles a symbol off the nominal rate
+    reach = max(span, 1.0 / (blocks * block / sps))
+    inside = np.abs(per_symbol) <= reach
+    peak = int(np.argmax(np.where(inside, level, -1.0)))
+    resolution = sps / (blocks * block)
+    beside = np.abs(per_symbol - per_symbol[peak]) > 3 * resolution
+    floor = float(np.mean(np.sort(level[beside])[: int(0.8 * beside.sum())])) / 0.598  # mean of an exponential's lower 80 %
+    independent = max(blocks - 7, 1)
+    ratio = level[peak] / max(floor, 1e-300)
+    searched = max(2 * reach / resolution, 1.0)
+    chance = min(1.0, searched * math.exp(-independent * math.log1p(ratio / independent)))
+    left, right = np.sqrt(level[(peak - 1) % length]), np.sqrt(level[(peak + 1) % length])
+    middle = math.sqrt(level[peak])
+    bend = left - 2 * middle + right
+    shift = 0.5 * (left - right) / bend if bend < 0 else 0.0
+    offset = float(np.fft.fftfreq(length)[peak]) + shift / length  # cycles a block
+    frequency = 1.0 / sps + offset / block
+    line = np.sum(sums * np.exp(-2j * np.pi * offset * np.arange(blocks)))
+    # within a block the mixing was at nominal rate: its mean phase belongs to the block's middle
+    angle = float(np.angle(line)) + math.pi * offset * (block - 1) / block
+    return ClockLine(frequency, -angle / (2 * math.pi * frequency), chance)
+
+
+@dataclass(frozen=True, slots=True)
+class Fit:
+    """Decisions on values: level means ``(rails, levels)``, decided levels and classes ``(rails, n)``, MER in dB."""
+
+    means: NDArray[np.float64]
+    decided: NDArray[np.float64]
+    classes: NDArray[np.int64]
+    mer_db: float
+
+
+def fit_levels(values: NDArray[np.floating], scheme: Scheme) -> Fit:
+    """Levels of decision values ``(rails, n)`` without knowing the scale: Lloyd's iterations from the values' rms.
+
+    Source: S. P. Lloyd, Least squares quantization in PCM, IEEE Trans. Inf. Theory 28(2), 1982 (from memory).
+    """
+    nominal = np.asarray(scheme.rail_levels)
+    rails, n = values.shape
+    centre = values.mean(axis=1, keepdims=True)
+    power = np.mean((values - centre) ** 2, axis=1, keepdims=True)
+    scale = np.sqrt(np.maximum(power, 1e-30) / np.mean(nominal**2))
+    means = centre + scale * nominal
+    classes = np.zeros((rails, n), np.int64)
+    for step in range(8):
+        if scheme.name == "8psk":
+            u = (values - centre) / scale
+            wide = np.abs(u[0]) > np.abs(u[1])
+            classes[0] = np.where(u[0] > 0, np.where(wide, 3, 2), np.where(wide, 0, 1))
+            classes[1] = np.where(u[1] > 0, np.where(wide, 2, 3), np.where(wide, 1, 0))
+        else:
+            for rail in range(rails):
+                thresholds = 0.5 * (means[rail, 1:] + means[rail, :-1])
+                classes[rail] = np.searchsorted(thresholds, values[rail])
+        free = means.copy()
+        for rail in range(rails):
+            counts = np.bincount(classes[rail], minlength=nominal.size)
+            sums = np.bincount(classes[rail], weights=values[rail], minlength=nominal.size)
+            free[rail] = np.where(counts > 0, sums / np.maximum(counts, 1), free[rail])
+        if step < 5:
+            gain, zero = level_units(free, nominal)
+            means = zero[:, None] + gain[:, None] * nominal
+        else:
+            means = np.sort(free, axis=1)
+    decided_values = np.take_along_axis(means, classes, axis=1)
+    signal = np.mean((decided_values - decided_values.mean(axis=1, keepdims=True)) ** 2)
+    noise = np.mean((values - decided_values) ** 2)
+    mer = 10 * math.log10(max(signal, 1e-30) / max(noise, 1e-30 + 1e-12 * signal))
+    return Fit(means, nominal[classes], classes, mer)
+
+
+def noise_like_mer_db(scheme: Scheme) -> float:
+    """MER that decisions on noise reach by themselves, for the scheme."""
+    return 4.4 if scheme.name == "8psk" else _NOISE_MER_DB[scheme.levels]
+
+
+def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0) -> tuple[float, float, float]:
+    """Carrier of symbol values ``(n,)`` from the line of their ``order``-th power: turn (cycles a symbol), phase (cycles), chance.
+
+    The phase is that of the constellation whose points to the power are negative real (order above 2) or positive (order 2).
+    Source: A. J. and A. M. Viterbi, IEEE Trans. Inf. Theory 29(4), 1983, with the fourth power itself as its nonlinearity.
+    """
+    scaled = values / max(float(np.sqrt(np.mean(np.abs(values) ** 2))), 1e-30)
+    magnitude = np.abs(scaled)
+    # unit-modulus powers weighted by the magnitude squared: outer points of a QAM carry the phase, none dominates
+    raised = np.exp(1j * order * np.angle(scaled)) * np.minimum(magnitude, 2.0) ** 2
+    length = 4 * 2 ** math.ceil(math.log2(values.size))
+    spectrum = np.fft.fft(raised, length)
+    level = np.abs(spectrum) ** 2
+    frequencies = np.fft.fftfreq(length)
+    inside = np.abs(frequencies) <= 0.5 * searched
+    peak = int(np.argmax(np.where(inside, level, -1.0)))
+    k = values.size
+    ratio = level[peak] / max(float(np.mean(np.sort(level)[: int(0.8 * length)])) / 0.598, 1e-300)
+    chance = min(1.0, k * math.exp(-k / 4 * math.log1p(4 * ratio / k)))
+    left, middle, right = (math.sqrt(level[(peak + d) % length]) for d in (-1, 0, 1))
+    bend = left - 2 * middle + right
+    frequency = float(frequencies[peak]) + (0.5 * (left - right) / bend if bend < 0 else 0.0) / length
+    line = np.sum(raised * np.exp(-2j * np.pi * frequency * np.arange(k)))
+    reference = 0.0 if order == 2 else math.pi
+    phase = (float(np.angle(line)) - reference) / (2 * math.pi * order)
+    return frequency / order, phase, chance
+
+
+def acquire(
+    link: Link, front: FrontPlan, rails: Rails, *, detector: Detector | None, timing_bandwidth: float, carrier_bandwidth: float
+) -> Acquired | NotFound:
+    """Look for the link in rails from the front end, one float32 array ``(n,)`` each; needs a few hundred symbols."""
+    return _Search(link, front, detector, timing_bandwidth, carrier_bandwidth).run(rails)
+
+
+class _Search:
+    def __init__(
+        self, link: Link, front: FrontPlan, detector: Detector | None, timing_bandwidth: float, carrier_bandwidth: float
+    ) -> None:
+        self._link = link
+        self._scheme = link.scheme
+        self._front = front
+        self._corners = wants_corners(link.scheme, link.pulse)
+        self._detector: Detector = detector or ("gardner" if self._corners else "derivative")
+        bandwidth = 0.5 * (1 + (link.pulse.number or 1.0)) if link.pulse.family in ("rrc", "rc") else 1.0
+        self._tables = tables_for(front.sps, bandwidth)
+        self._timing_bandwidth = timing_bandwidth
+        self._carrier_bandwidth = carrier_bandwidth
+
+    def run(self, rails: Rails) -> Acquired | NotFound:
+        power = sum(float(np.mean(rail.astype(np.float64) ** 2)) for rail in rails)
+        if not power > 0.0:
+            return NotFound("the samples are all zero")
+        carrier = self._coarse_carrier(rails) if self._scheme.kind == "carrier" else 0.0
+        filtered = self._filter(rails, carrier)
+        line = self._clock(rails, filtered)
+        if line.chance > CHANCE:
+            return NotFound(f"no clock line at {self._link.symbol_rate_hz:g} Hz")
+        sps = 1.0 / line.frequency
+        skip = self._filter_reach()
+        if self._scheme.kind == "carrier":
+            for _ in range(2):
+                instants = self._instants(filtered[0].size, line.crest, sps, skip)
+                turn, _, chance = self._carrier(filtered, instants)
+                carrier += turn / self._front.rail_sps
+                filtered = self._filter(rails, carrier)
+            if chance > 1e-4:
+                return NotFound("a clock line, but no carrier that the scheme would have")
+            line = replace(self._clock(rails, filtered), frequency=line.frequency)
+        instants = self._instants(filtered[0].size, line.crest, sps, skip)
+        if instants.size < 64:
+            return NotFound("too few symbols")
+        turn, phase = (0.0, 0.0)
+        if self._scheme.kind == "carrier":
+            turn, phase, _ = self._carrier(filtered, instants)
+        phases = phase + turn * np.arange(instants.size)
+        best, fit = self._scan(filtered, instants, phases, sps)
+        instants = instants + best * sps
+        reason = self._doubt(fit, line.chance)
+        if reason:
+            return NotFound(reason)
+        if self._scheme.kind == "carrier":
+            turn, phase = self._aided_carrier(filtered, instants, fit, turn)
+        start = self._start(filtered, instants, phase, turn, sps, fit)
+        for _ in range(2):
+            refined = self._rehearse(filtered, start, skip)
+            if isinstance(refined, NotFound):
+                return refined
+            start, fit = refined
+        reason = self._doubt(fit, line.chance)
+        if reason:
+            return NotFound(reason)
+        return Acquired(carrier, start, line.chance, fit.mer_db, noise_like_mer_db(self._scheme))
+
+    def _filter_reach(self) -> float:
+        probe = matched_filter(self._link, self._front)
+        return 2 * probe.delay * self._front.interpolate + TAPS
+
+    def _filter(self, rails: Rails, carrier: float) -> Rails:
+        if self._scheme.kind == "carrier":
+            rails = Oscillator(carrier).push(rails)
+        return matched_filter(self._link, self._front).push(rails)
+
+    def _coarse_carrier(self, rails: Rails) -> float:
+        """Centre of the spectrum's power above its floor, cycles a rail sample; 0 where that is within the noise of saying so."""
+        z = rails[0] + 1j * rails[1]
+        length = 512
+        pieces = z[: z.size // length * length].reshape(-1, length) * np.hanning(length)
+        if not pieces.size:
+            return 0.0
+        density = np.mean(np.abs(np.fft.fft(pieces, axis=1)) ** 2, axis=0)
+        excess = np.maximum(density - 2.0 * np.quantile(density, 0.2), 0.0)
+        # centroid on the circle, so that a band that wraps is no special case
+        centre = float(np.angle(np.sum(excess * np.exp(2j * np.pi * np.fft.fftfreq(length))))) / (2 * math.pi)
+        return centre if abs(centre) * self._front.rail_sps > 0.06 else 0.0
+
+    def _clock(self, rails: Rails, filtered: Rails) -> ClockLine:
+        lines = []
+        if self._scheme.stagger:
+            # the rails' lines stand in opposition: their difference carries the clock
+            lines.append(self._staggered_line(filtered))
+        else:
+            lines.append(clock_line(_power(filtered), self._front.sps))
+            raw = clock_line(_power(rails), self._front.rail_sps) if self._front.rail_sps > 2.5 else None
+            if raw is not None:
+                delay = matched_filter(self._link, self._front).delay
+                ratio = self._front.interpolate
+                lines.append(ClockLine(raw.frequency / ratio, (raw.crest + delay) * ratio, raw.chance))
+        if self._scheme.kind != "carrier":
+            lag = max(round(self._front.sps / 4), 1)
+            sums = np.cumsum(np.concatenate(([0.0], filtered[0].astype(np.float64))))
+            steps = sums[2 * lag :] - 2 * sums[lag:-lag] + sums[: -2 * lag]
+            edge = clock_line((steps / lag).astype(np.float32) ** 2, self._front.sps)
+            lines.append(replace(edge, crest=edge.crest + lag + 0.5 / edge.frequency))
+        return min(lines, key=lambda line: line.chance)
+
+    def _staggered_line(self, filtered: Rails) -> ClockLine:
+        z = (filtered[0] + 1j * filtered[1]).astype(np.complex128)
+        square = z * z
+        n = np.arange(z.size)
+        sps = self._front.sps
+        # lines at twice the carrier plus and minus the rate: the product of the two shifted spectra peaks at twice the carrier
+        length = 2 ** math.ceil(math.log2(z.size)) * 2
+        upper = np.fft.fft(square * np.exp(-2j * np.pi * n / sps), length)
+        lower = np.fft.fft(square * np.exp(2j * np.pi * n / sps), length)
+        joint = np.abs(upper * lower)
+        frequencies = np.fft.fftfreq(length)
+        joint[np.abs(frequencies) > 0.2 / sps] = 0.0
+        peak = int(np.argmax(joint))
+        turned = (square * np.exp(-2j * np.pi * frequencies[peak] * n)).astype(np.complex64)
+        phase = 0.5 * np.angle(upper[peak] * lower[peak])
+        real = (turned * np.exp(-1j * phase)).real
+        return clock_line(np.ascontiguousarray(real, dtype=np.float32), sps)
+
+    def _instants(self, size: int, crest: float, sps: float, skip: float) -> NDArray[np.float64]:
+        first = skip + 1.5 * sps
+        count = int((size - first - 3.0 * sps - TAPS) / sps)
+        start = crest + math.ceil((first - crest) / sps) * sps
+        return start + sps * np.arange(max(count, 0))
+
+    def _values(
+        self,
+        filtered: Rails,
+        instants: NDArray[np.float64],
+        phases: NDArray[np.float64],
+        sps: float,
+        table: NDArray[np.float32] | None = None,
+    ) -> NDArray[np.float64]:
+        """Values (or, with the slope's table, slopes) ``(rails, n)`` at instants, turned upright."""
+        if self._scheme.kind != "carrier":
+            weights = self._tables.value if table is None else table
+            return interpolate(filtered[0], instants, weights)[None].astype(np.float64)
+        upright = np.exp(-2j * np.pi * (phases + self._rotation(phases.size)))
+        z = self._complex(filtered, instants, table) * upright
+        if self._scheme.rails == 1:
+            return z.real[None]
+        if self._scheme.stagger:
+            late = self._complex(filtered, instants + self._scheme.stagger * sps, table) * upright
+            return np.stack((z.real, late.imag))
+        return np.stack((z.real, z.imag))
+
+    def _rotation(self, count: int) -> NDArray[np.float64]:
+        return self._scheme.rotation * np.arange(count)
+
+    def _complex(
+        self, filtered: Rails, instants: NDArray[np.float64], table: NDArray[np.float32] | None = None
+    ) -> NDArray[np.complex128]:
+        weights = self._tables.value if table is None else table
+        real, imag = (interpolate(rail, instants, weights).astype(np.float64) for rail in filtered)
+        return real + 1j * imag
+
+    def _carrier(self, filtered: Rails, instants: NDArray[np.float64]) -> tuple[float, float, float]:
+        z = self._complex(filtered, instants)
+        if self._scheme.stagger:
+            sps = float(np.mean(np.diff(instants)))
+            late = self._complex(filtered, instants + self._scheme.stagger * sps)
+            # upright: I at its instant minus Q's square at its own leaves 2 exp(j 2 theta)
+            pairs = z * z - late * late
+            turn, phase, chance = power_line(pairs, 2)
+            return turn / 2, phase / 2, chance
+        return power_line(z * np.exp(-2j * np.pi * self._rotation(z.size)), self._scheme.symmetry)
+
+    def _scan(
+        self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float
+    ) -> tuple[float, Fit]:
+        """Try every instant of a symbol; the one with the best decisions, in UI from ``instants``, and its fit."""
+        some = slice(0, min(instants.size, 4096))
+        offsets = (np.arange(_SCAN) - _SCAN // 2) / _SCAN
+        fits = [fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme) for o in offsets]
+        mers = np.asarray([fit.mer_db for fit in fits])
+        top = int(np.argmax(mers))
+        # a plateau (a square pulse has one): take its middle
+        near = np.flatnonzero(mers > mers[top] - 0.25)
+        run = near[np.abs(near - top) <= _SCAN // 4]
+        index = round(float(run.mean()))
+        best = float(offsets[index])
+        return best, fit_levels(self._values(filtered, instants + best * sps, phases, sps), self._scheme)
+
+    def _doubt(self, fit: Fit, chance: float) -> str | None:
+        """Why this may be no link after all; None if nothing speaks against it."""
+        decided = fit.decided - fit.decided.mean(axis=1, keepdims=True)
+        energy = float(np.sum(decided**2))
+        if not energy > 0.0:
+            return "all symbols are the same"
+        z = decided[0] + (1j * decided[1] if decided.shape[0] == 2 else 0.0)
+        lines = np.abs(np.fft.fft(z)) ** 2 / z.size
+        if float(lines.max()) > 0.4 * energy:
+            return "a bare tone, or a pattern that repeats, not data"
+        alternate = decided[:, 1:] * decided[:, :-1] * (-1.0) ** np.arange(z.size - 1)
+        if abs(float(np.sum(alternate))) > 0.3 * energy:
+            return "each symbol comes twice: the symbol rate is a multiple of the link's"
+        if fit.mer_db < noise_like_mer_db(self._scheme) + 0.8 and chance > 1e-14:
+            return "a clock line, but the levels are not told from noise"
+        return None
+
+    def _aided_carrier(
+        self, filtered: Rails, instants: NDArray[np.float64], fit: Fit, turn: float
+    ) -> tuple[float, float]:
+        """Carrier turn and phase once more, from the decisions: slope and intercept of the phase left against them."""
+        z = self._complex(filtered, instants)
+        n = np.arange(instants.size)
+        if self._scheme.stagger:
+            # the rails' decisions belong to different instants; the M-th power estimate serves as it is
+            turn, phase, _ = self._carrier(filtered, instants)
+            return turn, phase
+        ideal = fit.decided[0] + (1j * fit.decided[1] if fit.decided.shape[0] == 2 else 0.0)
+        product = z * np.conj(ideal) * np.exp(-2j * np.pi * (turn * n + self._rotation(n.size)))
+        block = max(n.size // 32, 1)
+        sums = product[: n.size // block * block].reshape(-1, block).sum(axis=1)
+        angles = np.unwrap(np.angle(sums)) / (2 * math.pi)
+        centres = (np.arange(sums.size) + 0.5) * block - 0.5
+        slope, intercept = np.polyfit(centres, angles, 1) if sums.size > 2 else (0.0, float(angles.mean()))
+        return turn + float(slope), float(intercept)
+
+    def _start(
+        self, filtered: Rails, instants: NDArray[np.float64], phase: float, turn: float, sps: float, fit: Fit
+    ) -> TrackStart:
+        phases = phase + turn * np.arange(instants.size)
+        slope, bias, template = self._detector_facts(filtered, instants, phases, sps, fit)
+        return TrackStart(
+            float(instants[0]), sps, phase, turn, fit.means, self._detector, slope, bias, 0.0, template
+        )
+
+    def _detector_facts(
+        self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float, fit: Fit
+    ) -> tuple[float, float, NDArray[np.float32] | None]:
+        """Slope of the detector's mean output by timing, its output at the wanted instant, and the template it needs."""
+        step = 0.05
+        gain, zero = level_units(fit.means, np.asarray(self._scheme.rail_levels))
+        template = None
+        if self._detector == "derivative":
+            slopes = self._slopes(filtered, instants, phases, sps) / gain[:, None]
+            template = _pattern_template(fit.decided, slopes)
+
+        def mean_output(shift: float) -> float:
+            at = instants + shift * sps
+            if self._detector == "derivative":
+                slopes = self._slopes(filtered, at, phases, sps) / gain[:, None]
+                assert template is not None
+                cleaned = slopes[:, TEMPLATE:-TEMPLATE] - _patterns(fit.decided, template)[:, TEMPLATE:-TEMPLATE]
+                return float(np.mean(np.sum(fit.decided[:, TEMPLATE:-TEMPLATE] * cleaned, axis=0)))
+            here = (self._values(filtered, at, phases, sps) - zero[:, None]) / gain[:, None]
+            if self._detector == "mueller-muller":
+                error = fit.decided[:, :-1] * here[:, 1:] - fit.decided[:, 1:] * here[:, :-1]
+            else:
+                half = (self._values(filtered, at[1:] - 0.5 * sps, phases[1:], sps) - zero[:, None]) / gain[:, None]
+                error = half * np.diff(here, axis=1)
+            return float(np.mean(np.sum(error, axis=0)))
+
+        slope = (mean_output(step) - mean_output(-step)) / (2 * step)
+        if self._detector == "derivative":
+            return min(slope, -0.1), 0.0, template
+        # the classical detectors keep their own balance
+        sign = 1.0 if self._detector == "gardner" else -1.0
+        return sign * max(sign * slope, 0.05 * self._scheme.symbol_energy()), 0.0, None
+
+    def _slopes(
+        self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float
+    ) -> NDArray[np.float64]:
+        return self._values(filtered, instants, phases, sps, self._tables.slope) * sps
+
+    def _rehearse(self, filtered: Rails, start: TrackStart, skip: float) -> tuple[TrackStart, Fit] | NotFound:
+        """Run the loops over the stretch, and begin again on the straight lines that they settled on."""
+        tracker = Tracker(
+            self._scheme,
+            start,
+            self._tables,
+            timing_bandwidth=self._timing_bandwidth,
+            carrier_bandwidth=self._carrier_bandwidth,
+        )
+        track = tracker.push(filtered)
+        n = track.instants.size - 1
+        settle = min(int(1.5 / self._timing_bandwidth), n // 3)
+        k = np.arange(n)
+        if n < 64:
+            return NotFound("too few symbols")
+        sps, first = np.polyfit(k[settle:], track.instants[settle:n], 1)
+        turn, phase = start.turn, start.phase
+        if self._scheme.kind == "carrier":
+            turned = track.phases[:n] - self._rotation(n)
+            turn, phase = (float(v) for v in np.polyfit(k[settle:], turned[settle:], 1))
+        line = first + sps * k
+        phases = phase + turn * k
+        usable = slice(0, n - 2)
+        best, fit = self._scan(filtered, line[usable], phases[usable], float(sps))
+        if start.detector == "derivative":
+            moved = line + best * sps
+            slope, bias, template = self._detector_facts(filtered, moved[usable], phases[usable], float(sps), fit)
+            return TrackStart(float(moved[0]), float(sps), phase, turn, fit.means, start.detector, slope, bias, 0.0, template), fit
+        slope, bias, template = self._detector_facts(filtered, line[usable], phases[usable], float(sps), fit)
+        return TrackStart(float(first), float(sps), phase, turn, fit.means, start.detector, slope, bias, best, template), fit
+
+
+def _power(rails: Rails) -> NDArray[np.float32]:
+    total = rails[0] * rails[0]
+    return total + rails[1] * rails[1] if len(rails) == 2 else total
+
+
+def _patterns(decided: NDArray[np.float64], template: NDArray[np.float32]) -> NDArray[np.float64]:
+    """What each symbol's decided neighbours put into its slope, shape of ``decided``; wrong within ``TEMPLATE`` of the ends."""
+    return np.asarray(
+        sum(float(t) * np.roll(decided, int(lag), axis=1) for t, lag in zip(template, TEMPLATE_LAGS, strict=True))
+    )
+
+
+def _pattern_template(decided: NDArray[np.float64], slopes: NDArray[np.float64]) -> NDArray[np.float32]:
+    """Least-squares response of the slope to the symbols around it, rails pooled, in the kernel's order of taps."""
+    lagged = np.stack([np.roll(decided, int(lag), axis=1)[:, TEMPLATE:-TEMPLATE] for lag in TEMPLATE_LAGS], axis=-1)
+    design = lagged.reshape(-1, TEMPLATE)
+    target = slopes[:, TEMPLATE:-TEMPLATE].reshape(-1)
+    ridge = 1e-3 * np.trace(design.T @ design) / TEMPLATE
+    solution = np.linalg.solve(design.T @ design + ridge * np.eye(TEMPLATE), design.T @ target)
+    assert AHEAD * 2 == TEMPLATE
+    return np.ascontiguousarray(solution, dtype=np.float32)

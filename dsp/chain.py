@@ -1,0 +1,427 @@
+"""The whole way of a sample, for one link: front end, matched filter, loops, eye."""
+
+import math
+from collections import deque
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Literal, Protocol
+
+import numpy as np
+
+from dsp.acquisition import Acquired, acquire
+from dsp.block import Block, Samples
+from dsp.eye import EyeMeter, EyeSums
+from dsp.figures import Context
+from dsp.filters import Oscillator
+from dsp.frontend import FrontEnd, FrontPlan, matched_filter, plan, wants_corners
+from dsp.link import Link
+from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
+
+FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
+WAVE_PHASES, CORNER_PHASES = 8, 64  # points a symbol at which the wave is kept
+
+# Mean lateness of the Gardner loop over BnT by roll-off, middle sample half-way between strobes; measured by tools/bench.py
+_GARDNER_LATENESS = ((0.2, 0.25, 0.35, 0.5, 0.75, 1.0), (0.0, 0.0, 0.0, 0.0, 0.0, 0.0))
+
+
+@dataclass(frozen=True, slots=True)
+class ChainOptions:
+    """How to measure.
+
+    ``detector`` None: the derivative detector, or Gardner's where waves have corners. Bandwidths are BnT, per symbol. ``window`` is
+    the symbols of a reading, ``every`` draws each n-th trace into the raster.
+    """
+
+    detector: Detector | None = None
+    timing_bandwidth: float = 0.005
+    carrier_bandwidth: float = 0.005
+    window: int = 20_000
+    every: int = 1
+    target_ber: float = 1e-6
+
+
+@dataclass(frozen=True, slots=True)
+class LockEvent:
+    """Lock gained or lost, at a sample of the stream, and why."""
+
+    state: Literal["gained", "lost"]
+    sample: int
+    reason: str
+
+
+class Lane(Protocol):
+    """Where the eye's share of the work is done: at once, or by another thread in order."""
+
+    def do(self, work: Callable[[], None]) -> None:
+        """Do ``work`` after everything given before."""
+
+    def wait(self) -> None:
+        """Return when everything given is done; raise what it raised."""
+
+
+class AtOnce:
+    """A lane that works in the caller's thread."""
+
+    def do(self, work: Callable[[], None]) -> None:
+        """Do it now."""
+        work()
+
+    def wait(self) -> None:
+        """Nothing is ever left to do."""
+
+
+class Chain:
+    """Measures one link in a stream of blocks, however the stream is cut.
+
+    Samples are worked on in chunks of fixed length, counted from the stream's start or last gap. ``on_window`` gets the sums of each
+    full window, in the lane; `total` holds all of them once `finish` returned.
+    """
+
+    def __init__(
+        self,
+        link: Link,
+        *,
+        complex_in: bool,
+        centre_hz: float = 0.0,
+        half_band_hz: float | None = None,
+        options: ChainOptions | None = None,
+        lane: Lane | None = None,
+        on_window: Callable[[EyeSums], None] | None = None,
+    ) -> None:
+        self.link = link
+        self.options = options or ChainOptions()
+        rate = link.sample_rate_hz
+        self._plan = plan(
+            link,
+            complex_in=complex_in,
+            centre=centre_hz / rate,
+            half_band=None if half_band_hz is None else half_band_hz / rate,
+        )
+        self._lane = lane or AtOnce()
+        self._on_window = on_window
+        self._chunk = 2 ** min(max(round(math.log2(rate * 0.02)), 9), 15)
+        self._buffer = np.empty(self._chunk, np.complex64 if complex_in else np.float32)
+        self._filled = 0
+        self._position = 0  # stream index of the buffer's first sample
+        self.events: list[LockEvent] = []
+        self.samples = 0
+        self.samples_lost = 0
+        self.gaps = 0
+        self.clipped = 0
+        self.nonfinite = 0
+        self.locked_samples = 0
+        self.slips = 0
+        self.acquired_at: int | None = None
+        self.last_reason = "too few symbols"
+        corners = wants_corners(link.scheme, link.pulse)
+        self._phases = CORNER_PHASES if corners else WAVE_PHASES
+        number = link.pulse.number or 1.0
+        self._tables = tables_for(self._plan.sps, 0.5 * (1 + number) if link.pulse.family in ("rrc", "rc") else 1.0)
+        self._meter: EyeMeter | None = None
+        self._total: EyeSums | None = None
+        self._sps = self._plan.sps
+        self._carrier: float | None = None  # cycles a rail sample, of the first run
+        self._slip = SlipCounter()
+        self._begin()
+
+    # -- the stream ----------------------------------------------------------------------------------------------------
+
+    def push(self, block: Block) -> None:
+        """Take the next block; a gap before it ends the run of symbols and acquisition begins anew."""
+        if block.lost:
+            self.gaps += 1
+            self.samples_lost += block.lost
+            self._break("samples lost")
+            self._position = block.start
+        self.samples += block.samples.size
+        self.clipped += block.clipped
+        self.nonfinite += block.nonfinite
+        at = 0
+        while at < block.samples.size:
+            n = min(self._chunk - self._filled, block.samples.size - at)
+            self._buffer[self._filled : self._filled + n] = block.samples[at : at + n]
+            self._filled += n
+            at += n
+            if self._filled == self._chunk:
+                self._work(self._buffer)
+
+    def finish(self) -> None:
+        """The stream has ended: use what is left."""
+        self._break("end of stream")
+        self._lane.wait()
+        if self._meter is not None and self._meter.sums.symbols:
+            self._merge(self._meter.sums)
+
+    @property
+    def total(self) -> EyeSums | None:
+        """Sums of all symbols, after `finish`; None if there was never a lock."""
+        return self._total
+
+    @property
+    def locked(self) -> bool:
+        """Whether the loops run now."""
+        return self._tracker is not None
+
+    def context(self) -> Context:
+        """What `dsp.figures.Figures` needs to read this chain's sums."""
+        scheme = self.link.scheme
+        rate = self.link.sample_rate_hz
+        base = None
+        if scheme.kind == "frequency":
+            base = self._plan.shift * rate
+        elif scheme.kind == "carrier" and self._carrier is not None:
+            base = (self._plan.shift + self._carrier / self._plan.decimate) * rate
+        lateness = 0.0
+        if self.options.detector == "gardner" and self.link.pulse.family in ("rrc", "rc"):
+            rolloffs, values = _GARDNER_LATENESS
+            lateness = float(np.interp(self.link.pulse.number or 1.0, rolloffs, values)) * self.options.timing_bandwidth
+        return Context(
+            self.link.symbol_rate_hz,
+            self._sps / self._plan.sps,
+            self._meter.offset_ui if self._meter is not None else 0.0,
+            lateness,
+            base,
+            scheme.kind == "frequency",
+            self.options.target_ber,
+        )
+
+    # -- one chunk -----------------------------------------------------------------------------------------------------
+
+    def _begin(self) -> None:
+        """A new run: everything with memory starts afresh."""
+        self._front = FrontEnd(self.link, self._plan)
+        self._tracker: Tracker | None = None
+        self._search()
+
+    def _search(self) -> None:
+        self._kept: list[Rails] = []
+        self._kept_samples = 0
+        self._next_try = FIRST_TRY
+
+    def _work(self, samples: Samples) -> None:
+        rails = self._front.push(samples)
+        self._filled = 0
+        self._position += samples.size
+        if self._tracker is not None:
+            self._track(rails)
+        else:
+            self._kept.append(rails)
+            self._kept_samples += rails[0].size
+            if self._kept_samples >= self._next_try * self._plan.rail_sps:
+                self._try()
+
+    def _try(self, *, last: bool = False) -> None:
+        rails = tuple(np.concatenate(parts) for parts in zip(*self._kept, strict=True))
+        found = acquire(
+            self.link,
+            self._plan,
+            rails,
+            detector=self.options.detector,
+            timing_bandwidth=self.options.timing_bandwidth,
+            carrier_bandwidth=self.options.carrier_bandwidth,
+        )
+        if isinstance(found, Acquired):
+            self._lock(found, rails)
+            return
+        self.last_reason = found.reason
+        if last:
+            return
+        if self._next_try >= LAST_TRY:
+            half = rails[0].size // 2
+            self._kept = [tuple(rail[half:] for rail in rails)]
+            self._kept_samples -= half
+        else:
+            self._kept = [rails]
+            self._next_try *= 2
+
+    def _lock(self, found: Acquired, rails: Rails) -> None:
+        front, options, scheme = self._plan, self.options, self.link.scheme
+        filters = matched_filter(self.link, front)
+        delay = (found.start.instant / front.interpolate - filters.delay) * front.decimate - self._front.delay
+        first = max(round(self._position - self._kept_samples * front.decimate + delay), 0)
+        self.events.append(LockEvent("gained", first, f"MER {found.mer_db:.1f} dB"))
+        if self.acquired_at is None:
+            self.acquired_at = first
+        self._locked_from = first
+        if self._meter is None:
+            self._sps = found.start.sps
+            self._carrier = found.carrier
+            self._meter = EyeMeter(
+                scheme,
+                self._tables,
+                offset_ui=found.start.offset_ui,
+                sps=self._sps,
+                phases=self._phases,
+                slab=min(max(round(self.link.symbol_rate_hz * 0.02), 64), 4096),
+                window=options.window,
+                every=options.every,
+                finished=self._window_full,
+            )
+        self._meter.offset_ui = found.start.offset_ui
+        assert self._carrier is not None
+        self._meter.extra_turn = (found.carrier - self._carrier) * front.rail_sps
+        self._tracker = Tracker(
+            scheme,
+            found.start,
+            self._tables,
+            timing_bandwidth=options.timing_bandwidth,
+            carrier_bandwidth=options.carrier_bandwidth,
+        )
+        self._oscillator = Oscillator(found.carrier)
+        self._matched = filters
+        self._guard = LockGuard(
+            max(200, round(0.05 * self.link.symbol_rate_hz)), min(found.noise_like_db + 0.8, found.mer_db - 3.0)
+        )
+        self._waiting: deque[Track] = deque()
+        self._slip.anchor()
+        self._search()
+        self._track(rails)
+
+    def _track(self, rails: Rails) -> None:
+        assert self._tracker is not None
+        if self.link.scheme.kind == "carrier":
+            rails = self._oscillator.push(rails)
+        track = self._tracker.push(self._matched.push(rails))
+        self._waiting.append(track)
+        if not self._guard.holds(track):
+            self._lose("the levels are no longer told from noise")
+            return
+        self._release(self._guard.window)
+
+    def _release(self, held: int) -> None:
+        """Hand on what has proved good: all but the last ``held`` symbols."""
+        waiting = sum(track.values.shape[1] for track in self._waiting)
+        while self._waiting and waiting - self._waiting[0].values.shape[1] >= held:
+            track = self._waiting.popleft()
+            waiting -= track.values.shape[1]
+            self.slips += self._slip.push(track, self._sps)
+            meter = self._meter
+            assert meter is not None
+            self._lane.do(lambda meter=meter, track=track: meter.push(track))  # type: ignore[misc]
+
+    def _lose(self, reason: str) -> None:
+        """Forget what came in since the lock may have gone, and look for the link again."""
+        held = sum(track.values.shape[1] for track in self._waiting)
+        sample = max(self._position - round(held * self.link.samples_per_symbol), self._locked_from)
+        self._end_run(sample, reason)
+
+    def _end_run(self, sample: int, reason: str) -> None:
+        self.events.append(LockEvent("lost", sample, reason))
+        self.locked_samples += max(sample - self._locked_from, 0)
+        self._tracker = None
+        meter = self._meter
+        assert meter is not None
+        self._lane.do(meter.end_segment)
+
+    def _break(self, reason: str) -> None:
+        """End the run of samples: work on what is there, settle the sums, begin afresh."""
+        if self._filled:
+            self._work(self._buffer[: self._filled].copy())
+        if self._tracker is None and self._kept_samples:
+            self._try(last=True)
+        if self._tracker is not None:
+            self._release(0)
+            self._end_run(self._position, reason)
+        self._begin()
+
+    # -- sums ----------------------------------------------------------------------------------------------------------
+
+    def _window_full(self, sums: EyeSums) -> None:
+        if self._on_window is not None:
+            self._on_window(sums)
+        self._merge(sums)
+
+    def _merge(self, sums: EyeSums) -> None:
+        if self._total is None:
+            self._total = EyeSums(self.link.scheme, self._phases)
+        self._total.merge(sums)
+
+
+class LockGuard:
+    """Says whether decisions still stand out from noise: MER over the last ``window`` symbols against a floor in dB."""
+
+    def __init__(self, window: int, floor_db: float) -> None:
+        self.window = window
+        self._part = max(window // 4, 1)
+        self._floor = 10 ** (floor_db / 10)
+        self._parts: deque[tuple[float, float]] = deque(maxlen=4)
+        self._signal = self._noise = 0.0
+        self._count = 0
+
+    def holds(self, track: Track) -> bool:
+        """Take the next symbols; False as soon as a whole window falls below the floor."""
+        error = track.values - track.decided
+        signal = np.einsum("rk,rk->k", track.decided, track.decided, dtype=np.float64)
+        noise = np.einsum("rk,rk->k", error, error, dtype=np.float64)
+        at = 0
+        while at < signal.size:
+            n = min(self._part - self._count, signal.size - at)
+            self._signal += float(signal[at : at + n].sum())
+            self._noise += float(noise[at : at + n].sum())
+            self._count += n
+            at += n
+            if self._count == self._part:
+                self._parts.append((self._signal, self._noise))
+                self._signal = self._noise = 0.0
+                self._count = 0
+                if len(self._parts) == 4:
+                    total, rest = (sum(column) for column in zip(*self._parts, strict=True))
+                    if not total > self._floor * rest:  # false for NaN too
+                        return False
+        return True
+
+
+class SlipCounter:
+    """Counts jumps of whole symbols of the loop's instants against their own straight line."""
+
+    _BLOCK = 256
+    _MEMORY = 16
+
+    def __init__(self) -> None:
+        self.anchor()
+
+    def anchor(self) -> None:
+        """Begin a new run of symbols."""
+        self._means: deque[float] = deque(maxlen=self._MEMORY)
+        self._sum = 0.0
+        self._count = 0
+        self._symbols = 0
+        self._start: float | None = None
+
+    def push(self, track: Track, sps: float) -> int:
+        """Take the next symbols; returns the slips found, whatever their direction."""
+        n = track.values.shape[1]
+        if n == 0:
+            return 0
+        absolute = track.base + track.instants[:n]
+        if self._start is None:
+            self._start = float(absolute[0])
+        drift = (absolute - self._start) / sps - np.arange(self._symbols, self._symbols + n)
+        self._symbols += n
+        slips = 0
+        at = 0
+        while at < n:
+            m = min(self._BLOCK - self._count, n - at)
+            self._sum += float(drift[at : at + m].sum())
+            self._count += m
+            at += m
+            if self._count == self._BLOCK:
+                slips += self._judge(self._sum / self._BLOCK)
+                self._sum = 0.0
+                self._count = 0
+        return slips
+
+    def _judge(self, mean: float) -> int:
+        jump = 0
+        n = len(self._means)
+        if n >= 4:
+            # the least-squares line through the past means, one step on
+            middle = (n - 1) / 2
+            slope = sum((i - middle) * value for i, value in enumerate(self._means)) * 12 / (n * (n * n - 1))
+            jump = round(mean - (sum(self._means) / n + slope * (n - middle)))
+            if jump:
+                self._means = deque((value + jump for value in self._means), maxlen=self._MEMORY)
+        self._means.append(mean)
+        return abs(jump)
+
+

@@ -1,0 +1,328 @@
+"""The eye as running sums: class raster, pattern correlations, level and crossing sums of any number of symbols.
+
+Everything here adds up: sums of two stretches are those of both, and none of them keeps the stream.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dsp._kernels import raster as kernel
+from dsp.interpolation import expander
+from dsp.link import Scheme
+from dsp.tracking import Tables, Track
+
+COLUMNS = 64  # a symbol interval; the picture shows two intervals
+EARLIEST, LATEST = -8, 12  # lags of the pattern response: symbols still to come, symbols gone by
+LAGS = LATEST - EARLIEST + 1
+HALO = 16  # symbols on either side that a symbol's sums look at
+CROSSING_BINS = 2048
+_AROUND = {2: (-5, -4, -3, -2, -1, 0, 2, 3), 3: (-2, -1, 0, 2), 4: (-2, -1, 0, 2), 8: (-1, 0, 2)}
+
+
+@dataclass(frozen=True, slots=True)
+class Rows:
+    """The raster's amplitude axis: row = floor(level * scale + zero), for levels in level units."""
+
+    count: int
+    scale: float
+    zero: float
+
+    def centres(self) -> NDArray[np.float64]:
+        """Level of each row's centre, shape ``(count,)``."""
+        return (np.arange(self.count) + 0.5 - self.zero) / self.scale
+
+    @property
+    def height(self) -> float:
+        """Of one row, in level units."""
+        return 1.0 / self.scale
+
+
+def rows_for(scheme: Scheme) -> Rows:
+    """1024 rows over the levels and what overshoots them."""
+    reach = 2.5 * max(scheme.rail_levels) if scheme.levels == 2 else 1.6 * max(scheme.rail_levels) + 0.4
+    return Rows(1024, 512.0 / reach, 512.0)
+
+
+@dataclass
+class LineSums:
+    """Sums for the least-squares line through ``(k, d)`` points of several segments, each with its own intercept."""
+
+    sums: dict[int, NDArray[np.float64]] = field(default_factory=dict)  # n, k, d, kk, kd, dd by segment
+
+    def add(self, segment: int, k: NDArray[np.float64], d: NDArray[np.float64]) -> None:
+        """Add points of one segment, shapes ``(n,)``."""
+        row = np.array([k.size, k.sum(), d.sum(), k @ k, k @ d, d @ d], dtype=np.float64)
+        self.sums[segment] = self.sums.get(segment, np.zeros(6)) + row
+
+    def merge(self, other: LineSums) -> None:
+        """Add another's points."""
+        for segment, row in other.sums.items():
+            self.sums[segment] = self.sums.get(segment, np.zeros(6)) + row
+
+    def line(self) -> tuple[float, float, float] | None:
+        """Common slope, mean of d, and rms about the lines; None for fewer than 3 points."""
+        sxx = sxy = syy = count = total = 0.0
+        for n, k, d, kk, kd, dd in self.sums.values():
+            sxx += kk - k * k / n
+            sxy += kd - k * d / n
+            syy += dd - d * d / n
+            count += n
+            total += d
+        if count < 3 or sxx <= 0:
+            return None
+        slope = sxy / sxx
+        return slope, total / count, float(np.sqrt(max(syy - slope * sxy, 0.0) / count))
+
+
+class EyeSums:
+    """All sums of a stretch of symbols; see the module's first line.
+
+    Attributes
+    ----------
+    symbols, drawn
+        Symbols summed, and those of them whose traces are in the raster.
+    pair
+        Whether the raster's classes are pairs (left level, right level) of one interval; else left and right are kept apart.
+    left
+        Shape ``(rails, 64, classes, rows)``, uint64.
+    gram, cross, square
+        Normal equations: symbols with symbols ``(k, k)``, with the wave ``(rails, k, phases)``, the wave's energy ``(rails, phases)``;
+        the k regressors are the rails' decided levels at all lags, earliest lag first, then a constant 1.
+    """
+
+    def __init__(self, scheme: Scheme, phases: int) -> None:
+        self.scheme = scheme
+        self.phases = phases
+        self.rows = rows_for(scheme)
+        rails, levels = scheme.rails, scheme.levels
+        self.pair = levels <= 3
+        classes = levels**2 if self.pair else levels
+        self.symbols = 0
+        self.drawn = 0
+        self.left = np.zeros((rails, COLUMNS, classes, self.rows.count), np.uint32)
+        self.right = np.zeros_like(self.left) if not self.pair else None
+        regressors = rails * LAGS + 1
+        self.gram = np.zeros((regressors, regressors))
+        self.cross = np.zeros((rails, regressors, phases))
+        self.square = np.zeros((rails, phases))
+        self.across = 0.0  # energy of a one-railed carrier's idle rail, level units squared
+        self.level_sums = np.zeros((rails, levels, 3))  # count, sum, sum of squares at the decision instant
+        self.crossing_bins = np.zeros((rails, CROSSING_BINS), np.int64)
+        around = _AROUND[levels]
+        self.crossing_groups = np.zeros((rails, levels ** len(around), 3))
+        self.crossing_edges = np.zeros((rails, 2, 2))
+        self.unit_sums = np.zeros((3, 2))  # gain, zero by rail, weighted by symbols; last row: symbols
+        self.clock = LineSums()
+        self.carrier = LineSums()
+
+    def merge(self, other: EyeSums) -> None:
+        """Add the sums of another stretch of the same link."""
+        self.symbols += other.symbols
+        self.drawn += other.drawn
+        self.left += other.left
+        if self.right is not None and other.right is not None:
+            self.right += other.right
+        self.across += other.across
+        for name in (
+            "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums"
+        ):  # fmt: skip
+            getattr(self, name)[...] += getattr(other, name)
+        self.clock.merge(other.clock)
+        self.carrier.merge(other.carrier)
+
+    def histogram(self) -> NDArray[np.int64]:
+        """Traces by rail, level, column and row, shape ``(rails, levels, 128, rows)``; column 64 is the decision instant."""
+        rails, levels = self.scheme.rails, self.scheme.levels
+        result = np.empty((rails, levels, 2 * COLUMNS, self.rows.count), np.int64)
+        if self.pair:
+            pairs = self.left.reshape(rails, COLUMNS, levels, levels, self.rows.count)
+            result[:, :, COLUMNS:] = pairs.sum(axis=3, dtype=np.int64).transpose(0, 2, 1, 3)
+            result[:, :, :COLUMNS] = pairs.sum(axis=2, dtype=np.int64).transpose(0, 2, 1, 3)
+        else:
+            assert self.right is not None
+            result[:, :, COLUMNS:] = self.left.transpose(0, 2, 1, 3)
+            result[:, :, :COLUMNS] = self.right.transpose(0, 2, 1, 3)
+        return result
+
+
+class EyeMeter:
+    """Turns tracked symbols into `EyeSums`, a window at a time.
+
+    Symbols wait until ``slab`` of them have their neighbours; ``finished`` is called with the sums of each full window.
+    The first and last 16 symbols of an unbroken run serve as neighbours only.
+    """
+
+    def __init__(
+        self,
+        scheme: Scheme,
+        tables: Tables,
+        *,
+        offset_ui: float,
+        sps: float,
+        phases: int,
+        slab: int,
+        window: int,
+        every: int,
+        finished: Callable[[EyeSums], None],
+    ) -> None:
+        self._scheme = scheme
+        self._tables = tables
+        self.offset_ui = offset_ui
+        self.extra_turn = 0.0  # cycles a symbol by which this run's carrier was turned more than the first run's
+        self._sps = sps
+        self._phases = phases
+        self._slab = slab
+        self._window = window
+        self._every = every
+        self._finished = finished
+        self.sums = EyeSums(scheme, phases)
+        self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
+        self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
+        self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
+        self._segment = 0
+        self._origin = 0.0
+        self._seen = 0  # symbols of this segment
+        self._capacity = 0
+        self._pending = 0
+        self._waves: list[NDArray[np.float32]] = []
+        self._decided = np.zeros((2, 0), np.float32)
+        self._classes = np.zeros((2, 0), np.int8)
+
+    def push(self, track: Track) -> None:
+        """Take the next symbols of the run."""
+        n = track.values.shape[1]
+        if n == 0:
+            return
+        self._reserve(self._pending + n)
+        self._resample(track, self._pending)
+        rails = self._scheme.rails
+        self._decided[:rails, self._pending : self._pending + n] = track.decided[:rails]
+        self._classes[:rails, self._pending : self._pending + n] = track.classes[:rails]
+        self._lines(track, n)
+        units = np.zeros((3, 2))
+        units[0], units[1], units[2] = track.gain * n, track.zero * n, n
+        self.sums.unit_sums += units
+        if self._scheme.kind == "carrier" and rails == 1:
+            self.sums.across += float(track.values[1] @ track.values[1])
+        self._pending += n
+        if self._pending - 2 * HALO >= self._slab:
+            self._settle()
+
+    def end_segment(self) -> None:
+        """The run of symbols breaks off here: sum what has its neighbours, forget the rest."""
+        self._settle()
+        self._pending = 0
+        self._segment += 1
+        self._seen = 0
+
+    def _reserve(self, wanted: int) -> None:
+        if wanted <= self._capacity:
+            return
+        capacity = max(2 * wanted, 4096)
+        waves = [np.zeros((self._phases, capacity), np.float32) for _ in range(self._scheme.rails)]
+        for new, old in zip(waves, self._waves, strict=False):
+            new[:, : self._pending] = old[:, : self._pending]
+        decided, classes = np.zeros((2, capacity), np.float32), np.zeros((2, capacity), np.int8)
+        decided[:, : self._pending] = self._decided[:, : self._pending]
+        classes[:, : self._pending] = self._classes[:, : self._pending]
+        self._waves, self._decided, self._classes, self._capacity = waves, decided, classes, capacity
+
+    def _resample(self, track: Track, column: int) -> None:
+        shift = self.offset_ui * self._sps
+        scale, zero = 1.0 / track.gain, track.zero
+        if self._scheme.kind != "carrier":
+            kernel.resample_real(
+                track.samples[0], self._tables.value, track.instants, shift, scale[0], zero[0], self._waves[0], column
+            )
+            return
+        step = np.diff(track.phases)
+        # the decision instant lies offset_ui after the loop's, and the carrier has turned on by then
+        angle = 2 * np.pi * np.mod(track.phases[:-1] + step * self.offset_ui, 1.0).astype(np.float32)
+        turn = (2 * np.pi / self._phases * step).astype(np.float32)
+        kernel.resample_turned(
+            track.samples[0], track.samples[1], self._tables.value, track.instants, shift,
+            self._scheme.stagger * self._sps, np.cos(angle), np.sin(angle), np.cos(turn), np.sin(turn),
+            scale[0], scale[1], zero[0], zero[1], self._scheme.rails == 2, self._waves[0], self._waves[-1], column,
+        )  # fmt: skip
+
+    def _lines(self, track: Track, n: int) -> None:
+        k = np.arange(self._seen, self._seen + n, dtype=np.float64)
+        absolute = track.base + track.instants[:n]
+        if self._seen == 0:
+            self._origin = float(absolute[0])
+        self.sums.clock.add(self._segment, k, (absolute - self._origin) / self._sps - k)
+        if self._scheme.kind == "carrier":
+            self.sums.carrier.add(self._segment, k, track.phases[:n] + (self.extra_turn - self._scheme.rotation) * k)
+        self._seen += n
+
+    def _settle(self) -> None:
+        """Sum all pending symbols that have their neighbours, window by window."""
+        first = HALO
+        while (ready := self._pending - HALO - first) > 0:
+            count = min(ready, self._window - self.sums.symbols)
+            self._sum(first, count)
+            first += count
+            if self.sums.symbols == self._window:
+                self._finished(self.sums)
+                self.sums = EyeSums(self._scheme, self._phases)
+        keep = first - HALO
+        if keep > 0:
+            rest = self._pending - keep
+            for array in (*self._waves, self._decided, self._classes):
+                array[:, :rest] = array[:, keep : self._pending].copy()
+            self._pending = rest
+
+    def _sum(self, first: int, count: int) -> None:
+        sums, rails = self.sums, self._scheme.rails
+        last = first + count
+        lagged = np.empty((rails * LAGS + 1, count), np.float32)
+        for rail in range(rails):
+            for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
+                lagged[rail * LAGS + i] = self._decided[rail, first - lag : last - lag]
+        lagged[-1] = 1.0
+        means = lagged.sum(axis=1, dtype=np.float64)
+        sums.gram[-1] += means
+        sums.gram[:-1, -1] += means[:-1]
+        for i in range(rails):
+            for j in range(i, rails):
+                block = np.zeros((LAGS, LAGS))
+                kernel.add_gram(self._decided[i], self._decided[j], first, last, EARLIEST, LAGS, i == j, block)
+                sums.gram[i * LAGS : (i + 1) * LAGS, j * LAGS : (j + 1) * LAGS] += block
+                if i != j:
+                    sums.gram[j * LAGS : (j + 1) * LAGS, i * LAGS : (i + 1) * LAGS] += block.T
+        levels, rows = self._scheme.levels, sums.rows
+        drawn = 0
+        for rail in range(rails):
+            wave = self._waves[rail]
+            part = wave[:, first:last]
+            sums.cross[rail] += lagged @ part.T
+            sums.square[rail] += np.einsum("pk,pk->p", part, part, dtype=np.float64)
+            classes = self._classes[rail]
+            here = classes[first:last].astype(np.int32)
+            after = classes[first + 1 : last + 1].astype(np.int32)
+            if sums.pair:
+                base_left, base_right = (here * levels + after) * rows.count, after
+            else:
+                base_left, base_right = here * rows.count, after * rows.count
+            left = sums.left[rail].reshape(COLUMNS, -1)
+            right = left if sums.right is None else sums.right[rail].reshape(COLUMNS, -1)
+            drawn = kernel.fill(
+                wave, first, count, self._expand, base_left, base_right, not sums.pair, self._every,
+                -self._count % self._every, rows.count, rows.scale, rows.zero, left, right,
+            )  # fmt: skip
+            at = part[0].astype(np.float64)
+            sums.level_sums[rail, :, 0] += np.bincount(here, minlength=levels)
+            sums.level_sums[rail, :, 1] += np.bincount(here, weights=at, minlength=levels)
+            sums.level_sums[rail, :, 2] += np.bincount(here, weights=at * at, minlength=levels)
+            kernel.crossings(
+                wave, first, count, classes, self._around, levels, 0.5,
+                sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
+            )  # fmt: skip
+        sums.drawn += int(drawn)
+        sums.symbols += count
+        self._count += count

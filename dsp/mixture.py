@@ -1,0 +1,117 @@
+"""Levels in noise: what decisions hide at low SNR, and how ISI and noise spread a level."""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import log_ndtr, ndtr
+
+
+@dataclass(frozen=True, slots=True)
+class Mixture:
+    """Equally likely levels ``gain * nominal + zero`` in Gaussian noise of standard deviation ``sigma``."""
+
+    gain: float
+    zero: float
+    sigma: float
+
+
+def fit_mixture(values: NDArray[np.float64], counts: NDArray[np.float64], nominal: NDArray[np.float64], first: Mixture) -> Mixture:
+    """Maximum-likelihood mixture for a histogram (``values`` of the bins, their ``counts``), by expectation-maximisation.
+
+    Knows nothing of decisions, so it is not biased by wrong ones. Source: A. P. Dempster, N. M. Laird, D. B. Rubin, J. R.
+    Statist. Soc. B 39(1), 1977 (from memory); levels tied to one gain and one offset.
+    """
+    gain, zero, sigma = first.gain, first.zero, first.sigma
+    some = counts > 0
+    y, n = values[some], counts[some].astype(np.float64)
+    total = n.sum()
+    for _ in range(400):
+        distance = (y[:, None] - gain * nominal - zero) / sigma
+        weight = np.exp(-0.5 * (distance**2 - np.min(distance**2, axis=1, keepdims=True)))
+        weight *= (n / weight.sum(axis=1))[:, None]
+        by_level = weight.sum(axis=0)
+        mean_a = by_level @ nominal / total
+        mean_y = n @ y / total
+        cov = float(np.einsum("ij,i,j->", weight, y - mean_y, nominal - mean_a))
+        new_gain = cov / float(by_level @ (nominal - mean_a) ** 2)
+        new_zero = mean_y - new_gain * mean_a
+        spread = float(np.sum(weight * (y[:, None] - new_gain * nominal - new_zero) ** 2) / total)
+        new_sigma = math.sqrt(max(spread, 1e-12))
+        done = abs(new_sigma - sigma) < 1e-5 * sigma and abs(new_gain - gain) < 1e-5 * gain
+        gain, zero, sigma = new_gain, new_zero, new_sigma
+        if done:
+            break
+    return Mixture(gain, zero, sigma)
+
+
+@dataclass(frozen=True, slots=True)
+class Spread:
+    """How a level's samples are spread by ISI from data that are independent: a discrete part and Gaussian ``sigma``.
+
+    ``at`` (rising) and ``share`` have shape ``(n,)``; shares sum to 1.
+    """
+
+    at: NDArray[np.float64]
+    share: NDArray[np.float64]
+    sigma: float
+
+    def below(self, limit: float) -> float:
+        """Probability of a sample below ``limit``; exact in the far tail."""
+        return float(self.share @ ndtr((limit - self.at) / self.sigma))
+
+    def quantile(self, share: float) -> float:
+        """The value that a ``share`` of the samples lies below."""
+        reach = -_normal_quantile(share) + 1.0
+        low, high = self.at[0] - reach * self.sigma, self.at[-1] + reach * self.sigma
+        target = math.log(share)
+        for _ in range(60):
+            middle = 0.5 * (low + high)
+            logs = log_ndtr((middle - self.at) / self.sigma)
+            peak = logs.max()
+            if peak + math.log(float(self.share @ np.exp(logs - peak)) + 1e-300) < target:
+                low = middle
+            else:
+                high = middle
+        return 0.5 * (low + high)
+
+
+def spread(taps: NDArray[np.float64], levels: NDArray[np.float64], shares: NDArray[np.float64], sigma: float) -> Spread:
+    """Spread of ``sum(taps * a)`` plus noise ``sigma``, the a drawn independently from ``levels`` with ``shares``.
+
+    Taps ``(n,)`` too small to matter one by one join the Gaussian part.
+    """
+    outer = float(np.max(np.abs(levels)))
+    mean = float(shares @ levels)
+    variance = float(shares @ levels**2) - mean**2
+    order = np.argsort(-np.abs(taps))
+    sigma = max(sigma, 1e-4)
+    big = [float(taps[i]) for i in order[:24] if abs(taps[i]) * outer > max(0.1 * sigma, 2e-3)]
+    small = np.asarray([float(taps[i]) for i in order[len(big) :]])
+    rest = math.sqrt(sigma**2 + variance * float(small @ small))
+    reach = sum(abs(t) for t in big) * outer
+    half = 2048
+    step = max(reach / half, 1e-9)
+    density = np.zeros(2 * half + 3)
+    density[half + 1] = 1.0
+    for tap in big:
+        new = np.zeros_like(density)
+        for level, share in zip(levels, shares, strict=True):
+            shift = tap * level / step
+            whole = math.floor(shift)
+            part = shift - whole
+            new += share * (1 - part) * np.roll(density, whole)
+            if part > 0:
+                new += share * part * np.roll(density, whole + 1)
+        density = new
+    some = density > 1e-18
+    at = (np.flatnonzero(some) - half - 1) * step + mean * float(small.sum())
+    share = density[some]
+    return Spread(at, share / share.sum(), rest)
+
+
+def _normal_quantile(share: float) -> float:
+    from scipy.special import ndtri
+
+    return float(ndtri(share))
