@@ -13,6 +13,8 @@ TIME_MIN_UI, TIME_MAX_UI = -1.0, 1.0
 OPENING_TOP_PCT = 110.0
 # a single trace must stand out from the empty panel: this share of the ramp at least
 _FAINTEST = 0.16
+# how far up or down a lone trace is followed from one column to the next, as a share of the plot's height
+_REACH = 0.05
 # traces in the fullest bin of a distribution below which bins are made wider
 _FULL_BIN = 120.0
 # bends the logarithm down, so that the crowded parts keep their relief
@@ -75,18 +77,67 @@ def density_indices(
     if filled.size == 0:
         return np.zeros((height, width), dtype=np.uint8)
     full = max(float(np.quantile(filled[:: max(1, filled.size // 20000)], 0.998)), 1.0)
-    tone = np.log1p(pixels.astype(np.float32)) / np.float32(math.log1p(full))
+    tone = np.asarray(np.log1p(pixels.astype(np.float32)) / np.float32(math.log1p(full)), dtype=np.float32)
     np.power(tone, np.float32(_BEND), out=tone)
     np.maximum(tone, np.minimum(2.0 * pixels, 1.0) * _FAINTEST, out=tone, casting="same_kind")
     np.minimum(tone, 1.0, out=tone)
-    tone = np.ascontiguousarray(tone.T[::-1]) * np.float32(steps - 1)
+    tone = np.ascontiguousarray(tone.T[::-1], dtype=np.float32)
     ui = TIME_MIN_UI + (TIME_MAX_UI - TIME_MIN_UI) * (np.arange(width) + 0.5) / width
     position = np.interp(ui, image.column_ui, np.arange(image.column_ui.size))
-    left = np.minimum(position.astype(np.int64), max(image.column_ui.size - 2, 0))
-    right = np.minimum(left + 1, image.column_ui.size - 1)
+    drawn = between_columns(tone, position, max(1, round(height * _REACH)))
+    return np.asarray((drawn * np.float32(steps - 1) + np.float32(0.5)).astype(np.uint8))
+
+
+def between_columns(tone: NDArray[np.float32], position: NDArray[np.float64], reach: int) -> NDArray[np.float32]:
+    """Tones ``(rows, columns)`` at fractional column positions ``(width,)``, rising, as ``(rows, width)``.
+
+    Straight between the two columns in every row where both have traces or neither has. Where only one has, the trace
+    runs on to the nearest traced row of the other column, up to ``reach`` rows away, so that a lone steep trace stays a
+    line instead of breaking up into the columns' dots; with nothing within reach it fades.
+    """
+    rows, columns = tone.shape
+    left = np.clip(position.astype(np.int64), 0, max(columns - 2, 0))
     weight = (position - left).astype(np.float32)
-    start = tone[:, left]
-    return np.asarray((start + (tone[:, right] - start) * weight + np.float32(0.5)).astype(np.uint8))
+    if columns < 2 or position.size <= columns:
+        start = tone[:, left]
+        return np.asarray(start + (tone[:, np.minimum(left + 1, columns - 1)] - start) * weight)
+    nearest = _nearest_traced_row(tone)
+    traced = tone > 0
+    sides = (tone[:, :-1].copy(), tone[:, 1:].copy())
+    moves = []
+    for here, there in ((0, 1), (1, 0)):
+        row, pair = np.nonzero(traced[:, here : columns - 1 + here] & ~traced[:, there : columns - 1 + there])
+        target = nearest[row, pair + there]
+        kept = np.abs(target - row) <= reach
+        row, pair, target = row[kept], pair[kept], target[kept]
+        moves.append((row, pair, target, tone[row, pair + here], tone[target, pair + there]))
+        sides[here][row, pair] = 0.0
+    start = sides[0][:, left]
+    drawn = start + (sides[1][:, left] - start) * weight
+    first = np.searchsorted(left, np.arange(columns))  # pair j is drawn on pixel columns first[j] to first[j + 1]
+    for (row, pair, target, own, other), share_of in zip(moves, (weight, np.float32(1.0) - weight), strict=True):
+        count = first[pair + 1] - first[pair]
+        for offset in range(int(count.max(initial=0))):
+            live = count > offset
+            pixel = first[pair[live]] + offset
+            share = share_of[pixel]
+            at = row[live] + (target[live] - row[live]) * share
+            value = own[live] + (other[live] - own[live]) * share
+            above = np.minimum(at.astype(np.int64), rows - 1)
+            part = (at - above).astype(np.float32)
+            np.maximum.at(drawn, (above, pixel), value * (1.0 - part))
+            np.maximum.at(drawn, (np.minimum(above + 1, rows - 1), pixel), value * part)
+    return np.asarray(drawn)
+
+
+def _nearest_traced_row(tone: NDArray[np.float32]) -> NDArray[np.int64]:
+    """For every pixel the row of the nearest tone above 0 in its column; far outside where the column is empty."""
+    rows = tone.shape[0]
+    index = np.arange(rows)[:, None]
+    far = 4 * rows
+    before = np.maximum.accumulate(np.where(tone > 0, index, -far), axis=0)
+    after = np.minimum.accumulate(np.where(tone > 0, index, far)[::-1], axis=0)[::-1]
+    return np.asarray(np.where(index - before <= after - index, before, after))
 
 
 def level_profiles(image: EyeImage, rail: int, low: float, high: float, height: int) -> NDArray[np.float64]:

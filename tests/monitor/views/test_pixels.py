@@ -5,6 +5,7 @@ import pytest
 
 from monitor.views.pixels import (
     Span,
+    between_columns,
     density_indices,
     finite_runs,
     level_profiles,
@@ -85,6 +86,50 @@ def test_more_traces_never_look_fewer():
     row = density_indices(image, 0, -4.0, 4.0, 129, 512, 256)[511 - 256, : counts.size]
     assert (np.diff(row.astype(int)) >= 0).all()
     assert np.unique(row).size > 60
+
+
+def path(rows, columns, row_of_column):
+    tone = np.zeros((rows, columns), dtype=np.float32)
+    tone[row_of_column, np.arange(columns)] = 1.0
+    return tone
+
+
+@pytest.mark.parametrize("step", [-6, 1, 6])
+def test_a_lone_steep_trace_stays_one_line_between_columns(step):
+    position = np.linspace(0.0, 15.0, 151)
+    column = np.arange(16)
+    drawn = between_columns(path(200, 16, 100 + step * column), position, 10)
+    expected = 100 + step * position
+    assert drawn.max(axis=0).min() >= 0.5 - 1e-5
+    off_path = np.abs(np.arange(200)[:, None] - expected) >= 1.0
+    assert drawn[off_path].max() < 1e-5
+    np.testing.assert_allclose(drawn.sum(axis=0), 1.0, atol=1e-4)
+
+
+def test_a_level_trace_and_a_crowd_are_drawn_straight_between_columns():
+    rng = np.random.default_rng(3)
+    tone = rng.uniform(0.2, 1.0, (30, 8)).astype(np.float32)
+    position = np.linspace(0.0, 7.0, 71)
+    drawn = between_columns(tone, position, 5)
+    expected = [np.interp(position, np.arange(8), row) for row in tone]
+    np.testing.assert_allclose(drawn, expected, atol=1e-5)
+
+
+def test_a_trace_that_goes_nowhere_fades_and_joins_nothing_out_of_reach():
+    tone = np.zeros((100, 2), dtype=np.float32)
+    tone[10, 0] = tone[80, 1] = 1.0
+    drawn = between_columns(tone, np.linspace(0.0, 1.0, 11), 20)
+    np.testing.assert_allclose(drawn[10], np.linspace(1.0, 0.0, 11), atol=1e-6)
+    np.testing.assert_allclose(drawn[80], np.linspace(0.0, 1.0, 11), atol=1e-6)
+    assert np.count_nonzero(drawn.sum(axis=1)) == 2
+
+
+def test_fewer_pixels_than_columns_are_drawn_straight_too():
+    tone = path(40, 9, np.arange(9) * 4)
+    drawn = between_columns(tone, np.array([0.0, 2.5, 8.0]), 10)
+    np.testing.assert_allclose(drawn[:, 0], tone[:, 0])
+    np.testing.assert_allclose(drawn[:, 1], (tone[:, 2] + tone[:, 3]) / 2)
+    np.testing.assert_allclose(drawn[:, 2], tone[:, 8])
 
 
 def test_the_amplitude_axis_holds_all_traces_in_whole_half_units(eye):
