@@ -86,6 +86,8 @@ def _open_path(uri: str, options: SampleOptions, block_samples: int) -> Source:
 def _open_file(uri: str, options: SampleOptions, block_samples: int) -> Source:
     from monitor.sources.sound import looks_like_sound, open_sound_file
 
+    with open(uri, "rb"):  # the sound-file library would say no more than "System error"
+        pass
     # the sound-file library is not loaded for what is plainly raw
     if options.format is None or looks_like_sound(uri):
         sound = open_sound_file(uri, options, block_samples)

@@ -157,7 +157,7 @@ def open_sound_file(uri: str, options: SampleOptions, block_samples: int) -> Sou
     import soundfile
 
     class Forward(soundfile.SoundFile):  # type: ignore[misc,unused-ignore]
-        """Reads on without the seek after every read, which fails at the cut end of a FLAC file."""
+        """Reads on without a seek after every read: at the cut end of a FLAC file that seek loses what was decoded."""
 
         def seekable(self) -> bool:
             return False

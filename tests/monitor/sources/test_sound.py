@@ -173,14 +173,16 @@ def test_a_header_that_claims_more_than_there_is_is_noted_and_the_rest_measured(
     np.testing.assert_array_equal(samples, numbers[: samples.size, 1] / np.float32(32768))
 
 
-@pytest.mark.parametrize("block_samples", [1000, 65536])
+@pytest.mark.parametrize("block_samples", [100, 1000, 4095, 65536])
 def test_a_flac_file_cut_off_gives_all_that_can_be_decoded_and_a_note(tmp_path, block_samples):
     numbers = codes(16, (50_000,)).astype(np.int16)
     path = tmp_path / "x.flac"
     soundfile.write(path, numbers, RATE)
     os.truncate(path, os.path.getsize(path) // 2)
     samples, _, source = read(path, block_samples=block_samples)
+    assert samples.size % 4096 == 0  # libsndfile writes FLAC frames of 4096 samples: every whole one is recovered
     assert 20_000 < samples.size < 26_000
+    assert samples.size == read(path, block_samples=4096)[0].size
     np.testing.assert_array_equal(samples, numbers[: samples.size] / np.float32(32768))
     assert len(source.notes) == 1
     assert source.notes[0].startswith(("damaged after sample", "cut short: the header leads to sample 50000"))
