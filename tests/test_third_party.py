@@ -265,6 +265,12 @@ def test_liquid_s_points_are_clean_behind_a_matched_filter(scheme, sps, rolloff)
     assert mer_db(sent, PSK_QAM[scheme], rolloff) > 50
 
 
+def test_liquid_s_roll_off_is_the_one_stated():
+    sent = liquid_stream("qpsk", 4.0, 0.35, symbols=600)
+    below, stated, above = (mer_db(sent, PSK_QAM["qpsk"], rolloff) for rolloff in (0.33, 0.35, 0.37))
+    assert stated > max(below, above) + 1
+
+
 def test_liquid_s_carrier_stands_in_the_fourth_power():
     sent = liquid_stream("qpsk", 4.0, carrier=0.013)
     frequency, height = line(sent.samples.astype(complex) ** 4, 48000, -4000, 4000)
