@@ -172,7 +172,7 @@ def _draw_rail(canvas: Canvas, places: RailBoxes, image: EyeImage, rail: int, lo
     if image.best_ui is not None:
         x = _x_of(eye, image.best_ui)
         if eye.x <= x <= eye.right:
-            canvas.line(x, eye.y, x, eye.bottom, theme.accent, 1.4, dashed=True)
+            canvas.line(x, eye.y, x, eye.bottom, theme.accent, 1.6, dashed=True)
 
 
 def _level_name(level: float) -> str:
@@ -281,7 +281,7 @@ def _draw_curve(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | 
         canvas.line(right, zero - reach, right, zero + reach, theme.ink, 2.0)
     if image.best_ui is not None and box.x <= _x_of(box, image.best_ui) <= box.right:
         x = _x_of(box, image.best_ui)
-        canvas.line(x, box.y, x, box.bottom, theme.accent, 1.4, dashed=True)
+        canvas.line(x, box.y, x, box.bottom, theme.accent, 1.6, dashed=True)
         opening = pixels.value_at(image.column_ui, image.opening_pct, image.best_ui)
         if opening is not None:
             y = min(max(_y_of(box, opening, floor, top), box.y), box.bottom)
@@ -329,7 +329,7 @@ def _draw_key(canvas: Canvas, box: Box, image: EyeImage, span: pixels.Span | Non
             for end in (box.x, box.x + sample):
                 canvas.line(end, middle - canvas.px(4), end, middle + canvas.px(4), theme.ink, 2.0)
         else:
-            canvas.line(box.x, middle, box.x + sample, middle, theme.accent, 1.4, dashed=True)
+            canvas.line(box.x, middle, box.x + sample, middle, theme.accent, 1.6, dashed=True)
             canvas.dot(box.x + sample / 2, middle, 4.0, theme.accent, theme.page)
         text = Box(box.x + sample + canvas.px(8), y, box.width - sample - canvas.px(8), line)
         canvas.write(entry, text, _SMALL, theme.dim)
