@@ -23,7 +23,8 @@ from pathlib import Path
 ROOT = Path(__file__).resolve().parents[1]
 
 # The demo: arguments of `lidwatch`, run from the top of the project.
-DEMO = ("replay", "recordings/tide-gauge.wav", "--picture", "build/demo.png")
+LINK = ("--symbol-rate", "9600", "--scheme", "qpsk", "--pulse", "rrc:0.35")
+DEMO = ("replay", "recordings/gauge-cliff-echo.sigmf-meta", *LINK, "--picture", "build/demo.png")
 
 OLDEST = (3, 11)
 VENV = ROOT / ".venv"

@@ -118,6 +118,10 @@ def test_the_demo_writes_into_an_ignored_folder(start):
     assert picture.split("/")[0] + "/" in ignored
 
 
+def test_the_demo_s_recording_is_in_the_checkout(start):
+    assert (START.parents[1] / start.DEMO[1]).exists()
+
+
 def test_the_progress_line_counts_the_kernels(start):
     assert start.progress_line(3, 9, "raster", 1.44) == "kernels 3/9 [######------------] raster 1.4 s"
     assert start.progress_line(9, 9, "raster", 0.0).count("#") == 18
