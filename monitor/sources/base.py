@@ -10,6 +10,7 @@ from dsp.block import Block
 from monitor.errors import InputError
 
 BLOCK_SAMPLES = 65536
+_READ_BYTES = 16 << 20  # most that is held of a file with many channels
 
 
 @dataclass(frozen=True, slots=True)
@@ -174,6 +175,11 @@ def choose_channels(options: SampleOptions, n_channels: int, complex_samples: bo
         mend = "choose one" if complex_samples else "choose one, or add --iq if they are I and Q"
         raise InputError(f"{where}: two channels are two links; {mend}")
     return ChannelChoice((chosen[0] - 1,), iq=False)
+
+
+def block_frames(block_samples: int, frame_bytes: int) -> int:
+    """Return how many samples of all channels to read at a time, at least 1: fewer than asked if channels are many."""
+    return max(1, min(block_samples, _READ_BYTES // frame_bytes))
 
 
 def settle_rate(declared_hz: float | None, options: SampleOptions, where: str, notes: list[str]) -> float:

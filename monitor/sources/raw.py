@@ -17,6 +17,7 @@ from monitor.sources.base import (
     SampleOptions,
     Source,
     SourceInfo,
+    block_frames,
     choose_channels,
     settle_rate,
     settle_span,
@@ -112,7 +113,7 @@ class RawFile(Source):
         self.notes: list[str] = []
         self._layout = layout
         self._stretches = tuple(stretches)
-        self._block_samples = block_samples
+        self._block_samples = block_frames(block_samples, layout.frame_bytes)
         try:
             self._file = open(path, "rb", buffering=0)  # noqa: SIM115 - closed by close()
         except OSError as error:

@@ -16,6 +16,7 @@ from monitor.sources.base import (
     SampleOptions,
     Source,
     SourceInfo,
+    block_frames,
     choose_channels,
     settle_rate,
     settle_span,
@@ -74,7 +75,6 @@ class SoundFileSource(Source):
         self._file = file
         self._choice = choice
         self._stop = stop
-        self._block_samples = block_samples
         bits = _LINEAR_BITS.get(file.subtype)
         peak = _COMPANDED_PEAK.get(file.subtype)
         self._low = self._high = 0
@@ -90,6 +90,7 @@ class SoundFileSource(Source):
             self._low = -(1 << (width - 1)) if file.subtype == "PCM_U8" else -self._high
         else:
             self._dtype = "float32"
+        self._block_samples = block_frames(block_samples, np.dtype(self._dtype).itemsize * file.channels)
 
     def blocks(self) -> Iterator[Block]:
         """Deliver the samples from the start on; what a damaged file still gives, and then a note."""

@@ -302,6 +302,20 @@ def test_raw_samples_that_begin_like_mpeg_are_raw(tmp_path):
         open_source(str(raw), PLAIN)
 
 
+def test_many_channels_do_not_need_more_memory(tmp_path):
+    path = tmp_path / "x.wav"
+    data_bytes = 2 * 500 * 100_000
+    with open(path, "wb") as file:
+        file.write(riff(1, 500, 16, b"", claimed=data_bytes))
+        file.truncate(44 + data_bytes)
+    tracemalloc.start()
+    samples, _, _ = read(path, SampleOptions(channels=(500,)))
+    peak = tracemalloc.get_traced_memory()[1]
+    tracemalloc.stop()
+    assert samples.size == 100_000
+    assert peak < 25_000_000  # 65 536 frames of all channels would be 65 million bytes
+
+
 def test_a_long_sound_file_streams_in_constant_memory(tmp_path):
     path = tmp_path / "x.wav"
     data_bytes = 40_000_000
