@@ -394,6 +394,16 @@ class _Search:
         lines = np.abs(np.fft.fft(z)) ** 2 / z.size
         if float(lines.max()) > 0.4 * energy:
             return "a bare tone, or a pattern that repeats, not data"
+        if decided.shape[0] == 2:
+            alike = abs(float(np.sum(decided[0] * decided[1]))) / max(
+                float(np.sqrt(np.sum(decided[0] ** 2) * np.sum(decided[1] ** 2))), 1e-12
+            )
+            if alike > 0.5:
+                return "both rails carry the same: fewer phases than the scheme has"
+        for rail in range(fit.classes.shape[0]):
+            shares = np.bincount(fit.classes[rail], minlength=self._scheme.levels) / fit.classes.shape[1]
+            if shares.min() < 0.2 / self._scheme.levels:
+                return "some of the scheme's levels are hardly used"
         alternate = decided[:, 1:] * decided[:, :-1] * (-1.0) ** np.arange(z.size - 1)
         if abs(float(np.sum(alternate))) > 0.3 * energy:
             return "each symbol comes twice: the symbol rate is a multiple of the link's"

@@ -35,7 +35,7 @@ class ChainOptions:
     detector: Detector | None = None
     timing_bandwidth: float = 0.005
     carrier_bandwidth: float = 0.005
-    window: int = 20_000
+    window: int = 25_000
     every: int = 1
     target_ber: float = 1e-6
 

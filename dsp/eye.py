@@ -135,18 +135,18 @@ class EyeSums:
         self.clock.merge(other.clock)
         self.carrier.merge(other.carrier)
 
-    def histogram(self) -> NDArray[np.int64]:
-        """Traces by rail, level, column and row, shape ``(rails, levels, 128, rows)``; column 64 is the decision instant."""
+    def histogram(self, columns: range = range(2 * COLUMNS)) -> NDArray[np.int64]:
+        """Traces by rail, level, column and row, shape ``(rails, levels, columns, rows)``; column 64 of 128 is the decision instant."""
         rails, levels = self.scheme.rails, self.scheme.levels
-        result = np.empty((rails, levels, 2 * COLUMNS, self.rows.count), np.int64)
-        if self.pair:
-            pairs = self.left.reshape(rails, COLUMNS, levels, levels, self.rows.count)
-            result[:, :, COLUMNS:] = pairs.sum(axis=3, dtype=np.int64).transpose(0, 2, 1, 3)
-            result[:, :, :COLUMNS] = pairs.sum(axis=2, dtype=np.int64).transpose(0, 2, 1, 3)
-        else:
-            assert self.right is not None
-            result[:, :, COLUMNS:] = self.left.transpose(0, 2, 1, 3)
-            result[:, :, :COLUMNS] = self.right.transpose(0, 2, 1, 3)
+        result = np.empty((rails, levels, len(columns), self.rows.count), np.int64)
+        for i, column in enumerate(columns):
+            after = column >= COLUMNS
+            if self.pair:
+                pairs = self.left[:, column % COLUMNS].reshape(rails, levels, levels, -1)
+                result[:, :, i] = pairs.sum(axis=2 if after else 1, dtype=np.int64)
+            else:
+                side = self.left if after or self.right is None else self.right
+                result[:, :, i] = side[:, column % COLUMNS]
         return result
 
 

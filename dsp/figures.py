@@ -5,7 +5,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import ndtr
 
 from dsp.eye import COLUMNS, CROSSING_BINS, EARLIEST, LAGS, EyeSums
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
@@ -105,9 +104,6 @@ class Figures:
         model = self.model(phase)
         taps = model.taps[rail].copy()
         taps[rail, _CURSOR] = 0.0
-        if self._scheme.rails == 2:
-            own = 1 - rail
-            del own
         shares = self._sums.level_sums[:, :, 0].sum(axis=0)
         return spread(taps.ravel() / self._gain[rail], self._nominal, shares / shares.sum(), sigma)
 
@@ -225,9 +221,8 @@ class Figures:
         if openings is None:
             return Reading(symbols=sums.symbols)
         opening = float(openings.min())
-        worst_rail, worst_eye = np.unravel_index(int(np.argmin(openings)), openings.shape)
+        worst_eye = int(np.unravel_index(int(np.argmin(openings)), openings.shape)[1])
         least = self._curves.min(axis=(0, 1))
-        width = _width(least, self._best)
         phase = self._column_phase(round(self._best))
         noise = self._noise(phase)
         sigma = float(np.sqrt(noise.max()))
@@ -258,7 +253,6 @@ class Figures:
         snr = 10 * math.log10(energy / total_noise) if mer is not None else None
         ber = self._ber(phase, noise)
         margin = 20 * math.log10(opening / 100.0 * float(self._spacing[worst_eye]) / 2 / sigma) if opening > 0 else None
-        del worst_rail, width
         at_ber = float(self._modelled_opening(round(self._best), self._context.target_ber).min())
         return Reading(
             symbols=sums.symbols,
@@ -514,6 +508,26 @@ class Figures:
         return figures
 
 
+def window_opening(sums: EyeSums, context: Context) -> float | None:
+    """The least opening of a window, without the rest of its figures: counted near the decision instant where that is sound."""
+    scheme = sums.scheme
+    counts = sums.level_sums[:, :, 0]
+    if sums.symbols < LEAST_SYMBOLS or counts.min() < 3:
+        return None
+    if sums.drawn / sums.symbols * counts.min() < FULL_CLASS:
+        return Figures(sums, context).opening_pct()
+    totals = sums.level_sums[:, :, 1]
+    nominal = np.asarray(scheme.rail_levels)
+    gain, _ = level_units(totals / counts, nominal)
+    near = sums.histogram(range(COLUMNS - 4, COLUMNS + 5))
+    per_class = near.sum(axis=3)
+    cumulative = np.cumsum(near, axis=3)
+    low = _quantile(cumulative, near, per_class, TAIL)
+    high = _quantile(cumulative, near, per_class, 1.0 - TAIL)
+    height = (low[:, 1:] - high[:, :-1]) / sums.rows.scale / gain[:, None, None]
+    return float(np.max(np.min(100.0 * height / np.diff(nominal)[None, :, None], axis=(0, 1))))
+
+
 def _mirrored(reach: Spread) -> Spread:
     return Spread(-reach.at[::-1], reach.share[::-1], reach.sigma)
 
@@ -606,8 +620,3 @@ def _pattern_part(groups: NDArray[np.float64], mean: float) -> tuple[float | Non
     low = shrunk[order][int(np.searchsorted(share, TAIL))]
     high = shrunk[order][min(int(np.searchsorted(share, 1 - TAIL)), n.size - 1)]
     return float(high - low), math.sqrt(within)
-
-
-def error_rate(q: float) -> float:
-    """Bit error rate of a two-level eye with margin ``q`` in Gaussian noise: Q-function. Source: ITU-T G.976 (from memory)."""
-    return float(ndtr(-q))
