@@ -266,6 +266,7 @@ def test_phase_noise_walks_with_its_rms_step():
     # the mean of squares over about 20 independent stretches: within 40 %... so also the single steps, which are many
     assert math.degrees(walked.std()) == pytest.approx(math.sqrt(symbols_apart), rel=0.6)
     steps = np.diff(np.unwrap(np.angle(noisy.samples[at] / clean.samples[at])))[strong[1:] & strong[:-1]]
+    assert np.abs(steps).max() < math.radians(6.0)  # no jump, at the seams of the chunks either
     # linear between symbols, taken off the symbols' instants (1/8 UI): 7/8 of one step and 1/8 of the next
     assert math.degrees(steps.std()) == pytest.approx(math.sqrt((7 / 8) ** 2 + (1 / 8) ** 2), rel=0.03)
 
@@ -289,6 +290,15 @@ def test_iq_imbalance_has_its_image_rejection(gain_db, skew_deg, mer_db):
     assert 20 * math.log10(abs(gain) / abs(image)) == pytest.approx(mer_db, abs=0.02)
 
 
+def test_iq_skew_puts_a_share_of_i_into_q():
+    clean = transmit(_spec(gain=1.0)).samples
+    skewed = transmit(_spec(gain=1.0, iq_gain_db=1.0, iq_skew_deg=10.0)).samples
+    np.testing.assert_allclose(skewed.real, clean.real, atol=1e-6)
+    angle = math.radians(10.0)
+    quadrature = 10**0.05 * (clean.imag * math.cos(angle) + clean.real * math.sin(angle))
+    np.testing.assert_allclose(skewed.imag, quadrature, atol=1e-6)
+
+
 def test_an_echo_of_one_symbol_adds_its_share_of_the_symbol_before():
     sent = transmit(_spec(pulse=Pulse("rect"), echoes=((1.0, 0.3 - 0.2j),), gain=1.0))
     at = np.arange(1, sent.samples.size, 4)
@@ -296,11 +306,39 @@ def test_an_echo_of_one_symbol_adds_its_share_of_the_symbol_before():
     np.testing.assert_allclose(sent.samples[at][1:], expected, atol=1e-6)
 
 
-def test_an_echo_of_a_frequency_scheme_is_the_delayed_wave():
-    spec = _spec(scheme="gmsk", pulse=Pulse("gauss", 0.5), sample_rate_hz=8, gain=1.0)
+@pytest.mark.parametrize(("scheme", "pulse"), [("gmsk", Pulse("gauss", 0.5)), ("fsk4", Pulse("rrc", 0.2))], ids=str)
+def test_an_echo_of_a_frequency_scheme_is_the_delayed_wave(scheme, pulse):
+    spec = _spec(scheme=scheme, pulse=pulse, sample_rate_hz=8, gain=1.0)
     clean = transmit(spec).samples
     echoed = transmit(dataclasses.replace(spec, echoes=((2.5, 0.4j),))).samples
     np.testing.assert_allclose(echoed[20:], clean[20:] + np.complex64(0.4j) * clean[:-20], atol=1e-5)
+
+
+@pytest.mark.parametrize("pulse", [Pulse("rc", 1.0), Pulse("rect"), Pulse("gauss", 0.5)], ids=str)
+@pytest.mark.parametrize("jitter", [0.0, 0.01])
+def test_a_far_echo_is_the_delayed_wave_across_many_chunks(pulse, jitter):
+    spec = _spec(scheme="pam4", pulse=pulse, symbols=60000, gain=1.0, jitter_rms_ui=jitter)
+    clean = transmit(spec).samples
+    echoed = transmit(dataclasses.replace(spec, echoes=((300.0, 0.5),))).samples
+    np.testing.assert_allclose(echoed[1200:], clean[1200:] + np.float32(0.5) * clean[:-1200], atol=2e-6)
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {"scheme": "pam3"},
+        {"scheme": "16qam", "jitter_rms_ui": 0.02},
+        {"scheme": "qpsk", "phase_noise_deg": 0.0, "bits": "prbs9"},
+        {"scheme": "fsk4", "pulse": Pulse("rc", 0.5)},
+        {"scheme": "gmsk", "pulse": Pulse("gauss", 0.3), "jitter_rms_ui": 0.02},
+    ],
+    ids=str,
+)
+def test_how_long_the_lead_in_is_does_not_show(changes):
+    short = transmit(_spec(**changes, gain=1.0))
+    long = transmit(_spec(**changes, gain=1.0, echoes=((77.0, 0.0),)))
+    np.testing.assert_allclose(long.samples, short.samples, atol=1e-6)
+    np.testing.assert_array_equal(long.instants, short.instants)
 
 
 def test_offset_qpsk_sends_q_half_a_symbol_later():
@@ -354,6 +392,22 @@ def test_no_default_gain_passes_full_scale(name):
     peak = np.abs(sent.samples.view(np.float32)).max()
     assert 0.3 < peak < 1.0 or (frequency and 0.3 < peak < 1.0)
     assert sent.samples.dtype == (np.float32 if SCHEMES[name].kind == "baseband" else np.complex64)
+
+
+@pytest.mark.parametrize(
+    "changes",
+    [
+        {"scheme": "pam4"},
+        {"scheme": "qpsk", "carrier_hz": 0.0137},
+        {"scheme": "pam2", "echoes": ((1.0, 0.5), (2.0, -0.25))},
+        {"scheme": "pi4dqpsk", "sample_rate_hz": 8},
+        {"scheme": "pam2", "dc": -0.5},
+    ],
+    ids=str,
+)
+def test_the_default_gain_uses_nine_tenths_of_full_scale_and_no_more(changes):
+    sent = transmit(_spec(pulse=Pulse("rect"), **changes))
+    assert np.abs(sent.samples.view(np.float32)).max() == pytest.approx(0.9, abs=2e-4)
 
 
 def test_one_symbol_makes_a_stream():

@@ -59,6 +59,37 @@ def test_samples_are_the_sum_of_analytic_pulses_at_their_true_instants(pulse, sp
     )  # -80 dB by design of half_span; the rms of 400 samples is uncertain
 
 
+@pytest.mark.parametrize("pulse", [Pulse("rrc", 1.0), Pulse("rc", 0.5)], ids=str)
+def test_jitter_of_several_symbols_moves_whole_pulses(pulse):
+    sent = transmit(_spec(pulse=pulse, sample_rate_hz=3.7, symbols=1500, jitter_sine_ui=4.0, jitter_sine_hz=0.003))
+    n = np.random.default_rng(8).integers(int(500 * 3.7), int(1000 * 3.7), size=400)
+    cut = _direct(sent, 3.7, pulse, n, reach=half_span(pulse))
+    assert _db(sent.samples[n] - cut, cut) < -90
+
+
+@pytest.mark.parametrize(
+    ("pulse", "ratio"), [(Pulse("rect"), None), (Pulse("rect"), 2.0), (Pulse("gauss", 2.0), None)], ids=str
+)
+def test_jitter_of_several_symbols_moves_the_edges_of_a_held_stream(pulse, ratio):
+    sps = 25
+    sent = transmit(
+        _spec(pulse=pulse, sample_rate_hz=sps, symbols=600, jitter_sine_ui=4.0, jitter_sine_hz=0.003, t_over_tau=ratio)
+    )
+    edges = sent.instants - sps / 2
+    n = np.arange(100 * sps, 400 * sps)
+    held = np.searchsorted(edges, n) - 1
+    well_inside = (n - edges[held] > (0.0 if pulse.family == "rect" else 0.35 * sps)) & (
+        edges[held + 1] - n > 0.35 * sps
+    )
+    if ratio is None:
+        np.testing.assert_allclose(sent.samples[n][well_inside], sent.symbols[held][well_inside], atol=2e-3)
+        return
+    # behind the low-pass the distance to the level decays, wherever the edge is
+    after = sent.samples[n + 1][well_inside] - sent.symbols[held][well_inside]
+    before = sent.samples[n][well_inside] - sent.symbols[held][well_inside]
+    np.testing.assert_allclose(after, before * math.exp(-ratio / sps), atol=1e-5)
+
+
 def test_clock_error_and_drift_are_exact_warps_of_time():
     spec = _spec(sample_rate_hz=3.3, symbols=2000, clock_ppm=150.0, clock_drift_ppm_s=0.05, delay_ui=0.4)
     sent = transmit(spec)
