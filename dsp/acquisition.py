@@ -1,4 +1,4 @@
-"""Finding a link in a stretch of rails: is its symbol clock there at all, and where do the loops begin?
+"""Finding a link in a stretch of rails: whether its symbol clock is there at all, and where the loops begin.
 
 Feed-forward throughout: the clock from its spectral line, the carrier from the M-th power's line, the best instant by trying
 them all, then one run of the loops themselves over the stretch, whose straight lines give the start.
@@ -56,7 +56,9 @@ class NotFound:
     reason: str
 
 
-def interpolate(rail: NDArray[np.float32], instants: NDArray[np.float64], table: NDArray[np.float32]) -> NDArray[np.float32]:
+def interpolate(
+    rail: NDArray[np.float32], instants: NDArray[np.float64], table: NDArray[np.float32]
+) -> NDArray[np.float32]:
     """Value (or slope) of a rail at fractional ``instants``, any count; instants must lie 4 samples inside."""
     whole = np.floor(instants).astype(np.int64)
     rows = np.rint((instants - whole) * PHASES).astype(np.int64)
@@ -95,7 +97,9 @@ def clock_line(power: NDArray[np.float32], sps: float, span: float = RATE_SPAN) 
     peak = int(np.argmax(np.where(inside, level, -1.0)))
     resolution = sps / (blocks * block)
     beside = np.abs(per_symbol - per_symbol[peak]) > 3 * resolution
-    floor = float(np.mean(np.sort(level[beside])[: int(0.8 * beside.sum())])) / 0.598  # mean of an exponential's lower 80 %
+    floor = (
+        float(np.mean(np.sort(level[beside])[: int(0.8 * beside.sum())])) / 0.598
+    )  # mean of an exponential's lower 80 %
     independent = max(blocks - 7, 1)
     ratio = level[peak] / max(floor, 1e-300)
     searched = max(2 * reach / resolution, 1.0)
@@ -195,7 +199,13 @@ def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0
 
 
 def acquire(
-    link: Link, front: FrontPlan, rails: Rails, *, detector: Detector | None, timing_bandwidth: float, carrier_bandwidth: float
+    link: Link,
+    front: FrontPlan,
+    rails: Rails,
+    *,
+    detector: Detector | None,
+    timing_bandwidth: float,
+    carrier_bandwidth: float,
 ) -> Acquired | NotFound:
     """Look for the link in rails from the front end, one float32 array ``(n,)`` each; needs a few hundred symbols."""
     return _Search(link, front, detector, timing_bandwidth, carrier_bandwidth).run(rails)
@@ -216,9 +226,16 @@ class _Search:
         self._carrier_bandwidth = carrier_bandwidth
 
     def run(self, rails: Rails) -> Acquired | NotFound:
-        power = sum(float(np.mean(rail.astype(np.float64) ** 2)) for rail in rails)
-        if not power > 0.0:
+        rms = math.sqrt(sum(float(np.mean(rail.astype(np.float64) ** 2)) for rail in rails))
+        if not rms > 0.0:
             return NotFound("the samples are all zero")
+        # float32 squares and fourth powers of any recording's unit must neither overflow nor vanish
+        found = self._run(tuple(np.asarray(rail / rms, dtype=np.float32) for rail in rails))
+        if isinstance(found, NotFound):
+            return found
+        return replace(found, start=replace(found.start, means=found.start.means * rms))
+
+    def _run(self, rails: Rails) -> Acquired | NotFound:
         carrier = self._coarse_carrier(rails) if self._scheme.kind == "carrier" else 0.0
         filtered = self._filter(rails, carrier)
         line = self._clock(rails, filtered)
@@ -241,7 +258,7 @@ class _Search:
         turn, phase = (0.0, 0.0)
         if self._scheme.kind == "carrier":
             turn, phase, _ = self._carrier(filtered, instants)
-        phases = phase + turn * np.arange(instants.size)
+        phases = phase + turn * np.arange(instants.size, dtype=np.float64)
         best, fit = self._scan(filtered, instants, phases, sps)
         instants = instants + best * sps
         reason = self._doubt(fit, line.chance)
@@ -324,7 +341,7 @@ class _Search:
         first = skip + 1.5 * sps
         count = int((size - first - 3.0 * sps - TAPS) / sps)
         start = crest + math.ceil((first - crest) / sps) * sps
-        return start + sps * np.arange(max(count, 0))
+        return np.asarray(start + sps * np.arange(max(count, 0)), dtype=np.float64)
 
     def _values(
         self,
@@ -341,14 +358,14 @@ class _Search:
         upright = np.exp(-2j * np.pi * (phases + self._rotation(phases.size)))
         z = self._complex(filtered, instants, table) * upright
         if self._scheme.rails == 1:
-            return z.real[None]
+            return np.asarray(z.real[None])
         if self._scheme.stagger:
             late = self._complex(filtered, instants + self._scheme.stagger * sps, table) * upright
             return np.stack((z.real, late.imag))
         return np.stack((z.real, z.imag))
 
     def _rotation(self, count: int) -> NDArray[np.float64]:
-        return self._scheme.rotation * np.arange(count)
+        return np.asarray(self._scheme.rotation * np.arange(count), dtype=np.float64)
 
     def _complex(
         self, filtered: Rails, instants: NDArray[np.float64], table: NDArray[np.float32] | None = None
@@ -374,7 +391,10 @@ class _Search:
         """Try every instant of a symbol; the one with the best decisions, in UI from ``instants``, and its fit."""
         some = slice(0, min(instants.size, 4096))
         offsets = (np.arange(_SCAN) - _SCAN // 2) / _SCAN
-        fits = [fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme) for o in offsets]
+        fits = [
+            fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme)
+            for o in offsets
+        ]
         mers = np.asarray([fit.mer_db for fit in fits])
         top = int(np.argmax(mers))
         # a plateau (a square pulse has one): take its middle
@@ -433,11 +453,9 @@ class _Search:
     def _start(
         self, filtered: Rails, instants: NDArray[np.float64], phase: float, turn: float, sps: float, fit: Fit
     ) -> TrackStart:
-        phases = phase + turn * np.arange(instants.size)
+        phases = phase + turn * np.arange(instants.size, dtype=np.float64)
         slope, bias, template = self._detector_facts(filtered, instants, phases, sps, fit)
-        return TrackStart(
-            float(instants[0]), sps, phase, turn, fit.means, self._detector, slope, bias, 0.0, template
-        )
+        return TrackStart(float(instants[0]), sps, phase, turn, fit.means, self._detector, slope, bias, 0.0, template)
 
     def _detector_facts(
         self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float, fit: Fit
@@ -489,10 +507,10 @@ class _Search:
         track = tracker.push(filtered)
         n = track.instants.size - 1
         settle = min(int(1.5 / self._timing_bandwidth), n // 3)
-        k = np.arange(n)
+        k = np.arange(n, dtype=np.float64)
         if n < 64:
             return NotFound("too few symbols")
-        sps, first = np.polyfit(k[settle:], track.instants[settle:n], 1)
+        sps, first = (float(v) for v in np.polyfit(k[settle:], track.instants[settle:n], 1))
         turn, phase = start.turn, start.phase
         if self._scheme.kind == "carrier":
             turned = track.phases[:n] - self._rotation(n)
@@ -500,13 +518,15 @@ class _Search:
         line = first + sps * k
         phases = phase + turn * k
         usable = slice(0, n - 2)
-        best, fit = self._scan(filtered, line[usable], phases[usable], float(sps))
+        best, fit = self._scan(filtered, line[usable], phases[usable], sps)
         if start.detector == "derivative":
             moved = line + best * sps
-            slope, bias, template = self._detector_facts(filtered, moved[usable], phases[usable], float(sps), fit)
-            return TrackStart(float(moved[0]), float(sps), phase, turn, fit.means, start.detector, slope, bias, 0.0, template), fit
-        slope, bias, template = self._detector_facts(filtered, line[usable], phases[usable], float(sps), fit)
-        return TrackStart(float(first), float(sps), phase, turn, fit.means, start.detector, slope, bias, best, template), fit
+            slope, bias, template = self._detector_facts(filtered, moved[usable], phases[usable], sps, fit)
+            return TrackStart(
+                float(moved[0]), sps, phase, turn, fit.means, start.detector, slope, bias, 0.0, template
+            ), fit
+        slope, bias, template = self._detector_facts(filtered, line[usable], phases[usable], sps, fit)
+        return TrackStart(first, sps, phase, turn, fit.means, start.detector, slope, bias, best, template), fit
 
 
 def _power(rails: Rails) -> NDArray[np.float32]:

@@ -13,7 +13,7 @@ from dsp.block import Block, Samples
 from dsp.eye import EyeMeter, EyeSums
 from dsp.figures import Context
 from dsp.filters import Oscillator
-from dsp.frontend import FrontEnd, FrontPlan, matched_filter, plan, wants_corners
+from dsp.frontend import FrontEnd, matched_filter, plan, wants_corners
 from dsp.link import Link
 from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
@@ -423,5 +423,3 @@ class SlipCounter:
                 self._means = deque((value + jump for value in self._means), maxlen=self._MEMORY)
         self._means.append(mean)
         return abs(jump)
-
-

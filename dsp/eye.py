@@ -7,6 +7,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -34,7 +35,7 @@ class Rows:
 
     def centres(self) -> NDArray[np.float64]:
         """Level of each row's centre, shape ``(count,)``."""
-        return (np.arange(self.count) + 0.5 - self.zero) / self.scale
+        return np.asarray((np.arange(self.count) + 0.5 - self.zero) / self.scale, dtype=np.float64)
 
     @property
     def height(self) -> float:
@@ -273,7 +274,8 @@ class EyeMeter:
         keep = first - HALO
         if keep > 0:
             rest = self._pending - keep
-            for array in (*self._waves, self._decided, self._classes):
+            pending: tuple[NDArray[Any], ...] = (*self._waves, self._decided, self._classes)
+            for array in pending:
                 array[:, :rest] = array[:, keep : self._pending].copy()
             self._pending = rest
 

@@ -46,11 +46,15 @@ def plan(link: Link, *, complex_in: bool, centre: float = 0.0, half_band: float 
     sps = link.samples_per_symbol
     kind = link.scheme.kind
     if kind == "baseband" and complex_in:
-        raise DspError(f"scheme {link.scheme.name} is a real baseband, but the samples are I/Q; take bpsk, or one channel")
+        raise DspError(
+            f"scheme {link.scheme.name} is a real baseband, but the samples are I/Q; take bpsk, or one channel"
+        )
     corners = wants_corners(link.scheme, link.pulse)
     least = 2 * CORNER_SPS if corners else 4.0
     if half_band is None:
-        half_band = min((0.5 * (1 + (link.pulse.number or 1.0 if link.pulse.band_limited else 1.0)) + _MARGIN) / sps, 0.45)
+        half_band = min(
+            (0.5 * (1 + (link.pulse.number or 1.0 if link.pulse.band_limited else 1.0)) + _MARGIN) / sps, 0.45
+        )
     decimate = max(int(sps / least), 1)
     if kind == "frequency":
         # the discriminator widens the band: keep at least four times the channel's half band
@@ -91,6 +95,7 @@ class FrontEnd:
         self._filter = RailFilter(taps, rails, decimate=front.decimate)
         self._last = np.complex64(0)
         self.delay = self._filter.delay
+        self.decimate = front.decimate
 
     def push(self, samples: Samples) -> Rails:
         """Take the next samples, float32 or complex64 ``(n,)``."""

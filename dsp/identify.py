@@ -117,9 +117,12 @@ def identify(samples: Samples, sample_rate_hz: float, wanted: Wanted) -> Identif
     """
     if not np.any(samples):
         return NotFound("the samples are all zero")
+    samples = _at_unit_power(samples)
     is_complex = bool(np.iscomplexobj(samples))
     if wanted.scheme is not None and wanted.scheme.kind == "baseband" and is_complex:
-        raise DspError(f"scheme {wanted.scheme.name} is a real baseband, but the samples are I/Q; take bpsk, or one channel")
+        raise DspError(
+            f"scheme {wanted.scheme.name} is a real baseband, but the samples are I/Q; take bpsk, or one channel"
+        )
     band = occupied_band(samples)
     if band is None:
         return NotFound("too few samples")
@@ -149,6 +152,13 @@ def identify(samples: Samples, sample_rate_hz: float, wanted: Wanted) -> Identif
     return best[1]
 
 
+def _at_unit_power(samples: Samples) -> Samples:
+    rms = math.sqrt(float(np.mean(np.abs(samples).astype(np.float64) ** 2)))
+    if np.iscomplexobj(samples):
+        return np.asarray(samples / rms, dtype=np.complex64)
+    return np.asarray(samples / rms, dtype=np.float32)
+
+
 def _likely_schemes(samples: Samples, band: Band) -> list[Scheme]:
     if np.iscomplexobj(samples):
         return [find_scheme(name) for name in _CARRIER]
@@ -165,11 +175,13 @@ def _likely_rates(samples: Samples, rate: float, band: Band, scheme: Scheme, wan
     if scheme.kind == "frequency" or (np.isrealobj(some) and scheme.kind == "carrier"):
         # a first guess of the symbol rate that only sets the filters: the band's width
         guess = Link(scheme, rate, min(max(band.half * rate, rate / 2000), rate / 2), Pulse("none"))
-        front = FrontEnd(guess, plan(guess, complex_in=bool(np.iscomplexobj(some)), centre=band.centre, half_band=band.half * 1.2))
+        front = FrontEnd(
+            guess, plan(guess, complex_in=bool(np.iscomplexobj(some)), centre=band.centre, half_band=band.half * 1.2)
+        )
         rails = front.push(some)
-        factor = front._plan.decimate
+        factor = front.decimate
     else:
-        rails = (some.real, some.imag) if np.iscomplexobj(some) else (some,)
+        rails = (np.real(some), np.imag(some)) if np.iscomplexobj(some) else (np.real(some),)
         factor = 1
     power = np.sum([rail.astype(np.float64) ** 2 for rail in rails], axis=0)
     for sequence in (power, _edges(rails, band.half * factor)):

@@ -27,7 +27,7 @@ def raised_cosine(t: ArrayLike, rolloff: float) -> NDArray[np.float64]:
     denominator = 1.0 - (2.0 * rolloff * t) ** 2
     singular = np.abs(denominator) < 1e-9
     regular = np.sinc(t) * np.cos(np.pi * rolloff * t) / np.where(singular, 1.0, denominator)
-    return np.where(singular, np.pi / 4 * np.sinc(t), regular)
+    return np.asarray(np.where(singular, np.pi / 4 * np.sinc(t), regular), dtype=np.float64)
 
 
 def root_raised_cosine(t: ArrayLike, rolloff: float) -> NDArray[np.float64]:
@@ -43,9 +43,7 @@ def root_raised_cosine(t: ArrayLike, rolloff: float) -> NDArray[np.float64]:
     numerator = np.sin(np.pi * t * (1.0 - a)) + 4.0 * a * t * np.cos(np.pi * t * (1.0 + a))
     regular = numerator / np.where(at_zero | at_edge, 1.0, denominator)
     edge = (
-        a
-        / math.sqrt(2.0)
-        * ((1 + 2 / np.pi) * math.sin(np.pi / (4 * a)) + (1 - 2 / np.pi) * math.cos(np.pi / (4 * a)))
+        a / math.sqrt(2.0) * ((1 + 2 / np.pi) * math.sin(np.pi / (4 * a)) + (1 - 2 / np.pi) * math.cos(np.pi / (4 * a)))
     )
     return np.where(at_zero, 1.0 - a + 4.0 * a / np.pi, np.where(at_edge, edge, regular))
 
@@ -77,7 +75,9 @@ class Pulse:
 
     def __post_init__(self) -> None:
         if self.family not in get_args(Family):
-            raise DspError(f"pulse {self.family!r} is not known; take one of rrc:A, rc:A, rect, gauss:BT, none, taps:FILE")
+            raise DspError(
+                f"pulse {self.family!r} is not known; take one of rrc:A, rc:A, rect, gauss:BT, none, taps:FILE"
+            )
         if self.family in _NEEDS_NUMBER:
             low, high = _RANGE[self.family]
             if self.number is None or not low <= self.number <= high:

@@ -1,7 +1,7 @@
 """Timing and carrier loops: from filtered rails to symbol instants, decisions and the carrier's phase."""
 
 from dataclasses import dataclass
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -169,7 +169,9 @@ class Tracker:
         self._state[kernel.PREVIOUS] = start.instant - start.sps
         self._state[kernel.PHASE] = start.phase
         self._state[kernel.TURN] = start.turn
-        self._past = tuple(np.zeros((2, HISTORY), dtype) for dtype in (np.float32, np.float32, np.float32, np.int8))
+        self._past: tuple[NDArray[Any], ...] = tuple(
+            np.zeros((2, HISTORY), dtype) for dtype in (np.float32, np.float32, np.float32, np.int8)
+        )
         self._rest: Rails = tuple(np.zeros(0, np.float32) for _ in range(2 if self._complex else 1))
         self._base = 0
 
@@ -181,7 +183,8 @@ class Tracker:
         phases = np.empty(room)
         decided, slopes, values = (np.zeros((2, HISTORY + room), np.float32) for _ in range(3))
         classes = np.zeros((2, HISTORY + room), np.int8)
-        for array, past in zip((decided, slopes, values, classes), self._past, strict=True):
+        outputs: tuple[NDArray[Any], ...] = (decided, slopes, values, classes)
+        for array, past in zip(outputs, self._past, strict=True):
             array[:, :HISTORY] = past
         gain, zero = self._units()
         n = kernel.track(
@@ -189,7 +192,7 @@ class Tracker:
             self._means, gain, zero, self._nominal, self._template, self._state, HISTORY,
             instants, phases, decided, slopes, values, classes,
         )  # fmt: skip
-        self._past = tuple(array[:, n : n + HISTORY].copy() for array in (decided, slopes, values, classes))
+        self._past = tuple(array[:, n : n + HISTORY].copy() for array in outputs)
         track = Track(
             np.append(instants[:n], self._state[kernel.INSTANT]),
             np.append(phases[:n], self._state[kernel.PHASE]),
@@ -228,7 +231,11 @@ class Tracker:
         return self._means[: self._scheme.rails, : self._scheme.levels].copy()
 
     def _units(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        return level_units(self._means[:, : self._scheme.levels], np.asarray(self._scheme.rail_levels))
+        gain, zero = level_units(self._means[:, : self._scheme.levels], np.asarray(self._scheme.rail_levels))
+        if self._complex and self._scheme.rails == 1:
+            # the idle rail has no levels of its own
+            gain[1], zero[1] = gain[0], 0.0
+        return gain, zero
 
 
 def level_units(

@@ -247,10 +247,7 @@ def track(
         t += sps * (1.0 + rate - min(max(k1 * error, -0.1), 0.1))
 
         if complex_in:
-            if shape == BPSK:
-                twist = a_i * z_q * scale_i
-            else:
-                twist = (a_i * cross_q * scale_q - a_q * cross_i * scale_i)
+            twist = a_i * cross_q * scale_q - a_q * cross_i * scale_i
             twist = min(max(twist * carrier_scale, -1.0), 1.0)
             freq += c2 * twist
             step = freq + c1 * twist
