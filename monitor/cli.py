@@ -47,24 +47,41 @@ def main(arguments: Sequence[str] | None = None) -> int:
 
 
 def _parser() -> argparse.ArgumentParser:
-    parser = _Parser(prog="lidwatch", description="Finds a link in a stream of samples, tracks its symbol clock and measures its eye.")
+    parser = _Parser(
+        prog="lidwatch",
+        description="Finds a link in a stream of samples, tracks its symbol clock and measures its eye.",
+    )
     parser.add_argument("--version", action="version", version="lidwatch 0.1.0")
     commands = parser.add_subparsers(title="commands", metavar="COMMAND", parser_class=_Parser)
     replay = commands.add_parser(
-        "replay", help="measure a recording", description="Measures the link in a recording, or in raw samples on standard input."
+        "replay",
+        help="measure a recording",
+        description="Measures the link in a recording, or in raw samples on standard input.",
     )
     replay.add_argument("source", metavar="FILE", help="sound file, raw file, SigMF recording, or - for standard input")
     _sample_options(replay)
     _link_options(replay)
     measure = replay.add_argument_group("how to measure")
-    measure.add_argument("--window", type=_whole, default=25_000, metavar="SYMBOLS", help="symbols of a window (default 25000)")
-    measure.add_argument("--draw-every", type=_whole, default=1, metavar="N", help="draw each N-th trace only (default 1: all)")
-    measure.add_argument("--target-ber", type=_rate, default=1e-6, metavar="RATE", help="error rate that the opening is told for (default 1e-6)")
+    measure.add_argument(
+        "--window", type=_whole, default=25_000, metavar="SYMBOLS", help="symbols of a window (default 25000)"
+    )
+    measure.add_argument(
+        "--draw-every", type=_whole, default=1, metavar="N", help="draw each N-th trace only (default 1: all)"
+    )
+    measure.add_argument(
+        "--target-ber",
+        type=_rate,
+        default=1e-6,
+        metavar="RATE",
+        help="error rate that the opening is told for (default 1e-6)",
+    )
     measure.add_argument("--threads", type=int, choices=(1, 2), default=2, help="threads for one link (default 2)")
     out = replay.add_argument_group("output")
     out.add_argument("--json", action="store_true", help="one JSON document on standard output, nothing else")
     out.add_argument("--picture", metavar="FILE.png", help="the eye and its figures as a picture")
-    out.add_argument("--picture-size", type=_size, default=(1280, 800), metavar="WxH", help="of the picture (default 1280x800)")
+    out.add_argument(
+        "--picture-size", type=_size, default=(1280, 800), metavar="WxH", help="of the picture (default 1280x800)"
+    )
     out.add_argument("--theme", choices=("light", "dark"), default="light", help="of the picture (default light)")
     replay.set_defaults(run=_replay)
     return parser
@@ -73,8 +90,12 @@ def _parser() -> argparse.ArgumentParser:
 def _sample_options(parser: argparse.ArgumentParser) -> None:
     group = parser.add_argument_group("the samples")
     group.add_argument("--rate", type=_positive, metavar="HZ", help="sample rate, where the file does not say it")
-    group.add_argument("--format", metavar="NAME", help="SigMF datatype of raw samples: cf32, ci16_le, cu8, rf32, ri16_be, ...")
-    group.add_argument("--channels", type=_channels, metavar="N[,N]", help="which channel (1 is the first), or two for --iq")
+    group.add_argument(
+        "--format", metavar="NAME", help="SigMF datatype of raw samples: cf32, ci16_le, cu8, rf32, ri16_be, ..."
+    )
+    group.add_argument(
+        "--channels", type=_channels, metavar="N[,N]", help="which channel (1 is the first), or two for --iq"
+    )
     group.add_argument("--iq", action="store_true", help="two channels are I and Q")
     group.add_argument("--start", type=_number, default=0.0, metavar="S", help="begin so many seconds in")
     group.add_argument("--duration", type=_positive, metavar="S", help="take so many seconds")
@@ -83,11 +104,22 @@ def _sample_options(parser: argparse.ArgumentParser) -> None:
 def _link_options(parser: argparse.ArgumentParser) -> None:
     group = parser.add_argument_group("the link, each found by itself unless given")
     group.add_argument("--symbol-rate", type=_positive_or_auto, metavar="HZ")
-    group.add_argument("--scheme", metavar="NAME", help="pam2 (nrz) pam3 pam4 pam8, bpsk qpsk oqpsk pi4dqpsk 8psk 16qam 64qam, fsk2 fsk4 gfsk msk gmsk")
+    group.add_argument(
+        "--scheme",
+        metavar="NAME",
+        help="pam2 (nrz) pam3 pam4 pam8, bpsk qpsk oqpsk pi4dqpsk 8psk 16qam 64qam, fsk2 fsk4 gfsk msk gmsk",
+    )
     group.add_argument("--pulse", metavar="NAME", help="rrc:0.35, rc:0.35, rect, gauss:0.5, none, taps:FILE")
     group.add_argument("--carrier", type=_number_or_auto, metavar="HZ", help="offset from the centre of the recording")
-    group.add_argument("--timing", choices=("auto", "gardner", "mueller-muller", "derivative"), default="auto", help="timing error detector")
-    group.add_argument("--loop-bandwidth", type=_bandwidth, metavar="BNT", help="of the timing loop, per symbol (default 0.005)")
+    group.add_argument(
+        "--timing",
+        choices=("auto", "gardner", "mueller-muller", "derivative"),
+        default="auto",
+        help="timing error detector",
+    )
+    group.add_argument(
+        "--loop-bandwidth", type=_bandwidth, metavar="BNT", help="of the timing loop, per symbol (default 0.005)"
+    )
     group.add_argument("--link", type=Path, metavar="LINK.toml", help="file with these; options win over it")
 
 
@@ -117,11 +149,12 @@ def _replay(parsed: argparse.Namespace) -> int:
         every=parsed.draw_every,
         target_ber=parsed.target_ber,
     )
-    samples = SampleOptions(
-        parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration
-    )
+    samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration)
     stop = _Stop()
-    with open_source(parsed.source, samples, sys.stdin.buffer) as source, _progress(source, quiet=parsed.json) as advance:
+    with (
+        open_source(parsed.source, samples, sys.stdin.buffer) as source,
+        _progress(source, quiet=parsed.json) as advance,
+    ):
         outcome = run(source, wanted, chain_options, threads=parsed.threads, progress=advance, stopped=stop)
     return _tell(outcome, parsed, stop)
 

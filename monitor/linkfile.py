@@ -54,9 +54,13 @@ def read_pulse(text: str) -> Pulse:
         if path.suffix == ".npy":
             values = np.load(path, allow_pickle=False).ravel()
         else:
-            values = np.array([complex(line.replace(" ", "")) for line in path.read_text("utf-8").split("\n") if line.strip()])
+            values = np.array(
+                [complex(line.replace(" ", "")) for line in path.read_text("utf-8").split("\n") if line.strip()]
+            )
     except (OSError, ValueError) as error:
-        raise InputError(f"--pulse {text}: no taps there ({error}); give a .npy file or text with one tap a line") from None
+        raise InputError(
+            f"--pulse {text}: no taps there ({error}); give a .npy file or text with one tap a line"
+        ) from None
     if values.size == 0 or not np.all(np.isfinite(values)):
         raise InputError(f"--pulse {text}: taps must be finite numbers, at least one")
     return Pulse("taps", taps=tuple(complex(v) for v in values))

@@ -116,9 +116,7 @@ def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Ide
         return NotFound("there are no samples")
     samples = np.concatenate([block.samples for block in head])
     if wanted.scheme is not None and wanted.symbol_rate_hz is not None and wanted.pulse is not None:
-        link = Link(
-            wanted.scheme, sample_rate_hz, wanted.symbol_rate_hz, wanted.pulse, wanted.carrier_hz, wanted.name
-        )
+        link = Link(wanted.scheme, sample_rate_hz, wanted.symbol_rate_hz, wanted.pulse, wanted.carrier_hz, wanted.name)
         is_complex = bool(np.iscomplexobj(samples))
         band = occupied_band(samples) if link.scheme.kind != "baseband" else None
         centre, half = placement(link, band, is_complex=is_complex) if band is not None else (0.0, None)
