@@ -73,10 +73,10 @@ def test_jitter_of_several_symbols_moves_whole_pulses(pulse):
 def test_jitter_of_several_symbols_moves_the_edges_of_a_held_stream(pulse, ratio):
     sps = 25
     sent = transmit(
-        _spec(pulse=pulse, sample_rate_hz=sps, symbols=600, jitter_sine_ui=4.0, jitter_sine_hz=0.003, t_over_tau=ratio)
+        _spec(pulse=pulse, sample_rate_hz=sps, symbols=6000, jitter_sine_ui=4.0, jitter_sine_hz=0.003, t_over_tau=ratio)
     )
     edges = sent.instants - sps / 2
-    n = np.arange(100 * sps, 400 * sps)
+    n = np.arange(100 * sps, 5900 * sps)  # over three chunks
     held = np.searchsorted(edges, n) - 1
     well_inside = (n - edges[held] > (0.0 if pulse.family == "rect" else 0.35 * sps)) & (
         edges[held + 1] - n > 0.35 * sps
@@ -218,11 +218,22 @@ def test_jitter_moves_the_edges_of_a_rectangular_stream():
     assert np.abs(edges - due).max() <= 0.5 + 1e-6
 
 
+def test_an_edge_that_jitter_would_put_ahead_of_its_predecessor_comes_with_it():
+    sps = 50
+    sent = transmit(_spec(pulse=Pulse("rect"), sample_rate_hz=sps, symbols=6000, jitter_rms_ui=0.25))
+    due = sent.instants - sps / 2
+    edges = np.maximum.accumulate(due)
+    assert (edges != due).sum() > 5
+    n = np.arange(100 * sps, 5900 * sps)
+    np.testing.assert_array_equal(sent.samples[n], sent.symbols[np.searchsorted(edges, n, side="right") - 1])
+
+
 @pytest.mark.parametrize("pulse", [Pulse("rrc", 0.35), Pulse("rc", 0.5), Pulse("gauss", 0.4)], ids=str)
 @pytest.mark.parametrize("jitter", [0.0, 0.01])
-def test_one_pole_low_pass_of_other_pulses_is_the_filtered_waveform(pulse, jitter):
+@pytest.mark.parametrize("ratio", [0.5, 2.0])
+def test_one_pole_low_pass_of_other_pulses_is_the_filtered_waveform(pulse, jitter, ratio):
     # the reference filters a stream of 100 samples a symbol, exactly for straight lines between them
-    sps, ratio = 100, 2.0
+    sps = 100
     changes = {"pulse": pulse, "sample_rate_hz": sps, "symbols": 300, "jitter_rms_ui": jitter}
     clean = transmit(_spec(**changes)).samples.astype(np.float64)
     sent = transmit(_spec(**changes, t_over_tau=ratio)).samples.astype(np.float64)
