@@ -39,7 +39,7 @@ class Acquired:
     """A link found: where loops begin and how sure that is.
 
     ``carrier`` is the turn taken out before the matched filter, cycles a rail sample; ``start.instant`` counts filtered samples
-    from the stretch's first; ``noise_like_db`` is the MER below which decisions say nothing.
+    from the stretch's first; ``noise_like_db`` is the MER below which decisions say nothing; ``fit`` holds the decisions.
     """
 
     carrier: float
@@ -47,6 +47,7 @@ class Acquired:
     chance: float
     mer_db: float
     noise_like_db: float
+    fit: "Fit"
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,8 +119,9 @@ def clock_line(power: NDArray[np.float32], sps: float, span: float = RATE_SPAN) 
 
 @dataclass(frozen=True, slots=True)
 class Fit:
-    """Decisions on values: level means ``(rails, levels)``, decided levels and classes ``(rails, n)``, MER in dB."""
+    """Decisions on ``values`` ``(rails, n)``: level means ``(rails, levels)``, decided levels and classes ``(rails, n)``, MER in dB."""
 
+    values: NDArray[np.float64]
     means: NDArray[np.float64]
     decided: NDArray[np.float64]
     classes: NDArray[np.int64]
@@ -162,12 +164,42 @@ def fit_levels(values: NDArray[np.floating], scheme: Scheme) -> Fit:
     signal = np.mean((decided_values - decided_values.mean(axis=1, keepdims=True)) ** 2)
     noise = np.mean((values - decided_values) ** 2)
     mer = 10 * math.log10(max(signal, 1e-30) / max(noise, 1e-30 + 1e-12 * signal))
-    return Fit(means, nominal[classes], classes, mer)
+    return Fit(np.asarray(values, dtype=np.float64), means, nominal[classes], classes, mer)
 
 
 def noise_like_mer_db(scheme: Scheme) -> float:
     """MER that decisions on noise reach by themselves, for the scheme."""
     return 4.4 if scheme.name == "8psk" else _NOISE_MER_DB[scheme.levels]
+
+
+def plausibility_db(fit: Fit, scheme: Scheme) -> float:
+    """How far decisions stand out once their neighbours' share is taken out of the values, less what speaks against the scheme.
+
+    ISI splits the levels of a simple scheme into what looks like a richer one; but then its decisions explain their neighbours'
+    values, the richer one's depend on each other, and its levels rarely stand evenly.
+    """
+    lags = range(-6, 11)
+    n = fit.values.shape[1]
+    if n < 200:
+        return fit.mer_db - noise_like_mer_db(scheme)
+    columns = [rail[10 - lag : n - 6 - lag] for rail in fit.decided for lag in lags]
+    design = np.stack([*columns, np.ones(n - 16)], axis=1)
+    target = fit.values[:, 10 : n - 6].T
+    solution = np.linalg.lstsq(design, target, rcond=None)[0]
+    cursor = [solution[rail * len(lags) + 6, rail] for rail in range(fit.values.shape[0])]
+    residual = np.sum((target - design @ solution) ** 2) / max(n - 16 - design.shape[1], 1)
+    signal = sum(c * c * float(np.var(rail)) for c, rail in zip(cursor, fit.decided, strict=True))
+    snr = 10 * math.log10(max(signal, 1e-30) / max(float(residual), 1e-9 * signal, 1e-30))
+    dependence = 0.0
+    for rail in fit.decided:
+        centred = rail - rail.mean()
+        energy = max(float(centred @ centred), 1e-30)
+        dependence = max(dependence, *(abs(float(centred[lag:] @ centred[:-lag])) / energy for lag in (1, 2)))
+    evenness = 1.0
+    if scheme.levels > 2:
+        gaps = np.diff(fit.means, axis=1) / np.diff(np.asarray(scheme.rail_levels))
+        evenness = float(np.min(gaps.min(axis=1) / gaps.mean(axis=1)))
+    return snr - noise_like_mer_db(scheme) - 40.0 * max(dependence - 0.1, 0.0) - 60.0 * max(0.75 - evenness, 0.0)
 
 
 def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0) -> tuple[float, float, float]:
@@ -275,7 +307,7 @@ class _Search:
         reason = self._doubt(fit, line.chance)
         if reason:
             return NotFound(reason)
-        return Acquired(carrier, start, line.chance, fit.mer_db, noise_like_mer_db(self._scheme))
+        return Acquired(carrier, start, line.chance, fit.mer_db, noise_like_mer_db(self._scheme), fit)
 
     def _filter_reach(self) -> float:
         probe = matched_filter(self._link, self._front)

@@ -6,7 +6,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from dsp.acquisition import Acquired, NotFound, acquire
+from dsp.acquisition import Acquired, NotFound, acquire, plausibility_db
 from dsp.block import Samples
 from dsp.errors import DspError
 from dsp.frontend import FrontEnd, plan
@@ -53,6 +53,15 @@ class Identified:
     found: tuple[str, ...]
 
 
+@dataclass(frozen=True, slots=True)
+class _Trial:
+    """An answer tried: its MER judges the pulse, its plausibility the scheme and the rate."""
+
+    identified: Identified
+    mer_db: float
+    plausibility_db: float
+
+
 def occupied_band(samples: Samples) -> Band | None:
     """The band that holds 99 % of the power above the spectrum's floor; None for silence."""
     length = 4096 if samples.size >= 8192 else max(samples.size // 8, 16)
@@ -82,8 +91,8 @@ def occupied_band(samples: Samples) -> Band | None:
     return Band(0.5 * (low + high), max(0.5 * (high - low), 2.0 / length))
 
 
-def rate_lines(sequence: NDArray[np.float64], most: int = 6) -> list[float]:
-    """Frequencies (cycles a sample, strongest first) at which a power-like sequence ``(n,)`` has spectral lines above its floor.
+def rate_lines(sequence: NDArray[np.float64], most: int = 6) -> list[tuple[float, float]]:
+    """Spectral lines of a power-like sequence ``(n,)``: frequency (cycles a sample) and height over the floor, highest first.
 
     Source: the square-law line of M. Oerder and H. Meyr, IEEE Trans. Commun. 36(5), 1988, over all frequencies.
     """
@@ -97,7 +106,7 @@ def rate_lines(sequence: NDArray[np.float64], most: int = 6) -> list[float]:
     floor = np.repeat(np.sort(blocks, axis=1)[:, : int(0.7 * width)].mean(axis=1) / 0.45, width)
     ratio = spectrum[: floor.size] / np.maximum(floor, 1e-300)
     ratio[: max(4, n // 4096)] = 0.0
-    found: list[float] = []
+    found: list[tuple[float, float]] = []
     threshold = math.log(spectrum.size) + 10.0
     for _ in range(most):
         peak = int(np.argmax(ratio))
@@ -105,7 +114,7 @@ def rate_lines(sequence: NDArray[np.float64], most: int = 6) -> list[float]:
             break
         left, middle, right = (math.sqrt(spectrum[min(max(peak + d, 0), spectrum.size - 1)]) for d in (-1, 0, 1))
         bend = left - 2 * middle + right
-        found.append((peak + (0.5 * (left - right) / bend if bend < 0 else 0.0)) / n)
+        found.append(((peak + (0.5 * (left - right) / bend if bend < 0 else 0.0)) / n, float(ratio[peak])))
         ratio[max(peak - 4, 0) : peak + 5] = 0.0
     return found
 
@@ -127,7 +136,7 @@ def identify(samples: Samples, sample_rate_hz: float, wanted: Wanted) -> Identif
     if band is None:
         return NotFound("too few samples")
     schemes = [wanted.scheme] if wanted.scheme is not None else _likely_schemes(samples, band)
-    best: tuple[float, Identified] | None = None
+    best: _Trial | None = None
     reason = "no line in the spectrum that a symbol clock would have"
     for rate_hz in _likely_rates(samples, sample_rate_hz, band, schemes[0], wanted):
         for scheme in schemes:
@@ -136,20 +145,19 @@ def identify(samples: Samples, sample_rate_hz: float, wanted: Wanted) -> Identif
             if isinstance(outcome, NotFound):
                 reason = outcome.reason
                 continue
-            score, candidate = outcome
-            if best is None or score > best[0]:
-                best = (score, candidate)
-        if best is not None and best[0] > 3.0:
+            if best is None or outcome.plausibility_db > best.plausibility_db:
+                best = outcome
+        if best is not None and best.plausibility_db > 3.0:
             break
     if best is None:
         return NotFound(reason)
     if wanted.pulse is None:
-        link = best[1].link
+        link = best.identified.link
         others = _PULSES[link.scheme.kind][1]
         refined = _try_pulses(samples, sample_rate_hz, band, link.scheme, link.symbol_rate_hz, wanted, others)
-        if not isinstance(refined, NotFound) and refined[0] > best[0] + 0.05:
+        if not isinstance(refined, NotFound) and refined.mer_db > best.mer_db + 0.05:
             best = refined
-    return best[1]
+    return best.identified
 
 
 def _at_unit_power(samples: Samples) -> Samples:
@@ -171,7 +179,7 @@ def _likely_rates(samples: Samples, rate: float, band: Band, scheme: Scheme, wan
     if wanted.symbol_rate_hz is not None:
         return [wanted.symbol_rate_hz]
     some = samples[: 1 << 18]
-    lines: list[float] = []
+    lines: list[tuple[float, float]] = []
     if scheme.kind == "frequency" or (np.isrealobj(some) and scheme.kind == "carrier"):
         # a first guess of the symbol rate that only sets the filters: the band's width
         guess = Link(scheme, rate, min(max(band.half * rate, rate / 2000), rate / 2), Pulse("none"))
@@ -185,15 +193,16 @@ def _likely_rates(samples: Samples, rate: float, band: Band, scheme: Scheme, wan
         factor = 1
     power = np.sum([rail.astype(np.float64) ** 2 for rail in rails], axis=0)
     for sequence in (power, _edges(rails, band.half * factor)):
-        for line in rate_lines(sequence):
-            hz = line / factor * rate
-            for divisor in (1, 2, 3):
-                value = hz / divisor
-                if 2.0 <= rate / value <= 2000.0 and all(abs(value / known - 1) > 1e-3 for known in lines):
-                    lines.append(value)
-    # the clock of a link lies near the width of its band; harmonics and sub-harmonics come after
-    width = 2 * band.half * rate if scheme.kind == "carrier" else band.half * 2 * rate
-    return sorted(lines, key=lambda value: abs(math.log(value / width)))[:8]
+        found = rate_lines(sequence)
+        lines += [(line / factor * rate, strength / found[0][1]) for line, strength in found]
+    # a clock's line has harmonics above it, and the frames of its data may put weaker ones below
+    clear = sorted(hz for hz, strength in lines if strength > 0.03)
+    rest = [hz for hz, _ in lines]
+    result: list[float] = []
+    for hz in (*clear, *rest, *(hz / divisor for divisor in (2, 3) for hz in clear)):
+        if 2.0 <= rate / hz <= 2000.0 and all(abs(hz / known - 1) > 1e-3 for known in result):
+            result.append(hz)
+    return result[:8]
 
 
 def _edges(rails: tuple[NDArray[np.floating], ...], half: float) -> NDArray[np.float64]:
@@ -215,10 +224,10 @@ def _try_pulses(
     rate_hz: float,
     wanted: Wanted,
     names: tuple[str, ...],
-) -> tuple[float, Identified] | NotFound:
-    """The best pulse for a scheme at a rate, and by how many dB its decisions stand out from noise."""
+) -> _Trial | NotFound:
+    """The pulse that gives a scheme at a rate its best MER."""
     pulses = [wanted.pulse] if wanted.pulse is not None else [Pulse.parse(name) for name in names]
-    best: tuple[float, Identified] | None = None
+    best: _Trial | None = None
     reason = "nothing tried"
     for pulse in pulses:
         link = Link(scheme, rate, rate_hz, pulse, wanted.carrier_hz, wanted.name)
@@ -231,7 +240,6 @@ def _try_pulses(
         if not isinstance(outcome, Acquired):
             reason = outcome.reason
             continue
-        score = outcome.mer_db - outcome.noise_like_db
         found = tuple(
             key
             for key, value in (
@@ -250,8 +258,8 @@ def _try_pulses(
             None if half is None else half * rate,
             found,
         )
-        if best is None or score > best[0] + 0.05:
-            best = (score, candidate)
+        if best is None or outcome.mer_db > best.mer_db + 0.05:
+            best = _Trial(candidate, outcome.mer_db, plausibility_db(outcome.fit, scheme))
     return best if best is not None else NotFound(reason)
 
 
