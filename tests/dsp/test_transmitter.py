@@ -266,6 +266,14 @@ def test_phase_noise_walks_with_its_rms_step():
     assert np.diff(apart).std() == pytest.approx(10.0, rel=0.15)
 
 
+def test_phase_noise_and_jitter_do_not_depend_on_the_sample_rate():
+    spec = _spec(scheme="msk", pulse=Pulse("rect"), symbols=40000, phase_noise_deg=1.0, jitter_rms_ui=0.01, gain=1.0)
+    coarse = transmit(dataclasses.replace(spec, delay_ui=ON_SAMPLES[4]))
+    fine = transmit(dataclasses.replace(spec, sample_rate_hz=8.0, delay_ui=ON_SAMPLES[8]))
+    np.testing.assert_allclose(fine.samples[::2], coarse.samples, atol=1e-6)
+    np.testing.assert_allclose(fine.instants, 2 * coarse.instants, atol=1e-6)
+
+
 # --- channel and converters
 
 
