@@ -251,7 +251,8 @@ class _Search:
         self._scheme = link.scheme
         self._front = front
         self._corners = wants_corners(link.scheme, link.pulse)
-        self._detector: Detector = detector or ("gardner" if self._corners else "derivative")
+        self._detector: Detector = detector or ("crossing" if self._corners else "derivative")
+        self._sense_ui = 0.5
         bandwidth = 0.5 * (1 + (link.pulse.number or 1.0)) if link.pulse.family in ("rrc", "rc") else 1.0
         self._tables = tables_for(front.sps, bandwidth)
         self._timing_bandwidth = timing_bandwidth
@@ -486,27 +487,41 @@ class _Search:
         self, filtered: Rails, instants: NDArray[np.float64], phase: float, turn: float, sps: float, fit: Fit
     ) -> TrackStart:
         phases = phase + turn * np.arange(instants.size, dtype=np.float64)
-        slope, bias, template = self._detector_facts(filtered, instants, phases, sps, fit)
-        return TrackStart(float(instants[0]), sps, phase, turn, fit.means, self._detector, slope, bias, 0.0, template)
+        slope, template = self._detector_facts(filtered, instants, phases, sps, fit)
+        return TrackStart(
+            float(instants[0]), sps, phase, turn, fit.means, self._detector, slope, 0.0, 0.0, template, self._sense_ui
+        )
 
     def _detector_facts(
-        self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float, fit: Fit
-    ) -> tuple[float, float, NDArray[np.float32] | None]:
-        """Slope of the detector's mean output by timing, its output at the wanted instant, and the template it needs."""
+        self,
+        filtered: Rails,
+        instants: NDArray[np.float64],
+        phases: NDArray[np.float64],
+        sps: float,
+        fit: Fit,
+    ) -> tuple[float, NDArray[np.float32] | None]:
+        """Slope of the detector's mean output by timing, and the pattern template it needs."""
         step = 0.05
         gain, zero = level_units(fit.means, np.asarray(self._scheme.rail_levels))
-        template = None
-        if self._detector == "derivative":
-            slopes = self._slopes(filtered, instants, phases, sps) / gain[:, None]
-            template = _pattern_template(fit.decided, slopes)
+        if self._detector in ("derivative", "crossing"):
+            if self._detector == "crossing":
+                self._sense_ui = self._crossing_point(filtered, instants, sps, fit)
+            template = _pattern_template(fit.decided, self._sensed(filtered, instants, phases, sps, gain, zero))
+            patterns = _patterns(fit.decided, template)
+            weight = fit.decided
+            if self._detector == "crossing":
+                weight = weight - np.roll(weight, 1, axis=1)
+
+            def cleaned(shift: float) -> float:
+                sensed = self._sensed(filtered, instants + shift * sps, phases, sps, gain, zero) - patterns
+                return float(np.mean(np.sum((weight * sensed)[:, TEMPLATE:-TEMPLATE], axis=0)))
+
+            slope = (cleaned(step) - cleaned(-step)) / (2 * step)
+            sign = 1.0 if self._detector == "crossing" else -1.0
+            return sign * max(sign * slope, 0.1), template
 
         def mean_output(shift: float) -> float:
             at = instants + shift * sps
-            if self._detector == "derivative":
-                slopes = self._slopes(filtered, at, phases, sps) / gain[:, None]
-                assert template is not None
-                cleaned = slopes[:, TEMPLATE:-TEMPLATE] - _patterns(fit.decided, template)[:, TEMPLATE:-TEMPLATE]
-                return float(np.mean(np.sum(fit.decided[:, TEMPLATE:-TEMPLATE] * cleaned, axis=0)))
             here = (self._values(filtered, at, phases, sps) - zero[:, None]) / gain[:, None]
             if self._detector == "mueller-muller":
                 error = fit.decided[:, :-1] * here[:, 1:] - fit.decided[:, 1:] * here[:, :-1]
@@ -516,11 +531,38 @@ class _Search:
             return float(np.mean(np.sum(error, axis=0)))
 
         slope = (mean_output(step) - mean_output(-step)) / (2 * step)
-        if self._detector == "derivative":
-            return min(slope, -0.1), 0.0, template
-        # the classical detectors keep their own balance
         sign = 1.0 if self._detector == "gardner" else -1.0
-        return sign * max(sign * slope, 0.05 * self._scheme.symbol_energy()), 0.0, None
+        return sign * max(sign * slope, 0.05 * self._scheme.symbol_energy()), None
+
+    def _sensed(
+        self,
+        filtered: Rails,
+        instants: NDArray[np.float64],
+        phases: NDArray[np.float64],
+        sps: float,
+        gain: NDArray[np.float64],
+        zero: NDArray[np.float64],
+    ) -> NDArray[np.float64]:
+        """What the pattern-cancelling detectors look at: slope at the instant, or height where transitions cross."""
+        if self._detector == "derivative":
+            return self._slopes(filtered, instants, phases, sps) / gain[:, None]
+        return (self._values(filtered, instants - self._sense_ui * sps, phases, sps) - zero[:, None]) / gain[:, None]
+
+    def _crossing_point(self, filtered: Rails, instants: NDArray[np.float64], sps: float, fit: Fit) -> float:
+        """How long before its decision instant a mean transition crosses the middle, UI."""
+        step = np.diff(fit.decided[0])
+        zero = level_units(fit.means, np.asarray(self._scheme.rail_levels))[1][0]
+        offsets = np.arange(1, 32) / 32
+        none = np.zeros(instants.size - 1)
+        heights = np.asarray(
+            [step @ (self._values(filtered, instants[1:] - o * sps, none, sps)[0] - zero) for o in offsets]
+        )
+        # heights fall from the new level's side to the old one's as the look goes back
+        below = np.flatnonzero((heights[:-1] > 0) & (heights[1:] <= 0))
+        if below.size == 0:
+            return 0.5
+        i = int(below[np.argmin(np.abs(offsets[below] - 0.5))])
+        return float(offsets[i] + heights[i] / (heights[i] - heights[i + 1]) / 32)
 
     def _slopes(
         self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float
@@ -551,14 +593,23 @@ class _Search:
         phases = phase + turn * k
         usable = slice(0, n - 2)
         best, fit = self._scan(filtered, line[usable], phases[usable], sps)
-        if start.detector == "derivative":
-            moved = line + best * sps
-            slope, bias, template = self._detector_facts(filtered, moved[usable], phases[usable], sps, fit)
-            return TrackStart(
-                float(moved[0]), sps, phase, turn, fit.means, start.detector, slope, bias, 0.0, template
-            ), fit
-        slope, bias, template = self._detector_facts(filtered, line[usable], phases[usable], sps, fit)
-        return TrackStart(first, sps, phase, turn, fit.means, start.detector, slope, bias, best, template), fit
+        if start.detector in ("derivative", "crossing"):
+            line, offset = line + best * sps, 0.0
+        else:
+            offset = best
+        slope, template = self._detector_facts(filtered, line[usable], phases[usable], sps, fit)
+        return replace(
+            start,
+            instant=float(line[0]),
+            sps=sps,
+            phase=phase,
+            turn=turn,
+            means=fit.means,
+            detector_slope=slope,
+            offset_ui=offset,
+            template=template,
+            sense_ui=self._sense_ui,
+        ), fit
 
 
 def _power(rails: Rails) -> NDArray[np.float32]:

@@ -28,7 +28,7 @@ _GARDNER_LATENESS = ((0.2, 0.25, 0.35, 0.5, 0.75, 1.0), (0.0, 0.0, 0.0, 0.0, 0.0
 class ChainOptions:
     """How to measure.
 
-    ``detector`` None: the derivative detector, or Gardner's where waves have corners. Bandwidths are BnT, per symbol. ``window`` is
+    ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT, per symbol. ``window`` is
     the symbols of a reading, ``every`` draws each n-th trace into the raster.
     """
 
@@ -143,7 +143,8 @@ class Chain:
             self._filled += n
             at += n
             if self._filled == self._chunk:
-                self._work(self._buffer)
+                # a copy: a front end with nothing to do hands the samples on as they are, and acquisition keeps them
+                self._work(self._buffer.copy())
 
     def finish(self) -> None:
         """The stream has ended: use what is left."""

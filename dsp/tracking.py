@@ -11,8 +11,13 @@ from dsp.interpolation import BEFORE, TAPS, cubic_slope_weights, cubic_weights, 
 from dsp.link import Scheme
 from dsp.loops import exact_gains
 
-Detector = Literal["gardner", "mueller-muller", "derivative"]
-_DETECTOR = {"gardner": kernel.GARDNER, "mueller-muller": kernel.MUELLER_MULLER, "derivative": kernel.DERIVATIVE}
+Detector = Literal["gardner", "mueller-muller", "derivative", "crossing"]
+_DETECTOR = {
+    "gardner": kernel.GARDNER,
+    "mueller-muller": kernel.MUELLER_MULLER,
+    "derivative": kernel.DERIVATIVE,
+    "crossing": kernel.CROSSING,
+}
 HISTORY = 2 * kernel.TEMPLATE
 TEMPLATE_LAGS = kernel.AHEAD - 1 - np.arange(kernel.TEMPLATE)  # symbol k - lag stands at each tap of the template
 MAX_LEVELS = 8
@@ -57,7 +62,9 @@ class TrackStart:
     offset_ui
         From the loop's instant to where decisions are taken.
     template
-        Pattern-noise template of the derivative detector, shape ``(16,)``, per UI.
+        Pattern-noise template of the derivative detector (per UI) or the crossing detector, shape ``(16,)``.
+    sense_ui
+        How long before the instant the crossing detector looks.
     """
 
     instant: float
@@ -70,6 +77,7 @@ class TrackStart:
     bias: float = 0.0
     offset_ui: float = 0.0
     template: NDArray[np.float32] | None = None
+    sense_ui: float = 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,7 +143,7 @@ class Tracker:
         timing_bandwidth: float,
         carrier_bandwidth: float,
     ) -> None:
-        delay = kernel.AHEAD if start.detector == "derivative" else 0
+        delay = kernel.AHEAD if start.detector in ("derivative", "crossing") else 0
         timing = exact_gains(timing_bandwidth, delay)
         carrier = exact_gains(carrier_bandwidth)
         self._complex = scheme.kind == "carrier"
@@ -156,6 +164,7 @@ class Tracker:
         setup[kernel.ENERGY] = scheme.symbol_energy()
         setup[kernel.LEVEL_STEP] = self.LEVEL_STEP
         setup[kernel.TIMING_BIAS] = start.bias
+        setup[kernel.SENSE] = start.sense_ui
         self._setup = setup
         self._nominal = np.zeros(MAX_LEVELS)
         self._nominal[: scheme.levels] = scheme.rail_levels

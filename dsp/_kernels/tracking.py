@@ -26,9 +26,10 @@ N_STATE = 11
     ENERGY,
     LEVEL_STEP,
     TIMING_BIAS,
-) = range(14)
-N_SETUP = 14
-GARDNER, MUELLER_MULLER, DERIVATIVE = 0.0, 1.0, 2.0
+    SENSE,
+) = range(15)
+N_SETUP = 15
+GARDNER, MUELLER_MULLER, DERIVATIVE, CROSSING = 0.0, 1.0, 2.0, 3.0
 PAM, BPSK, QAM, PSK8 = 0.0, 1.0, 2.0, 3.0
 
 TEMPLATE = 16  # taps of the pattern-noise template, for symbols -8 .. +7 about the one in hand
@@ -109,6 +110,7 @@ def track(
     shape = setup[SHAPE]
     level_step = setup[LEVEL_STEP]
     bias = setup[TIMING_BIAS]
+    sense = setup[SENSE] * sps
     t, rate, t_old = state[INSTANT], state[RATE], state[PREVIOUS]
     phase, freq = state[PHASE], state[TURN]
     old_i, old_q = state[OLD_I], state[OLD_Q]
@@ -204,6 +206,16 @@ def track(
                 error += (a_old_q * here_q - a_q * old_q) * scale_q
             old_i, old_q = here_i, here_q
             a_old_i, a_old_q = a_i, a_q
+        elif detector == CROSSING:
+            slopes[0, k] = (_at(x_i, t - sense, table) - zero[0]) * scale_i
+            decided[0, k] = a_i
+            # a transition's height where it crosses, less what its decided neighbours put there
+            centre = k - AHEAD
+            past = decided[0, k - TEMPLATE + 1 : k + 1]
+            total = types.float32(0.0)
+            for m in range(TEMPLATE):
+                total += template[m] * past[m]
+            error = (decided[0, centre] - decided[0, centre - 1]) * (slopes[0, centre] - total)
         else:
             d_i = _at(x_i, t, slope_table)
             if complex_in:
