@@ -7,32 +7,40 @@ from collections.abc import Iterator
 from typing import Any
 
 from dsp.reading import Reading
+from monitor.errors import printable
 from monitor.session import Outcome
+from monitor.version import version
+from monitor.views.wording import figure_groups, interval_text, plain
 
-VERSION = "0.1.0"
+# a value of the document; its arrays and objects hold more of them
+Json = None | bool | int | float | str | list[Any] | dict[str, Any]
+
+_LABEL_WIDTH = 24
 
 
-def document(outcome: Outcome) -> dict[str, Any]:
-    """The one JSON document of a run; figures that cannot be known are None."""
-    info, link = outcome.source.info, outcome.link
-    rate = info.sample_rate_hz
-    seconds = outcome.seconds
-    locked = outcome.acquired_at is not None and outcome.reading is not None
+def document(outcome: Outcome) -> dict[str, Json]:
+    """The one JSON document of a run; figures that cannot be known are None, as is anything not finite.
+
+    Beside the keys that are promised there are ``source.notes``, the source's defects in words, and ``lock.reason``, why nothing was
+    measured (None if something was).
+    """
+    info, link, reading = outcome.source.info, outcome.link, outcome.reading
+    locked = reading is not None
     per_second = outcome.samples / outcome.elapsed_s if outcome.elapsed_s > 0 else None
-    reading = outcome.reading
-    return {
-        "lidwatch": VERSION,
+    carrier_hz = reading.carrier_hz if reading is not None else None
+    found: dict[str, Json] = {
+        "lidwatch": version(),
         "source": {
             "uri": info.uri,
             "format": info.format,
-            "sample_rate_hz": rate,
+            "sample_rate_hz": info.sample_rate_hz,
             "samples": outcome.samples,
-            "seconds": seconds,
+            "seconds": outcome.seconds,
             "gaps": outcome.gaps,
             "samples_lost": outcome.samples_lost,
             "nonfinite": outcome.nonfinite,
             "clipped_pct": 100.0 * outcome.clipped / outcome.samples if outcome.samples else None,
-            "notes": list(outcome.source.notes),
+            "notes": list(outcome.source_notes),
         },
         "link": {
             "scheme": link.scheme.name if link else None,
@@ -40,16 +48,16 @@ def document(outcome: Outcome) -> dict[str, Any]:
             "symbol_rate_hz": link.symbol_rate_hz if link else None,
             "samples_per_symbol": link.samples_per_symbol if link else None,
             "pulse": str(link.pulse) if link else None,
-            "carrier_hz": reading.carrier_hz if reading else None,
+            "carrier_hz": link.carrier_hz if link and carrier_hz is None else carrier_hz,
             "identified": list(outcome.identified),
         },
         "lock": {
             "timing": locked,
             "carrier": None if link is None or link.scheme.kind != "carrier" else locked,
-            "locked_pct": 100.0 * outcome.locked_samples / outcome.samples if outcome.samples else 0.0,
+            "locked_pct": outcome.locked_pct,
             "slips": outcome.slips,
-            "acquired_at_s": outcome.acquired_at / rate if locked and outcome.acquired_at is not None else None,
-            "reason": None if locked else outcome.reason,
+            "acquired_at_s": None if outcome.acquired_at is None else outcome.acquired_at / info.sample_rate_hz,
+            "reason": outcome.reason or None,
         },
         "reading": reading_document(reading),
         "windows": {
@@ -60,18 +68,21 @@ def document(outcome: Outcome) -> dict[str, Any]:
         "alarms": [],
         "speed": {
             "samples_per_s": per_second,
-            "times_real_time": per_second / rate if per_second is not None else None,
+            "times_real_time": None if per_second is None else per_second / info.sample_rate_hz,
             "coverage_pct": outcome.coverage_pct,
         },
     }
+    return {key: _finite(value) for key, value in found.items()}
 
 
-def reading_document(reading: Reading | None) -> dict[str, Any] | None:
+def reading_document(reading: Reading | None) -> dict[str, Json] | None:
     """A reading by its keys; anything not finite becomes None."""
-    return None if reading is None else _finite(dataclasses.asdict(reading))
+    if reading is None:
+        return None
+    return {key: _finite(value) for key, value in dataclasses.asdict(reading).items()}
 
 
-def _finite(value: Any) -> Any:
+def _finite(value: Json | tuple[Any, ...]) -> Json:
     if isinstance(value, dict):
         return {key: _finite(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
@@ -82,53 +93,47 @@ def _finite(value: Any) -> Any:
 
 
 def to_json(outcome: Outcome) -> str:
-    """The document as JSON text, without NaN."""
-    return json.dumps(_finite(document(outcome)), indent=2, allow_nan=False)
-
-
-_LINES = (
-    ("opening", "opening_pct", "{:.1f} %"),
-    ("eye width", "width_ui", "{:.3f} UI"),
-    ("best instant", "best_instant_ui", "{:+.3f} UI from the loop's"),
-    ("noise margin", "noise_margin_db", "{:.1f} dB"),
-    ("SNR", "snr_db", "{:.1f} dB"),
-    ("MER", "mer_db", "{:.1f} dB"),
-    ("EVM", "evm_pct", "{:.2f} %"),
-    ("bit error rate, estimated", "ber", "{:.2g}"),
-    ("crossing spread", "crossing_rms_ui", "{:.4f} UI rms"),
-    ("clock", "clock_ppm", "{:+.2f} ppm"),
-    ("clock jitter", "jitter_rms_ui", "{:.4f} UI rms"),
-    ("carrier", "carrier_hz", "{:+.2f} Hz"),
-    ("phase jitter", "phase_rms_deg", "{:.2f} deg rms"),
-)
+    """The document as JSON text, ASCII only."""
+    return json.dumps(document(outcome), indent=2, allow_nan=False)
 
 
 def text(outcome: Outcome) -> Iterator[str]:
     """The run in a few lines for a terminal."""
-    info, link, reading = outcome.source.info, outcome.link, outcome.reading
-    yield f"{info.uri}: {info.format}, {info.sample_rate_hz:g} Hz, {outcome.seconds:.3f} s"
-    if link is not None:
-        name = f"{link.name}: " if link.name else ""
-        yield f"{name}{link.scheme.name} at {link.symbol_rate_hz:.6g} Bd, pulse {link.pulse}" + (
-            f" (found: {', '.join(key.removesuffix('_hz').replace('_', ' ') for key in outcome.identified)})"
-            if outcome.identified
-            else ""
-        )
-    for note in outcome.source.notes:
-        yield f"note: {note}"
-    if outcome.nonfinite:
-        yield f"note: {outcome.nonfinite} samples were not finite and count as 0"
-    if outcome.clipped:
-        yield f"note: {outcome.clipped} samples at the end stops ({100.0 * outcome.clipped / outcome.samples:.2g} %)"
+    info = outcome.source.info
+    yield printable(f"{info.uri}: {info.format}, {info.sample_rate_hz:.12g} Hz, {outcome.seconds:.3f} s")
+    if outcome.link is not None:
+        found = ", ".join(key.removesuffix("_hz").replace("_", " ") for key in outcome.identified)
+        yield printable(link_text(outcome) + (f" (found: {found})" if found else ""))
+    for note in outcome.notes:
+        yield printable(f"note: {note}")
+    reading = outcome.reading
     if reading is None or reading.opening_pct is None:
-        yield f"no lock: {outcome.reason}"
+        yield printable(f"nothing to measure: {outcome.reason}")
         return
-    share = 100.0 * outcome.locked_samples / outcome.samples
-    yield f"locked {share:.1f} % of the time, {outcome.slips} slips, {reading.symbols} symbols"
-    for label, key, form in _LINES:
-        value = getattr(reading, key)
-        if value is not None:
-            yield f"  {label:26s} {form.format(value)}"
+    yield f"{lock_text(outcome)}, {reading.symbols} symbols"
+    interval = interval_text(reading)
+    yield f"opening {plain(reading.opening_pct, 1)} %" + (f" ({interval})" if interval else "")
+    for group in figure_groups(reading):
+        yield f"{group.title}:"
+        for figure in group.figures:
+            yield f"  {figure.label:{_LABEL_WIDTH}}{figure.value}"
     worst = outcome.windows.worst
     if worst is not None and worst.opening_pct is not None:
-        yield f"  worst of {outcome.windows.count} windows        {worst.opening_pct:.1f} % open"
+        yield f"worst of {outcome.windows.count} windows: {plain(worst.opening_pct, 1)} % open"
+
+
+def link_text(outcome: Outcome) -> str:
+    """What the link is, in one line; empty if unknown."""
+    link = outcome.link
+    if link is None:
+        return ""
+    name = f"{link.name}: " if link.name else ""
+    return f"{name}{link.scheme.name} at {link.symbol_rate_hz:.6g} Bd, pulse {link.pulse}"
+
+
+def lock_text(outcome: Outcome) -> str:
+    """Whether the loops held the link, in a few words."""
+    if outcome.reading is None:
+        return "no lock"
+    slips = f"{outcome.slips} slip{'s' * (outcome.slips != 1)}"
+    return f"locked {outcome.locked_pct:.1f} % of the time, {slips}"

@@ -1,93 +1,158 @@
 """What the user says of a link: options of the command line over a link file."""
 
+import io
+import math
 import tomllib
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 from dsp.errors import DspError
 from dsp.identify import Wanted
 from dsp.link import find_scheme
 from dsp.pulses import Pulse
 from monitor.errors import InputError
+from monitor.limits import LOOP_BANDWIDTH, TIMINGS, Timing
 
-_KEYS = {"name", "symbol_rate_hz", "scheme", "pulse", "carrier_hz", "timing", "loop_bandwidth"}
-TIMINGS = ("gardner", "mueller-muller", "derivative")
+_TABLES: Final = ("link", "alarm")
+_NUMBERS: Final = ("symbol_rate_hz", "carrier_hz", "loop_bandwidth")
+_TEXTS: Final = ("name", "scheme", "pulse", "timing")
+_MOST_BYTES: Final = 1 << 20
+_MOST_TAPS: Final = 4096
 
 
 @dataclass(frozen=True, slots=True)
 class LinkOptions:
-    """The link as typed; None or "auto": not given."""
+    """The link as typed, in the units of the names (``loop_bandwidth`` BnT, per symbol); None: not given."""
 
     symbol_rate_hz: float | None = None
     scheme: str | None = None
     pulse: str | None = None
     carrier_hz: float | None = None
-    timing: str | None = None
+    timing: Timing | None = None
     loop_bandwidth: float | None = None
-    name: str = ""
+    name: str | None = None
 
     def over(self, other: "LinkOptions") -> "LinkOptions":
         """These options, filled up with another's."""
-        mine = {key: value for key in self.__slots__ if (value := getattr(self, key)) not in (None, "", "auto")}
-        theirs = {key: getattr(other, key) for key in self.__slots__}
-        return LinkOptions(**{**theirs, **mine})
+        given = {f.name: value for f in fields(self) if (value := getattr(self, f.name)) is not None}
+        return replace(other, **given)
 
     def wanted(self) -> Wanted:
         """As `dsp.identify` takes it. Raises InputError for an unknown scheme or pulse."""
         try:
-            scheme = None if self.scheme in (None, "auto") else find_scheme(str(self.scheme))
-            pulse = None if self.pulse in (None, "auto") else read_pulse(str(self.pulse))
+            scheme = None if self.scheme is None else find_scheme(self.scheme)
+            pulse = None if self.pulse is None else read_pulse(self.pulse)
         except DspError as error:
             raise InputError(str(error)) from None
-        return Wanted(scheme, self.symbol_rate_hz, pulse, self.carrier_hz, self.name)
+        return Wanted(scheme, self.symbol_rate_hz, pulse, self.carrier_hz, self.name or "")
+
+
+@dataclass(frozen=True, slots=True)
+class LinkFile:
+    """A link file's content: the link, and how many alarm rules stand in it."""
+
+    link: LinkOptions
+    n_alarms: int = 0
 
 
 def read_pulse(text: str) -> Pulse:
     """A pulse as typed; ``taps:FILE`` reads a .npy file or text with one tap a line. Raises DspError or InputError."""
     if not text.startswith("taps:"):
         return Pulse.parse(text)
-    import numpy as np
-
     path = Path(text.removeprefix("taps:"))
     try:
-        if path.suffix == ".npy":
-            values = np.load(path, allow_pickle=False).ravel()
-        else:
-            values = np.array(
-                [complex(line.replace(" ", "")) for line in path.read_text("utf-8").split("\n") if line.strip()]
-            )
-    except (OSError, ValueError) as error:
-        raise InputError(
-            f"--pulse {text}: no taps there ({error}); give a .npy file or text with one tap a line"
-        ) from None
-    if values.size == 0 or not np.all(np.isfinite(values)):
-        raise InputError(f"--pulse {text}: taps must be finite numbers, at least one")
-    return Pulse("taps", taps=tuple(complex(v) for v in values))
-
-
-def read_link_file(path: Path) -> LinkOptions:
-    """The ``[link]`` part of a link file. Raises InputError."""
-    try:
-        content = tomllib.loads(path.read_text("utf-8"))
+        taps = _read_taps(path, _read_bytes(path))
     except OSError as error:
-        raise InputError(f"link file {path}: {error.strerror or error}; check the path") from None
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise InputError(f"link file {path}: not TOML ({error})") from None
-    table: Any = content.get("link", {})
-    if not isinstance(table, dict):
-        raise InputError(f"link file {path}: [link] must be a table")
-    unknown = sorted(set(table) - _KEYS)
+        raise InputError(f"taps {path}: {error.strerror or error}; check the path") from None
+    except (ValueError, TypeError, EOFError, MemoryError) as error:
+        raise InputError(
+            f"taps {path}: no taps there ({error}); give a .npy file or text with one tap a line"
+        ) from None
+    if not taps or not all(math.isfinite(tap.real) and math.isfinite(tap.imag) for tap in taps):
+        raise InputError(f"taps {path}: taps must be finite numbers, at least one")
+    if not any(taps):
+        raise InputError(f"taps {path}: all taps are 0, nothing would come through")
+    if len(taps) > _MOST_TAPS:
+        raise InputError(f"taps {path}: {len(taps)} taps; at most {_MOST_TAPS} are taken")
+    return Pulse("taps", taps=tuple(taps))
+
+
+def read_link_file(path: Path) -> LinkFile:
+    """A link file: TOML with a table ``[link]`` and any number of ``[[alarm]]``. Raises InputError."""
+    where = f"link file {path}"
+    try:
+        content = tomllib.loads(_read_bytes(path).decode("utf-8"))
+    except OSError as error:
+        raise InputError(f"{where}: {error.strerror or error}; check the path") from None
+    except (
+        ValueError,
+        RecursionError,
+    ) as error:  # TOML's and UTF-8's errors are ValueErrors, as is a zero byte in a name
+        raise InputError(f"{where}: not TOML ({error})") from None
+    unknown = sorted(set(content) - set(_TABLES))
     if unknown:
-        raise InputError(f"link file {path}: {unknown[0]!r} is not a key of [link]; take {', '.join(sorted(_KEYS))}")
-    values = {}
+        raise InputError(f"{where}: {unknown[0]!r} has no meaning here; a link file has [link] and [[alarm]]")
+    table, alarms = content.get("link", {}), content.get("alarm", [])
+    if not isinstance(table, dict):
+        raise InputError(f"{where}: [link] must be a table")
+    if not isinstance(alarms, list) or not all(isinstance(alarm, dict) for alarm in alarms):
+        raise InputError(f"{where}: alarms must be tables; write each as [[alarm]]")
+    return LinkFile(_link_of(table, path, where), len(alarms))
+
+
+def _link_of(table: dict[str, Any], path: Path, where: str) -> LinkOptions:
+    known = (*_TEXTS, *_NUMBERS)
+    given: dict[str, Any] = {}
     for key, value in table.items():
-        number = key in ("symbol_rate_hz", "carrier_hz", "loop_bandwidth")
-        if value == "auto":
+        if key not in known:
+            raise InputError(f"{where}: {key!r} is not a key of [link]; take {', '.join(known)}")
+        if value == "auto" and key != "name":
             continue
-        if number and (isinstance(value, bool) or not isinstance(value, int | float)):
-            raise InputError(f"link file {path}: {key} must be a number, got {value!r}")
-        if not number and not isinstance(value, str):
-            raise InputError(f"link file {path}: {key} must be text, got {value!r}")
-        values[key] = float(value) if number else value
-    return LinkOptions(**values)
+        if key in _NUMBERS:
+            given[key] = _number(key, value, where)
+        elif isinstance(value, str):
+            given[key] = value
+        else:
+            raise InputError(f"{where}: {key} must be text, got {value!r}")
+    if given.get("timing", TIMINGS[0]) not in TIMINGS:
+        raise InputError(f"{where}: timing {given['timing']!r} is not known; take auto, {', '.join(TIMINGS)}")
+    pulse = given.get("pulse", "")
+    if pulse.startswith("taps:"):  # a file named in a file lies beside it
+        given["pulse"] = f"taps:{path.parent / pulse.removeprefix('taps:')}"
+    return LinkOptions(**given)
+
+
+def _number(key: str, value: object, where: str) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise InputError(f"{where}: {key} must be a number, got {value!r}")
+    try:
+        number = float(value)
+    except OverflowError:
+        number = math.inf
+    if not math.isfinite(number):
+        raise InputError(f"{where}: {key} must be finite, got {value!r}")
+    if key == "symbol_rate_hz" and number <= 0:
+        raise InputError(f"{where}: {key} must be above 0, got {value!r}")
+    low, high = LOOP_BANDWIDTH
+    if key == "loop_bandwidth" and not low <= number <= high:
+        raise InputError(f"{where}: {key} must lie between {low:g} and {high:g}, got {value!r}")
+    return number
+
+
+def _read_bytes(path: Path) -> bytes:
+    """The content of a small file; raises OSError, and ValueError where there is more than anyone would type."""
+    with path.open("rb") as file:
+        content = file.read(_MOST_BYTES + 1)
+    if len(content) > _MOST_BYTES:
+        raise ValueError(f"more than {_MOST_BYTES} bytes")
+    return content
+
+
+def _read_taps(path: Path, content: bytes) -> list[complex]:
+    if path.suffix == ".npy":
+        import numpy as np
+
+        return [complex(tap) for tap in np.load(io.BytesIO(content), allow_pickle=False).ravel()]
+    lines = content.decode("utf-8").splitlines()
+    return [complex(line.replace(" ", "")) for line in lines if line.strip()]

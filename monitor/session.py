@@ -1,5 +1,6 @@
 """One run over one source: find the link, run the chain, gather what came out."""
 
+import math
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
@@ -37,10 +38,38 @@ class Windows:
 
 @dataclass
 class Outcome:
-    """All that one run has to tell."""
+    """All that one run has to tell.
+
+    Attributes
+    ----------
+    source
+        Where the samples came from; may be closed.
+    link
+        What the link is; None if there is none that could be told.
+    identified
+        Keys of the link's parts that were found rather than given.
+    reading, image
+        Figures and eye of all symbols; None if there was never a lock.
+    windows
+        The run window by window.
+    events
+        Each gain and loss of lock.
+    reason
+        Why nothing was measured; empty if something was.
+    samples, samples_lost, gaps, clipped, nonfinite
+        Of the stream.
+    slips, locked_samples, acquired_at
+        Of the timing loop; ``acquired_at`` counts samples from the first one delivered.
+    coverage_pct
+        Share of the symbols whose trace is in the eye.
+    elapsed_s
+        How long the run took.
+    interrupted
+        The user ended it before the stream did.
+    """
 
     source: Source
-    link: Link | None
+    link: Link | None = None
     identified: tuple[str, ...] = ()
     reading: Reading | None = None
     image: EyeImage | None = None
@@ -57,27 +86,64 @@ class Outcome:
     acquired_at: int | None = None
     coverage_pct: float | None = None
     elapsed_s: float = 0.0
+    interrupted: bool = False
 
     @property
     def seconds(self) -> float:
         """Length of the stream."""
         return (self.samples + self.samples_lost) / self.source.info.sample_rate_hz
 
+    @property
+    def measured(self) -> bool:
+        """Whether there is an eye with an opening."""
+        return self.reading is not None and self.reading.opening_pct is not None
+
+    @property
+    def locked_pct(self) -> float:
+        """Share of the samples during which the loops held the link."""
+        return 100.0 * self.locked_samples / self.samples if self.samples else 0.0
+
+    @property
+    def source_notes(self) -> tuple[str, ...]:
+        """Defects of the source, seen at opening and while reading, a line each."""
+        return (*self.source.info.notes, *self.source.notes)
+
+    @property
+    def notes(self) -> tuple[str, ...]:
+        """The source's defects and what was counted of the samples, a line each."""
+        counted = []
+        if self.nonfinite:
+            counted.append(f"{_counted(self.nonfinite, 'sample')} not finite, taken as 0")
+        if self.clipped:
+            share = 100.0 * self.clipped / self.samples
+            counted.append(f"{_counted(self.clipped, 'sample')} at the end stops of the format ({share:.2g} %)")
+        if self.samples_lost:
+            counted.append(f"{_counted(self.samples_lost, 'sample')} lost in {_counted(self.gaps, 'gap')}")
+        if self.interrupted:
+            counted.append(f"interrupted after {self.seconds:.3f} s")
+        return (*self.source_notes, *counted)
+
+
+def _counted(count: int, noun: str) -> str:
+    return f"{count} {noun}{'s' * (count != 1)}"
+
 
 class _Worst:
     """Keeps the sums of the window with the least opening."""
 
-    def __init__(self, context: Callable[[], Context]) -> None:
-        self._context = context
+    def __init__(self) -> None:
         self.count = 0
-        self.opening = np.inf
-        self.sums: EyeSums | None = None
+        self._opening = math.inf
+        self._sums: EyeSums | None = None
 
-    def take(self, sums: EyeSums) -> None:
+    def take(self, sums: EyeSums, context: Context) -> None:
         self.count += 1
-        opening = window_opening(sums, self._context())
-        if opening is not None and opening < self.opening:
-            self.opening, self.sums = opening, sums
+        opening = window_opening(sums, context)
+        if opening is not None and opening < self._opening:
+            self._opening, self._sums = opening, sums
+
+    def reading(self, context: Context) -> Reading | None:
+        return None if self._sums is None else Figures(self._sums, context).reading()
 
 
 def run(
@@ -87,23 +153,40 @@ def run(
     *,
     threads: int = 2,
     progress: Callable[[int], None] | None = None,
-    stopped: Callable[[], bool] | None = None,
 ) -> Outcome:
-    """Measure a whole source. ``progress`` is told the samples taken so far, ``stopped`` may end the run early.
+    """Measure a source from where it stands to its end.
 
-    Raises InputError where link and samples do not fit.
+    Parameters
+    ----------
+    source
+        Open; stays open.
+    wanted, options
+        What is known of the link, and how to measure.
+    threads
+        1 or 2: with 2 the eye's sums are made in a thread of their own.
+    progress
+        Is told the samples taken so far.
+
+    Raises
+    ------
+    InputError
+        Link and samples do not fit together.
     """
     started = time.perf_counter()
-    blocks = source.blocks()
-    head = _read_head(blocks, source.info.sample_rate_hz, wanted)
-    outcome = Outcome(source, None)
+    stream = source.blocks()
+    outcome = Outcome(source)
+    rate = source.info.sample_rate_hz
     try:
-        identified = settle_link(head, source.info.sample_rate_hz, wanted)
+        head = _read_head(stream, rate, wanted)
+        identified = settle_link(head, rate, wanted)
+        rest = _counting(_joined(head, stream), outcome, progress)
         if isinstance(identified, NotFound):
             outcome.reason = identified.reason
-            _count_only(outcome, head, blocks, progress, stopped)
+            for _ in rest:
+                pass  # no link: still say what the source holds
         else:
-            _measure(outcome, identified, head, blocks, options, threads, progress, stopped)
+            outcome.link, outcome.identified = identified.link, identified.found
+            _measure(outcome, identified, rest, options, threads)
     except DspError as error:
         raise InputError(str(error)) from None
     outcome.elapsed_s = time.perf_counter() - started
@@ -128,30 +211,23 @@ def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Ide
     return identify(samples, sample_rate_hz, wanted)
 
 
-def _read_head(blocks: Iterator[Block], rate: float, wanted: Wanted) -> list[Block]:
+def _read_head(stream: Iterator[Block], rate: float, wanted: Wanted) -> list[Block]:
     need = int(min(_HEAD_SECONDS * rate, _HEAD_SAMPLES))
     if wanted.symbol_rate_hz:
         need = max(need, int(min(_HEAD_SYMBOLS * rate / wanted.symbol_rate_hz, 4 * _HEAD_SAMPLES)))
     head: list[Block] = []
     have = 0
-    while have < need and (block := next(blocks, None)) is not None:
+    while have < need and (block := next(stream, None)) is not None:
         head.append(block)
         have += block.samples.size
     return head
 
 
 def _measure(
-    outcome: Outcome,
-    identified: Identified,
-    head: list[Block],
-    blocks: Iterator[Block],
-    options: ChainOptions,
-    threads: int,
-    progress: Callable[[int], None] | None,
-    stopped: Callable[[], bool] | None,
+    outcome: Outcome, identified: Identified, stream: Iterator[Block], options: ChainOptions, threads: int
 ) -> None:
+    worst = _Worst()
     lane = ThreadLane() if threads > 1 else None
-    worst = _Worst(lambda: chain.context())
     chain = Chain(
         identified.link,
         complex_in=outcome.source.info.complex_samples,
@@ -159,58 +235,42 @@ def _measure(
         half_band_hz=identified.half_band_hz,
         options=options,
         lane=lane or AtOnce(),
-        on_window=worst.take,
+        on_window=lambda sums: worst.take(sums, chain.context()),
     )
     try:
-        for block in _joined(head, blocks):
-            if stopped is not None and stopped():
-                break
+        for block in stream:
             chain.push(block)
-            if progress is not None:
-                progress(chain.samples)
         chain.finish()
     finally:
         if lane is not None:
             lane.close()
-    outcome.link = identified.link
-    outcome.identified = identified.found
     outcome.events = chain.events
-    outcome.reason = chain.last_reason
-    for name in ("samples", "samples_lost", "gaps", "clipped", "nonfinite", "slips", "locked_samples", "acquired_at"):
-        setattr(outcome, name, getattr(chain, name))
-    if chain.total is not None:
-        figures = Figures(chain.total, chain.context())
-        outcome.reading = figures.reading()
-        outcome.image = figures.image()
-        outcome.coverage_pct = 100.0 * chain.total.drawn / max(chain.total.symbols, 1)
-    outcome.windows = Windows(
-        worst.count,
-        options.window,
-        Figures(worst.sums, chain.context()).reading() if worst.sums is not None else None,
-    )
+    outcome.slips, outcome.locked_samples, outcome.acquired_at = chain.slips, chain.locked_samples, chain.acquired_at
+    if chain.total is None:
+        outcome.reason = chain.last_reason
+        return
+    figures = Figures(chain.total, chain.context())
+    outcome.reading, outcome.image = figures.reading(), figures.image()
+    if not outcome.measured:
+        outcome.reason = f"{_counted(chain.total.symbols, 'symbol')} behind the lock are too few for an eye"
+    outcome.coverage_pct = 100.0 * chain.total.drawn / max(chain.total.symbols, 1)
+    outcome.windows = Windows(worst.count, options.window, worst.reading(chain.context()))
 
 
-def _count_only(
-    outcome: Outcome,
-    head: list[Block],
-    blocks: Iterator[Block],
-    progress: Callable[[int], None] | None,
-    stopped: Callable[[], bool] | None,
-) -> None:
-    """No link: still say what the source holds."""
-    for block in _joined(head, blocks):
-        if stopped is not None and stopped():
-            break
-        outcome.samples += block.samples.size
+def _joined(head: list[Block], stream: Iterator[Block]) -> Iterator[Block]:
+    while head:
+        yield head.pop(0)
+    yield from stream
+
+
+def _counting(stream: Iterator[Block], outcome: Outcome, progress: Callable[[int], None] | None) -> Iterator[Block]:
+    """The blocks, counted into the outcome as each is done with."""
+    for block in stream:
         outcome.samples_lost += block.lost
         outcome.gaps += block.lost > 0
         outcome.clipped += block.clipped
         outcome.nonfinite += block.nonfinite
+        outcome.samples += block.samples.size
+        yield block
         if progress is not None:
             progress(outcome.samples)
-
-
-def _joined(head: list[Block], blocks: Iterator[Block]) -> Iterator[Block]:
-    while head:
-        yield head.pop(0)
-    yield from blocks
