@@ -28,7 +28,7 @@ _GARDNER_LATENESS = ((0.2, 0.25, 0.35, 0.5, 0.75, 1.0), (0.0, 0.0, 0.0, 0.0, 0.0
 class ChainOptions:
     """How to measure.
 
-    ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT, per symbol. ``window`` is
+    ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT. ``window`` is
     the symbols of a reading, ``every`` draws each n-th trace into the raster.
     """
 
@@ -298,7 +298,8 @@ class Chain:
             self.slips += self._slip.push(track, self._sps)
             meter = self._meter
             assert meter is not None
-            self._lane.do(lambda meter=meter, track=track: meter.push(track))  # type: ignore[misc]
+            waves = meter.resample(track)
+            self._lane.do(lambda meter=meter, track=track, waves=waves: meter.push(track, waves))  # type: ignore[misc]
 
     def _lose(self, reason: str) -> None:
         """Forget what came in since the lock may have gone, and look for the link again."""
@@ -352,13 +353,12 @@ class LockGuard:
     def holds(self, track: Track) -> bool:
         """Take the next symbols; False as soon as a whole window falls below the floor."""
         error = track.values - track.decided
-        signal = np.einsum("rk,rk->k", track.decided, track.decided, dtype=np.float64)
-        noise = np.einsum("rk,rk->k", error, error, dtype=np.float64)
-        at = 0
-        while at < signal.size:
-            n = min(self._part - self._count, signal.size - at)
-            self._signal += float(signal[at : at + n].sum())
-            self._noise += float(noise[at : at + n].sum())
+        at, size = 0, error.shape[1]
+        while at < size:
+            n = min(self._part - self._count, size - at)
+            for levels, rest in zip(track.decided, error, strict=True):
+                self._signal += float(levels[at : at + n] @ levels[at : at + n])
+                self._noise += float(rest[at : at + n] @ rest[at : at + n])
             self._count += n
             at += n
             if self._count == self._part:
@@ -416,10 +416,9 @@ class SlipCounter:
         jump = 0
         n = len(self._means)
         if n >= 4:
-            # the least-squares line through the past means, one step on
-            middle = (n - 1) / 2
-            slope = sum((i - middle) * value for i, value in enumerate(self._means)) * 12 / (n * (n * n - 1))
-            jump = round(mean - (sum(self._means) / n + slope * (n - middle)))
+            # the least-squares line through the past means, one step on: weights by position
+            expected = sum((6.0 * i + 2.0 - 2.0 * n) * value for i, value in enumerate(self._means)) / (n * (n - 1))
+            jump = round(mean - expected)
             if jump:
                 self._means = deque((value + jump for value in self._means), maxlen=self._MEMORY)
         self._means.append(mean)

@@ -194,14 +194,37 @@ class EyeMeter:
         self._decided = np.zeros((2, 0), np.float32)
         self._classes = np.zeros((2, 0), np.int8)
 
-    def push(self, track: Track) -> None:
-        """Take the next symbols of the run."""
+    def resample(self, track: Track) -> tuple[NDArray[np.float32], ...]:
+        """Each rail's wave in level units, shape ``(phases, n)``, from each symbol's decision instant to the next; pure."""
+        shift = self.offset_ui * self._sps
+        scale, zero = 1.0 / track.gain, track.zero
+        n = track.values.shape[1]
+        waves = tuple(np.empty((self._phases, n), np.float32) for _ in range(self._scheme.rails))
+        if self._scheme.kind != "carrier":
+            kernel.resample_real(
+                track.samples[0], self._tables.value, track.instants, shift, scale[0], zero[0], waves[0]
+            )
+            return waves
+        step = np.diff(track.phases)
+        # the decision instant lies offset_ui after the loop's, and the carrier has turned on by then
+        angle = 2 * np.pi * np.mod(track.phases[:-1] + step * self.offset_ui, 1.0).astype(np.float32)
+        turn = (2 * np.pi / self._phases * step).astype(np.float32)
+        kernel.resample_turned(
+            track.samples[0], track.samples[1], self._tables.value, track.instants, shift,
+            self._scheme.stagger * self._sps, np.cos(angle), np.sin(angle), np.cos(turn), np.sin(turn),
+            scale[0], scale[1], zero[0], zero[1], self._scheme.rails == 2, waves[0], waves[-1],
+        )  # fmt: skip
+        return waves
+
+    def push(self, track: Track, waves: tuple[NDArray[np.float32], ...]) -> None:
+        """Take the next symbols of the run with their waves as `resample` made them."""
         n = track.values.shape[1]
         if n == 0:
             return
         self._reserve(self._pending + n)
-        self._resample(track, self._pending)
         rails = self._scheme.rails
+        for pending, wave in zip(self._waves, waves, strict=True):
+            pending[:, self._pending : self._pending + n] = wave
         self._decided[:rails, self._pending : self._pending + n] = track.decided[:rails]
         self._classes[:rails, self._pending : self._pending + n] = track.classes[:rails]
         self._lines(track, n)
@@ -232,24 +255,6 @@ class EyeMeter:
         decided[:, : self._pending] = self._decided[:, : self._pending]
         classes[:, : self._pending] = self._classes[:, : self._pending]
         self._waves, self._decided, self._classes, self._capacity = waves, decided, classes, capacity
-
-    def _resample(self, track: Track, column: int) -> None:
-        shift = self.offset_ui * self._sps
-        scale, zero = 1.0 / track.gain, track.zero
-        if self._scheme.kind != "carrier":
-            kernel.resample_real(
-                track.samples[0], self._tables.value, track.instants, shift, scale[0], zero[0], self._waves[0], column
-            )
-            return
-        step = np.diff(track.phases)
-        # the decision instant lies offset_ui after the loop's, and the carrier has turned on by then
-        angle = 2 * np.pi * np.mod(track.phases[:-1] + step * self.offset_ui, 1.0).astype(np.float32)
-        turn = (2 * np.pi / self._phases * step).astype(np.float32)
-        kernel.resample_turned(
-            track.samples[0], track.samples[1], self._tables.value, track.instants, shift,
-            self._scheme.stagger * self._sps, np.cos(angle), np.sin(angle), np.cos(turn), np.sin(turn),
-            scale[0], scale[1], zero[0], zero[1], self._scheme.rails == 2, self._waves[0], self._waves[-1], column,
-        )  # fmt: skip
 
     def _lines(self, track: Track, n: int) -> None:
         k = np.arange(self._seen, self._seen + n, dtype=np.float64)
@@ -287,7 +292,7 @@ class EyeMeter:
             for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
                 lagged[rail * LAGS + i] = self._decided[rail, first - lag : last - lag]
         lagged[-1] = 1.0
-        means = lagged.sum(axis=1, dtype=np.float64)
+        means = (lagged @ lagged[-1]).astype(np.float64)
         sums.gram[-1] += means
         sums.gram[:-1, -1] += means[:-1]
         for i in range(rails):
@@ -298,31 +303,30 @@ class EyeMeter:
                 if i != j:
                     sums.gram[j * LAGS : (j + 1) * LAGS, i * LAGS : (i + 1) * LAGS] += block.T
         levels, rows = self._scheme.levels, sums.rows
+        skip = -self._count % self._every
         drawn = 0
         for rail in range(rails):
             wave = self._waves[rail]
             part = wave[:, first:last]
             sums.cross[rail] += lagged @ part.T
-            sums.square[rail] += np.einsum("pk,pk->p", part, part, dtype=np.float64)
+            sums.square[rail] += np.einsum("pk,pk->p", part, part)
             classes = self._classes[rail]
-            here = classes[first:last].astype(np.int32)
-            after = classes[first + 1 : last + 1].astype(np.int32)
+            here = classes[first:last].astype(np.uint64)
+            after = classes[first + 1 : last + 1].astype(np.uint64)
+            height = np.uint64(rows.count)
             if sums.pair:
-                base_left, base_right = (here * levels + after) * rows.count, after
+                base_left, base_right = (here * np.uint64(levels) + after) * height, after
             else:
-                base_left, base_right = here * rows.count, after * rows.count
+                base_left, base_right = here * height, after * height
             left = sums.left[rail].reshape(COLUMNS, -1)
             right = left if sums.right is None else sums.right[rail].reshape(COLUMNS, -1)
             drawn = kernel.fill(
                 wave, first, count, self._expand, base_left, base_right, not sums.pair, self._every,
-                -self._count % self._every, rows.count, rows.scale, rows.zero, left, right,
+                skip, rows.count, rows.scale, rows.zero, left, right,
             )  # fmt: skip
-            at = part[0].astype(np.float64)
-            sums.level_sums[rail, :, 0] += np.bincount(here, minlength=levels)
-            sums.level_sums[rail, :, 1] += np.bincount(here, weights=at, minlength=levels)
-            sums.level_sums[rail, :, 2] += np.bincount(here, weights=at * at, minlength=levels)
+            kernel.add_levels(part[0], classes[first:last], sums.level_sums[rail])
             kernel.crossings(
-                wave, first, count, classes, self._around, levels, 0.5,
+                wave, first + skip, count - skip, self._every, classes, self._around, levels, 0.5,
                 sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
             )  # fmt: skip
         sums.drawn += int(drawn)

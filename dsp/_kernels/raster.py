@@ -12,6 +12,7 @@ _F32 = types.Array(types.float32, 1, "C", readonly=True)
 _F32_2 = types.Array(types.float32, 2, "C", readonly=True)
 _F64 = types.Array(types.float64, 1, "C", readonly=True)
 _I32 = types.Array(types.int32, 1, "C", readonly=True)
+_U64 = types.Array(types.uint64, 1, "C", readonly=True)
 _I8 = types.Array(types.int8, 1, "C", readonly=True)
 _OUT2 = types.float32[:, ::1]
 _FAST = {"contract", "nsz", "reassoc"}
@@ -19,23 +20,23 @@ _FINITE = {"contract", "nsz", "reassoc", "nnan", "ninf"}  # samples are finite: 
 _TILE = 512
 
 
-@njit(types.void(_F32, _F32_2, _F64, types.float64, types.float32, types.float32, _OUT2, types.int64),
+@njit(types.void(_F32, _F32_2, _F64, types.float64, types.float32, types.float32, _OUT2),
       nogil=True, cache=True, fastmath=_FAST)  # fmt: skip
-def resample_real(x, table, instants, shift, scale, zero, wave, column):
-    """Put the wave at ``instants[k] + shift`` and between, scaled about ``zero``, into ``wave[:, column + k]``."""
+def resample_real(x, table, instants, shift, scale, zero, wave):
+    """Put the wave at ``instants[k] + shift`` and between, scaled about ``zero``, into ``wave[:, k]``."""
     n_phases = wave.shape[0]
     for k in range(instants.size - 1):
         t = instants[k] + shift
         step = (instants[k + 1] - instants[k]) / n_phases
         for p in range(n_phases):
-            wave[p, column + k] = (_at(x, t + step * p, table) - zero) * scale
+            wave[p, k] = (_at(x, t + step * p, table) - zero) * scale
 
 
 @njit(types.void(_F32, _F32, _F32_2, _F64, types.float64, types.float64, _F32, _F32, _F32, _F32,
-                 types.float32, types.float32, types.float32, types.float32, types.boolean, _OUT2, _OUT2, types.int64),
+                 types.float32, types.float32, types.float32, types.float32, types.boolean, _OUT2, _OUT2),
       nogil=True, cache=True, fastmath=_FAST)  # fmt: skip
 def resample_turned(x_i, x_q, table, instants, shift, stagger, cos, sin, step_cos, step_sin,
-                    scale_i, scale_q, zero_i, zero_q, both, wave_i, wave_q, column):  # fmt: skip
+                    scale_i, scale_q, zero_i, zero_q, both, wave_i, wave_q):  # fmt: skip
     """As `resample_real` for I/Q: each point is turned by the carrier's phase at its own instant.
 
     ``cos``, ``sin``: of the phase at each instant; ``step_*``: of its advance by one phase step. ``stagger`` samples of
@@ -52,9 +53,9 @@ def resample_turned(x_i, x_q, table, instants, shift, stagger, cos, sin, step_co
             where = t + step * p
             a = _at(x_i, where, table)
             b = _at(x_q, where, table)
-            wave_i[p, column + k] = (a * c + b * s - zero_i) * scale_i
+            wave_i[p, k] = (a * c + b * s - zero_i) * scale_i
             if both and stagger == 0.0:
-                wave_q[p, column + k] = (b * c - a * s - zero_q) * scale_q
+                wave_q[p, k] = (b * c - a * s - zero_q) * scale_q
             c, s = c * dc - s * ds, s * dc + c * ds
         if both and stagger > 0.0:
             c, s = cos[k], sin[k]
@@ -64,11 +65,11 @@ def resample_turned(x_i, x_q, table, instants, shift, stagger, cos, sin, step_co
                 where = t + stagger + step * p
                 a = _at(x_i, where, table)
                 b = _at(x_q, where, table)
-                wave_q[p, column + k] = (b * c - a * s - zero_q) * scale_q
+                wave_q[p, k] = (b * c - a * s - zero_q) * scale_q
                 c, s = c * dc - s * ds, s * dc + c * ds
 
 
-@njit(types.int64(_F32_2, types.int64, types.int64, _F32_2, _I32, _I32, types.boolean, types.int64, types.int64,
+@njit(types.int64(_F32_2, types.int64, types.int64, _F32_2, _U64, _U64, types.boolean, types.int64, types.int64,
                   types.int64, types.float32, types.float32, types.uint32[:, ::1], types.uint32[:, ::1]),
       nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
 def fill(wave, first, count, expand, base_left, base_right, both, every, start, n_rows, row_scale, row_zero,
@@ -81,7 +82,7 @@ def fill(wave, first, count, expand, base_left, base_right, both, every, start, 
     n_phases = wave.shape[0]
     factor = expand.shape[0]
     drawn = 0
-    line = np.empty(_TILE, np.int32)
+    line = np.empty(_TILE, np.uint64)
     top = types.float32(n_rows) - types.float32(0.5)
     for tile in range(0, count, _TILE):
         n = min(_TILE, count - tile)
@@ -103,35 +104,61 @@ def fill(wave, first, count, expand, base_left, base_right, both, every, start, 
                     v = (w[0] * x0[k] + w[1] * x1[k] + w[2] * x2[k] + w[3] * x3[k]) + (
                         w[4] * x4[k] + w[5] * x5[k] + w[6] * x6[k] + w[7] * x7[k]
                     )
-                    line[k] = types.int32(min(max(v * row_scale + row_zero, types.float32(0.0)), top))
+                    line[k] = types.uint64(types.int32(min(max(v * row_scale + row_zero, types.float32(0.0)), top)))
                 column = q * factor + s
                 counts = left[column]
                 bl = base_left[tile : tile + n]
+                # unsigned sums: an index that may be negative costs a test each
                 if both:
                     br = base_right[tile : tile + n]
                     others = right[column]
                     for k in range(skip, n, every):
                         counts[bl[k] + line[k]] += types.uint32(1)
                         others[br[k] + line[k]] += types.uint32(1)
+                elif every == 1:
+                    for k in range(n):
+                        counts[bl[k] + line[k]] += types.uint32(1)
                 else:
                     for k in range(skip, n, every):
                         counts[bl[k] + line[k]] += types.uint32(1)
     return drawn
 
 
-@njit(types.int64(_F32_2, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
+@njit(nogil=True, cache=True, inline="always", fastmath=_FAST)
+def _crossing(wave, k, p, n_phases):
+    """Time in UI at which the cubic through four phases of symbol ``k`` crosses 0 after phase ``p``: Newton from the chord."""
+    y0 = wave[p - 1, k] if p > 0 else wave[n_phases - 1, k - 1]
+    y1 = wave[p, k]
+    y2 = wave[p + 1, k] if p + 1 < n_phases else wave[0, k + 1]
+    y3 = wave[p + 2, k] if p + 2 < n_phases else wave[p + 2 - n_phases, k + 1]
+    c0 = y1
+    c1 = y2 - types.float32(1 / 3) * y0 - types.float32(0.5) * y1 - types.float32(1 / 6) * y3
+    c2 = types.float32(0.5) * (y0 + y2) - y1
+    c3 = types.float32(1 / 6) * (y3 - y0) + types.float32(0.5) * (y1 - y2)
+    u = y1 / (y1 - y2)
+    for _ in range(3):
+        slope = c1 + u * (types.float32(2.0) * c2 + types.float32(3.0) * u * c3)
+        # a step must go on crossing in the direction of the chord
+        if slope * (y2 - y1) <= types.float32(0.0):
+            break
+        u = min(max(u - (c0 + u * (c1 + u * (c2 + u * c3))) / slope, types.float32(0.0)), types.float32(1.0))
+    return (p + u) / n_phases
+
+
+@njit(types.int64(_F32_2, types.int64, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
                   types.float64[:, ::1], types.float64[:, ::1]),
       nogil=True, cache=True)  # fmt: skip
-def crossings(wave, first, count, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
+def crossings(wave, first, count, every, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
     """Times at which traces between mirror-image levels cross 0, in UI from the left symbol; return how many.
 
+    Looks at every ``every``-th symbol from ``first`` on.
     ``classes`` is aligned with the columns of ``wave``. ``bins`` counts times over one UI; ``groups[g]`` = count, sum, sum of squares
     (about ``origin``) for the pattern of classes at the offsets ``around``; ``edges[rising]`` = count, sum.
     """
     n_phases = wave.shape[0]
     n_bins = bins.size
     found = 0
-    for k in range(first, first + count):
+    for k in range(first, first + count, every):
         left = classes[k]
         if left + classes[k + 1] != n_levels - 1 or left == classes[k + 1]:
             continue
@@ -147,32 +174,9 @@ def crossings(wave, first, count, classes, around, n_levels, origin, bins, group
             before = after
         if low < 0:
             continue
-        total = 0.0
-        for which in range(2):
-            p = low if which == 0 else high
-            y0 = wave[p - 1, k] if p > 0 else wave[n_phases - 1, k - 1]
-            y1 = wave[p, k]
-            y2 = wave[p + 1, k] if p + 1 < n_phases else wave[0, k + 1]
-            y3 = wave[p + 2, k] if p + 2 < n_phases else wave[p + 2 - n_phases, k + 1]
-            # regula falsi on the cubic through four phases
-            a, fa, b, fb = 0.0, types.float64(y1), 1.0, types.float64(y2)
-            u = 0.5
-            for _ in range(4):
-                u = a - fa * (b - a) / (fb - fa)
-                f = (
-                    -u * (u - 1) * (u - 2) / 6 * y0
-                    + (u + 1) * (u - 1) * (u - 2) / 2 * y1
-                    - (u + 1) * u * (u - 2) / 2 * y2
-                    + (u + 1) * u * (u - 1) / 6 * y3
-                )
-                if (f > 0.0) == (fa > 0.0):
-                    a, fa = u, f
-                else:
-                    b, fb = u, f
-                if fb == fa:
-                    break
-            total += (p + u) / n_phases
-        time = 0.5 * total
+        time = _crossing(wave, k, low, n_phases)
+        if high != low:
+            time = 0.5 * (time + _crossing(wave, k, high, n_phases))
         bins[min(max(int(time * n_bins), 0), n_bins - 1)] += 1
         group = 0
         for offset in around:
@@ -214,3 +218,14 @@ def add_gram(a, b, first, last, earliest, n_lags, same, gram):
                 gram[j + step, i + step] += value
             lag_i, lag_j = earliest + i + step, earliest + j + step
             value += a[first - 1 - lag_i] * b[first - 1 - lag_j] - a[last - 1 - lag_i] * b[last - 1 - lag_j]
+
+
+@njit(types.void(_F32, _I8, types.float64[:, ::1]), nogil=True, cache=True)
+def add_levels(values, classes, sums):
+    """Count, sum and sum of squares of ``values`` by class into ``sums[class]``."""
+    for k in range(values.size):
+        row = sums[types.uint64(classes[k])]
+        value = types.float64(values[k])
+        row[0] += 1.0
+        row[1] += value
+        row[2] += value * value

@@ -46,12 +46,12 @@ _FAST = {"contract", "nsz", "reassoc", "arcp"}
 @njit(types.float32(_F32, types.float64, _TABLE), nogil=True, cache=True, fastmath=_FAST, inline="always")
 def _at(samples, instant, table):
     i = int(instant)
-    row = int((instant - i) * 512.0 + 0.5)
-    w = table[row]
-    x = samples[i - 3 : i + 5]
+    # unsigned: an index that may be negative costs a test each
+    row = types.uint64((instant - i) * 512.0 + 0.5)
+    first = types.uint64(i - 3)
     total = types.float32(0.0)
-    for m in range(8):
-        total += w[m] * x[m]
+    for m in range(types.uint64(8)):
+        total += table[row, m] * samples[first + m]
     return total
 
 
