@@ -270,7 +270,7 @@ def placement(link: Link, band: Band, *, is_complex: bool) -> tuple[float, float
         return 0.0, None
     if link.scheme.kind == "frequency":
         centre = band.centre if carrier is None else carrier
-        return centre, min(band.half * 1.15 + 0.1 / link.samples_per_symbol, 0.45)
+        return centre, min(band.half * 1.2 + 0.35 / link.samples_per_symbol, 0.45)
     if is_complex:
         return carrier or 0.0, None
     return band.centre if carrier is None else carrier, None

@@ -138,8 +138,10 @@ def receive_filter(pulse: Pulse, sps: float) -> NDArray[np.float64] | NDArray[np
         return np.asarray(inside / sps)
     number = pulse.number or 0.0
     if pulse.family == "gauss":
-        half = math.ceil(sps * (0.5 + 0.75 / number))
-        taps = gaussian_rectangle(np.arange(-half, half + 1) / sps, number)
+        # the Gaussian part alone: matching the rectangle too would leave a GMSK eye closed
+        half = math.ceil(sps * 0.75 / number)
+        t = np.arange(-half, half + 1) / sps
+        taps = np.exp(-2.0 * (np.pi * number * t) ** 2 / math.log(2.0))
         return np.asarray(taps / taps.sum())
     span = rrc_half_span(number)
     half = math.ceil(span * sps)
