@@ -147,7 +147,7 @@ def identify(samples: Samples, sample_rate_hz: float, wanted: Wanted) -> Identif
                 continue
             if best is None or outcome.plausibility_db > best.plausibility_db:
                 best = outcome
-        if best is not None and best.plausibility_db > 3.0:
+        if best is not None and best.plausibility_db > 15.0:
             break
     if best is None:
         return NotFound(reason)
