@@ -13,7 +13,8 @@ from monitor.sources import Source
 class Interrupt:
     """Ctrl-C asks for the end, and what was measured is still told; a second one ends at once.
 
-    A context of the main thread (elsewhere it does nothing); the handler before it is put back.
+    A context of the main thread (elsewhere it does nothing); the handler before it is put back. Where Ctrl-C is ignored, as in a job
+    that a shell runs in the background, it stays so.
     """
 
     def __init__(self) -> None:
@@ -23,7 +24,8 @@ class Interrupt:
         self._before: Any = None
 
     def __enter__(self) -> Self:
-        if threading.current_thread() is threading.main_thread():
+        in_main = threading.current_thread() is threading.main_thread()
+        if in_main and signal.getsignal(signal.SIGINT) is not signal.SIG_IGN:
             self._before = signal.signal(signal.SIGINT, self._ask)
             self._in_force = True
         return self
