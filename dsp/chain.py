@@ -29,7 +29,7 @@ class ChainOptions:
     """How to measure.
 
     ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT. ``window`` is
-    the symbols of a reading, ``every`` draws each n-th trace into the raster.
+    the symbols of a reading, ``every`` draws each n-th trace into the raster. ``keep_total`` False: windows only, for streams without end.
     """
 
     detector: Detector | None = None
@@ -38,6 +38,7 @@ class ChainOptions:
     window: int = 25_000
     every: int = 1
     target_ber: float = 1e-6
+    keep_total: bool = True
 
 
 @dataclass(frozen=True, slots=True)
@@ -157,6 +158,11 @@ class Chain:
     def total(self) -> EyeSums | None:
         """Sums of all symbols, after `finish`; None if there was never a lock."""
         return self._total
+
+    @property
+    def position(self) -> int:
+        """Index in the stream of the next sample to be worked on."""
+        return self._position
 
     @property
     def locked(self) -> bool:
@@ -287,7 +293,8 @@ class Chain:
         if not self._guard.holds(track):
             self._lose("the levels are no longer told from noise")
             return
-        self._release(self._guard.window)
+        # what waits for its proof must not make a slow link's picture old
+        self._release(min(self._guard.window, max(round(0.2 * self.link.symbol_rate_hz), 32)))
 
     def _release(self, held: int) -> None:
         """Hand on what has proved good: all but the last ``held`` symbols."""
@@ -331,7 +338,8 @@ class Chain:
     def _window_full(self, sums: EyeSums) -> None:
         if self._on_window is not None:
             self._on_window(sums)
-        self._merge(sums)
+        if self.options.keep_total:
+            self._merge(sums)
 
     def _merge(self, sums: EyeSums) -> None:
         if self._total is None:
