@@ -46,6 +46,7 @@ class RailFilter:
             branches.append(np.ascontiguousarray(padded[::-1], dtype=np.float32))
         self._branches = branches
         self._rest: Rails = tuple(np.zeros(length - 1, np.float32) for _ in range(rails))
+        self._ahead = 0  # samples still to come that no output needs: decimation by more than the taps reach over
         self.delay = (taps.size - 1) / 2 / interpolate  # in input samples
         self._identity = taps.size == 1 and decimate == interpolate == 1
 
@@ -56,6 +57,10 @@ class RailFilter:
             return rails if tap == 1.0 else tuple(rail * tap for rail in rails)
         results, rests = [], []
         span = self._branches[0].size
+        skip = min(self._ahead, rails[0].size)
+        if skip:
+            rails = tuple(rail[skip:] for rail in rails)
+        ahead = self._ahead - skip
         for rest, rail in zip(self._rest, rails, strict=True):
             samples = np.concatenate((rest, rail))
             ready = samples.size - span + 1
@@ -64,6 +69,7 @@ class RailFilter:
                 out = np.empty(count, np.float32)
                 kernel.fir_decimate(samples, self._branches[0], self._decimate, out)
                 used = count * self._decimate
+                ahead = max(ahead, used - samples.size)
             else:
                 used = max(ready, 0)
                 parts = []
@@ -75,6 +81,7 @@ class RailFilter:
             results.append(out)
             rests.append(samples[used:].copy())
         self._rest = tuple(rests)
+        self._ahead = ahead
         return tuple(results)
 
 

@@ -18,7 +18,7 @@ BEFORE = 3  # samples used ahead of the one at or before the wanted instant
 def weights(band: float) -> NDArray[np.float32]:
     """Least-squares fractional-delay weights for signals up to ``band`` cycles a sample (0 < band < 0.5).
 
-    Minimises the mean squared error of ``exp(j w t)`` over the band, fraction by fraction; below -60 dB for ``band`` up to 0.3.
+    Minimises the mean squared error of ``exp(j w t)`` over the band, fraction by fraction; below -60 dB for ``band`` up to 0.27.
     Source: T. I. Laakso et al., Splitting the unit delay, IEEE Signal Processing Magazine 13(1), 1996, sec. on
     general least squares (from memory).
     """
