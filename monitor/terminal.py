@@ -51,9 +51,11 @@ class ProgressBar:
         """So many samples are done."""
         if self._bar is None:
             return
+        self._bar.update(self._task, description="measuring", completed=samples)
         speed = self._bar.tasks[0].speed
-        words = f"{speed / 1e6:.2f} Msample/s" if speed else ""
-        self._bar.update(self._task, description="measuring", completed=samples, speed=words)
+        if speed:
+            words = f"{speed / 1e6:.2f} Msample/s" if speed >= 1e5 else f"{speed / 1e3:.2f} ksample/s"
+            self._bar.update(self._task, speed=words)
 
 
 class SlowStartNotice:

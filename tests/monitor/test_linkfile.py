@@ -68,7 +68,7 @@ def test_alarm_rules_are_counted(tmp_path):
     ("text", "says"),
     [
         ("[link", "not TOML"),
-        (b"[link]\nname = \"\xff\"", "not TOML"),
+        (b'[link]\nname = "\xff"', "not TOML"),
         ("a = " + "[" * 5000, "not TOML"),
         ("x" * (1 << 20) + "x", "more than 1048576 bytes"),
         ("symbol_rate_hz = 9600", "'symbol_rate_hz' has no meaning here"),
@@ -158,7 +158,9 @@ def test_numpy_files_of_something_else_are_refused(tmp_path, values):
 def test_a_numpy_file_that_claims_more_than_memory_is_refused(tmp_path):
     np.save(tmp_path / "taps.npy", np.ones(3))
     content = (tmp_path / "taps.npy").read_bytes()
-    (tmp_path / "taps.npy").write_bytes(content.replace(b"(3,)", b"(9" + b"9" * 14 + b",)").replace(b" " * 15 + b"\n", b"\n"))
+    (tmp_path / "taps.npy").write_bytes(
+        content.replace(b"(3,)", b"(9" + b"9" * 14 + b",)").replace(b" " * 15 + b"\n", b"\n")
+    )
     with pytest.raises(InputError, match="no taps there"):
         read_pulse(f"taps:{tmp_path / 'taps.npy'}")
 
