@@ -134,6 +134,8 @@ class Chain:
             self.samples_lost += block.lost
             self._break("samples lost")
             self._position = block.start
+        elif not self.samples:
+            self._position = block.start
         self.samples += block.samples.size
         self.clipped += block.clipped
         self.nonfinite += block.nonfinite

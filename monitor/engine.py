@@ -1,0 +1,525 @@
+"""The deterministic heart of a watch: blocks in, journal lines and a live state out. No threads and no clock but the stream's."""
+
+import math
+from collections import deque
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.special import stdtrit
+
+from dsp.acquisition import NotFound
+from dsp.block import Block
+from dsp.chain import Chain, ChainOptions
+from dsp.errors import DspError
+from dsp.eye import EyeSums
+from dsp.figures import Figures, window_opening
+from dsp.identify import Identified, Wanted
+from dsp.picture import EyeImage
+from dsp.reading import Reading
+from monitor.alarms import AlarmBoard, AlarmRule
+from monitor.document import reading_document
+from monitor.errors import InputError
+from monitor.session import settle_link
+from monitor.snapshot import Snapshot
+from monitor.state import AlarmLine, Change, HistoryPoint, LiveState, Mark, Verdict
+
+BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
+PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
+JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
+LOOK_SECONDS = 1.0  # between two tries to identify a link
+HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20
+HISTORY = 4096
+
+Line = Callable[[str, int, float, Mapping[str, Any]], None]
+
+
+@dataclass(frozen=True, slots=True)
+class EngineOptions:
+    """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``."""
+
+    window: int | None = None
+    every_s: float = 1.0
+    stall_s: float = 2.0
+    rules: tuple[AlarmRule, ...] = ()
+    chain: ChainOptions = field(default_factory=ChainOptions)
+    display: bool = True
+
+
+@dataclass(slots=True)
+class _Opening:
+    """The opening of the window and how far it may be off, from the scatter of its blocks."""
+
+    value: float
+    error: float
+    blocks: int
+
+    def interval(self) -> tuple[float, float]:
+        reach = float(stdtrit(max(self.blocks - 1, 1), 0.975)) * self.error
+        return self.value - reach, self.value + reach
+
+
+class Engine:
+    """Watches one link in one stream.
+
+    `feed` takes blocks, `idle` says that none came for a while. ``line`` receives every journal line: kind, sample, seconds, fields.
+    The same blocks give the same lines, live or replayed.
+    """
+
+    def __init__(
+        self,
+        wanted: Wanted,
+        *,
+        sample_rate_hz: float,
+        complex_in: bool,
+        options: EngineOptions,
+        line: Line,
+        source_text: str = "",
+        on_alarm: Callable[[Mapping[str, Any]], None] | None = None,
+    ) -> None:
+        self._wanted = wanted
+        self._complex = complex_in
+        self.sample_rate_hz = sample_rate_hz
+        self._options = options
+        self._line = line
+        self._on_alarm = on_alarm
+        self._source_text = source_text
+        self.alarms = AlarmBoard(options.rules)
+        self._chain: Chain | None = None
+        self._identified: Identified | None = None
+        self._head: list[Block] = []
+        self._head_samples = 0
+        self._next_look = 0
+        self._searching = "waiting for samples"
+        self._events_told = 0
+        self._samples = 0
+        self.samples_lost = 0
+        self._gaps: deque[float] = deque(maxlen=256)
+        self._locks: deque[tuple[float, bool]] = deque(maxlen=256)
+        self._marks: deque[Mark] = deque(maxlen=64)
+        self._mark_opening: _Opening | None = None
+        self._notices: deque[str] = deque(maxlen=4)
+        self._history = _History()
+        self._best: Reading | None = None
+        self._best_at = 0.0
+        self.persistence_s: float | None = 2.0
+        self._stalled = False
+        self._last_lock_loss: float | None = None
+        self._reset_measures()
+
+    def _reset_measures(self) -> None:
+        self._blocks: deque[EyeSums] = deque(maxlen=BLOCKS)
+        self._openings: deque[float | None] = deque(maxlen=BLOCKS)
+        self._block: EyeSums | None = None
+        self._reading: Reading | None = None
+        self._opening: _Opening | None = None
+        self._curve: NDArray[np.float64] | None = None
+        self._base_image: EyeImage | None = None
+        self._density: NDArray[np.float32] | None = None
+        self._traces = 0.0
+        self._next_judge = 0.0
+        self._next_line = 0.0
+
+    # -- the stream ----------------------------------------------------------------------------------------------------
+
+    @property
+    def seconds(self) -> float:
+        """Length of the stream so far, lost samples included."""
+        return (self._samples + self.samples_lost) / self.sample_rate_hz
+
+    @property
+    def _position(self) -> int:
+        return self._samples + self.samples_lost
+
+    def feed(self, block: Block) -> None:
+        """Take the next block. Raises InputError where link and samples do not fit."""
+        if self._stalled:
+            self._stalled = False
+            self._tell_alarms(self.alarms.condition("no samples", False, self.seconds, self._position, None))
+        if block.lost:
+            self.samples_lost += block.lost
+            self._gaps.append(self.seconds)
+            self._emit("gap", samples_lost=block.lost, why="samples lost")
+            self._tell_alarms(self.alarms.condition("samples lost", True, self.seconds, self._position, block.lost))
+        # the engine's own count is the journal's: it goes on when a sender starts from 0 again
+        block = replace(block, start=self._position)
+        self._samples += block.samples.size
+        try:
+            if self._chain is None:
+                self._look(block)
+            else:
+                self._push(block)
+        except DspError as error:
+            raise InputError(str(error)) from None
+        if block.clipped:
+            share = 100.0 * block.clipped / max(block.samples.size, 1)
+            self._tell_alarms(self.alarms.condition("clipping", share > 0.01, self.seconds, self._position, share))
+        else:
+            self._tell_alarms(self.alarms.condition("clipping", False, self.seconds, self._position, 0.0))
+        if not block.lost:
+            self._tell_alarms(self.alarms.condition("samples lost", False, self.seconds, self._position, 0))
+
+    def idle(self, for_s: float) -> None:
+        """No samples have come for ``for_s`` seconds of the wall clock."""
+        if for_s >= self._options.stall_s and not self._stalled:
+            self._stalled = True
+            self.notice(f"no samples for {for_s:.0f} s")
+            self._tell_alarms(self.alarms.condition("no samples", True, self.seconds + for_s, self._position, for_s))
+
+    def finish(self) -> None:
+        """The stream has ended."""
+        if self._chain is None and self._head_samples:
+            self._try_head(last=True)
+        if self._chain is not None:
+            self._chain.finish()
+            self._tell_locks()
+
+    def changed(self, *, sample_rate_hz: float | None = None, complex_in: bool | None = None, why: str) -> None:
+        """The sender restarted or changed what it sends: begin anew with the link as given."""
+        if self._chain is not None:
+            self._chain.finish()
+            self._tell_locks()
+        position = self._position
+        if sample_rate_hz is not None and sample_rate_hz != self.sample_rate_hz:
+            # seconds go on from where they were
+            position = round(self.seconds * sample_rate_hz)
+            self.sample_rate_hz = sample_rate_hz
+        if complex_in is not None:
+            self._complex = complex_in
+        self._samples, self.samples_lost = position, 0
+        self._chain = None
+        self._head, self._head_samples = [], 0
+        self._next_look = 0
+        self._reset_measures()
+        self.notice(why)
+        self._emit("gap", samples_lost=0, why=why)
+
+    # -- finding the link ----------------------------------------------------------------------------------------------
+
+    def _look(self, block: Block) -> None:
+        self._head.append(block)
+        self._head_samples += block.samples.size
+        rate = self._wanted.symbol_rate_hz
+        need = min(HEAD_SECONDS * self.sample_rate_hz, HEAD_SAMPLES)
+        if self._wanted.scheme is not None and rate is not None and self._wanted.pulse is not None:
+            # only the place of the band is to be found, if that
+            need = min(need, 0.1 * self.sample_rate_hz)
+        elif rate is not None:
+            need = min(need, 4000 * self.sample_rate_hz / rate)
+        if self._head_samples >= max(need, self._next_look):
+            self._try_head()
+
+    def _try_head(self, *, last: bool = False) -> None:
+        found = settle_link(self._head, self.sample_rate_hz, self._wanted)
+        if isinstance(found, NotFound):
+            self._searching = found.reason
+            if last:
+                return
+            # keep what the next look needs, and look again when as much new has come
+            keep = int(min(HEAD_SECONDS * self.sample_rate_hz, HEAD_SAMPLES))
+            while self._head and self._head_samples - self._head[0].samples.size >= keep:
+                self._head_samples -= self._head.pop(0).samples.size
+            self._next_look = self._head_samples + int(LOOK_SECONDS * self.sample_rate_hz)
+            self._next_look = min(self._next_look, keep + int(LOOK_SECONDS * self.sample_rate_hz))
+            return
+        self._identified = found
+        link = found.link
+        window = self._options.window or int(min(max(2.0 * link.symbol_rate_hz, 2000), 200_000))
+        self._block_symbols = max(window // BLOCKS, 64)
+        part = max(min(round(PART_SECONDS * link.symbol_rate_hz), self._block_symbols), 32)
+        # whole parts to a block
+        part = max(self._block_symbols // max(round(self._block_symbols / part), 1), 32)
+        self._chain = Chain(
+            link,
+            complex_in=self._complex,
+            centre_hz=found.centre_hz,
+            half_band_hz=found.half_band_hz,
+            options=replace(self._options.chain, window=part, keep_total=False),
+            on_window=self._part,
+        )
+        self._events_told = 0
+        self._searching = f"{link.scheme.name} at {link.symbol_rate_hz:.6g} Bd"
+        head, self._head, self._head_samples = self._head, [], 0
+        for block in head:
+            self._push(block)
+
+    def _push(self, block: Block) -> None:
+        assert self._chain is not None
+        self._chain.push(block)
+        self._tell_locks()
+        lost = self._last_lock_loss
+        if lost is not None and self._identified is not None and self._identified.found and self.seconds - lost > 5.0:
+            # what was found by itself may have changed: look at it anew
+            self._chain.finish()
+            self._tell_locks()
+            self._chain, self._last_lock_loss = None, None
+            self._next_look = 0
+            self._reset_measures()
+
+    def _tell_locks(self) -> None:
+        assert self._chain is not None
+        for event in self._chain.events[self._events_told :]:
+            gained = event.state == "gained"
+            at = event.sample / self.sample_rate_hz
+            self._locks.append((at, gained))
+            self._last_lock_loss = None if gained else at
+            self._emit("lock", sample=event.sample, state=event.state, why=event.reason)
+            if event.reason != "end of stream":
+                self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
+            if not gained:
+                self._reading, self._opening = None, None
+                self._blocks.clear()
+                self._openings.clear()
+                self._block = None
+        self._events_told = len(self._chain.events)
+        if not self._chain.locked:
+            self._searching = f"{self._chain.link.scheme.name}: {self._chain.last_reason}"
+
+    # -- measuring -----------------------------------------------------------------------------------------------------
+
+    def _part(self, sums: EyeSums) -> None:
+        assert self._chain is not None
+        seconds = self._chain.position / self.sample_rate_hz
+        if self._options.display:
+            self._draw(sums)
+        if self._block is None:
+            self._block = sums
+        else:
+            self._block.merge(sums)
+        if self._block.symbols >= self._block_symbols:
+            self._blocks.append(self._block)
+            self._openings.append(window_opening(self._block, self._chain.context()))
+            self._block = None
+        if seconds >= self._next_judge and (self._blocks or self._block is not None):
+            self._next_judge = seconds + JUDGE_SECONDS
+            self._judge(seconds)
+
+    def _merged(self) -> EyeSums:
+        assert self._chain is not None
+        total: EyeSums | None = None
+        for sums in (*self._blocks, *((self._block,) if self._block is not None else ())):
+            if total is None:
+                total = EyeSums(sums.scheme, sums.phases)
+            total.merge(sums)
+        assert total is not None
+        return total
+
+    def _judge(self, seconds: float) -> None:
+        assert self._chain is not None
+        figures = Figures(self._merged(), self._chain.context())
+        reading = figures.reading()
+        self._base_image = figures.image()
+        opening = None
+        values = [value for value in self._openings if value is not None]
+        if reading.opening_pct is not None and len(values) >= 3:
+            error = float(np.std(values, ddof=1)) / math.sqrt(len(values))
+            opening = _Opening(reading.opening_pct, error, len(values))
+            low, high = opening.interval()
+            reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
+        self._reading, self._opening = reading, opening
+        self._history.add(seconds, reading.opening_pct)
+        if reading.opening_pct is not None and (
+            self._best is None or reading.opening_pct > (self._best.opening_pct or -math.inf)
+        ):
+            self._best, self._best_at = reading, seconds
+        sample = self._chain.position
+        document = reading_document(reading) or {}
+        self._tell_alarms(self.alarms.update(document, seconds, sample))
+        if seconds >= self._next_line:
+            self._next_line = seconds + self._options.every_s
+            self._emit("reading", sample=sample, **document)
+
+    def _draw(self, sums: EyeSums) -> None:
+        """Fold a part into the picture; what is older fades by the persistence."""
+        density = sums.histogram().sum(axis=1).astype(np.float32)
+        if self._density is None or self._density.shape != density.shape or self.persistence_s == 0:
+            self._density, self._traces = density, float(sums.drawn)
+            return
+        if self.persistence_s is not None:
+            assert self._chain is not None
+            age = sums.symbols / self._chain.link.symbol_rate_hz
+            fade = math.exp(-age / self.persistence_s)
+            self._density *= np.float32(fade)
+            self._traces *= fade
+        self._density += density
+        self._traces += sums.drawn
+
+    # -- the user ------------------------------------------------------------------------------------------------------
+
+    def mark(self, name: str = "") -> None:
+        """Note the present reading; changes are told against it from now on."""
+        reading = self._reading
+        self._marks.append(
+            Mark(
+                self.seconds,
+                name,
+                reading.opening_pct if reading else None,
+                reading.opening_low_pct if reading else None,
+                reading.opening_high_pct if reading else None,
+            )
+        )
+        self._mark_opening = self._opening
+        # what follows is measured on its own, not mixed with what was before the mark
+        self._blocks.clear()
+        self._openings.clear()
+        self._block = None
+        self._emit("mark", name=name, opening_pct=reading.opening_pct if reading else None)
+
+    def name_mark(self, name: str) -> None:
+        """Give the last mark a name."""
+        if self._marks:
+            self._marks[-1] = replace(self._marks[-1], name=name)
+            self._emit("mark", name=name, opening_pct=self._marks[-1].opening_pct)
+
+    def clear(self) -> None:
+        """Empty the picture and the window."""
+        self._density = None
+        self._blocks.clear()
+        self._openings.clear()
+        self._block = None
+
+    def acknowledge(self) -> None:
+        """Acknowledge every alarm."""
+        self._tell_alarms(self.alarms.acknowledge(None, self.seconds, self._position))
+
+    def shelve(self, seconds: float) -> None:
+        """Shelve the foremost alarm for a time."""
+        self._tell_alarms(self.alarms.shelve(None, seconds, self.seconds, self._position))
+
+    def notice(self, text: str) -> None:
+        """Something the user should see; the newest few stay on the view."""
+        self._notices.append(f"{_clock(self.seconds)} {text}")
+
+    # -- what is shown -------------------------------------------------------------------------------------------------
+
+    def state(self, *, notices: Iterable[str] = (), journal_text: str = "", ended: bool = False) -> LiveState:
+        """Everything a view shows, as it is now."""
+        chain = self._chain
+        locked = chain is not None and chain.locked
+        link_text = ""
+        if chain is not None:
+            link = chain.link
+            name = f"{link.name}: " if link.name else ""
+            link_text = f"{name}{link.scheme.name} at {link.symbol_rate_hz:.6g} Bd, pulse {link.pulse}"
+        snapshot = Snapshot(
+            image=self._image() if locked else None,
+            reading=self._reading if locked else None,
+            source_text=self._source_text,
+            link_text=link_text,
+            lock_text="locked" if locked else f"no lock: {self._searching}",
+            notes=(),
+            seconds=self.seconds,
+            coverage_pct=100.0 / self._options.chain.every,
+        )
+        position = chain.position if chain is not None else 0
+        return LiveState(
+            snapshot=snapshot,
+            seconds=self.seconds,
+            locked=locked,
+            searching="" if locked else self._searching,
+            history=self._history.points(),
+            marks=tuple(self._marks),
+            gaps_s=tuple(self._gaps),
+            locks=tuple(self._locks),
+            alarms=tuple(
+                AlarmLine(a.name, a.severity, a.state, a.since_s, a.text) for a in self.alarms.snapshot() if a.shown
+            ),
+            change=self._change(),
+            best=self._best,
+            best_at_s=self._best_at if self._best is not None else None,
+            samples_lost=self.samples_lost,
+            behind_s=max((self._position - position) / self.sample_rate_hz, 0.0) if chain is not None else 0.0,
+            notices=(*self._notices, *notices),
+            journal_text=journal_text,
+            ended=ended,
+            rails=("I", "Q") if chain is not None and chain.link.scheme.rails == 2 else ("",),
+        )
+
+    def _image(self) -> EyeImage | None:
+        base = self._base_image
+        if base is None or self._density is None or self._density.shape != base.density.shape:
+            return base
+        # a level's traces are counted whole or, faded, in tenths: the painter wants integers
+        return replace(base, density=np.rint(self._density * 4.0).astype(np.uint32), traces=round(self._traces))
+
+    def _change(self) -> Change | None:
+        before, now = self._mark_opening, self._opening
+        if before is None or now is None or not self._marks:
+            return None
+        points = now.value - before.value
+        variance = now.error**2 + before.error**2
+        # Welch and Satterthwaite's degrees of freedom
+        freedom = variance**2 / max(
+            now.error**4 / max(now.blocks - 1, 1) + before.error**4 / max(before.blocks - 1, 1), 1e-300
+        )
+        reach = float(stdtrit(max(freedom, 1.0), 0.975)) * math.sqrt(variance)
+        verdict: Verdict = "no significant change"
+        if points - reach > 0:
+            verdict = "better"
+        elif points + reach < 0:
+            verdict = "worse"
+        return Change(points, points - reach, points + reach, verdict)
+
+    # -- lines ---------------------------------------------------------------------------------------------------------
+
+    def _emit(self, kind: str, *, sample: int | None = None, **fields: Any) -> None:
+        at = self._position if sample is None else sample
+        self._line(kind, at, at / self.sample_rate_hz, fields)
+
+    def _tell_alarms(self, events: Iterable[Any]) -> None:
+        for event in events:
+            fields = event.fields()
+            self._line("alarm", event.sample, event.seconds, fields)
+            if self._on_alarm is not None:
+                self._on_alarm(fields)
+
+
+class _History:
+    """The opening over the whole stream in a bounded number of points: neighbours join when there are too many."""
+
+    def __init__(self) -> None:
+        self._points: list[HistoryPoint] = []
+        self._per_point = 1
+        self._open: list[tuple[float, float | None]] = []
+
+    def add(self, seconds: float, opening: float | None) -> None:
+        self._open.append((seconds, opening))
+        if len(self._open) >= self._per_point:
+            self._points.append(_join(self._open))
+            self._open = []
+        if len(self._points) >= HISTORY:
+            pairs = zip(self._points[::2], self._points[1::2], strict=False)
+            self._points = [_join_points(a, b) for a, b in pairs]
+            self._per_point *= 2
+
+    def points(self) -> tuple[HistoryPoint, ...]:
+        return (*self._points, *((_join(self._open),) if self._open else ()))
+
+
+def _join(values: list[tuple[float, float | None]]) -> HistoryPoint:
+    known = [value for _, value in values if value is not None]
+    if not known:
+        return HistoryPoint(values[-1][0], None, None, None)
+    return HistoryPoint(values[-1][0], sum(known) / len(known), min(known), max(known))
+
+
+def _join_points(a: HistoryPoint, b: HistoryPoint) -> HistoryPoint:
+    if a.opening_pct is None or b.opening_pct is None:
+        whole = a if b.opening_pct is None else b
+        return replace(whole, seconds=b.seconds)
+    return HistoryPoint(
+        b.seconds,
+        0.5 * (a.opening_pct + b.opening_pct),
+        min(v for v in (a.least_pct, b.least_pct) if v is not None),
+        max(v for v in (a.most_pct, b.most_pct) if v is not None),
+    )
+
+
+def _clock(seconds: float) -> str:
+    minutes, rest = divmod(int(seconds), 60)
+    hours, minutes = divmod(minutes, 60)
+    return f"{hours}:{minutes:02d}:{rest:02d}" if hours else f"{minutes}:{rest:02d}"
+
+
