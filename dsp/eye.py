@@ -45,7 +45,7 @@ class Rows:
 
 def rows_for(scheme: Scheme) -> Rows:
     """1024 rows over the levels and what overshoots them."""
-    reach = 2.5 * max(scheme.rail_levels) if scheme.levels == 2 else 1.6 * max(scheme.rail_levels) + 0.4
+    reach = (2.5 if scheme.levels == 2 else 2.0) * max(scheme.rail_levels)
     return Rows(1024, 512.0 / reach, 512.0)
 
 
