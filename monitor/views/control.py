@@ -1,0 +1,167 @@
+"""What a person can do while watching: the actions, their keys and words, for every view; no Qt here.
+
+What is wanted often lies on keys that a gloved thumb finds without looking: the long bars and the corners of the keyboard.
+Nothing that cannot be taken back lies on a single key.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal, Protocol
+
+from monitor.state import LiveState
+
+
+class Watched(Protocol):
+    """The engine's side of a view. Every call returns at once and may come from any thread."""
+
+    def state(self) -> LiveState:
+        """The newest state."""
+        ...
+
+    def mark(self, name: str = "") -> None:
+        """Note the present reading, before something is turned."""
+        ...
+
+    def name_mark(self, name: str) -> None:
+        """Give the last mark a name."""
+        ...
+
+    def clear(self) -> None:
+        """Begin the eye anew: what persists of older traces is dropped."""
+        ...
+
+    def acknowledge(self) -> None:
+        """All alarms shown have been seen."""
+        ...
+
+    def shelve(self, seconds: float) -> None:
+        """Keep the foremost alarm quiet for so long."""
+        ...
+
+    def set_persistence(self, seconds: float | None) -> None:
+        """How long traces stay: 0 for the newest only, None for ever."""
+        ...
+
+    def stop(self) -> None:
+        """End the watch; may be called twice."""
+        ...
+
+
+ActionName = Literal[
+    "mark",
+    "name",
+    "acknowledge",
+    "shelve",
+    "hold",
+    "clear",
+    "rail",
+    "longer",
+    "shorter",
+    "newest",
+    "save",
+    "larger",
+    "smaller",
+    "theme",
+    "tone",
+    "help",
+    "close",
+]
+MenuName = Literal["Measure", "Alarm", "View", "Watch"]
+
+
+@dataclass(frozen=True, slots=True)
+class Action:
+    """One thing to do.
+
+    Attributes
+    ----------
+    keys
+        The first is the one to show. A printable key is itself, in capitals, and counts with or without Shift; the others are
+        Space, Enter, Backspace, Tab, Escape, Up, Down, F1 and Ctrl+ with a letter.
+    words
+        For the menu, short.
+    what
+        For the help: one phrase that says what comes of it.
+    window_only
+        Means nothing in a terminal.
+    """
+
+    name: ActionName
+    keys: tuple[str, ...]
+    words: str
+    what: str
+    menu: MenuName
+    window_only: bool = False
+
+
+ACTIONS: tuple[Action, ...] = (
+    Action(
+        "mark",
+        ("Space",),
+        "Mark now",
+        "store the present reading; the change since shows what your hand did",
+        "Measure",
+    ),
+    Action("name", ("N",), "Name the mark…", "write down what was turned at the last mark", "Measure"),
+    Action(
+        "hold",
+        ("Escape", "H"),
+        "Hold the picture",
+        "stand still, and move on again; nothing is lost meanwhile",
+        "Measure",
+    ),
+    Action("clear", ("Backspace",), "Clear the eye", "drop the older traces and begin the eye anew", "Measure"),
+    Action("acknowledge", ("Enter",), "Acknowledge alarms", "all alarms shown have been seen", "Alarm"),
+    Action("shelve", ("Z",), "Shelve alarm for 10 minutes", "keep the foremost alarm quiet for 10 minutes", "Alarm"),
+    Action("rail", ("Tab",), "Next rail", "both rails, I alone, Q alone", "View"),
+    Action("longer", ("Up",), "Traces stay longer", "older traces fade more slowly, at last never", "View"),
+    Action("shorter", ("Down",), "Traces stay shorter", "older traces fade faster, at last at once", "View"),
+    Action("newest", ("0",), "Newest traces only", "no persistence: each picture shows its own traces alone", "View"),
+    Action("larger", ("+", "="), "Larger text", "for reading from further away", "View", window_only=True),
+    Action("smaller", ("-",), "Smaller text", "more room for the eye", "View", window_only=True),
+    Action("theme", ("L",), "Light or dark", "for daylight or for the night", "View", window_only=True),
+    Action("save", ("S",), "Save picture", "write what is shown as a PNG file into the folder of the watch", "Watch"),
+    Action("tone", ("T",), "Tone", "a tone that rises as the eye opens", "Watch"),
+    Action("help", ("F1", "?"), "Keys", "show or hide this list", "Watch"),
+    Action("close", ("Ctrl+Q",), "End the watch", "close the view; the journal gets its last line", "Watch"),
+)
+MENUS: tuple[MenuName, ...] = ("Measure", "Alarm", "View", "Watch")
+
+SHELVE_SECONDS = 600.0
+PERSISTENCE_STEPS: tuple[float | None, ...] = (0.0, 0.5, 1.0, 2.0, 5.0, 10.0, 30.0, None)
+DEFAULT_PERSISTENCE: float | None = 2.0
+
+
+def action_for(key: str) -> Action | None:
+    """The action on a key, or None; a letter counts in either case."""
+    wanted = key.upper() if len(key) == 1 else key
+    return next((action for action in ACTIONS if wanted in action.keys), None)
+
+
+def step_persistence(seconds: float | None, *, longer: bool) -> float | None:
+    """The next longer or shorter persistence; at either end it stays. None is endless."""
+    order = [float("inf") if step is None else step for step in PERSISTENCE_STEPS]
+    now = float("inf") if seconds is None else seconds
+    beyond = [step for step in order if (step > now if longer else step < now)]
+    if not beyond:
+        return seconds
+    step = beyond[0] if longer else beyond[-1]
+    return None if step == float("inf") else step
+
+
+def persistence_words(seconds: float | None) -> str:
+    """How long traces stay, in words."""
+    if seconds is None:
+        return "traces stay"
+    if seconds == 0:
+        return "newest traces only"
+    return f"traces fade in {seconds:g} s"
+
+
+def next_rail(shown: int | None, rails: Sequence[str]) -> int | None:
+    """From all rails (None) to the first alone, the second alone, and round again; None where there is but one."""
+    if len(rails) < 2:
+        return None
+    if shown is None:
+        return 0
+    return shown + 1 if shown + 1 < len(rails) else None
