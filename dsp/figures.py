@@ -337,7 +337,9 @@ class Figures:
         """Of one rail by its neighbours and the other rail, in the wave's unit squared."""
         taps = model.taps[rail].copy()
         taps[rail, _CURSOR] = 0.0
-        error = float(model.residual[rail]) / max(self._sums.symbols, 1) * taps.size  # what noise alone puts into the taps
+        error = (
+            float(model.residual[rail]) / max(self._sums.symbols, 1) * taps.size
+        )  # what noise alone puts into the taps
         return max(float(np.sum(taps**2)) * self._rail_energy() - error, 0.0)
 
     def _rail_energy(self) -> float:
@@ -565,7 +567,11 @@ def _width(curve: NDArray[np.float64], best: float) -> tuple[float, float] | Non
     while right < curve.size - 1 and curve[right + 1] > 0 and right - start < COLUMNS:
         right += 1
     first = left - curve[left] / (curve[left] - curve[left - 1]) if left > 0 and curve[left - 1] <= 0 else float(left)
-    last = right + curve[right] / (curve[right] - curve[right + 1]) if right + 1 < curve.size and curve[right + 1] <= 0 else float(right)
+    last = (
+        right + curve[right] / (curve[right] - curve[right + 1])
+        if right + 1 < curve.size and curve[right + 1] <= 0
+        else float(right)
+    )
     if last - first > COLUMNS:
         middle = 0.5 * (first + last)
         first, last = middle - COLUMNS / 2, middle + COLUMNS / 2
@@ -583,9 +589,7 @@ def _fall(curve: NDArray[np.float64], best: float, level: float, step: int) -> f
     return None
 
 
-def _slopes(
-    curve: NDArray[np.float64], best: float, opening: float
-) -> tuple[float | None, tuple[float, float] | None]:
+def _slopes(curve: NDArray[np.float64], best: float, opening: float) -> tuple[float | None, tuple[float, float] | None]:
     """Timing slope (the steeper mean rate down to half the opening) and tolerance (noise margin 1 dB down)."""
     if opening <= 0:
         return None, None

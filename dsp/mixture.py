@@ -17,7 +17,9 @@ class Mixture:
     sigma: float
 
 
-def fit_mixture(values: NDArray[np.float64], counts: NDArray[np.float64], nominal: NDArray[np.float64], first: Mixture) -> Mixture:
+def fit_mixture(
+    values: NDArray[np.float64], counts: NDArray[np.float64], nominal: NDArray[np.float64], first: Mixture
+) -> Mixture:
     """Maximum-likelihood mixture for a histogram (``values`` of the bins, their ``counts``), by expectation-maximisation.
 
     Knows nothing of decisions, so it is not biased by wrong ones. Source: A. P. Dempster, N. M. Laird, D. B. Rubin, J. R.

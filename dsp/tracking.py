@@ -128,11 +128,12 @@ def decision_shape(scheme: Scheme) -> float:
 class Tracker:
     """Runs the loops over filtered rails as they come; how they are cut into blocks decides only the latency.
 
-    Level means follow the signal with a time constant of ``2 / LEVEL_STEP`` symbols and more; one level unit is fitted to
-    them at each push.
+    Level means follow the signal with a time constant of ``2 / LEVEL_STEP`` symbols and more, and decide. One level unit is
+    fitted at each push to their average over ``UNIT_SYMBOLS``: ISI makes the means themselves wander, and would spread the levels.
     """
 
     LEVEL_STEP = 1.0 / 1024.0
+    UNIT_FIRST, UNIT_SYMBOLS = 512, 32768
 
     def __init__(
         self,
@@ -172,6 +173,8 @@ class Tracker:
         self._means[: start.means.shape[0], : scheme.levels] = start.means
         if start.means.shape[0] == 1:
             self._means[1] = self._means[0]
+        self._slow = self._means.copy()
+        self._seen = self.UNIT_FIRST
         self._template = np.zeros(kernel.TEMPLATE, np.float32) if start.template is None else start.template
         self._state = np.zeros(kernel.N_STATE)
         self._state[kernel.INSTANT] = start.instant
@@ -202,6 +205,8 @@ class Tracker:
             instants, phases, decided, slopes, values, classes,
         )  # fmt: skip
         self._past = tuple(array[:, n : n + HISTORY].copy() for array in outputs)
+        self._seen += n
+        self._slow += (self._means - self._slow) * min(n / min(self._seen, self.UNIT_SYMBOLS), 1.0)
         track = Track(
             np.append(instants[:n], self._state[kernel.INSTANT]),
             np.append(phases[:n], self._state[kernel.PHASE]),
@@ -240,7 +245,7 @@ class Tracker:
         return self._means[: self._scheme.rails, : self._scheme.levels].copy()
 
     def _units(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        gain, zero = level_units(self._means[:, : self._scheme.levels], np.asarray(self._scheme.rail_levels))
+        gain, zero = level_units(self._slow[:, : self._scheme.levels], np.asarray(self._scheme.rail_levels))
         if self._complex and self._scheme.rails == 1:
             # the idle rail has no levels of its own
             gain[1], zero[1] = gain[0], 0.0
