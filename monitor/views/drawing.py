@@ -98,7 +98,7 @@ def _draw_header(canvas: Canvas, page: Page, snapshot: Snapshot) -> None:
 
     seen = []
     if snapshot.seconds is not None:
-        seen.append(_duration(snapshot.seconds))
+        seen.append(duration(snapshot.seconds))
     if snapshot.reading is not None:
         seen.append(f"{plain(snapshot.reading.symbols, 0)} symbols")
     if snapshot.coverage_pct is not None and snapshot.image is not None:
@@ -110,7 +110,8 @@ def _draw_header(canvas: Canvas, page: Page, snapshot: Snapshot) -> None:
     canvas.fill(Box(box.x, rule, box.width, max(1, canvas.px(1))), theme.grid)
 
 
-def _duration(seconds: float) -> str:
+def duration(seconds: float) -> str:
+    """A length of time in words."""
     if seconds < 120:
         return f"{plain(seconds, 1)} s"
     minutes, rest = divmod(round(seconds), 60)
@@ -123,16 +124,17 @@ def _draw_eye(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | No
     for rail, places in enumerate(page.rails):
         _draw_rail(canvas, places, image, rail, low, high)
         if places.levels.width > 0 and places.levels.height > 0:
-            _draw_levels(canvas, places, image, rail, low, high, reading)
-    _draw_curve(canvas, page, image, reading)
+            draw_levels(canvas, places, image, rail, low, high, reading)
+    draw_curve(canvas, page, image)
 
 
-def _x_of(box: Box, ui: float) -> float:
+def x_of(box: Box, ui: float) -> float:
     """Pixel of a time; the axis runs from the box's left to its right edge."""
     return box.x + box.width * (ui - pixels.TIME_MIN_UI) / (pixels.TIME_MAX_UI - pixels.TIME_MIN_UI)
 
 
-def _y_of(box: Box, value: float, low: float, high: float) -> float:
+def y_of(box: Box, value: float, low: float, high: float) -> float:
+    """Pixel of a value on an upright axis from ``low`` at the box's foot to ``high`` at its head."""
     return box.y + box.height * (high - value) / (high - low)
 
 
@@ -146,22 +148,37 @@ def _blit(canvas: Canvas, box: Box, indices: NDArray[np.uint8], theme: Theme) ->
 
 
 def _draw_rail(canvas: Canvas, places: RailBoxes, image: EyeImage, rail: int, low: float, high: float) -> None:
+    draw_density(canvas, places.eye, image, rail, low, high)
+    draw_eye_frame(canvas, places, image, rail, low, high)
+
+
+def draw_density(canvas: Canvas, eye: Box, image: EyeImage, rail: int, low: float, high: float) -> None:
+    """The traces of one rail, and the best instant across them; the amplitude axis runs from ``low`` to ``high``."""
+    theme = canvas.theme
+    if eye.width > 0 and eye.height > 0:
+        _blit(canvas, eye, pixels.density_indices(image, rail, low, high, eye.width, eye.height, RAMP_STEPS), theme)
+    if image.best_ui is not None:
+        x = x_of(eye, image.best_ui)
+        if eye.x <= x <= eye.right:
+            canvas.line(x, eye.y, x, eye.bottom, theme.accent, 1.6, dashed=True)
+
+
+def draw_eye_frame(canvas: Canvas, places: RailBoxes, image: EyeImage, rail: int, low: float, high: float) -> None:
+    """Caption, frame and ticks round the traces of one rail."""
     theme, eye = canvas.theme, places.eye
     name = image.rails[rail]
     title = f"{name} rail" if name else "Eye"
     caption = Box(eye.x, places.caption.y, eye.width, places.caption.height - canvas.px(4))
     canvas.write(title, caption, _TEXT, theme.ink, bold=True)
-    if eye.width > 0 and eye.height > 0:
-        _blit(canvas, eye, pixels.density_indices(image, rail, low, high, eye.width, eye.height, RAMP_STEPS), theme)
     canvas.frame(eye, theme.edge)
     tick = canvas.px(5)
     for ui in _TIME_TICKS:
-        x = _x_of(eye, ui)
+        x = x_of(eye, ui)
         canvas.line(x, eye.bottom, x, eye.bottom + tick, theme.edge)
     text_height = canvas.px(16)
     last = math.inf
     for level in image.levels:
-        y = _y_of(eye, float(level), low, high)
+        y = y_of(eye, float(level), low, high)
         canvas.line(eye.x - tick, y, eye.x, y, theme.edge)
         if last - y >= text_height:
             label = Box(places.gutter.x, round(y - text_height / 2), places.gutter.width - canvas.px(9), text_height)
@@ -169,10 +186,6 @@ def _draw_rail(canvas: Canvas, places: RailBoxes, image: EyeImage, rail: int, lo
             last = y
     side = replace(places.gutter, width=canvas.px(18))
     canvas.write_upwards("level units", side, _SMALL, theme.dim)
-    if image.best_ui is not None:
-        x = _x_of(eye, image.best_ui)
-        if eye.x <= x <= eye.right:
-            canvas.line(x, eye.y, x, eye.bottom, theme.accent, 1.6, dashed=True)
 
 
 def _level_name(level: float) -> str:
@@ -180,9 +193,10 @@ def _level_name(level: float) -> str:
     return signed(level, digits)
 
 
-def _draw_levels(
+def draw_levels(
     canvas: Canvas, places: RailBoxes, image: EyeImage, rail: int, low: float, high: float, reading: Reading | None
 ) -> None:
+    """How each level's traces are spread at the best instant, with each eye's opening."""
     theme, box = canvas.theme, places.levels
     caption = replace(places.levels_caption, height=places.levels_caption.height - canvas.px(4))
     eyes = () if reading is None else reading.eyes
@@ -197,7 +211,7 @@ def _draw_levels(
     column = widest + canvas.px(14) if own else 0
     reach = box.width - column - canvas.px(8)
     for level in image.levels:
-        y = _y_of(box, float(level), low, high)
+        y = y_of(box, float(level), low, high)
         canvas.line(box.x, y, box.right - column, y, theme.grid)
     profiles = pixels.level_profiles(image, rail, low, high, box.height)
     pitch = box.height / profiles.shape[1]
@@ -219,7 +233,7 @@ def _draw_levels(
     for eye in own:
         if eye.threshold is None or not low < eye.threshold < high:
             continue
-        y = _y_of(box, eye.threshold, low, high)
+        y = y_of(box, eye.threshold, low, high)
         worst = eye.opening_pct is not None and eye.opening_pct == least
         colour = theme.accent if worst else theme.edge
         canvas.line(box.x, y, box.right - column, y, colour, 1.4 if worst else 1.0, dashed=True)
@@ -232,7 +246,8 @@ def _draw_levels(
         last_y = y
 
 
-def _draw_curve(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | None) -> None:
+def draw_curve(canvas: Canvas, page: Page, image: EyeImage) -> None:
+    """The opening against the instant of decision, its axis and the key; nothing where the page has no such areas."""
     theme, box = canvas.theme, page.curve
     caption, gutter, axis, key = page.curve_caption, page.curve_gutter, page.time_axis, page.key
     if box is None or caption is None or gutter is None or axis is None or key is None:
@@ -248,17 +263,17 @@ def _draw_curve(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | 
     first = math.ceil(floor / step)
     for tick in range(first, int(top // step) + 1):
         value = tick * step
-        y = _y_of(box, value, floor, top)
+        y = y_of(box, value, floor, top)
         canvas.line(box.x, y, box.right, y, theme.edge if value == 0 else theme.grid)
         canvas.line(box.x - canvas.px(5), y, box.x, y, theme.edge)
         label = Box(gutter.x, round(y - text_height / 2), gutter.width - canvas.px(9), text_height)
         canvas.write(f"{plain(value, 0)} %", label, _SMALL, theme.dim, align="right")
     for ui in _TIME_TICKS:
-        x = _x_of(box, ui)
+        x = x_of(box, ui)
         canvas.line(x, box.y, x, box.bottom, theme.grid)
 
     canvas.clip(box)
-    zero = _y_of(box, 0.0, floor, top)
+    zero = y_of(box, 0.0, floor, top)
     share = (image.column_ui - pixels.TIME_MIN_UI) / (pixels.TIME_MAX_UI - pixels.TIME_MIN_UI)
     xs = box.x + box.width * share
     ys = box.y + box.height * (top - image.opening_pct) / (top - floor)
@@ -274,21 +289,21 @@ def _draw_curve(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | 
     canvas.frame(box, theme.edge)
     span = pixels.open_span(image.column_ui, image.opening_pct, image.best_ui)
     if span is not None:
-        left, right = _x_of(box, span.start_ui), _x_of(box, span.stop_ui)
+        left, right = x_of(box, span.start_ui), x_of(box, span.stop_ui)
         reach = canvas.px(4)
         canvas.line(left, zero, right, zero, theme.ink, 2.0)
         canvas.line(left, zero - reach, left, zero + reach, theme.ink, 2.0)
         canvas.line(right, zero - reach, right, zero + reach, theme.ink, 2.0)
-    if image.best_ui is not None and box.x <= _x_of(box, image.best_ui) <= box.right:
-        x = _x_of(box, image.best_ui)
+    if image.best_ui is not None and box.x <= x_of(box, image.best_ui) <= box.right:
+        x = x_of(box, image.best_ui)
         canvas.line(x, box.y, x, box.bottom, theme.accent, 1.6, dashed=True)
         opening = pixels.value_at(image.column_ui, image.opening_pct, image.best_ui)
         if opening is not None:
-            y = min(max(_y_of(box, opening, floor, top), box.y), box.bottom)
+            y = min(max(y_of(box, opening, floor, top), box.y), box.bottom)
             canvas.dot(x, y, 4.0, theme.accent, theme.panel)
 
     for ui in _TIME_TICKS:
-        x = _x_of(box, ui)
+        x = x_of(box, ui)
         canvas.line(x, box.bottom, x, box.bottom + canvas.px(5), theme.edge)
         label = Box(round(x) - canvas.px(30), box.bottom + canvas.px(6), canvas.px(60), text_height)
         canvas.write(signed(ui, 0 if ui == round(ui) else 1), label, _SMALL, theme.dim, align="centre")
@@ -378,12 +393,12 @@ def _draw_side(canvas: Canvas, box: Box, reading: Reading) -> None:
     y = _draw_opening(canvas, box, reading)
     gap = canvas.px(16)
     if reading.verdict:
-        y = _draw_verdict(canvas, Box(box.x, y, box.width, box.bottom - y), reading.verdict) + gap
+        y = draw_verdict(canvas, Box(box.x, y, box.width, box.bottom - y), reading.verdict) + gap
     if reading.budget is not None and budget_rows(reading.budget):
-        y = _draw_budget(canvas, Box(box.x, y, box.width, box.bottom - y), budget_rows(reading.budget)) + gap
+        y = draw_budget(canvas, Box(box.x, y, box.width, box.bottom - y), budget_rows(reading.budget)) + gap
     groups = figure_groups(reading)
     if groups:
-        _draw_table(canvas, Box(box.x, y, box.width, box.bottom - y), groups)
+        draw_table(canvas, Box(box.x, y, box.width, box.bottom - y), groups)
 
 
 def _draw_opening(canvas: Canvas, box: Box, reading: Reading) -> int:
@@ -423,7 +438,8 @@ def _draw_opening(canvas: Canvas, box: Box, reading: Reading) -> int:
     return bar.bottom + canvas.px(20)
 
 
-def _draw_verdict(canvas: Canvas, box: Box, verdict: str) -> int:
+def draw_verdict(canvas: Canvas, box: Box, verdict: str) -> int:
+    """The verdict beside a bar; returns where it ends."""
     theme = canvas.theme
     indent, line = canvas.px(14), canvas.px(21)
     lines = canvas.wrap(verdict, box.width - indent, 14.5, 3)
@@ -433,7 +449,7 @@ def _draw_verdict(canvas: Canvas, box: Box, verdict: str) -> int:
     return box.y + line * len(lines)
 
 
-def _draw_budget(canvas: Canvas, box: Box, rows: Sequence[tuple[str, float]]) -> int:
+def draw_budget(canvas: Canvas, box: Box, rows: Sequence[tuple[str, float]]) -> int:
     """What each cause takes from the opening, largest first, down two columns of bars; returns where it ends."""
     theme = canvas.theme
     title = Box(box.x, box.y, box.width, canvas.px(22))
@@ -533,7 +549,8 @@ def _all_short_enough(canvas: Canvas, groups: Sequence[Group], width: int, size:
     )
 
 
-def _draw_table(canvas: Canvas, box: Box, groups: Sequence[Group]) -> None:
+def draw_table(canvas: Canvas, box: Box, groups: Sequence[Group]) -> None:
+    """Every known figure, as large as the box bears."""
     theme = canvas.theme
     table = _fit_table(canvas, box.width, box.height, groups)
     gap = canvas.px(24)

@@ -252,14 +252,14 @@ def test_figures_without_room_are_counted(snapshots):
     from PySide6.QtGui import QImage, QPainter
 
     from monitor.views.canvas import Canvas
-    from monitor.views.drawing import _draw_table
+    from monitor.views.drawing import draw_table
     from monitor.views.wording import figure_groups
 
     groups = figure_groups(snapshot.reading)
     image = QImage(440, 120, QImage.Format.Format_RGB32)
     painter = QPainter(image)
     canvas = Canvas(painter, find_theme("light"), 1.0)
-    _draw_table(canvas, Box(0, 0, 440, 120), groups)
+    draw_table(canvas, Box(0, 0, 440, 120), groups)
     painter.end()
     told = next(text.shown for text in canvas.texts if "more figures" in text.shown)
     values = {figure.value for group in groups for figure in group.figures}
