@@ -29,6 +29,9 @@ CHANCE = 1e-8  # of taking noise for a clock line, an attempt
 RATE_SPAN = 2e-3  # the symbol rate is looked for this far to either side, as a fraction
 _SCAN = 32  # instants a symbol that are tried
 
+_LINE_SHARE = 0.08  # of a noise-free carrier's line that must be left
+_PATTERN = 0.6  # share of a sequence's energy in a short pattern from which on it is no data
+
 # MER in dB that decisions on Gaussian noise reach by themselves: the distortion of the best quantiser of so many levels.
 # Source: J. Max, Quantizing for minimum distortion, IRE Trans. Inf. Theory 6(1), 1960, table I (2, 3, 4, 8 levels).
 _NOISE_MER_DB = {2: 4.40, 3: 7.21, 4: 9.30, 8: 14.62}
@@ -172,6 +175,22 @@ def noise_like_mer_db(scheme: Scheme) -> float:
     return 4.4 if scheme.name == "8psk" else _NOISE_MER_DB[scheme.levels]
 
 
+def _pattern_share(symbols: NDArray[np.complex128]) -> float:
+    """How much of a symbol sequence is a short pattern: its eight strongest lines' share, or its likeness to itself a few symbols on."""
+    n = symbols.size
+    spectrum = np.abs(np.fft.fft(symbols * np.hanning(n))) ** 2
+    total = float(spectrum.sum())
+    share = 0.0
+    for _ in range(8):
+        peak = int(np.argmax(spectrum))
+        around = np.arange(peak - 2, peak + 3) % n
+        share += float(spectrum[around].sum())
+        spectrum[around] = 0.0
+    energy = float(np.sum(np.abs(symbols) ** 2))
+    alike = max(abs(complex(symbols[lag:] @ np.conj(symbols[:-lag]))) for lag in range(2, min(64, n // 4))) / energy
+    return max(share / total, alike)
+
+
 def plausibility_db(fit: Fit, scheme: Scheme) -> float:
     """How far decisions stand out once their neighbours' share is taken out of the values, less what speaks against the scheme.
 
@@ -202,8 +221,18 @@ def plausibility_db(fit: Fit, scheme: Scheme) -> float:
     return snr - noise_like_mer_db(scheme) - 40.0 * max(dependence - 0.1, 0.0) - 60.0 * max(0.75 - evenness, 0.0)
 
 
-def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0) -> tuple[float, float, float]:
-    """Carrier of symbol values ``(n,)`` from the line of their ``order``-th power: turn (cycles a symbol), phase (cycles), chance.
+@dataclass(frozen=True, slots=True)
+class CarrierLine:
+    """The line of a symbol sequence's power: ``turn`` (cycles a symbol), ``phase`` (cycles), its share of the energy, chance of noise."""
+
+    turn: float
+    phase: float
+    share: float
+    chance: float
+
+
+def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0) -> CarrierLine:
+    """Carrier of symbol values ``(n,)`` from the line of their ``order``-th power.
 
     The phase is that of the constellation whose points to the power are negative real (order above 2) or positive (order 2).
     Source: A. J. and A. M. Viterbi, IEEE Trans. Inf. Theory 29(4), 1983, with the fourth power itself as its nonlinearity.
@@ -227,7 +256,18 @@ def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0
     line = np.sum(raised * np.exp(-2j * np.pi * frequency * np.arange(k)))
     reference = 0.0 if order == 2 else math.pi
     phase = (float(np.angle(line)) - reference) / (2 * math.pi * order)
-    return frequency / order, phase, chance
+    share = abs(complex(line)) ** 2 / (k * max(float(np.sum(np.abs(raised) ** 2)), 1e-300))
+    return CarrierLine(frequency / order, phase, share, chance)
+
+
+def line_share(scheme: Scheme) -> float:
+    """The `power_line` share that a noise-free carrier of this scheme has."""
+    if scheme.stagger:
+        return 0.08  # of the squared pairs, measured at roll-off 0.35
+    points = scheme.points()
+    scaled = points / math.sqrt(scheme.symbol_energy())
+    raised = np.exp(1j * scheme.symmetry * np.angle(scaled)) * np.minimum(np.abs(scaled), 2.0) ** 2
+    return abs(complex(np.mean(raised))) ** 2 / float(np.mean(np.abs(raised) ** 2))
 
 
 def acquire(
@@ -279,10 +319,10 @@ class _Search:
         if self._scheme.kind == "carrier":
             for _ in range(2):
                 instants = self._instants(filtered[0].size, line.crest, sps, skip)
-                turn, _, chance = self._carrier(filtered, instants)
-                carrier += turn / self._front.rail_sps
+                found = self._carrier(filtered, instants)
+                carrier += found.turn / self._front.rail_sps
                 filtered = self._filter(rails, carrier)
-            if chance > 1e-4:
+            if found.chance > 1e-4 or found.share < _LINE_SHARE * line_share(self._scheme):
                 return NotFound("a clock line, but no carrier that the scheme would have")
             line = replace(self._clock(rails, filtered), frequency=line.frequency)
         instants = self._instants(filtered[0].size, line.crest, sps, skip)
@@ -290,7 +330,8 @@ class _Search:
             return NotFound("too few symbols")
         turn, phase = (0.0, 0.0)
         if self._scheme.kind == "carrier":
-            turn, phase, _ = self._carrier(filtered, instants)
+            line_found = self._carrier(filtered, instants)
+            turn, phase = line_found.turn, line_found.phase
         phases = phase + turn * np.arange(instants.size, dtype=np.float64)
         best, fit = self._scan(filtered, instants, phases, sps)
         instants = instants + best * sps
@@ -407,15 +448,16 @@ class _Search:
         real, imag = (interpolate(rail, instants, weights).astype(np.float64) for rail in filtered)
         return real + 1j * imag
 
-    def _carrier(self, filtered: Rails, instants: NDArray[np.float64]) -> tuple[float, float, float]:
+    def _carrier(self, filtered: Rails, instants: NDArray[np.float64]) -> CarrierLine:
         z = self._complex(filtered, instants)
         if self._scheme.stagger:
             sps = float(np.mean(np.diff(instants)))
             late = self._complex(filtered, instants + self._scheme.stagger * sps)
-            # upright: I at its instant minus Q's square at its own leaves 2 exp(j 2 theta)
+            # upright: I at its instant minus Q's square at its own leaves a part along exp(j 2 theta)
             pairs = z * z - late * late
-            turn, phase, chance = power_line(pairs, 2)
-            return turn / 2, phase / 2, chance
+            line = power_line(pairs, 2)
+            # their square is negative on the mean: the rails' products outweigh the squares' difference
+            return replace(line, turn=line.turn / 2, phase=line.phase / 2 + 0.125)
         return power_line(z * np.exp(-2j * np.pi * self._rotation(z.size)), self._scheme.symmetry)
 
     def _scan(
@@ -444,8 +486,8 @@ class _Search:
         if not energy > 0.0:
             return "all symbols are the same"
         z = decided[0] + (1j * decided[1] if decided.shape[0] == 2 else 0.0)
-        lines = np.abs(np.fft.fft(z)) ** 2 / z.size
-        if float(lines.max()) > 0.4 * energy:
+        pattern = _pattern_share(z)
+        if pattern > _PATTERN:
             return "a bare tone, or a pattern that repeats, not data"
         if decided.shape[0] == 2:
             alike = abs(float(np.sum(decided[0] * decided[1]))) / max(
@@ -460,7 +502,8 @@ class _Search:
         alternate = decided[:, 1:] * decided[:, :-1] * (-1.0) ** np.arange(z.size - 1)
         if abs(float(np.sum(alternate))) > 0.3 * energy:
             return "each symbol comes twice: the symbol rate is a multiple of the link's"
-        if fit.mer_db < noise_like_mer_db(self._scheme) + 0.8 and chance > 1e-14:
+        floor = noise_like_mer_db(self._scheme)
+        if fit.mer_db < floor + 0.8 and (chance > 1e-14 or plausibility_db(fit, self._scheme) < 3.0):
             return "a clock line, but the levels are not told from noise"
         return None
 
@@ -472,8 +515,8 @@ class _Search:
         n = np.arange(instants.size)
         if self._scheme.stagger:
             # the rails' decisions belong to different instants; the M-th power estimate serves as it is
-            turn, phase, _ = self._carrier(filtered, instants)
-            return turn, phase
+            found = self._carrier(filtered, instants)
+            return found.turn, found.phase
         ideal = fit.decided[0] + (1j * fit.decided[1] if fit.decided.shape[0] == 2 else 0.0)
         product = z * np.conj(ideal) * np.exp(-2j * np.pi * (turn * n + self._rotation(n.size)))
         block = max(n.size // 32, 1)
@@ -591,7 +634,13 @@ class _Search:
             turn, phase = (float(v) for v in np.polyfit(k[settle:], turned[settle:], 1))
         line = first + sps * k
         phases = phase + turn * k
-        usable = slice(0, n - 2)
+        if not abs(sps / self._front.sps - 1.0) < 5 * RATE_SPAN:
+            return NotFound("a clock line, but the timing loop does not settle on it")
+        reach = (0.6 + self._sense_ui + self._scheme.stagger) * sps + TAPS
+        inside = np.flatnonzero((line > reach) & (line < filtered[0].size - reach))
+        if inside.size < 64:
+            return NotFound("too few symbols")
+        usable = slice(int(inside[0]), int(inside[-1]) + 1)
         best, fit = self._scan(filtered, line[usable], phases[usable], sps)
         if start.detector in ("derivative", "crossing"):
             line, offset = line + best * sps, 0.0
