@@ -497,7 +497,7 @@ class _Search:
                 return "both rails carry the same: fewer phases than the scheme has"
         for rail in range(fit.classes.shape[0]):
             shares = np.bincount(fit.classes[rail], minlength=self._scheme.levels) / fit.classes.shape[1]
-            if shares.min() < 0.2 / self._scheme.levels:
+            if shares.min() < 0.4 / self._scheme.levels:
                 return "some of the scheme's levels are hardly used"
         alternate = decided[:, 1:] * decided[:, :-1] * (-1.0) ** np.arange(z.size - 1)
         if abs(float(np.sum(alternate))) > 0.3 * energy:
