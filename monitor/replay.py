@@ -114,7 +114,7 @@ def _check_picture(name: str) -> None:
     path = Path(name)
     if path.suffix.lower() != ".png":
         raise InputError(f"--picture {name}: pictures are PNG; give a name that ends in .png")
-    if not path.parent.is_dir():
+    if not os.path.isdir(path.parent):  # false too for a name that cannot be
         raise InputError(f"--picture {name}: there is no folder {path.parent}; make it first")
-    if path.is_dir():
+    if os.path.isdir(path):
         raise InputError(f"--picture {name}: is a folder; give a file's name")
