@@ -642,6 +642,13 @@ class _Search:
             return NotFound("too few symbols")
         usable = slice(int(inside[0]), int(inside[-1]) + 1)
         best, fit = self._scan(filtered, line[usable], phases[usable], sps)
+        first = _first_sound(fit, noise_like_mer_db(self._scheme) + 0.8)
+        if first:
+            # the stretch opens with something else: noise, or the end of silence
+            first += usable.start
+            line, phases = line[first:], phases[first:]
+            usable = slice(0, usable.stop - first)
+            best, fit = self._scan(filtered, line[usable], phases[usable], sps)
         if start.detector in ("derivative", "crossing"):
             line, offset = line + best * sps, 0.0
         else:
@@ -651,7 +658,7 @@ class _Search:
             start,
             instant=float(line[0]),
             sps=sps,
-            phase=phase,
+            phase=float(phases[0]),
             turn=turn,
             means=fit.means,
             detector_slope=slope,
@@ -659,6 +666,19 @@ class _Search:
             template=template,
             sense_ui=self._sense_ui,
         ), fit
+
+
+def _first_sound(fit: Fit, floor_db: float) -> int:
+    """How many symbols at the beginning are no better than noise, while the rest is: a multiple of 64, at most half."""
+    size = 64
+    n = fit.values.shape[1] // size
+    decided = np.take_along_axis(fit.means, fit.classes, axis=1)
+    noise = np.sum((fit.values - decided) ** 2, axis=0)[: n * size].reshape(n, size).sum(axis=1)
+    signal = float(np.sum((decided - decided.mean(axis=1, keepdims=True)) ** 2)) / fit.values.shape[1] * size
+    poor = noise > signal * 10 ** (-floor_db / 10)
+    if poor[n // 2 :].any() or not poor.any():
+        return 0
+    return size * (int(np.flatnonzero(poor)[-1]) + 1)
 
 
 def _power(rails: Rails) -> NDArray[np.float32]:

@@ -18,6 +18,7 @@ from dsp.link import Link
 from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
 FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
+UNHURRIED_BD = 50_000.0  # up to this symbol rate every sample is searched
 WAVE_PHASES, CORNER_PHASES = 8, 64  # points a symbol at which the wave is kept
 
 # Mean lateness of the Gardner loop over BnT by roll-off, middle sample half-way between strobes; measured by tools/bench.py
@@ -206,6 +207,7 @@ class Chain:
         self._kept: list[Rails] = []
         self._kept_samples = 0
         self._next_try = FIRST_TRY
+        self._pause = 0
 
     def _work(self, samples: Samples) -> None:
         rails = self._front.push(samples)
@@ -213,6 +215,8 @@ class Chain:
         self._position += samples.size
         if self._tracker is not None:
             self._track(rails)
+        elif self._pause > 0:
+            self._pause -= rails[0].size
         else:
             self._kept.append(rails)
             self._kept_samples += rails[0].size
@@ -236,9 +240,10 @@ class Chain:
         if last:
             return
         if self._next_try >= LAST_TRY:
-            half = rails[0].size // 2
-            self._kept = [tuple(rail[half:] for rail in rails)]
-            self._kept_samples -= half
+            self._search()
+            # a fast link is looked for in part of its samples only, or the search could not keep up with the stream
+            idle = max(self.link.symbol_rate_hz / UNHURRIED_BD - 1.0, 0.0)
+            self._pause = round(idle * rails[0].size)
         else:
             self._kept = [rails]
             self._next_try *= 2

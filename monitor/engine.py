@@ -3,6 +3,7 @@
 import math
 from collections import deque
 from collections.abc import Callable, Iterable, Mapping
+from concurrent.futures import Executor, Future
 from dataclasses import dataclass, field, replace
 from typing import Any
 
@@ -19,7 +20,8 @@ from dsp.figures import Figures, window_opening
 from dsp.identify import Identified, Wanted
 from dsp.picture import EyeImage
 from dsp.reading import Reading
-from monitor.alarms import AlarmBoard, AlarmRule
+from monitor.alarm_rules import AlarmRule, built_in_alarms
+from monitor.alarms import AlarmBoard, AlarmEvent
 from monitor.document import reading_document
 from monitor.errors import InputError
 from monitor.session import settle_link
@@ -29,6 +31,7 @@ from monitor.state import AlarmLine, Change, HistoryPoint, LiveState, Mark, Verd
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
+LEAST_JUDGED = 1000  # symbols
 LOOK_SECONDS = 1.0  # between two tries to identify a link
 HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20
 HISTORY = 4096
@@ -38,7 +41,10 @@ Line = Callable[[str, int, float, Mapping[str, Any]], None]
 
 @dataclass(frozen=True, slots=True)
 class EngineOptions:
-    """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``."""
+    """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``.
+
+    ``aside`` is where identification runs while a live stream goes on; None: at once, so that a replay repeats itself.
+    """
 
     window: int | None = None
     every_s: float = 1.0
@@ -46,6 +52,7 @@ class EngineOptions:
     rules: tuple[AlarmRule, ...] = ()
     chain: ChainOptions = field(default_factory=ChainOptions)
     display: bool = True
+    aside: Executor | None = None
 
 
 @dataclass(slots=True)
@@ -86,12 +93,13 @@ class Engine:
         self._line = line
         self._on_alarm = on_alarm
         self._source_text = source_text
-        self.alarms = AlarmBoard(options.rules)
+        self.alarms = AlarmBoard(options.rules, built_in_alarms(options.stall_s))
         self._chain: Chain | None = None
         self._identified: Identified | None = None
         self._head: list[Block] = []
         self._head_samples = 0
         self._next_look = 0
+        self._looking: Future[Identified | NotFound] | None = None
         self._searching = "waiting for samples"
         self._events_told = 0
         self._samples = 0
@@ -130,21 +138,22 @@ class Engine:
         return (self._samples + self.samples_lost) / self.sample_rate_hz
 
     @property
-    def _position(self) -> int:
+    def position(self) -> int:
+        """Index in the stream of the next sample to come, lost samples counted."""
         return self._samples + self.samples_lost
 
     def feed(self, block: Block) -> None:
         """Take the next block. Raises InputError where link and samples do not fit."""
         if self._stalled:
             self._stalled = False
-            self._tell_alarms(self.alarms.condition("no samples", False, self.seconds, self._position, None))
+            self._tell_alarms(self.alarms.condition("no samples", False, self.seconds, self.position, None))
         if block.lost:
             self.samples_lost += block.lost
             self._gaps.append(self.seconds)
             self._emit("gap", samples_lost=block.lost, why="samples lost")
-            self._tell_alarms(self.alarms.condition("samples lost", True, self.seconds, self._position, block.lost))
+            self._tell_alarms(self.alarms.condition("samples lost", True, self.seconds, self.position, block.lost))
         # the engine's own count is the journal's: it goes on when a sender starts from 0 again
-        block = replace(block, start=self._position)
+        block = replace(block, start=self.position)
         self._samples += block.samples.size
         try:
             if self._chain is None:
@@ -155,21 +164,24 @@ class Engine:
             raise InputError(str(error)) from None
         if block.clipped:
             share = 100.0 * block.clipped / max(block.samples.size, 1)
-            self._tell_alarms(self.alarms.condition("clipping", share > 0.01, self.seconds, self._position, share))
+            self._tell_alarms(self.alarms.condition("clipping", share > 0.01, self.seconds, self.position, share))
         else:
-            self._tell_alarms(self.alarms.condition("clipping", False, self.seconds, self._position, 0.0))
+            self._tell_alarms(self.alarms.condition("clipping", False, self.seconds, self.position, 0.0))
         if not block.lost:
-            self._tell_alarms(self.alarms.condition("samples lost", False, self.seconds, self._position, 0))
+            self._tell_alarms(self.alarms.condition("samples lost", False, self.seconds, self.position, 0))
 
     def idle(self, for_s: float) -> None:
         """No samples have come for ``for_s`` seconds of the wall clock."""
         if for_s >= self._options.stall_s and not self._stalled:
             self._stalled = True
             self.notice(f"no samples for {for_s:.0f} s")
-            self._tell_alarms(self.alarms.condition("no samples", True, self.seconds + for_s, self._position, for_s))
+            self._tell_alarms(self.alarms.condition("no samples", True, self.seconds + for_s, self.position, for_s))
 
     def finish(self) -> None:
         """The stream has ended."""
+        if self._chain is None and self._looking is not None:
+            found, self._looking = self._looking.result(), None
+            self._settle(found, last=True)
         if self._chain is None and self._head_samples:
             self._try_head(last=True)
         if self._chain is not None:
@@ -181,7 +193,7 @@ class Engine:
         if self._chain is not None:
             self._chain.finish()
             self._tell_locks()
-        position = self._position
+        position = self.position
         if sample_rate_hz is not None and sample_rate_hz != self.sample_rate_hz:
             # seconds go on from where they were
             position = round(self.seconds * sample_rate_hz)
@@ -190,6 +202,7 @@ class Engine:
             self._complex = complex_in
         self._samples, self.samples_lost = position, 0
         self._chain = None
+        self._looking = None
         self._head, self._head_samples = [], 0
         self._next_look = 0
         self._reset_measures()
@@ -208,21 +221,36 @@ class Engine:
             need = min(need, 0.1 * self.sample_rate_hz)
         elif rate is not None:
             need = min(need, 4000 * self.sample_rate_hz / rate)
-        if self._head_samples >= max(need, self._next_look):
-            self._try_head()
+        if self._looking is not None:
+            self._keep_head(0.25)
+            if self._looking.done():
+                found, self._looking = self._looking.result(), None
+                self._settle(found, last=False)
+        elif self._head_samples >= max(need, self._next_look):
+            if self._options.aside is not None:
+                self._searching = "looking at the first samples"
+                self._looking = self._options.aside.submit(
+                    settle_link, list(self._head), self.sample_rate_hz, self._wanted
+                )
+            else:
+                self._try_head()
+
+    def _keep_head(self, seconds: float) -> None:
+        keep = int(min(seconds * self.sample_rate_hz, HEAD_SAMPLES))
+        while self._head and self._head_samples - self._head[0].samples.size >= keep:
+            self._head_samples -= self._head.pop(0).samples.size
 
     def _try_head(self, *, last: bool = False) -> None:
-        found = settle_link(self._head, self.sample_rate_hz, self._wanted)
+        self._settle(settle_link(self._head, self.sample_rate_hz, self._wanted), last=last)
+
+    def _settle(self, found: Identified | NotFound, *, last: bool) -> None:
         if isinstance(found, NotFound):
             self._searching = found.reason
             if last:
                 return
             # keep what the next look needs, and look again when as much new has come
-            keep = int(min(HEAD_SECONDS * self.sample_rate_hz, HEAD_SAMPLES))
-            while self._head and self._head_samples - self._head[0].samples.size >= keep:
-                self._head_samples -= self._head.pop(0).samples.size
+            self._keep_head(HEAD_SECONDS)
             self._next_look = self._head_samples + int(LOOK_SECONDS * self.sample_rate_hz)
-            self._next_look = min(self._next_look, keep + int(LOOK_SECONDS * self.sample_rate_hz))
             return
         self._identified = found
         link = found.link
@@ -292,7 +320,8 @@ class Engine:
             self._blocks.append(self._block)
             self._openings.append(window_opening(self._block, self._chain.context()))
             self._block = None
-        if seconds >= self._next_judge and (self._blocks or self._block is not None):
+        measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
+        if seconds >= self._next_judge and measured >= min(LEAST_JUDGED, self._block_symbols):
             self._next_judge = seconds + JUDGE_SECONDS
             self._judge(seconds)
 
@@ -382,11 +411,11 @@ class Engine:
 
     def acknowledge(self) -> None:
         """Acknowledge every alarm."""
-        self._tell_alarms(self.alarms.acknowledge(None, self.seconds, self._position))
+        self._tell_alarms(self.alarms.acknowledge(None, self.seconds, self.position))
 
     def shelve(self, seconds: float) -> None:
         """Shelve the foremost alarm for a time."""
-        self._tell_alarms(self.alarms.shelve(None, seconds, self.seconds, self._position))
+        self._tell_alarms(self.alarms.shelve(None, seconds, self.seconds, self.position))
 
     def notice(self, text: str) -> None:
         """Something the user should see; the newest few stay on the view."""
@@ -430,7 +459,7 @@ class Engine:
             best=self._best,
             best_at_s=self._best_at if self._best is not None else None,
             samples_lost=self.samples_lost,
-            behind_s=max((self._position - position) / self.sample_rate_hz, 0.0) if chain is not None else 0.0,
+            behind_s=max((self.position - position) / self.sample_rate_hz, 0.0) if chain is not None else 0.0,
             notices=(*self._notices, *notices),
             journal_text=journal_text,
             ended=ended,
@@ -464,11 +493,11 @@ class Engine:
 
     # -- lines ---------------------------------------------------------------------------------------------------------
 
-    def _emit(self, kind: str, *, sample: int | None = None, **fields: Any) -> None:
-        at = self._position if sample is None else sample
+    def _emit(self, kind: str, *, sample: int | None = None, **fields: object) -> None:
+        at = self.position if sample is None else sample
         self._line(kind, at, at / self.sample_rate_hz, fields)
 
-    def _tell_alarms(self, events: Iterable[Any]) -> None:
+    def _tell_alarms(self, events: Iterable[AlarmEvent]) -> None:
         for event in events:
             fields = event.fields()
             self._line("alarm", event.sample, event.seconds, fields)
@@ -521,5 +550,3 @@ def _clock(seconds: float) -> str:
     minutes, rest = divmod(int(seconds), 60)
     hours, minutes = divmod(minutes, 60)
     return f"{hours}:{minutes:02d}:{rest:02d}" if hours else f"{minutes}:{rest:02d}"
-
-
