@@ -327,7 +327,7 @@ class Chain:
         self._tracker = None
         meter = self._meter
         assert meter is not None
-        self._lane.do(meter.end_segment)
+        self._lane.do(lambda: meter.end_segment(keep=self.options.keep_total))
 
     def _break(self, reason: str) -> None:
         """End the run of samples: work on what is there, settle the sums, begin afresh."""

@@ -237,9 +237,11 @@ class EyeMeter:
         if self._pending - 2 * HALO >= self._slab:
             self._settle()
 
-    def end_segment(self) -> None:
-        """The run of symbols breaks off here: sum what has its neighbours, forget the rest."""
+    def end_segment(self, *, keep: bool = True) -> None:
+        """The run of symbols breaks off here: sum what has its neighbours, forget the rest; without ``keep`` the open window too."""
         self._settle()
+        if not keep:
+            self.sums = EyeSums(self._scheme, self._phases)
         self._pending = 0
         self._segment += 1
         self._seen = 0
