@@ -1,6 +1,7 @@
 """A painter that keeps text inside its box and remembers where it put it."""
 
 import math
+import threading
 from dataclasses import dataclass
 from typing import Literal
 
@@ -33,6 +34,18 @@ def qcolour(colour: Colour, alpha: float = 1.0) -> QColor:
     return QColor(colour.red, colour.green, colour.blue, round(255 * alpha))
 
 
+Fonts = dict[tuple[float, bool], tuple[QFont, QFontMetricsF]]
+_local = threading.local()
+
+
+def _fonts_at(scale: float) -> Fonts:
+    """Fonts of the calling thread at a scale; those of the last few scales are kept, so that a moving picture makes none anew."""
+    kept: dict[float, Fonts] = _local.__dict__.setdefault("fonts", {})
+    if scale not in kept and len(kept) >= 4:
+        kept.pop(next(iter(kept)))
+    return kept.setdefault(scale, {})
+
+
 class Canvas:
     """Draws on one QPainter in one theme; ``scale`` turns design units into pixels. Not shared between threads."""
 
@@ -41,7 +54,7 @@ class Canvas:
         self.theme = theme
         self.scale = scale
         self.texts: list[PlacedText] = []
-        self._fonts: dict[tuple[float, bool], tuple[QFont, QFontMetricsF]] = {}
+        self._fonts = _fonts_at(scale)
         painter.setRenderHint(QPainter.RenderHint.Antialiasing)
         painter.setRenderHint(QPainter.RenderHint.TextAntialiasing)
 

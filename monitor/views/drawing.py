@@ -249,8 +249,8 @@ def draw_levels(
 def draw_curve(canvas: Canvas, page: Page, image: EyeImage) -> None:
     """The opening against the instant of decision, its axis and the key; nothing where the page has no such areas."""
     theme, box = canvas.theme, page.curve
-    caption, gutter, axis, key = page.curve_caption, page.curve_gutter, page.time_axis, page.key
-    if box is None or caption is None or gutter is None or axis is None or key is None:
+    caption, gutter, key = page.curve_caption, page.curve_gutter, page.key
+    if box is None or caption is None or gutter is None:
         return
     top = pixels.OPENING_TOP_PCT
     floor = pixels.opening_floor(image.opening_pct)
@@ -302,6 +302,14 @@ def draw_curve(canvas: Canvas, page: Page, image: EyeImage) -> None:
             y = min(max(y_of(box, opening, floor, top), box.y), box.bottom)
             canvas.dot(x, y, 4.0, theme.accent, theme.panel)
 
+    draw_time_axis(canvas, box)
+    if key is not None:
+        _draw_key(canvas, key, image, span)
+
+
+def draw_time_axis(canvas: Canvas, box: Box) -> None:
+    """Ticks, times and the axis' name under a plot."""
+    theme, text_height = canvas.theme, canvas.px(16)
     for ui in _TIME_TICKS:
         x = x_of(box, ui)
         canvas.line(x, box.bottom, x, box.bottom + canvas.px(5), theme.edge)
@@ -309,7 +317,6 @@ def draw_curve(canvas: Canvas, page: Page, image: EyeImage) -> None:
         canvas.write(signed(ui, 0 if ui == round(ui) else 1), label, _SMALL, theme.dim, align="centre")
     name = Box(box.x, box.bottom + canvas.px(23), box.width, canvas.px(17))
     canvas.write("symbol periods (UI) from the decision instant", name, _SMALL, theme.dim, align="centre")
-    _draw_key(canvas, key, image, span)
 
 
 def _draw_key(canvas: Canvas, box: Box, image: EyeImage, span: pixels.Span | None) -> None:

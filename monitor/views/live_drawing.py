@@ -1,0 +1,554 @@
+"""The panels of the live page, each drawn on its own; `monitor.views.live_page` decides which are due."""
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+from dsp.picture import EyeImage
+from dsp.reading import Reading
+from monitor.state import AlarmLine, LiveState
+from monitor.views import pixels
+from monitor.views.canvas import Canvas
+from monitor.views.control import ACTIONS, persistence_words
+from monitor.views.drawing import (
+    draw_budget,
+    draw_curve,
+    draw_density,
+    draw_eye_frame,
+    draw_levels,
+    draw_table,
+    draw_time_axis,
+    draw_verdict,
+    y_of,
+)
+from monitor.views.history import AlarmSpan, history_runs, lost_spans, time_ticks, value_range
+from monitor.views.layout import Box, Page
+from monitor.views.live_layout import LiveBoxes
+from monitor.views.live_wording import (
+    best_words,
+    by_urgency,
+    calls,
+    change_lines,
+    clock,
+    health_words,
+    key_figures,
+    no_eye_lines,
+    span_words,
+)
+from monitor.views.theme import Colour, ThemeName
+from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
+
+_TEXT, _SMALL, _LARGE = 13.0, 12.0, 19.0
+
+
+@dataclass(frozen=True, slots=True)
+class View:
+    """What is to be shown, and how.
+
+    Attributes
+    ----------
+    state
+        The state to draw; while held, the one of that moment.
+    alarms
+        The newest, also while held.
+    spans
+        Alarms that stood earlier or stand now, for the history.
+    held, rail, persistence, tone
+        How things are set; ``rail`` None shows all.
+    span_s
+        How much of the history; None for the whole watch.
+    said
+        The view's own last remark; may be empty.
+    """
+
+    state: LiveState
+    alarms: tuple[AlarmLine, ...] = ()
+    spans: tuple[AlarmSpan, ...] = ()
+    held: bool = False
+    rail: int | None = None
+    persistence: float | None = 2.0
+    tone: bool = False
+    theme: ThemeName = "light"
+    zoom: float = 1.0
+    span_s: float | None = None
+    said: str = ""
+
+
+def shown_rail(image: EyeImage, reading: Reading | None, rail: int | None) -> tuple[EyeImage, Reading | None]:
+    """The image and the reading's eyes of one rail alone, or of all for None."""
+    if rail is None or rail >= len(image.rails) or len(image.rails) == 1:
+        return image, reading
+    only = slice(rail, rail + 1)
+    image = replace(
+        image, rails=image.rails[only], density=image.density[only], distributions=image.distributions[only]
+    )
+    if reading is not None:
+        each = len(image.levels) - 1
+        reading = replace(reading, eyes=reading.eyes[rail * each : (rail + 1) * each])
+    return image, reading
+
+
+def draw_header(canvas: Canvas, box: Box, state: LiveState) -> None:
+    """Source and link; lock, length and losses."""
+    theme, snapshot = canvas.theme, state.snapshot
+    two = box.height >= canvas.px(44)
+    first = replace(box, height=canvas.px(28))
+    lock = "ended" if state.ended else snapshot.lock_text if state.locked else "no lock"
+    health = health_words(state)
+    if not two:
+        lock, health = f"{lock}  ·  {health}", ""
+    taken = min(canvas.text_width(lock, _TEXT), box.width * 3 // 5)
+    canvas.write(lock, replace(first, x=box.right - taken, width=taken), _TEXT, theme.dim, align="right")
+    room = replace(first, width=max(0, box.width - taken - canvas.px(20)))
+    canvas.write(snapshot.source_text, room, 18.0, theme.ink, bold=True, elide="middle")
+    if two:
+        second = Box(box.x, first.bottom, box.width, box.bottom - first.bottom)
+        taken = min(canvas.text_width(health, _TEXT), box.width * 3 // 5)
+        canvas.write(health, replace(second, x=box.right - taken, width=taken), _TEXT, theme.dim, align="right")
+        room = replace(second, width=max(0, box.width - taken - canvas.px(20)))
+        canvas.write(snapshot.link_text, room, _TEXT, theme.dim, elide="middle")
+
+
+def draw_band(canvas: Canvas, box: Box, view: View) -> None:
+    """The alarms, those that call first, and at the right how the view is set."""
+    theme = canvas.theme
+    gap, pad = canvas.px(10), canvas.px(12)
+    right = _draw_settings(canvas, box, view)
+    alarms = by_urgency(view.alarms)
+    if not alarms:
+        canvas.frame(_inside(canvas, replace(box, width=right - box.x)), theme.grid)
+        room = Box(box.x + pad, box.y, max(0, right - box.x - 2 * pad), box.height)
+        canvas.write("No alarms", room, _TEXT, theme.dim)
+        return
+    x = box.x
+    for number, alarm in enumerate(alarms):
+        left = len(alarms) - number
+        more = f"and {left - 1} more" if left > 1 else ""
+        kept = canvas.text_width(more, _TEXT) + gap if more else 0
+        mark = canvas.px(24)
+        words = f"{alarm.text or alarm.name}  ·  {alarm.state} since {clock(alarm.since_s)}"
+        wanted = mark + canvas.text_width(words, _TEXT, bold=calls(alarm)) + 2 * pad
+        left_over = right - x - kept
+        if number and wanted > left_over:
+            canvas.write(f"and {left} more", Box(x, box.y, max(0, right - x), box.height), _TEXT, theme.ink)
+            return
+        chip = Box(x, box.y, max(0, min(wanted, left_over)), box.height)
+        ink = theme.page if calls(alarm) else theme.ink
+        if calls(alarm):
+            canvas.fill(chip, theme.alert)
+        else:
+            canvas.frame(_inside(canvas, chip), theme.alert)
+        _severity_sign(canvas, chip.x + pad + canvas.px(6), chip.y + chip.height / 2, alarm.severity, ink)
+        text = Box(chip.x + pad + mark, chip.y, max(0, chip.width - 2 * pad - mark), chip.height)
+        canvas.write(words, text, _TEXT, ink, bold=calls(alarm))
+        x = chip.right + gap
+
+
+def _inside(canvas: Canvas, box: Box) -> Box:
+    """The box that a frame can be drawn round without leaving this one."""
+    line = max(1, canvas.px(1))
+    return Box(box.x + line, box.y + line, max(0, box.width - 2 * line), max(0, box.height - 2 * line))
+
+
+def _severity_sign(canvas: Canvas, x: float, y: float, severity: str, colour: Colour) -> None:
+    """One bar for low, two for medium, three for high, rising: told apart without colour."""
+    bars = {"low": 1, "medium": 2}.get(severity, 3)
+    width, gap, foot = canvas.px(4), canvas.px(2), round(y) + canvas.px(7)
+    left = round(x) - canvas.px(8)
+    for bar in range(3):
+        height = canvas.px(5 + 5 * bar) if bar < bars else max(1, canvas.px(1))
+        canvas.fill(Box(left + bar * (width + gap), foot - height, width, height), colour)
+
+
+def _draw_settings(canvas: Canvas, box: Box, view: View) -> int:
+    """How the view is set, at the band's right; returns where it starts."""
+    theme = canvas.theme
+    pad = canvas.px(12)
+    parts = [persistence_words(view.persistence)]
+    rails = view.state.rails
+    if len(rails) > 1 and view.rail is not None and view.rail < len(rails):
+        parts.insert(0, f"{rails[view.rail]} alone")
+    if view.tone:
+        parts.append("tone on")
+    words = "  ·  ".join(parts)
+    taken = min(canvas.text_width(words, _TEXT), box.width // 3)
+    x = box.right - taken
+    canvas.write(words, Box(x, box.y, taken, box.height), _TEXT, theme.dim, align="right")
+    x -= canvas.px(16)
+    if view.held:
+        held = f"Held at {clock(view.state.seconds)}"
+        width = canvas.text_width(held, 15.0, bold=True) + 2 * pad
+        chip = Box(x - width, box.y, width, box.height)
+        canvas.fill(chip, theme.ink)
+        canvas.write(held, chip, 15.0, theme.page, align="centre", bold=True)
+        x = chip.x - canvas.px(12)
+    return x
+
+
+def draw_eye_axes(canvas: Canvas, page: Page, image: EyeImage, reading: Reading | None) -> None:
+    """All of the eye but its traces."""
+    low, high = pixels.visible_levels(image)
+    for rail, places in enumerate(page.rails):
+        draw_eye_frame(canvas, places, image, rail, low, high)
+        if places.levels.width > 0 and places.levels.height > 0:
+            draw_levels(canvas, places, image, rail, low, high, reading)
+    if page.curve is not None:
+        draw_curve(canvas, page, image)
+    elif page.rails:
+        draw_time_axis(canvas, page.rails[-1].eye)
+
+
+def draw_traces(canvas: Canvas, eye: Box, image: EyeImage, rail: int) -> None:
+    """The traces of one rail."""
+    low, high = pixels.visible_levels(image)
+    draw_density(canvas, eye, image, rail, low, high)
+
+
+def draw_no_eye(canvas: Canvas, box: Box, state: LiveState) -> None:
+    """In the eye's place: that there is none, and what is tried."""
+    theme = canvas.theme
+    frame = _inside(canvas, box)
+    canvas.fill(frame, theme.panel)
+    canvas.frame(frame, theme.edge)
+    heading, sentence = no_eye_lines(state)
+    inner = Box(box.x + canvas.px(40), box.y, box.width - canvas.px(80), box.height)
+    line = canvas.px(29)
+    lines = canvas.wrap(sentence, inner.width, _LARGE, 4)
+    for note in state.snapshot.notes:
+        lines += canvas.wrap(note, inner.width, _LARGE, 2)
+    size = 40.0
+    while size > 22.0 and canvas.text_width(heading, size, bold=True) > inner.width:
+        size -= 3.0
+    head = canvas.px(62)
+    lines = lines[: max(0, (box.height - head - canvas.px(24)) // max(line, 1))]
+    total = head + line * len(lines)
+    y = box.y + max(canvas.px(10), (box.height - total) * 4 // 10)
+    canvas.fill(Box(box.x + canvas.px(22), y, canvas.px(6), total), theme.accent)
+    canvas.write(heading, Box(inner.x, y, inner.width, head), size, theme.ink, bold=True)
+    for number, text in enumerate(lines):
+        row = Box(inner.x, y + head + number * line, inner.width, line)
+        canvas.write(text, row, _LARGE, theme.ink)
+
+
+def draw_figure(canvas: Canvas, box: Box, state: LiveState) -> None:
+    """The one large figure, the best so far as a target on its bar, and the change since the last mark."""
+    theme, reading = canvas.theme, state.snapshot.reading
+    tall = box.height >= canvas.px(220)
+    title = Box(box.x, box.y, box.width, canvas.px(20))
+    canvas.write("Opening", title, _TEXT, theme.ink, bold=True)
+    interval = interval_text(reading) if reading is not None else None
+    if interval is not None:
+        canvas.write(f"95 % interval {interval}", title, _TEXT, theme.dim, align="right")
+    large = Box(box.x, title.bottom - canvas.px(4), box.width, canvas.px(98 if tall else 74))
+    size = 92.0 if tall else 68.0
+    opening = reading.opening_pct if reading is not None else None
+    if opening is None or not math.isfinite(opening):
+        canvas.write("not known", large, size / 2, theme.dim)
+        opening = None
+    else:
+        figure = canvas.write(plain(opening, 1), large, size, theme.ink)
+        x = figure.right + canvas.px(8)
+        sign = Box(x, large.y + large.height // 3, max(0, box.right - x), large.height // 2)
+        sign_end = canvas.write("%", sign, size / 2.2, theme.dim).right
+        if opening <= 0:
+            rest = replace(large, x=sign_end + canvas.px(16), width=max(0, box.right - sign_end - canvas.px(16)))
+            canvas.write("eye closed", rest, 15.0, theme.ink, bold=True)
+    bar = Box(box.x, large.bottom + canvas.px(2), box.width, canvas.px(12))
+    _draw_opening_bar(canvas, bar, opening, state)
+    y = bar.bottom + canvas.px(2)
+    canvas.write(best_words(state), Box(box.x, y, box.width, canvas.px(20)), _TEXT, theme.dim)
+    y += canvas.px(24)
+    _draw_change(canvas, Box(box.x, y, box.width, max(0, box.bottom - y)), state)
+
+
+def _draw_opening_bar(canvas: Canvas, bar: Box, opening: float | None, state: LiveState) -> None:
+    theme, reading = canvas.theme, state.snapshot.reading
+
+    def at(value: float) -> float:
+        return bar.x + bar.width * min(max(value, 0.0), 100.0) / 100.0
+
+    canvas.fill(bar, theme.track)
+    if opening is not None:
+        canvas.fill(replace(bar, width=round(at(opening)) - bar.x), theme.accent)
+    low = reading.opening_low_pct if reading is not None else None
+    high = reading.opening_high_pct if reading is not None else None
+    if low is not None and high is not None and high > max(low, 0.0) and math.isfinite(high - low):
+        middle = bar.y + bar.height / 2
+        canvas.line(at(low), middle, at(high), middle, theme.ink, 2.0)
+        for end in (at(low), at(high)):
+            canvas.line(end, bar.y + canvas.px(2), end, bar.bottom - canvas.px(2), theme.ink, 2.0)
+    best = state.best.opening_pct if state.best is not None else None
+    if best is not None and best > 0:
+        x, reach = at(best), canvas.px(6)
+        canvas.line(x, bar.y - canvas.px(3), x, bar.bottom, theme.ink, 2.0)
+        canvas.polygon(
+            [(x - reach, bar.y - 2 * reach), (x + reach, bar.y - 2 * reach), (x, bar.y - reach / 3)], theme.ink
+        )
+
+
+def _draw_change(canvas: Canvas, box: Box, state: LiveState) -> None:
+    theme = canvas.theme
+    verdict, points, since = change_lines(state)
+    if not verdict:
+        for number, text in enumerate(canvas.wrap(since, box.width, _TEXT, 2)):
+            canvas.write(text, Box(box.x, box.y + number * canvas.px(19), box.width, canvas.px(19)), _TEXT, theme.dim)
+        return
+    colour = {"better": theme.level_even, "worse": theme.alert}.get(verdict, theme.dim)
+    row = Box(box.x, box.y, box.width, canvas.px(36))
+    middle, reach = row.y + row.height / 2, canvas.px(11)
+    x = row.x + reach
+    if verdict == "better":
+        canvas.polygon([(x - reach, middle + reach), (x + reach, middle + reach), (x, middle - reach)], colour)
+    elif verdict == "worse":
+        canvas.polygon([(x - reach, middle - reach), (x + reach, middle - reach), (x, middle + reach)], colour)
+    else:
+        for shift in (-4, 4):
+            canvas.fill(Box(row.x, round(middle) + canvas.px(shift - 1.5), 2 * reach, canvas.px(3)), colour)
+    room = replace(row, x=row.x + canvas.px(32), width=max(0, row.width - canvas.px(32)))
+    size = 25.0
+    gap = canvas.px(14)
+    while (
+        size > 12.0 and canvas.text_width(verdict, size, bold=True) + gap + canvas.text_width(points, size) > room.width
+    ):
+        size -= 1.0
+    end = canvas.write(verdict, room, size, theme.ink, bold=True).right + gap
+    canvas.write(points, replace(room, x=end, width=max(0, room.right - end)), size, theme.ink)
+    below = Box(box.x, row.bottom, box.width, canvas.px(20))
+    canvas.write(since, below, _SMALL, theme.dim, elide="middle")
+
+
+def draw_detail(canvas: Canvas, box: Box, reading: Reading | None) -> None:
+    """Verdict, budget and the other figures, as far as there is room."""
+    if reading is None:
+        return
+    y, gap = box.y + canvas.px(6), canvas.px(12)
+    if reading.verdict and canvas.px(90) <= box.bottom - y:
+        y = draw_verdict(canvas, Box(box.x, y, box.width, box.bottom - y), reading.verdict) + gap
+    rows = budget_rows(reading.budget) if reading.budget is not None else []
+    needed = canvas.px(22) + canvas.px(29) * ((len(rows) + 1) // 2)
+    if rows and needed <= box.bottom - y:
+        y = draw_budget(canvas, Box(box.x, y, box.width, box.bottom - y), rows) + gap
+    rest = Box(box.x, y, box.width, max(0, box.bottom - y))
+    groups = figure_groups(reading)
+    if groups and rest.height >= canvas.px(300):
+        draw_table(canvas, rest, groups)
+    else:
+        _draw_key_figures(canvas, rest, reading)
+
+
+def _draw_key_figures(canvas: Canvas, box: Box, reading: Reading) -> None:
+    """The most telling figures in two columns, line by line, as many as there is room for."""
+    theme, gap = canvas.theme, canvas.px(24)
+    pitch, width = canvas.px(23), (box.width - gap) // 2
+    figures = key_figures(reading)[: 2 * (box.height // max(pitch, 1))]
+    for number, figure in enumerate(figures):
+        row = Box(box.x + (width + gap) * (number % 2), box.y + pitch * (number // 2), width, pitch)
+        taken = canvas.text_width(figure.value, _TEXT)
+        canvas.write(figure.value, row, _TEXT, theme.ink, align="right")
+        canvas.write(figure.label, replace(row, width=max(0, width - taken - canvas.px(8))), _TEXT, theme.dim)
+        if number < len(figures) - 2:
+            canvas.fill(Box(row.x, row.bottom - 1, width, max(1, canvas.px(1))), theme.grid)
+
+
+def draw_history(canvas: Canvas, boxes: LiveBoxes, view: View) -> None:
+    """The opening over the watch, with marks above it, alarms under it, losses and missing lock on it."""
+    theme, box, plot, state = canvas.theme, boxes.history, boxes.history_plot, view.state
+    now = max(state.seconds, 1e-9)
+    start = 0.0 if view.span_s is None else max(0.0, now - view.span_s)
+    # before the first minute is over, time runs into an empty strip instead of being squeezed anew at every look
+    end = max(now, start + 60.0 if view.span_s is None else start + view.span_s)
+    lost = lost_spans(state.locks, now, locked=state.locked)
+    runs = history_runs(state.history, lost, start, end, plot.width)
+    best = state.best.opening_pct if state.best is not None else None
+    low, high = value_range(runs, best)
+
+    def x_at(seconds: float) -> float:
+        return plot.x + plot.width * (seconds - start) / (end - start)
+
+    canvas.fill(plot, theme.panel)
+    canvas.clip(plot)
+    shown_lost = [(max(a, start), b) for a, b in lost if b > start and x_at(b) - x_at(a) >= 0.5]
+    for a, b in shown_lost:
+        _hatch(canvas, plot, x_at(a), x_at(b))
+    step = pixels.tick_step(high - low, max(1, plot.height // max(canvas.px(19), 1)))
+    values = [step * k for k in range(math.ceil(low / step), math.floor(high / step) + 1)]
+    for value in values:
+        y = y_of(plot, value, low, high)
+        canvas.line(plot.x, y, plot.right, y, theme.edge if value == 0 else theme.grid)
+    for run in runs:
+        xs = (run.x + plot.x).tolist()
+        upper = [y_of(plot, v, low, high) for v in run.most.tolist()]
+        lower = [y_of(plot, v, low, high) for v in run.least.tolist()]
+        mean = [y_of(plot, v, low, high) for v in run.mean.tolist()]
+        if len(xs) == 1:
+            canvas.dot(xs[0], mean[0], 2.0, theme.accent, theme.panel)
+            continue
+        outline = [*zip(xs, upper, strict=True), *zip(xs[::-1], lower[::-1], strict=True)]
+        canvas.polygon(outline, theme.accent, 0.3)
+        canvas.polyline(list(zip(xs, mean, strict=True)), theme.accent, 1.8)
+    if best is not None:
+        y = y_of(plot, best, low, high)
+        canvas.line(plot.x, y, plot.right, y, theme.ink, 1.0, dashed=True)
+    gaps = [at for at in state.gaps_s if start <= at <= end]
+    foot, reach = plot.bottom - canvas.px(2), canvas.px(5)
+    for at in gaps:
+        x = x_at(at)
+        canvas.line(x, plot.y, x, plot.bottom, theme.alert, 1.0)
+        canvas.polygon(
+            [(x - reach, foot - reach), (x, foot - 2 * reach), (x + reach, foot - reach), (x, foot)], theme.alert
+        )
+    for mark in state.marks:
+        if mark.seconds >= start:
+            canvas.line(x_at(mark.seconds), plot.y, x_at(mark.seconds), plot.bottom, theme.ink, 1.4)
+    if view.state.seconds > 0 and end > now:
+        canvas.line(x_at(now), plot.y, x_at(now), plot.bottom, theme.edge, 1.0)
+    canvas.clip(None)
+    canvas.frame(plot, theme.edge)
+    for value in values:
+        y = y_of(plot, value, low, high)
+        if plot.y + canvas.px(3) <= y <= plot.bottom - canvas.px(3):
+            label = Box(box.x, round(y) - canvas.px(8), plot.x - box.x - canvas.px(8), canvas.px(16))
+            canvas.write(f"{plain(value, 0)} %", label, _SMALL, theme.dim, align="right")
+    spans = [span for span in view.spans if span.end_s >= start]
+    lane = Box(plot.x, plot.bottom + canvas.px(2), plot.width, canvas.px(7))
+    for span in spans:
+        left = max(round(x_at(span.start_s)), lane.x)
+        right = min(round(x_at(span.end_s)), lane.right)
+        height = {"low": canvas.px(3), "medium": canvas.px(5)}.get(span.severity, lane.height)
+        canvas.fill(Box(left, lane.y, max(right - left, canvas.px(3)), height), theme.alert)
+    _history_times(canvas, plot, start, end, x_at(start), x_at(end))
+    _mark_names(canvas, boxes, state, start, x_at)
+    legend = []
+    if best is not None:
+        legend.append("best")
+    if spans:
+        legend.append("alarm")
+    if gaps:
+        legend.append("samples lost")
+    if shown_lost:
+        legend.append("no lock")
+    title = Box(box.x, box.y, box.width, canvas.px(20))
+    right = _history_legend(canvas, title, legend)
+    heading = f"Opening, {span_words(view.span_s)}"
+    canvas.write(heading, replace(title, width=max(0, right - title.x)), _TEXT, theme.ink, bold=True)
+
+
+def _hatch(canvas: Canvas, plot: Box, left: float, right: float) -> None:
+    """Slanting lines where there was no lock; told apart from the panel without colour."""
+    left, right = max(left, float(plot.x)), min(right, float(plot.right))
+    box = Box(round(left), plot.y, max(1, round(right) - round(left)), plot.height)
+    canvas.fill(box, canvas.theme.track)
+    canvas.clip(box)
+    pitch = max(canvas.px(8), 3)
+    x = plot.x + (box.x - plot.x - plot.height) // pitch * pitch
+    while x < box.right:
+        canvas.line(x, plot.bottom, x + plot.height, plot.y, canvas.theme.edge, 1.0)
+        x += pitch
+    canvas.clip(plot)
+
+
+def _history_times(canvas: Canvas, plot: Box, start: float, end: float, left: float, right: float) -> None:
+    theme = canvas.theme
+    top = plot.bottom + canvas.px(11)
+    for at in time_ticks(start, end, max(1, plot.width // canvas.px(110))):
+        x = left + (right - left) * (at - start) / (end - start)
+        canvas.line(x, plot.bottom, x, plot.bottom + canvas.px(10), theme.edge)
+        half = canvas.text_width(clock(at), _SMALL) // 2 + 2
+        edge = min(round(x) - half, plot.right + canvas.px(8) - 2 * half)
+        canvas.write(clock(at), Box(edge, top, 2 * half, canvas.px(16)), _SMALL, theme.dim, align="centre")
+
+
+def _mark_names(
+    canvas: Canvas, boxes: LiveBoxes, state: LiveState, start: float, x_at: Callable[[float], float]
+) -> None:
+    """Flags over the strip; the newest mark's name has the first right to the room."""
+    theme, plot = canvas.theme, boxes.history_plot
+    y, height = boxes.history.y + canvas.px(21), canvas.px(17)
+    limit = float(plot.right)
+    for number, mark in reversed(list(enumerate(state.marks, start=1))):
+        if mark.seconds < start:
+            break
+        x = x_at(mark.seconds)
+        canvas.polygon([(x, y + height), (x, y + canvas.px(5)), (x + canvas.px(8), y + canvas.px(9))], theme.ink)
+        text = mark.name or str(number)
+        room = Box(round(x) + canvas.px(11), y, max(0, round(limit - x) - canvas.px(17)), height)
+        if canvas.text_width(text, _SMALL) <= room.width or (mark.name and room.width >= canvas.px(60)):
+            canvas.write(text, room, _SMALL, theme.ink)
+        limit = x
+
+
+def _history_legend(canvas: Canvas, box: Box, entries: list[str]) -> int:
+    """What the signs mean, from the right; returns where it starts."""
+    theme = canvas.theme
+    x = box.right
+    middle = box.y + box.height / 2
+    for entry in reversed(entries):
+        width = canvas.text_width(entry, _SMALL)
+        canvas.write(entry, Box(x - width, box.y, width, box.height), _SMALL, theme.dim)
+        x -= width + canvas.px(24)
+        sample = Box(x, round(middle) - canvas.px(5), canvas.px(18), canvas.px(10))
+        if entry == "best":
+            canvas.line(sample.x, middle, sample.right, middle, theme.ink, 1.0, dashed=True)
+        elif entry == "alarm":
+            canvas.fill(Box(sample.x, round(middle) - canvas.px(3), sample.width, canvas.px(7)), theme.alert)
+        elif entry == "samples lost":
+            centre, reach = sample.x + sample.width / 2, canvas.px(5)
+            shape = [
+                (centre - reach, middle),
+                (centre, middle - reach),
+                (centre + reach, middle),
+                (centre, middle + reach),
+            ]
+            canvas.polygon(shape, theme.alert)
+        else:
+            canvas.fill(sample, theme.track)
+            canvas.clip(sample)
+            for shift in range(-sample.height, sample.width, max(canvas.px(5), 2)):
+                canvas.line(
+                    sample.x + shift, sample.bottom, sample.x + shift + sample.height, sample.y, theme.edge, 1.0
+                )
+            canvas.clip(None)
+        x -= canvas.px(18)
+    return x
+
+
+_HINTS = ("mark", "acknowledge", "hold", "help")
+
+
+def draw_footer(canvas: Canvas, box: Box, view: View) -> None:
+    """The newest notice or remark, and the keys most wanted."""
+    theme, state = canvas.theme, view.state
+    hints = []
+    for action in ACTIONS:
+        if action.name in _HINTS:
+            words = {"mark": "mark", "acknowledge": "acknowledge", "hold": "hold", "help": "all keys"}[action.name]
+            hints.append(f"{action.keys[0]} {words}")
+    text = "   ".join(hints)
+    taken = min(canvas.text_width(text, _SMALL), box.width // 2)
+    canvas.write(text, Box(box.right - taken, box.y, taken, box.height), _SMALL, theme.dim, align="right")
+    parts = [view.said] if view.said else [*state.notices[-2:][::-1]]
+    if state.journal_text and not view.said:
+        parts.append(state.journal_text)
+    room = replace(box, width=max(0, box.width - taken - canvas.px(24)))
+    canvas.write("  ·  ".join(parts), room, _SMALL, theme.ink if view.said else theme.dim)
+
+
+def draw_help(canvas: Canvas, box: Box) -> None:
+    """All keys with what they do, over the page."""
+    theme = canvas.theme
+    canvas.fill(box, theme.panel)
+    canvas.frame(_inside(canvas, box), theme.ink)
+    inner = Box(box.x + canvas.px(24), box.y + canvas.px(14), box.width - canvas.px(48), box.height - canvas.px(28))
+    title = replace(inner, height=canvas.px(30))
+    canvas.write("Keys", title, _LARGE, theme.ink, bold=True)
+    pitch = min(canvas.px(32), (inner.bottom - title.bottom) // len(ACTIONS))
+    size = min(15.0, 0.62 * pitch / canvas.scale)
+    keys_width = max(canvas.text_width(" or ".join(a.keys), size, bold=True) for a in ACTIONS) + canvas.px(20)
+    words_width = max(canvas.text_width(a.words.rstrip("…"), size) for a in ACTIONS) + canvas.px(20)
+    for number, action in enumerate(ACTIONS):
+        row = Box(inner.x, title.bottom + number * pitch, inner.width, pitch)
+        canvas.write(" or ".join(action.keys), replace(row, width=keys_width), size, theme.ink, bold=True)
+        words = Box(row.x + keys_width, row.y, min(words_width, max(0, row.width - keys_width)), pitch)
+        canvas.write(action.words.rstrip("…"), words, size, theme.ink)
+        rest = Box(words.right, row.y, max(0, row.right - words.right), pitch)
+        canvas.write(action.what, rest, size, theme.dim)
