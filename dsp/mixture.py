@@ -5,7 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import log_ndtr, ndtr
+from scipy.special import log_ndtr, ndtr, ndtri
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,13 +59,17 @@ class Spread:
     share: NDArray[np.float64]
     sigma: float
 
+    def mirrored(self) -> "Spread":
+        """The same spread towards the other side."""
+        return Spread(-self.at[::-1], self.share[::-1], self.sigma)
+
     def below(self, limit: float) -> float:
         """Probability of a sample below ``limit``; exact in the far tail."""
         return float(self.share @ ndtr((limit - self.at) / self.sigma))
 
     def quantile(self, share: float) -> float:
         """The value that a ``share`` of the samples lies below."""
-        reach = -_normal_quantile(share) + 1.0
+        reach = 1.0 - float(ndtri(share))
         low, high = self.at[0] - reach * self.sigma, self.at[-1] + reach * self.sigma
         target = math.log(share)
         for _ in range(60):
@@ -76,7 +80,7 @@ class Spread:
                 low = middle
             else:
                 high = middle
-        return 0.5 * (low + high)
+        return float(0.5 * (low + high))
 
 
 def spread(taps: NDArray[np.float64], levels: NDArray[np.float64], shares: NDArray[np.float64], sigma: float) -> Spread:
@@ -109,11 +113,5 @@ def spread(taps: NDArray[np.float64], levels: NDArray[np.float64], shares: NDArr
         density = new
     some = density > 1e-18
     at = (np.flatnonzero(some) - half - 1) * step + mean * float(small.sum())
-    share = density[some]
-    return Spread(at, share / share.sum(), rest)
-
-
-def _normal_quantile(share: float) -> float:
-    from scipy.special import ndtri
-
-    return float(ndtri(share))
+    share = np.asarray(density[some], dtype=np.float64)
+    return Spread(np.asarray(at, dtype=np.float64), share / share.sum(), rest)

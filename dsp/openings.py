@@ -1,0 +1,130 @@
+"""The opening curve of an eye and what is read off it: best instant, width, slope, tolerance. Columns are of the class raster."""
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dsp.eye import COLUMNS, Rows
+
+Curve = NDArray[np.float64]
+
+
+def quantile(histogram: NDArray[np.int64], share: float) -> NDArray[np.float64]:
+    """Row position below which a share of the counts lies, last axis rows; NaN where there are no counts.
+
+    Linear within its row; in a row that alone holds many times the tail, at the row's middle: nothing is known of where in
+    it so narrow a level stands.
+    """
+    cumulative = np.cumsum(histogram, axis=-1)
+    counts = cumulative[..., -1]
+    wanted = share * counts
+    index = np.minimum(np.sum(cumulative < wanted[..., None], axis=-1), histogram.shape[-1] - 1)
+    here = np.take_along_axis(histogram, index[..., None], axis=-1)[..., 0]
+    below = np.take_along_axis(cumulative, index[..., None], axis=-1)[..., 0] - here
+    part = np.clip((wanted - below) / np.maximum(here, 1), 0.0, 1.0)
+    tail = np.maximum(min(share, 1.0 - share) * counts, 1.0)
+    narrow = np.clip((here / tail - 2.0) / 8.0, 0.0, 1.0)
+    return np.where(counts > 0, index + part + (0.5 - part) * narrow, np.nan)
+
+
+def opening_curves(
+    histogram: NDArray[np.int64], rows: Rows, gain: NDArray[np.float64], spacing: NDArray[np.float64], tail: float
+) -> NDArray[np.float64]:
+    """Opening of every eye in per cent of its spacing, ``(rails, eyes, columns)``, of traces ``(rails, levels, columns, rows)``."""
+    low, high = quantile(histogram, tail), quantile(histogram, 1.0 - tail)
+    height = (low[:, 1:] - high[:, :-1]) / rows.scale / gain[:, None, None]
+    return np.asarray(100.0 * height / spacing[None, :, None])
+
+
+def plateau(values: Curve, top: int, tolerance: float) -> tuple[int, int]:
+    """First and last index about ``top`` whose values stay within ``tolerance`` of it."""
+    flat = values > values[top] - tolerance
+    first = last = top
+    while first > 0 and flat[first - 1]:
+        first -= 1
+    while last < values.size - 1 and flat[last + 1]:
+        last += 1
+    return first, last
+
+
+def vertex(values: Curve, top: int) -> float:
+    """Offset of a parabola's crest from the greatest of three neighbouring values."""
+    if not 0 < top < values.size - 1:
+        return 0.0
+    left, middle, right = values[top - 1 : top + 2]
+    bend = left - 2 * middle + right
+    return float(np.clip(0.5 * (left - right) / bend, -0.5, 0.5)) if bend < 0 else 0.0
+
+
+def corner(values: Curve, top: int) -> float | None:
+    """Where two straight flanks about ``top`` meet, at most two columns off; None if the flanks bend or there is no corner.
+
+    Sampling rounds off the corner of a wave that turns from one symbol's course to the next's; its flanks still show it.
+    """
+    if not 6 <= top < values.size - 6:
+        return None
+    lines = []
+    for columns in (np.arange(top - 5, top - 1), np.arange(top + 3, top + 6)):
+        slope, level = np.polyfit(columns - top, values[columns], 1)
+        lines.append((slope, level, float(np.std(values[columns] - level - slope * (columns - top)))))
+    (rise, left, left_rest), (fall, right, right_rest) = lines
+    bend = float(rise - fall)
+    if not bend > 1.0 or max(left_rest, right_rest) > 0.05 * bend:
+        return None
+    shift = float((right - left) / bend)
+    return top + shift if abs(shift) <= 2.0 else None
+
+
+def between(curves: NDArray[np.float64], column: float) -> NDArray[np.float64]:
+    """Curves ``(..., columns)`` at a column and a part, by straight lines."""
+    left = min(max(int(column), 0), curves.shape[-1] - 2)
+    part = column - left
+    return np.asarray((1 - part) * curves[..., left] + part * curves[..., left + 1])
+
+
+def width(curve: Curve, best: float) -> tuple[float, float] | None:
+    """UI, about the decision instant, between which the curve is above 0 around ``best`` (columns); at most one UI; None if closed."""
+    start = round(best)
+    if not curve[start] > 0:
+        return None
+    ends = []
+    for step in (-1, 1):
+        at = start
+        while 0 <= at + step < curve.size and curve[at + step] > 0 and abs(at - start) < COLUMNS:
+            at += step
+        beyond = curve[at + step] if 0 <= at + step < curve.size else math.nan
+        ends.append(at + step * curve[at] / (curve[at] - beyond) if beyond <= 0 else float(at))
+    first, last = ends
+    if last - first > COLUMNS:
+        middle = 0.5 * (first + last)
+        first, last = middle - COLUMNS / 2, middle + COLUMNS / 2
+    return (float(first) - COLUMNS) / COLUMNS, (float(last) - COLUMNS) / COLUMNS
+
+
+def slope_and_tolerance(curve: Curve, best: float, opening: float) -> tuple[float | None, tuple[float, float] | None]:
+    """Timing slope (per cent a UI, the steeper mean rate down to half the opening) and tolerance (UI, noise margin 1 dB down)."""
+    if opening <= 0:
+        return None, None
+    top = float(between(curve, best))
+    if not top > 0:
+        return None, None
+    halves = [_fall(curve, best, 0.5 * top, step) for step in (-1, 1)]
+    rates = [0.5 * top / distance for distance in halves if distance]
+    early, late = (_fall(curve, best, top * 10 ** (-1 / 20), step) for step in (-1, 1))
+    tolerance = (-early, late) if early is not None and late is not None else None
+    return (max(rates) if rates else None), tolerance
+
+
+def _fall(curve: Curve, best: float, level: float, step: int) -> float | None:
+    """Distance in UI from ``best`` to where the curve has fallen to ``level``, going by ``step``; None if it never does."""
+    at = math.floor(best) if step < 0 else math.ceil(best)
+    before, value = best, float(between(curve, best))
+    while 0 <= at < curve.size:
+        here = float(curve[at])
+        if here <= level:
+            part = (value - level) / max(value - here, 1e-12)
+            return abs(before + (at - before) * min(max(part, 0.0), 1.0) - best) / COLUMNS
+        before, value = float(at), here
+        at += step
+    return None

@@ -1,0 +1,112 @@
+"""The link's pattern response: what each symbol puts where, and what is left over.
+
+Least squares over a window's sums, so nothing here depends on the window's length but its precision. Times are in UI about
+the decision instant.
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dsp.eye import EARLIEST, LAGS, EyeSums
+from dsp.interpolation import BEFORE, PHASES, TAPS, weights
+
+CURSOR = -EARLIEST  # index of lag 0
+_SMOOTH_BAND = 0.15  # cycles a phase step that a wave kept at few phases may hold
+
+
+@dataclass(frozen=True, slots=True)
+class PatternModel:
+    """The response at one instant: ``wave = constant + sum(taps * symbols) + residual``.
+
+    ``taps`` has shape ``(rails, rails, lags)`` (of rail, to rail's symbols); ``residual`` is a variance, ``(rails,)``.
+    """
+
+    taps: NDArray[np.float64]
+    residual: NDArray[np.float64]
+
+    def cursor(self, rail: int) -> float:
+        """What a rail's own symbol is worth."""
+        return float(self.taps[rail, rail, CURSOR])
+
+    def neighbours(self, rail: int) -> NDArray[np.float64]:
+        """Everything but the cursor, shape ``(rails * lags,)``."""
+        taps = self.taps[rail].copy()
+        taps[rail, CURSOR] = 0.0
+        return np.asarray(taps.ravel())
+
+
+class Pattern:
+    """The pattern response of one window's sums, at any instant within a symbol of the decision."""
+
+    def __init__(self, sums: EyeSums) -> None:
+        rails, phases, n = sums.scheme.rails, sums.phases, max(sums.symbols, 1)
+        self._phases = phases
+        k = sums.gram.shape[0]
+        gram = sums.gram + np.eye(k) * (1e-7 * np.trace(sums.gram) / k + 1e-12)
+        right = np.moveaxis(sums.cross, 0, 1).reshape(k, rails * phases)
+        solution = np.linalg.solve(gram, right)
+        explained = np.sum(solution * (2 * right - sums.gram @ solution), axis=0).reshape(rails, phases)
+        self._residual = np.maximum(sums.square - explained, 1e-9 * sums.square) / max(n - k, 1)
+        self._solution = np.moveaxis(solution.reshape(k, rails, phases), 1, 0)[:, :-1]
+        means = sums.gram[:-1, -1] / n
+        middle = sums.cross[:, -1] / n
+        rows = np.arange(rails) * LAGS
+        self._variance = np.asarray(
+            [sums.gram[row + CURSOR, row + CURSOR] / n - means[row + CURSOR] ** 2 for row in rows]
+        )
+        self._common = sums.cross[:, :-1] / n - middle[:, None] * means[None, :, None]
+        self._total = sums.square / n - middle**2
+
+    def model(self, ui: float) -> PatternModel:
+        """The response at ``ui``, -1 to 1."""
+        rails = self._solution.shape[0]
+        each = [
+            [self._along(self._solution[r, s * LAGS : (s + 1) * LAGS], ui) for s in range(rails)] for r in range(rails)
+        ]
+        at = ui * self._phases
+        left = math.floor(at)
+        part = at - left
+        here, there = left % self._phases, (left + 1) % self._phases
+        return PatternModel(np.asarray(each), (1 - part) * self._residual[:, here] + part * self._residual[:, there])
+
+    def error(self, ui: float) -> NDArray[np.float64]:
+        """Variance of what is not a rail's own symbol after least-squares gain, over that gain squared, shape ``(rails,)``."""
+        rails = self._solution.shape[0]
+        own = [self._along(self._common[r, r * LAGS : (r + 1) * LAGS], ui)[CURSOR] for r in range(rails)]
+        gain = np.maximum(np.abs(own) / self._variance, 1e-9)
+        total = self._whole(ui)
+        return np.asarray(np.maximum(total - np.square(own) / self._variance, 1e-9 * total) / gain**2)
+
+    def own(self, ui: float) -> NDArray[np.float64]:
+        """What a rail's own symbol is worth at ``ui``, other symbols averaged, shape ``(rails,)``."""
+        rails = self._solution.shape[0]
+        own = [self._along(self._common[r, r * LAGS : (r + 1) * LAGS], ui)[CURSOR] for r in range(rails)]
+        return np.asarray(own / self._variance)
+
+    def _along(self, response: NDArray[np.float64], ui: float) -> NDArray[np.float64]:
+        """A response ``(lags, phases)``, sampled from lag to lag, at ``ui`` after each lag; 0 beyond its ends."""
+        line = np.concatenate((np.zeros(2 * self._phases), response.ravel(), np.zeros(2 * self._phases)))
+        at = ui * self._phases
+        whole = math.floor(at)
+        start = 2 * self._phases + whole + self._phases * np.arange(LAGS)
+        if self._phases > 16:  # corners are kept finely, and straight lines lie between
+            return np.asarray(line[start] + (at - whole) * (line[start + 1] - line[start]))
+        row = weights(_SMOOTH_BAND)[round((at - whole) * PHASES)].astype(np.float64)
+        return np.asarray(line[start[:, None] + np.arange(-BEFORE, TAPS - BEFORE)] @ row)
+
+    def _whole(self, ui: float) -> NDArray[np.float64]:
+        """Variance of the wave, shape ``(rails,)``: it repeats from symbol to symbol."""
+        at = ui * self._phases
+        left = math.floor(at)
+        here, there = left % self._phases, (left + 1) % self._phases
+        if self._phases > 16:
+            return np.asarray((1 - at + left) * self._total[:, here] + (at - left) * self._total[:, there])
+        # of a wave within one symbol rate only the first harmonic is not 0, so that the series is exact
+        series = np.fft.rfft(self._total, axis=1) / self._phases
+        turns = np.exp(2j * np.pi * np.arange(series.shape[1]) * ui)
+        scale = np.full(series.shape[1], 2.0)
+        scale[0] = scale[-1] = 1.0
+        return np.asarray((series * turns).real @ scale)
