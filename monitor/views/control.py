@@ -4,6 +4,7 @@ What is wanted often lies on keys that a gloved thumb finds without looking: the
 Nothing that cannot be taken back lies on a single key.
 """
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal, Protocol
@@ -58,6 +59,8 @@ ActionName = Literal[
     "longer",
     "shorter",
     "newest",
+    "further",
+    "nearer",
     "save",
     "larger",
     "smaller",
@@ -77,7 +80,7 @@ class Action:
     ----------
     keys
         The first is the one to show. A printable key is itself, in capitals, and counts with or without Shift; the others are
-        Space, Enter, Backspace, Tab, Escape, Up, Down, F1 and Ctrl+ with a letter.
+        Space, Enter, Backspace, Tab, Escape, Up, Down, Left, Right, F1 and Ctrl+ with a letter.
     words
         For the menu, short.
     what
@@ -117,6 +120,8 @@ ACTIONS: tuple[Action, ...] = (
     Action("longer", ("Up",), "Traces stay longer", "older traces fade more slowly, at last never", "View"),
     Action("shorter", ("Down",), "Traces stay shorter", "older traces fade faster, at last at once", "View"),
     Action("newest", ("0",), "Newest traces only", "no persistence: each picture shows its own traces alone", "View"),
+    Action("further", ("Left",), "Longer history", "look further back", "View", window_only=True),
+    Action("nearer", ("Right",), "Shorter history", "look at the last minutes more closely", "View", window_only=True),
     Action("larger", ("+", "="), "Larger text", "for reading from further away", "View", window_only=True),
     Action("smaller", ("-",), "Smaller text", "more room for the eye", "View", window_only=True),
     Action("theme", ("L",), "Light or dark", "for daylight or for the night", "View", window_only=True),
@@ -130,6 +135,8 @@ MENUS: tuple[MenuName, ...] = ("Measure", "Alarm", "View", "Watch")
 SHELVE_SECONDS = 600.0
 PERSISTENCE_STEPS: tuple[float | None, ...] = (0.0, 0.5, 1.0, 2.0, 5.0, 10.0, 30.0, None)
 DEFAULT_PERSISTENCE: float | None = 2.0
+HISTORY_STEPS: tuple[float | None, ...] = (60.0, 600.0, 3600.0, 86400.0, None)
+TEXT_STEPS = (1.0, 1.2, 1.45, 1.75, 2.1)
 
 
 def action_for(key: str) -> Action | None:
@@ -140,13 +147,27 @@ def action_for(key: str) -> Action | None:
 
 def step_persistence(seconds: float | None, *, longer: bool) -> float | None:
     """The next longer or shorter persistence; at either end it stays. None is endless."""
-    order = [float("inf") if step is None else step for step in PERSISTENCE_STEPS]
-    now = float("inf") if seconds is None else seconds
-    beyond = [step for step in order if (step > now if longer else step < now)]
+    return _step(PERSISTENCE_STEPS, seconds, longer)
+
+
+def step_history(seconds: float | None, *, longer: bool) -> float | None:
+    """The next longer or shorter stretch of the history; at either end it stays. None is the whole watch."""
+    return _step(HISTORY_STEPS, seconds, longer)
+
+
+def step_text(zoom: float, *, larger: bool) -> float:
+    """The next larger or smaller text; at either end it stays."""
+    return _step(TEXT_STEPS, zoom, larger) or zoom
+
+
+def _step(steps: Sequence[float | None], value: float | None, up: bool) -> float | None:
+    order = [math.inf if step is None else step for step in steps]
+    now = math.inf if value is None else value
+    beyond = [step for step in order if (step > now if up else step < now)]
     if not beyond:
-        return seconds
-    step = beyond[0] if longer else beyond[-1]
-    return None if step == float("inf") else step
+        return value
+    step = beyond[0] if up else beyond[-1]
+    return None if step == math.inf else step
 
 
 def persistence_words(seconds: float | None) -> str:

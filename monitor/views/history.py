@@ -12,6 +12,8 @@ from monitor.state import AlarmLine, HistoryPoint
 _TIME_STEPS = (1, 2, 5, 10, 15, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200, 10800, 21600, 43200, 86400)
 _LEAST_SPAN_PCT = 30.0
 _MOST_PASSED = 256
+# the cause is gone, though the alarm still shows
+_OVER = ("returned", "latched")
 
 
 @dataclass(frozen=True, slots=True)
@@ -129,7 +131,7 @@ class AlarmMemory:
         standing = {
             (alarm.name, alarm.since_s): AlarmSpan(alarm.name, alarm.severity, alarm.since_s, now_s)
             for alarm in alarms
-            if not alarm.state.startswith("cleared")
+            if alarm.state not in _OVER
         }
         self._passed += [span for key, span in self._standing.items() if key not in standing]
         del self._passed[:-_MOST_PASSED]

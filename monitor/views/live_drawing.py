@@ -25,6 +25,7 @@ from monitor.views.history import AlarmSpan, history_runs, lost_spans, time_tick
 from monitor.views.layout import Box, Page
 from monitor.views.live_layout import LiveBoxes
 from monitor.views.live_wording import (
+    alarm_words,
     best_words,
     by_urgency,
     calls,
@@ -126,9 +127,14 @@ def draw_band(canvas: Canvas, box: Box, view: View) -> None:
         more = f"and {left - 1} more" if left > 1 else ""
         kept = canvas.text_width(more, _TEXT) + gap if more else 0
         mark = canvas.px(24)
-        words = f"{alarm.text or alarm.name}  ·  {alarm.state} since {clock(alarm.since_s)}"
+        words = alarm_words(alarm)
         wanted = mark + canvas.text_width(words, _TEXT, bold=calls(alarm)) + 2 * pad
         left_over = right - x - kept
+        if len(alarms) == 1 and alarm.text:
+            more_words = f"{words}  ·  {alarm.text}"
+            longer = mark + canvas.text_width(more_words, _TEXT, bold=calls(alarm)) + 2 * pad
+            if longer <= left_over:
+                words, wanted = more_words, longer
         if number and wanted > left_over:
             canvas.write(f"and {left} more", Box(x, box.y, max(0, right - x), box.height), _TEXT, theme.ink)
             return
@@ -325,8 +331,9 @@ def draw_detail(canvas: Canvas, box: Box, reading: Reading | None) -> None:
     if reading.verdict and canvas.px(90) <= box.bottom - y:
         y = draw_verdict(canvas, Box(box.x, y, box.width, box.bottom - y), reading.verdict) + gap
     rows = budget_rows(reading.budget) if reading.budget is not None else []
-    needed = canvas.px(22) + canvas.px(29) * ((len(rows) + 1) // 2)
-    if rows and needed <= box.bottom - y:
+    lines = (box.bottom - y - canvas.px(22)) // max(canvas.px(29), 1)
+    rows = rows[: max(0, 2 * lines)]
+    if rows:
         y = draw_budget(canvas, Box(box.x, y, box.width, box.bottom - y), rows) + gap
     rest = Box(box.x, y, box.width, max(0, box.bottom - y))
     groups = figure_groups(reading)

@@ -81,6 +81,22 @@ def calls(alarm: AlarmLine) -> bool:
     return alarm.state not in _QUIET
 
 
+_STATES = {
+    "unacknowledged": "raised",
+    "returned": "not acknowledged, raised",
+    "latched": "not acknowledged, raised",
+    "acknowledged": "acknowledged, raised",
+    "shelved": "shelved, raised",
+}
+
+
+def alarm_words(alarm: AlarmLine) -> str:
+    """What is wrong, whether somebody has seen it, and when it began."""
+    state = _STATES.get(alarm.state, alarm.state)
+    over = "over, " if alarm.state in ("returned", "latched") else ""
+    return f"{alarm.name}  ·  {over}{state} at {clock(alarm.since_s)}"
+
+
 _ORDER = {"high": 0, "medium": 1, "low": 2}
 
 

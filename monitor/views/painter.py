@@ -84,12 +84,14 @@ def ensure_application() -> None:
 
     try:
         from PySide6.QtGui import QFontDatabase, QGuiApplication
+        from PySide6.QtWidgets import QApplication
     except ImportError as error:
         raise InputError(
             f"pictures need Qt, which does not load: {error}; on Debian: apt install {_DEBIAN_PACKAGES}"
         ) from error
     if QGuiApplication.instance() is None:
         os.environ.setdefault("QT_QPA_PLATFORM", "offscreen")
-        _application = QGuiApplication(sys.argv[:1] or ["lidwatch"])
+        # the kind that windows need too: there is one to a process, and it cannot be changed for another
+        _application = QApplication(sys.argv[:1] or ["lidwatch"])
     if set(QFontDatabase.families()) <= _GENERIC_FAMILIES:
         raise InputError("pictures need a font and none is installed; on Debian: apt install fonts-dejavu-core")
