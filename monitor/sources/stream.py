@@ -34,6 +34,9 @@ _GIVEN_UP_S = 0.5  # the library tries again at once after a loss, or never
 _TRY_AGAIN_S = 2.0
 _LIMITED: Final = ("torn", "garbage", "oversize", "overflow")
 _LIMIT_S = 1.0
+_REFUSALS_S = 10.0  # between two notices of a refused connection
+_NO_KEY = "the keys do not fit"
+_NO_COMMON_WORD = "the other side is no match: sub goes with pub, pull with push; keys are on both sides or on neither"
 
 
 @dataclass(frozen=True, slots=True)
@@ -146,10 +149,11 @@ class StreamSource(LiveSource):
         self._options = options
         self._now = now
         self._limiter = _Limiter(now)
-        self._up: set[int] = set()
         self._handshakes = 0
         self._given_up_at: float | None = None
         self._refused = ""
+        self._failing = False
+        self._refusal_told_at = -math.inf
         self._open(address)
 
     def _open(self, address: Endpoint) -> None:
@@ -233,16 +237,21 @@ class StreamSource(LiveSource):
                 self._refused = ""
                 items.append(self._event("connected", f"a sender is connected at {place}"))
             elif event in failed:
-                self._refused = "its keys do not fit ours" if event == failed[0] else "it speaks another security"
+                self._refused = _NO_KEY if event == zmq.EVENT_HANDSHAKE_FAILED_AUTH else _NO_COMMON_WORD
+                self._failing = True  # its DISCONNECTED comes next
             elif event == zmq.EVENT_DISCONNECTED:
                 self._left(items, place)
 
     def _left(self, items: list[Item], place: str) -> None:
-        if self._handshakes:
+        if self._failing or not self._handshakes:
+            self._failing = False
+            self._refused = self._refused or _NO_COMMON_WORD
+            if self._now() - self._refusal_told_at >= _REFUSALS_S:
+                self._refusal_told_at = self._now()
+                items.append(self._event("disconnected", f"no connection at {place}: {self._refused}"))
+        else:
             self._handshakes -= 1
             items.append(self._event("disconnected", f"the sender at {place} is gone; waiting for it"))
-        elif self._refused:
-            items.append(self._event("disconnected", f"no connection with {place}: {self._refused}"))
         if not self._options.bind:
             self._given_up_at = self._now()
 

@@ -393,4 +393,4 @@ def _deliver(items: list[Item], data: Part, state: WireState, *, framed: bool) -
 
 def _garbage(state: WireState, what: str) -> Outcome:
     state = replace(state, garbage=state.garbage + 1)
-    return Outcome((StreamEvent("garbage", f"{what}: left out", state.position),), state)
+    return Outcome((StreamEvent("garbage", printable(f"{what}: left out"), state.position),), state)
