@@ -16,6 +16,7 @@ from monitor.errors import InputError, MonitorError
 from monitor.replay import INTERRUPTED, discard_standard_output, replay
 from monitor.terminal import say
 from monitor.version import version
+from monitor.watching import add_watch_arguments
 
 UNUSABLE = 2
 
@@ -85,6 +86,14 @@ def parser() -> argparse.ArgumentParser:
     add_measure_options(command)
     add_output_options(command)
     command.set_defaults(run=replay)
+    live = commands.add_parser(
+        "watch",
+        help="watch a live link",
+        description="Takes samples as they come, shows the eye, keeps the journal and raises alarms.",
+        epilog="Exit status: 0 the watch ended; 2 source or arguments unusable; 130 interrupted.",
+        allow_abbrev=False,
+    )
+    add_watch_arguments(live)
     return top
 
 

@@ -84,14 +84,12 @@ class Engine:
         options: EngineOptions,
         line: Line,
         source_text: str = "",
-        on_alarm: Callable[[Mapping[str, Any]], None] | None = None,
     ) -> None:
         self._wanted = wanted
         self._complex = complex_in
         self.sample_rate_hz = sample_rate_hz
         self._options = options
         self._line = line
-        self._on_alarm = on_alarm
         self._source_text = source_text
         self.alarms = AlarmBoard(options.rules, built_in_alarms(options.stall_s))
         self._chain: Chain | None = None
@@ -499,10 +497,7 @@ class Engine:
 
     def _tell_alarms(self, events: Iterable[AlarmEvent]) -> None:
         for event in events:
-            fields = event.fields()
-            self._line("alarm", event.sample, event.seconds, fields)
-            if self._on_alarm is not None:
-                self._on_alarm(fields)
+            self._line("alarm", event.sample, event.seconds, event.fields())
 
 
 class _History:

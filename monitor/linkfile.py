@@ -50,10 +50,15 @@ class LinkOptions:
 
 @dataclass(frozen=True, slots=True)
 class LinkFile:
-    """A link file's content: the link, and how many alarm rules stand in it."""
+    """A link file's content: the link, and the tables of its alarm rules as they stand."""
 
     link: LinkOptions
-    n_alarms: int = 0
+    alarms: tuple[dict[str, Any], ...] = ()
+
+    @property
+    def n_alarms(self) -> int:
+        """How many alarm rules there are."""
+        return len(self.alarms)
 
 
 def read_pulse(text: str) -> Pulse:
@@ -98,7 +103,7 @@ def read_link_file(path: Path) -> LinkFile:
         raise InputError(f"{where}: [link] must be a table")
     if not isinstance(alarms, list) or not all(isinstance(alarm, dict) for alarm in alarms):
         raise InputError(f"{where}: alarms must be tables; write each as [[alarm]]")
-    return LinkFile(_link_of(table, path, where), len(alarms))
+    return LinkFile(_link_of(table, path, where), tuple(alarms))
 
 
 def _link_of(table: dict[str, Any], path: Path, where: str) -> LinkOptions:

@@ -6,12 +6,13 @@ import time
 from collections.abc import Callable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
-from typing import Any, Protocol
+from typing import Any
 
 from dsp.block import Block
 from dsp.identify import Wanted
 from monitor.engine import Engine, EngineOptions
 from monitor.errors import MonitorError, printable
+from monitor.journal import Journal
 from monitor.snapshot import Snapshot
 from monitor.sources.ring import ThreadedReader
 from monitor.sources.stream import LiveSource
@@ -23,21 +24,8 @@ _PUBLISH_S = 0.033  # a new state for the views at most so often
 _JOIN_S = 10.0
 
 
-class Keeper(Protocol):
-    """Where journal lines go."""
-
-    def write(self, kind: str, sample: int, seconds: float, fields: Mapping[str, Any]) -> None:
-        """Keep one line; never raises for want of space."""
-        ...
-
-    @property
-    def status(self) -> str:
-        """What a view should say of it; empty when all is well."""
-        ...
-
-
 class Watch:
-    """Runs until the source ends, `stop` is called or the engine fails; what views call is safe from any thread.
+    """Runs until the source ends, ``for_s`` seconds are over, `stop` is called or the engine fails; what views call is safe from any thread.
 
     ``failure`` holds what ended it if that was an error.
     """
@@ -48,11 +36,11 @@ class Watch:
         wanted: Wanted,
         options: EngineOptions,
         *,
-        keeper: Keeper | None = None,
+        keeper: Journal | None = None,
         source_text: str,
         on_block: Callable[[Block], None] | None = None,
-        on_alarm: Callable[[Mapping[str, Any]], None] | None = None,
         start_fields: Mapping[str, Any] | None = None,
+        for_s: float | None = None,
     ) -> None:
         self._reader = ThreadedReader(open_source)
         self._wanted = wanted
@@ -61,8 +49,8 @@ class Watch:
         self._keeper = keeper
         self._source_text = source_text
         self._on_block = on_block
-        self._on_alarm = on_alarm
         self._start_fields = dict(start_fields or {})
+        self._for_s = for_s
         self._engine: Engine | None = None
         self._commands: queue.SimpleQueue[Callable[[Engine], None]] = queue.SimpleQueue()
         self._stop = threading.Event()
@@ -73,6 +61,11 @@ class Watch:
         )
         self.failure: MonitorError | None = None
         self._thread = threading.Thread(target=self._run, name="lidwatch engine", daemon=True)
+
+    @property
+    def warnings(self) -> tuple[str, ...]:
+        """What the user should know of the source at the start."""
+        return self._reader.warnings
 
     def start(self) -> None:
         """Begin."""
@@ -144,9 +137,12 @@ class Watch:
             self._publish(ended=True)
 
     def _watch(self) -> None:
-        quiet_since = time.monotonic()
+        quiet_since = began = time.monotonic()
         published = 0.0
         while not self._stop.is_set():
+            if self._for_s is not None and time.monotonic() - began >= self._for_s:
+                self._why = f"watched for {self._for_s:g} s"
+                return
             items = self._reader.poll(_POLL_S)
             now = time.monotonic()
             for item in items:
@@ -185,7 +181,6 @@ class Watch:
                     options=self._options,
                     line=self._keep,
                     source_text=f"{self._source_text} · {event.format} · {event.rate_hz:g} Hz",
-                    on_alarm=self._on_alarm,
                 )
             elif event.kind != "centre":
                 self._engine.changed(sample_rate_hz=event.rate_hz, complex_in=complex_in, why=event.text)
@@ -217,7 +212,7 @@ class Watch:
         self._keep("stop", position, seconds, totals)
 
     def _publish(self, *, ended: bool = False) -> None:
-        status = self._keeper.status if self._keeper is not None else ""
+        status = self._keeper.status.text if self._keeper is not None else ""
         if self._engine is None:
             return
         self._state = self._engine.state(notices=self._notices, journal_text=status, ended=ended)

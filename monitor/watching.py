@@ -1,0 +1,222 @@
+"""`lidwatch watch`: a live link, its view, its journal and its alarms."""
+
+import argparse
+import os
+import platform
+import sys
+from collections.abc import Callable
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from monitor.arguments import add_link_options, error_rate, not_negative, positive, whole
+from monitor.errors import InputError
+from monitor.terminal import SlowStartNotice, say
+from monitor.version import version
+
+if TYPE_CHECKING:
+    from monitor.journal import Journal
+    from monitor.sources.stream import LiveSource
+    from monitor.watch import Watch
+
+INTERRUPTED = 130
+VIEWS = ("window", "terminal", "none")
+
+
+def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
+    """The options of the command."""
+    parser.add_argument(
+        "source", metavar="SOURCE", help="tcp://HOST:PORT, ipc://PATH, audio:NAME, a recording, or - for standard input"
+    )
+    samples = parser.add_argument_group("the samples")
+    samples.add_argument("--rate", type=positive, metavar="HZ", help="sample rate, where the stream does not say it")
+    samples.add_argument("--format", metavar="NAME", help="SigMF datatype: cf32, ci16_le, cu8, rf32, ri16_be, ...")
+    samples.add_argument(
+        "--channels", metavar="N[,N]", help="of a recording or sound card: which channel, or two for --iq"
+    )
+    samples.add_argument("--iq", action="store_true", help="two channels are I and Q")
+    socket = parser.add_argument_group("the socket")
+    socket.add_argument("--socket", choices=("sub", "pull"), default="sub", help="ZeroMQ pattern (default sub)")
+    socket.add_argument("--bind", action="store_true", help="bind the address instead of connecting to it")
+    socket.add_argument("--topic", default="", metavar="TEXT", help="subscribe to messages that begin with this")
+    socket.add_argument("--key", type=Path, metavar="FILE", help="own NAME.key_secret: the stream is encrypted (CURVE)")
+    socket.add_argument("--server-key", type=Path, metavar="FILE", help="the sender's NAME.key, to connect with --key")
+    socket.add_argument(
+        "--client-keys", type=Path, metavar="FOLDER", help="NAME.key files of who may connect, with --bind"
+    )
+    add_link_options(parser)
+    measure = parser.add_argument_group("how to watch")
+    measure.add_argument(
+        "--window", type=whole, metavar="SYMBOLS", help="symbols of a reading (default: two seconds of them)"
+    )
+    measure.add_argument(
+        "--every", type=positive, default=1.0, metavar="S", help="a journal line each so often (default 1)"
+    )
+    measure.add_argument(
+        "--stall", type=positive, default=2.0, metavar="S", help="alarm after so long without samples (default 2)"
+    )
+    measure.add_argument(
+        "--draw-every", type=whole, default=1, metavar="N", help="draw each N-th trace only (default 1: all)"
+    )
+    measure.add_argument(
+        "--target-ber", type=error_rate, default=1e-6, metavar="RATE", help="error rate that the opening is told for"
+    )
+    measure.add_argument(
+        "--pace", type=not_negative, default=1.0, metavar="N", help="of a recording: times real time (default 1)"
+    )
+    measure.add_argument("--for", dest="for_s", type=positive, metavar="S", help="end by itself after so long")
+    out = parser.add_argument_group("output")
+    out.add_argument("--view", choices=VIEWS, help="default: a window where there is a display, else the terminal")
+    out.add_argument(
+        "--painter", choices=("auto", "raster", "opengl"), default="auto", help="what draws the window's eye"
+    )
+    out.add_argument("--journal", type=Path, metavar="FILE", help="JSON Lines of all that happens; .csv: readings only")
+    out.add_argument(
+        "--rotate-size", type=whole, metavar="BYTES", help="begin a new journal part before one grows beyond this"
+    )
+    out.add_argument("--rotate-daily", action="store_true", help="begin a new journal part each day (UTC)")
+    out.add_argument("--publish", metavar="ADDRESS", help="publish journal lines on this ZeroMQ address")
+    out.add_argument(
+        "--on-alarm", metavar="COMMAND", help="program to run for each alarm, with it as JSON on standard input"
+    )
+    parser.set_defaults(run=watch)
+
+
+def watch(parsed: argparse.Namespace) -> int:
+    """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    view = parsed.view or _default_view()
+    with SlowStartNotice():
+        import dsp.chain  # noqa: F401  # the kernels
+        from monitor.watch import Watch
+
+    from dsp.chain import ChainOptions
+    from monitor.alarm_rules import parse_rules
+    from monitor.engine import EngineOptions
+    from monitor.linkfile import LinkOptions, read_link_file
+
+    link = LinkOptions(
+        parsed.symbol_rate,
+        None if parsed.scheme == "auto" else parsed.scheme,
+        None if parsed.pulse == "auto" else parsed.pulse,
+        parsed.carrier,
+        None if parsed.timing == "auto" else parsed.timing,
+        parsed.loop_bandwidth,
+    )
+    rules: tuple = ()  # type: ignore[type-arg]
+    if parsed.link is not None:
+        file = read_link_file(parsed.link)
+        link = link.over(file.link)
+        rules = parse_rules(file.alarms, where=f"link file {parsed.link}")
+    wanted = link.wanted()
+    options = EngineOptions(
+        window=parsed.window,
+        every_s=parsed.every,
+        stall_s=parsed.stall,
+        rules=rules,
+        display=view != "none",
+        chain=ChainOptions(
+            detector=link.timing,
+            timing_bandwidth=link.loop_bandwidth or 0.005,
+            every=parsed.draw_every,
+            target_ber=parsed.target_ber,
+        ),
+    )
+    opener = _opener(parsed)
+    with _journal(parsed) as journal:
+        start = {
+            "version": version(),
+            "host": platform.node(),
+            "source": parsed.source,
+            "link": {name: getattr(link, name) for name in link.__slots__},
+            "limits": [rule.text for rule in rules],
+        }
+        running = Watch(
+            opener, wanted, options, keeper=journal, source_text=parsed.source, start_fields=start, for_s=parsed.for_s
+        )
+        for warning in running.warnings:
+            say(f"warning: {warning}")
+        running.start()
+        try:
+            status = _show(running, view, parsed)
+        finally:
+            running.stop()
+    if running.failure is not None:
+        raise running.failure
+    return status
+
+
+def _show(running: "Watch", view: str, parsed: argparse.Namespace) -> int:
+    if view == "window":
+        from monitor.views.window import run_window
+
+        until = (lambda: running.state().ended) if parsed.for_s is not None else None
+        return run_window(running, painter=parsed.painter, title=parsed.source, until=until)
+    if view == "terminal":
+        from monitor.views.terminal import run_terminal
+
+        return run_terminal(running)
+    try:
+        running.wait()
+    except KeyboardInterrupt:
+        return INTERRUPTED
+    return 0
+
+
+def _default_view() -> str:
+    display = sys.platform in ("win32", "darwin") or os.environ.get("DISPLAY") or os.environ.get("WAYLAND_DISPLAY")
+    if display:
+        return "window"
+    return "terminal" if sys.stdout is not None and sys.stdout.isatty() else "none"
+
+
+def _opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":
+    """What opens the source, in the thread that will own it."""
+    from monitor.arguments import channels
+    from monitor.sources import SampleOptions
+
+    picked = channels(parsed.channels) if parsed.channels else None
+    samples = SampleOptions(parsed.rate, parsed.format, picked, parsed.iq)
+    source: str = parsed.source
+    if source.startswith(("tcp://", "ipc://")):
+        from monitor.sources.keys import Curve
+        from monitor.sources.stream import StreamOptions, open_stream
+
+        if parsed.key is None and (parsed.server_key or parsed.client_keys):
+            raise InputError("--server-key and --client-keys go with --key, the own secret key")
+        curve = Curve(parsed.key, parsed.server_key, parsed.client_keys) if parsed.key is not None else None
+        stream = StreamOptions(parsed.rate, parsed.format, parsed.socket, parsed.bind, parsed.topic, curve)
+        return lambda: open_stream(source, stream)
+    if source == "-":
+        from monitor.sources.stdin import StdinSource
+
+        return lambda: StdinSource(parsed.rate, parsed.format)
+    if source.startswith("audio:"):
+        from monitor.sources.audio import AudioSource
+
+        return lambda: AudioSource(source, samples)
+    from monitor.sources import open_source
+    from monitor.sources.paced import PacedSource
+
+    if not parsed.pace:
+        raise InputError("--pace 0: a recording without pace is for lidwatch replay")
+    return lambda: PacedSource(open_source(source, samples), parsed.pace)
+
+
+def _journal(parsed: argparse.Namespace) -> "Journal":
+    from monitor.journal import Journal, Rotation, Sink
+
+    sinks: list[Sink] = []
+    if parsed.publish is not None:
+        from monitor.publisher import Publisher
+
+        publisher = Publisher(parsed.publish)
+        for note in publisher.notes:
+            say(f"warning: {note}")
+        sinks.append(publisher)
+    if parsed.on_alarm is not None:
+        from monitor.alarm_command import AlarmCommand
+
+        sinks.append(AlarmCommand(parsed.on_alarm, failed=lambda text: say(f"warning: {text}")))
+    rotation = Rotation(parsed.rotate_size, parsed.rotate_daily)
+    return Journal(parsed.journal, now=lambda: datetime.now(UTC), rotation=rotation, sinks=sinks)
