@@ -61,12 +61,10 @@ def shares_per_pixel(
     return np.asarray(np.diff(below, axis=-1))
 
 
-def density_indices(
-    image: EyeImage, rail: int, low: float, high: float, width: int, height: int, steps: int
-) -> NDArray[np.uint8]:
-    """Index into a colour ramp for every pixel of one rail's eye, ``(height, width)``, top row first.
+def column_tones(image: EyeImage, rail: int, low: float, high: float, height: int) -> NDArray[np.float32]:
+    """How dense each column of the raster is at ``height`` pixel rows, ``(height, columns)``, top row first.
 
-    From 0 to ``steps - 1``, on a bent logarithm that ends at the 99.8 % quantile of what is there.
+    From 0 to 1, on a bent logarithm that ends at the 99.8 % quantile of what is there.
     """
     density = image.density[rail]
     pixels = shares_per_pixel(density, image.row_level, low, high, height)
@@ -75,13 +73,22 @@ def density_indices(
         pixels /= rows_per_pixel
     filled = pixels[pixels > 0]
     if filled.size == 0:
-        return np.zeros((height, width), dtype=np.uint8)
+        return np.zeros((height, density.shape[0]), dtype=np.float32)
     full = max(float(np.quantile(filled[:: max(1, filled.size // 20000)], 0.998)), 1.0)
     tone = np.asarray(np.log1p(pixels.astype(np.float32)) / np.float32(math.log1p(full)), dtype=np.float32)
     np.power(tone, np.float32(_BEND), out=tone)
     np.maximum(tone, np.minimum(2.0 * pixels, 1.0) * _FAINTEST, out=tone, casting="same_kind")
     np.minimum(tone, 1.0, out=tone)
-    tone = np.ascontiguousarray(tone.T[::-1], dtype=np.float32)
+    return np.ascontiguousarray(tone.T[::-1], dtype=np.float32)
+
+
+def density_indices(
+    image: EyeImage, rail: int, low: float, high: float, width: int, height: int, steps: int
+) -> NDArray[np.uint8]:
+    """Index into a colour ramp for every pixel of one rail's eye, ``(height, width)``, top row first; to ``steps - 1``."""
+    tone = column_tones(image, rail, low, high, height)
+    if not tone.any():
+        return np.zeros((height, width), dtype=np.uint8)
     ui = TIME_MIN_UI + (TIME_MAX_UI - TIME_MIN_UI) * (np.arange(width) + 0.5) / width
     position = np.interp(ui, image.column_ui, np.arange(image.column_ui.size))
     drawn = between_columns(tone, position, max(1, round(height * _REACH)))
