@@ -9,8 +9,8 @@ from numpy.typing import NDArray
 from dsp.crossings import crossings, rise_time
 from dsp.eye import COLUMNS, EyeSums
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
-from dsp.openings import between, corner, opening_curves, plateau, slope_and_tolerance, vertex, width
-from dsp.pattern import CURSOR, Pattern, PatternModel
+from dsp.openings import between, corner, opening_curves, peak, plateau, slope_and_tolerance, vertex, width
+from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
 from dsp.picture import EyeImage
 from dsp.reading import Eye, Reading
 from dsp.tracking import level_units
@@ -85,16 +85,15 @@ class Figures:
         """Additive noise variance by rail, level units squared: ISI not counted, wrong decisions allowed for."""
         cursors = np.maximum([abs(model.cursor(rail)) for rail in range(self._scheme.rails)], 1e-9)
         if self._mixtures is None:
-            return np.asarray(model.residual / cursors**2)
-        noise = []
-        for rail, mixture in enumerate(self._mixtures):
-            taps = model.neighbours(rail)
-            # what noise alone puts into the taps is not ISI
-            chance = float(model.residual[rail]) / max(self._sums.symbols, 1) * taps.size
-            isi = max(float(taps @ taps) * self._rail_energy() - chance, 0.0) / cursors[rail] ** 2
-            total = (mixture.sigma / mixture.gain) ** 2
-            noise.append(max(total - isi, 0.1 * total))
-        return np.asarray(noise)
+            noise = np.asarray(model.residual / cursors**2)
+        else:
+            noise = np.empty(cursors.size)
+            for rail, mixture in enumerate(self._mixtures):
+                taps = model.neighbours(rail)
+                total = (mixture.sigma / mixture.gain) ** 2
+                noise[rail] = max(total - float(taps @ taps) * self._rail_energy() / cursors[rail] ** 2, 0.1 * total)
+        mean = noise.mean()
+        return np.asarray(mean + beyond_chance(noise - mean, mean**2 / self._sums.symbols))
 
     def _rail_energy(self) -> float:
         return self._scheme.symbol_energy() / self._scheme.rails
@@ -115,7 +114,9 @@ class Figures:
         """Level means in level units; the nominal ones where decisions are too often wrong to tell."""
         if self._mixtures is not None:
             return self._nominal
-        return np.asarray((self._means[rail] - self._zero[rail]) / self._gain[rail])
+        levels = (self._means[rail] - self._zero[rail]) / self._gain[rail]
+        variance = (self._sigmas[rail] / self._gain[rail]) ** 2 / np.maximum(self._counts[rail], 1.0)
+        return self._nominal + beyond_chance(levels - self._nominal, variance)
 
     # -- the opening ---------------------------------------------------------------------------------------------------
 
@@ -137,6 +138,9 @@ class Figures:
         sharp = corner(section, last) if last - first <= 4 else None
         sharp = None if sharp is None else start + sharp
         if last - first < 2:
+            # a smooth wave's opening has a true peak there; a corner that sampling rounded is better judged where the raster shows it
+            if sharp is not None and self._sums.phases < COLUMNS:
+                return sharp, sharp
             return start + top + vertex(section, top), sharp
         squares = np.asarray(
             [float(self._pattern.error(_ui(start + column)).max()) for column in range(first, last + 1)]
@@ -154,14 +158,16 @@ class Figures:
         # the scale is that of the best instant, not of the decision instant
         scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(best), 1e-9)
         self._curves *= np.clip(scale, 0.5, 2.0)[:, None, None]
-        counted = between(self._curves, self._best)
         drawn = self._sums.drawn / self._sums.symbols * float(self._counts.min())
-        if drawn >= FULL_CLASS and np.isfinite(counted).all() and self._bit_errors(best) < _TAIL_WHOLE:
-            self._openings = counted
-            return
         self._openings = self._modelled(best, TAIL)
+        column = round(self._best)
+        counted = self._curves[:, :, column]
+        if drawn >= FULL_CLASS and np.isfinite(counted).all() and self._bit_errors(best) < _TAIL_WHOLE:
+            # the curve may have its peak between two columns: the model tells what lies there
+            self._openings = counted + self._openings - self._modelled(_ui(column), TAIL)
+            return
         # the curve of few traces is too open by as much as their extremes fall short of the tail
-        self._curves += (self._openings - counted)[:, :, None]
+        self._curves += (self._openings - between(self._curves, self._best))[:, :, None]
 
     def _modelled(self, ui: float, tail: float) -> NDArray[np.float64]:
         """Openings by the pattern model with Gaussian noise, per cent, shape ``(rails, eyes)``."""
@@ -405,4 +411,4 @@ def window_opening(sums: EyeSums, context: Context) -> float | None:
     if least.max() < 20.0:
         # decisions that may be wrong bend the tails: leave it to the model
         return Figures(sums, context).opening_pct()
-    return float(least.max())
+    return peak(least)

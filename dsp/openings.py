@@ -57,6 +57,19 @@ def vertex(values: Curve, top: int) -> float:
     return float(np.clip(0.5 * (left - right) / bend, -0.5, 0.5)) if bend < 0 else 0.0
 
 
+def peak(values: Curve) -> float:
+    """Greatest value of a curve, between its columns where straight flanks meet there."""
+    top = int(np.argmax(values))
+    if not 2 <= top < values.size - 2:
+        return float(values[top])
+    left, right = values[top - 1] - values[top - 2], values[top + 1] - values[top + 2]
+    if not (left > 0 and right > 0):
+        return float(values[top])
+    shift = (values[top + 1] + right - values[top - 1] - left) / (left + right)
+    height = values[top - 1] + left * (1.0 + shift)
+    return float(np.clip(height, values[top], values[top] + 0.5 * abs(values[top + 1] - values[top - 1])))
+
+
 def corner(values: Curve, top: int) -> float | None:
     """Where two straight flanks about ``top`` meet, at most two columns off; None if the flanks bend or there is no corner.
 

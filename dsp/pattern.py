@@ -38,6 +38,14 @@ class PatternModel:
         return np.asarray(taps.ravel())
 
 
+def beyond_chance(deviation: NDArray[np.float64], variance: NDArray[np.float64] | float) -> NDArray[np.float64]:
+    """Estimated deviations drawn towards 0 by what their own sampling variance explains, any shape.
+
+    Source: the positive-part estimator of W. James and C. Stein, Proc. 4th Berkeley Symp. 1, 1961 (from memory), one by one.
+    """
+    return np.asarray(deviation * np.clip(1.0 - 2.0 * variance / np.maximum(deviation**2, 1e-300), 0.0, 1.0))
+
+
 class Pattern:
     """The pattern response of one window's sums, at any instant within a symbol of the decision."""
 
@@ -57,6 +65,7 @@ class Pattern:
         self._variance = np.asarray(
             [sums.gram[row + CURSOR, row + CURSOR] / n - means[row + CURSOR] ** 2 for row in rows]
         )
+        self._chance = 1.0 / (n * np.maximum(self._variance, 1e-9))  # variance of a tap over that of the residual
         self._common = sums.cross[:, :-1] / n - middle[:, None] * means[None, :, None]
         self._total = sums.square / n - middle**2
 
@@ -70,7 +79,12 @@ class Pattern:
         left = math.floor(at)
         part = at - left
         here, there = left % self._phases, (left + 1) % self._phases
-        return PatternModel(np.asarray(each), (1 - part) * self._residual[:, here] + part * self._residual[:, there])
+        residual = (1 - part) * self._residual[:, here] + part * self._residual[:, there]
+        taps = np.asarray(each)
+        settled = beyond_chance(taps, (residual[:, None] * self._chance[None])[..., None])
+        for rail in range(rails):
+            settled[rail, rail, CURSOR] = taps[rail, rail, CURSOR]
+        return PatternModel(settled, residual)
 
     def error(self, ui: float) -> NDArray[np.float64]:
         """Variance of what is not a rail's own symbol after least-squares gain, over that gain squared, shape ``(rails,)``."""
