@@ -99,6 +99,20 @@ def add_output_options(parser: argparse.ArgumentParser) -> None:
     group.add_argument("--theme", choices=("light", "dark"), default="light", help="of the picture (default light)")
 
 
+def add_journal_options(parser: argparse.ArgumentParser) -> None:
+    """The journal, and who listens to it."""
+    group = parser.add_argument_group("the journal")
+    group.add_argument(
+        "--journal", type=Path, metavar="FILE", help="JSON Lines of all that happens; .csv: readings only"
+    )
+    group.add_argument("--rotate-size", type=whole, metavar="BYTES", help="a new part before one grows beyond this")
+    group.add_argument("--rotate-daily", action="store_true", help="a new part each day (UTC)")
+    group.add_argument("--publish", metavar="ADDRESS", help="publish the journal's lines on this ZeroMQ address")
+    group.add_argument(
+        "--on-alarm", metavar="COMMAND", help="program to run for each alarm, given it as JSON on standard input"
+    )
+
+
 def number(text: str) -> float:
     """A finite number."""
     try:

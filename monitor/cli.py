@@ -6,11 +6,13 @@ from collections.abc import Sequence
 
 from monitor.arguments import (
     Parser,
+    add_journal_options,
     add_link_options,
     add_measure_options,
     add_output_options,
     add_sample_options,
     join_negative_numbers,
+    positive,
 )
 from monitor.errors import InputError, MonitorError
 from monitor.replay import INTERRUPTED, discard_standard_output, replay
@@ -75,7 +77,7 @@ def parser() -> argparse.ArgumentParser:
         "replay",
         help="measure a recording",
         description="Measures the link in a recording, or in raw samples on standard input.",
-        epilog="Exit status: 0 measured; 2 input or arguments unusable; 3 nothing to measure; 130 interrupted.",
+        epilog="Exit status: 0 measured; 1 a limit was broken; 2 input or arguments unusable; 3 nothing to measure; 130 interrupted.",
         allow_abbrev=False,
     )
     command.add_argument(
@@ -85,6 +87,10 @@ def parser() -> argparse.ArgumentParser:
     add_link_options(command)
     add_measure_options(command)
     add_output_options(command)
+    add_journal_options(command)
+    command.add_argument(
+        "--every", type=positive, default=1.0, metavar="S", help="a journal line each so often (default 1)"
+    )
     command.set_defaults(run=replay)
     live = commands.add_parser(
         "watch",

@@ -65,7 +65,7 @@ def document(outcome: Outcome) -> dict[str, Json]:
             "symbols_each": outcome.windows.symbols_each,
             "worst": reading_document(outcome.windows.worst),
         },
-        "alarms": [],
+        "alarms": list(outcome.alarms),
         "speed": {
             "samples_per_s": per_second,
             "times_real_time": None if per_second is None else per_second / info.sample_rate_hz,

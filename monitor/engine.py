@@ -225,7 +225,9 @@ class Engine:
                 found, self._looking = self._looking.result(), None
                 self._settle(found, last=False)
         elif self._head_samples >= max(need, self._next_look):
-            if self._options.aside is not None:
+            # a link that is given whole is placed at once, so that live and replayed it begins at the same sample
+            given = self._wanted.scheme is not None and rate is not None and self._wanted.pulse is not None
+            if self._options.aside is not None and not given:
                 self._searching = "looking at the first samples"
                 self._looking = self._options.aside.submit(
                     settle_link, list(self._head), self.sample_rate_hz, self._wanted
@@ -355,7 +357,7 @@ class Engine:
         document = reading_document(reading) or {}
         self._tell_alarms(self.alarms.update(document, seconds, sample))
         if seconds >= self._next_line:
-            self._next_line = seconds + self._options.every_s
+            self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
             self._emit("reading", sample=sample, **document)
 
     def _draw(self, sums: EyeSums) -> None:

@@ -1,21 +1,22 @@
 """`lidwatch replay`: measure a recording."""
 
 import argparse
+import contextlib
 import os
 import sys
 from contextlib import suppress
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.errors import InputError, NothingToMeasure
-from monitor.terminal import ProgressBar, SlowStartNotice, say
+from monitor.running import chain_options, link_and_limits
+from monitor.terminal import ProgressBar, SlowStartNotice
 
 if TYPE_CHECKING:
-    from dsp.chain import ChainOptions
-    from monitor.linkfile import LinkOptions
     from monitor.session import Outcome
 
-INTERRUPTED = 130
+LIMIT_BROKEN, INTERRUPTED = 1, 130
 
 
 def replay(parsed: argparse.Namespace) -> int:
@@ -27,16 +28,21 @@ def replay(parsed: argparse.Namespace) -> int:
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
         from monitor.interrupt import Interrupt, Interruptible
+        from monitor.judging import Judged
         from monitor.session import run
         from monitor.sources import SampleOptions, open_source
 
-    link = _link_options(parsed)
-    wanted, chain_options = link.wanted(), _chain_options(parsed, link)
+    link, rules = link_and_limits(parsed)
+    wanted, options = link.wanted(), replace(chain_options(parsed, link), window=parsed.window)
     samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration)
     with Interrupt() as interrupt, open_source(parsed.source, samples) as opened:
-        with ProgressBar(opened.info.samples) as bar:
+        judged = contextlib.nullcontext() if not rules and _no_journal(parsed) else Judged(parsed, opened, link, rules)
+        with ProgressBar(opened.info.samples) as bar, judged as judge:
             source = Interruptible(opened, interrupt)
-            outcome = run(source, wanted, chain_options, threads=parsed.threads, progress=bar.advance)
+            observe = judge.feed if judge is not None else None
+            outcome = run(source, wanted, options, threads=parsed.threads, progress=bar.advance, observe=observe)
+            if judge is not None:
+                outcome.alarms = judge.finish()
         outcome.interrupted = interrupt.asked
     _tell(outcome, as_json=parsed.json)
     if parsed.picture is not None:
@@ -49,40 +55,11 @@ def replay(parsed: argparse.Namespace) -> int:
         return INTERRUPTED
     if not outcome.measured:
         raise NothingToMeasure(f"{outcome.source.info.uri}: nothing to measure: {outcome.reason}")
-    return 0
+    return LIMIT_BROKEN if rules and outcome.alarms else 0
 
 
-def _link_options(parsed: argparse.Namespace) -> "LinkOptions":
-    from monitor.linkfile import LinkOptions, read_link_file
-
-    typed = LinkOptions(
-        parsed.symbol_rate,
-        None if parsed.scheme == "auto" else parsed.scheme,
-        None if parsed.pulse == "auto" else parsed.pulse,
-        parsed.carrier,
-        None if parsed.timing == "auto" else parsed.timing,
-        parsed.loop_bandwidth,
-    )
-    if parsed.link is None:
-        return typed
-    file = read_link_file(parsed.link)
-    if file.n_alarms:
-        rules = "1 alarm rule" if file.n_alarms == 1 else f"{file.n_alarms} alarm rules"
-        say(f"note: link file {parsed.link}: {rules} not judged: replay does not judge limits yet")
-    return typed.over(file.link)
-
-
-def _chain_options(parsed: argparse.Namespace, link: "LinkOptions") -> "ChainOptions":
-    from dsp.chain import ChainOptions
-
-    options = ChainOptions(
-        detector=link.timing, window=parsed.window, every=parsed.draw_every, target_ber=parsed.target_ber
-    )
-    if link.loop_bandwidth is None:
-        return options
-    from dataclasses import replace
-
-    return replace(options, timing_bandwidth=link.loop_bandwidth)
+def _no_journal(parsed: argparse.Namespace) -> bool:
+    return parsed.journal is None and parsed.publish is None and parsed.on_alarm is None
 
 
 def _tell(outcome: "Outcome", *, as_json: bool) -> None:

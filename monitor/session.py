@@ -4,6 +4,7 @@ import math
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -66,6 +67,8 @@ class Outcome:
         How long the run took.
     interrupted
         The user ended it before the stream did.
+    alarms
+        Those that there were, as the document lists them.
     """
 
     source: Source
@@ -87,6 +90,7 @@ class Outcome:
     coverage_pct: float | None = None
     elapsed_s: float = 0.0
     interrupted: bool = False
+    alarms: list[dict[str, Any]] = field(default_factory=list)
 
     @property
     def seconds(self) -> float:
@@ -153,6 +157,7 @@ def run(
     *,
     threads: int = 2,
     progress: Callable[[int], None] | None = None,
+    observe: Callable[[Block], None] | None = None,
 ) -> Outcome:
     """Measure a source from where it stands to its end.
 
@@ -166,6 +171,8 @@ def run(
         1 or 2: with 2 the eye's sums are made in a thread of their own.
     progress
         Is told the samples taken so far.
+    observe
+        Is given every block before it is measured.
 
     Raises
     ------
@@ -179,7 +186,7 @@ def run(
     try:
         head = _read_head(stream, rate, wanted)
         identified = settle_link(head, rate, wanted)
-        rest = _counting(_joined(head, stream), outcome, progress)
+        rest = _counting(_joined(head, stream), outcome, progress, observe)
         if isinstance(identified, NotFound):
             outcome.reason = identified.reason
             for _ in rest:
@@ -263,9 +270,16 @@ def _joined(head: list[Block], stream: Iterator[Block]) -> Iterator[Block]:
     yield from stream
 
 
-def _counting(stream: Iterator[Block], outcome: Outcome, progress: Callable[[int], None] | None) -> Iterator[Block]:
+def _counting(
+    stream: Iterator[Block],
+    outcome: Outcome,
+    progress: Callable[[int], None] | None,
+    observe: Callable[[Block], None] | None,
+) -> Iterator[Block]:
     """The blocks, counted into the outcome as each is done with."""
     for block in stream:
+        if observe is not None:
+            observe(block)
         outcome.samples_lost += block.lost
         outcome.gaps += block.lost > 0
         outcome.clipped += block.clipped

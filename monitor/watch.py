@@ -25,7 +25,9 @@ _JOIN_S = 10.0
 
 
 class Watch:
-    """Runs until the source ends, ``for_s`` seconds are over, `stop` is called or the engine fails; what views call is safe from any thread.
+    """Runs until the source ends, ``for_s`` seconds are over, `stop` is called or the engine fails.
+
+    What views call is safe from any thread.
 
     ``failure`` holds what ended it if that was an error.
     """

@@ -2,20 +2,17 @@
 
 import argparse
 import os
-import platform
 import sys
 from collections.abc import Callable
-from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from monitor.arguments import add_link_options, error_rate, not_negative, positive, whole
+from monitor.arguments import add_journal_options, add_link_options, error_rate, not_negative, positive, whole
 from monitor.errors import InputError
+from monitor.running import chain_options, link_and_limits, open_journal, start_fields
 from monitor.terminal import SlowStartNotice, say
-from monitor.version import version
 
 if TYPE_CHECKING:
-    from monitor.journal import Journal
     from monitor.sources.stream import LiveSource
     from monitor.watch import Watch
 
@@ -70,15 +67,7 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
     out.add_argument(
         "--painter", choices=("auto", "raster", "opengl"), default="auto", help="what draws the window's eye"
     )
-    out.add_argument("--journal", type=Path, metavar="FILE", help="JSON Lines of all that happens; .csv: readings only")
-    out.add_argument(
-        "--rotate-size", type=whole, metavar="BYTES", help="begin a new journal part before one grows beyond this"
-    )
-    out.add_argument("--rotate-daily", action="store_true", help="begin a new journal part each day (UTC)")
-    out.add_argument("--publish", metavar="ADDRESS", help="publish journal lines on this ZeroMQ address")
-    out.add_argument(
-        "--on-alarm", metavar="COMMAND", help="program to run for each alarm, with it as JSON on standard input"
-    )
+    add_journal_options(parser)
     parser.set_defaults(run=watch)
 
 
@@ -90,49 +79,29 @@ def watch(parsed: argparse.Namespace) -> int:
         import dsp.chain  # noqa: F401  # the kernels
         from monitor.watch import Watch
 
-    from dsp.chain import ChainOptions
-    from monitor.alarm_rules import parse_rules
-    from monitor.engine import EngineOptions
-    from monitor.linkfile import LinkOptions, read_link_file
+    from dataclasses import replace
 
-    link = LinkOptions(
-        parsed.symbol_rate,
-        None if parsed.scheme == "auto" else parsed.scheme,
-        None if parsed.pulse == "auto" else parsed.pulse,
-        parsed.carrier,
-        None if parsed.timing == "auto" else parsed.timing,
-        parsed.loop_bandwidth,
-    )
-    rules: tuple = ()  # type: ignore[type-arg]
-    if parsed.link is not None:
-        file = read_link_file(parsed.link)
-        link = link.over(file.link)
-        rules = parse_rules(file.alarms, where=f"link file {parsed.link}")
-    wanted = link.wanted()
+    from monitor.engine import EngineOptions
+
+    link, rules = link_and_limits(parsed)
     options = EngineOptions(
         window=parsed.window,
         every_s=parsed.every,
         stall_s=parsed.stall,
         rules=rules,
         display=view != "none",
-        chain=ChainOptions(
-            detector=link.timing,
-            timing_bandwidth=link.loop_bandwidth or 0.005,
-            every=parsed.draw_every,
-            target_ber=parsed.target_ber,
-        ),
+        chain=replace(chain_options(parsed, link), keep_total=False),
     )
     opener = _opener(parsed)
-    with _journal(parsed) as journal:
-        start = {
-            "version": version(),
-            "host": platform.node(),
-            "source": parsed.source,
-            "link": {name: getattr(link, name) for name in link.__slots__},
-            "limits": [rule.text for rule in rules],
-        }
+    with open_journal(parsed) as journal:
         running = Watch(
-            opener, wanted, options, keeper=journal, source_text=parsed.source, start_fields=start, for_s=parsed.for_s
+            opener,
+            link.wanted(),
+            options,
+            keeper=journal,
+            source_text=parsed.source,
+            start_fields=start_fields(parsed.source, link, rules),
+            for_s=parsed.for_s,
         )
         for warning in running.warnings:
             say(f"warning: {warning}")
@@ -201,22 +170,3 @@ def _opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":
     if not parsed.pace:
         raise InputError("--pace 0: a recording without pace is for lidwatch replay")
     return lambda: PacedSource(open_source(source, samples), parsed.pace)
-
-
-def _journal(parsed: argparse.Namespace) -> "Journal":
-    from monitor.journal import Journal, Rotation, Sink
-
-    sinks: list[Sink] = []
-    if parsed.publish is not None:
-        from monitor.publisher import Publisher
-
-        publisher = Publisher(parsed.publish)
-        for note in publisher.notes:
-            say(f"warning: {note}")
-        sinks.append(publisher)
-    if parsed.on_alarm is not None:
-        from monitor.alarm_command import AlarmCommand
-
-        sinks.append(AlarmCommand(parsed.on_alarm, failed=lambda text: say(f"warning: {text}")))
-    rotation = Rotation(parsed.rotate_size, parsed.rotate_daily)
-    return Journal(parsed.journal, now=lambda: datetime.now(UTC), rotation=rotation, sinks=sinks)
