@@ -21,8 +21,9 @@ FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from 
 UNHURRIED_BD = 50_000.0  # up to this symbol rate every sample is searched
 WAVE_PHASES, CORNER_PHASES = 8, 64  # points a symbol at which the wave is kept
 
-# Mean lateness of the Gardner loop over BnT by roll-off, middle sample half-way between strobes; measured by tools/bench.py
-_GARDNER_LATENESS = ((0.2, 0.25, 0.35, 0.5, 0.75, 1.0), (0.0, 0.0, 0.0, 0.0, 0.0, 0.0))
+# Mean lateness of the Gardner loop over BnT by roll-off, for one rail (two rails: half), middle sample half-way between
+# strobes; measured by tools/bench.py
+_GARDNER_LATENESS = ((0.2, 0.25, 0.35, 0.5, 0.75, 1.0), (3.4, 1.84, 0.69, 0.22, 0.03, 0.0))
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,7 +77,7 @@ class Chain:
     """Measures one link in a stream of blocks, however the stream is cut.
 
     Samples are worked on in chunks of fixed length, counted from the stream's start or last gap. ``on_window`` gets the sums of each
-    full window, in the lane; `total` holds all of them once `finish` returned.
+    full window, in the lane, ``on_event`` each gain or loss of lock as it happens; `total` holds all of them once `finish` returned.
     """
 
     def __init__(
@@ -89,6 +90,7 @@ class Chain:
         options: ChainOptions | None = None,
         lane: Lane | None = None,
         on_window: Callable[[EyeSums], None] | None = None,
+        on_event: Callable[[LockEvent], None] | None = None,
     ) -> None:
         self.link = link
         self.options = options or ChainOptions()
@@ -101,6 +103,7 @@ class Chain:
         )
         self._lane = lane or AtOnce()
         self._on_window = on_window
+        self._on_event = on_event
         self._chunk = 2 ** min(max(round(math.log2(rate * 0.02)), 9), 15)
         self._buffer = np.empty(self._chunk, np.complex64 if complex_in else np.float32)
         self._filled = 0
@@ -185,6 +188,7 @@ class Chain:
         if self.options.detector == "gardner" and self.link.pulse.family in ("rrc", "rc"):
             rolloffs, values = _GARDNER_LATENESS
             lateness = float(np.interp(self.link.pulse.number or 1.0, rolloffs, values)) * self.options.timing_bandwidth
+            lateness /= scheme.rails
         return Context(
             self.link.symbol_rate_hz,
             self._sps / self._plan.sps,
@@ -253,7 +257,7 @@ class Chain:
         filters = matched_filter(self.link, front)
         delay = (found.start.instant / front.interpolate - filters.delay) * front.decimate - self._front.delay
         first = max(round(self._position - self._kept_samples * front.decimate + delay), 0)
-        self.events.append(LockEvent("gained", first, f"MER {found.mer_db:.1f} dB"))
+        self._tell(LockEvent("gained", first, f"MER {found.mer_db:.1f} dB"))
         if self.acquired_at is None:
             self.acquired_at = first
         self._locked_from = first
@@ -322,12 +326,17 @@ class Chain:
         self._end_run(sample, reason)
 
     def _end_run(self, sample: int, reason: str) -> None:
-        self.events.append(LockEvent("lost", sample, reason))
         self.locked_samples += max(sample - self._locked_from, 0)
         self._tracker = None
         meter = self._meter
         assert meter is not None
         self._lane.do(lambda: meter.end_segment(keep=self.options.keep_total))
+        self._tell(LockEvent("lost", sample, reason))
+
+    def _tell(self, event: LockEvent) -> None:
+        self.events.append(event)
+        if self._on_event is not None:
+            self._on_event(event)
 
     def _break(self, reason: str) -> None:
         """End the run of samples: work on what is there, settle the sums, begin afresh."""
