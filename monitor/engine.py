@@ -13,7 +13,7 @@ from scipy.special import stdtrit
 
 from dsp.acquisition import NotFound
 from dsp.block import Block
-from dsp.chain import Chain, ChainOptions
+from dsp.chain import Chain, ChainOptions, LockEvent
 from dsp.errors import DspError
 from dsp.eye import EyeSums
 from dsp.figures import Figures, window_opening
@@ -99,7 +99,6 @@ class Engine:
         self._next_look = 0
         self._looking: Future[Identified | NotFound] | None = None
         self._searching = "waiting for samples"
-        self._events_told = 0
         self._samples = 0
         self.samples_lost = 0
         self._gaps: deque[float] = deque(maxlen=256)
@@ -184,13 +183,11 @@ class Engine:
             self._try_head(last=True)
         if self._chain is not None:
             self._chain.finish()
-            self._tell_locks()
 
     def changed(self, *, sample_rate_hz: float | None = None, complex_in: bool | None = None, why: str) -> None:
         """The sender restarted or changed what it sends: begin anew with the link as given."""
         if self._chain is not None:
             self._chain.finish()
-            self._tell_locks()
         position = self.position
         if sample_rate_hz is not None and sample_rate_hz != self.sample_rate_hz:
             # seconds go on from where they were
@@ -266,8 +263,8 @@ class Engine:
             half_band_hz=found.half_band_hz,
             options=replace(self._options.chain, window=part, keep_total=False),
             on_window=self._part,
+            on_event=self._lock_event,
         )
-        self._events_told = 0
         self._searching = f"{link.scheme.name} at {link.symbol_rate_hz:.6g} Bd"
         head, self._head, self._head_samples = self._head, [], 0
         for block in head:
@@ -276,34 +273,27 @@ class Engine:
     def _push(self, block: Block) -> None:
         assert self._chain is not None
         self._chain.push(block)
-        self._tell_locks()
         lost = self._last_lock_loss
         if lost is not None and self._identified is not None and self._identified.found and self.seconds - lost > 5.0:
             # what was found by itself may have changed: look at it anew
             self._chain.finish()
-            self._tell_locks()
             self._chain, self._last_lock_loss = None, None
             self._next_look = 0
             self._reset_measures()
 
-    def _tell_locks(self) -> None:
-        assert self._chain is not None
-        for event in self._chain.events[self._events_told :]:
-            gained = event.state == "gained"
-            at = event.sample / self.sample_rate_hz
-            self._locks.append((at, gained))
-            self._last_lock_loss = None if gained else at
-            self._emit("lock", sample=event.sample, state=event.state, why=event.reason)
-            if event.reason != "end of stream":
-                self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
-            if not gained:
-                self._reading, self._opening = None, None
-                self._blocks.clear()
-                self._openings.clear()
-                self._block = None
-        self._events_told = len(self._chain.events)
-        if not self._chain.locked:
-            self._searching = f"{self._chain.link.scheme.name}: {self._chain.last_reason}"
+    def _lock_event(self, event: LockEvent) -> None:
+        gained = event.state == "gained"
+        at = event.sample / self.sample_rate_hz
+        self._locks.append((at, gained))
+        self._last_lock_loss = None if gained else at
+        self._emit("lock", sample=event.sample, state=event.state, why=event.reason)
+        if event.reason != "end of stream":
+            self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
+        if not gained:
+            self._reading, self._opening = None, None
+            self._blocks.clear()
+            self._openings.clear()
+            self._block = None
 
     # -- measuring -----------------------------------------------------------------------------------------------------
 
@@ -427,6 +417,8 @@ class Engine:
         """Everything a view shows, as it is now."""
         chain = self._chain
         locked = chain is not None and chain.locked
+        if chain is not None and not locked:
+            self._searching = f"{chain.link.scheme.name}: {chain.last_reason}"
         link_text = ""
         if chain is not None:
             link = chain.link
