@@ -159,6 +159,9 @@ class Engine:
                 self._push(block)
         except DspError as error:
             raise InputError(str(error)) from None
+        if self._reading is None:
+            # what cannot be known counts towards no alarm's delay
+            self._tell_alarms(self.alarms.update(None, self.seconds, self.position))
         if block.clipped:
             share = 100.0 * block.clipped / max(block.samples.size, 1)
             self._tell_alarms(self.alarms.condition("clipping", share > 0.01, self.seconds, self.position, share))
@@ -169,6 +172,7 @@ class Engine:
 
     def idle(self, for_s: float) -> None:
         """No samples have come for ``for_s`` seconds of the wall clock."""
+        self._tell_alarms(self.alarms.advance(self.seconds + for_s, self.position))
         if for_s >= self._options.stall_s and not self._stalled:
             self._stalled = True
             self.notice(f"no samples for {for_s:.0f} s")
@@ -290,6 +294,7 @@ class Engine:
         if event.reason != "end of stream":
             self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
         if not gained:
+            self._tell_alarms(self.alarms.update(None, at, event.sample))
             self._reading, self._opening = None, None
             self._blocks.clear()
             self._openings.clear()
