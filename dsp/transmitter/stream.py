@@ -68,7 +68,7 @@ def transmit_blocks(spec: TransmitSpec, block_samples: int = _CHUNK) -> Iterator
 
 
 def _cut(spec: TransmitSpec, size: int) -> Iterator[Transmission]:
-    sender = _Sender(spec)
+    sender = Sender(spec)
     pending: list[Samples] = []
     held = 0
     made = 0
@@ -87,7 +87,20 @@ def _cut(spec: TransmitSpec, size: int) -> Iterator[Transmission]:
         yield Transmission(samples, symbols, instants, bits, start, sender.gain, sender.noise_rms)
 
 
-class _Symbols:
+def noise_per_unit(spec: TransmitSpec) -> float:
+    """Rms of the noise in a sample (of its complex value for I/Q) at a gain of 1; 0 without noise."""
+    if spec.snr_db is None:
+        return 0.0
+    scheme = spec.link_scheme
+    frequency = scheme.kind == "frequency"
+    energy = 1.0 if frequency else scheme.symbol_energy()
+    spread = spec.samples_per_symbol
+    if not frequency:
+        spread = 1.0 if spec.pulse.family == "rc" else spread * pulse_energy(spec.pulse)
+    return math.sqrt(energy * spread / 10 ** (spec.snr_db / 10)) * (0.5 if spec.passband else 1.0)
+
+
+class Symbols:
     """The symbols in order, from index ``first`` on: before 0 they lead in, from 0 on they are the stream's own.
 
     The lead-in has generators of its own and is drawn backwards from symbol -1, so that its length changes nothing
@@ -133,10 +146,14 @@ class _Symbols:
         spec = self._spec
         moves = np.zeros(due.size)
         if spec.jitter_rms_ui:
-            moves += np.clip(self._normals(self._jitter, due), -8.0, 8.0) * spec.jitter_rms_ui
+            moves += self.white(due) * spec.jitter_rms_ui
         if spec.jitter_sine_ui:
             moves += spec.jitter_sine_ui * np.sin(2 * np.pi * spec.jitter_sine_hz * seconds)
         return moves
+
+    def white(self, due: Floats) -> Floats:
+        """White jitter of rms 1 and at most 8 of the symbols due at ``due``."""
+        return np.clip(self._normals(self._jitter, due), -8.0, 8.0)
 
     @staticmethod
     def _normals(pair: tuple[np.random.Generator, np.random.Generator], due: Floats) -> Floats:
@@ -144,13 +161,19 @@ class _Symbols:
 
     def turns(self, due: Floats) -> Floats:
         """Carrier phase in radians at the symbols due at ``due``."""
-        steps = self._normals(self._phase, due) * math.radians(self._spec.phase_noise_deg)
+        return self.walk(due, self._spec.phase_noise_deg)
+
+    def walk(self, due: Floats, step_deg: float) -> Floats:
+        """The same with a step of ``step_deg`` rms."""
+        steps = self._normals(self._phase, due) * math.radians(step_deg)
         walked = np.cumsum(np.concatenate(([self._turned], steps)))[1:]
         self._turned = float(walked[-1])
         return walked
 
 
-class _Sender:
+class Sender:
+    """Makes the samples of one unchanging specification."""
+
     def __init__(self, spec: TransmitSpec) -> None:
         self._spec = spec
         self._scheme = spec.link_scheme
@@ -160,7 +183,7 @@ class _Sender:
         self._behind = self._shape.after + math.ceil(far_echo) + 3
         self._ahead = self._shape.before + 3
         first = -self._behind - 2
-        self._symbols = _Symbols(spec, first)
+        self._symbols = Symbols(spec, first)
         self._rails = [Rail(self._shape, first) for _ in range(2 if self._complex else 1)]
         self._theta = np.zeros(0)
         self._theta_first = first
@@ -179,13 +202,7 @@ class _Sender:
     def _set_levels(self) -> None:
         spec, scheme = self._spec, self._scheme
         frequency = scheme.kind == "frequency"
-        per_unit = 0.0
-        if spec.snr_db is not None:
-            energy = 1.0 if frequency else scheme.symbol_energy()
-            spread = spec.samples_per_symbol
-            if not frequency:
-                spread = 1.0 if spec.pulse.family == "rc" else spread * pulse_energy(spec.pulse)
-            per_unit = math.sqrt(energy * spread / 10 ** (spec.snr_db / 10)) * (0.5 if spec.passband else 1.0)
+        per_unit = noise_per_unit(spec)
         peak = 1.0
         if not frequency:
             turned = scheme.rotation or spec.carrier_hz or spec.carrier_phase_deg or spec.phase_noise_deg or spec.echoes

@@ -226,6 +226,21 @@ class Rail:
         for name in ("_values", "_moves", "_settled", "_slopes", "_edges", "_state", "_weights"):
             setattr(self, name, getattr(self, name)[count:].copy())
 
+    @property
+    def total(self) -> float:
+        """What the rail of a frequency scheme has added up to at its last symbol; 0 for others."""
+        return self._total
+
+    def lift(self, amount: float) -> None:
+        """Add a constant to all that the rail of a frequency scheme gives."""
+        self._total += amount
+        self._settled = self._settled + amount
+
+    def rename(self, earlier: int) -> None:
+        """Count symbols and time from ``earlier`` symbols later on, so that long streams keep their precision."""
+        self._first -= earlier
+        self._edges = self._edges - earlier
+
     def at(self, u: Floats) -> Floats:
         """The waveform at the instants ``u``, shape ``(n,)``, in symbols of the transmitter's clock; same shape."""
         from dsp._kernels.transmit import sum_held, sum_moved, sum_regular
