@@ -6,7 +6,9 @@
     python tools/bench.py --only NAME   that one and what it is compared with; may be repeated
 
 The rounds go through all benchmarks in turn, so that a slow spell of the machine hits them alike; the best round
-counts. Inputs are made before, and one call goes ahead uncounted. References run on one thread. Nothing is asserted.
+counts. Inputs are made before, and one call goes ahead uncounted. References run on one thread. Behind the rates come
+what is measured once: memory, a whole command's time, the loops' timing against bound and theory. All of it is measured
+in that run; nothing is asserted.
 """
 
 import argparse
@@ -20,11 +22,14 @@ from dataclasses import dataclass
 from functools import cache
 from importlib import metadata
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 from threadpoolctl import threadpool_limits
+
+if TYPE_CHECKING:
+    from dsp.tracking import Detector
 
 ROUNDS, QUICK_ROUNDS = 7, 3
 QUICK_SHARE = 8
@@ -232,12 +237,468 @@ REFERENCES = (
 
 # --- the project's own: kernels, stages, the whole chain ------------------------------------------
 
-PROJECT: tuple[Benchmark, ...] = ()
+
+def rail_filter(size: int) -> Callable[[], Any]:
+    """The streaming filter, one rail."""
+    from dsp.filters import RailFilter
+
+    x, stage = real_noise(size), RailFilter(low_pass().astype(np.float64), 1)
+    return lambda: stage.push((x,))
+
+
+def rail_filter_complex(size: int) -> Callable[[], Any]:
+    """The streaming filter, two rails."""
+    from dsp.filters import RailFilter, split
+
+    rails, stage = split(complex_noise(size)), RailFilter(low_pass().astype(np.float64), 2)
+    return lambda: stage.push(rails)
+
+
+def decimator(size: int) -> Callable[[], Any]:
+    """The same filter, every fourth output."""
+    from dsp.filters import RailFilter
+
+    x, stage = real_noise(size), RailFilter(low_pass().astype(np.float64), 1, decimate=4)
+    return lambda: stage.push((x,))
+
+
+def upfirdn(size: int) -> Callable[[], Any]:
+    """The same filter, every fourth output, by scipy."""
+    from scipy import signal
+
+    x, taps = real_noise(size), low_pass()
+    return lambda: signal.upfirdn(taps, x, down=4)
+
+
+def interpolate(size: int) -> Callable[[], Any]:
+    """Eight-tap least-squares interpolation at instants of any spacing."""
+    from dsp._kernels.raster import resample_real
+    from dsp.interpolation import weights
+
+    x = real_noise(size + 16)
+    at = instants(size + 1) + 4.0
+    out = np.empty((1, at.size - 1), np.float32)
+    table = weights(0.25)
+    return lambda: resample_real(x, table, at, 0.0, 1.0, 0.0, out)
+
+
+def class_raster(size: int) -> Callable[[], Any]:
+    """Traces of two-level symbols: 8 phases a symbol interpolated to 64 columns, 4 classes, 1024 rows."""
+    from dsp._kernels.raster import fill
+    from dsp.interpolation import expander
+
+    count = size // 64
+    wave = np.random.default_rng(3).uniform(-1.2, 1.2, (8, count + 16)).astype(np.float32)
+    bases = np.random.default_rng(4).integers(0, 4, count).astype(np.uint64) * np.uint64(1024)
+    counts = np.zeros((64, 4 * 1024), np.uint32)
+    weigh = expander(8, 0.2)
+    return lambda: fill(wave, 8, count, weigh, bases, bases, False, 1, 0, 1024, 200.0, 512.0, counts, counts)
+
+
+def loops(size: int) -> Callable[[], Any]:
+    """Timing and carrier loops on filtered QPSK at 4 samples a symbol, the derivative detector."""
+    from dataclasses import replace
+
+    samples = qpsk_stream(size)
+    filtered, start = acquired_stream(samples)
+    from dsp.link import find_scheme
+    from dsp.tracking import Tracker, tables_for
+
+    def call() -> None:
+        tracker = Tracker(
+            find_scheme("qpsk"), replace(start), tables_for(4.0, 0.675), timing_bandwidth=0.005, carrier_bandwidth=0.005
+        )
+        for i in range(0, size, 32768):
+            tracker.push(tuple(rail[i : i + 32768] for rail in filtered))
+
+    return call
+
+
+def acquired_stream(samples: NDArray[np.complex64]) -> tuple[Any, Any]:
+    """A QPSK stream (RRC 0.35, 4 samples a symbol) behind its matched filter, and where its loops begin."""
+    from dsp.acquisition import Acquired, acquire
+    from dsp.filters import Oscillator
+    from dsp.frontend import FrontEnd, matched_filter, plan
+    from dsp.link import Link, find_scheme
+    from dsp.pulses import Pulse
+
+    link = Link(find_scheme("qpsk"), 4.0, 1.0, Pulse("rrc", 0.35))
+    front = plan(link, complex_in=True)
+    rails = FrontEnd(link, front).push(samples)
+    head = tuple(rail[:16384] for rail in rails)
+    found = acquire(link, front, head, detector=None, timing_bandwidth=0.005, carrier_bandwidth=0.005)
+    if not isinstance(found, Acquired):
+        raise Unavailable(f"the stream was not found: {found.reason}")
+    return matched_filter(link, front).push(Oscillator(found.carrier).push(rails)), found.start
+
+
+@cache
+def scratch() -> Path:
+    """A folder for recordings, removed at the end."""
+    import atexit
+    import tempfile
+
+    folder = tempfile.TemporaryDirectory(prefix="bench-")
+    atexit.register(folder.cleanup)
+    return Path(folder.name)
+
+
+def qpsk_file(size: int) -> Path:
+    """The QPSK stream as a raw file of complex float32."""
+    path = scratch() / f"qpsk-{size}.cf32"
+    if not path.exists():
+        qpsk_stream(size).tofile(path)
+    return path
+
+
+def chain(size: int, threads: int, every: int) -> Callable[[], Any]:
+    """A raw file in, the JSON document out, in this process."""
+    from dsp.chain import ChainOptions
+    from dsp.identify import Wanted
+    from dsp.link import find_scheme
+    from dsp.pulses import Pulse
+    from monitor.document import to_json
+    from monitor.session import run
+    from monitor.sources import SampleOptions, open_source
+
+    path = qpsk_file(size)
+    wanted = Wanted(find_scheme("qpsk"), 250_000.0, Pulse("rrc", 0.35))
+
+    def call() -> str:
+        with open_source(str(path), SampleOptions(1e6, "cf32_le")) as source:
+            outcome = run(source, wanted, ChainOptions(every=every), threads=threads)
+        if not outcome.measured:
+            raise Unavailable(f"the chain measured nothing: {outcome.reason}")
+        return to_json(outcome)
+
+    return call
+
+
+def _chain_benchmark(threads: int, every: int) -> Benchmark:
+    share, more = ("100 %", "") if every == 1 else ("25 %", "-quarter")
+    hands = "one thread" if threads == 1 else "two threads"
+    return Benchmark(
+        f"chain-{threads}{more}",
+        f"the whole chain, file to JSON: same stream as complex float32, all figures, {share} of traces, {hands}",
+        "samples",
+        4_000_000,
+        lambda size: chain(size, threads, every),
+        "symtrack",
+    )
+
+
+PROJECT: tuple[Benchmark, ...] = (
+    Benchmark("rail-filter", "dsp.filters: real FIR, 41 taps", "samples", 4_000_000, rail_filter, "lfilter"),
+    Benchmark(
+        "rail-filter-complex",
+        "dsp.filters: same filter, two rails",
+        "samples",
+        2_000_000,
+        rail_filter_complex,
+        "lfilter-complex",
+    ),
+    Benchmark("upfirdn", "scipy.signal.upfirdn: same filter, every 4th output", "samples", 4_000_000, upfirdn),
+    Benchmark("decimator", "dsp.filters: same filter, every 4th output", "samples", 4_000_000, decimator, "upfirdn"),
+    Benchmark(
+        "resample", "dsp: eight taps, real, one output a sample, float32", "outputs", 2_000_000, interpolate, "interp"
+    ),
+    Benchmark(
+        "raster",
+        "dsp: class raster, 64 columns interpolated from 8 phases, 4 classes of 1024 rows",
+        "points",
+        4_000_000,
+        class_raster,
+        "histogram2d",
+    ),
+    Benchmark(
+        "loops",
+        "dsp.tracking: timing and carrier behind the matched filter, QPSK",
+        "samples",
+        4_000_000,
+        loops,
+        "symtrack",
+    ),
+    *(_chain_benchmark(threads, every) for threads in (1, 2) for every in (1, 4)),
+)
+
+# --- what is measured otherwise: memory, whole commands, the loops' timing -------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class Measurement:
+    """Something measured once rather than timed in rounds.
+
+    Attributes
+    ----------
+    name
+        What ``--only`` takes.
+    what
+        What is measured, with its settings.
+    take
+        Told whether to be quick; returns rows of ``case``, ``value``, ``unit`` and what the value is held against. Raises
+        `Unavailable`.
+    """
+
+    name: str
+    what: str
+    take: Callable[[bool], list[dict[str, Any]]]
+    against: str | None = None
+
+
+def command(arguments: Sequence[str]) -> tuple[float, float]:
+    """Run lidwatch in a process of its own: wall seconds, and its peak resident memory in MB.
+
+    Raises Unavailable where the system cannot tell or the command fails.
+    """
+    import os
+    import subprocess
+
+    if not hasattr(os, "wait4"):
+        raise Unavailable("this system does not tell a process's memory")
+    code = "import sys; from monitor.cli import main; sys.exit(main(sys.argv[1:]))"
+    began = time.perf_counter()
+    process = subprocess.Popen(
+        [sys.executable, "-c", code, *arguments],
+        cwd=Path(__file__).parents[1],
+        stdout=subprocess.DEVNULL,
+        stderr=subprocess.PIPE,
+        text=True,
+    )
+    assert process.stderr is not None
+    told = process.stderr.read()
+    _, status, usage = os.wait4(process.pid, 0)
+    seconds = time.perf_counter() - began
+    process.returncode = os.waitstatus_to_exitcode(status)
+    process.stderr.close()
+    if process.returncode != 0:
+        raise Unavailable(f"lidwatch {' '.join(arguments)} ended with {process.returncode}: {told.strip()[-200:]}")
+    # kilobytes on Linux, bytes on macOS
+    return seconds, usage.ru_maxrss / (1e6 if sys.platform == "darwin" else 1e3)
+
+
+def memory(quick: bool) -> list[dict[str, Any]]:
+    """Peak memory of a replay, for a file and one ten times as long."""
+    size = 2_000_000 // (QUICK_SHARE if quick else 1)
+    short = qpsk_stream(size)
+    rows: list[dict[str, Any]] = []
+    for times in (1, 10):
+        path = scratch() / f"memory-{times}.cf32"
+        with path.open("wb") as file:
+            for _ in range(times):
+                file.write(short.tobytes())
+        seconds, peak = command(
+            ["replay", str(path), "--rate", "1e6", "--format", "cf32", "--symbol-rate", "250e3", "--scheme", "qpsk",
+             "--pulse", "rrc:0.35", "--json"]
+        )  # fmt: skip
+        rows.append({"case": f"{times * size * 8 / 1e6:.0f} MB file", "value": peak, "unit": "MB", "seconds": seconds})
+        path.unlink()
+    rows[1]["against"], rows[1]["ratio"] = rows[0]["case"], rows[1]["value"] / rows[0]["value"]
+    return rows
+
+
+def replay(quick: bool) -> list[dict[str, Any]]:
+    """From command to picture: a minute of a 9600 baud link at 48 kHz, with the link given and found; best of three."""
+    import soundfile
+
+    from dsp.pulses import Pulse
+    from dsp.transmitter import TransmitSpec, transmit
+
+    seconds = 60 // (QUICK_SHARE if quick else 1)
+    sent = transmit(
+        TransmitSpec(
+            scheme="pam2", symbol_rate_hz=9600.0, sample_rate_hz=48_000.0, pulse=Pulse("rrc", 0.35),
+            symbols=9600 * seconds, snr_db=20.0,
+        )
+    )  # fmt: skip
+    path = scratch() / "minute.wav"
+    soundfile.write(path, sent.samples, 48_000, subtype="PCM_16")
+    picture = ["--picture", str(scratch() / "minute.png")]
+    given = ["--symbol-rate", "9600", "--scheme", "pam2", "--pulse", "rrc:0.35"]
+    rows = []
+    for case, more in (("link given", given), ("link found", [])):
+        times = [command(["replay", str(path), *more, *picture])[0] for _ in range(4)]
+        rows.append({"case": f"{seconds} s, {case}", "value": min(times[1:]), "unit": "s", "first": times[0]})
+    return rows
+
+
+def timing_errors(
+    scheme_name: str,
+    detector: "Detector",
+    rolloff: float,
+    snr_db: float | None,
+    bandwidth: float,
+    symbols: int,
+    seed: int,
+) -> NDArray[np.float64]:
+    """Instants of a settled loop less the transmitter's true ones, UI, late positive: 4 samples a symbol, RRC, behind acquisition.
+
+    Raises Unavailable where acquisition finds nothing or the loop slipped.
+    """
+    from dsp.acquisition import Acquired, acquire
+    from dsp.filters import Oscillator
+    from dsp.frontend import FrontEnd, matched_filter, plan
+    from dsp.link import Link, find_scheme
+    from dsp.pulses import Pulse
+    from dsp.tracking import Tracker, tables_for
+    from dsp.transmitter import TransmitSpec, transmit
+
+    pulse = Pulse("rrc", rolloff)
+    sent = transmit(
+        TransmitSpec(
+            scheme=scheme_name,
+            symbol_rate_hz=1.0,
+            sample_rate_hz=4.0,
+            pulse=pulse,
+            symbols=symbols,
+            snr_db=snr_db,
+            seed=seed,
+        )
+    )
+    link = Link(find_scheme(scheme_name), 4.0, 1.0, pulse)
+    carrier = link.scheme.kind == "carrier"
+    front = plan(link, complex_in=carrier)
+    rails = FrontEnd(link, front).push(sent.samples)
+    found = acquire(
+        link, front, tuple(rail[:16384] for rail in rails), detector=detector, timing_bandwidth=bandwidth, carrier_bandwidth=0.005
+    )  # fmt: skip
+    if not isinstance(found, Acquired):
+        raise Unavailable(f"{scheme_name} at roll-off {rolloff}: {found.reason}")
+    filters = matched_filter(link, front)
+    tracker = Tracker(
+        link.scheme,
+        found.start,
+        tables_for(4.0, 0.5 * (1 + rolloff)),
+        timing_bandwidth=bandwidth,
+        carrier_bandwidth=0.005,
+    )
+    track = tracker.push(filters.push(Oscillator(found.carrier).push(rails) if carrier else rails))
+    at = track.instants[:-1] - filters.delay
+    first = round((at[0] - sent.instants[0]) / 4.0)
+    n = min(at.size, sent.instants.size - first)
+    errors = (at[:n] - sent.instants[first : first + n]) / 4.0
+    settled: NDArray[np.float64] = errors[round(15 / bandwidth) :]
+    if np.abs(settled).max() > 0.5:
+        raise Unavailable(f"{detector} slipped at roll-off {rolloff}")
+    return settled
+
+
+def timing_bound(rolloff: float, bandwidth: float, snr: float) -> float:
+    """Variance in UI^2 that no timing loop of BnT ``bandwidth`` beats at Es/N0 ``snr``, RRC pulse.
+
+    The modified Cramer-Rao bound: A. N. D'Andrea, U. Mengali and R. Reggiannini, IEEE Trans. Commun. 42(2/3/4), 1994,
+    with 1/(2 BnT) symbols observed.
+    """
+    xi = 1 / 12 + rolloff**2 * (0.25 - 2 / np.pi**2)
+    return float(bandwidth / (4 * np.pi**2 * xi * snr))
+
+
+def mueller_muller_variance(rolloff: float, bandwidth: float, snr: float) -> float:
+    """Linear theory of the Mueller-Mueller loop: white detector noise over its slope; M. Rice, 2009, eq. 8.50."""
+    slope = -np.pi / 2 if rolloff == 0.5 else -2 * np.cos(np.pi * rolloff) / (1 - 4 * rolloff**2)
+    return float(2 * bandwidth / snr / slope**2)
+
+
+def gardner_correlation(rolloff: float, snr: float | None, lags: NDArray[np.int64]) -> NDArray[np.float64]:
+    """Autocorrelation at the lock point of Gardner's detector on one binary rail of unit power, by whole symbols.
+
+    The output is s(k-1/2) d(k), d the strobes' difference, with noise of variance 1/snr and correlation p, the received
+    pulse, in both. Of a product of Gaussians the correlation is that of the factors' pairings; binary data takes off its
+    fourth cumulant, -2 a symbol. Derived here; at lag 0 the pattern part is 2 (1 - a/2) - 4 p(1/2)^2.
+    """
+    from dsp.pulses import raised_cosine
+
+    def pulse(t: ArrayLike) -> NDArray[np.float64]:
+        return raised_cosine(t, rolloff)
+
+    around = np.arange(-400, 401)
+    middle = np.array([pulse(around - 0.5) @ pulse(around + lag - 0.5) for lag in lags])
+    step = np.where(lags == 0, 2.0, np.where(np.abs(lags) == 1, -1.0, 0.0))
+    crossed = (pulse(lags + 0.5) - pulse(lags - 0.5)) ** 2
+    half = float(pulse(0.5))
+    fourth = np.where(lags == 0, -4.0, np.where(np.abs(lags) == 1, 2.0, 0.0)) * half**2
+    result = middle * step - crossed + fourth
+    if snr is not None:
+        same = 2.0 * (lags == 0)
+        result = result + (middle * step + same - 2 * crossed) / snr + (same - crossed) / snr**2
+    return np.asarray(result)
+
+
+def gardner_variance(rolloff: float, bandwidth: float, snr: float | None, rails: int) -> float:
+    """Linear theory of the Gardner loop, noise and pattern noise: the detector's spectrum through the loop; None: no noise."""
+    from dsp.loops import exact_gains, transfer
+
+    lags = np.arange(-60, 61)
+    frequency = np.geomspace(1e-7, 0.5, 8001)
+    density = np.cos(2 * np.pi * frequency[:, None] * lags) @ gardner_correlation(rolloff, snr, lags)
+    slope = 2 * np.sin(np.pi * rolloff / 2) / (1 - rolloff**2 / 4)  # Rice, eq. 8.45
+    response = np.abs(transfer(frequency, exact_gains(bandwidth))) ** 2
+    total = 2 * float(np.trapezoid(np.maximum(density, 0.0) * response, frequency))
+    return float(total / (rails * slope**2))
+
+
+def jitter(quick: bool) -> list[dict[str, Any]]:
+    """Timing jitter of the detectors against the bound and their own theory."""
+    rolloff, bandwidth = 0.35, 0.005
+    symbols = 1_000_000 // (QUICK_SHARE if quick else 1)
+    rows = []
+    for snr_db in (10.0, 20.0):
+        snr = 10 ** (snr_db / 10)
+        bound = timing_bound(rolloff, bandwidth, snr)
+        theory: dict[Detector, float] = {
+            "derivative": bound,
+            "mueller-muller": mueller_muller_variance(rolloff, bandwidth, snr),
+            "gardner": gardner_variance(rolloff, bandwidth, snr, rails=2),
+        }
+        for detector, variance in theory.items():
+            rms = float(np.std(timing_errors("qpsk", detector, rolloff, snr_db, bandwidth, symbols, seed=1)))
+            rows.append(
+                {
+                    "case": f"{detector}, Es/N0 {snr_db:g} dB",
+                    "value": rms,
+                    "unit": "UI rms",
+                    "against": "own theory" if detector != "derivative" else "bound",
+                    "ratio": rms / variance**0.5,
+                    "theory": variance**0.5,
+                    "bound": bound**0.5,
+                    "above_bound_db": 20 * float(np.log10(rms / bound**0.5)),
+                    "symbols": symbols,
+                }
+            )
+    return rows
+
+
+def lateness(quick: bool) -> list[dict[str, Any]]:
+    """How late the Gardner loop is on the mean, over BnT, without noise; and its pattern jitter against theory."""
+    bandwidth, symbols = 0.005, 400_000 // (QUICK_SHARE if quick else 1)
+    rows = []
+    for scheme, rails in (("pam2", 1), ("qpsk", 2)):
+        for rolloff in (0.2, 0.25, 0.35, 0.5, 0.75, 1.0):
+            errors = timing_errors(scheme, "gardner", rolloff, None, bandwidth, symbols, seed=2)
+            rows.append(
+                {
+                    "case": f"{scheme}, roll-off {rolloff:g}",
+                    "value": float(errors.mean()) / bandwidth,
+                    "unit": "of BnT",
+                    "rms": float(errors.std()),
+                    "theory": gardner_variance(rolloff, bandwidth, None, rails) ** 0.5,
+                }
+            )
+    return rows
+
+
+MEASUREMENTS: tuple[Measurement, ...] = (
+    Measurement("memory", "peak memory of lidwatch replay, QPSK, complex float32", memory),
+    Measurement("replay", "lidwatch replay of a 48 kHz recording, command to picture, warm cache", replay),
+    Measurement("jitter", "timing jitter of settled loops: QPSK, RRC 0.35, BnT 0.005, against true instants", jitter),
+    Measurement("lateness", "Gardner loop: mean lateness, no noise, RRC, BnT 0.005", lateness),
+)
 
 # --------------------------------------------------------------------------------------------------
 
+Entry = Benchmark | Measurement
 
-def chosen(names: Sequence[str], benchmarks: Sequence[Benchmark]) -> list[Benchmark]:
+
+def chosen(names: Sequence[str], benchmarks: Sequence[Entry]) -> list[Entry]:
     """Those named, and what they are compared with, in their order; all if none is named.
 
     Raises ValueError for an unknown name.
@@ -250,6 +711,21 @@ def chosen(names: Sequence[str], benchmarks: Sequence[Benchmark]) -> list[Benchm
             raise ValueError(f"no benchmark is called {name!r}; there are {', '.join(by_name)}")
     wanted = {*names} | {against for name in names if (against := by_name[name].against)}
     return [benchmark for benchmark in benchmarks if benchmark.name in wanted]
+
+
+def take(measurements: Sequence[Measurement], quick: bool, progress: Callable[[str], None]) -> list[dict[str, Any]]:
+    """Rows of each measurement; none, and why, where it could not be made."""
+    results = []
+    for measurement in measurements:
+        progress(f"measuring {measurement.name}")
+        rows: list[dict[str, Any]] = []
+        missing = None
+        try:
+            rows = measurement.take(quick)
+        except Unavailable as error:
+            missing = str(error)
+        results.append({"name": measurement.name, "what": measurement.what, "rows": rows, "missing": missing})
+    return results
 
 
 def measure(
@@ -328,6 +804,24 @@ def table(results: Sequence[dict[str, Any]]) -> str:
     return "\n".join(lines)
 
 
+def measured_table(results: Sequence[dict[str, Any]]) -> str:
+    """The measurements as text: a heading each, a line a row."""
+    lines = []
+    for result in results:
+        lines.append(f"\n{result['name']}: {result['what']}")
+        if result["missing"] is not None:
+            lines.append(f"  {result['missing']}")
+        for row in result["rows"]:
+            ratio = f"{row['ratio']:.3f} x {row['against']}" if "ratio" in row else ""
+            rest = ", ".join(
+                f"{key.replace('_', ' ')} {value:.4g}"
+                for key, value in row.items()
+                if key not in ("case", "value", "unit", "against", "ratio")
+            )
+            lines.append(f"  {row['case']:<30} {row['value']:>10.4g} {row['unit']:<7} {ratio:<22} {rest}".rstrip())
+    return "\n".join(lines)
+
+
 def show(text: str) -> None:
     """Overwrite the progress line on a terminal; elsewhere nothing. Empty text clears it."""
     if sys.stderr.isatty():
@@ -342,17 +836,22 @@ def main(arguments: Sequence[str]) -> int:
     parser.add_argument("--only", action="append", default=[], metavar="NAME", help="this one and its reference")
     options = parser.parse_args(arguments)
     try:
-        benchmarks = chosen(options.only, (*REFERENCES, *PROJECT))
+        wanted: list[Entry] = chosen(options.only, (*REFERENCES, *PROJECT, *MEASUREMENTS))
     except ValueError as error:
         parser.error(str(error))
     with threadpool_limits(1):
-        results = measure(benchmarks, options.quick, show)
+        results = measure([entry for entry in wanted if isinstance(entry, Benchmark)], options.quick, show)
+        measured = take([entry for entry in wanted if isinstance(entry, Measurement)], options.quick, show)
     show("")
     if options.json:
-        print(json.dumps({"machine": machine(), "quick": options.quick, "results": results}, indent=1))
+        document = {"machine": machine(), "quick": options.quick, "results": results, "measurements": measured}
+        print(json.dumps(document, indent=1))
     else:
         print("\n".join(f"{key}: {value}" for key, value in machine().items()))
-        print(table(results))
+        if results:
+            print(table(results))
+        if measured:
+            print(measured_table(measured))
     return 0
 
 
