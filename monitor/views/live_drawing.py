@@ -347,12 +347,18 @@ def _draw_key_figures(canvas: Canvas, box: Box, reading: Reading) -> None:
     """The most telling figures in two columns, line by line, as many as there is room for."""
     theme, gap = canvas.theme, canvas.px(24)
     pitch, width = canvas.px(23), (box.width - gap) // 2
-    figures = key_figures(reading)[: 2 * (box.height // max(pitch, 1))]
+    least = canvas.px(8)
+    fitting = [
+        figure
+        for figure in key_figures(reading)
+        if canvas.text_width(figure.label, _TEXT) + least + canvas.text_width(figure.value, _TEXT) <= width
+    ]
+    figures = fitting[: 2 * (box.height // max(pitch, 1))]
     for number, figure in enumerate(figures):
         row = Box(box.x + (width + gap) * (number % 2), box.y + pitch * (number // 2), width, pitch)
         taken = canvas.text_width(figure.value, _TEXT)
         canvas.write(figure.value, row, _TEXT, theme.ink, align="right")
-        canvas.write(figure.label, replace(row, width=max(0, width - taken - canvas.px(8))), _TEXT, theme.dim)
+        canvas.write(figure.label, replace(row, width=max(0, width - taken - least)), _TEXT, theme.dim)
         if number < len(figures) - 2:
             canvas.fill(Box(row.x, row.bottom - 1, width, max(1, canvas.px(1))), theme.grid)
 
@@ -549,7 +555,7 @@ def draw_help(canvas: Canvas, box: Box) -> None:
     title = replace(inner, height=canvas.px(30))
     canvas.write("Keys", title, _LARGE, theme.ink, bold=True)
     pitch = min(canvas.px(32), (inner.bottom - title.bottom) // len(ACTIONS))
-    size = min(15.0, 0.62 * pitch / canvas.scale)
+    size = min(14.0, 0.6 * pitch / canvas.scale)
     keys_width = max(canvas.text_width(" or ".join(a.keys), size, bold=True) for a in ACTIONS) + canvas.px(20)
     words_width = max(canvas.text_width(a.words.rstrip("…"), size) for a in ACTIONS) + canvas.px(20)
     for number, action in enumerate(ACTIONS):

@@ -43,7 +43,6 @@ from monitor.views.history import AlarmMemory
 from monitor.views.layout import Box
 from monitor.views.live_drawing import View, draw_help
 from monitor.views.live_page import LivePage
-from monitor.views.live_wording import mark_words
 from monitor.views.painter import ensure_application, png_bytes
 from monitor.views.theme import ThemeName, find_theme
 from monitor.views.tone import Tone
@@ -186,6 +185,7 @@ class LiveWindow(QMainWindow):
         self._said = ""
         self._said_until = 0.0
         self._stopped = False
+        self._marked = False
         self.face = Face(self, LivePage(traces=painter == "raster"))
         self.setCentralWidget(self.face)
         self._cover: EyeCover | None = None
@@ -304,16 +304,17 @@ class LiveWindow(QMainWindow):
 
     def _mark(self) -> None:
         self._watched.mark()
+        self._marked = True
         self.say("marked; now turn something")
 
     def _ask_name(self) -> None:
         marks = self._newest.marks
-        if not marks:
+        if not (marks or self._marked):  # a mark of this moment may not be in the state yet
             self.say("no mark to name yet: Space marks")
             return
         line = self.name_line
-        line.setText(marks[-1].name)
-        line.setPlaceholderText(f"Name of {mark_words('', len(marks))}: what was turned? Enter keeps it")
+        line.setText(marks[-1].name if marks else "")
+        line.setPlaceholderText("What was turned at the last mark? Enter keeps it, Escape leaves it")
         self._place_name_line()
         line.show()
         line.raise_()
@@ -374,9 +375,10 @@ class LiveWindow(QMainWindow):
     def _put_menu_size(self) -> None:
         font = self.font()
         font.setPixelSize(round(14 * self._choices.zoom))
-        self.menuBar().setFont(font)
-        for menu in self._menus:
-            menu.setFont(font)
+        for part in (self.menuBar(), *self._menus):
+            part.setFont(font)
+        # with a new font it folds to one sign until it is laid out again, which this makes it do
+        self.menuBar().resize(max(self.width(), 1), self.menuBar().sizeHint().height())
 
     def _other_theme(self) -> None:
         self._choices.theme = "light" if self.theme == "dark" else "dark"
@@ -417,7 +419,7 @@ class LiveWindow(QMainWindow):
         try:
             path.write_bytes(png_bytes(page.image))
         except OSError as error:
-            self.say(f"picture not saved in {path.parent}: {error.strerror or error}")
+            self.say(f"picture not saved: {error.strerror or error}: {path.parent}")
         else:
             self.say(f"picture saved: {path.name}")
 

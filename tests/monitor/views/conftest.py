@@ -1,6 +1,7 @@
 import pytest
 
 from monitor.snapshot import Snapshot
+from tests.monitor.views.live_states import make_states
 from tests.monitor.views.synthetic_eyes import baseband_reading, full_reading, make_eye
 
 NOTES = ("3 gaps in the stream: 1,024 samples lost in all.", "0.02 % of the samples were clipped.")
@@ -26,3 +27,9 @@ def snapshots():
         "no lock": Snapshot(None, None, SOURCE, "rate to be found", "No timing lock", NOTES, 4.0, None),
         "nothing": Snapshot(),
     }
+
+
+@pytest.fixture(scope="session")
+def live_states():
+    """Realistic states of a live watch, by name."""
+    return make_states()
