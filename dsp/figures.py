@@ -216,7 +216,7 @@ class Figures:
             timing_slope_pct_per_ui=slope,
             timing_tolerance_ui=tolerance,
             noise_margin_db=20 * math.log10(half_height / math.sqrt(float(noise.max()))) if opening > 0 else None,
-            level_rms_pct=self._thickness_pct(),
+            level_rms_pct=self._thickness_pct(best),
             crossing_rms_ui=crossing.rms,
             crossing_pp_ui=crossing.pp,
             crossing_pattern_pp_ui=crossing.pattern_pp,
@@ -224,7 +224,7 @@ class Figures:
             dcd_ui=crossing.dcd,
             rise_20_80_ui=rise_time(self._sums),
             level_linearity=self._linearity(),
-            q=self._q(),
+            q=self._q(best),
             snr_db=snr if mer is not None else None,
             mer_db=mer,
             evm_pct=100.0 * 10 ** (-mer / 20) if mer is not None else None,
@@ -277,20 +277,24 @@ class Figures:
 
     # -- levels and errors ---------------------------------------------------------------------------------------------
 
-    def _thickness_pct(self) -> float:
-        """Rms of a level's traces at the decision instant, over the spacing."""
+    def _deviations(self, ui: float) -> NDArray[np.float64]:
+        """Standard deviation of each level's traces, level units, shape ``(rails, levels)``."""
         if self._mixtures is not None:
-            square = float(np.mean([(mixture.sigma / mixture.gain) ** 2 for mixture in self._mixtures]))
-        else:
-            square = float(np.mean(self._sigmas**2 / self._gain[:, None] ** 2))
-        return 100.0 * math.sqrt(square) / float(self._spacing.min())
+            return np.asarray([[mixture.sigma / mixture.gain] * self._scheme.levels for mixture in self._mixtures])
+        squares = (self._sigmas / self._gain[:, None]) ** 2
+        # as met at the decision instant, and what more or less there is of everything but the cursor at this one
+        squares += (self._pattern.error(ui) - self._pattern.error(0.0))[:, None]
+        return np.asarray(np.sqrt(np.maximum(squares, 1e-12)))
 
-    def _q(self) -> float:
+    def _thickness_pct(self, ui: float) -> float:
+        """Rms thickness of the levels over the spacing."""
+        return 100.0 * math.sqrt(float(np.mean(self._deviations(ui) ** 2))) / float(self._spacing.min())
+
+    def _q(self, ui: float) -> float:
         """Distance of neighbouring levels over the sum of their deviations, the worst eye's."""
-        if self._mixtures is not None:
-            return min(m.gain * float(self._spacing.min()) / (2 * m.sigma) for m in self._mixtures)
-        sums = np.maximum(self._sigmas[:, 1:] + self._sigmas[:, :-1], 1e-9)
-        return float((np.diff(self._means, axis=1) / sums).min())
+        deviations = self._deviations(ui)
+        levels = np.asarray([self._levels(rail) for rail in range(self._scheme.rails)])
+        return float((np.diff(levels, axis=1) / (deviations[:, 1:] + deviations[:, :-1])).min())
 
     def _mer_db(self, ui: float) -> float | None:
         """Symbol energy over the mean square of what is not the ideal point, after least-squares gain; ISI included."""
