@@ -60,7 +60,8 @@ class LiveTransmitter:
 
     Without changes it gives what `dsp.transmitter.transmit` gives, to rounding. A change holds from the next block on.
     Symbol clock, carrier, phase noise and sinusoidal jitter go on from the phase they have reached; echoes, low-pass,
-    I/Q imbalance, DC and clipping fade over 16 symbols, and a change during a fade waits for its end. The level
+    I/Q imbalance, DC and clipping fade over 16 symbols, and a change during a fade waits for its end. Jitter and phase
+    noise of the symbols whose pulses have begun (for rrc some hundred) were drawn already. The level
     (`gain`) stays as it was at the start.
 
     Parameters
