@@ -245,9 +245,16 @@ def test_the_noise_follows_and_the_level_does_not():
     assert measured[2] < 1e-12
 
 
-def test_the_sine_of_the_jitter_goes_on_in_phase_when_its_frequency_changes():
+@pytest.mark.parametrize("seed", [1, 2, 3, 4])
+def test_the_sine_of_the_jitter_goes_on_in_phase_when_its_frequency_changes(seed):
     spec = spec_of(
-        scheme="pam2", pulse=Pulse("rect"), sample_rate_hz=400.0, symbols=1, jitter_sine_ui=0.2, jitter_sine_hz=0.02
+        scheme="pam2",
+        pulse=Pulse("rect"),
+        sample_rate_hz=400.0,
+        symbols=1,
+        seed=seed,
+        jitter_sine_ui=0.2,
+        jitter_sine_hz=0.02,
     )
     transmitter = LiveTransmitter(spec)
     parts = [transmitter.block(40_123)]
