@@ -35,7 +35,7 @@ from tests.monitor.recordings import (
     wav_bytes,
 )
 
-ALL, UNUSABLE, NOTHING, INTERRUPTED = 0, 2, 3, 130
+ALL, BROKEN, UNUSABLE, NOTHING, INTERRUPTED = 0, 1, 2, 3, 130
 RELIED_ON = """--rate --format --channels --iq --start --duration --symbol-rate --scheme --pulse --carrier --timing
     --loop-bandwidth --link --json --picture --target-ber"""
 
@@ -93,7 +93,7 @@ def test_without_a_command_one_line_says_what_to_type(capsys):
     assert "lidwatch replay FILE" in one_line(err)
 
 
-@pytest.mark.parametrize("name", ["frobnicate", "watch", "probe", "survey", ""])
+@pytest.mark.parametrize("name", ["frobnicate", "probe", "survey", ""])
 def test_an_unknown_command_is_one_line_that_names_those_there_are(capsys, name):
     status, out, err = typed(capsys, name)
     assert (status, out) == (UNUSABLE, "")
@@ -104,12 +104,11 @@ def test_help_lists_only_what_exists(capsys):
     status, out, err = typed(capsys, "--help")
     assert (status, err) == (ALL, "")
     assert "replay" in out
-    assert not any(f"  {word}" in out for word in ("watch", "probe", "survey"))
+    assert not any(f"  {word}" in out for word in ("probe", "survey"))
     status, out, _ = typed(capsys, "replay", "--help")
     assert status == ALL
     for option in RELIED_ON.split():
         assert option in out
-    assert "--journal" not in out
     assert "--report" not in out
 
 
@@ -269,13 +268,21 @@ def test_a_link_file_says_all_and_options_win_over_it(measured, recording, tmp_p
     assert over["reading"]["jitter_rms_ui"] > 1.5 * found["reading"]["jitter_rms_ui"]
 
 
-def test_alarm_rules_are_not_passed_over_in_silence(lidwatch, recording, tmp_path):
-    path = tmp_path / "link.toml"
-    path.write_text('[link]\nscheme = "qpsk"\n[[alarm]]\nrule = "opening_pct < 40"\n')
-    status, out, err = lidwatch(recording, *RAW, *QPSK, "--link", str(path), "--json")
-    assert status == ALL
-    assert strict_json(out)["alarms"] == []
-    assert "1 alarm rule not judged" in one_line(err)
+@pytest.mark.parametrize(("rule", "expected"), [("snr_db < 10", ALL), ("snr_db < 40", BROKEN)])
+def test_limits_of_the_link_file_make_the_status(lidwatch, tmp_path, rule, expected):
+    path, link = raw(tmp_path, qpsk(40_000)), tmp_path / "link.toml"
+    link.write_text(f'[link]\nscheme = "qpsk"\n[[alarm]]\nrule = "{rule}"\n')
+    status, out, err = lidwatch(path, *RAW, *QPSK, "--link", str(link), "--json")
+    assert (status, err) == (expected, "")
+    assert [alarm["rule"] for alarm in strict_json(out)["alarms"]] == ([rule] if expected else [])
+
+
+def test_a_rule_with_a_mistake_is_named(lidwatch, recording, tmp_path):
+    link = tmp_path / "link.toml"
+    link.write_text('[[alarm]]\nrule = "openness < 40"\n')
+    status, out, err = lidwatch(recording, *RAW, *QPSK, "--link", str(link))
+    assert (status, out) == (UNUSABLE, "")
+    assert f"link file {link}" in one_line(err)
 
 
 def test_a_link_file_with_a_mistake_is_named(lidwatch, recording, tmp_path):
@@ -698,6 +705,8 @@ OPTIONS = {
     "--link": st.sampled_from([".", "x", "/dev/null", "a\0b"]),
     "--picture": st.sampled_from(["x", "/nowhere/x.png", "\0.png"]),
     "--theme": st.sampled_from(["light", "dark", "x"]),
+    "--journal": st.sampled_from([".", "/nowhere/x.jsonl", "/dev/null", "\0.csv", "", "/dev/null.csv"]),
+    "--every": NUMBERS,
 }
 TYPED = st.lists(
     st.one_of(
@@ -714,7 +723,7 @@ def short_recording(tmp_path_factory):
     return raw(tmp_path_factory.mktemp("short"), qpsk()[:4000])
 
 
-@settings(max_examples=150, deadline=None, derandomize=True, suppress_health_check=list(HealthCheck))
+@settings(max_examples=120, deadline=None, derandomize=True, suppress_health_check=list(HealthCheck))
 @given(words=TYPED, usable=st.booleans())
 @example(words=["--scheme", "oqpsk", "--symbol-rate", "24000"], usable=True)
 @example(words=["--window", "1", "--draw-every", "1000000000"], usable=True)
