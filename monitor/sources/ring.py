@@ -1,6 +1,7 @@
 """Between the thread that receives and the one that measures: a ring that forgets the oldest rather than wait."""
 
 import threading
+import time
 from collections import deque
 from collections.abc import Callable, Iterable
 from dataclasses import replace
@@ -13,6 +14,7 @@ from monitor.sources.wire import DESCRIBING, Item, StreamEvent
 
 BOUND_S: Final = 0.5
 _MOST_EVENTS = 256
+_MOST_BYTES = 64 << 20
 _POLL_S = 0.1  # how long a source may wait before it looks whether to stop
 _JOIN_S = 5.0
 
@@ -23,17 +25,26 @@ class SampleRing:
     When it is full the oldest whole blocks are dropped: the next block delivered carries their samples in ``lost``.
     Events are kept, up to a number that only a hostile sender reaches. Any thread may put, any take.
 
+    More than ``bound_s`` may wait, up to 64 MiB, as long as nothing waits longer than ``patience_s`` by the clock: samples
+    that a network held up and then brings all at once are no reason to lose any.
+
     Attributes
     ----------
     dropped
         Samples dropped so far.
     """
 
-    def __init__(self, bound_s: float = BOUND_S) -> None:
+    def __init__(
+        self, bound_s: float = BOUND_S, patience_s: float = 0.0, *, now: Callable[[], float] = time.monotonic
+    ) -> None:
         self.dropped = 0
         self._bound_s = bound_s
+        self._patience_s = patience_s
+        self._now = now
         self._changed = threading.Condition()
         self._items: deque[tuple[Item, float]] = deque()
+        self._came: deque[float] = deque()  # when each block came
+        self._bytes = 0
         self._seconds = 0.0
         self._blocks = 0
         self._owed = 0
@@ -68,20 +79,32 @@ class SampleRing:
             self._owed = 0
         seconds = item.samples.size / self._rate_hz if self._rate_hz else 0.0
         self._items.append((item, seconds))
+        self._came.append(self._now())
         self._blocks += 1
         self._seconds += seconds
-        while self._seconds > self._bound_s and self._blocks > 1:
+        self._bytes += item.samples.nbytes
+        while self._blocks > 1 and self._overfull():
             self._drop_block()
+
+    def _overfull(self) -> bool:
+        if self._bytes > _MOST_BYTES:
+            return True
+        return self._seconds > self._bound_s and self._came[-1] - self._came[0] >= self._patience_s
 
     def _drop_block(self) -> None:
         for place, (item, seconds) in enumerate(self._items):
             if isinstance(item, Block):
                 del self._items[place]
-                self._blocks -= 1
-                self._seconds = self._seconds - seconds if self._blocks else 0.0
+                self._uncount(item, seconds)
                 self.dropped += item.samples.size
                 self._owe(place, item.lost + item.samples.size)
                 return
+
+    def _uncount(self, block: Block, seconds: float) -> None:
+        self._came.popleft()
+        self._blocks -= 1
+        self._seconds = self._seconds - seconds if self._blocks else 0.0
+        self._bytes -= block.samples.nbytes
 
     def _owe(self, place: int, lost: int) -> None:
         """Tell of ``lost`` samples with the first block from ``place`` on, or with the next to come."""
@@ -97,20 +120,25 @@ class SampleRing:
         lesser = (place for place in events if getattr(self._items[place][0], "kind", "") not in DESCRIBING)
         del self._items[next(lesser, events[0])]
 
-    def take(self, timeout_s: float) -> tuple[Item, ...]:
-        """All that waits, waiting up to ``timeout_s`` for something; empty at the time-out and after the end.
+    def take(self, timeout_s: float, most_blocks: int | None = None) -> tuple[Item, ...]:
+        """What waits, up to so many blocks (None: all), waiting up to ``timeout_s`` for something.
 
-        Raises what `close` was given, once everything before it has been taken.
+        Empty at the time-out and after the end. Raises what `close` was given, once everything before it has been taken.
         """
         with self._changed:
             self._changed.wait_for(lambda: self._items or self._closed, timeout_s)
-            taken = tuple(item for item, _ in self._items)
-            self._items.clear()
-            self._seconds, self._blocks = 0.0, 0
+            taken: list[Item] = []
+            blocks = 0
+            while self._items and (most_blocks is None or blocks < most_blocks):
+                item, seconds = self._items.popleft()
+                taken.append(item)
+                if isinstance(item, Block):
+                    blocks += 1
+                    self._uncount(item, seconds)
             if not taken and self._failure is not None:
                 self._told = True
                 raise self._failure
-            return taken
+            return tuple(taken)
 
     def close(self, failure: BaseException | None = None) -> None:
         """Nothing more will be put; wakes the taker."""
@@ -138,8 +166,10 @@ class ThreadedReader(LiveSource):
         What waits to be taken.
     """
 
-    def __init__(self, open_source: Callable[[], LiveSource], bound_s: float = BOUND_S) -> None:
-        self.ring = SampleRing(bound_s)
+    def __init__(
+        self, open_source: Callable[[], LiveSource], bound_s: float = BOUND_S, patience_s: float = BOUND_S
+    ) -> None:
+        self.ring = SampleRing(bound_s, patience_s)
         self.uri = ""
         self.warnings: tuple[str, ...] = ()
         self._open_source = open_source
@@ -170,9 +200,9 @@ class ThreadedReader(LiveSource):
         """Samples that the taker was too slow for."""
         return self.ring.dropped
 
-    def poll(self, timeout_s: float) -> tuple[Item, ...]:
+    def poll(self, timeout_s: float, most_blocks: int | None = None) -> tuple[Item, ...]:
         """What waits, in order, never more than the ring's bound; raises what the source raised."""
-        return self.ring.take(timeout_s)
+        return self.ring.take(timeout_s, most_blocks)
 
     def close(self) -> None:
         """Stop the thread; returns when the source is closed, or after some seconds if it does not come back."""

@@ -65,6 +65,38 @@ def test_a_single_block_longer_than_the_bound_is_delivered():
     assert (only.samples.size, only.lost) == (5000, 100)
 
 
+def test_what_comes_all_at_once_is_kept_until_its_oldest_has_waited_too_long():
+    clock = SimpleNamespace(now=10.0)
+    ring = SampleRing(0.5, 0.5, now=lambda: clock.now)
+    ring.put([START, *stream(*[100] * 30)])  # three seconds, held up and then brought at once
+    assert ring.held_s == pytest.approx(3.0)
+    clock.now += 0.49
+    ring.put(stream(100, start=3000))
+    assert ring.dropped == 0
+    clock.now += 0.01
+    ring.put(stream(100, start=3100))
+    assert ring.dropped == 2700  # half a second stays
+    first = blocks_of(ring.take(0))[0]
+    assert (first.start, first.lost) == (2700, 2700)
+
+
+def test_what_comes_all_at_once_is_bounded_in_bytes():
+    ring = SampleRing(0.5, 1e9)
+    size = 4 << 20
+    ring.put([START, *stream(*[size] * 9)])
+    assert ring.dropped == 5 * size
+
+
+def test_no_more_blocks_are_taken_than_asked_for():
+    ring = SampleRing()
+    ring.put([START, *stream(100, 50, 30)])
+    assert [getattr(item, "start", "event") for item in ring.take(0, 1)] == ["event", 0]
+    assert ring.held_s == pytest.approx(0.08)
+    assert [item.start for item in ring.take(0, 1)] == [100]
+    assert [item.start for item in ring.take(0, 5)] == [150]
+    assert ring.held_s == 0.0
+
+
 def test_events_outlive_the_blocks_around_them():
     ring = SampleRing(0.5)
     torn = StreamEvent("torn", "cut", 400)
@@ -225,7 +257,7 @@ def test_a_failure_is_raised_after_what_came_before_it(failure, kind, text):
 def test_a_slow_taker_gets_the_newest_half_second():
     made = tuple(stream(*([100] * 50)))
     source = Scripted((START,), *((b,) for b in made))
-    reader = ThreadedReader(lambda: source)
+    reader = ThreadedReader(lambda: source, patience_s=0.0)
     assert source.closed.wait(10)
     got = SimpleNamespace(blocks=blocks_of(reader.poll(10)))
     reader.close()
