@@ -1,10 +1,9 @@
 """`lidwatch replay`: measure a recording."""
 
 import argparse
-import contextlib
 import os
 import sys
-from contextlib import suppress
+from contextlib import nullcontext, suppress
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -14,7 +13,13 @@ from monitor.running import chain_options, link_and_limits
 from monitor.terminal import ProgressBar, SlowStartNotice
 
 if TYPE_CHECKING:
+    from contextlib import AbstractContextManager
+
+    from monitor.alarm_rules import AlarmRule
+    from monitor.judging import Judged
+    from monitor.linkfile import LinkOptions
     from monitor.session import Outcome
+    from monitor.sources import Source
 
 LIMIT_BROKEN, INTERRUPTED = 1, 130
 
@@ -28,7 +33,6 @@ def replay(parsed: argparse.Namespace) -> int:
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
         from monitor.interrupt import Interrupt, Interruptible
-        from monitor.judging import Judged
         from monitor.session import run
         from monitor.sources import SampleOptions, open_source
 
@@ -36,8 +40,7 @@ def replay(parsed: argparse.Namespace) -> int:
     wanted, options = link.wanted(), replace(chain_options(parsed, link), window=parsed.window)
     samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration)
     with Interrupt() as interrupt, open_source(parsed.source, samples) as opened:
-        judged = contextlib.nullcontext() if not rules and _no_journal(parsed) else Judged(parsed, opened, link, rules)
-        with ProgressBar(opened.info.samples) as bar, judged as judge:
+        with ProgressBar(opened.info.samples) as bar, _judging(parsed, opened, link, rules) as judge:
             source = Interruptible(opened, interrupt)
             observe = judge.feed if judge is not None else None
             outcome = run(source, wanted, options, threads=parsed.threads, progress=bar.advance, observe=observe)
@@ -58,8 +61,15 @@ def replay(parsed: argparse.Namespace) -> int:
     return LIMIT_BROKEN if rules and outcome.alarms else 0
 
 
-def _no_journal(parsed: argparse.Namespace) -> bool:
-    return parsed.journal is None and parsed.publish is None and parsed.on_alarm is None
+def _judging(
+    parsed: argparse.Namespace, source: "Source", link: "LinkOptions", rules: "tuple[AlarmRule, ...]"
+) -> "AbstractContextManager[Judged | None]":
+    """The judge of limits and keeper of the journal; None where neither is asked for."""
+    if not rules and parsed.journal is None and parsed.publish is None and parsed.on_alarm is None:
+        return nullcontext()
+    from monitor.judging import Judged
+
+    return Judged(parsed, source, link, rules)
 
 
 def _tell(outcome: "Outcome", *, as_json: bool) -> None:
