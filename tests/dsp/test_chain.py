@@ -216,7 +216,7 @@ def test_after_a_gap_the_link_is_found_again_without_restart():
     reading = Figures(chain.total, chain.context()).reading()
     assert reading.clock_ppm == pytest.approx(0.0, abs=2.0)
     assert reading.carrier_hz == pytest.approx(80.0, abs=1.0)
-    assert reading.mer_db == pytest.approx(18.0, abs=0.5)
+    assert reading.snr_db == pytest.approx(18.0, abs=0.3)
     assert chain.slips == 0  # a gap is no slip
 
 
@@ -247,7 +247,6 @@ def test_a_fade_is_declared_within_200_symbols_or_50_ms_whichever_is_longer(sche
 
 @pytest.mark.parametrize("scheme", ["pam2", "qpsk"])
 @pytest.mark.parametrize("floor", [None, 12.0], ids=["into silence", "into noise"])
-@pytest.mark.xfail(reason="each attempt begins where the search began, so the fade spoils all of them")
 def test_after_a_fade_the_link_is_found_again_without_restart(scheme, floor):
     chain = run(link_of(scheme), faded(scheme, floor))
     assert [event.state for event in chain.events] == ["gained", "lost", "gained", "lost"]

@@ -141,6 +141,14 @@ def test_a_command_that_fails_is_told_with_its_status():
         bench.command(["replay", "no-such-file.wav"])
 
 
+def test_the_memory_told_is_the_command_s_and_not_the_benchmark_s():
+    ballast = np.ones(60_000_000)  # 480 MB in this process
+    seconds, peak, busy = bench.command(["--version"])
+    assert ballast[-1] == 1.0
+    assert 0.0 < busy < seconds + 5.0
+    assert 5.0 < peak < 250.0
+
+
 def test_measurements_that_cannot_be_made_are_told_and_the_rest_goes_on():
     def absent(_):
         raise bench.Unavailable("not here")
