@@ -185,7 +185,8 @@ def draw_eye_frame(canvas: Canvas, places: RailBoxes, image: EyeImage, rail: int
             canvas.write(_level_name(float(level)), label, _SMALL, theme.dim, align="right")
             last = y
     side = replace(places.gutter, width=canvas.px(18))
-    canvas.write_upwards("level units", side, _SMALL, theme.dim)
+    if canvas.text_width("level units", _SMALL) <= side.height:
+        canvas.write_upwards("level units", side, _SMALL, theme.dim)
 
 
 def _level_name(level: float) -> str:

@@ -419,9 +419,8 @@ def draw_history(canvas: Canvas, boxes: LiveBoxes, view: View) -> None:
     canvas.frame(plot, theme.edge)
     for value in values:
         y = y_of(plot, value, low, high)
-        if plot.y + canvas.px(3) <= y <= plot.bottom - canvas.px(3):
-            label = Box(box.x, round(y) - canvas.px(8), plot.x - box.x - canvas.px(8), canvas.px(16))
-            canvas.write(f"{plain(value, 0)} %", label, _SMALL, theme.dim, align="right")
+        label = Box(box.x, round(y) - canvas.px(8), plot.x - box.x - canvas.px(8), canvas.px(16))
+        canvas.write(f"{plain(value, 0)} %", label, _SMALL, theme.dim, align="right")
     spans = [span for span in view.spans if span.end_s >= start]
     lane = Box(plot.x, plot.bottom + canvas.px(2), plot.width, canvas.px(7))
     for span in spans:
@@ -537,7 +536,7 @@ def draw_footer(canvas: Canvas, box: Box, view: View) -> None:
             words = {"mark": "mark", "acknowledge": "acknowledge", "hold": "hold", "help": "all keys"}[action.name]
             hints.append(f"{action.keys[0]} {words}")
     text = "   ".join(hints)
-    taken = min(canvas.text_width(text, _SMALL), box.width // 2)
+    taken = min(canvas.text_width(text, _SMALL), box.width * 3 // 5)
     canvas.write(text, Box(box.right - taken, box.y, taken, box.height), _SMALL, theme.dim, align="right")
     parts = [view.said] if view.said else [*state.notices[-2:][::-1]]
     if state.journal_text and not view.said:

@@ -187,8 +187,15 @@ class LivePage:
             image.rails,
             reading.eyes if reading is not None else None,
         )
+
+        def draw_axes(canvas: Canvas) -> None:
+            draw_eye_axes(canvas, boxes.page, image, reading)
+            if not self._traces:
+                for places in boxes.page.rails:
+                    canvas.fill(places.eye, canvas.theme.panel)
+
         panels = [
-            _Panel("axes", boxes.body, axes, lambda canvas: draw_eye_axes(canvas, boxes.page, image, reading)),
+            _Panel("axes", boxes.body, axes, draw_axes),
         ]
         if self._traces:
             for rail, places in enumerate(boxes.page.rails):

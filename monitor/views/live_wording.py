@@ -106,17 +106,17 @@ def by_urgency(alarms: tuple[AlarmLine, ...]) -> list[AlarmLine]:
 
 
 def health_words(state: LiveState) -> str:
-    """Length, symbols, coverage, loss and delay of what is shown, in one line."""
+    """Length, loss, delay, coverage and symbols of what is shown, in one line: what matters most comes first."""
     snapshot = state.snapshot
     parts = [clock(state.seconds)]
-    if snapshot.reading is not None:
-        parts.append(f"{plain(snapshot.reading.symbols, 0)} symbols")
-    if snapshot.coverage_pct is not None and snapshot.image is not None and snapshot.coverage_pct < 99.5:
-        parts.append(f"{plain(snapshot.coverage_pct, 0)} % of traces drawn")
     if state.samples_lost:
         parts.append(f"{plain(state.samples_lost, 0)} samples lost")
     if state.behind_s >= 0.3:
         parts.append(f"{plain(state.behind_s, 1)} s behind")
+    if snapshot.coverage_pct is not None and snapshot.image is not None and snapshot.coverage_pct < 99.5:
+        parts.append(f"{plain(snapshot.coverage_pct, 0)} % of traces drawn")
+    if snapshot.reading is not None:
+        parts.append(f"{plain(snapshot.reading.symbols, 0)} symbols")
     return "  ·  ".join(parts)
 
 

@@ -165,9 +165,9 @@ class EyeCover:
 
 
 def _place(native: QWidget, eye: Box, ratio: float) -> None:
-    # whole logical pixels: where the screen has 1.25 or 1.5 of its own to each, the plot's rim may be a pixel off
-    left, top = round(eye.x / ratio), round(eye.y / ratio)
-    native.setGeometry(left, top, round(eye.right / ratio) - left, round(eye.bottom / ratio) - top)
+    # whole logical pixels, inwards: where the screen has 1.25 or 1.5 of its own to each, a rim of the empty panel may show
+    left, top = -int(-eye.x // ratio), -int(-eye.y // ratio)
+    native.setGeometry(left, top, int(eye.right // ratio) - left, int(eye.bottom // ratio) - top)
     native.show()
     native.lower()
 
