@@ -57,6 +57,7 @@ class Figures:
         self._sigmas = np.sqrt(np.maximum(squares / np.maximum(counts, 1) - self._means**2, 0.0))
         self._gain, self._zero = level_units(self._means, self._nominal)
         self._mixtures: list[Mixture] | None = None
+        self._mixture_isi = np.zeros(sums.scheme.rails)
         self.enough = sums.symbols >= LEAST_SYMBOLS and float(counts.min()) >= 3
         if self.enough and self._bit_errors(0.0) > _DECISIONS_RIGHT:
             self._fit_mixtures()
@@ -72,31 +73,46 @@ class Figures:
         """Where decisions are often wrong: scale and noise from the levels' mixture, which knows nothing of decisions."""
         centres = self._sums.rows.centres()
         column = self._histogram[:, :, COLUMNS].sum(axis=1).astype(np.float64)
-        self._mixtures = []
+        model = self._pattern.model(0.0)
+        mixtures, isi = [], []
         for rail, counts in enumerate(column):
-            shares = self._counts[rail] / self._counts[rail].sum()
-            deviation = max(math.sqrt(float(shares @ self._sigmas[rail] ** 2)), 1e-6)
-            first = Mixture(float(self._gain[rail]), float(self._zero[rail]), deviation)
-            self._mixtures.append(fit_mixture(centres, counts, self._nominal, first))
-        self._gain = np.asarray([mixture.gain for mixture in self._mixtures])
-        self._zero = np.asarray([mixture.zero for mixture in self._mixtures])
+            noise = max(math.sqrt(float(model.residual[rail])), 1e-3 * float(self._gain[rail]))
+            reach = self._isi(rail, model, noise / max(model.cursor(rail), 1e-9))
+            isi.append(reach.variance())
+            # as many points as keep their distance below half the noise's deviation
+            points = min(math.ceil(6.0 * math.sqrt(isi[-1]) * float(self._gain[rail]) / noise), 24)
+            shift, share = reach.grouped(points) if points > 1 else (None, None)
+            first = Mixture(float(self._gain[rail]), float(self._zero[rail]), noise)
+            mixtures.append(fit_mixture(centres, counts, self._nominal, first, shift, share))
+            if points <= 1:
+                isi[-1] = 0.0
+        self._mixtures, self._mixture_isi = mixtures, np.asarray(isi)
+        self._gain = np.asarray([mixture.gain for mixture in mixtures])
+        self._zero = np.asarray([mixture.zero for mixture in mixtures])
 
     def _noise(self, model: PatternModel) -> NDArray[np.float64]:
         """Additive noise variance by rail, level units squared: ISI not counted, wrong decisions allowed for."""
         cursors = np.maximum([abs(model.cursor(rail)) for rail in range(self._scheme.rails)], 1e-9)
         if self._mixtures is None:
+            # uneven levels are no noise: the straight line of the pattern response leaves them over
             noise = np.asarray(model.residual / cursors**2)
+            noise = np.maximum(noise - self._bend(), 0.02 * noise)
         else:
-            noise = np.empty(cursors.size)
-            for rail, mixture in enumerate(self._mixtures):
-                taps = model.neighbours(rail)
-                total = (mixture.sigma / mixture.gain) ** 2
-                noise[rail] = max(total - float(taps @ taps) * self._rail_energy() / cursors[rail] ** 2, 0.1 * total)
+            noise = np.asarray([(mixture.sigma / mixture.gain) ** 2 for mixture in self._mixtures])
         mean = noise.mean()
         return np.asarray(mean + beyond_chance(noise - mean, mean**2 / self._sums.symbols))
 
-    def _rail_energy(self) -> float:
-        return self._scheme.symbol_energy() / self._scheme.rails
+    def _bend(self) -> NDArray[np.float64]:
+        """Variance of the levels about their own straight line, level units squared, shape ``(rails,)``."""
+        bends = np.empty(self._scheme.rails)
+        for rail in range(self._scheme.rails):
+            shares = self._counts[rail] / self._counts[rail].sum()
+            off = self._nominal - shares @ self._nominal
+            levels = self._levels(rail)
+            levels = levels - shares @ levels
+            rest = levels - off * (shares @ (levels * off)) / (shares @ off**2)
+            bends[rail] = shares @ rest**2
+        return bends
 
     def _idle_noise(self) -> float:
         """Noise of the rail that a one-railed carrier leaves idle, level units squared; 0 for others."""
@@ -280,7 +296,11 @@ class Figures:
     def _deviations(self, ui: float) -> NDArray[np.float64]:
         """Standard deviation of each level's traces, level units, shape ``(rails, levels)``."""
         if self._mixtures is not None:
-            return np.asarray([[mixture.sigma / mixture.gain] * self._scheme.levels for mixture in self._mixtures])
+            rails = [
+                math.hypot(m.sigma / m.gain, math.sqrt(isi))
+                for m, isi in zip(self._mixtures, self._mixture_isi, strict=True)
+            ]
+            return np.repeat(np.asarray(rails)[:, None], self._scheme.levels, axis=1)
         squares = (self._sigmas / self._gain[:, None]) ** 2
         # as met at the decision instant, and what more or less there is of everything but the cursor at this one
         squares += (self._pattern.error(ui) - self._pattern.error(0.0))[:, None]
@@ -297,12 +317,20 @@ class Figures:
         return float((np.diff(levels, axis=1) / (deviations[:, 1:] + deviations[:, :-1])).min())
 
     def _mer_db(self, ui: float) -> float | None:
-        """Symbol energy over the mean square of what is not the ideal point, after least-squares gain; ISI included."""
+        """Symbol energy over the mean square of what is not the ideal point, after one least-squares gain for all rails.
+
+        ISI counts, and so does an imbalance of I and Q; an offset does not.
+        """
         energy = self._scheme.symbol_energy()
         if self._mixtures is None:
-            error = float(self._pattern.error(ui).sum())
+            errors = self._pattern.error(ui)
+            worth = self._gain * self._pattern.own(ui) / np.maximum(self._pattern.own(0.0), 1e-9)
         else:
-            error = sum((mixture.sigma / mixture.gain) ** 2 for mixture in self._mixtures)
+            errors = np.asarray([(mixture.sigma / mixture.gain) ** 2 for mixture in self._mixtures]) + self._mixture_isi
+            worth = self._gain
+        units = self._sums.unit_sums[0, : self._scheme.rails]
+        relative = worth * units / np.mean(worth * units)
+        error = float(np.sum(relative**2 * errors + (relative - 1.0) ** 2 * energy / self._scheme.rails))
         error += self._idle_noise()
         # above this the mixture's levels melt into one and no estimate without known data holds
         return 10 * math.log10(energy / error) if error / energy * float(self._nominal[-1]) ** 2 < 12.0 else None
@@ -384,7 +412,10 @@ class Figures:
         return 100.0 * float(np.hypot.reduce(offsets)) / math.sqrt(self._scheme.symbol_energy())
 
     def _iq(self, model: PatternModel) -> tuple[float | None, float | None]:
-        """Gain in dB and skew in degrees of y_I = x_I, y_Q = g (x_Q cos s + x_I sin s), a common turn taken out."""
+        """Gain in dB and skew in degrees of y_I = x_I, y_Q = g (x_Q cos s + x_I sin s), a common turn taken out.
+
+        I and Q are as the carrier was recovered: a quarter turn swaps them, and with that both signs.
+        """
         if self._scheme.rails == 1 or self._scheme.stagger:
             return None, None
         units = self._sums.unit_sums

@@ -18,28 +18,38 @@ class Mixture:
 
 
 def fit_mixture(
-    values: NDArray[np.float64], counts: NDArray[np.float64], nominal: NDArray[np.float64], first: Mixture
+    values: NDArray[np.float64],
+    counts: NDArray[np.float64],
+    nominal: NDArray[np.float64],
+    first: Mixture,
+    shift: NDArray[np.float64] | None = None,
+    share: NDArray[np.float64] | None = None,
 ) -> Mixture:
     """Maximum-likelihood mixture for a histogram (``values`` of the bins, their ``counts``), by expectation-maximisation.
 
-    Knows nothing of decisions, so it is not biased by wrong ones. Source: A. P. Dempster, N. M. Laird, D. B. Rubin, J. R.
-    Statist. Soc. B 39(1), 1977 (from memory); levels tied to one gain and one offset.
+    ``shift`` and ``share`` ``(n,)``: where ISI moves each level, in nominal units, and how often. Knows nothing of decisions, so
+    it is not biased by wrong ones. Source: A. P. Dempster, N. M. Laird, D. B. Rubin, J. R. Statist. Soc. B 39(1), 1977 (from
+    memory); levels tied to one gain and one offset.
     """
     gain, zero, sigma = first.gain, first.zero, first.sigma
+    if shift is None or share is None:
+        shift, share = np.zeros(1), np.ones(1)
+    points = (nominal[:, None] + shift).ravel()
+    prior = np.broadcast_to(share, (nominal.size, share.size)).ravel()
     some = counts > 0
     y, n = values[some], counts[some].astype(np.float64)
     total = n.sum()
-    for _ in range(400):
-        distance = (y[:, None] - gain * nominal - zero) / sigma
-        weight = np.exp(-0.5 * (distance**2 - np.min(distance**2, axis=1, keepdims=True)))
+    for _ in range(400 if points.size <= 8 else 150):
+        distance = (y[:, None] - gain * points - zero) / sigma
+        weight = prior * np.exp(-0.5 * (distance**2 - np.min(distance**2, axis=1, keepdims=True)))
         weight *= (n / weight.sum(axis=1))[:, None]
-        by_level = weight.sum(axis=0)
-        mean_a = by_level @ nominal / total
+        by_point = weight.sum(axis=0)
+        mean_a = by_point @ points / total
         mean_y = n @ y / total
-        cov = float(np.einsum("ij,i,j->", weight, y - mean_y, nominal - mean_a))
-        new_gain = cov / float(by_level @ (nominal - mean_a) ** 2)
+        cov = float((y - mean_y) @ weight @ (points - mean_a))
+        new_gain = cov / float(by_point @ (points - mean_a) ** 2)
         new_zero = mean_y - new_gain * mean_a
-        spread = float(np.sum(weight * (y[:, None] - new_gain * nominal - new_zero) ** 2) / total)
+        spread = float(np.sum(weight * (y[:, None] - new_gain * points - new_zero) ** 2) / total)
         new_sigma = math.sqrt(max(spread, 1e-12))
         done = abs(new_sigma - sigma) < 1e-5 * sigma and abs(new_gain - gain) < 1e-5 * gain
         gain, zero, sigma = new_gain, new_zero, new_sigma
@@ -66,6 +76,18 @@ class Spread:
     def below(self, limit: float) -> float:
         """Probability of a sample below ``limit``; exact in the far tail."""
         return float(self.share @ ndtr((limit - self.at) / self.sigma))
+
+    def variance(self) -> float:
+        """Of the discrete part."""
+        return float(self.share @ self.at**2) - float(self.share @ self.at) ** 2
+
+    def grouped(self, count: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """The discrete part as ``count`` points or fewer of about equal share: values and shares, each ``(m,)``."""
+        group = np.minimum((np.cumsum(self.share) - 0.5 * self.share) * count, count - 1e-9).astype(np.int64)
+        share = np.bincount(group, weights=self.share, minlength=count)
+        some = share > 0
+        at = np.bincount(group, weights=self.share * self.at, minlength=count)[some] / share[some]
+        return np.asarray(at, dtype=np.float64), np.asarray(share[some], dtype=np.float64)
 
     def quantile(self, share: float) -> float:
         """The value that a ``share`` of the samples lies below."""
