@@ -89,12 +89,14 @@ def clock_line(power: NDArray[np.float32], sps: float, span: float = RATE_SPAN) 
     blocks = power.size // block
     if blocks < 12:
         return ClockLine(1.0 / sps, 0.0, 1.0)
-    centred = power[: blocks * block] - np.mean(power[: blocks * block], dtype=np.float64)
+    mean = float(np.mean(power[: blocks * block], dtype=np.float64))
+    centred = power[: blocks * block] - mean
+    if not float(np.abs(centred).max()) > 1e-6 * abs(mean):  # constant, but for rounding
+        return ClockLine(1.0 / sps, 0.0, 1.0)
     cycle = np.exp(-2j * np.pi * np.arange(blocks * block) / sps).astype(np.complex64)
     sums = (centred.astype(np.float32) * cycle).reshape(blocks, block).sum(axis=1)
     length = 8 * 2 ** math.ceil(math.log2(blocks))
-    spectrum = np.fft.fft(sums, length)
-    level = np.abs(spectrum) ** 2
+    level = np.abs(np.fft.fft(sums.astype(np.complex128), length)) ** 2
     per_symbol = np.fft.fftfreq(length) * sps / block  # cycles a symbol off the nominal rate
     reach = max(span, 1.0 / (blocks * block / sps))
     inside = np.abs(per_symbol) <= reach
@@ -399,7 +401,7 @@ class _Search:
         n = np.arange(z.size)
         sps = self._front.sps
         # lines at twice the carrier plus and minus the rate: the product of the two shifted spectra peaks at twice the carrier
-        length = 2 ** math.ceil(math.log2(z.size)) * 2
+        length = 2 ** math.ceil(math.log2(z.size)) * 8
         upper = np.fft.fft(square * np.exp(-2j * np.pi * n / sps), length)
         lower = np.fft.fft(square * np.exp(2j * np.pi * n / sps), length)
         joint = np.abs(upper * lower)

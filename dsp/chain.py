@@ -18,6 +18,7 @@ from dsp.link import Link
 from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
 FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
+LOOK_BACK = 1024  # symbols of the newest that are tried by themselves in between
 UNHURRIED_BD = 50_000.0  # up to this symbol rate every sample is searched
 WAVE_PHASES, CORNER_PHASES = 8, 64  # points a symbol at which the wave is kept
 
@@ -101,6 +102,8 @@ class Chain:
             centre=centre_hz / rate,
             half_band=None if half_band_hz is None else half_band_hz / rate,
         )
+        # as often as new symbols fill it, but no more than 25 times a second
+        self._look_every = round(max(LOOK_BACK, 0.04 * link.symbol_rate_hz) * self._plan.rail_sps)
         self._lane = lane or AtOnce()
         self._on_window = on_window
         self._on_event = on_event
@@ -211,6 +214,7 @@ class Chain:
         self._kept: list[Rails] = []
         self._kept_samples = 0
         self._next_try = FIRST_TRY
+        self._since_look = 0
         self._pause = 0
 
     def _work(self, samples: Samples) -> None:
@@ -224,11 +228,32 @@ class Chain:
         else:
             self._kept.append(rails)
             self._kept_samples += rails[0].size
+            self._since_look += rails[0].size
             if self._kept_samples >= self._next_try * self._plan.rail_sps:
                 self._try()
+            elif self._since_look >= self._look_every:
+                self._look_back()
+
+    def _look_back(self) -> None:
+        """Try the newest samples alone: a link that has just come stands behind a long stretch of none."""
+        need = round(LOOK_BACK * self._plan.rail_sps)
+        self._since_look = 0
+        if self._kept_samples < 2 * need:
+            return
+        kept, self._kept, count = self._kept, [], 0
+        for rails in reversed(kept):
+            self._kept.insert(0, rails)
+            count += rails[0].size
+            if count >= need:
+                break
+        whole, self._kept_samples = self._kept_samples, count
+        self._try(last=True)
+        if self._tracker is None:
+            self._kept, self._kept_samples = kept, whole
 
     def _try(self, *, last: bool = False) -> None:
         rails = tuple(np.concatenate(parts) for parts in zip(*self._kept, strict=True))
+        self._since_look = 0
         found = acquire(
             self.link,
             self._plan,

@@ -153,8 +153,9 @@ class Tracker:
         setup = np.zeros(kernel.N_SETUP)
         setup[kernel.SPS] = start.sps
         setup[kernel.DETECTOR] = _DETECTOR[start.detector]
-        setup[kernel.TIMING_K1] = timing.proportional / start.detector_slope
-        setup[kernel.TIMING_K2] = timing.integral / start.detector_slope
+        setup[kernel.TIMING_K1] = timing.proportional
+        setup[kernel.TIMING_K2] = timing.integral
+        setup[kernel.SLOPE] = start.detector_slope
         setup[kernel.CARRIER_K1] = carrier.proportional / (2 * np.pi)
         setup[kernel.CARRIER_K2] = carrier.integral / (2 * np.pi)
         setup[kernel.OFFSET] = start.offset_ui
@@ -246,7 +247,7 @@ class Tracker:
 
     def _units(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         gain, zero = level_units(self._slow[:, : self._scheme.levels], np.asarray(self._scheme.rail_levels))
-        if self._complex and self._scheme.rails == 1:
+        if self._scheme.rails == 1:
             # the idle rail has no levels of its own
             gain[1], zero[1] = gain[0], 0.0
         return gain, zero

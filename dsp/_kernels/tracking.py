@@ -27,8 +27,9 @@ N_STATE = 11
     LEVEL_STEP,
     TIMING_BIAS,
     SENSE,
-) = range(15)
-N_SETUP = 15
+    SLOPE,
+) = range(16)
+N_SETUP = 16
 GARDNER, MUELLER_MULLER, DERIVATIVE, CROSSING = 0.0, 1.0, 2.0, 3.0
 PAM, BPSK, QAM, PSK8 = 0.0, 1.0, 2.0, 3.0
 
@@ -111,6 +112,9 @@ def track(
     level_step = setup[LEVEL_STEP]
     bias = setup[TIMING_BIAS]
     sense = setup[SENSE] * sps
+    slope = setup[SLOPE]
+    # nor move a level by more than a neighbour's distance counts
+    far_i, far_q = 2.0 * gain[0], 2.0 * gain[1]
     t, rate, t_old = state[INSTANT], state[RATE], state[PREVIOUS]
     phase, freq = state[PHASE], state[TURN]
     old_i, old_q = state[OLD_I], state[OLD_Q]
@@ -156,11 +160,11 @@ def track(
             m_i = (3 if wide else 2) if z_i > 0 else (0 if wide else 1)
             m_q = (2 if wide else 3) if z_q > 0 else (1 if wide else 0)
             a_i, a_q = nominal[m_i], nominal[m_q]
-        means[0, m_i] += level_step * (z_i - means[0, m_i])
+        means[0, m_i] += level_step * min(max(z_i - means[0, m_i], -far_i), far_i)
         if shape >= QAM:
-            means[1, m_q] += level_step * (z_q - means[1, m_q])
+            means[1, m_q] += level_step * min(max(z_q - means[1, m_q], -far_q), far_q)
 
-        # timing error, late positive, in UI after the scaling that setup's gains carry
+        # timing error, late positive once the slope is taken out
         error = 0.0
         d_i = 0.0
         d_q = 0.0
@@ -243,7 +247,8 @@ def track(
                 for m in range(TEMPLATE):
                     total += template[m] * past[m]
                 error += decided[1, centre] * (slopes[1, centre] - total)
-        error -= bias
+        # an impulse must not throw the clock: what a detector may say is bounded, in UI
+        error = min(max((error - bias) / slope, -2.0), 2.0)
         decided[0, k] = a_i
         decided[1, k] = a_q
         values[0, k] = (z_i - zero[0]) * scale_i
@@ -253,10 +258,9 @@ def track(
         instants[n] = t
         phases[n] = phase
 
-        # an impulse must not throw the clock: the loop moves by a tenth of a symbol at most, its rate stays near nominal
-        rate = min(max(rate - min(max(k2 * error, -0.01), 0.01), -0.02), 0.02)
+        rate = min(max(rate - k2 * error, -0.02), 0.02)
         t_old = t
-        t += sps * (1.0 + rate - min(max(k1 * error, -0.1), 0.1))
+        t += sps * (1.0 + rate - k1 * error)
 
         if complex_in:
             twist = a_i * cross_q * scale_q - a_q * cross_i * scale_i
