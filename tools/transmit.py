@@ -1,10 +1,25 @@
-"""The test transmitter: any scheme of the monitor with any defect, into a file or onto standard output.
+"""The test transmitter: any scheme of the monitor with any defect, into a file, a pipe or a live stream.
 
 python tools/transmit.py --scheme qpsk --symbol-rate 9600 --rate 48000 --pulse rrc:0.35 --seconds 2 --snr 20 out.wav
 
 OUTPUT decides the format: .wav .flac .aiff .w64 .rf64 through the sound-file library (I/Q as two channels); .sigmf-meta
 or .sigmf-data: a SigMF pair; anything else, and - for standard output: raw samples of --format. With --recipe the exact
 command is kept beside the recording as NAME.recipe.txt. The same command gives the same samples.
+
+tcp://HOST:PORT or ipc://PATH sends live over ZeroMQ at the true rate, until --seconds are over or for ever; so does - with
+--live. While it sends, every defect can be changed: in a terminal by keys (? lists them; a letter chooses a defect, + and -
+turn it, 0 ends it, space is silence, q ends), and by a --schedule file such as
+
+    repeat = 60                  # seconds; leave it out for a single pass
+    [[change]]
+    at = 5                       # seconds of the stream; then any defect by the name of its option
+    snr = 12
+    over = 3                     # reach it gradually
+    [[change]]
+    at = 20
+    echo = ["1.4:0.3@120"]       # "none" ends it
+    silent = 0.5                 # seconds without a signal
+    lose = 0.2                   # seconds that are not sent at all
 """
 
 import argparse
@@ -16,25 +31,39 @@ import shlex
 import sys
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from typing import BinaryIO, NoReturn
+from typing import Any, BinaryIO, NoReturn
 
 import numpy as np
 
 sys.path.insert(0, str(Path(__file__).resolve().parents[1]))  # a clone that is not installed works too
 
+from dsp.block import Samples
 from dsp.errors import DspError
 from dsp.link import SCHEMES, find_scheme
 from dsp.pulses import Pulse
 from dsp.transmitter import Transmission, TransmitSpec, transmit_blocks
 from monitor.errors import MonitorError, printable
+from monitor.sources.endpoint import is_stream
 from monitor.sources.formats import SampleFormat, parse_datatype
+from monitor.sources.keys import Curve
+from tools.transmit_live import (
+    MESSAGE_S,
+    Clock,
+    LivePlan,
+    PipeSink,
+    Schedule,
+    Sink,
+    StreamOutput,
+    StreamSink,
+    Unusable,
+    key_by_key,
+    read_schedule,
+    send_live,
+    terminal_of,
+)
 
 SOUND = {".wav": "WAV", ".flac": "FLAC", ".aiff": "AIFF", ".aif": "AIFF", ".w64": "W64", ".rf64": "RF64"}
 SIGMF = (".sigmf-meta", ".sigmf-data")
-
-
-class Unusable(Exception):
-    """An argument or an output that cannot be used; the text is one line."""
 
 
 class _OneLineParser(argparse.ArgumentParser):
@@ -90,14 +119,14 @@ def build_parser() -> argparse.ArgumentParser:
         prog="transmit", description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter, allow_abbrev=False
     )
     add = parser.add_argument
-    add("output", metavar="OUTPUT", help="file, or - for raw samples on standard output")
+    add("output", metavar="OUTPUT", help="file, - (standard output), tcp://HOST:PORT or ipc://PATH")
     link = parser.add_argument_group("the link")
     add = link.add_argument
     add("--scheme", required=True, metavar="NAME", help=" ".join(SCHEMES))
     add("--symbol-rate", required=True, type=float, metavar="HZ")
     add("--rate", required=True, type=float, metavar="HZ", help="sample rate; 2 to 2000 samples a symbol, any ratio")
     add("--pulse", required=True, type=_pulse, metavar="NAME", help="rrc:A rc:A rect gauss:BT, as transmitted")
-    length = link.add_mutually_exclusive_group(required=True)
+    length = link.add_mutually_exclusive_group()
     length.add_argument("--symbols", type=int, metavar="N")
     length.add_argument("--seconds", type=float, metavar="S")
     add("--seed", type=int, default=1, metavar="N", help="of all that is random (1)")
@@ -152,12 +181,83 @@ def build_parser() -> argparse.ArgumentParser:
     add("--frequency", type=float, metavar="HZ", help="SigMF: radio frequency of the recording's centre, noted only")
     add("--description", metavar="TEXT", help="SigMF: what the recording shows, noted only")
     add("--recipe", action="store_true", help="keep this command beside the recording as NAME.recipe.txt")
+    live = parser.add_argument_group("live")
+    add = live.add_argument
+    add("--live", action="store_true", help="standard output too at the true rate, with keys and schedule")
+    add("--socket", choices=("pub", "push"), default="pub", help="publish to all (default), or push to one of them")
+    add("--connect", action="store_true", help="connect to the address instead of binding it")
+    add("--topic", default="", metavar="TEXT", help="a part of this text before each message")
+    add("--framed", action="store_true", help="a header with index, rate and format before the samples")
+    add("--message", type=int, metavar="N", help="samples in a message (20 ms)")
+    add("--wait", action="store_true", help="begin when a receiver is there")
+    add("--schedule", metavar="FILE.toml", help="changes at their times")
+    add("--no-keys", action="store_true", help="do not listen to the terminal")
+    add("--secret-key", type=Path, metavar="FILE", help="encrypt: own NAME.key_secret")
+    add("--server-key", type=Path, metavar="FILE", help="with --connect: the receiver's NAME.key")
+    add("--client-keys", type=Path, metavar="FOLDER", help="binding: the NAME.key files of those who may connect")
     return parser
+
+
+PLAIN = {
+    "snr": "snr_db",
+    "carrier": "carrier_hz",
+    "clock": "clock_ppm",
+    "drift": "clock_drift_ppm_s",
+    "jitter": "jitter_rms_ui",
+    "phase-noise": "phase_noise_deg",
+    "t-over-tau": "t_over_tau",
+    "iq-gain": "iq_gain_db",
+    "iq-skew": "iq_skew_deg",
+}
+MAY_BE_NONE = ("snr", "t-over-tau")
+
+
+def changes_from(name: str, value: object) -> dict[str, Any]:
+    """What a schedule's ``name = value`` asks of `dsp.transmitter.LiveTransmitter.change`; raises Unusable."""
+    none = value == "none"
+    try:
+        if name in PLAIN:
+            if none and name in MAY_BE_NONE:
+                return {PLAIN[name]: None}
+            return {PLAIN[name]: _number(value)}
+        if name == "jitter-sine":
+            peak, hz = _stretch(str(value))
+            return {"jitter_sine_ui": peak, "jitter_sine_hz": hz}
+        if name == "echo":
+            listed = [] if none else value if isinstance(value, list) else [value]
+            return {"echoes": tuple(_echo(str(item)) for item in listed)}
+        if name == "dc":
+            level = _complex(str(value))
+            return {"dc": level if level.imag else level.real}
+        if name == "clip":
+            kind, level_text = ("none", "1") if none else _clip(str(value))
+            return {"clipping": kind, "clip_at": float(level_text)}
+    except (argparse.ArgumentTypeError, ValueError) as error:
+        raise Unusable(f"{name} = {value!r}: {error}") from None
+    names = " ".join((*PLAIN, "jitter-sine", "echo", "dc", "clip", "silent", "lose", "over"))
+    raise Unusable(f"{name} is not known; take some of {names}")
+
+
+def _number(value: object) -> float:
+    if isinstance(value, bool) or not isinstance(value, (int, float)):
+        raise ValueError("must be a number")
+    return float(value)
+
+
+def _clip(text: str) -> tuple[str, str]:
+    kind, _, level = text.partition(":")
+    if kind not in ("soft", "hard") or not level:
+        raise ValueError("needs soft:LEVEL, hard:LEVEL or none")
+    return kind, level
 
 
 def spec_from(arguments: argparse.Namespace) -> TransmitSpec:
     """The specification that the options ask for; raises DspError or Unusable."""
     symbols = arguments.symbols
+    if symbols is None and arguments.seconds is None:
+        if not is_live(arguments):
+            raise Unusable("say how long: --seconds S or --symbols N")
+        symbols = 1
     if symbols is None:
         if not 0 < arguments.seconds < 1e9:
             raise Unusable(f"--seconds must be above 0, got {arguments.seconds:g}")
@@ -204,9 +304,14 @@ def spec_from(arguments: argparse.Namespace) -> TransmitSpec:
     )
 
 
-def encode(transmission: Transmission, form: SampleFormat) -> bytes:
+def is_live(arguments: argparse.Namespace) -> bool:
+    """Whether the samples go out at their true rate."""
+    return is_stream(arguments.output) or (arguments.live and arguments.output == "-")
+
+
+def encode(samples: Samples, form: SampleFormat) -> bytes:
     """Bytes of one block; 1.0 is 2**(bits - 1), as `monitor` reads it, and integers stop at their ends."""
-    values = transmission.samples.view(np.float32)
+    values = samples.view(np.float32)
     stored = np.dtype(f"{'>' if form.big_endian else '<'}{form.kind}{form.bits // 8}")
     if form.kind == "f":
         return values.astype(stored).tobytes()
@@ -230,7 +335,7 @@ def stem_of(output: Path) -> Path:
 
 def _write_raw(stream: BinaryIO, blocks: Iterator[Transmission], form: SampleFormat) -> None:
     for block in blocks:
-        stream.write(encode(block, form))
+        stream.write(encode(block.samples, form))
     stream.flush()
 
 
@@ -273,6 +378,10 @@ def _write_sigmf(path: Path, spec: TransmitSpec, blocks: Iterator[Transmission],
 def write(arguments: argparse.Namespace, command: Sequence[str]) -> None:
     """Make the recording; raises DspError, MonitorError, Unusable or OSError."""
     spec = spec_from(arguments)
+    if is_live(arguments):
+        _send(arguments, spec)
+        return
+    _refuse_live_options(arguments)
     blocks = transmit_blocks(spec)
     if arguments.output == "-":
         if arguments.recipe:
@@ -297,6 +406,72 @@ def write(arguments: argparse.Namespace, command: Sequence[str]) -> None:
         stem = stem_of(path)
         text = shlex.join(["python", "tools/transmit.py", *command])
         stem.with_name(stem.name + ".recipe.txt").write_text(text + "\n", encoding="utf-8")
+
+
+def _refuse_live_options(arguments: argparse.Namespace) -> None:
+    given = [
+        "--" + name.replace("_", "-")
+        for name in ("live", "connect", "topic", "framed", "message", "wait", "schedule", "secret_key")
+        if getattr(arguments, name)
+    ]
+    if given:
+        raise Unusable(f"{given[0]} is for live streams: tcp://HOST:PORT, ipc://PATH, or - with --live")
+
+
+def _send(arguments: argparse.Namespace, spec: TransmitSpec) -> None:
+    if arguments.recipe:
+        raise Unusable("--recipe needs a file to stand beside, not a live stream")
+    form = _format(arguments.format, spec)
+    message = arguments.message
+    if message is None:
+        message = max(1, round(spec.sample_rate_hz * MESSAGE_S))
+    if not 1 <= message <= 1 << 26:
+        raise Unusable(f"--message must be 1 to {1 << 26} samples, got {message}")
+    endless = arguments.symbols is None and arguments.seconds is None
+    schedule = Schedule() if arguments.schedule is None else read_schedule(arguments.schedule, changes_from)
+    plan = LivePlan(
+        spec,
+        lambda samples: encode(samples, form),
+        message,
+        None if endless else spec.samples,
+        schedule,
+        arguments.wait,
+    )
+    sink = _sink(arguments, spec, form, message)
+    try:
+        terminal = None if arguments.no_keys else terminal_of(sys.stdin)
+        with key_by_key(terminal):
+            send_live(plan, sink, Clock(terminal), say, keys=terminal is not None)
+    finally:
+        sink.close()
+
+
+def _sink(arguments: argparse.Namespace, spec: TransmitSpec, form: SampleFormat, message: int) -> Sink:
+    if arguments.output == "-":
+        return PipeSink(sys.stdout.buffer)
+    curve = None
+    if arguments.secret_key is not None:
+        curve = Curve(arguments.secret_key, arguments.server_key, arguments.client_keys)
+    elif arguments.server_key is not None or arguments.client_keys is not None:
+        raise Unusable("--server-key and --client-keys need --secret-key too")
+    sink = StreamSink(
+        StreamOutput(
+            arguments.output,
+            push=arguments.socket == "push",
+            connect=arguments.connect,
+            topic=arguments.topic,
+            framed=arguments.framed,
+            curve=curve,
+            rate_hz=spec.sample_rate_hz,
+            format=form.name,
+            centre_hz=arguments.frequency,
+            message_s=message / spec.sample_rate_hz,
+        )
+    )
+    if sink.warning:
+        say(sink.warning)
+    say(f"sending at {sink.endpoint}" if not arguments.connect else f"sending to {sink.endpoint}")
+    return sink
 
 
 def say(text: str) -> None:
