@@ -61,6 +61,10 @@ class Figures:
         self.enough = sums.symbols >= LEAST_SYMBOLS and float(counts.min()) >= 3
         if self.enough and self._bit_errors(0.0) > _DECISIONS_RIGHT:
             self._fit_mixtures()
+        self._drawn = sums.drawn / max(sums.symbols, 1) * float(counts.min())  # traces of the rarest level
+        self._tails_counted = self.enough and self._drawn >= FULL_CLASS and self._bit_errors(0.0) < _TAIL_WHOLE
+        first = self._pattern.model(0.0)
+        self._cursors = [first.cursor(rail) for rail in range(self._scheme.rails)]
         self._curves = opening_curves(self._histogram, sums.rows, self._gain, self._spacing, TAIL)
         self._best, self._corner = self._best_column()
         self._openings = np.full(self._curves.shape[:2], math.nan)
@@ -141,14 +145,17 @@ class Figures:
 
         Then the place of the wave's corner, if the opening falls off from one there.
         """
-        start = COLUMNS // 2
-        section = self._curves.min(axis=(0, 1))[start : COLUMNS + COLUMNS // 2 + 1]
-        if not np.isfinite(section).any() or not self.enough:
+        if not self.enough:
             return float(COLUMNS), None
-        top = int(np.nanargmax(section))
+        start, stop = COLUMNS // 2, COLUMNS + COLUMNS // 2 + 1
         noise = float(self._noise(self._pattern.model(0.0)).max())
-        drawn = max(self._sums.drawn / self._sums.symbols * float(self._counts.min()), 1.0)
-        chance = _QUANTILE_SPREAD * math.sqrt(2.0 * TAIL * noise / drawn)
+        if self._tails_counted:
+            section = self._curves.min(axis=(0, 1))[start:stop]
+            chance = _QUANTILE_SPREAD * math.sqrt(2.0 * TAIL * noise / self._drawn)
+        else:
+            section = np.asarray([self._worst_case(_ui(column)) for column in range(start, stop)])
+            chance = 3.0 * math.sqrt(noise / self._sums.symbols)
+        top = int(np.argmax(section))
         step = self._sums.rows.height
         first, last = plateau(section, top, 100.0 * max(step, chance) / float(self._spacing.min()))
         sharp = corner(section, last) if last - first <= 4 else None
@@ -168,17 +175,27 @@ class Figures:
             return start + first + thin + vertex(-squares, thin), sharp
         return start + first + 0.5 * (left + right), sharp
 
+    def _worst_case(self, ui: float) -> float:
+        """Opening in per cent by peak distortion and noise: its course over time is that of the opening, and not ragged."""
+        model = self._pattern.model(ui)
+        outer, z = float(self._nominal[-1]), 3.09
+        least = math.inf
+        for rail, variance in enumerate(model.residual):
+            unit = max(self._cursors[rail], 1e-9)
+            lost = 2.0 * (outer * float(np.abs(model.neighbours(rail)).sum()) + z * math.sqrt(float(variance)))
+            least = min(least, (model.cursor(rail) - lost / float(self._spacing.min())) / unit)
+        return 100.0 * least
+
     def _settle_openings(self) -> None:
         """Openings at the best instant: counted where every level has enough traces for its tail, modelled otherwise."""
         best = _ui(self._best)
         # the scale is that of the best instant, not of the decision instant
         scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(best), 1e-9)
         self._curves *= np.clip(scale, 0.5, 2.0)[:, None, None]
-        drawn = self._sums.drawn / self._sums.symbols * float(self._counts.min())
         self._openings = self._modelled(best, TAIL)
         column = round(self._best)
         counted = self._curves[:, :, column]
-        if drawn >= FULL_CLASS and np.isfinite(counted).all() and self._bit_errors(best) < _TAIL_WHOLE:
+        if self._tails_counted:
             # the curve may have its peak between two columns: the model tells what lies there
             self._openings = counted + self._openings - self._modelled(_ui(column), TAIL)
             return

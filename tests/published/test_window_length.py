@@ -43,7 +43,7 @@ def test_the_mean_opening_does_not_move_with_the_window(name):
     means = {}
     for window, count in ((500, 14), (2_000, 6), (22_000, 1)):
         found = window_openings(name, count * window + 600, window, seed=42)
-        assert len(found) == count
+        assert len(found) >= count
         means[window] = found.mean(axis=0)
     spread = np.ptp(np.asarray(list(means.values())), axis=0)
     assert np.all(spread <= 2.0), means
