@@ -403,10 +403,13 @@ def draw_history(canvas: Canvas, boxes: LiveBoxes, view: View) -> None:
         y = y_of(plot, best, low, high)
         canvas.line(plot.x, y, plot.right, y, theme.ink, 1.0, dashed=True)
     gaps = [at for at in state.gaps_s if start <= at <= end]
-    foot, reach = plot.bottom - canvas.px(2), canvas.px(5)
+    foot, reach, last_x = plot.bottom - canvas.px(2), canvas.px(5), -math.inf
     for at in gaps:
         x = x_at(at)
-        canvas.line(x, plot.y, x, plot.bottom, theme.alert, 1.0)
+        if x - last_x < reach:  # many losses must not hide the curve
+            continue
+        last_x = x
+        canvas.line(x, foot - canvas.px(22), x, plot.bottom, theme.alert, 1.4)
         canvas.polygon(
             [(x - reach, foot - reach), (x, foot - 2 * reach), (x + reach, foot - reach), (x, foot)], theme.alert
         )

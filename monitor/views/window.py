@@ -25,6 +25,7 @@ from PySide6.QtGui import (
 from PySide6.QtWidgets import QApplication, QLineEdit, QMainWindow, QWidget
 
 from monitor.errors import InputError
+from monitor.interrupt import Interrupt
 from monitor.views.canvas import Canvas, qcolour
 from monitor.views.choices import load_choices, save_choices, settings_file
 from monitor.views.control import (
@@ -54,6 +55,7 @@ PainterName = Literal["auto", "raster", "opengl"]
 
 _SCREEN_PACKAGES = "libxcb-cursor0 libxkbcommon-x11-0 libxcb-icccm4 libxcb-keysyms1 libxcb-image0 libxcb-render-util0"
 LOOK_MS = 40
+INTERRUPTED = 130
 SAID_SECONDS = 6.0
 LEAST_SIZE = QSize(900, 560)
 FIRST_SIZE = QSize(1280, 828)
@@ -579,20 +581,24 @@ def run_window(
     pictures: Path | None = None,
     until: Callable[[], bool] | None = None,
 ) -> int:
-    """Show the window until it is closed; returns 0, with the watched side told to stop.
+    """Show the window until it is closed; returns 0, or 130 after Ctrl-C, with the watched side told to stop.
 
     From the main thread. ``choices``: the file of the user's choices, ``pictures``: the folder for saved pictures, ``until``: asked at each
     look whether to end. Raises InputError where Qt does not load, no screen answers, or OpenGL was asked for in vain.
     """
     application = _application()
-    window = LiveWindow(
-        watched, title=title, painter=choose_painter(painter), choices=choices, pictures=pictures, until=until
-    )
-    try:
-        window.show()
-        application.exec()
-    finally:
-        window.close()
-        window.deleteLater()
-        QApplication.sendPostedEvents(None, QEvent.Type.DeferredDelete.value)
-    return 0
+    chosen = choose_painter(painter)
+    with Interrupt() as interrupt:
+
+        def over() -> bool:
+            return interrupt.asked or (until is not None and until())
+
+        window = LiveWindow(watched, title=title, painter=chosen, choices=choices, pictures=pictures, until=over)
+        try:
+            window.show()
+            application.exec()
+        finally:
+            window.close()
+            window.deleteLater()
+            QApplication.sendPostedEvents(None, QEvent.Type.DeferredDelete.value)
+    return INTERRUPTED if interrupt.asked else 0

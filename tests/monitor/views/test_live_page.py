@@ -228,8 +228,10 @@ def test_marks_gaps_alarms_and_missing_lock_stand_at_their_times(live_states):
     inside = slice(plot.y + 4, plot.bottom - 4)
     for mark in state.marks:
         assert np.abs(times(columns(theme.ink, inside, 0.9)) - mark.seconds).min() < 0.6
+    at_foot = times(columns(theme.alert, slice(plot.bottom - 20, plot.bottom - 1), 0.9))
     for gap in state.gaps_s:
-        assert np.abs(times(columns(theme.alert, inside, 0.6)) - gap).min() < 0.6
+        assert np.abs(at_foot - gap).min() < 0.6
+    assert at_foot.size <= 2 * len(state.gaps_s)
     lane = times(columns(theme.alert, slice(plot.bottom + 3, plot.bottom + 5), 1.0))
     assert lane.min() == pytest.approx(98.0, abs=0.6)
     assert lane.max() == pytest.approx(360.0, abs=0.6)
@@ -239,6 +241,15 @@ def test_marks_gaps_alarms_and_missing_lock_stand_at_their_times(live_states):
     area = pixels[inside, plot.x + first : plot.x + last]
     assert not (np.abs(area - rgb(theme.accent)).sum(axis=2) < 60).any()
     assert (np.abs(area - rgb(theme.track)).sum(axis=2) == 0).mean() > 0.4
+
+
+def test_a_thousand_losses_do_not_hide_the_curve(live_states):
+    state = live_states["busy"]
+    page = drawn(View(replace(state, gaps_s=tuple(np.linspace(1.0, 410.0, 1000).tolist())), ()))
+    plot, theme = page.boxes.history_plot, find_theme("light")
+    area = crop(as_array(page.image).astype(int), plot)[: plot.height - 26]
+    assert not (np.abs(area - rgb(theme.alert)).sum(axis=2) < 20).any()
+    assert (np.abs(area - rgb(theme.accent)).sum(axis=2) < 60).any(axis=0).mean() > 0.5
 
 
 def test_a_rail_alone_fills_the_eyes_place(live_states):

@@ -1,5 +1,6 @@
 import gc
 import os
+import signal
 import subprocess
 import sys
 import threading
@@ -549,6 +550,25 @@ def test_running_the_window_returns_zero_when_it_is_closed(tmp_path, live_states
 
     assert run_window(watch, painter="auto", title="x", choices=tmp_path / "c.ini", until=enough) == 0
     assert watch.told == [("set_persistence", 2.0), ("stop",)]
+
+
+def test_ctrl_c_ends_the_watch_as_closing_does_but_says_so(tmp_path, live_states):
+    from monitor.views.window import run_window
+
+    watch = RecordingWatch(live_states["busy"])
+    looks = []
+
+    def press():
+        looks.append(None)
+        if len(looks) == 2:
+            signal.raise_signal(signal.SIGINT)
+        return False
+
+    before = signal.getsignal(signal.SIGINT)
+    assert run_window(watch, painter="raster", choices=tmp_path / "c.ini", until=press) == 130
+    assert len(looks) == 2
+    assert watch.told[-1] == ("stop",)
+    assert signal.getsignal(signal.SIGINT) is before
 
 
 # -- painters and screens --------------------------------------------------------------------------------------------------
