@@ -22,7 +22,7 @@ from monitor.views.control import (
     persistence_words,
     step_persistence,
 )
-from monitor.views.history import AlarmMemory
+from monitor.views.history import AlarmMemory, AlarmSpan
 from monitor.views.live_wording import calls
 from monitor.views.terminal_cells import Screen, spell
 from monitor.views.terminal_colours import Look, look_of
@@ -108,6 +108,7 @@ class TerminalView:
         self._pictures = pictures
         self._state = watched.state()
         self._memory = AlarmMemory()
+        self._spans: tuple[AlarmSpan, ...] = ()
         self._shown = Shown()
         self._remark_until = 0.0
         self.closing = False
@@ -120,9 +121,10 @@ class TerminalView:
             self._state = _held(self._state, newest)
         else:
             self._state = newest
+            self._spans = self._memory.spans()
         if self._shown.remark and self._now() >= self._remark_until:
             self._shown = replace(self._shown, remark="")
-        shown = replace(self._shown, alarm_spans=self._memory.spans())
+        shown = replace(self._shown, alarm_spans=self._spans)
         return compose(self._state, columns, rows, self._look, shown)
 
     def press(self, key: str) -> None:

@@ -159,6 +159,13 @@ class Sheet:
         self._chars[place], self._fore[place], self._back[place] = chars, fore, back
         self._weight[place] = PLAIN
 
+    def stamp(self, x: int, y: int, chars: NDArray[np.uint32], where: NDArray[np.bool_], ink: Ink) -> None:
+        """Copy those of the narrow characters ``(height, width)`` that ``where`` names; the place must lie within the sheet."""
+        place = np.s_[y : y + chars.shape[0], x : x + chars.shape[1]]
+        for part, value in ((self._fore, ink.fore), (self._back, ink.back), (self._weight, ink.weight)):
+            part[place][where] = value
+        self._chars[place][where] = chars[where]
+
     def finish(self) -> Screen:
         """The picture; the sheet must not be drawn on afterwards."""
         for part in (self._chars, self._fore, self._back, self._weight):
@@ -187,8 +194,11 @@ def _ascii(character: str) -> str:
     return base or "?" * get_character_cell_size(character)
 
 
+@lru_cache(maxsize=4096)
 def cells(text: str) -> int:
     """How many cells a spelled text takes."""
+    if text.isascii():
+        return len(text)
     return sum(get_character_cell_size(character) for character in text)
 
 

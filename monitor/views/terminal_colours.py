@@ -171,7 +171,7 @@ def palette(depth: Depth) -> Palette:
 
 def _shades(depth: Depth) -> NDArray[np.int32]:
     if depth == 16:
-        return _frozen(np.array([0, 4, 6, 7], dtype=np.int32))
+        return _frozen(np.array([0, 4, 4, 4, 4, 6, 6, 7, 7], dtype=np.int32))
     count = SHADES if depth == TRUE_COLOUR else _COARSE_SHADES
     ramp = find_theme("dark").ramp[np.rint(np.linspace(0, RAMP_STEPS - 1, count)).astype(np.int64)]
     codes = [

@@ -14,7 +14,10 @@ _STEP_OVER = 4
 
 
 def update(screen: Screen, before: Screen | None, depth: Depth) -> bytes:
-    """The bytes that turn ``before`` into ``screen``; without one of the same size, the whole screen. Empty where nothing changed."""
+    """The bytes that turn ``before`` into ``screen``; without one of the same size, the whole screen. Empty where nothing changed.
+
+    Colours and weight are at rest before and after.
+    """
     shape = screen.chars.shape
     if before is None or before.chars.shape != shape:
         changed = np.ones(shape, dtype=np.bool_)
@@ -32,7 +35,7 @@ def update(screen: Screen, before: Screen | None, depth: Depth) -> bytes:
     halves = screen.chars == CONTINUED
     # a wide character is sent as a whole
     changed[:, :-1] |= changed[:, 1:] & halves[:, 1:]
-    style: Ink | None = None
+    style = at_rest = Ink()
     for row in np.flatnonzero(changed.any(axis=1)).tolist():
         for start, stop in _runs(np.flatnonzero(changed[row]).tolist()):
             out.append(f"\x1b[{row + 1};{start + 1}H" if start else f"\x1b[{row + 1}H")
@@ -46,12 +49,12 @@ def update(screen: Screen, before: Screen | None, depth: Depth) -> bytes:
             for character, fore, back, weight in cells:
                 if character == CONTINUED:
                     continue
-                if style is None or style.fore != fore or style.back != back or style.weight != weight:
+                if style.fore != fore or style.back != back or style.weight != weight:
                     wanted = Ink(fore, back, weight)
                     out.append(_restyle(style, wanted, depth))
                     style = wanted
                 out.append(chr(character))
-    if style is not None:
+    if style != at_rest:
         out.append("\x1b[0m")
     if screen.cursor is not None and (out or screen.cursor != cursor_before):
         column, row = screen.cursor
@@ -71,9 +74,9 @@ def _runs(columns: list[int]) -> list[tuple[int, int]]:
     return runs
 
 
-def _restyle(before: Ink | None, wanted: Ink, depth: Depth) -> str:
+def _restyle(before: Ink, wanted: Ink, depth: Depth) -> str:
     parts = []
-    if before is None or before.weight & ~wanted.weight:
+    if before.weight & ~wanted.weight:
         parts.append("0")
         before = Ink()
     if wanted.weight & BOLD and not before.weight & BOLD:

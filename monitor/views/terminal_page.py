@@ -378,11 +378,10 @@ def _draw_remark(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y:
         name = f"Name of mark {len(state.marks)}: " if state.marks else "Name: "
         start = sheet.write(0, y, name, inks.strong)
         room = max(sheet.columns - start - 1, 0)
-        typed = sheet.spell(shown.entry) + (" " if shown.entry.endswith(" ") else "")
+        typed = sheet.spell(shown.entry)
         while cells(typed) > room:
             typed = typed[1:]
         sheet.cursor = (min(start + cells(typed), sheet.columns - 1), y)
-        # the spaces inside are kept as typed
         sheet.write(start, y, typed, inks.text)
         return
     text = shown.remark or (state.notices[-1] if state.notices else "")
@@ -401,7 +400,9 @@ def _draw_keys(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y: i
             for name, words in _FOOT
             if (name != "acknowledge" or state.alarms) and (name != "rail" or len(state.rails) > 1)
         ]
-        parts = [(keys[name], "go on" if name == "hold" and shown.held else words) for name, words in wanted]
+        if shown.held:
+            wanted = [("hold", "go on"), *(pair for pair in wanted if pair[0] != "hold")]
+        parts = [(keys[name], words) for name, words in wanted]
     x = 0
     if shown.held:
         x = sheet.write(0, y, f" held at {clock(state.snapshot.seconds or state.seconds)} ", inks.held) + 2

@@ -24,17 +24,20 @@ _EIGHTHS = " ▁▂▃▄▅▆▇█"
 _ASCII_PARTS = " .:#"
 
 
-def coarse(image: EyeImage, width: int) -> EyeImage:
-    """The same eye on at most ``width`` columns of equal length, each the mean of those that fall in it."""
+def coarse(image: EyeImage, rail: int, width: int) -> EyeImage:
+    """One rail of the eye on at most ``width`` columns of equal length, each the mean of those that fall in it."""
+    density = image.density[rail : rail + 1]
     if image.column_ui.size <= width:
-        return image
+        return replace(image, density=density)
     span = pixels.TIME_MAX_UI - pixels.TIME_MIN_UI
     place = np.clip(((image.column_ui - pixels.TIME_MIN_UI) / span * width).astype(np.int64), 0, width - 1)
     starts = np.flatnonzero(np.diff(place, prepend=-1))
     counts = np.diff(starts, append=place.size)
-    density = np.add.reduceat(image.density, starts, axis=1, dtype=np.uint64) // counts[None, :, None].astype(np.uint64)
+    sums = np.add.reduceat(density[0].astype(np.float64), starts, axis=0)
+    # a lone trace is not lost to rounding
+    means = np.ceil(sums / counts[:, None]).astype(np.uint32)
     centres = pixels.TIME_MIN_UI + span * (place[starts] + 0.5) / width
-    return replace(image, density=density.astype(np.uint32), column_ui=centres)
+    return replace(image, density=means[None], column_ui=centres)
 
 
 def draw_eye(
@@ -49,7 +52,7 @@ def draw_eye(
     pixel_rows = 2 * height if halves else height
     signs = _SHADE_SIGNS if sheet.unicode else _ASCII_SIGNS
     steps = inks.shades.size or len(signs)
-    shade = pixels.density_indices(coarse(image, plot), rail, low, high, plot, pixel_rows, steps)
+    shade = pixels.density_indices(coarse(image, rail, plot), 0, low, high, plot, pixel_rows, steps)
     best = None
     if image.best_ui is not None and pixels.TIME_MIN_UI <= image.best_ui <= pixels.TIME_MAX_UI:
         best = _column(image.best_ui, plot)
@@ -116,16 +119,13 @@ def draw_curve(
 
 def draw_bars(sheet: Sheet, ink: Ink, shares: NDArray[np.float64], x: int, y: int, height: int) -> None:
     """A bar a column, each so much of the rows high; nothing where the share is NaN or not above 0."""
-    signs = _EIGHTHS if sheet.unicode else _ASCII_PARTS
-    full = len(signs) - 1
-    for column, share in enumerate(shares.tolist()):
-        if not share > 0:
-            continue
-        filled = max(1, round(min(share, 1.0) * height * full))
-        for row in range(height):
-            part = min(max(filled - (height - 1 - row) * full, 0), full)
-            if part:
-                sheet.write(x + column, y + row, signs[part], ink)
+    signs = np.array([ord(sign) for sign in (_EIGHTHS if sheet.unicode else _ASCII_PARTS)], dtype=np.uint32)
+    full = signs.size - 1
+    known = shares > 0
+    filled = np.maximum(1, np.rint(np.clip(np.where(known, shares, 0.0), 0.0, 1.0) * height * full)).astype(np.int64)
+    parts = np.clip(filled - full * np.arange(height - 1, -1, -1)[:, None], 0, full)
+    parts[:, ~known] = 0
+    sheet.stamp(x, y, signs[parts], parts > 0, ink)
 
 
 def draw_history(
