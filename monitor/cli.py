@@ -15,7 +15,9 @@ from monitor.arguments import (
     positive,
 )
 from monitor.errors import InputError, MonitorError
+from monitor.key_command import add_key_arguments
 from monitor.replay import INTERRUPTED, discard_standard_output, replay
+from monitor.running import add_capture_options
 from monitor.terminal import say
 from monitor.version import version
 from monitor.watching import add_watch_arguments
@@ -88,6 +90,7 @@ def parser() -> argparse.ArgumentParser:
     add_measure_options(command)
     add_output_options(command)
     add_journal_options(command)
+    add_capture_options(command)
     command.add_argument(
         "--every", type=positive, default=1.0, metavar="S", help="a journal line each so often (default 1)"
     )
@@ -100,6 +103,15 @@ def parser() -> argparse.ArgumentParser:
         allow_abbrev=False,
     )
     add_watch_arguments(live)
+    pair = commands.add_parser(
+        "keys",
+        help="make keys for an encrypted stream",
+        description="Makes NAME.key, to be given to the other side, and NAME.key_secret, which stays where it is.",
+        epilog="The side that binds names its own secret key and the folder of the keys it lets in (--key, --client-keys); "
+        "the side that connects its own secret key and the other's public one (--key, --server-key).",
+        allow_abbrev=False,
+    )
+    add_key_arguments(pair)
     return top
 
 

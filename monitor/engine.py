@@ -5,7 +5,7 @@ from collections import deque
 from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures import Executor, Future
 from dataclasses import dataclass, field, replace
-from typing import Any
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -31,12 +31,25 @@ from monitor.state import AlarmLine, Change, HistoryPoint, LiveState, Mark, Verd
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
+TICK_SECONDS = 0.2  # in which clipped samples are counted together
+CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
 LOOK_SECONDS = 1.0  # between two tries to identify a link
+RELOOK_SECONDS = 5.0  # without lock, after which a link that was identified is identified anew
 HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20
 HISTORY = 4096
 
 Line = Callable[[str, int, float, Mapping[str, Any]], None]
+
+
+class Tap(Protocol):
+    """Who sees the samples beside the chain, before it does; called in the engine's thread."""
+
+    def describe(self, sample_rate_hz: float, *, complex_in: bool, centre_hz: float | None) -> None:
+        """What the samples are from here on."""
+
+    def block(self, block: Block) -> None:
+        """The next samples; ``start`` counts as the journal does."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,6 +66,11 @@ class EngineOptions:
     chain: ChainOptions = field(default_factory=ChainOptions)
     display: bool = True
     aside: Executor | None = None
+
+    @property
+    def judges(self) -> bool:
+        """Whether somebody wants readings between two lines."""
+        return self.display or bool(self.rules)
 
 
 @dataclass(slots=True)
@@ -72,7 +90,13 @@ class Engine:
     """Watches one link in one stream.
 
     `feed` takes blocks, `idle` says that none came for a while. ``line`` receives every journal line: kind, sample, seconds, fields.
-    The same blocks give the same lines, live or replayed.
+    The same samples give the same lines, live or replayed, however they are cut into blocks (but for the place of clipped samples, which
+    a block only counts).
+
+    Attributes
+    ----------
+    samples, samples_lost
+        Totals of the stream.
     """
 
     def __init__(
@@ -84,6 +108,9 @@ class Engine:
         options: EngineOptions,
         line: Line,
         source_text: str = "",
+        alarms: AlarmBoard | None = None,
+        stalled: bool = False,
+        tap: Tap | None = None,
     ) -> None:
         self._wanted = wanted
         self._complex = complex_in
@@ -91,7 +118,8 @@ class Engine:
         self._options = options
         self._line = line
         self._source_text = source_text
-        self.alarms = AlarmBoard(options.rules, built_in_alarms(options.stall_s))
+        self.alarms = alarms or AlarmBoard(options.rules, built_in_alarms(options.stall_s))
+        self._tap = tap
         self._chain: Chain | None = None
         self._identified: Identified | None = None
         self._head: list[Block] = []
@@ -99,8 +127,14 @@ class Engine:
         self._next_look = 0
         self._looking: Future[Identified | NotFound] | None = None
         self._searching = "waiting for samples"
-        self._samples = 0
+        self._position = 0
+        self.samples = 0
         self.samples_lost = 0
+        self._lost_before = 0
+        self._tick_samples = self._tick_clipped = self._tick_lost = 0
+        self._unusable = ""
+        self._began_anew = False
+        self._ending: str | None = None
         self._gaps: deque[float] = deque(maxlen=256)
         self._locks: deque[tuple[float, bool]] = deque(maxlen=256)
         self._marks: deque[Mark] = deque(maxlen=64)
@@ -110,7 +144,7 @@ class Engine:
         self._best: Reading | None = None
         self._best_at = 0.0
         self.persistence_s: float | None = 2.0
-        self._stalled = False
+        self._stalled = stalled
         self._last_lock_loss: float | None = None
         self._reset_measures()
 
@@ -132,12 +166,12 @@ class Engine:
     @property
     def seconds(self) -> float:
         """Length of the stream so far, lost samples included."""
-        return (self._samples + self.samples_lost) / self.sample_rate_hz
+        return self._position / self.sample_rate_hz
 
     @property
     def position(self) -> int:
         """Index in the stream of the next sample to come, lost samples counted."""
-        return self._samples + self.samples_lost
+        return self._position
 
     def feed(self, block: Block) -> None:
         """Take the next block. Raises InputError where link and samples do not fit."""
@@ -146,29 +180,87 @@ class Engine:
             self._tell_alarms(self.alarms.condition("no samples", False, self.seconds, self.position, None))
         if block.lost:
             self.samples_lost += block.lost
+            self._position += block.lost
+            self._tick_lost += block.lost
             self._gaps.append(self.seconds)
             self._emit("gap", samples_lost=block.lost, why="samples lost")
             self._tell_alarms(self.alarms.condition("samples lost", True, self.seconds, self.position, block.lost))
-        # the engine's own count is the journal's: it goes on when a sender starts from 0 again
-        block = replace(block, start=self.position)
-        self._samples += block.samples.size
+            self._lost_before += block.lost
+        size = block.samples.size
+        at = clipped = 0
+        while at < size:
+            n = min(self._until_tick(), self._until_look(), size - at)
+            so_far = block.clipped * (at + n) // size
+            # the engine's own count is the journal's: it goes on when a sender starts from 0 again
+            self._take(
+                Block(
+                    block.samples[at : at + n],
+                    self._position,
+                    self._lost_before,
+                    so_far - clipped,
+                    0 if at else block.nonfinite,
+                )
+            )
+            self._lost_before = 0
+            at += n
+            clipped = so_far
+
+    def _until_tick(self) -> int:
+        step = max(round(TICK_SECONDS * self.sample_rate_hz), 1)
+        return step - self._position % step
+
+    def _take(self, piece: Block) -> None:
+        """Samples of one tick, or a part of them."""
+        if self._tap is not None:
+            self._tap.block(piece)
+        at_tick = piece.samples.size == self._until_tick()
+        self._position += piece.samples.size
+        self.samples += piece.samples.size
+        self._tick_samples += piece.samples.size
+        self._tick_clipped += piece.clipped
         try:
-            if self._chain is None:
-                self._look(block)
+            if self._unusable:
+                pass
+            elif self._chain is None:
+                self._look(piece)
             else:
-                self._push(block)
+                self._push(piece)
         except DspError as error:
-            raise InputError(str(error)) from None
+            self._cannot(str(error))
+        if at_tick:
+            self._tick()
+
+    def _tick(self) -> None:
+        """Judge what blocks only count, at fixed places of the stream."""
+        seconds, at = self.seconds, self.position
         if self._reading is None:
             # what cannot be known counts towards no alarm's delay
-            self._tell_alarms(self.alarms.update(None, self.seconds, self.position))
-        if block.clipped:
-            share = 100.0 * block.clipped / max(block.samples.size, 1)
-            self._tell_alarms(self.alarms.condition("clipping", share > 0.01, self.seconds, self.position, share))
-        else:
-            self._tell_alarms(self.alarms.condition("clipping", False, self.seconds, self.position, 0.0))
-        if not block.lost:
-            self._tell_alarms(self.alarms.condition("samples lost", False, self.seconds, self.position, 0))
+            self._tell_alarms(self.alarms.update(None, seconds, at))
+        share = 100.0 * self._tick_clipped / max(self._tick_samples, 1)
+        self._tell_alarms(self.alarms.condition("clipping", share > CLIPPED_PCT, seconds, at, share))
+        if not self._tick_lost:
+            self._tell_alarms(self.alarms.condition("samples lost", False, seconds, at, 0))
+        self._tick_samples = self._tick_clipped = self._tick_lost = 0
+        lost = self._last_lock_loss
+        if self._chain is not None and self._identified is not None and self._identified.found:
+            if lost is None or seconds - lost <= RELOOK_SECONDS:
+                return
+            # what was found by itself may have changed: look at it anew
+            self._chain.finish()
+            self._chain, self._last_lock_loss = None, None
+            self._next_look = 0
+            self._reset_measures()
+
+    def _cannot(self, reason: str) -> None:
+        """Link and samples do not fit: the user's mistake at the start, something to wait for once it has worked."""
+        if not self._began_anew:
+            raise InputError(reason)
+        self._chain, self._looking = None, None
+        self._head, self._head_samples = [], 0
+        self._unusable = self._searching = reason
+        self._reset_measures()
+        self.notice(reason)
+        self._emit("gap", samples_lost=0, why=reason)
 
     def idle(self, for_s: float) -> None:
         """No samples have come for ``for_s`` seconds of the wall clock."""
@@ -179,56 +271,75 @@ class Engine:
             self._tell_alarms(self.alarms.condition("no samples", True, self.seconds + for_s, self.position, for_s))
 
     def finish(self) -> None:
-        """The stream has ended."""
-        if self._chain is None and self._looking is not None:
-            found, self._looking = self._looking.result(), None
-            self._settle(found, last=True)
-        if self._chain is None and self._head_samples:
-            self._try_head(last=True)
-        if self._chain is not None:
-            self._chain.finish()
+        """The stream has ended. Raises InputError as `feed` does."""
+        self._ending = "end of stream"
+        try:
+            if self._chain is None and self._looking is not None:
+                found, self._looking = self._looking.result(), None
+                self._settle(found, last=True)
+            if self._chain is None and self._head_samples:
+                self._try_head(last=True)
+            if self._chain is not None:
+                self._chain.finish()
+        except DspError as error:
+            self._cannot(str(error))
 
     def changed(self, *, sample_rate_hz: float | None = None, complex_in: bool | None = None, why: str) -> None:
         """The sender restarted or changed what it sends: begin anew with the link as given."""
         if self._chain is not None:
+            self._ending = why
             self._chain.finish()
-        position = self.position
+            self._ending = None
         if sample_rate_hz is not None and sample_rate_hz != self.sample_rate_hz:
             # seconds go on from where they were
-            position = round(self.seconds * sample_rate_hz)
+            self._position = round(self.seconds * sample_rate_hz)
             self.sample_rate_hz = sample_rate_hz
         if complex_in is not None:
             self._complex = complex_in
-        self._samples, self.samples_lost = position, 0
         self._chain = None
         self._looking = None
         self._head, self._head_samples = [], 0
         self._next_look = 0
+        self._last_lock_loss = None
+        self._unusable, self._began_anew = "", True
+        self._tick_samples = self._tick_clipped = self._tick_lost = 0
         self._reset_measures()
         self.notice(why)
         self._emit("gap", samples_lost=0, why=why)
 
     # -- finding the link ----------------------------------------------------------------------------------------------
 
-    def _look(self, block: Block) -> None:
-        self._head.append(block)
-        self._head_samples += block.samples.size
+    def _given(self) -> bool:
+        wanted = self._wanted
+        return wanted.scheme is not None and wanted.symbol_rate_hz is not None and wanted.pulse is not None
+
+    def _look_at(self) -> int:
+        """So many samples of the head are looked at next."""
         rate = self._wanted.symbol_rate_hz
         need = min(HEAD_SECONDS * self.sample_rate_hz, HEAD_SAMPLES)
-        if self._wanted.scheme is not None and rate is not None and self._wanted.pulse is not None:
+        if self._given():
             # only the place of the band is to be found, if that
             need = min(need, 0.1 * self.sample_rate_hz)
         elif rate is not None:
             need = min(need, 4000 * self.sample_rate_hz / rate)
+        return max(math.ceil(need), self._next_look)
+
+    def _until_look(self) -> int:
+        if self._chain is not None or self._unusable or self._looking is not None:
+            return HEAD_SAMPLES
+        return max(self._look_at() - self._head_samples, 1)
+
+    def _look(self, block: Block) -> None:
+        self._head.append(block)
+        self._head_samples += block.samples.size
         if self._looking is not None:
             self._keep_head(0.25)
             if self._looking.done():
                 found, self._looking = self._looking.result(), None
                 self._settle(found, last=False)
-        elif self._head_samples >= max(need, self._next_look):
+        elif self._head_samples >= self._look_at():
             # a link that is given whole is placed at once, so that live and replayed it begins at the same sample
-            given = self._wanted.scheme is not None and rate is not None and self._wanted.pulse is not None
-            if self._options.aside is not None and not given:
+            if self._options.aside is not None and not self._given():
                 self._searching = "looking at the first samples"
                 self._looking = self._options.aside.submit(
                     settle_link, list(self._head), self.sample_rate_hz, self._wanted
@@ -238,8 +349,15 @@ class Engine:
 
     def _keep_head(self, seconds: float) -> None:
         keep = int(min(seconds * self.sample_rate_hz, HEAD_SAMPLES))
-        while self._head and self._head_samples - self._head[0].samples.size >= keep:
-            self._head_samples -= self._head.pop(0).samples.size
+        surplus = self._head_samples - keep
+        while self._head and surplus > 0:
+            first = self._head.pop(0)
+            if first.samples.size > surplus:
+                # a copy, so that not all of a long block is kept for its end
+                self._head.insert(0, Block(first.samples[surplus:].copy(), first.start + surplus))
+            dropped = min(surplus, first.samples.size)
+            self._head_samples -= dropped
+            surplus -= dropped
 
     def _try_head(self, *, last: bool = False) -> None:
         self._settle(settle_link(self._head, self.sample_rate_hz, self._wanted), last=last)
@@ -277,21 +395,15 @@ class Engine:
     def _push(self, block: Block) -> None:
         assert self._chain is not None
         self._chain.push(block)
-        lost = self._last_lock_loss
-        if lost is not None and self._identified is not None and self._identified.found and self.seconds - lost > 5.0:
-            # what was found by itself may have changed: look at it anew
-            self._chain.finish()
-            self._chain, self._last_lock_loss = None, None
-            self._next_look = 0
-            self._reset_measures()
 
     def _lock_event(self, event: LockEvent) -> None:
         gained = event.state == "gained"
         at = event.sample / self.sample_rate_hz
         self._locks.append((at, gained))
         self._last_lock_loss = None if gained else at
-        self._emit("lock", sample=event.sample, state=event.state, why=event.reason)
-        if event.reason != "end of stream":
+        why = event.reason if self._ending is None else self._ending
+        self._emit("lock", sample=event.sample, state=event.state, why=event.reason if gained else why)
+        if gained or self._ending != "end of stream":
             self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
         if not gained:
             self._tell_alarms(self.alarms.update(None, at, event.sample))
@@ -316,8 +428,10 @@ class Engine:
             self._openings.append(window_opening(self._block, self._chain.context()))
             self._block = None
         measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
-        if seconds >= self._next_judge and measured >= min(LEAST_JUDGED, self._block_symbols):
-            self._next_judge = seconds + JUDGE_SECONDS
+        due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
+        if seconds >= due and measured >= min(LEAST_JUDGED, self._block_symbols):
+            # at fixed places of the stream, so that who watches makes no difference to the lines
+            self._next_judge = (seconds // JUDGE_SECONDS + 1) * JUDGE_SECONDS
             self._judge(seconds)
 
     def _merged(self) -> EyeSums:
@@ -384,7 +498,9 @@ class Engine:
                 reading.opening_high_pct if reading else None,
             )
         )
-        self._mark_opening = self._opening
+        if self._opening is not None or reading is None:
+            self._mark_opening = self._opening
+        self._opening = None  # a change is told of what comes from now on
         # what follows is measured on its own, not mixed with what was before the mark
         self._blocks.clear()
         self._openings.clear()

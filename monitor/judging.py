@@ -6,9 +6,11 @@ from typing import Any, Self
 
 from monitor.alarm_rules import AlarmRule
 from monitor.engine import Engine, EngineOptions
+from monitor.errors import printable
 from monitor.linkfile import LinkOptions
-from monitor.running import chain_options, open_journal, start_fields
+from monitor.running import chain_options, open_capture, open_journal, start_fields
 from monitor.sources import Source
+from monitor.terminal import say
 
 
 class Judged:
@@ -17,7 +19,8 @@ class Judged:
     def __init__(
         self, parsed: argparse.Namespace, source: Source, link: LinkOptions, rules: tuple[AlarmRule, ...]
     ) -> None:
-        self._journal = open_journal(parsed)
+        capture = open_capture(parsed, lambda text: say(f"warning: {text}"), live=False)
+        self._journal = open_journal(parsed, capture)
         self._start = start_fields(parsed.source, link, rules)
         self._engine = Engine(
             link.wanted(),
@@ -27,7 +30,14 @@ class Judged:
                 window=None, every_s=parsed.every, rules=rules, display=False, chain=chain_options(parsed, link)
             ),
             line=self._journal.write,
+            source_text=parsed.source,
+            tap=capture,
         )
+        self._ended = False
+        if capture is not None:
+            info = source.info
+            capture.describe(info.sample_rate_hz, complex_in=info.complex_samples, centre_hz=info.centre_hz)
+            capture.picture = lambda: self._engine.state().snapshot
         self.feed = self._engine.feed
 
     def __enter__(self) -> Self:
@@ -37,17 +47,25 @@ class Judged:
     def __exit__(
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
-        self._journal.close()
+        try:
+            if not self._ended:
+                self._last_line(printable(str(error)) or "interrupted" if error is not None else "interrupted")
+        finally:
+            self._journal.close()
 
-    def finish(self) -> list[dict[str, Any]]:
-        """The stream has ended; returns the alarms that there were."""
+    def finish(self, *, interrupted: bool = False) -> list[dict[str, Any]]:
+        """The stream has ended; returns the alarms that there were. Raises InputError."""
+        self._engine.finish()
+        self._last_line("interrupted" if interrupted else "the recording ended")
+        return self._engine.alarms.record()
+
+    def _last_line(self, why: str) -> None:
         engine = self._engine
-        engine.finish()
+        self._ended = True
         totals = {
-            "why": "the recording ended",
-            "samples": engine.position - engine.samples_lost,
+            "why": why,
+            "samples": engine.samples,
             "samples_lost": engine.samples_lost,
             "alarms_raised": engine.alarms.activations,
         }
         self._journal.write("stop", engine.position, engine.seconds, totals)
-        return engine.alarms.record()

@@ -45,7 +45,7 @@ def replay(parsed: argparse.Namespace) -> int:
             observe = judge.feed if judge is not None else None
             outcome = run(source, wanted, options, threads=parsed.threads, progress=bar.advance, observe=observe)
             if judge is not None:
-                outcome.alarms = judge.finish()
+                outcome.alarms = judge.finish(interrupted=interrupt.asked)
         outcome.interrupted = interrupt.asked
     _tell(outcome, as_json=parsed.json)
     if parsed.picture is not None:

@@ -2,16 +2,19 @@
 
 import argparse
 import platform
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from datetime import UTC, datetime
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from monitor.arguments import not_negative, whole
 from monitor.terminal import say
 from monitor.version import version
 
 if TYPE_CHECKING:
     from dsp.chain import ChainOptions
     from monitor.alarm_rules import AlarmRule
+    from monitor.capture import Capture
     from monitor.journal import Journal
     from monitor.linkfile import LinkOptions
 
@@ -48,24 +51,71 @@ def chain_options(parsed: argparse.Namespace, link: "LinkOptions") -> "ChainOpti
     return replace(options, timing_bandwidth=link.loop_bandwidth)
 
 
-def open_journal(parsed: argparse.Namespace) -> "Journal":
-    """The journal with all that listens to it. Raises InputError."""
+def add_capture_options(parser: argparse.ArgumentParser) -> None:
+    """Samples and picture of each alarm."""
+    group = parser.add_argument_group("captures")
+    group.add_argument(
+        "--capture", type=Path, metavar="FOLDER", help="for each alarm the samples around it (SigMF) and the picture"
+    )
+    group.add_argument(
+        "--capture-before", type=not_negative, default=2.0, metavar="S", help="seconds before the alarm (default 2)"
+    )
+    group.add_argument(
+        "--capture-after", type=not_negative, default=2.0, metavar="S", help="seconds after the alarm (default 2)"
+    )
+    group.add_argument(
+        "--capture-most", type=whole, default=100, metavar="N", help="no more than so many captures (default 100)"
+    )
+
+
+def open_capture(parsed: argparse.Namespace, tell: Callable[[str], None], *, live: bool) -> "Capture | None":
+    """What writes the captures, if they are wanted. Raises InputError."""
+    if parsed.capture is None:
+        return None
+    from monitor.capture import Capture
+
+    return Capture(
+        parsed.capture,
+        before_s=parsed.capture_before,
+        after_s=parsed.capture_after,
+        most=parsed.capture_most,
+        tell=tell,
+        now=(lambda: datetime.now(UTC)) if live else None,
+    )
+
+
+def open_journal(
+    parsed: argparse.Namespace, capture: "Capture | None" = None, tell: Callable[[str], None] | None = None
+) -> "Journal":
+    """The journal with all that listens to it; ``tell`` is given what goes wrong with it later on. Raises InputError."""
     from monitor.journal import Journal, Rotation, Sink
 
+    tell = tell or _warn
     sinks: list[Sink] = []
-    if parsed.publish is not None:
-        from monitor.publisher import Publisher
+    try:
+        if capture is not None:
+            sinks.append(capture)
+        if parsed.publish is not None:
+            from monitor.publisher import Publisher
 
-        publisher = Publisher(parsed.publish)
-        for note in publisher.notes:
-            say(f"warning: {note}")
-        sinks.append(publisher)
-    if parsed.on_alarm is not None:
-        from monitor.alarm_command import AlarmCommand
+            publisher = Publisher(parsed.publish)
+            sinks.append(publisher)
+            for note in publisher.notes:
+                _warn(note)
+        if parsed.on_alarm is not None:
+            from monitor.alarm_command import AlarmCommand
 
-        sinks.append(AlarmCommand(parsed.on_alarm, failed=lambda text: say(f"warning: {text}")))
-    rotation = Rotation(parsed.rotate_size, parsed.rotate_daily)
-    return Journal(parsed.journal, now=lambda: datetime.now(UTC), rotation=rotation, sinks=sinks)
+            sinks.append(AlarmCommand(parsed.on_alarm, failed=tell))
+        rotation = Rotation(parsed.rotate_size, parsed.rotate_daily)
+        return Journal(parsed.journal, now=lambda: datetime.now(UTC), rotation=rotation, sinks=sinks)
+    except BaseException:
+        for sink in sinks:
+            sink.close()
+        raise
+
+
+def _warn(text: str) -> None:
+    say(f"warning: {text}")
 
 
 def start_fields(source: str, link: "LinkOptions", rules: "tuple[AlarmRule, ...]") -> Mapping[str, Any]:

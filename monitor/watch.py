@@ -3,24 +3,30 @@
 import queue
 import threading
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from typing import Any
 
 from dsp.block import Block
 from dsp.identify import Wanted
-from monitor.engine import Engine, EngineOptions
+from monitor.alarm_rules import built_in_alarms
+from monitor.alarms import AlarmBoard, AlarmEvent
+from monitor.engine import Engine, EngineOptions, Tap
 from monitor.errors import MonitorError, printable
 from monitor.journal import Journal
 from monitor.snapshot import Snapshot
 from monitor.sources.ring import ThreadedReader
 from monitor.sources.stream import LiveSource
 from monitor.sources.wire import DESCRIBING, StreamEvent
-from monitor.state import LiveState
+from monitor.state import AlarmLine, LiveState
 
 _POLL_S = 0.05
 _PUBLISH_S = 0.033  # a new state for the views at most so often
+_PUBLISH_UNSEEN_S = 0.25
+_PIECE_S = 0.05  # what the engine is given at once
+_PIECE_SAMPLES = 65536
+_OLDEST_S = 0.5
 _JOIN_S = 10.0
 
 
@@ -40,7 +46,7 @@ class Watch:
         *,
         keeper: Journal | None = None,
         source_text: str,
-        on_block: Callable[[Block], None] | None = None,
+        tap: Tap | None = None,
         start_fields: Mapping[str, Any] | None = None,
         for_s: float | None = None,
     ) -> None:
@@ -50,11 +56,19 @@ class Watch:
         self._options = replace(options, aside=self._aside)
         self._keeper = keeper
         self._source_text = source_text
-        self._on_block = on_block
+        self._tap = tap
+        self._alarms = AlarmBoard(options.rules, built_in_alarms(options.stall_s))
+        self._stalled = False
+        self._acknowledged = threading.Event()
+        self._owed = 0
+        self._in_work = 0  # samples of the block that is being worked on
+        self._published = 0.0
+        self._quiet_since = 0.0
         self._start_fields = dict(start_fields or {})
         self._for_s = for_s
         self._engine: Engine | None = None
         self._commands: queue.SimpleQueue[Callable[[Engine], None]] = queue.SimpleQueue()
+        self._notes: queue.SimpleQueue[str] = queue.SimpleQueue()
         self._stop = threading.Event()
         self._why = "stopped"
         self._notices: list[str] = list(self._reader.warnings)
@@ -98,7 +112,7 @@ class Watch:
 
     def acknowledge(self) -> None:
         """All alarms shown have been seen."""
-        self._commands.put(lambda engine: engine.acknowledge())
+        self._acknowledged.set()
 
     def shelve(self, seconds: float) -> None:
         """Keep the foremost alarm quiet for so long."""
@@ -111,6 +125,10 @@ class Watch:
             engine.persistence_s = seconds
 
         self._commands.put(apply)
+
+    def note(self, text: str) -> None:
+        """Something the user should see."""
+        self._notes.put(text)
 
     def stop(self) -> None:
         """End the watch; returns when the journal has its last line, or after some seconds."""
@@ -139,42 +157,104 @@ class Watch:
             self._publish(ended=True)
 
     def _watch(self) -> None:
-        quiet_since = began = time.monotonic()
-        published = 0.0
+        began = self._quiet_since = time.monotonic()
         while not self._stop.is_set():
             if self._for_s is not None and time.monotonic() - began >= self._for_s:
                 self._why = f"watched for {self._for_s:g} s"
                 return
-            items = self._reader.poll(_POLL_S)
-            now = time.monotonic()
+            # one block at a time: what waits meanwhile, the ring keeps from growing old
+            items = self._reader.poll(_POLL_S, 1)
             for item in items:
                 if isinstance(item, StreamEvent):
                     self._happened(item)
-                elif self._engine is not None:
-                    quiet_since = now
-                    if self._on_block is not None:
-                        self._on_block(item)
-                    self._engine.feed(item)
-            engine = self._engine
-            if engine is not None:
-                while True:
-                    try:
-                        command = self._commands.get_nowait()
-                    except queue.Empty:
-                        break
-                    command(engine)
-                if not items:
-                    engine.idle(now - quiet_since)
-            if not items and self._reader.ended:
-                self._why = "the source ended"
+                else:
+                    self._quiet_since = time.monotonic()
+                    self._feed(item)
+            if not items:
+                if self._reader.ended:
+                    self._why = "the source ended"
+                    return
+                self._idle(time.monotonic() - self._quiet_since)
+            self._attend()
+
+    def _feed(self, block: Block) -> None:
+        """A block in pieces, so that neither user nor views wait for a long one; what grew too old meanwhile is left out."""
+        engine = self._engine
+        if engine is None:
+            return  # a source tells its rate before its first samples
+        began = time.monotonic()
+        size = block.samples.size
+        step = max(min(int(_PIECE_S * engine.sample_rate_hz), _PIECE_SAMPLES), 256)
+        clipped = at = 0
+        while at < size or (size == 0 and block.lost and not at):
+            if at and self._reader.ring.held_s > 0 and time.monotonic() - began > _OLDEST_S:
+                self._owed += size - at
+                self._in_work = 0
                 return
-            if now - published >= _PUBLISH_S:
-                published = now
-                self._publish()
+            n = min(step, size - at)
+            so_far = block.clipped * (at + n) // max(size, 1)
+            lost = self._owed + (0 if at else block.lost)
+            self._owed = 0
+            engine.feed(
+                Block(
+                    block.samples[at : at + n], block.start + at, lost, so_far - clipped, 0 if at else block.nonfinite
+                )
+            )
+            clipped = so_far
+            at += max(n, 1)
+            self._in_work = max(size - at, 0)
+            self._attend()
+
+    def _idle(self, for_s: float) -> None:
+        if self._engine is not None:
+            self._engine.idle(for_s)
+            return
+        self._tell_alarms(self._alarms.advance(for_s, 0))
+        if for_s >= self._options.stall_s and not self._stalled:
+            self._stalled = True
+            self._tell_alarms(self._alarms.condition("no samples", True, for_s, 0, for_s))
+
+    def _attend(self) -> None:
+        """What the user asked for, and a new state when one is due."""
+        engine = self._engine
+        if self._acknowledged.is_set():
+            self._acknowledged.clear()
+            if engine is not None:
+                engine.acknowledge()
+            else:
+                waited = time.monotonic() - self._quiet_since
+                self._tell_alarms(self._alarms.acknowledge(None, waited, 0))
+        while engine is not None:
+            try:
+                command = self._commands.get_nowait()
+            except queue.Empty:
+                break
+            command(engine)
+        while True:
+            try:
+                self._notice(self._notes.get_nowait())
+            except queue.Empty:
+                break
+        now = time.monotonic()
+        if now - self._published >= (_PUBLISH_S if self._options.display else _PUBLISH_UNSEEN_S):
+            self._published = now
+            self._publish()
+
+    def _notice(self, text: str) -> None:
+        if self._engine is not None:
+            self._engine.notice(text)
+        else:
+            self._notices = [*self._notices[-3:], text]
+
+    def _tell_alarms(self, events: Iterable[AlarmEvent]) -> None:
+        for event in events:
+            self._keep("alarm", event.sample, event.seconds, event.fields())
 
     def _happened(self, event: StreamEvent) -> None:
         if event.kind in DESCRIBING and event.rate_hz is not None and event.format is not None:
             complex_in = event.format.startswith("c")
+            if self._tap is not None:
+                self._tap.describe(event.rate_hz, complex_in=complex_in, centre_hz=event.centre_hz)
             if self._engine is None:
                 self._engine = Engine(
                     self._wanted,
@@ -183,20 +263,18 @@ class Watch:
                     options=self._options,
                     line=self._keep,
                     source_text=f"{self._source_text} · {event.format} · {event.rate_hz:g} Hz",
+                    alarms=self._alarms,
+                    stalled=self._stalled,
+                    tap=self._tap,
                 )
             elif event.kind != "centre":
                 self._engine.changed(sample_rate_hz=event.rate_hz, complex_in=complex_in, why=event.text)
             return
         if event.kind == "ended":
             return
-        if self._engine is not None:
-            self._engine.notice(event.text)
-            if event.kind in ("torn", "garbage", "oversize", "overflow"):
-                self._keep(
-                    "gap", self._engine.position, self._engine.seconds, {"samples_lost": None, "why": event.text}
-                )
-        else:
-            self._notices = [*self._notices[-3:], event.text]
+        self._notice(event.text)
+        if self._engine is not None and event.kind in ("torn", "garbage", "oversize", "overflow"):
+            self._keep("gap", self._engine.position, self._engine.seconds, {"samples_lost": None, "why": event.text})
 
     def _keep(self, kind: str, sample: int, seconds: float, fields: Mapping[str, Any]) -> None:
         if self._keeper is not None:
@@ -206,7 +284,7 @@ class Watch:
         engine = self._engine
         totals = {
             "why": self._why,
-            "samples": engine.position - engine.samples_lost if engine is not None else 0,
+            "samples": engine.samples if engine is not None else 0,
             "samples_lost": engine.samples_lost if engine is not None else 0,
             "alarms_raised": engine.alarms.activations if engine is not None else 0,
         }
@@ -215,6 +293,17 @@ class Watch:
 
     def _publish(self, *, ended: bool = False) -> None:
         status = self._keeper.status.text if self._keeper is not None else ""
-        if self._engine is None:
+        if self._engine is not None:
+            state = self._engine.state(notices=self._notices, journal_text=status, ended=ended)
+            waiting_s = self._reader.ring.held_s + self._in_work / self._engine.sample_rate_hz
+            self._state = replace(state, behind_s=state.behind_s + waiting_s)
             return
-        self._state = self._engine.state(notices=self._notices, journal_text=status, ended=ended)
+        self._state = replace(
+            self._state,
+            notices=tuple(self._notices),
+            journal_text=status,
+            ended=ended,
+            alarms=tuple(
+                AlarmLine(a.name, a.severity, a.state, a.since_s, a.text) for a in self._alarms.snapshot() if a.shown
+            ),
+        )

@@ -1,15 +1,25 @@
 """`lidwatch watch`: a live link, its view, its journal and its alarms."""
 
 import argparse
+import contextlib
 import os
+import signal
 import sys
-from collections.abc import Callable
+import threading
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.arguments import add_journal_options, add_link_options, error_rate, not_negative, positive, whole
 from monitor.errors import InputError
-from monitor.running import chain_options, link_and_limits, open_journal, start_fields
+from monitor.running import (
+    add_capture_options,
+    chain_options,
+    link_and_limits,
+    open_capture,
+    open_journal,
+    start_fields,
+)
 from monitor.terminal import SlowStartNotice, say
 
 if TYPE_CHECKING:
@@ -68,6 +78,7 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
         "--painter", choices=("auto", "raster", "opengl"), default="auto", help="what draws the window's eye"
     )
     add_journal_options(parser)
+    add_capture_options(parser)
     parser.set_defaults(run=watch)
 
 
@@ -93,7 +104,9 @@ def watch(parsed: argparse.Namespace) -> int:
         chain=replace(chain_options(parsed, link), keep_total=False),
     )
     opener = _opener(parsed)
-    with open_journal(parsed) as journal:
+    tell = _Telling(to_view=view != "none")
+    capture = open_capture(parsed, tell, live=True)
+    with open_journal(parsed, capture, tell) as journal:
         running = Watch(
             opener,
             link.wanted(),
@@ -102,17 +115,57 @@ def watch(parsed: argparse.Namespace) -> int:
             source_text=parsed.source,
             start_fields=start_fields(parsed.source, link, rules),
             for_s=parsed.for_s,
+            tap=capture,
         )
+        tell.attach(running)
+        if capture is not None:
+            capture.picture = lambda: running.state().snapshot
         for warning in running.warnings:
             say(f"warning: {warning}")
         running.start()
         try:
-            status = _show(running, view, parsed)
+            with _terminable():
+                status = _show(running, view, parsed)
         finally:
             running.stop()
     if running.failure is not None:
         raise running.failure
     return status
+
+
+class _Telling:
+    """Notices of what runs beside the watch: on the view where there is one, else on standard error. Called from any thread."""
+
+    def __init__(self, *, to_view: bool) -> None:
+        self._to_view = to_view
+        self._running: Watch | None = None
+
+    def attach(self, running: "Watch") -> None:
+        """From now on there is a view."""
+        self._running = running
+
+    def __call__(self, text: str) -> None:
+        if self._to_view and self._running is not None:
+            self._running.note(text)
+        else:
+            say(f"warning: {text}")
+
+
+@contextlib.contextmanager
+def _terminable() -> Iterator[None]:
+    """The system's wish that the program end is taken as Ctrl-C is: the journal gets its last line."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+
+    def interrupt(number: int, frame: object) -> None:
+        raise KeyboardInterrupt
+
+    before = signal.signal(signal.SIGTERM, interrupt)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)
 
 
 def _show(running: "Watch", view: str, parsed: argparse.Namespace) -> int:

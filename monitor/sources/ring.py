@@ -15,6 +15,7 @@ from monitor.sources.wire import DESCRIBING, Item, StreamEvent
 BOUND_S: Final = 0.5
 _MOST_EVENTS = 256
 _MOST_BYTES = 64 << 20
+_KEPT = 0.2
 _POLL_S = 0.1  # how long a source may wait before it looks whether to stop
 _JOIN_S = 5.0
 
@@ -28,6 +29,9 @@ class SampleRing:
     More than ``bound_s`` may wait, up to 64 MiB, as long as nothing waits longer than ``patience_s`` by the clock: samples
     that a network held up and then brings all at once are no reason to lose any.
 
+    When blocks must be dropped, all but the share ``kept`` of the bound are, so that a taker that is too slow for good sees
+    few long stretches rather than many short ones.
+
     Attributes
     ----------
     dropped
@@ -35,11 +39,17 @@ class SampleRing:
     """
 
     def __init__(
-        self, bound_s: float = BOUND_S, patience_s: float = 0.0, *, now: Callable[[], float] = time.monotonic
+        self,
+        bound_s: float = BOUND_S,
+        patience_s: float = 0.0,
+        *,
+        kept: float = 1.0,
+        now: Callable[[], float] = time.monotonic,
     ) -> None:
         self.dropped = 0
         self._bound_s = bound_s
         self._patience_s = patience_s
+        self._kept = kept
         self._now = now
         self._changed = threading.Condition()
         self._items: deque[tuple[Item, float]] = deque()
@@ -83,13 +93,11 @@ class SampleRing:
         self._blocks += 1
         self._seconds += seconds
         self._bytes += item.samples.nbytes
-        while self._blocks > 1 and self._overfull():
+        if self._seconds > self._bound_s and self._came[-1] - self._came[0] >= self._patience_s:
+            while self._blocks > 1 and self._seconds > self._kept * self._bound_s:
+                self._drop_block()
+        while self._blocks > 1 and self._bytes > _MOST_BYTES:
             self._drop_block()
-
-    def _overfull(self) -> bool:
-        if self._bytes > _MOST_BYTES:
-            return True
-        return self._seconds > self._bound_s and self._came[-1] - self._came[0] >= self._patience_s
 
     def _drop_block(self) -> None:
         for place, (item, seconds) in enumerate(self._items):
@@ -169,7 +177,7 @@ class ThreadedReader(LiveSource):
     def __init__(
         self, open_source: Callable[[], LiveSource], bound_s: float = BOUND_S, patience_s: float = BOUND_S
     ) -> None:
-        self.ring = SampleRing(bound_s, patience_s)
+        self.ring = SampleRing(bound_s, patience_s, kept=_KEPT)
         self.uri = ""
         self.warnings: tuple[str, ...] = ()
         self._open_source = open_source

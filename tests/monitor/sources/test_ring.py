@@ -254,12 +254,24 @@ def test_a_failure_is_raised_after_what_came_before_it(failure, kind, text):
     reader.close()
 
 
-def test_a_slow_taker_gets_the_newest_half_second():
+def test_a_slow_taker_gets_the_newest_tenth_of_a_second_in_one_piece():
     made = tuple(stream(*([100] * 50)))
     source = Scripted((START,), *((b,) for b in made))
     reader = ThreadedReader(lambda: source, patience_s=0.0)
     assert source.closed.wait(10)
     got = SimpleNamespace(blocks=blocks_of(reader.poll(10)))
     reader.close()
-    assert got.blocks[0].lost == got.blocks[0].start == reader.dropped == 4500
-    assert sum(b.samples.size for b in got.blocks) == 500
+    assert got.blocks[0].lost == got.blocks[0].start == reader.dropped
+    assert sum(b.samples.size for b in got.blocks) + reader.dropped == 5000
+    assert all(b.lost == 0 for b in got.blocks[1:])
+    assert 100 <= sum(b.samples.size for b in got.blocks) <= 500
+
+
+def test_dropping_goes_on_until_only_the_kept_share_of_the_bound_waits():
+    ring = SampleRing(0.5, kept=0.2)
+    ring.put([START, *stream(*([50] * 10))])
+    assert ring.dropped == 0
+    ring.put(stream(50, start=500))
+    assert 0.04 < ring.held_s < 0.11
+    blocks = blocks_of(ring.take(0))
+    assert blocks[0].lost + sum(b.samples.size for b in blocks) == 550
