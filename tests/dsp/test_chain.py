@@ -252,11 +252,11 @@ def test_after_a_fade_the_link_is_found_again_without_restart(scheme, floor):
     assert [event.state for event in chain.events] == ["gained", "lost", "gained", "lost"]
     assert chain.events[2].sample / RATE == pytest.approx(sum(FADE), abs=0.15)
     reading = Figures(chain.total, chain.context()).reading()
-    assert reading.mer_db == pytest.approx(floor or 45.0, abs=0.6 if floor else 12.0)
+    assert reading.mer_db > 33.0 if floor is None else abs(reading.mer_db - floor) < 0.6
 
 
-def test_a_short_fade_does_not_end_the_run():
-    sent = send("qpsk", symbols=12_000, snr_db=20.0, dropouts=((0.6, 0.002),))
+def test_a_fade_of_some_symbols_does_not_end_the_run():
+    sent = send("qpsk", symbols=12_000, snr_db=20.0, dropouts=((0.6, 0.0008),))
     chain = run(link_of("qpsk"), sent.samples)
     assert [event.state for event in chain.events] == ["gained", "lost"]
     assert chain.slips == 0
@@ -310,7 +310,7 @@ def symbols(rng, n, noise_rms):
 def test_the_guard_holds_above_its_floor_and_lets_go_below():
     rng = np.random.default_rng(1)
     for mer_db, holds in ((6.0, True), (4.0, False)):
-        guard = LockGuard(200, 5.0)
+        guard = LockGuard(200, 5.0, find_scheme("pam2"))
         noise_rms = 10 ** (-mer_db / 20)
         assert guard.holds(track_of(*symbols(rng, 199, noise_rms)))  # not a whole window yet
         assert guard.holds(track_of(*symbols(rng, 1000, noise_rms))) is holds
@@ -321,7 +321,7 @@ def test_the_guard_lets_go_within_a_window_of_the_loss_however_cut(cut):
     rng = np.random.default_rng(2)
     good, lost = symbols(rng, 1000, 0.1), symbols(rng, 400, 1.0)
     values, decided = (np.concatenate(pair, axis=1) for pair in zip(good, lost, strict=True))
-    guard = LockGuard(200, 5.0)
+    guard = LockGuard(200, 5.0, find_scheme("pam2"))
     for start in range(0, 1400, cut):
         if not guard.holds(track_of(values[:, start : start + cut], decided[:, start : start + cut])):
             break
@@ -332,7 +332,33 @@ def test_the_guard_lets_go_within_a_window_of_the_loss_however_cut(cut):
 def test_the_guard_is_not_fooled_by_nan():
     values, decided = symbols(np.random.default_rng(3), 400, 0.1)
     values[0, 300] = np.nan
-    assert not LockGuard(200, 5.0).holds(track_of(values, decided))
+    assert not LockGuard(200, 5.0, find_scheme("pam2")).holds(track_of(values, decided))
+
+
+@pytest.mark.parametrize("cut", [1, 5, 16, 1000])
+@pytest.mark.parametrize("scheme", ["pam2", "qpsk", "pam4"])
+def test_the_guard_tells_where_silence_began(cut, scheme):
+    rng = np.random.default_rng(4)
+    levels = np.asarray(find_scheme(scheme).rail_levels, np.float32)
+    decided = rng.choice(levels, (2, 600))
+    values = decided + 0.1 * rng.standard_normal((2, 600)).astype(np.float32)
+    values[:, 200:204] = 0.0  # too short to be one
+    values[:, 405:] = 0.01
+    guard, told = LockGuard(200, 5.0, find_scheme(scheme)), None
+    for start in range(0, 600, cut):
+        at = guard.silent_from(track_of(values[:, start : start + cut], decided[:, start : start + cut]))
+        if at is not None:
+            told = start + at
+            break
+    # found by runs of 16; it is traced back as far as the run in hand
+    assert told is not None
+    assert 405 <= told < 405 + 16
+
+
+def test_zero_levels_are_no_silence():
+    """pam3 rests at 0 for a third of its symbols."""
+    zeros = np.zeros((2, 300), np.float32)
+    assert LockGuard(200, 5.0, find_scheme("pam3")).silent_from(track_of(zeros, zeros)) is None
 
 
 def drift(n, *, slip_at=(), ppm=0.0, jitter=0.0, sps=4.0):

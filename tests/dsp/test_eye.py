@@ -231,6 +231,9 @@ def test_a_line_through_segments_of_their_own_intercepts():
     halves = LineSums()
     halves.merge(sums)
     assert halves.line() == sums.line()
+    halves.merge(sums)  # the same points once more: the same line through twice as many
+    assert halves.line() == pytest.approx(sums.line())
+    assert halves.sums[0][0] == 2 * sums.sums[0][0]
 
 
 def test_a_line_needs_three_points_that_differ():
