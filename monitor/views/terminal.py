@@ -6,7 +6,7 @@ import select
 import signal
 import sys
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
@@ -77,25 +77,21 @@ def run_terminal(
         watched.stop()
 
 
-class _keys_of(contextlib.AbstractContextManager["int | None"]):
+@contextlib.contextmanager
+def _keys_of(stdin: TextIO | None) -> Iterator[int | None]:
     """Where keys come from: the input if it is a terminal, else the controlling terminal if there is one."""
-
-    def __init__(self, stdin: TextIO | None) -> None:
-        self._opened: int | None = None
-        self._fd: int | None = None
-        with contextlib.suppress(OSError, ValueError, AttributeError):
-            if stdin is not None and stdin.isatty():
-                self._fd = stdin.fileno()
-        if self._fd is None:
-            with contextlib.suppress(OSError):
-                self._fd = self._opened = os.open("/dev/tty", os.O_RDONLY | os.O_NOCTTY)
-
-    def __enter__(self) -> int | None:
-        return self._fd
-
-    def __exit__(self, *error: object) -> None:
-        if self._opened is not None:
-            os.close(self._opened)
+    if stdin is not None and not stdin.closed and stdin.isatty():
+        yield stdin.fileno()
+        return
+    try:
+        opened = os.open("/dev/tty", os.O_RDONLY | os.O_NOCTTY)
+    except OSError:
+        yield None
+        return
+    try:
+        yield opened
+    finally:
+        os.close(opened)
 
 
 class TerminalView:
@@ -103,7 +99,7 @@ class TerminalView:
 
     def __init__(self, watched: Watched, look: Look, now: Callable[[], float], pictures: Path) -> None:
         self._watched = watched
-        self._look = look
+        self.look = look
         self._now = now
         self._pictures = pictures
         self._state = watched.state()
@@ -125,7 +121,7 @@ class TerminalView:
         if self._shown.remark and self._now() >= self._remark_until:
             self._shown = replace(self._shown, remark="")
         shown = replace(self._shown, alarm_spans=self._spans)
-        return compose(self._state, columns, rows, self._look, shown)
+        return compose(self._state, columns, rows, self.look, shown)
 
     def press(self, key: str) -> None:
         """Do what a key means."""
@@ -250,7 +246,7 @@ class _Loop:
         self._signals = signals
         self._now = now
         self._bytes_per_s = bytes_per_s
-        self._depth = view._look.depth
+        self._depth = view.look.depth
         self._keys = Keys()
         self._escape_at = 0.0
         self._pending = b""

@@ -168,6 +168,7 @@ class Signals:
             signal.raise_signal(signal.SIGTSTP)
         finally:
             signal.signal(signal.SIGTSTP, handler)
+        self._seen = [number for number in self._seen if number != signal.SIGCONT]
 
     def _note(self, number: int, frame: FrameType | None) -> None:
         self._seen.append(number)

@@ -32,9 +32,6 @@ def update(screen: Screen, before: Screen | None, depth: Depth) -> bytes:
         )
         out = []
         cursor_before = before.cursor
-    halves = screen.chars == CONTINUED
-    # a wide character is sent as a whole
-    changed[:, :-1] |= changed[:, 1:] & halves[:, 1:]
     style = at_rest = Ink()
     for row in np.flatnonzero(changed.any(axis=1)).tolist():
         for start, stop in _runs(np.flatnonzero(changed[row]).tolist()):

@@ -31,7 +31,7 @@ from monitor.views.terminal_plots import draw_curve, draw_eye, draw_history
 from monitor.views.wording import Figure, budget_rows, figure_groups, interval_text, plain
 
 LEAST_COLUMNS, LEAST_ROWS = 64, 20
-_MOST_SIDE, _LEAST_SIDE = 46, 34
+_MOST_SIDE, _LEAST_SIDE = 54, 34
 _MOST_ALARM_ROWS = 3
 _RECENT_S = 600.0
 # the width of most actions' words
@@ -147,7 +147,7 @@ def _draw_page(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown) -> N
     plot_rows = 2 if rows < 30 else 3 if rows < 40 else min(8, rows // 9)
     history = rows - 2 - (plot_rows + 2)
     verdict = snapshot.reading.verdict if snapshot.reading is not None else None
-    side = min(max(columns * 2 // 5, _LEAST_SIDE), _MOST_SIDE if columns < 150 else _MOST_SIDE + 12)
+    side = min(max(columns * 2 // 5, _LEAST_SIDE), _MOST_SIDE)
     left = columns - side - 2
     bottom = history - (1 if rows >= 28 else 0)
     if verdict and rows < 36:
@@ -248,7 +248,7 @@ def _draw_side(
     sheet: Sheet, inks: Palette, state: LiveState, x: int, top: int, width: int, height: int, *, with_verdict: bool
 ) -> None:
     """The large figure and its change, then what there is room for: budget and verdict, the figures."""
-    y = _draw_opening(sheet, inks, state, x, top, width, large=height >= 30)
+    y = _draw_opening(sheet, inks, state, x, top, width, large=height >= 26)
     reading = state.snapshot.reading
     if reading is None:
         return
@@ -276,8 +276,10 @@ def _draw_opening(sheet: Sheet, inks: Palette, state: LiveState, x: int, y: int,
         sheet.write(end + 1, y, f"95 %: {interval}", inks.dim, width - (end + 1 - x), align="right")
     y += 1
     if opening is not None and math.isfinite(opening):
-        scale = 2 if large and width >= 48 else 1
-        pixels = digit_pixels(plain(min(max(opening, -999.9), 999.9), 1), scale)
+        figure = plain(min(max(opening, -999.9), 999.9), 1)
+        pixels = digit_pixels(figure, 2 if large else 1)
+        if pixels.shape[1] + 2 > width:
+            pixels = digit_pixels(figure)
         picture = half_blocks(pixels) if sheet.unicode else hash_blocks(pixels)
         for line in picture:
             sheet.write(x, y, line, inks.strong)

@@ -410,7 +410,7 @@ class TestView:
             found.append(titles())
         assert found == [["I rail", "Q rail"], ["I rail"], ["Q rail"], ["I rail", "Q rail"]]
 
-    def test_a_picture_that_cannot_be_written_is_a_remark(self, view, monkeypatch, tmp_path):
-        view._pictures = tmp_path / "missing"
+    def test_a_picture_that_cannot_be_written_is_a_remark(self, told, tmp_path):
+        view = TerminalView(NotedCalls(told.append), Look(), lambda: 0.0, tmp_path / "missing")
         view.press("s")
         assert "picture not saved" in self.text(view)
