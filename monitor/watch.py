@@ -70,6 +70,8 @@ class Watch:
         self._commands: queue.SimpleQueue[Callable[[Engine], None]] = queue.SimpleQueue()
         self._notes: queue.SimpleQueue[str] = queue.SimpleQueue()
         self._stop = threading.Event()
+        self._over = threading.Event()
+        self._began = False
         self._why = "stopped"
         self._notices: list[str] = list(self._reader.warnings)
         self._state = LiveState(
@@ -85,12 +87,13 @@ class Watch:
 
     def start(self) -> None:
         """Begin."""
+        self._began = True
         self._thread.start()
 
     def wait(self, timeout_s: float | None = None) -> bool:
         """Wait for the end; whether it has come."""
-        self._thread.join(timeout_s)
-        return not self._thread.is_alive()
+        # not join: where Ctrl-C interrupts that, Python 3.11 takes the thread for ended
+        return self._over.wait(timeout_s)
 
     # -- for views -----------------------------------------------------------------------------------------------------
 
@@ -133,8 +136,8 @@ class Watch:
     def stop(self) -> None:
         """End the watch; returns when the journal has its last line, or after some seconds."""
         self._stop.set()
-        if self._thread.is_alive() and threading.current_thread() is not self._thread:
-            self._thread.join(_JOIN_S)
+        if self._began and threading.current_thread() is not self._thread and self._over.wait(_JOIN_S):
+            self._thread.join()
 
     # -- the engine's thread -------------------------------------------------------------------------------------------
 
@@ -153,8 +156,11 @@ class Watch:
         finally:
             self._reader.close()
             self._aside.shutdown(wait=False, cancel_futures=True)
-            self._last_line()
-            self._publish(ended=True)
+            try:
+                self._last_line()
+                self._publish(ended=True)
+            finally:
+                self._over.set()
 
     def _watch(self) -> None:
         began = self._quiet_since = time.monotonic()
