@@ -10,7 +10,7 @@ from monitor.views.terminal_page import Shown, compose, figures_line
 from tests.monitor.views.live_states import make_states
 
 DEPTHS = (0, 16, 256, 1 << 24)
-SIZES = ((64, 20), (80, 24), (132, 43), (240, 70))
+SIZES = ((1, 1), (7, 3), (40, 12), (64, 20), (80, 24), (132, 43))
 
 
 @pytest.fixture(scope="module")
@@ -22,8 +22,8 @@ def text_of(state, columns=80, rows=24, look=Look(), **shown):  # noqa: B008
     return "\n".join(compose(state, columns, rows, look, Shown(**shown)).lines())
 
 
-@pytest.mark.parametrize("size", [(1, 1), (7, 3), (40, 12), *SIZES], ids=str)
-@pytest.mark.parametrize("depth", DEPTHS)
+@pytest.mark.parametrize("size", SIZES, ids=str)
+@pytest.mark.parametrize("depth", [0, 1 << 24])
 @pytest.mark.parametrize("unicode", [False, True], ids=["ascii", "unicode"])
 def test_every_state_fits_every_screen(states, size, depth, unicode):
     for state in states.values():
