@@ -20,8 +20,8 @@ def make(scheme, sps, pulse):
 
 
 @given(sps=st.floats(2.0, 2000.0))
-def test_loops_always_see_4_to_8_samples_a_symbol(sps):
-    for scheme, pulse in (("qpsk", "rrc:0.35"), ("pam4", "rrc:0.2"), ("bpsk", "rect")):
+def test_band_limited_links_have_4_to_8_samples_a_symbol(sps):
+    for scheme, pulse in (("qpsk", "rrc:0.35"), ("pam4", "rrc:0.2")):
         chosen = plan(make(scheme, sps, pulse), complex_in=scheme != "pam4")
         assert 4.0 <= chosen.sps <= 8.0
         assert chosen.rail_sps == pytest.approx(sps / chosen.decimate)
