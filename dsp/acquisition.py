@@ -466,7 +466,7 @@ class _Search:
         self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float
     ) -> tuple[float, Fit]:
         """Try every instant of a symbol; the one with the best decisions, in UI from ``instants``, and its fit."""
-        some = slice(0, min(instants.size, 2048))
+        some = slice(0, min(instants.size, 2048 if self._scheme.levels > 4 else 1024))
         offsets = (np.arange(_SCAN) - _SCAN // 2) / _SCAN
         fits = [
             fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme)
@@ -505,7 +505,7 @@ class _Search:
         if abs(float(np.sum(alternate))) > 0.3 * energy:
             return "each symbol comes twice: the symbol rate is a multiple of the link's"
         floor = noise_like_mer_db(self._scheme)
-        if fit.mer_db < floor + 0.8 and (chance > 1e-14 or plausibility_db(fit, self._scheme) < 3.0):
+        if fit.mer_db < floor + 0.8 and (chance > 1e-14 or plausibility_db(fit, self._scheme) < 6.0):
             return "a clock line, but the levels are not told from noise"
         return None
 

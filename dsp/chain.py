@@ -10,11 +10,11 @@ import numpy as np
 
 from dsp.acquisition import Acquired, acquire
 from dsp.block import Block, Samples
-from dsp.eye import EyeMeter, EyeSums
+from dsp.eye import HALO, EyeMeter, EyeSums
 from dsp.figures import Context
 from dsp.filters import Oscillator
 from dsp.frontend import FrontEnd, matched_filter, plan, wants_corners
-from dsp.link import Link
+from dsp.link import Link, Scheme
 from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
 FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
@@ -280,8 +280,9 @@ class Chain:
     def _lock(self, found: Acquired, rails: Rails) -> None:
         front, options, scheme = self._plan, self.options, self.link.scheme
         filters = matched_filter(self.link, front)
-        delay = (found.start.instant / front.interpolate - filters.delay) * front.decimate - self._front.delay
-        first = max(round(self._position - self._kept_samples * front.decimate + delay), 0)
+        self._run_from = self._position - self._kept_samples * front.decimate
+        self._matched = filters
+        first = self._sample_of(found.start.instant)
         self._tell(LockEvent("gained", first, f"MER {found.mer_db:.1f} dB"))
         if self.acquired_at is None:
             self.acquired_at = first
@@ -311,9 +312,8 @@ class Chain:
             carrier_bandwidth=options.carrier_bandwidth,
         )
         self._oscillator = Oscillator(found.carrier)
-        self._matched = filters
         self._guard = LockGuard(
-            max(200, round(0.05 * self.link.symbol_rate_hz)), min(found.noise_like_db + 0.8, found.mer_db - 3.0)
+            max(200, round(0.05 * self.link.symbol_rate_hz)), min(found.noise_like_db + 0.8, found.mer_db - 3.0), scheme
         )
         self._waiting: deque[Track] = deque()
         self._slip.anchor()
@@ -325,6 +325,10 @@ class Chain:
         if self.link.scheme.kind == "carrier":
             rails = self._oscillator.push(rails)
         track = self._tracker.push(self._matched.push(rails))
+        silence = self._guard.silent_from(track)
+        if silence is not None:
+            self._fall_silent(track, silence)
+            return
         self._waiting.append(track)
         if not self._guard.holds(track):
             self._lose("the levels are no longer told from noise")
@@ -349,6 +353,24 @@ class Chain:
         held = sum(track.values.shape[1] for track in self._waiting)
         sample = max(self._position - round(held * self.link.samples_per_symbol), self._locked_from)
         self._end_run(sample, reason)
+
+    def _fall_silent(self, track: Track, start: int) -> None:
+        """Keep what came before the silence, less what the receive filter had of it already."""
+        end = start - HALO // 2
+        if end > 0:
+            self._waiting.append(track.head(end))
+        elif self._waiting:
+            before = self._waiting.pop()
+            self._waiting.append(before.head(max(before.values.shape[1] + end, 0)))
+        self._release(0)
+        began = float(track.instants[max(start, 0)]) + min(start, 0) * self._sps
+        self._end_run(self._sample_of(track.base + began), "silence")
+
+    def _sample_of(self, filtered: float) -> int:
+        """Index in the stream of a filtered sample of this run, counted from the run's first."""
+        front = self._plan
+        raw = (filtered / front.interpolate - self._matched.delay) * front.decimate - self._front.delay
+        return max(round(self._run_from + raw), 0)
 
     def _end_run(self, sample: int, reason: str) -> None:
         self.locked_samples += max(sample - self._locked_from, 0)
@@ -389,15 +411,42 @@ class Chain:
 
 
 class LockGuard:
-    """Says whether decisions still stand out from noise: MER over the last ``window`` symbols against a floor in dB."""
+    """Says how far decisions can be trusted: MER over the last ``window`` symbols against a floor in dB, and no silence.
 
-    def __init__(self, window: int, floor_db: float) -> None:
+    Silence is `SILENT` symbols in a row whose mean square stays below a tenth of the innermost level's.
+    """
+
+    SILENT = 24
+
+    def __init__(self, window: int, floor_db: float, scheme: Scheme) -> None:
         self.window = window
         self._part = max(window // 4, 1)
         self._floor = 10 ** (floor_db / 10)
         self._parts: deque[tuple[float, float]] = deque(maxlen=4)
         self._signal = self._noise = 0.0
         self._count = 0
+        inner = min(abs(level) for level in scheme.rail_levels)
+        self._quiet = 0.1 * inner * inner * scheme.rails
+        self._rails = scheme.rails
+        self._powers = np.zeros(0, np.float32)  # of the last symbols, fewer than SILENT
+
+    def silent_from(self, track: Track) -> int | None:
+        """Index in the track at which a silence began (negative: in the track before); None if there is none."""
+        values = track.values[: self._rails]
+        power = np.einsum("rk,rk->k", values, values)
+        held = self._powers.size
+        powers = np.concatenate((self._powers, power))
+        self._powers = powers[-self.SILENT + 1 :]
+        if powers.size < self.SILENT or not self._quiet:
+            return None
+        sums = np.concatenate(([0.0], np.cumsum(powers, dtype=np.float64)))
+        quiet = sums[self.SILENT :] - sums[: -self.SILENT] < self._quiet * self.SILENT
+        if not quiet.any():
+            return None
+        start = int(np.argmax(quiet))
+        while powers[start] >= self._quiet:
+            start += 1
+        return start - held
 
     def holds(self, track: Track) -> bool:
         """Take the next symbols; False as soon as a whole window falls below the floor."""

@@ -38,7 +38,7 @@ class FrontPlan:
 
 
 def plan(link: Link, *, complex_in: bool, centre: float = 0.0, half_band: float | None = None) -> FrontPlan:
-    """Choose the rates for a link: 4 to 8 samples a symbol behind the matched filter, 16 to 64 where waves may have corners.
+    """Choose the rates for a link: 4 to 8 samples a symbol behind the matched filter, 16 to 64 where pulses are not band-limited.
 
     ``centre`` and ``half_band`` (cycles an input sample) place a passband or an FSK channel. Raises DspError where scheme and samples
     do not fit together.
@@ -50,7 +50,9 @@ def plan(link: Link, *, complex_in: bool, centre: float = 0.0, half_band: float 
             f"scheme {link.scheme.name} is a real baseband, but the samples are I/Q; take bpsk, or one channel"
         )
     corners = wants_corners(link.scheme, link.pulse)
-    least = 2 * CORNER_SPS if corners else 4.0
+    least = (
+        2 * CORNER_SPS if corners else 4.0 if link.pulse.band_limited or link.pulse.family == "gauss" else CORNER_SPS
+    )
     if half_band is None:
         half_band = min(
             (0.5 * (1 + (link.pulse.number or 1.0 if link.pulse.band_limited else 1.0)) + _MARGIN) / sps, 0.45
@@ -82,7 +84,7 @@ class FrontEnd:
         taps = np.ones(1)
         if front.decimate > 1 or passband or self._kind == "frequency":
             stop = 1.0 / front.decimate - front.half_band if front.decimate > 1 else 0.5
-            if self._kind == "baseband" and wants_corners(link.scheme, link.pulse):
+            if self._kind != "frequency" and not link.pulse.band_limited and not passband:
                 edge, stop = 0.35 / front.decimate, 0.65 / front.decimate
             else:
                 edge = front.half_band

@@ -64,7 +64,9 @@ class _Trial:
 
 def occupied_band(samples: Samples) -> Band | None:
     """The band that holds 99 % of the power above the spectrum's floor; None for silence."""
-    length = 4096 if samples.size >= 8192 else max(samples.size // 8, 16)
+    if samples.size < 256:
+        return None
+    length = 4096 if samples.size >= 8192 else samples.size // 8
     pieces = samples[: samples.size // length * length].reshape(-1, length)
     if not pieces.size:
         return None
@@ -91,7 +93,7 @@ def occupied_band(samples: Samples) -> Band | None:
     return Band(0.5 * (low + high), max(0.5 * (high - low), 2.0 / length))
 
 
-def rate_lines(sequence: NDArray[np.float64], most: int = 6) -> list[tuple[float, float]]:
+def rate_lines(sequence: NDArray[np.float64], highest: float = 0.5, most: int = 6) -> list[tuple[float, float]]:
     """Spectral lines of a power-like sequence ``(n,)``: frequency (cycles a sample) and height over the floor, highest first.
 
     Source: the square-law line of M. Oerder and H. Meyr, IEEE Trans. Commun. 36(5), 1988, over all frequencies.
@@ -106,6 +108,7 @@ def rate_lines(sequence: NDArray[np.float64], most: int = 6) -> list[tuple[float
     floor = np.repeat(np.sort(blocks, axis=1)[:, : int(0.7 * width)].mean(axis=1) / 0.45, width)
     ratio = spectrum[: floor.size] / np.maximum(floor, 1e-300)
     ratio[: max(4, n // 4096)] = 0.0
+    ratio[int(highest * n) + 1 :] = 0.0
     found: list[tuple[float, float]] = []
     threshold = math.log(spectrum.size) + 10.0
     for _ in range(most):
@@ -191,9 +194,13 @@ def _likely_rates(samples: Samples, rate: float, band: Band, scheme: Scheme, wan
     else:
         rails = (np.real(some), np.imag(some)) if np.iscomplexobj(some) else (np.real(some),)
         factor = 1
+    # no symbol rate lies far above the band that it fills: lines up there are harmonics, or a resampler's images
+    widest = 2.6 * band.half if scheme.kind == "carrier" else 3.0 * (band.centre + band.half)
+    if scheme.kind == "frequency":
+        widest = 6.0 * band.half
     power = np.sum([rail.astype(np.float64) ** 2 for rail in rails], axis=0)
     for sequence in (power, _edges(rails, band.half * factor)):
-        found = rate_lines(sequence)
+        found = rate_lines(sequence, widest * factor)
         lines += [(line / factor * rate, strength / found[0][1]) for line, strength in found]
     # a clock's line has harmonics above it, and the frames of its data may put weaker ones below
     clear = sorted(hz for hz, strength in lines if strength > 0.03)

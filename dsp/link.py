@@ -128,8 +128,8 @@ class Link:
     name: str = ""
 
     def __post_init__(self) -> None:
-        if not (math.isfinite(self.sample_rate_hz) and self.sample_rate_hz > 0):
-            raise DspError(f"sample rate must be above 0 Hz, got {self.sample_rate_hz!r}")
+        if not 0 < self.sample_rate_hz <= 1e12:  # false for NaN too
+            raise DspError(f"sample rate must be above 0 and at most 1e12 Hz, got {self.sample_rate_hz!r}")
         if not (math.isfinite(self.symbol_rate_hz) and self.symbol_rate_hz > 0):
             raise DspError(f"symbol rate must be above 0 Hz, got {self.symbol_rate_hz!r}")
         if not 2.0 <= self.samples_per_symbol <= 2000.0:

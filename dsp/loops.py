@@ -5,7 +5,6 @@ from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from dsp.errors import DspError
 
@@ -61,5 +60,9 @@ def exact_gains(bandwidth: float, delay: int = 0, damping: float = DAMPING) -> L
     def excess(scale: float) -> float:
         return noise_bandwidth(rice_gains(bandwidth * scale, damping), delay) - bandwidth
 
-    scale = brentq(excess, 0.3, 1.0 if bandwidth * 1.05 > 0.1 else 1.05, xtol=1e-6)
-    return rice_gains(bandwidth * float(scale), damping)
+    # bisection: the bandwidth rises with the scale
+    low, high = 0.3, 1.0 if bandwidth * 1.05 > 0.1 else 1.05
+    for _ in range(24):
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if excess(middle) < 0 else (low, middle)
+    return rice_gains(bandwidth * 0.5 * (low + high), damping)

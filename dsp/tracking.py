@@ -1,6 +1,6 @@
 """Timing and carrier loops: from filtered rails to symbol instants, decisions and the carrier's phase."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 import numpy as np
@@ -114,6 +114,18 @@ class Track:
     zero: NDArray[np.float64]
     samples: Rails
     base: int
+
+    def head(self, count: int) -> "Track":
+        """Its first ``count`` symbols."""
+        return replace(
+            self,
+            instants=self.instants[: count + 1],
+            phases=self.phases[: count + 1],
+            values=self.values[:, :count],
+            decided=self.decided[:, :count],
+            slopes=self.slopes[:, :count],
+            classes=self.classes[:, :count],
+        )
 
 
 def decision_shape(scheme: Scheme) -> float:
