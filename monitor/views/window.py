@@ -79,7 +79,7 @@ class Face(QWidget):
         ratio = self.devicePixelRatioF()
         width, height = self.pixels()
         for box in self.page.draw(view, width, height, ratio):
-            self.update(_logical(box, ratio))
+            self.update(logical_rect(box, ratio))
 
     def pixels(self) -> tuple[int, int]:
         """Width and height in pixels of the screen."""
@@ -469,7 +469,7 @@ class LiveWindow(QMainWindow):
         font.setPixelSize(max(14, round(20 * boxes.page.scale / ratio)))
         self.name_line.setFont(font)
         height = self.name_line.sizeHint().height() + 12
-        place = _logical(boxes.history, ratio)
+        place = logical_rect(boxes.history, ratio)
         self.name_line.setGeometry(place.x(), place.y() - height - 6, place.width(), height)
 
     def resizeEvent(self, event: QResizeEvent) -> None:
@@ -520,8 +520,8 @@ def _without_argument(first: Callable[[], None], then: Callable[[], None]) -> Ca
     return both
 
 
-def _logical(box: Box, ratio: float) -> QRect:
-    """Pixels of the screen to Qt's own, outwards."""
+def logical_rect(box: Box, ratio: float) -> QRect:
+    """A box of the screen's pixels as the least rectangle of Qt's own that covers it, ``ratio`` pixels to each."""
     left, top = int(box.x // ratio), int(box.y // ratio)
     return QRect(left, top, int(-(-box.right // ratio)) - left, int(-(-box.bottom // ratio)) - top)
 

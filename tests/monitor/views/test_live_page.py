@@ -4,7 +4,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from monitor.state import AlarmLine
+from monitor.state import AlarmLine, HistoryPoint
 from monitor.views.control import ACTIONS
 from monitor.views.layout import Box
 from monitor.views.live_drawing import View, draw_help
@@ -132,6 +132,14 @@ CHANGES = {
         s, snapshot=replace(s.snapshot, reading=replace(s.snapshot.reading, opening_pct=51.2))
     ),
     "traces": moved_on,
+    # the eye's surroundings are drawn anew, and its traces must be there still
+    "eyes": lambda s: replace(
+        s,
+        snapshot=replace(
+            s.snapshot,
+            reading=replace(s.snapshot.reading, eyes=tuple(replace(e, threshold=0.4) for e in s.snapshot.reading.eyes)),
+        ),
+    ),
     "alarm": lambda s: replace(s, alarms=s.alarms[:1]),
     "mark": lambda s: replace(s, marks=s.marks[:-1]),
     "gap": lambda s: replace(s, gaps_s=(*s.gaps_s, 400.0), samples_lost=2048),
@@ -241,6 +249,21 @@ def test_marks_gaps_alarms_and_missing_lock_stand_at_their_times(live_states):
     area = pixels[inside, plot.x + first : plot.x + last]
     assert not (np.abs(area - rgb(theme.accent)).sum(axis=2) < 60).any()
     assert (np.abs(area - rgb(theme.track)).sum(axis=2) == 0).mean() > 0.4
+
+
+def test_the_history_shows_how_far_the_opening_went_up_and_down(live_states):
+    points = tuple(HistoryPoint(float(t), 60.0, 40.0, 80.0) for t in range(1, 60))
+    state = replace(live_states["calm"], history=points, seconds=59.0, marks=(), best=None, best_at_s=None, locks=())
+    page = drawn(View(state, ()))
+    plot, theme = page.boxes.history_plot, find_theme("light")
+    # the axis runs from 30 to 90 %: whole tens with some room
+    column = as_array(page.image)[plot.y : plot.bottom, plot.x + plot.width // 3].astype(int)
+    tinted = np.flatnonzero(np.abs(column - rgb(theme.panel)).sum(axis=1) > 60)
+    share = 1.0 - (tinted + 0.5) / plot.height
+    inside = share[(share > 0.17) & (share < 0.83)]
+    assert inside.min() == pytest.approx(1 / 6, abs=0.03)
+    assert inside.max() == pytest.approx(5 / 6, abs=0.03)
+    assert inside.size > 0.6 * plot.height
 
 
 def test_a_thousand_losses_do_not_hide_the_curve(live_states):

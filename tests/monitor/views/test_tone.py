@@ -48,6 +48,15 @@ def test_nothing_clicks_when_the_opening_jumps_or_is_lost():
     assert abs(samples[0]) < 1e-3
 
 
+def test_the_pitch_glides_to_a_new_opening():
+    wave = ToneWave()
+    wave.follow(0.0)
+    wave.fill(4800)
+    wave.follow(100.0)
+    # the first 2 ms hold half a cycle of 220 Hz, and would hold almost two of 880 Hz
+    assert np.count_nonzero(np.diff(np.sign(wave.fill(4800)[:96]))) <= 2
+
+
 @pytest.mark.parametrize("unknown", [None, float("nan")])
 def test_without_an_opening_it_is_silent(unknown):
     wave = ToneWave()

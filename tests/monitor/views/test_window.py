@@ -349,6 +349,21 @@ def test_the_screen_shows_the_page_to_the_pixel(open_bench):
     assert grabbed == bench.window.face.page.image
 
 
+@pytest.mark.parametrize("ratio", [1.0, 1.25, 1.5, 2.0, 2.75])
+def test_what_is_painted_again_covers_what_changed_and_hardly_more(ratio):
+    from monitor.views.layout import Box
+    from monitor.views.window import logical_rect
+
+    for box in (Box(0, 0, 1, 1), Box(37, 91, 531, 143), Box(1, 2, 3, 5), Box(100, 200, 300, 400)):
+        rect = logical_rect(box, ratio)
+        for low, high, first, last in (
+            (rect.x(), rect.x() + rect.width(), box.x, box.right),
+            (rect.y(), rect.y() + rect.height(), box.y, box.bottom),
+        ):
+            assert low * ratio <= first < (low + 1) * ratio
+            assert (high - 1) * ratio < last <= high * ratio
+
+
 @pytest.mark.parametrize("size", [(900, 560), (1280, 800), (3840, 2160)])
 def test_the_page_follows_the_windows_size(open_bench, size):
     bench = open_bench()
