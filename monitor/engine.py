@@ -248,6 +248,7 @@ class Engine:
             # what was found by itself may have changed: look at it anew
             self._chain.finish()
             self._chain, self._last_lock_loss = None, None
+            self._searching = "looking anew for the link"
             self._next_look = 0
             self._reset_measures()
 
