@@ -1,7 +1,6 @@
 """The panels of the live page, each drawn on its own; `monitor.views.live_page` decides which are due."""
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 from dsp.picture import EyeImage
@@ -19,11 +18,9 @@ from monitor.views.drawing import (
     draw_table,
     draw_time_axis,
     draw_verdict,
-    y_of,
 )
-from monitor.views.history import AlarmSpan, history_runs, lost_spans, time_ticks, value_range
+from monitor.views.history import AlarmSpan
 from monitor.views.layout import Box, Page
-from monitor.views.live_layout import LiveBoxes
 from monitor.views.live_wording import (
     alarm_words,
     best_words,
@@ -34,7 +31,6 @@ from monitor.views.live_wording import (
     health_words,
     key_figures,
     no_eye_lines,
-    span_words,
 )
 from monitor.views.theme import Colour, ThemeName
 from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
@@ -361,170 +357,6 @@ def _draw_key_figures(canvas: Canvas, box: Box, reading: Reading) -> None:
         canvas.write(figure.label, replace(row, width=max(0, width - taken - least)), _TEXT, theme.dim)
         if number < len(figures) - 2:
             canvas.fill(Box(row.x, row.bottom - 1, width, max(1, canvas.px(1))), theme.grid)
-
-
-def draw_history(canvas: Canvas, boxes: LiveBoxes, view: View) -> None:
-    """The opening over the watch, with marks above it, alarms under it, losses and missing lock on it."""
-    theme, box, plot, state = canvas.theme, boxes.history, boxes.history_plot, view.state
-    now = max(state.seconds, 1e-9)
-    start = 0.0 if view.span_s is None else max(0.0, now - view.span_s)
-    # before the first minute is over, time runs into an empty strip instead of being squeezed anew at every look
-    end = max(now, start + 60.0 if view.span_s is None else start + view.span_s)
-    lost = lost_spans(state.locks, now, locked=state.locked)
-    runs = history_runs(state.history, lost, start, end, plot.width)
-    best = state.best.opening_pct if state.best is not None else None
-    low, high = value_range(runs, best)
-
-    def x_at(seconds: float) -> float:
-        return plot.x + plot.width * (seconds - start) / (end - start)
-
-    canvas.fill(plot, theme.panel)
-    canvas.clip(plot)
-    shown_lost = [(max(a, start), b) for a, b in lost if b > start and x_at(b) - x_at(a) >= 0.5]
-    for a, b in shown_lost:
-        _hatch(canvas, plot, x_at(a), x_at(b))
-    step = pixels.tick_step(high - low, max(1, plot.height // max(canvas.px(19), 1)))
-    values = [step * k for k in range(math.ceil(low / step), math.floor(high / step) + 1)]
-    for value in values:
-        y = y_of(plot, value, low, high)
-        canvas.line(plot.x, y, plot.right, y, theme.edge if value == 0 else theme.grid)
-    for run in runs:
-        xs = (run.x + plot.x).tolist()
-        upper = [y_of(plot, v, low, high) for v in run.most.tolist()]
-        lower = [y_of(plot, v, low, high) for v in run.least.tolist()]
-        mean = [y_of(plot, v, low, high) for v in run.mean.tolist()]
-        if len(xs) == 1:
-            canvas.dot(xs[0], mean[0], 2.0, theme.accent, theme.panel)
-            continue
-        outline = [*zip(xs, upper, strict=True), *zip(xs[::-1], lower[::-1], strict=True)]
-        canvas.polygon(outline, theme.accent, 0.3)
-        canvas.polyline(list(zip(xs, mean, strict=True)), theme.accent, 1.8)
-    if best is not None:
-        y = y_of(plot, best, low, high)
-        canvas.line(plot.x, y, plot.right, y, theme.ink, 1.0, dashed=True)
-    gaps = [at for at in state.gaps_s if start <= at <= end]
-    foot, reach, last_x = plot.bottom - canvas.px(2), canvas.px(5), -math.inf
-    for at in gaps:
-        x = x_at(at)
-        if x - last_x < reach:  # many losses must not hide the curve
-            continue
-        last_x = x
-        canvas.line(x, foot - canvas.px(22), x, plot.bottom, theme.alert, 1.4)
-        canvas.polygon(
-            [(x - reach, foot - reach), (x, foot - 2 * reach), (x + reach, foot - reach), (x, foot)], theme.alert
-        )
-    for mark in state.marks:
-        if mark.seconds >= start:
-            canvas.line(x_at(mark.seconds), plot.y, x_at(mark.seconds), plot.bottom, theme.ink, 1.4)
-    if view.state.seconds > 0 and end > now:
-        canvas.line(x_at(now), plot.y, x_at(now), plot.bottom, theme.edge, 1.0)
-    canvas.clip(None)
-    canvas.frame(plot, theme.edge)
-    for value in values:
-        y = y_of(plot, value, low, high)
-        label = Box(box.x, round(y) - canvas.px(8), plot.x - box.x - canvas.px(8), canvas.px(16))
-        canvas.write(f"{plain(value, 0)} %", label, _SMALL, theme.dim, align="right")
-    spans = [span for span in view.spans if span.end_s >= start]
-    lane = Box(plot.x, plot.bottom + canvas.px(2), plot.width, canvas.px(7))
-    for span in spans:
-        left = max(round(x_at(span.start_s)), lane.x)
-        right = min(round(x_at(span.end_s)), lane.right)
-        height = {"low": canvas.px(3), "medium": canvas.px(5)}.get(span.severity, lane.height)
-        canvas.fill(Box(left, lane.y, max(right - left, canvas.px(3)), height), theme.alert)
-    _history_times(canvas, plot, start, end, x_at(start), x_at(end))
-    _mark_names(canvas, boxes, state, start, x_at)
-    legend = []
-    if best is not None:
-        legend.append("best")
-    if spans:
-        legend.append("alarm")
-    if gaps:
-        legend.append("samples lost")
-    if shown_lost:
-        legend.append("no lock")
-    title = Box(box.x, box.y, box.width, canvas.px(20))
-    right = _history_legend(canvas, title, legend)
-    heading = f"Opening, {span_words(view.span_s)}"
-    canvas.write(heading, replace(title, width=max(0, right - title.x)), _TEXT, theme.ink, bold=True)
-
-
-def _hatch(canvas: Canvas, plot: Box, left: float, right: float) -> None:
-    """Slanting lines where there was no lock; told apart from the panel without colour."""
-    left, right = max(left, float(plot.x)), min(right, float(plot.right))
-    box = Box(round(left), plot.y, max(1, round(right) - round(left)), plot.height)
-    canvas.fill(box, canvas.theme.track)
-    canvas.clip(box)
-    pitch = max(canvas.px(8), 3)
-    x = plot.x + (box.x - plot.x - plot.height) // pitch * pitch
-    while x < box.right:
-        canvas.line(x, plot.bottom, x + plot.height, plot.y, canvas.theme.edge, 1.0)
-        x += pitch
-    canvas.clip(plot)
-
-
-def _history_times(canvas: Canvas, plot: Box, start: float, end: float, left: float, right: float) -> None:
-    theme = canvas.theme
-    top = plot.bottom + canvas.px(11)
-    for at in time_ticks(start, end, max(1, plot.width // canvas.px(110))):
-        x = left + (right - left) * (at - start) / (end - start)
-        canvas.line(x, plot.bottom, x, plot.bottom + canvas.px(10), theme.edge)
-        half = canvas.text_width(clock(at), _SMALL) // 2 + 2
-        edge = min(round(x) - half, plot.right + canvas.px(8) - 2 * half)
-        canvas.write(clock(at), Box(edge, top, 2 * half, canvas.px(16)), _SMALL, theme.dim, align="centre")
-
-
-def _mark_names(
-    canvas: Canvas, boxes: LiveBoxes, state: LiveState, start: float, x_at: Callable[[float], float]
-) -> None:
-    """Flags over the strip; the newest mark's name has the first right to the room."""
-    theme, plot = canvas.theme, boxes.history_plot
-    y, height = boxes.history.y + canvas.px(21), canvas.px(17)
-    limit = float(plot.right)
-    for number, mark in reversed(list(enumerate(state.marks, start=1))):
-        if mark.seconds < start:
-            break
-        x = x_at(mark.seconds)
-        canvas.polygon([(x, y + height), (x, y + canvas.px(5)), (x + canvas.px(8), y + canvas.px(9))], theme.ink)
-        text = mark.name or str(number)
-        room = Box(round(x) + canvas.px(11), y, max(0, round(limit - x) - canvas.px(17)), height)
-        if canvas.text_width(text, _SMALL) <= room.width or (mark.name and room.width >= canvas.px(60)):
-            canvas.write(text, room, _SMALL, theme.ink)
-        limit = x
-
-
-def _history_legend(canvas: Canvas, box: Box, entries: list[str]) -> int:
-    """What the signs mean, from the right; returns where it starts."""
-    theme = canvas.theme
-    x = box.right
-    middle = box.y + box.height / 2
-    for entry in reversed(entries):
-        width = canvas.text_width(entry, _SMALL)
-        canvas.write(entry, Box(x - width, box.y, width, box.height), _SMALL, theme.dim)
-        x -= width + canvas.px(24)
-        sample = Box(x, round(middle) - canvas.px(5), canvas.px(18), canvas.px(10))
-        if entry == "best":
-            canvas.line(sample.x, middle, sample.right, middle, theme.ink, 1.0, dashed=True)
-        elif entry == "alarm":
-            canvas.fill(Box(sample.x, round(middle) - canvas.px(3), sample.width, canvas.px(7)), theme.alert)
-        elif entry == "samples lost":
-            centre, reach = sample.x + sample.width / 2, canvas.px(5)
-            shape = [
-                (centre - reach, middle),
-                (centre, middle - reach),
-                (centre + reach, middle),
-                (centre, middle + reach),
-            ]
-            canvas.polygon(shape, theme.alert)
-        else:
-            canvas.fill(sample, theme.track)
-            canvas.clip(sample)
-            for shift in range(-sample.height, sample.width, max(canvas.px(5), 2)):
-                canvas.line(
-                    sample.x + shift, sample.bottom, sample.x + shift + sample.height, sample.y, theme.edge, 1.0
-                )
-            canvas.clip(None)
-        x -= canvas.px(18)
-    return x
 
 
 _HINTS = ("mark", "acknowledge", "hold", "help")

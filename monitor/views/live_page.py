@@ -17,11 +17,11 @@ from monitor.views.live_drawing import (
     draw_figure,
     draw_footer,
     draw_header,
-    draw_history,
     draw_no_eye,
     draw_traces,
     shown_rail,
 )
+from monitor.views.live_history import draw_history
 from monitor.views.live_layout import LiveBoxes, arrange_live, live_unit
 from monitor.views.live_wording import change_lines, health_words
 from monitor.views.theme import find_theme
@@ -159,7 +159,7 @@ class LivePage:
                     view.span_s,
                     int(state.seconds * 4),
                 ),
-                lambda canvas: draw_history(canvas, boxes, view),
+                lambda canvas: draw_history(canvas, boxes, state, view.spans, view.span_s),
             ),
             _Panel(
                 "footer",
