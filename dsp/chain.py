@@ -32,13 +32,14 @@ class ChainOptions:
     """How to measure.
 
     ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT. ``window`` is
-    the symbols of a reading, ``every`` draws each n-th trace into the raster. ``keep_total`` False: windows only, for streams without end.
+    the symbols of a reading (None: enough that every level's tail can be counted), ``every`` draws each n-th trace into the
+    raster. ``keep_total`` False: windows only, for streams without end.
     """
 
     detector: Detector | None = None
     timing_bandwidth: float = 0.005
     carrier_bandwidth: float = 0.005
-    window: int = 25_000
+    window: int | None = None
     every: int = 1
     target_ber: float = 1e-6
     keep_total: bool = True
@@ -95,6 +96,7 @@ class Chain:
     ) -> None:
         self.link = link
         self.options = options or ChainOptions()
+        self.window = self.options.window or 12_500 * link.scheme.levels * self.options.every
         rate = link.sample_rate_hz
         self._plan = plan(
             link,
@@ -129,7 +131,7 @@ class Chain:
         self._total: EyeSums | None = None
         self._sps = self._plan.sps
         self._carrier: float | None = None  # cycles a rail sample, of the first run
-        self._slip = SlipCounter()
+        self._slip = SlipCounter(256 if link.symbol_rate_hz < 100_000 else 2048)
         self._begin()
 
     # -- the stream ----------------------------------------------------------------------------------------------------
@@ -297,7 +299,7 @@ class Chain:
                 sps=self._sps,
                 phases=self._phases,
                 slab=min(max(round(self.link.symbol_rate_hz * 0.02), 64), 4096),
-                window=options.window,
+                window=self.window,
                 every=options.every,
                 finished=self._window_full,
             )
@@ -345,8 +347,11 @@ class Chain:
             self.slips += self._slip.push(track, self._sps)
             meter = self._meter
             assert meter is not None
-            waves = meter.resample(track)
-            self._lane.do(lambda meter=meter, track=track, waves=waves: meter.push(track, waves))  # type: ignore[misc]
+            if self.options.every > 1:  # the lane has time to spare
+                self._lane.do(lambda meter=meter, track=track: meter.push(track, meter.resample(track)))  # type: ignore[misc]
+            else:
+                waves = meter.resample(track)
+                self._lane.do(lambda meter=meter, track=track, waves=waves: meter.push(track, waves))  # type: ignore[misc]
 
     def _lose(self, reason: str) -> None:
         """Forget what came in since the lock may have gone, and look for the link again."""
@@ -473,10 +478,10 @@ class LockGuard:
 class SlipCounter:
     """Counts jumps of whole symbols of the loop's instants against their own straight line."""
 
-    _BLOCK = 256
     _MEMORY = 16
 
-    def __init__(self) -> None:
+    def __init__(self, block: int = 256) -> None:
+        self._block = block
         self.anchor()
 
     def anchor(self) -> None:
@@ -500,12 +505,12 @@ class SlipCounter:
         slips = 0
         at = 0
         while at < n:
-            m = min(self._BLOCK - self._count, n - at)
+            m = min(self._block - self._count, n - at)
             self._sum += float(drift[at : at + m].sum())
             self._count += m
             at += m
-            if self._count == self._BLOCK:
-                slips += self._judge(self._sum / self._BLOCK)
+            if self._count == self._block:
+                slips += self._judge(self._sum / self._block)
                 self._sum = 0.0
                 self._count = 0
         return slips

@@ -73,7 +73,10 @@ def add_measure_options(parser: argparse.ArgumentParser) -> None:
     """How to measure."""
     group = parser.add_argument_group("how to measure")
     group.add_argument(
-        "--window", type=whole, default=25_000, metavar="SYMBOLS", help="symbols of a window (default 25000)"
+        "--window",
+        type=whole,
+        metavar="SYMBOLS",
+        help="symbols of a window (default: enough to count each level's tail)",
     )
     group.add_argument(
         "--draw-every", type=whole, default=1, metavar="N", help="draw each N-th trace only (default 1: all)"

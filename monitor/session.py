@@ -261,7 +261,7 @@ def _measure(
     if not outcome.measured:
         outcome.reason = f"{_counted(chain.total.symbols, 'symbol')} behind the lock are too few for an eye"
     outcome.coverage_pct = 100.0 * chain.total.drawn / max(chain.total.symbols, 1)
-    outcome.windows = Windows(worst.count, options.window, worst.reading(chain.context()))
+    outcome.windows = Windows(worst.count, chain.window, worst.reading(chain.context()))
 
 
 def _joined(head: list[Block], stream: Iterator[Block]) -> Iterator[Block]:
