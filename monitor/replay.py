@@ -64,8 +64,9 @@ def replay(parsed: argparse.Namespace) -> int:
 def _judging(
     parsed: argparse.Namespace, source: "Source", link: "LinkOptions", rules: "tuple[AlarmRule, ...]"
 ) -> "AbstractContextManager[Judged | None]":
-    """The judge of limits and keeper of the journal; None where neither is asked for."""
-    if not rules and parsed.journal is None and parsed.publish is None and parsed.on_alarm is None:
+    """The judge of limits, keeper of the journal and of captures; None where nothing of them is asked for."""
+    wishes = (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture)
+    if not rules and all(wish is None for wish in wishes):
         return nullcontext()
     from monitor.judging import Judged
 

@@ -273,6 +273,9 @@ class Watch:
                     stalled=self._stalled,
                     tap=self._tap,
                 )
+                for text in self._notices:
+                    self._engine.notice(text)
+                self._notices = []
             elif event.kind != "centre":
                 self._engine.changed(sample_rate_hz=event.rate_hz, complex_in=complex_in, why=event.text)
             return
