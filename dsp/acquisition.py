@@ -133,8 +133,10 @@ class Fit:
     mer_db: float
 
 
-def fit_levels(values: NDArray[np.floating], scheme: Scheme) -> Fit:
+def fit_levels(values: NDArray[np.floating], scheme: Scheme, rounds: int = 8) -> Fit:
     """Levels of decision values ``(rails, n)`` without knowing the scale: Lloyd's iterations from the values' rms.
+
+    The last three of ``rounds`` leave the levels free, those before keep them evenly placed.
 
     Source: S. P. Lloyd, Least squares quantization in PCM, IEEE Trans. Inf. Theory 28(2), 1982 (from memory).
     """
@@ -145,7 +147,7 @@ def fit_levels(values: NDArray[np.floating], scheme: Scheme) -> Fit:
     scale = np.sqrt(np.maximum(power, 1e-30) / np.mean(nominal**2))
     means = centre + scale * nominal
     classes = np.zeros((rails, n), np.int64)
-    for step in range(8):
+    for step in range(rounds):
         if scheme.name == "8psk":
             u = (values - centre) / scale
             wide = np.abs(u[0]) > np.abs(u[1])
@@ -160,7 +162,7 @@ def fit_levels(values: NDArray[np.floating], scheme: Scheme) -> Fit:
             counts = np.bincount(classes[rail], minlength=nominal.size)
             sums = np.bincount(classes[rail], weights=values[rail], minlength=nominal.size)
             free[rail] = np.where(counts > 0, sums / np.maximum(counts, 1), free[rail])
-        if step < 5:
+        if step < rounds - 3:
             gain, zero = level_units(free, nominal)
             means = zero[:, None] + gain[:, None] * nominal
         else:
@@ -469,7 +471,7 @@ class _Search:
         some = slice(0, min(instants.size, 2048 if self._scheme.levels > 4 else 1024))
         offsets = (np.arange(_SCAN) - _SCAN // 2) / _SCAN
         fits = [
-            fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme)
+            fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme, rounds=4)
             for o in offsets
         ]
         mers = np.asarray([fit.mer_db for fit in fits])
