@@ -14,6 +14,7 @@ import importlib.util
 import json
 import os
 import re
+import socket
 import subprocess
 import sys
 import time
@@ -23,8 +24,27 @@ from pathlib import Path
 ROOT = Path(__file__).resolve().parents[1]
 
 # The demo: arguments of `lidwatch`, run from the top of the project.
-LINK = ("--symbol-rate", "9600", "--scheme", "qpsk", "--pulse", "rrc:0.35")
-DEMO = ("replay", "recordings/gauge-cliff-echo.sigmf-meta", *LINK, "--picture", "build/demo.png")
+DEMO_LINK, DEMO_SCHEDULE = "recordings/gauge.toml", "recordings/gauge-day.toml"
+DEMO_SIGNAL = tuple(
+    [
+        "--scheme",
+        "qpsk",
+        "--symbol-rate",
+        "9600",
+        "--rate",
+        "38400",
+        "--pulse",
+        "rrc:0.35",
+        "--snr",
+        "26",
+        "--carrier",
+        "130",
+        "--clock",
+        "-12",
+        "--framed",
+    ]
+)
+DEMO_SECONDS = 12  # where nobody sits at the terminal
 
 OLDEST = (3, 11)
 VENV = ROOT / ".venv"
@@ -145,17 +165,6 @@ def pip_problem(output: str) -> str:
     errors = re.findall(r"^\s*ERROR: (.+)$", output, flags=re.MULTILINE)
     reason = errors[-1].strip() if errors else "it gave no reason"
     return f"pip could not install the project: {reason}; all of its output is in {PIP_LOG}"
-
-
-def without_picture(command: "Sequence[str]") -> "list[str]":
-    """The command without its ``--picture FILE``."""
-    kept, skip = [], False
-    for word in command:
-        if skip or word == "--picture":
-            skip = not skip
-        elif not word.startswith("--picture="):
-            kept.append(word)
-    return kept
 
 
 def progress_line(done: int, total: int, name: str, seconds: "float | None" = None) -> str:
@@ -356,23 +365,35 @@ def run(command: "Sequence[str | Path]") -> int:
 
 
 def demo() -> int:
-    """Run the demo; without its picture where Qt cannot paint."""
-    command = list(DEMO)
-    problem = qt_problem()
+    """Run the demo: a transmitter whose signal suffers by a schedule, and the watch beside it. Without a terminal: for some seconds."""
+    for name in (DEMO_LINK, DEMO_SCHEDULE):
+        if not (ROOT / name).exists():
+            raise SetupError(f"{ROOT / name} is missing: the checkout is incomplete, fetch it again")
+    address = f"tcp://127.0.0.1:{free_port()}"
+    watch = ["watch", address, "--link", DEMO_LINK]
+    attended = sys.stdin is not None and sys.stdin.isatty()
+    display = sys.platform in ("win32", "darwin") or os.environ.get("DISPLAY") or os.environ.get("WAYLAND_DISPLAY")
+    problem = qt_problem() if display else "there is no display"
     if problem:
-        say(f"no picture: {problem}")
-        command = without_picture(command)
-    recording = ROOT / command[1]
-    if not recording.exists():
-        raise SetupError(f"{recording} is missing: the checkout is incomplete, fetch it again")
-    picture = None if problem else ROOT / command[command.index("--picture") + 1]
-    if picture is not None:
-        picture.parent.mkdir(exist_ok=True)
-    say("lidwatch " + " ".join(command))
-    status = run([in_venv("lidwatch"), *command])
-    if status == 0 and picture is not None:
-        say(f"the picture is {picture}")
-    return status
+        say(f"no window: {problem}; showing the watch as text")
+        watch += ["--view", "terminal"]
+    if not attended:
+        watch += ["--for", str(DEMO_SECONDS)]
+    sender = [in_venv("python"), "tools/transmit.py", *DEMO_SIGNAL, "--schedule", DEMO_SCHEDULE, "--no-keys", address]
+    say("python tools/transmit.py " + " ".join(sender[2:]))
+    say("lidwatch " + " ".join(watch))
+    with subprocess.Popen(sender, cwd=ROOT, stdin=subprocess.DEVNULL, stderr=subprocess.DEVNULL) as transmitter:
+        try:
+            return run([in_venv("lidwatch"), *watch])
+        finally:
+            transmitter.terminate()
+
+
+def free_port() -> int:
+    """A TCP port of this machine that nothing listens on."""
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        return int(probe.getsockname()[1])
 
 
 def tests(arguments: "Sequence[str]") -> int:

@@ -1,8 +1,10 @@
 import ast
 import importlib.util
 import os
+import socket
 import subprocess
 import sys
+import tomllib
 from pathlib import Path
 
 import pytest
@@ -100,26 +102,21 @@ def test_what_made_pip_fail_becomes_one_line(start, output, words):
     assert "\n" not in text
 
 
-@pytest.mark.parametrize(
-    ("command", "kept"),
-    [
-        (["replay", "a.wav", "--picture", "b.png", "--json"], ["replay", "a.wav", "--json"]),
-        (["replay", "a.wav", "--picture=b.png"], ["replay", "a.wav"]),
-        (["replay", "a.wav"], ["replay", "a.wav"]),
-    ],
-)
-def test_the_picture_can_be_left_out_of_the_demo(start, command, kept):
-    assert start.without_picture(command) == kept
+def test_the_demo_s_files_are_in_the_checkout(start):
+    for name in (start.DEMO_LINK, start.DEMO_SCHEDULE):
+        assert (START.parents[1] / name).exists()
 
 
-def test_the_demo_writes_into_an_ignored_folder(start):
-    picture = start.DEMO[start.DEMO.index("--picture") + 1]
-    ignored = (START.parents[1] / ".gitignore").read_text(encoding="utf-8").split()
-    assert picture.split("/")[0] + "/" in ignored
+def test_the_demo_s_link_is_the_one_that_its_transmitter_sends(start):
+    link = tomllib.loads((START.parents[1] / start.DEMO_LINK).read_text(encoding="utf-8"))["link"]
+    signal = dict(zip(start.DEMO_SIGNAL[:-1:2], start.DEMO_SIGNAL[1::2], strict=True))
+    assert (link["scheme"], link["pulse"]) == (signal["--scheme"], signal["--pulse"])
+    assert link["symbol_rate_hz"] == float(signal["--symbol-rate"])
 
 
-def test_the_demo_s_recording_is_in_the_checkout(start):
-    assert (START.parents[1] / start.DEMO[1]).exists()
+def test_a_free_port_can_be_listened_on(start):
+    with socket.create_server(("127.0.0.1", start.free_port())) as server:
+        assert server.getsockname()[1] > 1023
 
 
 def test_the_progress_line_counts_the_kernels(start):
