@@ -25,24 +25,9 @@ ROOT = Path(__file__).resolve().parents[1]
 
 # The demo: arguments of `lidwatch`, run from the top of the project.
 DEMO_LINK, DEMO_SCHEDULE = "recordings/gauge.toml", "recordings/gauge-day.toml"
-DEMO_SIGNAL = tuple(
-    [
-        "--scheme",
-        "qpsk",
-        "--symbol-rate",
-        "9600",
-        "--rate",
-        "38400",
-        "--pulse",
-        "rrc:0.35",
-        "--snr",
-        "26",
-        "--carrier",
-        "130",
-        "--clock",
-        "-12",
-        "--framed",
-    ]
+DEMO_SIGNAL = (
+    *("--scheme", "qpsk", "--symbol-rate", "9600", "--rate", "38400", "--pulse", "rrc:0.35"),
+    *("--snr", "26", "--carrier", "130", "--clock", "-12", "--framed"),
 )
 DEMO_SECONDS = 12  # where nobody sits at the terminal
 
