@@ -32,7 +32,7 @@ class ChainOptions:
     """How to measure.
 
     ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT. ``window`` is
-    the symbols of a reading (None: enough that every level's tail can be counted), ``every`` draws each n-th trace into the
+    the symbols of a reading (None: enough that every level's tail can be counted), ``every`` draws one of so many traces into the
     raster. ``keep_total`` False: windows only, for streams without end.
     """
 

@@ -50,7 +50,7 @@ def _of_rail(sums: EyeSums, rail: int) -> tuple[float, float, float | None, floa
         return None
     mean = float(groups[:, 1].sum()) / total
     rms = math.sqrt(max(float(groups[:, 2].sum()) / total - mean**2, 0.0))
-    low, high = (float(quantile(sums.crossing_bins[rail], share)) for share in (TAIL, 1.0 - TAIL))
+    low, high = (float(edge) for edge in quantile(sums.crossing_bins[rail], TAIL, 1.0 - TAIL))
     return rms, (high - low) / CROSSING_BINS, *_pattern_part(groups, mean)
 
 

@@ -22,6 +22,7 @@ EARLIEST, LATEST = -8, 12  # lags of the pattern response: symbols still to come
 LAGS = LATEST - EARLIEST + 1
 HALO = 16  # symbols on either side that a symbol's sums look at
 CROSSING_BINS = 2048
+RUN = 256  # symbols in a row that are drawn, or left out, where not all are
 _AROUND = {2: (-5, -4, -3, -2, -1, 0, 2, 3), 3: (-2, -1, 0, 2), 4: (-2, -1, 0, 2), 8: (-1, 0, 2)}
 
 
@@ -304,33 +305,47 @@ class EyeMeter:
                 sums.gram[i * LAGS : (i + 1) * LAGS, j * LAGS : (j + 1) * LAGS] += block
                 if i != j:
                     sums.gram[j * LAGS : (j + 1) * LAGS, i * LAGS : (i + 1) * LAGS] += block.T
+        together = np.concatenate([self._waves[rail][:, first:last] for rail in range(rails)])
+        cross = (lagged @ together.T).reshape(-1, rails, self._phases)
         levels, rows = self._scheme.levels, sums.rows
-        skip = -self._count % self._every
-        drawn = 0
+        height = np.uint64(rows.count)
+        runs = self._drawn_runs(count)
         for rail in range(rails):
             wave = self._waves[rail]
-            part = wave[:, first:last]
-            sums.cross[rail] += lagged @ part.T
+            part = together[rail * self._phases : (rail + 1) * self._phases]
+            sums.cross[rail] += cross[:, rail]
             sums.square[rail] += np.einsum("pk,pk->p", part, part)
             classes = self._classes[rail]
             here = classes[first:last].astype(np.uint64)
             after = classes[first + 1 : last + 1].astype(np.uint64)
-            height = np.uint64(rows.count)
             if sums.pair:
                 base_left, base_right = (here * np.uint64(levels) + after) * height, after
             else:
                 base_left, base_right = here * height, after * height
             left = sums.left[rail].reshape(COLUMNS, -1)
             right = left if sums.right is None else sums.right[rail].reshape(COLUMNS, -1)
-            drawn = kernel.fill(
-                wave, first, count, self._expand, base_left, base_right, not sums.pair, self._every,
-                skip, rows.count, rows.scale, rows.zero, left, right,
-            )  # fmt: skip
+            for start, size in runs:
+                run = slice(start, start + size)
+                kernel.fill(
+                    wave, first + start, size, self._expand, base_left[run], base_right[run], not sums.pair,
+                    rows.count, rows.scale, rows.zero, left, right,
+                )  # fmt: skip
+                kernel.crossings(
+                    wave, first + start, size, classes, self._around, levels, 0.5,
+                    sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
+                )  # fmt: skip
             kernel.add_levels(part[0], classes[first:last], sums.level_sums[rail])
-            kernel.crossings(
-                wave, first + skip, count - skip, self._every, classes, self._around, levels, 0.5,
-                sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
-            )  # fmt: skip
-        sums.drawn += int(drawn)
+        sums.drawn += sum(size for _, size in runs)
         sums.symbols += count
         self._count += count
+
+    def _drawn_runs(self, count: int) -> list[tuple[int, int]]:
+        """Start and length of the stretches to draw among the next ``count`` symbols: one of ``every`` runs of `RUN` symbols."""
+        if self._every == 1:
+            return [(0, count)]
+        runs = []
+        for run in range(self._count // RUN, (self._count + count - 1) // RUN + 1):
+            if run % self._every == 0:
+                start = max(run * RUN - self._count, 0)
+                runs.append((start, min((run + 1) * RUN - self._count, count) - start))
+        return runs

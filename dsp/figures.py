@@ -2,6 +2,7 @@
 
 import math
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -49,7 +50,6 @@ class Figures:
         self._scheme = sums.scheme
         self._nominal = np.asarray(sums.scheme.rail_levels)
         self._spacing = np.diff(self._nominal)
-        self._histogram = sums.histogram()
         self._pattern = Pattern(sums)
         counts, totals, squares = np.moveaxis(sums.level_sums, 2, 0)
         self._counts = counts
@@ -59,24 +59,24 @@ class Figures:
         self._mixtures: list[Mixture] | None = None
         self._mixture_isi = np.zeros(sums.scheme.rails)
         self.enough = sums.symbols >= LEAST_SYMBOLS and float(counts.min()) >= 3
-        if self.enough and self._bit_errors(0.0) > _DECISIONS_RIGHT:
-            self._fit_mixtures()
         self._drawn = sums.drawn / max(sums.symbols, 1) * float(counts.min())  # traces of the rarest level
-        self._tails_counted = self.enough and self._drawn >= FULL_CLASS and self._bit_errors(0.0) < _TAIL_WHOLE
-        first = self._pattern.model(0.0)
-        self._cursors = [first.cursor(rail) for rail in range(self._scheme.rails)]
-        self._curves = opening_curves(self._histogram, sums.rows, self._gain, self._spacing, TAIL)
+        self._tails_counted = False
+        self._best: float = COLUMNS
+        self._corner: float | None = None
+        if not self.enough:
+            return
+        errors = self._bit_errors(0.0)
+        self._tails_counted = self._drawn >= FULL_CLASS and errors < _TAIL_WHOLE
+        if errors > _DECISIONS_RIGHT:
+            self._fit_mixtures()
         self._best, self._corner = self._best_column()
-        self._openings = np.full(self._curves.shape[:2], math.nan)
-        if self.enough:
-            self._settle_openings()
 
     # -- scale, noise and levels ---------------------------------------------------------------------------------------
 
     def _fit_mixtures(self) -> None:
         """Where decisions are often wrong: scale and noise from the levels' mixture, which knows nothing of decisions."""
         centres = self._sums.rows.centres()
-        column = self._histogram[:, :, COLUMNS].sum(axis=1).astype(np.float64)
+        column = self._sums.histogram(range(COLUMNS, COLUMNS + 1))[:, :, 0].sum(axis=1).astype(np.float64)
         model = self._pattern.model(0.0)
         mixtures, isi = [], []
         for rail, counts in enumerate(column):
@@ -98,24 +98,29 @@ class Figures:
         """Additive noise variance by rail, level units squared: ISI not counted, wrong decisions allowed for."""
         cursors = np.maximum([abs(model.cursor(rail)) for rail in range(self._scheme.rails)], 1e-9)
         if self._mixtures is None:
-            # uneven levels are no noise: the straight line of the pattern response leaves them over
             noise = np.asarray(model.residual / cursors**2)
-            noise = np.maximum(noise - self._bend(), 0.02 * noise)
+            bend = self._bend()
+            if np.any(bend > 0.2 * noise):
+                # uneven levels are no noise, but what they leave over is only known where their means are: at the decision instant
+                first = self._pattern.model(0.0)
+                noise = first.residual / np.square([first.cursor(rail) for rail in range(self._scheme.rails)])
+            noise = np.maximum(noise - bend, 0.02 * noise)
         else:
             noise = np.asarray([(mixture.sigma / mixture.gain) ** 2 for mixture in self._mixtures])
         mean = noise.mean()
         return np.asarray(mean + beyond_chance(noise - mean, mean**2 / self._sums.symbols))
 
     def _bend(self) -> NDArray[np.float64]:
-        """Variance of the levels about their own straight line, level units squared, shape ``(rails,)``."""
+        """Variance of the levels about the line that the pattern response fits to them, of its cursor 1, shape ``(rails,)``."""
+        model = self._pattern.model(0.0)
         bends = np.empty(self._scheme.rails)
-        for rail in range(self._scheme.rails):
-            shares = self._counts[rail] / self._counts[rail].sum()
+        for rail, (means, deviations, counts) in enumerate(zip(self._means, self._sigmas, self._counts, strict=True)):
+            shares = counts / counts.sum()
             off = self._nominal - shares @ self._nominal
-            levels = self._levels(rail)
-            levels = levels - shares @ levels
-            rest = levels - off * (shares @ (levels * off)) / (shares @ off**2)
-            bends[rail] = shares @ rest**2
+            rest = means - shares @ means
+            rest = rest - off * (shares @ (rest * off)) / (shares @ off**2)
+            rest = beyond_chance(rest, deviations**2 / np.maximum(counts, 1.0))
+            bends[rail] = shares @ rest**2 / max(model.cursor(rail) ** 2, 1e-18)
         return bends
 
     def _idle_noise(self) -> float:
@@ -145,19 +150,21 @@ class Figures:
 
         Then the place of the wave's corner, if the opening falls off from one there.
         """
-        if not self.enough:
-            return float(COLUMNS), None
         start, stop = COLUMNS // 2, COLUMNS + COLUMNS // 2 + 1
         noise = float(self._noise(self._pattern.model(0.0)).max())
         if self._tails_counted:
-            section = self._curves.min(axis=(0, 1))[start:stop]
-            chance = _QUANTILE_SPREAD * math.sqrt(2.0 * TAIL * noise / self._drawn)
+            section = self._ragged.min(axis=(0, 1))[start:stop]
+            chance = max(_QUANTILE_SPREAD * math.sqrt(2.0 * TAIL * noise / self._drawn), self._sums.rows.height)
         else:
+            if self._sums.phases < COLUMNS:
+                # a smooth wave has one peak: no need to look everywhere finely
+                coarse = range(start, stop, 4)
+                near = coarse[int(np.argmax([self._worst_case(_ui(column)) for column in coarse]))]
+                start, stop = max(near - 6, start), min(near + 7, stop)
             section = np.asarray([self._worst_case(_ui(column)) for column in range(start, stop)])
             chance = 3.0 * math.sqrt(noise / self._sums.symbols)
         top = int(np.argmax(section))
-        step = self._sums.rows.height
-        first, last = plateau(section, top, 100.0 * max(step, chance) / float(self._spacing.min()))
+        first, last = plateau(section, top, 100.0 * chance / float(self._spacing.min()))
         sharp = corner(section, last) if last - first <= 4 else None
         sharp = None if sharp is None else start + sharp
         if last - first < 2:
@@ -177,30 +184,50 @@ class Figures:
 
     def _worst_case(self, ui: float) -> float:
         """Opening in per cent by peak distortion and noise: its course over time is that of the opening, and not ragged."""
-        model = self._pattern.model(ui)
-        outer, z = float(self._nominal[-1]), 3.09
+        model, at_decision = self._pattern.model(ui), self._pattern.model(0.0)
+        # near a corner what is left over is not noise but what sampling made of the corner
+        outer, z = float(self._nominal[-1]), 3.09 if self._sums.phases < COLUMNS else 0.0
         least = math.inf
         for rail, variance in enumerate(model.residual):
-            unit = max(self._cursors[rail], 1e-9)
+            unit = max(at_decision.cursor(rail), 1e-9)
             lost = 2.0 * (outer * float(np.abs(model.neighbours(rail)).sum()) + z * math.sqrt(float(variance)))
             least = min(least, (model.cursor(rail) - lost / float(self._spacing.min())) / unit)
         return 100.0 * least
 
-    def _settle_openings(self) -> None:
-        """Openings at the best instant: counted where every level has enough traces for its tail, modelled otherwise."""
-        best = _ui(self._best)
-        # the scale is that of the best instant, not of the decision instant
-        scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(best), 1e-9)
-        self._curves *= np.clip(scale, 0.5, 2.0)[:, None, None]
-        self._openings = self._modelled(best, TAIL)
-        column = round(self._best)
-        counted = self._curves[:, :, column]
+    @cached_property
+    def _histogram(self) -> NDArray[np.int64]:
+        return self._sums.histogram()
+
+    @cached_property
+    def _ragged(self) -> NDArray[np.float64]:
+        """Opening curves as counted, ``(rails, eyes, columns)``, in level units of the decision instant."""
+        return opening_curves(self._histogram, self._sums.rows, self._gain, self._spacing, TAIL)
+
+    @cached_property
+    def _openings(self) -> NDArray[np.float64]:
+        """Of every eye at the best instant: counted where every level has enough traces for its tail, modelled otherwise."""
+        best, column = _ui(self._best), round(self._best)
+        modelled = self._modelled(best, TAIL)
+        if not self._tails_counted:
+            return modelled
+        # the curve may have its peak between two columns: the model tells what lies there
+        return self._ragged[:, :, column] * self._scale() + modelled - self._modelled(_ui(column), TAIL)
+
+    @cached_property
+    def _curves(self) -> NDArray[np.float64]:
+        """Opening curves that agree with the openings."""
+        if not self.enough:
+            return self._ragged
+        curves = self._ragged * self._scale()[..., None]
         if self._tails_counted:
-            # the curve may have its peak between two columns: the model tells what lies there
-            self._openings = counted + self._openings - self._modelled(_ui(column), TAIL)
-            return
+            return curves
         # the curve of few traces is too open by as much as their extremes fall short of the tail
-        self._curves += (self._openings - between(self._curves, self._best))[:, :, None]
+        return curves + (self._openings - between(curves, self._best))[:, :, None]
+
+    def _scale(self) -> NDArray[np.float64]:
+        """From level units of the decision instant to those of the best instant, shape ``(rails, 1)``."""
+        scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(_ui(self._best)), 1e-9)
+        return np.asarray(np.clip(scale, 0.5, 2.0)[:, None])
 
     def _modelled(self, ui: float, tail: float) -> NDArray[np.float64]:
         """Openings by the pattern model with Gaussian noise, per cent, shape ``(rails, eyes)``."""

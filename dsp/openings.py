@@ -10,13 +10,17 @@ from dsp.eye import COLUMNS, Rows
 Curve = NDArray[np.float64]
 
 
-def quantile(histogram: NDArray[np.int64], share: float) -> NDArray[np.float64]:
-    """Row position below which a share of the counts lies, last axis rows; NaN where there are no counts.
+def quantile(histogram: NDArray[np.int64], *shares: float) -> tuple[NDArray[np.float64], ...]:
+    """Row positions below which each share of the counts lies, last axis rows; NaN where there are no counts.
 
     Linear within its row; in a row that alone holds many times the tail, at the row's middle: nothing is known of where in
     it so narrow a level stands.
     """
     cumulative = np.cumsum(histogram, axis=-1)
+    return tuple(_quantile(histogram, cumulative, share) for share in shares)
+
+
+def _quantile(histogram: NDArray[np.int64], cumulative: NDArray[np.int64], share: float) -> NDArray[np.float64]:
     counts = cumulative[..., -1]
     wanted = share * counts
     index = np.minimum(np.sum(cumulative < wanted[..., None], axis=-1), histogram.shape[-1] - 1)
@@ -32,7 +36,7 @@ def opening_curves(
     histogram: NDArray[np.int64], rows: Rows, gain: NDArray[np.float64], spacing: NDArray[np.float64], tail: float
 ) -> NDArray[np.float64]:
     """Opening of every eye in per cent of its spacing, ``(rails, eyes, columns)``, of traces ``(rails, levels, columns, rows)``."""
-    low, high = quantile(histogram, tail), quantile(histogram, 1.0 - tail)
+    low, high = quantile(histogram, tail, 1.0 - tail)
     height = (low[:, 1:] - high[:, :-1]) / rows.scale / gain[:, None, None]
     return np.asarray(100.0 * height / spacing[None, :, None])
 

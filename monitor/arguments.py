@@ -79,7 +79,11 @@ def add_measure_options(parser: argparse.ArgumentParser) -> None:
         help="symbols of a window (default: enough to count each level's tail)",
     )
     group.add_argument(
-        "--draw-every", type=whole, default=1, metavar="N", help="draw each N-th trace only (default 1: all)"
+        "--draw-every",
+        type=whole,
+        default=1,
+        metavar="N",
+        help="draw one of N traces only, in runs of 256 (default 1: all)",
     )
     group.add_argument(
         "--target-ber",

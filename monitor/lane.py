@@ -1,6 +1,7 @@
 """A second thread for the eye's share of a chain's work, in order and never far behind."""
 
 import queue
+import sys
 import threading
 from collections.abc import Callable
 
@@ -11,6 +12,8 @@ class ThreadLane:
     def __init__(self, depth: int = 4) -> None:
         self._queue: queue.Queue[Callable[[], None] | None] = queue.Queue(depth)
         self._error: BaseException | None = None
+        # the two threads hand the interpreter over between short calls: do not let either wait long for it
+        sys.setswitchinterval(min(sys.getswitchinterval(), 5e-4))
         self._thread = threading.Thread(target=self._run, name="eye", daemon=True)
         self._thread.start()
 

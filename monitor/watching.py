@@ -63,7 +63,11 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
         "--stall", type=positive, default=2.0, metavar="S", help="alarm after so long without samples (default 2)"
     )
     measure.add_argument(
-        "--draw-every", type=whole, default=1, metavar="N", help="draw each N-th trace only (default 1: all)"
+        "--draw-every",
+        type=whole,
+        default=1,
+        metavar="N",
+        help="draw one of N traces only, in runs of 256 (default 1: all)",
     )
     measure.add_argument(
         "--target-ber", type=error_rate, default=1e-6, metavar="RATE", help="error rate that the opening is told for"

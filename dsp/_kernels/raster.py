@@ -69,26 +69,22 @@ def resample_turned(x_i, x_q, table, instants, shift, stagger, cos, sin, step_co
                 c, s = c * dc - s * ds, s * dc + c * ds
 
 
-@njit(types.int64(_F32_2, types.int64, types.int64, _F32_2, _U64, _U64, types.boolean, types.int64, types.int64,
-                  types.int64, types.float32, types.float32, types.uint32[:, ::1], types.uint32[:, ::1]),
+@njit(types.void(_F32_2, types.int64, types.int64, _F32_2, _U64, _U64, types.boolean, types.int64, types.float32,
+                 types.float32, types.uint32[:, ::1], types.uint32[:, ::1]),
       nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
-def fill(wave, first, count, expand, base_left, base_right, both, every, start, n_rows, row_scale, row_zero,
-         left, right):  # fmt: skip
-    """Count the traces of symbols ``first .. first + count`` of ``wave`` column by column; return how many were drawn.
+def fill(wave, first, count, expand, base_left, base_right, both, n_rows, row_scale, row_zero, left, right):
+    """Count the traces of symbols ``first .. first + count`` of ``wave`` column by column.
 
     Between two phases of the wave ``expand`` puts its points. ``left[column, base_left[k] + row]`` counts the trace from
-    symbol k to k + 1; if ``both``, ``right[column, base_right[k] + row]`` does too. Every ``every``-th symbol is drawn, from ``start`` on.
+    symbol k to k + 1; if ``both``, ``right[column, base_right[k] + row]`` does too.
     """
     n_phases = wave.shape[0]
     factor = expand.shape[0]
-    drawn = 0
     line = np.empty(_TILE, np.uint64)
     top = types.float32(n_rows) - types.float32(0.5)
     for tile in range(0, count, _TILE):
         n = min(_TILE, count - tile)
         at = first + tile
-        skip = (start - tile) % every
-        drawn += (n - skip + every - 1) // every if skip < n else 0
         for q in range(n_phases):
             x0 = wave[(q - 3) % n_phases, at + (q - 3) // n_phases : at + (q - 3) // n_phases + n]
             x1 = wave[(q - 2) % n_phases, at + (q - 2) // n_phases : at + (q - 2) // n_phases + n]
@@ -112,16 +108,12 @@ def fill(wave, first, count, expand, base_left, base_right, both, every, start, 
                 if both:
                     br = base_right[tile : tile + n]
                     others = right[column]
-                    for k in range(skip, n, every):
-                        counts[bl[k] + line[k]] += types.uint32(1)
-                        others[br[k] + line[k]] += types.uint32(1)
-                elif every == 1:
                     for k in range(n):
                         counts[bl[k] + line[k]] += types.uint32(1)
+                        others[br[k] + line[k]] += types.uint32(1)
                 else:
-                    for k in range(skip, n, every):
+                    for k in range(n):
                         counts[bl[k] + line[k]] += types.uint32(1)
-    return drawn
 
 
 @njit(nogil=True, cache=True, inline="always", fastmath=_FAST)
@@ -145,20 +137,20 @@ def _crossing(wave, k, p, n_phases):
     return (p + u) / n_phases
 
 
-@njit(types.int64(_F32_2, types.int64, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
+@njit(types.int64(_F32_2, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
                   types.float64[:, ::1], types.float64[:, ::1]),
       nogil=True, cache=True)  # fmt: skip
-def crossings(wave, first, count, every, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
+def crossings(wave, first, count, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
     """Times at which traces between mirror-image levels cross 0, in UI from the left symbol; return how many.
 
-    Looks at every ``every``-th symbol from ``first`` on.
+    Looks at the symbols ``first .. first + count``.
     ``classes`` is aligned with the columns of ``wave``. ``bins`` counts times over one UI; ``groups[g]`` = count, sum, sum of squares
     (about ``origin``) for the pattern of classes at the offsets ``around``; ``edges[rising]`` = count, sum.
     """
     n_phases = wave.shape[0]
     n_bins = bins.size
     found = 0
-    for k in range(first, first + count, every):
+    for k in range(first, first + count):
         left = classes[k]
         if left + classes[k + 1] != n_levels - 1 or left == classes[k + 1]:
             continue

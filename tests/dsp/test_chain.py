@@ -10,7 +10,7 @@ from scipy import signal
 
 from dsp.block import Block
 from dsp.chain import LockGuard, SlipCounter
-from dsp.eye import EyeSums
+from dsp.eye import RUN, EyeSums
 from dsp.figures import Figures
 from dsp.link import Link, find_scheme
 from dsp.pulses import Pulse, root_raised_cosine
@@ -443,7 +443,7 @@ def test_every_nth_trace_is_drawn_and_every_symbol_summed():
     full, some = (run(link_of("qpsk"), sent.samples, every=every, window=1500) for every in (1, 4))
     assert full.total.symbols == some.total.symbols
     assert full.total.drawn == full.total.symbols
-    assert some.total.drawn == pytest.approx(full.total.symbols / 4, abs=1)
+    assert some.total.drawn == pytest.approx(full.total.symbols / 4, abs=RUN)
     np.testing.assert_array_equal(some.total.gram, full.total.gram)
     assert full.total.left.sum() == 64 * 2 * full.total.drawn
     assert some.total.left.sum() == 64 * 2 * some.total.drawn

@@ -73,11 +73,10 @@ def expected_positions(wave, first, count, expand):
 
 
 @pytest.mark.parametrize(("n_phases", "factor"), [(8, 8), (64, 1)])
-@pytest.mark.parametrize(("every", "start"), [(1, 0), (3, 2), (4, 0)])
 @pytest.mark.parametrize("both", [False, True])
-def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, factor, every, start, both):
+def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, factor, both):
     first, count, classes = 5, 1301, 4  # more than two tiles
-    rng = np.random.default_rng(n_phases + every)
+    rng = np.random.default_rng(n_phases)
     wave = rng.uniform(-1.6, 1.6, (n_phases, first + count + 5)).astype(np.float32)
     wave[0, 40], wave[0, 43] = 50.0, -50.0  # beyond either end of the raster
     expand = expander(factor, 0.19)
@@ -85,13 +84,11 @@ def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, fac
     other = rng.integers(0, classes, count).astype(np.uint64)
     left = np.zeros((n_phases * factor, classes * ROWS), np.uint32)
     right = np.zeros_like(left)
-    drawn = kernel.fill(
-        wave, first, count, expand, label * np.uint64(ROWS), other * np.uint64(ROWS), both, every, start,
+    kernel.fill(
+        wave, first, count, expand, label * np.uint64(ROWS), other * np.uint64(ROWS), both,
         ROWS, SCALE, ZERO, left, right,
     )  # fmt: skip
-    use = np.arange(start, count, every)
-    assert drawn == use.size
-    position = np.clip(expected_positions(wave, first, count, expand), 0.25, ROWS - 0.75)[:, use]
+    position = np.clip(expected_positions(wave, first, count, expand), 0.25, ROWS - 0.75)
     # float32 sums may fall on the other side of a row's edge only within this distance of it
     clear = np.abs(position - np.round(position)) > 2e-3
     assert clear.mean() > 0.99
@@ -101,7 +98,7 @@ def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, fac
         if counts is right and not both:
             assert not right.any()
             continue
-        flat = position + kind[use].astype(float) * ROWS
+        flat = position + kind.astype(float) * ROWS
         sure = np.histogram2d(column[clear], flat[clear], bins=edges)[0]
         doubtful = np.histogram2d(column[~clear], flat[~clear] + 2e-3, bins=edges)[0]
         doubtful += np.histogram2d(column[~clear], flat[~clear] - 2e-3, bins=edges)[0]
@@ -118,16 +115,15 @@ def curve(t):
     return np.sin(np.pi * t * 0.973 + 0.4) + 0.6 * np.sin(np.pi * 0.41 * t) + 0.5 * np.sin(np.pi * 2.57 * t + 1.0)
 
 
-@pytest.mark.parametrize("every", [1, 3])
-def test_crossings_are_those_that_a_root_finder_sees(every):
+def test_crossings_are_those_that_a_root_finder_sees():
     n_phases, n, first, count = 64, 420, 10, 400
     wave = curve(np.arange(n)[None, :] + np.arange(n_phases)[:, None] / n_phases).astype(np.float32)
     classes = (wave[0] > 0).astype(np.int8)
     around = np.array([-2, -1, 2], np.int32)
     bins, groups, edges = np.zeros(500, np.int64), np.zeros((8, 3)), np.zeros((2, 2))
-    found = kernel.crossings(wave, first, count, every, classes, around, 2, 0.5, bins, groups, edges)
+    found = kernel.crossings(wave, first, count, classes, around, 2, 0.5, bins, groups, edges)
     times, group, rising, several = [], [], [], 0
-    for k in range(first, first + count, every):
+    for k in range(first, first + count):
         if classes[k] == classes[k + 1]:
             continue
         grid = k + np.arange(n_phases + 1) / n_phases
@@ -158,7 +154,7 @@ def test_crossings_of_several_levels_are_those_between_mirror_images():
         wave[:, k] = levels[k] + (levels[k + 1] - levels[k]) * np.arange(8) / 8
     wave[:, 11] = levels[11]
     bins, groups, edges = np.zeros(64, np.int64), np.zeros((4, 3)), np.zeros((2, 2))
-    found = kernel.crossings(wave, 1, 9, 1, classes, np.array([0], np.int32), 4, 0.5, bins, groups, edges)
+    found = kernel.crossings(wave, 1, 9, classes, np.array([0], np.int32), 4, 0.5, bins, groups, edges)
     # from symbol 1 on: 1-2 and 3-0 are mirror images: symbols 2 (1 to 2), 6 (3 to 0) and 9 (1 to 2)
     assert found == 3
     np.testing.assert_array_equal(groups[:, 0], [0, 2, 0, 1])
