@@ -304,10 +304,10 @@ def latency(seconds: float, rate: float = LATENCY_RATE) -> dict[str, Any]:
                     shown.append(time.monotonic())
                 was_dark = dark
             running.stop()
+            if running.failure is not None:
+                raise Unmeasured(str(running.failure))
             assert transmitter.stdout is not None
             told = json.loads(transmitter.stdout.readline())
-        if running.failure is not None:
-            raise Unmeasured(str(running.failure))
     times = np.array(shown)
     found = []
     for left in told["notches"]:
