@@ -468,7 +468,7 @@ class _Search:
         self, filtered: Rails, instants: NDArray[np.float64], phases: NDArray[np.float64], sps: float
     ) -> tuple[float, Fit]:
         """Try every instant of a symbol; the one with the best decisions, in UI from ``instants``, and its fit."""
-        some = slice(0, min(instants.size, 2048 if self._scheme.levels > 4 else 1024))
+        some = slice(0, min(instants.size, 2048 if self._scheme.levels > 2 else 1024))
         offsets = (np.arange(_SCAN) - _SCAN // 2) / _SCAN
         fits = [
             fit_levels(self._values(filtered, instants[some] + o * sps, phases[some], sps), self._scheme, rounds=4)

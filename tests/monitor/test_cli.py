@@ -174,7 +174,7 @@ def test_options_reach_the_chain(measured, recording):
     )
     assert found["windows"]["symbols_each"] == 500
     assert found["windows"]["count"] >= 4
-    assert found["speed"]["coverage_pct"] == pytest.approx(25, abs=1)
+    assert found["speed"]["coverage_pct"] == pytest.approx(25, abs=4)
     slower = measured(recording, *RAW, *QPSK, "--timing", "gardner", "--loop-bandwidth", "0.001")
     assert slower["reading"]["jitter_rms_ui"] < 0.7 * found["reading"]["jitter_rms_ui"]
     strict = measured(recording, *RAW, *QPSK, "--target-ber", "1e-12")

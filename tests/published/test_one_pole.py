@@ -139,6 +139,6 @@ def test_rise_time_is_that_of_the_mean_transition():
 def test_four_levels_close_three_times_as_fast():
     """M levels: 1 - (M - 1) D; the outer transitions' corners turn three times as sharply, and lose as much more between samples."""
     x = math.exp(-3.0)
-    spec = spec_for("pam4", "rect", 33.7, 12000, t_over_tau=3.0, bits="prbs9", delay_ui=0.3, seed=4)
+    spec = spec_for("pam4", "rect", 55.3, 12000, t_over_tau=3.0, bits="prbs9", delay_ui=0.3, seed=4)
     reading = over_the_air(spec, "none").reading
     assert reading.opening_pct == pytest.approx(100 * (1 - 3 * x / (1 - x)), abs=3.0)

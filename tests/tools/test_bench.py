@@ -133,7 +133,7 @@ def test_the_chain_is_timed_with_every_figure_and_on_the_stream_that_symtrack_ge
     assert document["source"]["samples"] == 80_000
     assert document["lock"]["timing"] is True
     assert document["reading"]["symbols"] > 19_500
-    assert document["speed"]["coverage_pct"] == pytest.approx(25.0, abs=0.1)
+    assert document["speed"]["coverage_pct"] == pytest.approx(25.0, abs=1.0)
 
 
 def test_a_command_that_fails_is_told_with_its_status():
