@@ -41,7 +41,7 @@ from dsp.block import Samples
 from dsp.errors import DspError
 from dsp.link import SCHEMES, find_scheme
 from dsp.pulses import Pulse
-from dsp.transmitter import Transmission, TransmitSpec, transmit_blocks
+from dsp.transmitter import LiveTransmitter, Transmission, TransmitSpec, transmit_blocks
 from monitor.errors import MonitorError, printable
 from monitor.sources.endpoint import is_stream
 from monitor.sources.formats import SampleFormat, parse_datatype
@@ -437,6 +437,7 @@ def _send(arguments: argparse.Namespace, spec: TransmitSpec) -> None:
         schedule,
         arguments.wait,
     )
+    LiveTransmitter(spec).block(message)  # loads the kernels, so that a receiver that connects need not wait
     sink = _sink(arguments, spec, form, message)
     try:
         terminal = None if arguments.no_keys else terminal_of(sys.stdin)
