@@ -1,14 +1,13 @@
 """`lidwatch watch`: a live link, its view, its journal and its alarms."""
 
 import argparse
-import contextlib
 import os
 import signal
 import sys
 import threading
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any, Self
 
 from monitor.arguments import add_journal_options, add_link_options, error_rate, not_negative, positive, whole
 from monitor.errors import InputError
@@ -128,8 +127,8 @@ def watch(parsed: argparse.Namespace) -> int:
             say(f"warning: {warning}")
         running.start()
         try:
-            with _terminable():
-                status = _show(running, view, parsed)
+            with _Asked(noted=view == "window") as asked:
+                status = _show(running, view, parsed, asked)
         finally:
             running.stop()
     if running.failure is not None:
@@ -155,29 +154,39 @@ class _Telling:
             say(f"warning: {text}")
 
 
-@contextlib.contextmanager
-def _terminable() -> Iterator[None]:
-    """The system's wish that the program end is taken as Ctrl-C is: the journal gets its last line."""
-    if threading.current_thread() is not threading.main_thread():
-        yield
-        return
+class _Asked:
+    """The wish for the end by Ctrl-C or by the system: in a window noted, for Qt's loop to look at, else raised as Ctrl-C is."""
 
-    def interrupt(number: int, frame: object) -> None:
-        raise KeyboardInterrupt
+    def __init__(self, *, noted: bool) -> None:
+        self._noted = noted
+        self.yet = False
+        self._before: dict[int, Any] = {}
 
-    before = signal.signal(signal.SIGTERM, interrupt)
-    try:
-        yield
-    finally:
-        signal.signal(signal.SIGTERM, before)
+    def __enter__(self) -> Self:
+        if threading.current_thread() is threading.main_thread():
+            for number in (signal.SIGTERM, signal.SIGINT) if self._noted else (signal.SIGTERM,):
+                self._before[number] = signal.signal(number, self._ask)
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        for number, handler in self._before.items():
+            signal.signal(number, handler)
+
+    def _ask(self, number: int, frame: object) -> None:
+        self.yet = True
+        if not self._noted:
+            raise KeyboardInterrupt
 
 
-def _show(running: "Watch", view: str, parsed: argparse.Namespace) -> int:
+def _show(running: "Watch", view: str, parsed: argparse.Namespace, asked: _Asked) -> int:
     if view == "window":
         from monitor.views.window import run_window
 
-        until = (lambda: running.state().ended) if parsed.for_s is not None else None
-        return run_window(running, painter=parsed.painter, title=parsed.source, until=until)
+        def over() -> bool:
+            return asked.yet or (parsed.for_s is not None and running.state().ended)
+
+        status = run_window(running, painter=parsed.painter, title=parsed.source, until=over)
+        return INTERRUPTED if asked.yet else status
     if view == "terminal":
         from monitor.views.terminal import run_terminal
 
