@@ -11,7 +11,8 @@ from numpy.typing import NDArray
 class Response:
     """The link's pattern response at the best instant, in units of its cursor.
 
-    ``lags`` ``(n,)``: symbols gone by (positive) and still to come (negative). ``taps`` ``(rails, rails, n)``: of a rail, to a rail's symbols.
+    ``lags`` ``(n,)``: symbols gone by (positive) and still to come (negative). ``taps`` ``(rails, rails, n)``: of a rail, to a
+    rail's symbols.
     """
 
     lags: NDArray[np.int64]
@@ -38,7 +39,10 @@ class JitterSplit:
 
 @dataclass(frozen=True, slots=True)
 class Constellation:
-    """Decision samples counted: ``counts`` ``(n, n)`` uint32, Q by row upwards and I by column, each from ``-reach`` to ``reach`` level units."""
+    """Decision samples counted.
+
+    ``counts`` ``(n, n)``: Q by row upwards and I by column, each from ``-reach`` to ``reach`` level units.
+    """
 
     counts: NDArray[np.uint32]
     reach: float
@@ -48,8 +52,8 @@ class Constellation:
 class EqualiserTrial:
     """One equaliser tried on samples that it was not fitted on.
 
-    ``taps`` complex128 ``(n,)``, ``spacing_ui`` apart, ``cursor`` the index that meets the symbol itself; ``feedback`` ``(m,)``: of decisions
-    gone by, empty for a linear one. ``opening_pct`` of those samples behind it; ``before_pct`` without it.
+    ``taps`` ``(n,)``, ``spacing_ui`` apart, ``cursor`` the index that meets the symbol itself; ``feedback`` ``(m,)``: of
+    decisions gone by, empty for a linear one. ``opening_pct`` of those samples behind it; ``before_pct`` without it.
     """
 
     kind: Literal["linear", "decision-feedback"]
@@ -65,8 +69,8 @@ class EqualiserTrial:
 class Diagnosis:
     """All of it for one window of symbols.
 
-    ``over_time``: BER against the sampling instant, UI about the best one; ``over_threshold``: against the worst eye's threshold, level units.
-    ``remarks``: sentences on second causes, at most two; the first sentence is the reading's verdict.
+    ``over_time``: BER against the sampling instant, UI about the best one; ``over_threshold``: against the worst eye's
+    threshold, level units. ``remarks``: sentences on second causes, at most two; the first sentence is the reading's verdict.
     """
 
     response: Response | None = None
