@@ -109,7 +109,8 @@ class Chain:
         self._lane = lane or AtOnce()
         self._on_window = on_window
         self._on_event = on_event
-        self._chunk = 2 ** min(max(round(math.log2(rate * 0.02)), 9), 15)
+        # 20 ms, so that a fast link is shown soon; longer for slow ones, where each call would cost more than its samples
+        self._chunk = 2 ** min(max(round(math.log2(rate * 0.02)), min(math.floor(math.log2(rate * 0.1)), 12), 9), 15)
         self._buffer = np.empty(self._chunk, np.complex64 if complex_in else np.float32)
         self._filled = 0
         self._position = 0  # stream index of the buffer's first sample
@@ -298,7 +299,7 @@ class Chain:
                 offset_ui=found.start.offset_ui,
                 sps=self._sps,
                 phases=self._phases,
-                slab=min(max(round(self.link.symbol_rate_hz * 0.02), 64), 4096),
+                slab=min(max(round(self.link.symbol_rate_hz * 0.01), 64), 2048),
                 window=self.window,
                 every=options.every,
                 finished=self._window_full,
@@ -315,7 +316,7 @@ class Chain:
         )
         self._oscillator = Oscillator(found.carrier)
         self._guard = LockGuard(
-            max(200, round(0.05 * self.link.symbol_rate_hz)), min(found.noise_like_db + 0.8, found.mer_db - 3.0), scheme
+            max(200, round(0.025 * self.link.symbol_rate_hz)), min(found.noise_like_db + 0.8, found.mer_db - 3.0), scheme
         )
         self._waiting: deque[Track] = deque()
         self._slip.anchor()

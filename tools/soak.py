@@ -3,7 +3,8 @@
 python tools/soak.py                  an hour of 48 kHz QPSK at 20 times its speed: memory flat, no line and no sample lost
 python tools/soak.py --quick          the same for 40 s of stream at 4 times its speed
 python tools/soak.py --greatest-rate  the greatest sample rate without loss, headless
-python tools/soak.py --latency        from sample sent to state shown, QPSK at 1 Msample/s
+python tools/soak.py --latency        from sample sent to state, QPSK at 1 Msample/s
+python tools/soak.py --latency --shown   the same to the painted window at 1280x800, and how often it is painted
 
 The transmitter is a process of its own that sends framed messages over ZeroMQ; the watch is `lidwatch watch`. Exit status: 0 all
 held, 1 something did not, 2 nothing could be measured.
@@ -17,7 +18,7 @@ import subprocess
 import sys
 import tempfile
 import time
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from pathlib import Path
 from typing import Any
@@ -35,6 +36,7 @@ MESSAGE_S = 0.01
 RATES = (0.25e6, 0.5e6, 0.75e6, 1e6, 1.5e6, 2e6, 3e6, 4e6, 6e6, 8e6)
 LATENCY_RATE = 1e6
 LATENCY_LIMIT_S = 0.150
+LEAST_FRAMES = 20.0  # a second
 LEAST_FLAT_S = 30.0  # a shorter run says nothing of memory
 NOTCH_SYMBOLS = 12  # silence that shows in the middle of the eye
 
@@ -270,8 +272,85 @@ def faults(found: dict[str, Any]) -> list[str]:
 # -- latency -----------------------------------------------------------------------------------------------------------
 
 
-def latency(seconds: float, rate: float = LATENCY_RATE) -> dict[str, Any]:
-    """Seconds from when a message is sent to the first state whose picture shows it, for silences at random places."""
+class Sight:
+    """When traces came to the middle of the eye, as states are seen one after the other."""
+
+    def __init__(self) -> None:
+        self.times: list[float] = []
+        self.behind_s = 0.0
+        self.looks: list[float] = []
+        self._last: Any = None
+        self._dark = True
+
+    def see(self, state: Any) -> None:  # noqa: ANN401
+        """Look at a state, now; one that was seen already says nothing."""
+        if state is self._last:
+            return
+        self._last = state
+        now = time.monotonic()
+        self.looks.append(now)
+        self.behind_s = max(self.behind_s, state.behind_s)
+        dark = not _notched(state.snapshot.image)
+        if self._dark and not dark:
+            self.times.append(now)
+        self._dark = dark
+
+
+def follow(running: Any, over: Callable[[], bool]) -> Sight:  # noqa: ANN401
+    """States as they are made, until it is over."""
+    sight = Sight()
+    while not over():
+        sight.see(running.state())
+        time.sleep(0.001)
+    return sight
+
+
+def follow_window(running: Any, over: Callable[[], bool], choices: Path) -> Sight:  # noqa: ANN401
+    """States as the window has painted them, until it is over."""
+    from PySide6.QtCore import QEvent, QObject, QTimer
+    from PySide6.QtWidgets import QApplication
+
+    from monitor.views.painter import ensure_application
+    from monitor.views.window import LiveWindow, choose_painter
+
+    class Asking:
+        """The watched side, that remembers what was handed out last."""
+
+        last: Any = None
+
+        def state(self) -> Any:  # noqa: ANN401
+            self.last = running.state()
+            return self.last
+
+        def __getattr__(self, name: str) -> Any:  # noqa: ANN401
+            return getattr(running, name)
+
+    class Painted(QObject):
+        """Looks when a paint is done."""
+
+        def eventFilter(self, watched: QObject, event: QEvent) -> bool:
+            if event.type() == QEvent.Type.Paint:
+                QTimer.singleShot(0, lambda: sight.see(asking.last))
+            return False
+
+    ensure_application()
+    application = QApplication.instance()
+    assert application is not None
+    sight, asking, painted = Sight(), Asking(), Painted()
+    window = LiveWindow(asking, title="soak", painter=choose_painter("auto"), choices=choices, until=over)
+    window.face.installEventFilter(painted)
+    window.resize(1280, 800)
+    window.show()
+    application.exec()
+    window.close()
+    return sight
+
+
+def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> dict[str, Any]:
+    """Seconds from when a message is sent to the first state whose picture shows it, for silences at random places.
+
+    ``shown``: to when the window has painted that state.
+    """
     from dsp.identify import Wanted
     from dsp.link import find_scheme
     from dsp.pulses import Pulse
@@ -286,29 +365,26 @@ def latency(seconds: float, rate: float = LATENCY_RATE) -> dict[str, Any]:
             running = Watch(
                 lambda: open_stream(address, StreamOptions(socket="pull")), wanted, EngineOptions(), source_text=address
             )
-            running.set_persistence(0.0)
+
+            def over() -> bool:
+                return transmitter.poll() is not None or running.failure is not None
+
             running.start()
-            shown: list[float] = []
-            behind = 0.0
-            last = None
-            was_dark = True
-            while transmitter.poll() is None and running.failure is None:
-                state = running.state()
-                if state is last:
-                    time.sleep(0.001)
-                    continue
-                last = state
-                behind = max(behind, state.behind_s)
-                dark = not _notched(state.snapshot.image)
-                if was_dark and not dark:
-                    shown.append(time.monotonic())
-                was_dark = dark
+            if shown:
+                choices = Path(folder) / "window.ini"
+                from monitor.views.choices import Choices, save_choices
+
+                save_choices(choices, Choices(persistence=0.0))
+                sight = follow_window(running, over, choices)
+            else:
+                running.set_persistence(0.0)
+                sight = follow(running, over)
             running.stop()
             if running.failure is not None:
                 raise Unmeasured(str(running.failure))
             assert transmitter.stdout is not None
             told = json.loads(transmitter.stdout.readline())
-    times = np.array(shown)
+    times = np.array(sight.times)
     found = []
     for left in told["notches"]:
         after = times[(times > left) & (times < left + 0.25)]
@@ -323,7 +399,8 @@ def latency(seconds: float, rate: float = LATENCY_RATE) -> dict[str, Any]:
         "median_s": float(np.median(values)),
         "p95_s": float(np.quantile(values, 0.95, method="higher")),
         "within_limit_pct": 100.0 * float(np.mean(values <= LATENCY_LIMIT_S)),
-        "behind_most_s": behind,
+        "states_per_s": (len(sight.looks) - 1) / (sight.looks[-1] - sight.looks[0]),
+        "behind_most_s": sight.behind_s,
         "samples_lost": running.state().samples_lost,
         "sender_late_s": told["late_s"],
     }
@@ -378,6 +455,7 @@ def build_parser() -> argparse.ArgumentParser:
     add("--quick", action="store_true", help="40 s of stream at 4 times its speed")
     add("--greatest-rate", action="store_true", help="the greatest rate without loss, headless")
     add("--latency", action="store_true", help="from sample to state, QPSK at 1 Msample/s")
+    add("--shown", action="store_true", help="--latency: to the painted window, which is open")
     add("--json", action="store_true", help="one JSON document at the end")
     add("--send", metavar="ADDRESS", help=argparse.SUPPRESS)
     add("--notches", action="store_true", help=argparse.SUPPRESS)
@@ -395,8 +473,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
             found = greatest(given.seconds or 5.0)
             wrong = [] if found["greatest_rate_hz"] else ["samples are lost at every rate"]
         elif given.latency:
-            found = latency(given.seconds or 30.0)
+            found = latency(given.seconds or 30.0, shown=given.shown)
             wrong = []
+            if given.shown and found["states_per_s"] < LEAST_FRAMES:
+                wrong.append(f"only {found['states_per_s']:.1f} frames a second")
             if found["within_limit_pct"] < 95.0:
                 wrong.append(
                     f"only {found['within_limit_pct']:.1f} % of the marks shown within {LATENCY_LIMIT_S * 1e3:.0f} ms"
