@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dsp.crossings import crossings, rise_time
+from dsp.diagnosis import Diagnosis
 from dsp.eye import COLUMNS, EyeSums
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
 from dsp.openings import between, corner, opening_curves, peak, plateau, slope_and_tolerance, vertex, width
@@ -298,6 +299,12 @@ class Figures:
             iq_skew_deg=iq_skew,
             dc_pct=self._dc_pct(),
         )
+
+    def diagnosis(self) -> Diagnosis:
+        """What stands behind the reading's budget and error rate; costs more than the reading does."""
+        if not self.enough:
+            return Diagnosis()
+        return Diagnosis(response=self._pattern.response(_ui(self._best)))
 
     def _eyes(self) -> tuple[Eye, ...]:
         eyes = []

@@ -10,7 +10,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from dsp.eye import EARLIEST, LAGS, EyeSums
+from dsp.diagnosis import Response
+from dsp.eye import EARLIEST, LAGS, LATEST, EyeSums
 from dsp.interpolation import BEFORE, PHASES, TAPS, weights
 
 CURSOR = -EARLIEST  # index of lag 0
@@ -85,6 +86,12 @@ class Pattern:
         for rail in range(rails):
             settled[rail, rail, CURSOR] = taps[rail, rail, CURSOR]
         return PatternModel(settled, residual)
+
+    def response(self, ui: float) -> Response:
+        """The taps at ``ui`` for people to look at: each rail's in units of its cursor."""
+        model = self.model(ui)
+        cursors = np.asarray([model.cursor(rail) for rail in range(model.taps.shape[0])])
+        return Response(np.arange(EARLIEST, LATEST + 1), model.taps / cursors[:, None, None])
 
     def error(self, ui: float) -> NDArray[np.float64]:
         """Variance of what is not a rail's own symbol after least-squares gain, over that gain squared, shape ``(rails,)``."""

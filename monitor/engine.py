@@ -14,6 +14,7 @@ from scipy.special import stdtrit
 from dsp.acquisition import NotFound
 from dsp.block import Block
 from dsp.chain import Chain, ChainOptions, LockEvent
+from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
 from dsp.figures import Figures, window_opening
@@ -31,6 +32,7 @@ from monitor.state import AlarmLine, Change, HistoryPoint, LiveState, Mark, Verd
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
+DIAGNOSIS_SECONDS = 1.0  # between two looks at what stands behind them
 TICK_SECONDS = 0.2  # in which clipped samples are counted together
 CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
@@ -153,6 +155,8 @@ class Engine:
         self._openings: deque[float | None] = deque(maxlen=BLOCKS)
         self._block: EyeSums | None = None
         self._reading: Reading | None = None
+        self._diagnosis: Diagnosis | None = None
+        self._next_diagnosis = 0.0
         self._opening: _Opening | None = None
         self._curve: NDArray[np.float64] | None = None
         self._base_image: EyeImage | None = None
@@ -408,7 +412,7 @@ class Engine:
             self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
         if not gained:
             self._tell_alarms(self.alarms.update(None, at, event.sample))
-            self._reading, self._opening = None, None
+            self._reading, self._opening, self._diagnosis = None, None, None
             self._blocks.clear()
             self._openings.clear()
             self._block = None
@@ -450,6 +454,9 @@ class Engine:
         figures = Figures(self._merged(), self._chain.context())
         reading = figures.reading()
         self._base_image = figures.image()
+        if self._options.display and seconds >= self._next_diagnosis:
+            self._next_diagnosis = seconds + DIAGNOSIS_SECONDS
+            self._diagnosis = figures.diagnosis()
         opening = None
         values = [value for value in self._openings if value is not None]
         if reading.opening_pct is not None and len(values) >= 3:
@@ -549,6 +556,7 @@ class Engine:
         snapshot = Snapshot(
             image=self._image() if locked else None,
             reading=self._reading if locked else None,
+            diagnosis=self._diagnosis if locked else None,
             source_text=self._source_text,
             link_text=link_text,
             lock_text="locked" if locked else f"no lock: {self._searching}",

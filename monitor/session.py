@@ -11,6 +11,7 @@ import numpy as np
 from dsp.acquisition import NotFound
 from dsp.block import Block
 from dsp.chain import AtOnce, Chain, ChainOptions, LockEvent
+from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
 from dsp.figures import Context, Figures, window_opening
@@ -49,8 +50,8 @@ class Outcome:
         What the link is; None if there is none that could be told.
     identified
         Keys of the link's parts that were found rather than given.
-    reading, image
-        Figures and eye of all symbols; None if there was never a lock.
+    reading, image, diagnosis
+        Figures and eye of all symbols, and what stands behind them; None if there was never a lock.
     windows
         The run window by window.
     events
@@ -76,6 +77,7 @@ class Outcome:
     identified: tuple[str, ...] = ()
     reading: Reading | None = None
     image: EyeImage | None = None
+    diagnosis: Diagnosis | None = None
     windows: Windows = field(default_factory=Windows)
     events: list[LockEvent] = field(default_factory=list)
     reason: str = ""
@@ -257,7 +259,7 @@ def _measure(
         outcome.reason = chain.last_reason
         return
     figures = Figures(chain.total, chain.context())
-    outcome.reading, outcome.image = figures.reading(), figures.image()
+    outcome.reading, outcome.image, outcome.diagnosis = figures.reading(), figures.image(), figures.diagnosis()
     if not outcome.measured:
         outcome.reason = f"{_counted(chain.total.symbols, 'symbol')} behind the lock are too few for an eye"
     outcome.coverage_pct = 100.0 * chain.total.drawn / max(chain.total.symbols, 1)

@@ -2,6 +2,7 @@
 
 from dataclasses import dataclass
 
+from dsp.diagnosis import Diagnosis
 from dsp.picture import EyeImage
 from dsp.reading import Reading
 
@@ -16,6 +17,8 @@ class Snapshot:
         The eye; None when there is none to draw.
     reading
         The newest figures; None when nothing could be measured.
+    diagnosis
+        What stands behind the figures, up to a second older than they; None as they are.
     source_text, link_text, lock_text
         Where the samples come from, what the link is, and whether the loops hold it: one line each, may be empty.
     notes
@@ -28,6 +31,7 @@ class Snapshot:
 
     image: EyeImage | None = None
     reading: Reading | None = None
+    diagnosis: Diagnosis | None = None
     source_text: str = ""
     link_text: str = ""
     lock_text: str = ""

@@ -13,6 +13,7 @@ def snapshot_of(outcome: Outcome) -> Snapshot:
     return Snapshot(
         image=outcome.image if outcome.measured else None,
         reading=outcome.reading if outcome.measured else None,
+        diagnosis=outcome.diagnosis if outcome.measured else None,
         source_text=printable(f"{info.uri} · {info.format} · {info.sample_rate_hz:.12g} Hz"),
         link_text=printable(link_text(outcome)),
         lock_text=lock_text(outcome),
