@@ -316,7 +316,9 @@ class Chain:
         )
         self._oscillator = Oscillator(found.carrier)
         self._guard = LockGuard(
-            max(200, round(0.025 * self.link.symbol_rate_hz)), min(found.noise_like_db + 0.8, found.mer_db - 3.0), scheme
+            max(200, round(0.025 * self.link.symbol_rate_hz)),
+            min(found.noise_like_db + 0.8, found.mer_db - 3.0),
+            scheme,
         )
         self._waiting: deque[Track] = deque()
         self._slip.anchor()

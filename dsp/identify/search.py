@@ -1,4 +1,4 @@
-"""What a link is, from its samples alone: band, symbol rate, scheme, pulse. Basic: lines, then trials of the few likely answers."""
+"""One link from its samples: lines, then trials of the few likely answers."""
 
 import math
 from dataclasses import dataclass, replace
@@ -10,6 +10,7 @@ from dsp.acquisition import Acquired, NotFound, acquire, plausibility_db
 from dsp.block import Samples
 from dsp.errors import DspError
 from dsp.frontend import FrontEnd, plan
+from dsp.identify.findings import Band, Identified, Wanted
 from dsp.link import Link, Scheme, find_scheme
 from dsp.pulses import Pulse
 
@@ -22,35 +23,6 @@ _PULSES = {
     "carrier": (("rrc:0.35",), ("rrc:0.2", "rrc:0.25", "rrc:0.5", "rrc:1", "none", "rect")),
     "frequency": (("rect", "none"), ()),
 }
-
-
-@dataclass(frozen=True, slots=True)
-class Band:
-    """Where a signal's power lies: centre and half width in cycles a sample; complex samples may lie below 0."""
-
-    centre: float
-    half: float
-
-
-@dataclass(frozen=True, slots=True)
-class Wanted:
-    """What the user said of the link; None: find it."""
-
-    scheme: Scheme | None = None
-    symbol_rate_hz: float | None = None
-    pulse: Pulse | None = None
-    carrier_hz: float | None = None
-    name: str = ""
-
-
-@dataclass(frozen=True, slots=True)
-class Identified:
-    """A link with what the chain needs to be told, and which of its parts were found rather than given."""
-
-    link: Link
-    centre_hz: float
-    half_band_hz: float | None
-    found: tuple[str, ...]
 
 
 @dataclass(frozen=True, slots=True)

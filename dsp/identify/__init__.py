@@ -1,0 +1,21 @@
+"""What a link is, from its samples alone: band, symbol rate, scheme, pulse, carrier; and whether there is one."""
+
+from dsp.acquisition import NotFound
+from dsp.identify.findings import Band, Findings, FoundLink, Guess, Identified, Wanted
+from dsp.identify.search import identify, occupied_band, placement, rate_lines
+from dsp.identify.survey import survey_links
+
+__all__ = [
+    "Band",
+    "Findings",
+    "FoundLink",
+    "Guess",
+    "Identified",
+    "NotFound",
+    "Wanted",
+    "identify",
+    "occupied_band",
+    "placement",
+    "rate_lines",
+    "survey_links",
+]

@@ -1,0 +1,42 @@
+"""What a stretch of samples tells besides its link: level, peak, DC, clipping; and what it says when there is no link."""
+
+import numpy as np
+import pytest
+
+from dsp.identify import Findings, survey_links
+from tests.dsp.streams import BAUD, send
+
+
+def test_a_link_comes_with_its_parts_and_the_state_of_the_samples():
+    sent = send("qpsk", 4.0, symbols=6000, snr_db=20.0, gain=0.1, dc=0.2 - 0.1j)
+    findings = survey_links(sent.samples, 4 * BAUD)
+    assert findings.reason == ""
+    (found,) = findings.links
+    assert found.scheme.value.name == "qpsk"
+    assert found.symbol_rate_hz.value == pytest.approx(BAUD, rel=3e-5)
+    assert 0.0 < found.scheme.confidence <= 1.0
+    assert findings.dc == pytest.approx(0.02 - 0.01j, abs=2e-3)
+    assert findings.seconds == pytest.approx(0.6)
+    assert findings.level_dbfs == pytest.approx(10 * np.log10(np.mean(np.abs(sent.samples) ** 2)), abs=1e-3)
+    assert findings.clipped_pct == 0.0
+
+
+def test_clipping_is_told():
+    sent = send("qpsk", 4.0, symbols=6000, snr_db=20.0, gain=0.5, clipping="hard", clip_at=0.4)
+    findings = survey_links(sent.samples, 4 * BAUD)
+    share = np.mean(np.maximum(np.abs(sent.samples.real), np.abs(sent.samples.imag)) >= np.float32(0.4))
+    assert findings.clipped_pct == pytest.approx(100 * share)
+    assert share > 0.1
+
+
+def test_silence_and_noise_have_no_links_and_say_why():
+    silent = survey_links(np.zeros(5000, np.float32), 8000.0)
+    assert isinstance(silent, Findings)
+    assert silent.links == ()
+    assert "zero" in silent.reason
+    assert silent.level_dbfs is None
+    assert silent.peak_dbfs is None
+    noise = survey_links(np.random.default_rng(1).standard_normal(50_000).astype(np.float32), 8000.0)
+    assert noise.links == ()
+    assert noise.reason
+    assert noise.level_dbfs == pytest.approx(0.0, abs=0.1)
