@@ -31,10 +31,10 @@ class Snapshot:
 
     image: EyeImage | None = None
     reading: Reading | None = None
-    diagnosis: Diagnosis | None = None
     source_text: str = ""
     link_text: str = ""
     lock_text: str = ""
     notes: tuple[str, ...] = ()
     seconds: float | None = None
     coverage_pct: float | None = None
+    diagnosis: Diagnosis | None = None
