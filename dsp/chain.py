@@ -79,7 +79,8 @@ class Chain:
     """Measures one link in a stream of blocks, however the stream is cut.
 
     Samples are worked on in chunks of fixed length, counted from the stream's start or last gap. ``on_window`` gets the sums of each
-    full window, in the lane, ``on_event`` each gain or loss of lock as it happens; `total` holds all of them once `finish` returned.
+    full window, in the lane, ``on_event`` each gain or loss of lock as it happens, ``on_track`` the symbols that go into the sums;
+    `total` holds all of the sums once `finish` returned.
     """
 
     def __init__(
@@ -93,6 +94,7 @@ class Chain:
         lane: Lane | None = None,
         on_window: Callable[[EyeSums], None] | None = None,
         on_event: Callable[[LockEvent], None] | None = None,
+        on_track: Callable[[Track], None] | None = None,
     ) -> None:
         self.link = link
         self.options = options or ChainOptions()
@@ -109,6 +111,7 @@ class Chain:
         self._lane = lane or AtOnce()
         self._on_window = on_window
         self._on_event = on_event
+        self._on_track = on_track
         # 20 ms, so that a fast link is shown soon; longer for slow ones, where each call would cost more than its samples
         self._chunk = 2 ** min(max(round(math.log2(rate * 0.02)), min(math.floor(math.log2(rate * 0.1)), 12), 9), 15)
         self._buffer = np.empty(self._chunk, np.complex64 if complex_in else np.float32)
@@ -348,6 +351,8 @@ class Chain:
             track = self._waiting.popleft()
             waiting -= track.values.shape[1]
             self.slips += self._slip.push(track, self._sps)
+            if self._on_track is not None:
+                self._on_track(track)
             meter = self._meter
             assert meter is not None
             if self.options.every > 1:  # the lane has time to spare

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from dsp._kernels import raster as kernel
 from dsp.interpolation import expander
+from dsp.jitter import BLOCK, TimingSpectrum
 from dsp.link import Scheme
 from dsp.tracking import Tables, Track
 
@@ -95,6 +96,8 @@ class EyeSums:
     gram, cross, square
         Normal equations: symbols with symbols ``(k, k)``, with the wave ``(rails, k, phases)``, the wave's energy ``(rails, phases)``;
         the k regressors are the rails' decided levels at all lags, earliest lag first, then a constant 1.
+    timing_power, timing_blocks
+        Summed power spectra of the timing error and how many blocks they are of; see `dsp.jitter.TimingSpectrum`.
     """
 
     def __init__(self, scheme: Scheme, phases: int) -> None:
@@ -119,6 +122,8 @@ class EyeSums:
         self.crossing_groups = np.zeros((rails, levels ** len(around), 3))
         self.crossing_edges = np.zeros((rails, 2, 2))
         self.unit_sums = np.zeros((3, 2))  # gain, zero by rail, weighted by symbols; last row: symbols
+        self.timing_power = np.zeros(BLOCK // 2 + 1)
+        self.timing_blocks = 0
         self.clock = LineSums()
         self.carrier = LineSums()
 
@@ -130,8 +135,10 @@ class EyeSums:
         if self.right is not None and other.right is not None:
             self.right += other.right
         self.across += other.across
+        self.timing_blocks += other.timing_blocks
         for name in (
-            "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums"
+            "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums",
+            "timing_power",
         ):  # fmt: skip
             getattr(self, name)[...] += getattr(other, name)
         self.clock.merge(other.clock)
@@ -184,6 +191,7 @@ class EyeMeter:
         self._finished = finished
         self.sums = EyeSums(scheme, phases)
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
+        self._spectrum = TimingSpectrum(phases, corners=not tables.band)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
         self._segment = 0
@@ -228,7 +236,9 @@ class EyeMeter:
             pending[:, self._pending : self._pending + n] = wave
         self._decided[:rails, self._pending : self._pending + n] = track.decided[:rails]
         self._classes[:rails, self._pending : self._pending + n] = track.classes[:rails]
-        self._lines(track, n)
+        for power in self._spectrum.push(self._lines(track, n), waves, track.decided[:rails]):
+            self.sums.timing_power += power
+            self.sums.timing_blocks += 1
         units = np.zeros((3, 2))
         units[0], units[1], units[2] = track.gain * n, track.zero * n, n
         self.sums.unit_sums += units
@@ -243,6 +253,7 @@ class EyeMeter:
         self._settle()
         if not keep:
             self.sums = EyeSums(self._scheme, self._phases)
+        self._spectrum.restart()
         self._pending = 0
         self._segment += 1
         self._seen = 0
@@ -259,15 +270,18 @@ class EyeMeter:
         classes[:, : self._pending] = self._classes[:, : self._pending]
         self._waves, self._decided, self._classes, self._capacity = waves, decided, classes, capacity
 
-    def _lines(self, track: Track, n: int) -> None:
+    def _lines(self, track: Track, n: int) -> NDArray[np.float64]:
+        """Add to the lines of clock and carrier; returns how late the instants are against the first one's clock, UI."""
         k = np.arange(self._seen, self._seen + n, dtype=np.float64)
         absolute = track.base + track.instants[:n]
         if self._seen == 0:
             self._origin = float(absolute[0])
-        self.sums.clock.add(self._segment, k, (absolute - self._origin) / self._sps - k)
+        late = (absolute - self._origin) / self._sps - k
+        self.sums.clock.add(self._segment, k, late)
         if self._scheme.kind == "carrier":
             self.sums.carrier.add(self._segment, k, track.phases[:n] + (self.extra_turn - self._scheme.rotation) * k)
         self._seen += n
+        return late
 
     def _settle(self) -> None:
         """Sum all pending symbols that have their neighbours, window by window."""

@@ -9,7 +9,9 @@ from numpy.typing import NDArray
 
 from dsp.crossings import crossings, rise_time
 from dsp.diagnosis import Diagnosis
+from dsp.error_rate import Decisions, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
+from dsp.jitter import periodic_line
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
 from dsp.openings import between, corner, opening_curves, peak, plateau, slope_and_tolerance, vertex, width
 from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
@@ -264,6 +266,7 @@ class Figures:
         mer = self._mer_db(best)
         snr = 10 * math.log10(self._scheme.symbol_energy() / (float(noise.sum()) + self._idle_noise()))
         crossing = crossings(self._sums)
+        periodic = periodic_line(self._sums.timing_power, self._sums.timing_blocks)
         clock_ppm, jitter = self._clock()
         carrier, phase_rms = self._carrier()
         iq_gain, iq_skew = self._iq(model)
@@ -284,6 +287,8 @@ class Figures:
             crossing_random_rms_ui=crossing.random_rms,
             dcd_ui=crossing.dcd,
             rise_20_80_ui=rise_time(self._sums),
+            periodic_jitter_ui=periodic.peak_ui if periodic is not None else None,
+            periodic_jitter_hz=periodic.frequency * self._context.symbol_rate_hz if periodic is not None else None,
             level_linearity=self._linearity(),
             q=self._q(best),
             snr_db=snr if mer is not None else None,
@@ -387,29 +392,26 @@ class Figures:
         return 10 * math.log10(energy / error) if error / energy * float(self._nominal[-1]) ** 2 < 12.0 else None
 
     def _bit_errors(self, ui: float) -> float:
-        """Semi-analytic error rate: noise-free distances to the thresholds by the pattern model, Gaussian tails, Gray mapping."""
-        scheme = self._scheme
-        model = self._pattern.model(ui)
-        noise = self._noise(model)
-        if scheme.name == "8psk":
-            radius = math.sqrt(scheme.symbol_energy())
-            reach = self._isi(0, model, math.sqrt(float(noise.mean())))
-            return min(2.0 / scheme.bits * reach.below(-radius * math.sin(math.pi / 8)), 0.5)
-        gray = np.arange(scheme.levels) ^ (np.arange(scheme.levels) >> 1)
-        bits = 0.0
+        """Semi-analytic error rate of a receiver that decides at ``ui``, its thresholds half-way between the levels there."""
+        decisions = self._decisions(ui, ui)
+        if self._scheme.name == "8psk":
+            return phase_error_rate(self._scheme, decisions.spreads[0][0])
+        return decisions.error_rate(decisions.midpoints())
+
+    def _decisions(self, ui: float, unit_ui: float) -> Decisions:
+        """Where samples at ``ui`` lie, in level units of ``unit_ui``."""
+        model, unit = self._pattern.model(ui), self._pattern.model(unit_ui)
+        noise = self._noise(unit)
+        shares = self._counts.sum(axis=0) / self._counts.sum()
+        levels = np.empty((self._scheme.rails, self._scheme.levels))
+        spreads = []
         for rail, variance in enumerate(noise):
-            reach = self._isi(rail, model, math.sqrt(float(variance)))
-            mirrored = reach.mirrored()
-            levels = self._levels(rail)
-            thresholds = 0.5 * (levels[1:] + levels[:-1])
-            for m, level in enumerate(levels):
-                wrong = np.asarray([int(other ^ gray[m]).bit_count() for other in gray])
-                for t, threshold in enumerate(thresholds):
-                    # beyond each threshold one more bit is wrong, or one fewer
-                    change = wrong[t + 1] - wrong[t] if t >= m else wrong[t] - wrong[t + 1]
-                    tail = mirrored.below(level - threshold) if t >= m else reach.below(threshold - level)
-                    bits += float(change) * tail / scheme.levels
-        return min(max(bits / scheme.bits, 0.0), 0.5)
+            cursor = max(unit.cursor(rail), 1e-9)
+            own = self._levels(rail)
+            levels[rail] = own + self._nominal * (model.cursor(rail) / cursor - 1.0)
+            reach = spread(model.neighbours(rail) / cursor, self._nominal, shares, math.sqrt(float(variance)))
+            spreads.append((reach,) * self._scheme.levels)
+        return Decisions(levels, tuple(spreads), self._scheme.bits)
 
     def _linearity(self) -> float | None:
         """Level separation mismatch ratio. Four levels: IEEE 802.3 Annex 120D.3.1.2 (from memory); more: least over mean spacing."""

@@ -62,20 +62,25 @@ def fit_mixture(
 class Spread:
     """How a level's samples are spread by ISI from data that are independent: a discrete part and Gaussian ``sigma``.
 
-    ``at`` (rising) and ``share`` have shape ``(n,)``; shares sum to 1.
+    ``at`` (rising) and ``share`` have shape ``(n,)``; shares sum to 1. ``sigma`` may differ from place to place, ``(n,)``.
     """
 
     at: NDArray[np.float64]
     share: NDArray[np.float64]
-    sigma: float
+    sigma: float | NDArray[np.float64]
 
     def mirrored(self) -> "Spread":
         """The same spread towards the other side."""
-        return Spread(-self.at[::-1], self.share[::-1], self.sigma)
+        sigma = self.sigma if isinstance(self.sigma, float) else self.sigma[::-1]
+        return Spread(-self.at[::-1], self.share[::-1], sigma)
 
     def below(self, limit: float) -> float:
         """Probability of a sample below ``limit``; exact in the far tail."""
         return float(self.share @ ndtr((limit - self.at) / self.sigma))
+
+    def above(self, limit: float) -> float:
+        """Probability of a sample above ``limit``; exact in the far tail."""
+        return float(self.share @ ndtr((self.at - limit) / self.sigma))
 
     def variance(self) -> float:
         """Of the discrete part."""
@@ -92,7 +97,8 @@ class Spread:
     def quantile(self, share: float) -> float:
         """The value that a ``share`` of the samples lies below."""
         reach = 1.0 - float(ndtri(share))
-        low, high = self.at[0] - reach * self.sigma, self.at[-1] + reach * self.sigma
+        most = float(np.max(self.sigma))
+        low, high = self.at[0] - reach * most, self.at[-1] + reach * most
         target = math.log(share)
         for _ in range(60):
             middle = 0.5 * (low + high)
