@@ -11,7 +11,7 @@ from dsp.crossings import crossings, rise_time
 from dsp.diagnosis import Diagnosis
 from dsp.error_rate import Decisions, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
-from dsp.jitter import periodic_line
+from dsp.jitter import periodic_line, sample_response
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
 from dsp.openings import between, corner, opening_curves, peak, plateau, slope_and_tolerance, vertex, width
 from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
@@ -266,7 +266,7 @@ class Figures:
         mer = self._mer_db(best)
         snr = 10 * math.log10(self._scheme.symbol_energy() / (float(noise.sum()) + self._idle_noise()))
         crossing = crossings(self._sums)
-        periodic = periodic_line(self._sums.timing_power, self._sums.timing_blocks)
+        periodic_ui, periodic_hz = self._periodic_jitter()
         clock_ppm, jitter = self._clock()
         carrier, phase_rms = self._carrier()
         iq_gain, iq_skew = self._iq(model)
@@ -287,8 +287,8 @@ class Figures:
             crossing_random_rms_ui=crossing.random_rms,
             dcd_ui=crossing.dcd,
             rise_20_80_ui=rise_time(self._sums),
-            periodic_jitter_ui=periodic.peak_ui if periodic is not None else None,
-            periodic_jitter_hz=periodic.frequency * self._context.symbol_rate_hz if periodic is not None else None,
+            periodic_jitter_ui=periodic_ui,
+            periodic_jitter_hz=periodic_hz,
             level_linearity=self._linearity(),
             q=self._q(best),
             snr_db=snr if mer is not None else None,
@@ -441,6 +441,20 @@ class Figures:
         # period = nominal * ratio * (1 + slope); the clock is its inverse
         period = self._context.sps_ratio * (1.0 + slope)
         return (1.0 / period - 1.0) * 1e6, rms
+
+    def _periodic_jitter(self) -> tuple[float | None, float | None]:
+        """Peak in UI and frequency in Hz of a line in the timing error."""
+        line = periodic_line(self._sums.timing_power, self._sums.timing_blocks)
+        if line is None:
+            return None, None
+        shown = 1.0
+        if self._sums.phases < COLUMNS:
+            slopes = self._pattern.slopes(0.0)
+            each = [sample_response(slopes[rail, rail], CURSOR, line.frequency) for rail in range(len(slopes))]
+            shown = float(np.mean(each))
+        # what symbols hide from their samples nearly whole has no size that can be told
+        peak = line.peak_ui / shown if shown > 0.2 else None
+        return peak, line.frequency * self._context.symbol_rate_hz
 
     def _carrier(self) -> tuple[float | None, float | None]:
         """Carrier in Hz and rms of its phase in degrees."""

@@ -87,6 +87,11 @@ class Pattern:
             settled[rail, rail, CURSOR] = taps[rail, rail, CURSOR]
         return PatternModel(settled, residual)
 
+    def slopes(self, ui: float) -> NDArray[np.float64]:
+        """How fast the taps at ``ui`` change, per UI, shape ``(rails, rails, lags)``."""
+        step = 0.5 / min(self._phases, 16)
+        return np.asarray((self.model(ui + step).taps - self.model(ui - step).taps) / (2.0 * step))
+
     def response(self, ui: float) -> Response:
         """The taps at ``ui`` for people to look at: each rail's in units of its cursor."""
         model = self.model(ui)
