@@ -79,9 +79,7 @@ def spread_given(
     return _joined(patterns @ taps[told], share, np.sqrt(square + small), rest_spread)
 
 
-def _joined(
-    shift: NDArray[np.float64], share: NDArray[np.float64], sigma: NDArray[np.float64], rest: Spread
-) -> Spread:
+def _joined(shift: NDArray[np.float64], share: NDArray[np.float64], sigma: NDArray[np.float64], rest: Spread) -> Spread:
     """The sum of a shift that comes with a sigma, each ``(n,)`` with its ``share``, and the independent ``rest``."""
     step = float(sigma.min()) / 8.0
     reach = float(np.abs(shift).max() + np.abs(rest.at).max())
@@ -163,13 +161,13 @@ class Decisions:
             low, high = self.levels[rail, threshold : threshold + 2]
 
             def cost(value: float, rail: int = rail, threshold: int = threshold) -> float:
-                return math.log(max(self._of_threshold(rail, threshold, value), 1e-300))
+                return float(np.log(max(self._of_threshold(rail, threshold, value), 1e-300)))
 
             middle = float(result[rail, threshold])
             found = minimize_scalar(cost, bounds=(0.75 * low + 0.25 * high, 0.25 * low + 0.75 * high), method="bounded")
             # where nothing is ever wrong the middle is as good
             if found.fun < cost(middle):
-                result[rail, threshold] = float(found.x)
+                result[rail, threshold] = found.x
         return result
 
     def over_threshold(self, rail: int, eye: int) -> ErrorCurve:

@@ -16,6 +16,7 @@ from dsp._kernels import raster as kernel
 from dsp.interpolation import expander
 from dsp.jitter import BLOCK, TimingSpectrum
 from dsp.link import Scheme
+from dsp.stretches import EAGER, LONGEST, OFTEN, Stretch, Stretches
 from dsp.tracking import Tables, Track
 
 COLUMNS = 64  # a symbol interval; the picture shows two intervals
@@ -98,6 +99,8 @@ class EyeSums:
         the k regressors are the rails' decided levels at all lags, earliest lag first, then a constant 1.
     timing_power, timing_blocks
         Summed power spectra of the timing error and how many blocks they are of; see `dsp.jitter.TimingSpectrum`.
+    stretches
+        Some of the symbols as they are, for what no sum can tell.
     """
 
     def __init__(self, scheme: Scheme, phases: int) -> None:
@@ -124,6 +127,7 @@ class EyeSums:
         self.unit_sums = np.zeros((3, 2))  # gain, zero by rail, weighted by symbols; last row: symbols
         self.timing_power = np.zeros(BLOCK // 2 + 1)
         self.timing_blocks = 0
+        self.stretches = Stretches()
         self.clock = LineSums()
         self.carrier = LineSums()
 
@@ -136,6 +140,7 @@ class EyeSums:
             self.right += other.right
         self.across += other.across
         self.timing_blocks += other.timing_blocks
+        self.stretches.merge(other.stretches)
         for name in (
             "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums",
             "timing_power",
@@ -194,6 +199,7 @@ class EyeMeter:
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
+        self._stretches = 0  # that there were since then
         self._segment = 0
         self._origin = 0.0
         self._seen = 0  # symbols of this segment
@@ -349,9 +355,19 @@ class EyeMeter:
                     sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
                 )  # fmt: skip
             kernel.add_levels(part[0], classes[first:last], sums.level_sums[rail])
+        self._keep_stretches(first, last)
         sums.drawn += sum(size for _, size in runs)
         sums.symbols += count
         self._count += count
+
+    def _keep_stretches(self, first: int, last: int) -> None:
+        """Keep some of the pending symbols ``first .. last`` with their neighbours."""
+        for start in range(first, last, LONGEST):
+            if self._stretches < EAGER or self._stretches % OFTEN == 0:
+                place = slice(start - HALO, min(start + LONGEST, last) + HALO)
+                waves = tuple(wave[:: self._phases // 2, place].copy() for wave in self._waves)
+                self.sums.stretches.offer(Stretch(waves, self._decided[: self._scheme.rails, place].copy()))
+            self._stretches += 1
 
     def _drawn_runs(self, count: int) -> list[tuple[int, int]]:
         """Start and length of the stretches to draw among the next ``count`` symbols: one of ``every`` runs of `RUN` symbols."""

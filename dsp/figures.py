@@ -8,15 +8,26 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dsp.crossings import crossings, rise_time
-from dsp.diagnosis import Diagnosis
-from dsp.error_rate import Decisions, phase_error_rate
+from dsp.diagnosis import Diagnosis, JitterSplit
+from dsp.equaliser import Equalisers
+from dsp.error_rate import Decisions, over_time, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
-from dsp.jitter import periodic_line, sample_response
+from dsp.jitter import periodic_line, sample_response, split_jitter
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
-from dsp.openings import between, corner, opening_curves, peak, plateau, slope_and_tolerance, vertex, width
+from dsp.openings import (
+    between,
+    corner,
+    modelled_openings,
+    opening_curves,
+    peak,
+    plateau,
+    slope_and_tolerance,
+    vertex,
+    width,
+)
 from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
 from dsp.picture import EyeImage
-from dsp.reading import Eye, Reading
+from dsp.reading import Equaliser, Eye, Reading
 from dsp.tracking import level_units
 
 TAIL = 1e-3  # the share of a level's traces that the opening leaves outside
@@ -232,16 +243,14 @@ class Figures:
         scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(_ui(self._best)), 1e-9)
         return np.asarray(np.clip(scale, 0.5, 2.0)[:, None])
 
-    def _modelled(self, ui: float, tail: float) -> NDArray[np.float64]:
-        """Openings by the pattern model with Gaussian noise, per cent, shape ``(rails, eyes)``."""
+    def _modelled(self, ui: float, tail: float, noise: float = 1.0) -> NDArray[np.float64]:
+        """Openings by the pattern model with Gaussian noise, ``noise`` times as much as there is, per cent, shape ``(rails, eyes)``."""
         model = self._pattern.model(ui)
-        sigmas = np.sqrt(self._noise(model))
+        sigmas = np.sqrt(noise * self._noise(model))
         result = np.empty((self._scheme.rails, self._spacing.size))
         for rail, sigma in enumerate(sigmas):
             reach = self._isi(rail, model, float(sigma))
-            low, high = reach.quantile(tail), -reach.mirrored().quantile(tail)
-            levels = self._levels(rail)
-            result[rail] = 100.0 * (levels[1:] + low - (levels[:-1] + high)) / self._spacing
+            result[rail] = modelled_openings(self._levels(rail), reach, self._spacing, tail)
         return result
 
     def opening_pct(self) -> float | None:
@@ -250,8 +259,8 @@ class Figures:
 
     # -- the reading ---------------------------------------------------------------------------------------------------
 
-    def reading(self) -> Reading:
-        """Every figure that can be known from these sums."""
+    def reading(self, *, whole: bool = True) -> Reading:
+        """Every figure that can be known from these sums; without ``whole`` all but the equaliser, which takes the longest."""
         opening = self.opening_pct()
         if opening is None:
             return Reading(symbols=self._sums.symbols)
@@ -303,13 +312,51 @@ class Figures:
             iq_gain_db=iq_gain,
             iq_skew_deg=iq_skew,
             dc_pct=self._dc_pct(),
+            equaliser=self._equaliser() if whole else None,
         )
 
     def diagnosis(self) -> Diagnosis:
         """What stands behind the reading's budget and error rate; costs more than the reading does."""
         if not self.enough:
             return Diagnosis()
-        return Diagnosis(response=self._pattern.response(_ui(self._best)))
+        best = _ui(self._best)
+        decisions = self._decisions(best, best)
+        rail, eye = np.unravel_index(int(np.argmin(self._openings)), self._openings.shape)
+        circle = self._scheme.name == "8psk"  # whose rails are not decided one by one
+        return Diagnosis(
+            response=self._pattern.response(best),
+            over_time=over_time(self._bit_errors if circle else self._errors_at, best),
+            over_threshold=None if circle else decisions.over_threshold(int(rail), int(eye)),
+            jitter=self._jitter_split(),
+            equalisers=self._equalisers.trials(),
+            best_thresholds=() if circle else tuple(decisions.best_thresholds().ravel().tolist()),
+            opening_with_3db_more_pct=self._opening_with(10**-0.3),
+        )
+
+    def _errors_at(self, ui: float) -> float:
+        """Error rate at ``ui`` of a receiver whose thresholds stay as they are best at the best instant."""
+        best = _ui(self._best)
+        return self._decisions(ui, best).error_rate(self._decisions(best, best).midpoints())
+
+    def _opening_with(self, noise: float) -> float:
+        """The least opening that there would be with ``noise`` times the noise variance."""
+        best = _ui(self._best)
+        change = self._modelled(best, TAIL, noise) - self._modelled(best, TAIL)
+        return float((self._openings + change).min())
+
+    def _jitter_split(self) -> JitterSplit | None:
+        """Of the rail whose crossings are spread most at the target error rate."""
+        random = crossings(self._sums).random_rms
+        each = [split_jitter(counts, random, self._context.target_ber) for counts in self._sums.crossing_bins]
+        return max((split for split in each if split is not None), key=lambda split: split.total_pp_ui, default=None)
+
+    @cached_property
+    def _equalisers(self) -> Equalisers:
+        return Equalisers(self._sums.stretches, self._scheme, TAIL)
+
+    def _equaliser(self) -> Equaliser | None:
+        chosen = self._equalisers.chosen
+        return None if chosen is None else Equaliser(chosen.taps.size, chosen.opening_pct)
 
     def _eyes(self) -> tuple[Eye, ...]:
         eyes = []

@@ -112,10 +112,13 @@ def sample_response(slopes: NDArray[np.float64], own: int, frequency: float) -> 
     """What the decided samples' errors show of a jitter of the symbols at ``frequency`` cycles a symbol, as a share of it.
 
     Symbols that are sent early or late move their own pulses, and a sample shows the movement of its neighbours': ``slopes``
-    ``(lags,)`` is the pulse's slope from lag to lag, ``own`` the place of the symbol itself. Derived here: the least-squares estimate of a shift weighs them by slope squared.
+    ``(lags,)`` is the pulse's slope from lag to lag, ``own`` the place of the symbol itself. Derived here: the least-squares
+    estimate of a shift weighs them by slope squared.
     """
     weight = slopes**2
-    return float(weight @ np.cos(2 * np.pi * frequency * (np.arange(slopes.size) - own)) / max(float(weight.sum()), 1e-30))
+    return float(
+        weight @ np.cos(2 * np.pi * frequency * (np.arange(slopes.size) - own)) / max(float(weight.sum()), 1e-30)
+    )
 
 
 class TimingSpectrum:

@@ -5,6 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.optimize import brentq
 from scipy.special import log_ndtr, ndtr, ndtri
 
 
@@ -100,15 +101,13 @@ class Spread:
         most = float(np.max(self.sigma))
         low, high = self.at[0] - reach * most, self.at[-1] + reach * most
         target = math.log(share)
-        for _ in range(60):
-            middle = 0.5 * (low + high)
-            logs = log_ndtr((middle - self.at) / self.sigma)
+
+        def excess(limit: float) -> float:
+            logs = log_ndtr((limit - self.at) / self.sigma)
             peak = logs.max()
-            if peak + math.log(float(self.share @ np.exp(logs - peak)) + 1e-300) < target:
-                low = middle
-            else:
-                high = middle
-        return float(0.5 * (low + high))
+            return float(peak) + math.log(float(self.share @ np.exp(logs - peak)) + 1e-300) - target
+
+        return float(brentq(excess, low, high, xtol=1e-9 * (1.0 + abs(low)), rtol=1e-12))
 
 
 def spread(taps: NDArray[np.float64], levels: NDArray[np.float64], shares: NDArray[np.float64], sigma: float) -> Spread:

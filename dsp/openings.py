@@ -6,6 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dsp.eye import COLUMNS, Rows
+from dsp.mixture import Spread
 
 Curve = NDArray[np.float64]
 
@@ -39,6 +40,12 @@ def opening_curves(
     low, high = quantile(histogram, tail, 1.0 - tail)
     height = (low[:, 1:] - high[:, :-1]) / rows.scale / gain[:, None, None]
     return np.asarray(100.0 * height / spacing[None, :, None])
+
+
+def modelled_openings(levels: Curve, reach: Spread, spacing: Curve, tail: float) -> Curve:
+    """Openings between neighbouring ``levels`` ``(n,)`` whose samples spread by ``reach``, per cent of ``spacing`` ``(n - 1,)``."""
+    low, high = reach.quantile(tail), -reach.mirrored().quantile(tail)
+    return np.asarray(100.0 * (np.diff(levels) + low - high) / spacing)
 
 
 def plateau(values: Curve, top: int, tolerance: float) -> tuple[int, int]:
