@@ -146,7 +146,7 @@ class Decisions:
 
     def _of_threshold(self, rail: int, threshold: int, value: float) -> float:
         """Wrong bits a symbol for which this threshold accounts."""
-        count = self.levels.shape[1]
+        count: int = self.levels.shape[1]
         steps = _bit_steps(count)[:, threshold]
         total = 0.0
         for m, (level, reach) in enumerate(zip(self.levels[rail], self.spreads[rail], strict=True)):
@@ -161,7 +161,8 @@ class Decisions:
             low, high = self.levels[rail, threshold : threshold + 2]
 
             def cost(value: float, rail: int = rail, threshold: int = threshold) -> float:
-                return float(np.log(max(self._of_threshold(rail, threshold, value), 1e-300)))
+                wrong = self._of_threshold(rail, threshold, value)
+                return math.log(max(wrong, 1e-300))
 
             middle = float(result[rail, threshold])
             found = minimize_scalar(cost, bounds=(0.75 * low + 0.25 * high, 0.25 * low + 0.75 * high), method="bounded")
