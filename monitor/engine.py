@@ -452,11 +452,7 @@ class Engine:
     def _judge(self, seconds: float) -> None:
         assert self._chain is not None
         figures = Figures(self._merged(), self._chain.context())
-        told = seconds >= self._next_line
-        reading = figures.reading(whole=told)
-        if not told and self._reading is not None:
-            # what takes long is looked at for lines only, so that who watches makes no difference to them
-            reading = replace(reading, equaliser=self._reading.equaliser)
+        reading = figures.reading()
         self._base_image = figures.image()
         if self._options.display and seconds >= self._next_diagnosis:
             self._next_diagnosis = seconds + DIAGNOSIS_SECONDS
@@ -477,7 +473,7 @@ class Engine:
         sample = self._chain.position
         document = reading_document(reading) or {}
         self._tell_alarms(self.alarms.update(document, seconds, sample))
-        if told:
+        if seconds >= self._next_line:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
             self._emit("reading", sample=sample, **document)
 
