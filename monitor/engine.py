@@ -162,6 +162,7 @@ class Engine:
         self._base_image: EyeImage | None = None
         self._density: NDArray[np.float32] | None = None
         self._traces = 0.0
+        self._taken = False  # whether the picture as it is now was handed out
         self._next_judge = 0.0
         self._next_line = 0.0
 
@@ -480,10 +481,12 @@ class Engine:
     def _draw(self, sums: EyeSums) -> None:
         """Fold a part into the picture; what is older fades by the persistence."""
         density = sums.histogram().sum(axis=1).astype(np.float32)
-        if self._density is None or self._density.shape != density.shape or self.persistence_s == 0:
+        old = self.persistence_s == 0 and self._taken
+        self._taken = False
+        if old or self._density is None or self._density.shape != density.shape:
             self._density, self._traces = density, float(sums.drawn)
             return
-        if self.persistence_s is not None:
+        if self.persistence_s:
             assert self._chain is not None
             age = sums.symbols / self._chain.link.symbol_rate_hz
             fade = math.exp(-age / self.persistence_s)
@@ -589,6 +592,7 @@ class Engine:
         )
 
     def _image(self) -> EyeImage | None:
+        self._taken = True
         base = self._base_image
         if base is None or self._density is None or self._density.shape != base.density.shape:
             return base

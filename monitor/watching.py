@@ -26,6 +26,7 @@ if TYPE_CHECKING:
     from monitor.watch import Watch
 
 INTERRUPTED = 130
+SWITCH_S = 0.0005  # view and chain take turns: with the usual 5 ms each waits for the other at every array operation
 VIEWS = ("window", "terminal", "none")
 
 
@@ -92,6 +93,11 @@ def watch(parsed: argparse.Namespace) -> int:
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
         from monitor.watch import Watch
+
+        if view == "window":
+            # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
+            import monitor.views.window  # noqa: F401
+    sys.setswitchinterval(SWITCH_S)
 
     from dataclasses import replace
 

@@ -351,13 +351,21 @@ def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> 
 
     ``shown``: to when the window has painted that state.
     """
+    from threadpoolctl import threadpool_limits
+
     from dsp.identify import Wanted
     from dsp.link import find_scheme
     from dsp.pulses import Pulse
     from monitor.engine import EngineOptions
     from monitor.sources.stream import StreamOptions, open_stream
     from monitor.watch import Watch
+    from monitor.watching import SWITCH_S
 
+    if shown:  # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
+        from monitor.views.choices import Choices, save_choices
+    # both as `lidwatch watch` does
+    threadpool_limits(1)
+    sys.setswitchinterval(SWITCH_S)
     wanted = Wanted(scheme=find_scheme("qpsk"), symbol_rate_hz=rate / SPS, pulse=Pulse("rrc", 0.35))
     with tempfile.TemporaryDirectory(prefix="soak-") as folder:
         address = f"ipc://{folder}/samples"
@@ -372,8 +380,6 @@ def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> 
             running.start()
             if shown:
                 choices = Path(folder) / "window.ini"
-                from monitor.views.choices import Choices, save_choices
-
                 save_choices(choices, Choices(persistence=0.0))
                 sight = follow_window(running, over, choices)
             else:

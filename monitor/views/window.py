@@ -1,4 +1,4 @@
-"""The window of a live watch: looks at the newest state some 25 times a second and draws what has changed."""
+"""The window of a live watch: draws what has changed as soon as there is a new state."""
 
 import os
 import sys
@@ -54,7 +54,7 @@ if TYPE_CHECKING:
 PainterName = Literal["auto", "raster", "opengl"]
 
 _SCREEN_PACKAGES = "libxcb-cursor0 libxkbcommon-x11-0 libxcb-icccm4 libxcb-keysyms1 libxcb-image0 libxcb-render-util0"
-LOOK_MS = 40
+LOOK_MS = 10
 INTERRUPTED = 130
 SAID_SECONDS = 6.0
 LEAST_SIZE = QSize(900, 560)
@@ -203,7 +203,7 @@ class LiveWindow(QMainWindow):
         self._make_menus()
         self._timer = QTimer(self)
         self._timer.setInterval(LOOK_MS)
-        self._timer.timeout.connect(self.refresh)
+        self._timer.timeout.connect(self._peek)
         self._put_theme()
         self._put_menu_size()
         if not (self._choices.geometry and self.restoreGeometry(self._choices.geometry)):
@@ -213,6 +213,12 @@ class LiveWindow(QMainWindow):
             self._start_tone()
 
     # -- the look ------------------------------------------------------------------------------------------------------
+
+    def _peek(self) -> None:
+        """Look if there is a reason to."""
+        passed = self._said and self._now() >= self._said_until
+        if passed or self._watched.state() is not self._newest or (self._until is not None and self._until()):
+            self.refresh()
 
     def refresh(self) -> None:
         """Take the newest state and show it; while held, only its alarms."""

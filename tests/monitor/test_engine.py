@@ -327,14 +327,16 @@ def test_the_history_is_bounded_and_spans_the_whole_stream():
     assert all(isinstance(p, HistoryPoint) for p in points)
 
 
-def test_persistence_shows_the_newest_traces_all_of_them_or_a_fading_share():
+def test_persistence_shows_what_came_since_the_last_look_all_of_it_or_a_fading_share():
     samples = stretches(*[25.0] * 4)
+    last = samples.size - round(0.1 * RATE)
     traces = {}
     for persistence in (0.0, 0.5, None):
         watched = Watched(display=True)
         watched.engine.persistence_s = persistence
-        traces[persistence] = watched.feed(samples).engine.state().snapshot.image.traces
-    assert traces[0.0] < 0.06 * SYMBOL_RATE
+        watched.feed(samples[:last]).engine.state()
+        traces[persistence] = watched.feed(samples[last:]).engine.state().snapshot.image.traces
+    assert 0.03 * SYMBOL_RATE < traces[0.0] < 0.2 * SYMBOL_RATE
     # all but what the lock guard still holds back
     assert 3.5 * SYMBOL_RATE < traces[None] <= 4 * SYMBOL_RATE
     # a geometric sum: rate times persistence
