@@ -17,8 +17,6 @@ class Snapshot:
         The eye; None when there is none to draw.
     reading
         The newest figures; None when nothing could be measured.
-    diagnosis
-        What stands behind the figures, up to a second older than they; None as they are.
     source_text, link_text, lock_text
         Where the samples come from, what the link is, and whether the loops hold it: one line each, may be empty.
     notes
@@ -27,6 +25,8 @@ class Snapshot:
         Length of the stream seen so far, in seconds of the stream.
     coverage_pct
         Share of the symbols whose trace is in the eye; below 100 when the machine could not keep up.
+    diagnosis
+        What stands behind the figures, up to a second older than they; None as they are.
     """
 
     image: EyeImage | None = None

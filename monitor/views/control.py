@@ -56,6 +56,8 @@ ActionName = Literal[
     "hold",
     "clear",
     "rail",
+    "page",
+    "back",
     "longer",
     "shorter",
     "newest",
@@ -80,7 +82,7 @@ class Action:
     ----------
     keys
         The first is the one to show. A printable key is itself, in capitals, and counts with or without Shift; the others are
-        Space, Enter, Backspace, Tab, Escape, Up, Down, Left, Right, F1 and Ctrl+ with a letter.
+        Space, Enter, Backspace, Tab, Escape, Up, Down, Left, Right, PageUp, PageDown, F1 and Ctrl+ with a letter.
     words
         For the menu, short.
     what
@@ -117,6 +119,14 @@ ACTIONS: tuple[Action, ...] = (
     Action("acknowledge", ("Enter",), "Acknowledge alarms", "all alarms shown have been seen", "Alarm"),
     Action("shelve", ("Z",), "Shelve alarm for 10 minutes", "keep the foremost alarm quiet for 10 minutes", "Alarm"),
     Action("rail", ("Tab",), "Next rail", "both rails, I alone, Q alone", "View"),
+    Action(
+        "page",
+        ("P", "PageDown"),
+        "Next page",
+        "causes, response, error rate, constellation, remedies",
+        "View",
+    ),
+    Action("back", ("B", "PageUp"), "Page before", "and back again", "View"),
     Action("longer", ("Up",), "Traces stay longer", "older traces fade more slowly, at last never", "View"),
     Action("shorter", ("Down",), "Traces stay shorter", "older traces fade faster, at last at once", "View"),
     Action("newest", ("0",), "Newest traces only", "no persistence at all", "View"),

@@ -14,7 +14,7 @@ from monitor.snapshot import Snapshot
 from monitor.views import pixels
 from monitor.views.canvas import Canvas, PlacedText
 from monitor.views.layout import Box, Page, RailBoxes, arrange, notes_width, page_scale
-from monitor.views.theme import RAMP_STEPS, Theme, ThemeName, find_theme
+from monitor.views.theme import RAMP_STEPS, ThemeName, find_theme
 from monitor.views.wording import (
     Group,
     budget_rows,
@@ -138,11 +138,11 @@ def y_of(box: Box, value: float, low: float, high: float) -> float:
     return box.y + box.height * (high - value) / (high - low)
 
 
-def _blit(canvas: Canvas, box: Box, indices: NDArray[np.uint8], theme: Theme) -> None:
-    """Copy ramp colours into an image that owns its memory, and draw that."""
+def blit(canvas: Canvas, box: Box, indices: NDArray[np.uint8]) -> None:
+    """Draw indices into the theme's ramp ``(height, width)`` over the box; colours go into an image that owns its memory."""
     picture = QImage(box.width, box.height, QImage.Format.Format_RGB32)
     target = np.frombuffer(picture.bits(), dtype=np.uint32).reshape(box.height, picture.bytesPerLine() // 4)
-    np.take(theme.ramp, indices, out=target[:, : box.width])
+    np.take(canvas.theme.ramp, indices, out=target[:, : box.width])
     del target
     canvas.painter.drawImage(box.x, box.y, picture)
 
@@ -156,7 +156,7 @@ def draw_density(canvas: Canvas, eye: Box, image: EyeImage, rail: int, low: floa
     """The traces of one rail, and the best instant across them; the amplitude axis runs from ``low`` to ``high``."""
     theme = canvas.theme
     if eye.width > 0 and eye.height > 0:
-        _blit(canvas, eye, pixels.density_indices(image, rail, low, high, eye.width, eye.height, RAMP_STEPS), theme)
+        blit(canvas, eye, pixels.density_indices(image, rail, low, high, eye.width, eye.height, RAMP_STEPS))
     if image.best_ui is not None:
         x = x_of(eye, image.best_ui)
         if eye.x <= x <= eye.right:
@@ -330,7 +330,7 @@ def _draw_key(canvas: Canvas, box: Box, image: EyeImage, span: pixels.Span | Non
     bar = Box(box.x, y, box.width, bar_height)
     columns = np.arange(bar.width) * (RAMP_STEPS - 1) // max(bar.width - 1, 1)
     if bar.width > 0 and bar.height > 0:
-        _blit(canvas, bar, np.broadcast_to(columns.astype(np.uint8), (bar.height, bar.width)), theme)
+        blit(canvas, bar, np.broadcast_to(columns.astype(np.uint8), (bar.height, bar.width)))
     canvas.frame(bar, theme.edge)
     words = Box(box.x, bar.bottom + canvas.px(3), box.width, canvas.px(16))
     canvas.write("Traces", replace(words, y=box.y, height=canvas.px(20)), _TEXT, theme.ink, bold=True)

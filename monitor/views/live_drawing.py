@@ -5,10 +5,13 @@ from dataclasses import dataclass, replace
 
 from dsp.picture import EyeImage
 from dsp.reading import Reading
+from monitor.snapshot import Snapshot
 from monitor.state import AlarmLine, LiveState
 from monitor.views import pixels
 from monitor.views.canvas import Canvas
 from monitor.views.control import ACTIONS, persistence_words
+from monitor.views.diagnosis_drawing import draw_page
+from monitor.views.diagnosis_wording import PAGE_TITLES, PAGES, PageName
 from monitor.views.drawing import (
     draw_budget,
     draw_curve,
@@ -33,7 +36,7 @@ from monitor.views.live_wording import (
     no_eye_lines,
 )
 from monitor.views.theme import Colour, ThemeName
-from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
+from monitor.views.wording import UNEXPLAINED, budget_rows, figure_groups, interval_text, plain
 
 _TEXT, _SMALL, _LARGE = 13.0, 12.0, 19.0
 
@@ -50,7 +53,7 @@ class View:
         The newest, also while held.
     spans
         Alarms that stood earlier or stand now, for the history.
-    held, rail, persistence, tone
+    held, rail, page, persistence, tone
         How things are set; ``rail`` None shows all.
     span_s
         How much of the history; None for the whole watch.
@@ -63,6 +66,7 @@ class View:
     spans: tuple[AlarmSpan, ...] = ()
     held: bool = False
     rail: int | None = None
+    page: PageName = "glance"
     persistence: float | None = 2.0
     tone: bool = False
     theme: ThemeName = "light"
@@ -235,6 +239,9 @@ def draw_no_eye(canvas: Canvas, box: Box, state: LiveState) -> None:
 def draw_figure(canvas: Canvas, box: Box, state: LiveState) -> None:
     """The one large figure, the best so far as a target on its bar, and the change since the last mark."""
     theme, reading = canvas.theme, state.snapshot.reading
+    if box.height < canvas.px(140):
+        _draw_small_figure(canvas, box, state)
+        return
     tall = box.height >= canvas.px(220)
     title = Box(box.x, box.y, box.width, canvas.px(20))
     canvas.write("Opening", title, _TEXT, theme.ink, bold=True)
@@ -261,6 +268,31 @@ def draw_figure(canvas: Canvas, box: Box, state: LiveState) -> None:
     canvas.write(best_words(state), Box(box.x, y, box.width, canvas.px(20)), _TEXT, theme.dim)
     y += canvas.px(24)
     _draw_change(canvas, Box(box.x, y, box.width, max(0, box.bottom - y)), state)
+
+
+def _draw_small_figure(canvas: Canvas, box: Box, state: LiveState) -> None:
+    """The figure beside its change, over the bar: all that a page leaves room for."""
+    theme, reading = canvas.theme, state.snapshot.reading
+    opening = reading.opening_pct if reading is not None else None
+    title = Box(box.x, box.y, box.width, canvas.px(18))
+    canvas.write("Opening", title, _TEXT, theme.ink, bold=True)
+    interval = interval_text(reading) if reading is not None else None
+    if interval is not None:
+        canvas.write(f"95 % interval {interval}", title, _TEXT, theme.dim, align="right")
+    large = Box(box.x, title.bottom, box.width, canvas.px(48))
+    if opening is None or not math.isfinite(opening):
+        end = canvas.write("not known", large, 24.0, theme.dim).right
+        opening = None
+    else:
+        end = canvas.write(f"{plain(opening, 1)} %", large, 42.0, theme.ink).right
+    x = end + canvas.px(18)
+    verdict, points, _ = change_lines(state)
+    words = [verdict, points] if verdict else ["eye closed"] if opening is not None and opening <= 0 else []
+    line = canvas.px(21)
+    for number, text in enumerate(words):
+        row = Box(x, large.y + (large.height - line * len(words)) // 2 + number * line, max(0, box.right - x), line)
+        canvas.write(text, row, 15.0, theme.ink, bold=number == 0)
+    _draw_opening_bar(canvas, Box(box.x, large.bottom + canvas.px(8), box.width, canvas.px(10)), opening, state)
 
 
 def _draw_opening_bar(canvas: Canvas, bar: Box, opening: float | None, state: LiveState) -> None:
@@ -319,16 +351,25 @@ def _draw_change(canvas: Canvas, box: Box, state: LiveState) -> None:
     canvas.write(since, below, _SMALL, theme.dim, elide="middle")
 
 
-def draw_detail(canvas: Canvas, box: Box, reading: Reading | None) -> None:
-    """Verdict, budget and the other figures, as far as there is room."""
+def draw_detail(canvas: Canvas, box: Box, snapshot: Snapshot, page: PageName) -> None:
+    """The page's title and the page; at a glance verdict, largest causes and key figures, as far as there is room."""
+    reading = snapshot.reading
     if reading is None:
+        return
+    title = Box(box.x, box.y, box.width, canvas.px(24))
+    if page != "glance":
+        _draw_page_title(canvas, title, page)
+        draw_page(canvas, Box(box.x, title.bottom, box.width, max(0, box.bottom - title.bottom)), page, snapshot)
         return
     y, gap = box.y + canvas.px(6), canvas.px(12)
     if reading.verdict and canvas.px(90) <= box.bottom - y:
         y = draw_verdict(canvas, Box(box.x, y, box.width, box.bottom - y), reading.verdict) + gap
     rows = budget_rows(reading.budget) if reading.budget is not None else []
-    lines = (box.bottom - y - canvas.px(22)) // max(canvas.px(29), 1)
-    rows = rows[: max(0, 2 * lines)]
+    # two lines of figures below it: the other causes have a page of their own
+    lines = (box.bottom - y - canvas.px(22 + 12 + 46)) // max(canvas.px(29), 1)
+    if len(rows) > 2 * lines:
+        rows = [row for row in rows if row[0] != UNEXPLAINED]
+    rows = rows[: max(0, 2 * min(lines, 4))]
     if rows:
         y = draw_budget(canvas, Box(box.x, y, box.width, box.bottom - y), rows) + gap
     rest = Box(box.x, y, box.width, max(0, box.bottom - y))
@@ -337,6 +378,18 @@ def draw_detail(canvas: Canvas, box: Box, reading: Reading | None) -> None:
         draw_table(canvas, rest, groups)
     else:
         _draw_key_figures(canvas, rest, reading)
+
+
+def _draw_page_title(canvas: Canvas, box: Box, page: PageName) -> None:
+    """What the page is, and which of how many."""
+    theme = canvas.theme
+    canvas.write(PAGE_TITLES[page], box, 15.0, theme.ink, bold=True)
+    side, gap = canvas.px(7), canvas.px(5)
+    x = box.right - len(PAGES) * (side + gap) + gap
+    for name in PAGES:
+        mark = Box(x, box.y + (box.height - side) // 2, side, side)
+        canvas.fill(mark, theme.accent if name == page else theme.edge)
+        x += side + gap
 
 
 def _draw_key_figures(canvas: Canvas, box: Box, reading: Reading) -> None:
@@ -359,7 +412,7 @@ def _draw_key_figures(canvas: Canvas, box: Box, reading: Reading) -> None:
             canvas.fill(Box(row.x, row.bottom - 1, width, max(1, canvas.px(1))), theme.grid)
 
 
-_HINTS = ("mark", "acknowledge", "hold", "help")
+_HINTS = {"mark": "mark", "acknowledge": "acknowledge", "hold": "hold", "page": "next page", "help": "all keys"}
 
 
 def draw_footer(canvas: Canvas, box: Box, view: View) -> None:
@@ -368,8 +421,7 @@ def draw_footer(canvas: Canvas, box: Box, view: View) -> None:
     hints = []
     for action in ACTIONS:
         if action.name in _HINTS:
-            words = {"mark": "mark", "acknowledge": "acknowledge", "hold": "hold", "help": "all keys"}[action.name]
-            hints.append(f"{action.keys[0]} {words}")
+            hints.append(f"{action.keys[0]} {_HINTS[action.name]}")
     text = "   ".join(hints)
     taken = min(canvas.text_width(text, _SMALL), box.width * 3 // 5)
     canvas.write(text, Box(box.right - taken, box.y, taken, box.height), _SMALL, theme.dim, align="right")

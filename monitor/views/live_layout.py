@@ -45,8 +45,11 @@ def live_unit(width: int, height: int, ratio: float, zoom: float) -> float:
     return min(natural * zoom, width / _LEAST_WIDTH, height / _LEAST_HEIGHT)
 
 
-def arrange_live(width: int, height: int, unit: float, *, rails: int) -> LiveBoxes:
-    """Split a window; ``rails`` 0 leaves the eye's place to a message. Raises ValueError without pixels."""
+def arrange_live(width: int, height: int, unit: float, *, rails: int, small_figure: bool = False) -> LiveBoxes:
+    """Split a window; ``rails`` 0 leaves the eye's place to a message.
+
+    ``small_figure``: the figure gives room to what is below it. Raises ValueError without pixels.
+    """
     if width < 1 or height < 1:
         raise ValueError(f"a window needs at least 1 x 1 pixels, got {width} x {height}")
     wide, high = width / unit, height / unit
@@ -71,7 +74,7 @@ def arrange_live(width: int, height: int, unit: float, *, rails: int) -> LiveBox
     side_width = px(min(max(0.345 * wide, 270), 440))
     gap = px(28)
     side = Box(width - margin - side_width, top, side_width, bottom - top)
-    figure_height = min(px(226 if high >= 640 else 196), side.height)
+    figure_height = min(px(100 if small_figure else 226 if high >= 640 else 196), side.height)
     figure = Box(side.x, side.y, side.width, figure_height)
     detail = Box(side.x, figure.bottom, side.width, side.height - figure_height)
     body = Box(margin, top, inner - side_width - gap, bottom - top)

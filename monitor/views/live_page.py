@@ -39,6 +39,12 @@ class _Same:
     __hash__ = None  # type: ignore[assignment]
 
 
+def _detail_key(view: View) -> tuple[Any, ...]:
+    """What the detail shows: the diagnosis, which holds arrays, by identity."""
+    snapshot = view.state.snapshot
+    return view.page, snapshot.reading, _Same(snapshot.diagnosis) if view.page != "glance" else None
+
+
 @dataclass(frozen=True, slots=True)
 class _Panel:
     name: str
@@ -80,7 +86,7 @@ class LivePage:
         if image is not None:
             rails = 1 if view.rail is not None and view.rail < len(image.rails) else len(image.rails)
         unit = live_unit(width, height, ratio, view.zoom)
-        boxes = arrange_live(width, height, unit, rails=rails)
+        boxes = arrange_live(width, height, unit, rails=rails, small_figure=view.page != "glance")
         if self.image is None or (self.image.width(), self.image.height()) != (width, height):
             self.image = QImage(width, height, QImage.Format.Format_RGB32)
             self._keys.clear()
@@ -140,8 +146,8 @@ class LivePage:
             _Panel(
                 "detail",
                 boxes.detail,
-                (snapshot.reading,),
-                lambda canvas: draw_detail(canvas, boxes.detail, snapshot.reading),
+                _detail_key(view),
+                lambda canvas: draw_detail(canvas, boxes.detail, snapshot, view.page),
             ),
             _Panel(
                 "history",

@@ -71,15 +71,36 @@ def column_tones(image: EyeImage, rail: int, low: float, high: float, height: in
     rows_per_pixel = (high - low) / height / (image.row_level[1] - image.row_level[0])
     if rows_per_pixel < 1.0:  # a row that covers several pixels keeps its count in each
         pixels /= rows_per_pixel
+    return np.ascontiguousarray(_tones(pixels).T[::-1], dtype=np.float32)
+
+
+def _tones(pixels: NDArray[np.float64]) -> NDArray[np.float32]:
+    """Counts as tones from 0 to 1."""
     filled = pixels[pixels > 0]
     if filled.size == 0:
-        return np.zeros((height, density.shape[0]), dtype=np.float32)
+        return np.zeros(pixels.shape, dtype=np.float32)
     full = max(float(np.quantile(filled[:: max(1, filled.size // 20000)], 0.998)), 1.0)
     tone = np.asarray(np.log1p(pixels.astype(np.float32)) / np.float32(math.log1p(full)), dtype=np.float32)
     np.power(tone, np.float32(_BEND), out=tone)
     np.maximum(tone, np.minimum(2.0 * pixels, 1.0) * _FAINTEST, out=tone, casting="same_kind")
     np.minimum(tone, 1.0, out=tone)
-    return np.ascontiguousarray(tone.T[::-1], dtype=np.float32)
+    return tone
+
+
+def count_indices(counts: NDArray[np.uint32], width: int, height: int, steps: int) -> NDArray[np.uint8]:
+    """Counts ``(rows upwards, columns)`` as indices into a colour ramp, ``(height, width)``, top row first; to ``steps - 1``.
+
+    Tones as those of `column_tones`. Nothing is blurred: a pixel has the counts of the one bin that it lies in, or the sum of
+    all the bins that it covers.
+    """
+    tone = _tones(_along_first(_along_first(counts.astype(np.float64), height).T, width).T)[::-1]
+    return np.asarray((tone * np.float32(steps - 1) + np.float32(0.5)).astype(np.uint8))
+
+
+def _along_first(counts: NDArray[np.float64], size: int) -> NDArray[np.float64]:
+    """The first axis on ``size`` places: bins repeated where there are fewer of them, else summed."""
+    place = np.arange(size) * counts.shape[0] // max(size, 1)
+    return np.asarray(counts[place] if size >= counts.shape[0] else np.add.reduceat(counts, place, axis=0))
 
 
 def density_indices(

@@ -22,6 +22,7 @@ from monitor.views.control import (
     persistence_words,
     step_persistence,
 )
+from monitor.views.diagnosis_wording import next_page
 from monitor.views.history import AlarmMemory, AlarmSpan
 from monitor.views.live_wording import calls
 from monitor.views.terminal_cells import Screen, spell
@@ -159,6 +160,9 @@ class TerminalView:
                 self._shown = replace(self._shown, rail=next_rail(self._shown.rail, rails))
                 if len(rails) < 2:
                     self._say("this link has one rail")
+            case "page" | "back":
+                page = next_page(self._shown.page, back=action.name == "back")
+                self._shown = replace(self._shown, page=page)
             case "longer" | "shorter":
                 self._keep(step_persistence(self._shown.persistence, longer=action.name == "longer"))
             case "newest":

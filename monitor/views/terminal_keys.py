@@ -18,6 +18,8 @@ _SEQUENCES = {
     "OP": "F1",
     "OM": "Enter",
     "[11~": "F1",
+    "[5~": "PageUp",
+    "[6~": "PageDown",
     "[[A": "F1",
 }
 _PASTE, _PASTE_END = "[200~", "[201~"
@@ -27,8 +29,8 @@ _LONGEST = 64
 class Keys:
     """Takes bytes as they come, however they are cut, and gives keys.
 
-    A key is a character, or a name: Space, Enter, Backspace, Tab, Escape, Up, Down, Left, Right, F1, Ctrl+ with a letter. Unknown
-    sequences and bytes that are no UTF-8 give nothing. What was pasted gives ``("paste", text)`` and never a key.
+    A key is a character, or a name: Space, Enter, Backspace, Tab, Escape, Up, Down, Left, Right, PageUp, PageDown, F1, Ctrl+ with a letter.
+    Unknown sequences and bytes that are no UTF-8 give nothing. What was pasted gives ``("paste", text)`` and never a key.
     """
 
     def __init__(self) -> None:

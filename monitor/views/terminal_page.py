@@ -12,6 +12,7 @@ from monitor.views.control import (
     ActionName,
     persistence_words,
 )
+from monitor.views.diagnosis_wording import PageName
 from monitor.views.history import AlarmSpan
 from monitor.views.live_wording import (
     alarm_words,
@@ -26,9 +27,10 @@ from monitor.views.live_wording import (
 )
 from monitor.views.terminal_cells import Ink, Screen, Sheet, cells, shorten, spell, wrap
 from monitor.views.terminal_colours import Look, Palette, palette
+from monitor.views.terminal_diagnosis import draw_budget, draw_figures, draw_side_page
 from monitor.views.terminal_digits import digit_pixels, half_blocks, hash_blocks
 from monitor.views.terminal_plots import draw_curve, draw_eye, draw_history
-from monitor.views.wording import Figure, budget_rows, figure_groups, interval_text, plain
+from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
 
 LEAST_COLUMNS, LEAST_ROWS = 64, 20
 _MOST_SIDE, _LEAST_SIDE = 54, 34
@@ -45,8 +47,9 @@ _FOOT: tuple[tuple[ActionName, str], ...] = (
     ("help", "all keys"),
     ("close", "end"),
     ("acknowledge", "acknowledge"),
-    ("name", "name"),
     ("hold", "hold"),
+    ("page", "page"),
+    ("name", "name"),
     ("clear", "clear"),
     ("rail", "rail"),
     ("longer", "traces"),
@@ -65,6 +68,8 @@ class Shown:
         The one rail to show; None for all.
     persistence
         How long traces stay, as `monitor.views.control` counts it.
+    page
+        What stands beside the eye.
     held
         The picture stands still.
     helping
@@ -79,6 +84,7 @@ class Shown:
 
     rail: int | None = None
     persistence: float | None = DEFAULT_PERSISTENCE
+    page: PageName = "glance"
     held: bool = False
     helping: bool = False
     entry: str | None = None
@@ -159,7 +165,11 @@ def _draw_page(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown) -> N
         _draw_help(sheet, inks, top, bottom)
     else:
         _draw_eye_area(sheet, inks, state, shown, top, left, bottom - top)
-        _draw_side(sheet, inks, state, left + 2, top, side, bottom - top, with_verdict=rows >= 36)
+        if shown.page == "glance":
+            _draw_side(sheet, inks, state, left + 2, top, side, bottom - top, with_verdict=rows >= 36)
+        else:
+            _draw_opening_line(sheet, inks, state, left + 2, top, side)
+            draw_side_page(sheet, inks, shown.page, snapshot, left + 2, top + 1, side, bottom - top - 1)
     _draw_history(sheet, inks, state, shown, history, plot_rows)
     _draw_remark(sheet, inks, state, shown, rows - 2)
     _draw_keys(sheet, inks, state, shown, rows - 1)
@@ -260,9 +270,27 @@ def _draw_side(
             sheet.write(x, y, line, inks.text)
             y += 1
         y += 1
-    if reading.budget is not None and end - y >= 18:
-        y = _draw_budget(sheet, inks, reading, x, y, width) + 1
+    if reading.budget is not None:
+        # in brief where there is little room: the largest causes, and the figures most looked for
+        room = end - y
+        rows = budget_rows(reading.budget)
+        y = draw_budget(sheet, inks, rows, x, y, width, len(rows) + 1 if room >= 18 else room // 2 + 1)
+        y += room >= 18 and bool(rows)
     _draw_figures(sheet, inks, reading, x, y, width, end - y)
+
+
+def _draw_opening_line(sheet: Sheet, inks: Palette, state: LiveState, x: int, y: int, width: int) -> None:
+    """The opening and its change since the mark in one row, where a page has the rest."""
+    reading = state.snapshot.reading
+    opening = reading.opening_pct if reading is not None else None
+    word, points, _ = change_lines(state)
+    text = "Opening not known" if opening is None else f"Opening {plain(opening, 1)} %"
+    end = sheet.write(x, y, text, inks.strong)
+    short = {"no significant change": "no change"}.get(word, word)
+    ink = {"better": inks.accent, "worse": inks.alert}.get(word, inks.text)
+    sheet.write(
+        end + 1, y, f"{short} {points.removesuffix(' points')}" if word else "", ink, x + width - end - 1, align="right"
+    )
 
 
 def _draw_opening(sheet: Sheet, inks: Palette, state: LiveState, x: int, y: int, width: int, *, large: bool) -> int:
@@ -311,23 +339,6 @@ def _draw_opening(sheet: Sheet, inks: Palette, state: LiveState, x: int, y: int,
     return y
 
 
-def _draw_budget(sheet: Sheet, inks: Palette, reading: Reading, x: int, y: int, width: int) -> int:
-    rows = budget_rows(reading.budget) if reading.budget is not None else []
-    if not rows:
-        return y
-    sheet.write(x, y, "What closes the eye, in points", inks.strong)
-    label_width = max(cells(label) for label, _ in rows) + 1
-    room = width - label_width - 6
-    most = max(max(value for _, value in rows), 1e-9)
-    for label, value in rows:
-        y += 1
-        sheet.write(x, y, label, inks.dim)
-        bar = round(room * max(value, 0.0) / most)
-        sheet.write(x + label_width, y, ("▬" if sheet.unicode else "=") * bar, Ink(inks.curve.fore, inks.text.back))
-        sheet.write(x + width - 6, y, plain(value, 1), inks.text, 6, align="right")
-    return y + 1
-
-
 def _draw_figures(sheet: Sheet, inks: Palette, reading: Reading, x: int, y: int, width: int, room: int) -> None:
     """All figures in their groups where they have room, else the main ones."""
     groups = figure_groups(reading)
@@ -337,7 +348,7 @@ def _draw_figures(sheet: Sheet, inks: Palette, reading: Reading, x: int, y: int,
             sheet.write(x, y, group.title, inks.strong)
             for figure in group.figures:
                 y += 1
-                _draw_figure(sheet, inks, figure, x, y, width)
+                draw_figures(sheet, inks, [figure], x, y, width, 1)
             y += 2
         return
     figures = key_figures(reading)
@@ -345,13 +356,7 @@ def _draw_figures(sheet: Sheet, inks: Palette, reading: Reading, x: int, y: int,
     each = (width - 3) // 2 if wide else width
     for number, figure in enumerate(figures[: 2 * room if wide else max(room, 0)]):
         column, row = divmod(number, room) if wide else (0, number)
-        _draw_figure(sheet, inks, figure, x + column * (each + 3), y + row, each)
-
-
-def _draw_figure(sheet: Sheet, inks: Palette, figure: Figure, x: int, y: int, width: int) -> None:
-    value = sheet.spell(figure.value)
-    sheet.write(x, y, figure.label, inks.dim, width - cells(value) - 1)
-    sheet.write(x, y, value, inks.text, width, align="right")
+        draw_figures(sheet, inks, [figure], x + column * (each + 3), y + row, each, 1)
 
 
 def _draw_history(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y: int, plot_rows: int) -> None:

@@ -62,23 +62,13 @@ def draw_eye(
             # dashes, so that the traces under it are seen
             dashes = np.arange(pixel_rows) % (4 if halves else 2) < (2 if halves else 1)
             codes[dashes & (shade[:, best] <= steps // 4), best] = inks.curve.fore
-        if halves:
-            chars = np.full((height, plot), _UPPER, dtype=np.uint32)
-            fore, back = codes[0::2], codes[1::2]
-            same = fore == back
-            chars[same] = _SPACE
-            # of a blank cell only the ground counts
-            fore = np.where(same, inks.panel.fore, fore)
-        else:
-            chars = np.full((height, plot), _SPACE, dtype=np.uint32)
-            fore, back = np.full(codes.shape, inks.panel.fore), codes
+        _paste_codes(sheet, inks, codes, x + gutter, y, halves=halves)
     else:
         chars = np.array([ord(sign) for sign in signs], dtype=np.uint32)[shade]
         if best is not None:
             line = (shade[:, best] == 0) & (np.arange(height) % 2 == 0)
             chars[line, best] = ord("┆" if sheet.unicode else "|")
-        fore = back = np.full(chars.shape, -1)
-    sheet.paste(x + gutter, y, chars, fore, back)
+        sheet.paste(x + gutter, y, chars, *[np.full(chars.shape, -1)] * 2)
     last = -1
     for level in image.levels[::-1].tolist():
         row = int((high - level) / (high - low) * height)
@@ -86,6 +76,36 @@ def draw_eye(
             digits = 0 if abs(level - round(level)) < 0.005 else 1
             sheet.write(x, y + row, signed(level, digits), inks.dim, gutter)
             last = row
+
+
+def _paste_codes(sheet: Sheet, inks: Palette, codes: NDArray[np.int32], x: int, y: int, *, halves: bool) -> None:
+    """Colour codes as cells, ``halves``: two rows of codes to a row of cells."""
+    if halves:
+        fore, back = codes[0::2], codes[1::2]
+        chars = np.full(fore.shape, _UPPER, dtype=np.uint32)
+        same = fore == back
+        chars[same] = _SPACE
+        # of a blank cell only the ground counts
+        fore = np.where(same, inks.panel.fore, fore)
+    else:
+        chars = np.full(codes.shape, _SPACE, dtype=np.uint32)
+        fore, back = np.full(codes.shape, inks.panel.fore), codes
+    sheet.paste(x, y, chars, fore, back)
+
+
+def draw_counts(
+    sheet: Sheet, inks: Palette, counts: NDArray[np.uint32], x: int, y: int, width: int, height: int
+) -> None:
+    """Counts ``(rows upwards, columns)`` as densities on ``width`` x ``height`` cells."""
+    halves = sheet.unicode and inks.shades.size > 0
+    signs = _SHADE_SIGNS if sheet.unicode else _ASCII_SIGNS
+    rows = 2 * height if halves else height
+    shade = pixels.count_indices(counts, width, rows, inks.shades.size or len(signs))
+    if inks.shades.size:
+        _paste_codes(sheet, inks, inks.shades[shade], x, y, halves=halves)
+    else:
+        chars = np.array([ord(sign) for sign in signs], dtype=np.uint32)[shade]
+        sheet.paste(x, y, chars, *[np.full(chars.shape, -1)] * 2)
 
 
 def _column(ui: float, plot: int) -> int:

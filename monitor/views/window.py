@@ -40,6 +40,7 @@ from monitor.views.control import (
     step_persistence,
     step_text,
 )
+from monitor.views.diagnosis_wording import PageName, next_page
 from monitor.views.history import AlarmMemory
 from monitor.views.layout import Box
 from monitor.views.live_drawing import View, draw_help
@@ -59,7 +60,7 @@ INTERRUPTED = 130
 SAID_SECONDS = 6.0
 LEAST_SIZE = QSize(900, 560)
 FIRST_SIZE = QSize(1280, 828)
-_QT_KEYS = {"Enter": ("Return", "Enter"), "Escape": ("Esc",)}
+_QT_KEYS = {"Enter": ("Return", "Enter"), "Escape": ("Esc",), "PageUp": ("PgUp",), "PageDown": ("PgDown",)}
 _CHECKED: tuple[ActionName, ...] = ("hold", "tone", "help")
 
 
@@ -184,6 +185,7 @@ class LiveWindow(QMainWindow):
         self._shown = self._newest
         self._held = False
         self._rail: int | None = None
+        self._page: PageName = "glance"
         self._said = ""
         self._said_until = 0.0
         self._stopped = False
@@ -248,6 +250,7 @@ class LiveWindow(QMainWindow):
             spans=self._memory.spans(),
             held=self._held,
             rail=self._rail,
+            page=self._page,
             persistence=self._choices.persistence,
             tone=self._tone.on,
             theme=self.theme,
@@ -280,6 +283,8 @@ class LiveWindow(QMainWindow):
             "hold": self._hold,
             "clear": self._clear,
             "rail": self._next_rail,
+            "page": self._next_page,
+            "back": lambda: self._next_page(back=True),
             "longer": lambda: self._persist(step_persistence(self._choices.persistence, longer=True)),
             "shorter": lambda: self._persist(step_persistence(self._choices.persistence, longer=False)),
             "newest": lambda: self._persist(0.0),
@@ -367,6 +372,9 @@ class LiveWindow(QMainWindow):
         self._rail = next_rail(self._rail, rails)
         if len(rails) < 2:
             self.say("this link has one rail")
+
+    def _next_page(self, *, back: bool = False) -> None:
+        self._page = next_page(self._page, back=back)
 
     def _persist(self, seconds: float | None) -> None:
         self._choices.persistence = seconds

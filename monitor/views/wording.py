@@ -40,6 +40,11 @@ def signed(value: float, digits: int) -> str:
     return f"+{text}" if value > 0 and text.strip("0.,") else text
 
 
+def ten_to(exponent: int) -> str:
+    """A power of ten."""
+    return f"10{str(exponent).translate(_SUPERSCRIPT)}"
+
+
 def power_of_ten(value: float) -> str:
     """A rate such as ``3.1 × 10⁻⁷``; 0.01 and above in full, below 10⁻¹⁸ as that bound."""
     if value < _LEAST_BER:
@@ -50,7 +55,7 @@ def power_of_ten(value: float) -> str:
     mantissa = f"{value / 10.0**exponent:.1f}"
     if mantissa == "10.0":
         mantissa, exponent = "1.0", exponent + 1
-    return f"{mantissa} × 10{str(exponent).translate(_SUPERSCRIPT)}"
+    return f"{mantissa} × {ten_to(exponent)}"
 
 
 def _usable(value: float | None) -> bool:
@@ -153,8 +158,16 @@ _CAUSES = (
 )
 
 
+UNEXPLAINED = _CAUSES[-1][1]
+
+
 def budget_rows(budget: Budget) -> list[tuple[str, float]]:
-    """Cause and points of opening, largest first; unknown causes left out."""
+    """Cause and points of opening, largest first and what no cause explains last; unknown causes left out."""
     rows = [(label, getattr(budget, key)) for key, label in _CAUSES]
     known = [(label, float(value)) for label, value in rows if _usable(value)]
-    return sorted(known, key=lambda row: -row[1])
+    return sorted(known, key=lambda row: (row[0] == UNEXPLAINED, -row[1]))
+
+
+def unknown_causes(budget: Budget) -> list[str]:
+    """The causes whose points could not be told."""
+    return [label for key, label in _CAUSES if not _usable(getattr(budget, key))]

@@ -190,6 +190,7 @@ def test_what_the_user_asks_for_reaches_the_watched_side_once(open_bench, name, 
 VIEWED = {
     "hold": lambda view: view.held,
     "rail": lambda view: view.rail,
+    "page": lambda view: view.page,
     "longer": lambda view: view.persistence,
     "shorter": lambda view: view.persistence,
     "newest": lambda view: view.persistence,
@@ -200,6 +201,7 @@ VIEWED = {
 }
 THERE_AND_BACK = [
     ("hold", "hold"),
+    ("page", "back"),
     ("longer", "shorter"),
     ("shorter", "longer"),
     ("nearer", "further"),
