@@ -14,10 +14,13 @@ from monitor.views import pixels
 from monitor.views.canvas import Canvas
 from monitor.views.diagnosis_wording import (
     LEAST_BER,
+    NO_NEIGHBOUR,
     PageName,
     cause_figures,
+    chosen_trials,
     decades,
     error_figures,
+    linear_trials,
     remedies,
     span_below,
     strongest,
@@ -258,7 +261,7 @@ def draw_response(canvas: Canvas, box: Box, response: Response | None, rails: Se
     if figures:
         _draw_figures(canvas, below, figures)
     else:
-        draw_unknown(canvas, below, "No neighbour stands out.")
+        draw_unknown(canvas, below, NO_NEIGHBOUR)
 
 
 def _draw_taps(canvas: Canvas, box: Box, response: Response) -> None:
@@ -293,7 +296,7 @@ def _draw_taps(canvas: Canvas, box: Box, response: Response) -> None:
                 itself = lag == 0 and source == rail
                 shade = theme.accent if itself else colour
                 canvas.line(x, plot.y(0.0), x, max(y, inside.y - 2.0), shade, stem)
-                if inside.y <= y <= inside.bottom and abs(tap) > 1e-4:
+                if inside.y <= y <= inside.bottom and abs(tap) > 0.02 * reach:
                     canvas.dot(x, y, min(3.2, stem + 1.4), shade, theme.panel)
     canvas.clip(None)
     if not whole:
@@ -362,7 +365,7 @@ def draw_error_curve(
     """One curve on a logarithmic axis from 10 to the power ``axis[0]`` up to ``axis[1]``, with the stretch that keeps the target."""
     theme = canvas.theme
     canvas.write(title, Box(box.x, box.y, box.width, canvas.px(18)), _SMALL, theme.ink, bold=True)
-    inside = _framed(canvas, Box(box.x, box.y + canvas.px(16), box.width, box.height - canvas.px(16)), 40, 38)
+    inside = _framed(canvas, Box(box.x, box.y + canvas.px(19), box.width, box.height - canvas.px(19)), 40, 38)
     if inside.width < 8 or inside.height < 8 or curve.at.size < 2:
         return
     low, high = axis
@@ -502,9 +505,42 @@ def draw_remedies(canvas: Canvas, box: Box, reading: Reading, diagnosis: Diagnos
             )
             y += canvas.px(18)
     y += canvas.px(8)
-    rest = Box(box.x, y, box.width, box.bottom - y)
-    if diagnosis.equalisers and rest.height >= canvas.px(110):
-        draw_equaliser_taps(canvas, replace(rest, height=min(rest.height, canvas.px(220))), diagnosis.equalisers[0])
+    rest = Box(box.x, y, box.width, min(box.bottom - y, canvas.px(240)))
+    linear, chosen = linear_trials(diagnosis), chosen_trials(reading, diagnosis)[:1]
+    if not chosen or rest.height < canvas.px(110):
+        return
+    gap = canvas.px(14)
+    half = replace(rest, width=(rest.width - gap) // 2)
+    if len(linear) > 1:
+        draw_tap_counts(canvas, half, linear, chosen[0])
+        draw_equaliser_taps(canvas, replace(half, x=half.right + gap), chosen[0])
+    else:
+        draw_equaliser_taps(canvas, rest, chosen[0])
+
+
+def draw_tap_counts(canvas: Canvas, box: Box, trials: Sequence[EqualiserTrial], chosen: EqualiserTrial) -> None:
+    """The opening behind each linear equaliser against its taps, the opening without one dashed; the chosen one stands out."""
+    theme = canvas.theme
+    canvas.write("Opening over taps", Box(box.x, box.y, box.width, canvas.px(18)), _SMALL, theme.ink, bold=True)
+    inside = _framed(canvas, Box(box.x, box.y + canvas.px(19), box.width, box.height - canvas.px(19)), 44, 38)
+    if inside.width < 8 or inside.height < 8:
+        return
+    values = [trial.opening_pct for trial in trials] + [chosen.before_pct]
+    low, high = 10.0 * math.floor(min(values) / 10.0), 10.0 * math.ceil(max(values) / 10.0 + 0.01)
+    plot = _Plot(inside, -0.5, len(trials) - 0.5, low, high)
+    step = pixels.tick_step(high - low, max(2, inside.height // max(canvas.px(28), 1)))
+    for k in range(math.ceil(low / step), math.floor(high / step) + 1):
+        _left_tick(canvas, plot, k * step, f"{plain(k * step, 0)} %", strong=k == 0)
+    y = plot.y(chosen.before_pct)
+    canvas.line(inside.x, y, inside.right, y, theme.ink, 1.0, dashed=True)
+    points = [(plot.x(float(n)), plot.y(trial.opening_pct)) for n, trial in enumerate(trials)]
+    canvas.polyline(points, theme.level_even, 1.6)
+    for number, (trial, (x, at)) in enumerate(zip(trials, points, strict=True)):
+        ours = trial is chosen
+        canvas.dot(x, at, 4.0 if ours else 2.6, theme.accent if ours else theme.level_even, theme.panel)
+        _foot_tick(canvas, plot, float(number), str(trial.taps.size))
+    _foot_name(canvas, plot, "taps")
+    canvas.frame(inside, theme.edge)
 
 
 def _draw_gain(canvas: Canvas, bar: Box, before: float | None, after: float) -> None:
@@ -524,10 +560,10 @@ def _draw_gain(canvas: Canvas, bar: Box, before: float | None, after: float) -> 
 def draw_equaliser_taps(canvas: Canvas, box: Box, trial: EqualiserTrial) -> None:
     """The taps' sizes against their place; the one that meets the symbol itself stands out."""
     theme = canvas.theme
-    title = "Taps of the linear equaliser" if trial.kind == "linear" else "Taps, then what is fed back"
+    title = f"The {trial.taps.size} taps" if trial.kind == "linear" else "Taps, then what is fed back"
     canvas.write(title, Box(box.x, box.y, box.width, canvas.px(18)), _SMALL, theme.ink, bold=True)
     canvas.write("size", Box(box.x, box.y, box.width, canvas.px(18)), _SMALL, theme.dim, align="right")
-    inside = _framed(canvas, Box(box.x, box.y + canvas.px(16), box.width, box.height - canvas.px(16)), 44, 38)
+    inside = _framed(canvas, Box(box.x, box.y + canvas.px(19), box.width, box.height - canvas.px(19)), 44, 38)
     if inside.width < 8 or inside.height < 8:
         return
     size = np.abs(np.concatenate([trial.taps, trial.feedback]))
@@ -542,7 +578,7 @@ def draw_equaliser_taps(canvas: Canvas, box: Box, trial: EqualiserTrial) -> None
     step = pixels.tick_step(plot.right - plot.left, max(2, inside.width // max(canvas.px(40), 1)))
     for k in range(math.ceil(plot.left / step), math.floor(plot.right / step) + 1):
         _foot_tick(canvas, plot, k * step, signed(k * step, 0 if step >= 1 else 1))
-    _foot_name(canvas, plot, "symbol periods (UI) from the symbol itself")
+    _foot_name(canvas, plot, "UI from the symbol itself")
     for number, (at, value) in enumerate(zip(place.tolist(), size.tolist(), strict=True)):
         fed_back = number >= trial.taps.size
         colour: Colour = theme.accent if number == trial.cursor else theme.level_odd if fed_back else theme.level_even

@@ -25,6 +25,8 @@ PAGE_TITLES: dict[PageName, str] = {
 }
 # rates below this are drawn at it and told as below it
 LEAST_BER = 1e-18
+_LEAST_NEIGHBOUR = 0.01
+NO_NEIGHBOUR = "No neighbour is stronger than −40 dB."
 
 
 def next_page(page: PageName, *, back: bool = False) -> PageName:
@@ -43,18 +45,33 @@ class Remedy:
 
 def equaliser_words(trial: EqualiserTrial) -> str:
     """What the equaliser is: its kind and taps."""
-    taps = f"{trial.taps.size} taps" if trial.taps.size != 1 else "1 tap"
-    spacing = "" if math.isclose(trial.spacing_ui, 1.0) else f" {plain(trial.spacing_ui, 2)} UI apart"
+    spacing = "" if math.isclose(trial.spacing_ui, 1.0) else f" {trial.spacing_ui:.3g} UI apart"
     if trial.kind == "linear":
-        return f"Linear equaliser, {taps}{spacing}"
-    return f"Decision feedback, {taps}{spacing}, {trial.feedback.size} fed back"
+        return f"Linear equaliser, {trial.taps.size} taps{spacing}"
+    return f"Decision feedback, {trial.taps.size} + {trial.feedback.size} taps{spacing}"
+
+
+def linear_trials(diagnosis: Diagnosis) -> list[EqualiserTrial]:
+    """The linear equalisers that were tried, fewest taps first."""
+    return sorted(
+        (trial for trial in diagnosis.equalisers if trial.kind == "linear"), key=lambda trial: trial.taps.size
+    )
+
+
+def chosen_trials(reading: Reading, diagnosis: Diagnosis) -> list[EqualiserTrial]:
+    """The linear equaliser that the reading names, or else the one that opens most, then those that feed decisions back."""
+    linear = linear_trials(diagnosis)
+    named = [t for t in linear if reading.equaliser is not None and t.taps.size == reading.equaliser.taps]
+    best = named or sorted(linear, key=lambda trial: (-trial.opening_pct, trial.taps.size))
+    return [*best[:1], *(trial for trial in diagnosis.equalisers if trial.kind != "linear")]
 
 
 def remedies(reading: Reading, diagnosis: Diagnosis) -> list[Remedy]:
     """What would open the eye, as far as it was tried or reckoned: equalisers, signal, roll-off, thresholds, instant."""
-    rows = [Remedy(equaliser_words(trial), trial.before_pct, trial.opening_pct) for trial in diagnosis.equalisers]
+    trials = chosen_trials(reading, diagnosis)
+    rows = [Remedy(equaliser_words(trial), trial.before_pct, trial.opening_pct) for trial in trials]
     if diagnosis.opening_with_3db_more_pct is not None:
-        rows.append(Remedy("3 dB more signal", reading.opening_at_ber_pct, diagnosis.opening_with_3db_more_pct))
+        rows.append(Remedy("3 dB more signal", reading.opening_pct, diagnosis.opening_with_3db_more_pct))
     if diagnosis.fitting_roll_off is not None:
         rows.append(Remedy(f"A matched filter of roll-off {plain(diagnosis.fitting_roll_off, 2)} would fit better"))
     if diagnosis.best_thresholds:
@@ -81,9 +98,9 @@ def lag_words(lag: int) -> str:
 
 
 def strongest(response: Response, most: int) -> list[Figure]:
-    """The strongest neighbours with their strength against the cursor; those of no strength are left out."""
+    """The strongest neighbours with their strength against the cursor; those below -40 dB are left out."""
     strength = np.where(response.lags == 0, 0.0, strengths(response))
-    order = [int(k) for k in np.argsort(-strength)[:most] if strength[k] > 1e-6]
+    order = [int(k) for k in np.argsort(-strength)[:most] if strength[k] >= _LEAST_NEIGHBOUR]
     return [
         Figure(lag_words(int(response.lags[k])), f"{plain(20.0 * math.log10(float(strength[k])), 1)} dB") for k in order
     ]
@@ -140,9 +157,10 @@ def cause_figures(diagnosis: Diagnosis) -> list[Figure]:
 
 
 def decades(curves: Sequence[ErrorCurve], target: float | None) -> tuple[int, int]:
-    """The axis of error rates as powers of ten: from 0 down to two decades below the least of curve and target, -18 at the lowest."""
+    """The axis of error rates as powers of ten, from 0 to below the least of curves and target, not far below the target or 1e-12."""
     least = [float(np.nanmin(curve.ber)) for curve in curves if np.isfinite(curve.ber).any()]
     if target is not None:
         least.append(target)
-    lowest = min(least, default=1e-6)
-    return min(math.floor(math.log10(max(lowest, LEAST_BER))) - 1, -4) if lowest > LEAST_BER * 10 else -18, 0
+    bottom = LEAST_BER if target is None else max(1e-6 * target, LEAST_BER)
+    lowest = max(min(least, default=1e-6), 10.0 * bottom)
+    return min(round(math.log10(lowest) - 1.0 - 0.49), -4), 0

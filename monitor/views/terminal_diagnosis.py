@@ -10,6 +10,7 @@ from dsp.reading import Reading
 from monitor.snapshot import Snapshot
 from monitor.views.diagnosis_wording import (
     LEAST_BER,
+    NO_NEIGHBOUR,
     PAGE_TITLES,
     PageName,
     cause_figures,
@@ -37,7 +38,7 @@ def draw_side_page(
         _draw_causes(sheet, inks, reading, diagnosis, x, y, width, height)
     elif page == "response":
         figures = strongest(diagnosis.response, height - 1) if diagnosis.response is not None else []
-        none = "No neighbour stands out." if diagnosis.response is not None else "The response is not known."
+        none = NO_NEIGHBOUR if diagnosis.response is not None else "The response is not known."
         heading = [Figure("Strength against the symbol", "")] if figures else [Figure(none, "")]
         draw_figures(sheet, inks, [*heading, *figures], x, y, width, height)
     elif page == "errors":

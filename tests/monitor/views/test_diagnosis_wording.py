@@ -77,7 +77,8 @@ def test_the_stretch_below_a_rate_lies_between_the_curves_crossings():
 
 def test_a_rate_of_nothing_does_not_break_the_axis():
     at = np.linspace(-0.5, 0.5, 5)
-    assert decades([ErrorCurve(at, np.array([0.1, 1e-3, 0.0, 1e-3, 0.1]))], 1e-6) == (-18, 0)
+    assert decades([ErrorCurve(at, np.array([0.1, 1e-3, 0.0, 1e-3, 0.1]))], 1e-6) == (-12, 0)
+    assert decades([ErrorCurve(at, np.array([0.1, 1e-3, 0.0, 1e-3, 0.1]))], None) == (-18, 0)
     assert decades([], None) == (-7, 0)
     low, high = decades([ErrorCurve(at, np.full(5, 0.3))], None)
     assert low < high == 0
@@ -94,12 +95,12 @@ def test_what_is_not_known_says_so():
 
 def test_every_remedy_that_was_tried_is_told_with_its_numbers():
     diagnosis = make_diagnosis(2)
-    rows = remedies(Reading(1000, opening_at_ber_pct=41.2, best_instant_ui=0.03), diagnosis)
+    rows = remedies(Reading(1000, 70.0, best_instant_ui=0.03), diagnosis)
     linear, feedback, stronger = rows[:3]
-    assert linear.words == "Linear equaliser, 7 taps 0.50 UI apart"
+    assert linear.words == "Linear equaliser, 7 taps 0.5 UI apart"
     assert (linear.before_pct, linear.after_pct) == (41.2, 88.3)
-    assert feedback.words == "Decision feedback, 5 taps, 3 fed back"
-    assert (stronger.before_pct, stronger.after_pct) == (41.2, 47.7)
+    assert feedback.words == "Decision feedback, 5 + 3 taps"
+    assert (stronger.before_pct, stronger.after_pct) == (70.0, 47.7)
     words = " ".join(row.words for row in rows[3:])
     for part in ("0.25", "+0.012", "+0.030 UI"):
         assert part in words
