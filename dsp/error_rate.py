@@ -76,10 +76,10 @@ def spread_given(
     small = max(rest_spread.sigma**2 - least**2, 0.0)
     if not told.size:
         return rest_spread
-    return _joined(patterns @ taps[told], share, np.sqrt(square + small), rest_spread)
+    return joined(patterns @ taps[told], share, np.sqrt(square + small), rest_spread)
 
 
-def _joined(shift: NDArray[np.float64], share: NDArray[np.float64], sigma: NDArray[np.float64], rest: Spread) -> Spread:
+def joined(shift: NDArray[np.float64], share: NDArray[np.float64], sigma: NDArray[np.float64], rest: Spread) -> Spread:
     """The sum of a shift that comes with a sigma, each ``(n,)`` with its ``share``, and the independent ``rest``."""
     step = float(sigma.min()) / 8.0
     reach = float(np.abs(shift).max() + np.abs(rest.at).max())

@@ -16,6 +16,7 @@ from dsp._kernels import raster as kernel
 from dsp.interpolation import expander
 from dsp.jitter import BLOCK, TimingSpectrum
 from dsp.link import Scheme
+from dsp.residual import ResidualMeter, ResidualSums
 from dsp.stretches import EAGER, LONGEST, OFTEN, Stretch, Stretches
 from dsp.tracking import Tables, Track
 
@@ -97,6 +98,8 @@ class EyeSums:
     gram, cross, square
         Normal equations: symbols with symbols ``(k, k)``, with the wave ``(rails, k, phases)``, the wave's energy ``(rails, phases)``;
         the k regressors are the rails' decided levels at all lags, earliest lag first, then a constant 1.
+    residual
+        Sums of what that response leaves over at the decision instant.
     timing_power, timing_blocks
         Summed power spectra of the timing error and how many blocks they are of; see `dsp.jitter.TimingSpectrum`.
     stretches
@@ -125,6 +128,7 @@ class EyeSums:
         self.crossing_groups = np.zeros((rails, levels ** len(around), 3))
         self.crossing_edges = np.zeros((rails, 2, 2))
         self.unit_sums = np.zeros((3, 2))  # gain, zero by rail, weighted by symbols; last row: symbols
+        self.residual = ResidualSums(scheme)
         self.timing_power = np.zeros(BLOCK // 2 + 1)
         self.timing_blocks = 0
         self.stretches = Stretches()
@@ -146,6 +150,7 @@ class EyeSums:
             "timing_power",
         ):  # fmt: skip
             getattr(self, name)[...] += getattr(other, name)
+        self.residual.merge(other.residual)
         self.clock.merge(other.clock)
         self.carrier.merge(other.carrier)
 
@@ -196,6 +201,7 @@ class EyeMeter:
         self._finished = finished
         self.sums = EyeSums(scheme, phases)
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
+        self._residual = ResidualMeter(scheme, phases, LAGS)
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
@@ -259,6 +265,7 @@ class EyeMeter:
         self._settle()
         if not keep:
             self.sums = EyeSums(self._scheme, self._phases)
+        self._residual.restart()
         self._spectrum.restart()
         self._pending = 0
         self._segment += 1
@@ -315,18 +322,23 @@ class EyeMeter:
             for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
                 lagged[rail * LAGS + i] = self._decided[rail, first - lag : last - lag]
         lagged[-1] = 1.0
-        means = (lagged @ lagged[-1]).astype(np.float64)
-        sums.gram[-1] += means
-        sums.gram[:-1, -1] += means[:-1]
+        gram = np.zeros_like(sums.gram)
+        gram[-1] = lagged @ lagged[-1]
+        gram[:-1, -1] = gram[-1, :-1]
         for i in range(rails):
             for j in range(i, rails):
                 block = np.zeros((LAGS, LAGS))
                 kernel.add_gram(self._decided[i], self._decided[j], first, last, EARLIEST, LAGS, i == j, block)
-                sums.gram[i * LAGS : (i + 1) * LAGS, j * LAGS : (j + 1) * LAGS] += block
+                gram[i * LAGS : (i + 1) * LAGS, j * LAGS : (j + 1) * LAGS] = block
                 if i != j:
-                    sums.gram[j * LAGS : (j + 1) * LAGS, i * LAGS : (i + 1) * LAGS] += block.T
+                    gram[j * LAGS : (j + 1) * LAGS, i * LAGS : (i + 1) * LAGS] = block.T
+        sums.gram += gram
         together = np.concatenate([self._waves[rail][:, first:last] for rail in range(rails)])
         cross = (lagged @ together.T).reshape(-1, rails, self._phases)
+        self._residual.push(
+            sums.residual, gram, cross, lagged, together.reshape(rails, self._phases, count)[:, 0],
+            self._classes[:rails], first,
+        )  # fmt: skip
         levels, rows = self._scheme.levels, sums.rows
         height = np.uint64(rows.count)
         runs = self._drawn_runs(count)

@@ -7,6 +7,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
+from dsp.budget import LinkModel, budget, link_model
 from dsp.crossings import crossings, rise_time
 from dsp.diagnosis import Diagnosis, JitterSplit
 from dsp.equaliser import Equalisers
@@ -28,6 +29,7 @@ from dsp.openings import (
 from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
 from dsp.picture import EyeImage
 from dsp.reading import Equaliser, Eye, Reading
+from dsp.residual import Split, split
 from dsp.tracking import level_units
 
 TAIL = 1e-3  # the share of a level's traces that the opening leaves outside
@@ -257,6 +259,27 @@ class Figures:
         """The least opening of all eyes at the best instant."""
         return float(self._openings.min()) if self.enough else None
 
+    # -- what closes it ------------------------------------------------------------------------------------------------
+
+    @cached_property
+    def _split(self) -> Split | None:
+        late, early = (slope.reshape(self._scheme.rails, -1) for slope in self._pattern.flanks(0.0))
+        return split(self._sums.residual, self._scheme, 0.5 * (late + early), smooth=self._pattern.smooth)
+
+    @cached_property
+    def _link(self) -> LinkModel:
+        """The link at the best instant."""
+        best = _ui(self._best)
+        counts = self._counts.sum(axis=0)
+        units = self._sums.unit_sums[0, : self._scheme.rails] / np.maximum(
+            self._sums.unit_sums[2, : self._scheme.rails], 1.0
+        )
+        return link_model(
+            self._scheme, self._pattern, best, shares=counts / counts.sum(),
+            levels=np.asarray([self._levels(rail) for rail in range(self._scheme.rails)]),
+            noise=self._noise(self._pattern.model(best)), units=units, split=self._split,
+        )  # fmt: skip
+
     # -- the reading ---------------------------------------------------------------------------------------------------
 
     def reading(self, *, whole: bool = True) -> Reading:
@@ -278,6 +301,8 @@ class Figures:
         periodic_ui, periodic_hz = self._periodic_jitter()
         clock_ppm, jitter = self._clock()
         carrier, phase_rms = self._carrier()
+        target = self._context.target_ber
+        at_target = self._link.opening(target)
         iq_gain, iq_skew = self._iq(model)
         return Reading(
             symbols=self._sums.symbols,
@@ -304,7 +329,7 @@ class Figures:
             mer_db=mer,
             evm_pct=100.0 * 10 ** (-mer / 20) if mer is not None else None,
             ber=self._bit_errors(best),
-            opening_at_ber_pct=float(self._modelled(best, self._context.target_ber).min()),
+            opening_at_ber_pct=at_target,
             clock_ppm=clock_ppm,
             jitter_rms_ui=jitter,
             carrier_hz=carrier,
@@ -313,6 +338,7 @@ class Figures:
             iq_skew_deg=iq_skew,
             dc_pct=self._dc_pct(),
             equaliser=self._equaliser() if whole else None,
+            budget=budget(self._link, self._split, target, at_target),
         )
 
     def diagnosis(self) -> Diagnosis:

@@ -53,6 +53,7 @@ class Pattern:
     def __init__(self, sums: EyeSums) -> None:
         rails, phases, n = sums.scheme.rails, sums.phases, max(sums.symbols, 1)
         self._phases = phases
+        self.smooth = phases <= 16  # else the wave may have corners
         k = sums.gram.shape[0]
         gram = sums.gram + np.eye(k) * (1e-7 * np.trace(sums.gram) / k + 1e-12)
         right = np.moveaxis(sums.cross, 0, 1).reshape(k, rails * phases)
@@ -92,6 +93,14 @@ class Pattern:
         step = 0.5 / min(self._phases, 16)
         return np.asarray((self.model(ui + step).taps - self.model(ui - step).taps) / (2.0 * step))
 
+    def flanks(self, ui: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """The response's slopes after and before ``ui``, which differ where the wave has corners: per UI, each ``(rails, rails, lags)``."""
+        if self.smooth:
+            slopes = self.slopes(ui)
+            return slopes, slopes
+        before, here, after = (self.model(ui + step / 16).taps for step in (-1, 0, 1))
+        return 16.0 * (after - here), 16.0 * (here - before)
+
     def response(self, ui: float) -> Response:
         """The taps at ``ui`` for people to look at: each rail's in units of its cursor."""
         model = self.model(ui)
@@ -118,7 +127,7 @@ class Pattern:
         at = ui * self._phases
         whole = math.floor(at)
         start = 2 * self._phases + whole + self._phases * np.arange(LAGS)
-        if self._phases > 16:  # corners are kept finely, and straight lines lie between
+        if not self.smooth:  # corners are kept finely, and straight lines lie between
             return np.asarray(line[start] + (at - whole) * (line[start + 1] - line[start]))
         row = weights(_SMOOTH_BAND)[round((at - whole) * PHASES)].astype(np.float64)
         return np.asarray(line[start[:, None] + np.arange(-BEFORE, TAPS - BEFORE)] @ row)
@@ -128,7 +137,7 @@ class Pattern:
         at = ui * self._phases
         left = math.floor(at)
         here, there = left % self._phases, (left + 1) % self._phases
-        if self._phases > 16:
+        if not self.smooth:
             return np.asarray((1 - at + left) * self._total[:, here] + (at - left) * self._total[:, there])
         # of a wave within one symbol rate only the first harmonic is not 0, so that the series is exact
         series = np.fft.rfft(self._total, axis=1) / self._phases

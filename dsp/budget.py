@@ -1,0 +1,262 @@
+"""What closes the eye: how much of the opening each cause takes, by a model of the link with and without it."""
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+from dsp.error_rate import Modulated, joined, spread_given
+from dsp.eye import LAGS
+from dsp.link import Scheme
+from dsp.mixture import Spread, spread
+from dsp.pattern import CURSOR, Pattern
+from dsp.reading import Budget
+from dsp.residual import Split, pattern_around
+
+_TONE_POINTS = 24  # places that stand for a sinusoid's amplitudes
+
+
+@dataclass(frozen=True, slots=True)
+class LinkModel:
+    """A link at one instant, all in level units of each rail.
+
+    Attributes
+    ----------
+    levels
+        Means of the levels, ``(rails, levels)``; ``compressed``: what a limiter makes of the nominal ones.
+    taps, late, early
+        Response and its slopes after and before the instant, of cursor 1, ``(rails, rails * lags)``.
+    additive
+        Variance of noise that no data changes, each symbol's own jitter included, ``(rails,)``.
+    tone
+        Variance of an interfering tone, ``(rails,)``.
+    common, turn
+        Variances of timing jitter shared by neighbours, UI squared, and of phase jitter, radians squared.
+    deviations
+        What patterns of a rail's own symbols add, ``(rails, patterns)``, level units.
+    gains
+        One level unit of each rail against the mean of all, ``(rails,)``.
+    """
+
+    scheme: Scheme
+    shares: NDArray[np.float64]
+    levels: NDArray[np.float64]
+    compressed: NDArray[np.float64]
+    taps: NDArray[np.float64]
+    late: NDArray[np.float64]
+    early: NDArray[np.float64]
+    additive: NDArray[np.float64]
+    tone: NDArray[np.float64]
+    common: float
+    turn: float
+    deviations: NDArray[np.float64]
+    gains: NDArray[np.float64]
+
+    def own(self, rail: int) -> int:
+        """Place of a rail's own symbol among the taps."""
+        return rail * LAGS + CURSOR
+
+    def opening(self, tail: float) -> float:
+        """Least opening of all eyes in per cent when a share ``tail`` of each level's traces may lie outside."""
+        nominal = np.asarray(self.scheme.rail_levels)
+        spacing = np.diff(nominal)
+        least = math.inf
+        for rail in range(self.scheme.rails):
+            reach = self._reach(rail)
+            low = [one.quantile(tail) for one in reach]
+            high = [-one.mirrored().quantile(tail) for one in reach]
+            if len(reach) == 1:
+                low, high = low * nominal.size, high * nominal.size
+            height = self.levels[rail, 1:] + low[1:] - self.levels[rail, :-1] - high[:-1]
+            least = min(least, float((height / spacing).min()))
+        return 100.0 * least
+
+    def _reach(self, rail: int) -> list[Spread]:
+        """How each level's samples are spread about its mean; one for all where that is the same."""
+        nominal = np.asarray(self.scheme.rail_levels)
+        taps, own = self.taps[rail], self.own(rail)
+        jitter = (
+            Modulated(0.5 * self.common, self.late[rail]),
+            Modulated(0.5 * self.common, self.early[rail]),
+            Modulated(self.turn, self._other(rail)),
+        )
+        if not self.deviations[rail].any():
+            level = float(np.sqrt(self.shares @ nominal**2))
+            used = tuple(part for part in jitter if part.variance > 0 and part.taps.any())
+            whole = spread_given(level, own, taps, max(float(self.additive[rail]), 1e-8), used, nominal, self.shares)
+            return [_with_tone(whole, float(self.tone[rail]))]
+        energy = float(self.shares @ nominal**2)
+        variance = (
+            float(self.additive[rail]) + sum(part.variance * float(part.taps @ part.taps) for part in jitter) * energy
+        )
+        around = pattern_around(nominal.size)
+        symbols = np.indices((nominal.size,) * len(around)).reshape(len(around), -1)
+        places = [own - offset for offset in around]
+        others = taps.copy()
+        others[places] = 0.0
+        rest = _with_tone(spread(others, nominal, self.shares, math.sqrt(max(variance, 1e-8))), float(self.tone[rail]))
+        middle = around.index(0)
+        each = [taps[place] if place != own else 0.0 for place in places]
+        shift = np.asarray(each) @ nominal[symbols] + self.deviations[rail]
+        share = np.prod(self.shares[symbols], axis=0)
+        result = []
+        for level in range(nominal.size):
+            inside = symbols[middle] == level
+            about = float(share[inside] @ self.deviations[rail, inside]) / float(share[inside].sum())
+            sigma = np.full(int(inside.sum()), float(np.max(rest.sigma)))
+            result.append(joined(shift[inside] - about, share[inside] / share[inside].sum(), sigma, rest))
+        return result
+
+    def _other(self, rail: int) -> NDArray[np.float64]:
+        """What the other rail shows at this rail's instant, as weights of all symbols."""
+        if self.scheme.rails == 1:
+            return np.zeros(self.taps.shape[1])
+        return np.asarray(self.taps[1 - rail] * float(self.gains[1 - rail] / self.gains[rail]))
+
+    # -- without one cause ---------------------------------------------------------------------------------------------
+
+    def without_isi(self) -> "LinkModel":
+        """Every symbol by itself."""
+        taps = np.zeros_like(self.taps)
+        for rail in range(self.scheme.rails):
+            for other in range(self.scheme.rails):
+                taps[rail, other * LAGS + CURSOR] = self.taps[rail, other * LAGS + CURSOR]
+        return replace(self, taps=taps)
+
+    def without_random(self) -> "LinkModel":
+        """No noise, no jitter, no tone."""
+        nothing = np.zeros_like(self.additive)
+        return replace(self, additive=nothing, tone=nothing, common=0.0, turn=0.0)
+
+    def without_imbalance(self) -> "LinkModel":
+        """Rails of the same gain, a quarter turn apart."""
+        taps = self.taps.copy()
+        for rail in range(self.scheme.rails):
+            for other in range(self.scheme.rails):
+                if other != rail:
+                    taps[rail, other * LAGS + CURSOR] = 0.0
+        return replace(self, taps=taps, additive=self.additive * self.gains**2, tone=self.tone * self.gains**2)
+
+    def without_clipping(self) -> "LinkModel":
+        """Levels as the limiter met them, and none of what it made of patterns."""
+        nominal = np.asarray(self.scheme.rail_levels)
+        return replace(
+            self, levels=self.levels - self.compressed + nominal, deviations=np.zeros_like(self.deviations),
+            compressed=np.broadcast_to(nominal, self.compressed.shape),
+        )  # fmt: skip
+
+    def with_even_levels(self) -> "LinkModel":
+        """Levels uneven by no more than a limiter makes them."""
+        return replace(self, levels=self.compressed)
+
+
+def link_model(
+    scheme: Scheme,
+    pattern: Pattern,
+    ui: float,
+    *,
+    shares: NDArray[np.float64],
+    levels: NDArray[np.float64],
+    noise: NDArray[np.float64],
+    units: NDArray[np.float64],
+    split: Split | None,
+) -> LinkModel:
+    """The link at ``ui`` from its pattern response.
+
+    ``shares`` ``(levels,)``: how often each level is sent; ``levels`` ``(rails, levels)`` and ``noise`` ``(rails,)``, all that no linear
+    response explains, in level units; ``units`` ``(rails,)``: one level unit of each rail in the signal's own unit.
+    """
+    rails = scheme.rails
+    model = pattern.model(ui)
+    cursors = np.asarray([max(abs(model.cursor(rail)), 1e-9) for rail in range(rails)])
+    taps, late, early = (part.reshape(rails, -1) / cursors[:, None] for part in (model.taps, *pattern.flanks(ui)))
+    gains = units * cursors
+    deviations, tone, common, turn = np.zeros((rails, 1)), np.zeros(rails), 0.0, 0.0
+    additive = noise
+    if split is not None:
+        own = _centre(scheme)
+        deviations = split.deviations.copy()
+        for rail in range(rails):
+            for level in range(scheme.levels):
+                deviations[rail, own == level] -= deviations[rail, own == level].mean()
+        bent = deviations.any()
+        random = np.maximum(split.random, 1e-18)
+        noise = noise * random / (random + np.mean(deviations**2, axis=1))
+        deviations /= cursors[:, None]
+        common, turn = split.common, split.turn
+        if split.tone is not None:
+            tone = noise * np.minimum(split.tone.variance / rails / random, 0.98)
+        shared = split.timing * common / max(common + split.single, 1e-18)
+        additive = np.maximum(noise * (1.0 - (shared + split.phase) / random) - tone, 0.01 * noise)
+        if not bent:
+            deviations = np.zeros((rails, 1))
+    return LinkModel(
+        scheme, shares, levels, compressed_levels(levels, scheme), taps, late, early, additive, tone, common, turn, deviations,
+        gains / np.exp(np.mean(np.log(gains))),
+    )  # fmt: skip
+
+
+def _centre(scheme: Scheme) -> NDArray[np.int64]:
+    """Level of the symbol itself in each pattern."""
+    around = pattern_around(scheme.levels)
+    places = np.arange(scheme.levels ** len(around), dtype=np.int64)
+    return np.asarray(places // scheme.levels ** (len(around) - 1 - around.index(0)) % scheme.levels)
+
+
+def compressed_levels(levels: NDArray[np.float64], scheme: Scheme) -> NDArray[np.float64]:
+    """What a limiter, which pulls outer levels in alike on both sides, makes of the nominal levels; the nominal ones if there is none."""
+    nominal = np.asarray(scheme.rail_levels)
+    result = np.broadcast_to(nominal, levels.shape).copy()
+    if scheme.levels < 3 or scheme.name == "8psk":
+        return result
+    for rail, row in enumerate(levels):
+        odd = 0.5 * (row - row[::-1])
+        spacing = np.diff(odd)
+        if spacing[0] < spacing[spacing.size // 2]:
+            result[rail] = odd
+    return result
+
+
+def _with_tone(reach: Spread, variance: float) -> Spread:
+    """The same with a sinusoid of that variance added."""
+    if variance <= 0:
+        return reach
+    at = math.sqrt(2.0 * variance) * np.cos(math.pi * (np.arange(_TONE_POINTS) + 0.5) / _TONE_POINTS)
+    sigma = float(np.sqrt(np.mean(np.square(reach.sigma))))
+    return joined(np.sort(at), np.full(_TONE_POINTS, 1.0 / _TONE_POINTS), np.full(_TONE_POINTS, sigma), reach)
+
+
+def budget(model: LinkModel, split: Split | None, tail: float, opening_pct: float) -> Budget:
+    """Points of opening that each cause takes at ``tail``: the drop between the model with and without it.
+
+    Random causes share theirs in proportion to their variances; an interfering tone counts as noise. With ``opening_pct`` and what is
+    unexplained the parts add up to 100.
+    """
+    whole = model.opening(tail)
+    scheme = model.scheme
+    random = model.without_random().opening(tail) - whole
+    shares = random_shares(split)
+    timing, phase = random * shares[0], random * shares[1]
+    isi = model.without_isi().opening(tail) - whole
+    levels = model.with_even_levels().opening(tail) - whole if scheme.levels > 2 else 0.0
+    iq = model.without_imbalance().opening(tail) - whole if scheme.rails == 2 else None
+    bent = bool(model.deviations.any()) or not np.allclose(model.compressed, scheme.rail_levels)
+    clipping = model.without_clipping().opening(tail) - whole if bent else 0.0
+    parts = Budget(
+        isi_pct=isi, noise_pct=random - timing - phase, timing_pct=timing, phase_pct=phase if scheme.kind == "carrier" else None,
+        levels_pct=levels, iq_pct=iq, clipping_pct=clipping,
+    )  # fmt: skip
+    known = (isi, random, levels, iq or 0.0, clipping)
+    return replace(parts, unexplained_pct=100.0 - opening_pct - sum(known))
+
+
+def random_shares(split: Split | None) -> tuple[float, float]:
+    """Of all that is random, the share of timing jitter and that of phase jitter, on the rail that has more of it."""
+    if split is None:
+        return 0.0, 0.0
+    rail = int(np.argmax(split.random))
+    total = max(float(split.random[rail]), 1e-18)
+    timing, phase = float(split.timing[rail]) / total, float(split.phase[rail]) / total
+    scale = 1.0 / max(timing + phase, 1.0)
+    return timing * scale, phase * scale
