@@ -388,6 +388,8 @@ class Chain:
     def _end_run(self, sample: int, reason: str) -> None:
         self.locked_samples += max(sample - self._locked_from, 0)
         self._tracker = None
+        if reason != "end of stream":
+            self.last_reason = reason
         meter = self._meter
         assert meter is not None
         self._lane.do(lambda: meter.end_segment(keep=self.options.keep_total))

@@ -18,6 +18,7 @@ from monitor.errors import InputError, MonitorError
 from monitor.key_command import add_key_arguments
 from monitor.replay import INTERRUPTED, discard_standard_output, replay
 from monitor.running import add_capture_options
+from monitor.showing import add_view_options
 from monitor.terminal import say
 from monitor.version import version
 from monitor.watching import add_watch_arguments
@@ -94,6 +95,10 @@ def parser() -> argparse.ArgumentParser:
     command.add_argument(
         "--every", type=positive, default=1.0, metavar="S", help="a journal line each so often (default 1)"
     )
+    command.add_argument(
+        "--pace", type=positive, metavar="N", help="with a view, at N times its own speed (default: as fast as can be)"
+    )
+    add_view_options(command)
     command.set_defaults(run=replay)
     live = commands.add_parser(
         "watch",

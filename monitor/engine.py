@@ -58,7 +58,8 @@ class Tap(Protocol):
 class EngineOptions:
     """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``.
 
-    ``aside`` is where identification runs while a live stream goes on; None: at once, so that a replay repeats itself.
+    ``aside`` is where identification runs while a live stream goes on; None: at once, so that a replay repeats itself. ``first`` is a
+    link that was identified before the stream began.
     """
 
     window: int | None = None
@@ -68,6 +69,7 @@ class EngineOptions:
     chain: ChainOptions = field(default_factory=ChainOptions)
     display: bool = True
     aside: Executor | None = None
+    first: Identified | None = None
 
     @property
     def judges(self) -> bool:
@@ -99,6 +101,8 @@ class Engine:
     ----------
     samples, samples_lost
         Totals of the stream.
+    source_text
+        Where the samples come from, for views.
     """
 
     def __init__(
@@ -119,7 +123,7 @@ class Engine:
         self.sample_rate_hz = sample_rate_hz
         self._options = options
         self._line = line
-        self._source_text = source_text
+        self.source_text = source_text
         self.alarms = alarms or AlarmBoard(options.rules, built_in_alarms(options.stall_s))
         self._tap = tap
         self._chain: Chain | None = None
@@ -137,6 +141,7 @@ class Engine:
         self._unusable = ""
         self._began_anew = False
         self._ending: str | None = None
+        self._to_the_end = False  # locked until the stream ended
         self._gaps: deque[float] = deque(maxlen=256)
         self._locks: deque[tuple[float, bool]] = deque(maxlen=256)
         self._marks: deque[Mark] = deque(maxlen=64)
@@ -338,7 +343,9 @@ class Engine:
     def _look(self, block: Block) -> None:
         self._head.append(block)
         self._head_samples += block.samples.size
-        if self._looking is not None:
+        if self._options.first is not None and self._identified is None:
+            self._settle(self._options.first, last=False)
+        elif self._looking is not None:
             self._keep_head(0.25)
             if self._looking.done():
                 found, self._looking = self._looking.result(), None
@@ -413,6 +420,9 @@ class Engine:
             self._tell_alarms(self.alarms.condition("lock lost", not gained, at, event.sample, None))
         if not gained:
             self._tell_alarms(self.alarms.update(None, at, event.sample))
+        if not gained and self._ending == "end of stream":
+            self._to_the_end = True  # the last figures stay
+        elif not gained:
             self._reading, self._opening, self._diagnosis = None, None, None
             self._blocks.clear()
             self._openings.clear()
@@ -548,7 +558,7 @@ class Engine:
     def state(self, *, notices: Iterable[str] = (), journal_text: str = "", ended: bool = False) -> LiveState:
         """Everything a view shows, as it is now."""
         chain = self._chain
-        locked = chain is not None and chain.locked
+        locked = self._to_the_end or (chain is not None and chain.locked)
         if chain is not None and not locked:
             self._searching = f"{chain.link.scheme.name}: {chain.last_reason}"
         link_text = ""
@@ -560,7 +570,7 @@ class Engine:
             image=self._image() if locked else None,
             reading=self._reading if locked else None,
             diagnosis=self._diagnosis if locked else None,
-            source_text=self._source_text,
+            source_text=self.source_text,
             link_text=link_text,
             lock_text="locked" if locked else f"no lock: {self._searching}",
             notes=(),

@@ -27,7 +27,11 @@ class Judged:
             sample_rate_hz=source.info.sample_rate_hz,
             complex_in=source.info.complex_samples,
             options=EngineOptions(
-                window=None, every_s=parsed.every, rules=rules, display=False, chain=chain_options(parsed, link)
+                window=parsed.window,
+                every_s=parsed.every,
+                rules=rules,
+                display=False,
+                chain=chain_options(parsed, link),
             ),
             line=self._journal.write,
             source_text=parsed.source,

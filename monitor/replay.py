@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.errors import InputError, NothingToMeasure
+from monitor.playing import check_pace, play
 from monitor.running import chain_options, link_and_limits
 from monitor.terminal import ProgressBar, SlowStartNotice
 
@@ -28,6 +29,7 @@ def replay(parsed: argparse.Namespace) -> int:
     """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
     # one thread a matrix product: the chain's own two threads are what the cores are for
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    check_pace(parsed)
     if parsed.picture is not None:
         _check_picture(parsed.picture)
     with SlowStartNotice():
@@ -39,14 +41,23 @@ def replay(parsed: argparse.Namespace) -> int:
     link, rules = link_and_limits(parsed)
     wanted, options = link.wanted(), replace(chain_options(parsed, link), window=parsed.window)
     samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration)
+    played = play(parsed, samples, link, rules) if parsed.pace is not None else None
+    if played is not None and played.seconds is not None:
+        if not played.seconds:
+            raise NothingToMeasure(f"{parsed.source}: nothing to measure: ended before any of it was played")
+        samples = replace(samples, duration_s=played.seconds)
     with Interrupt() as interrupt, open_source(parsed.source, samples) as opened:
-        with ProgressBar(opened.info.samples) as bar, _judging(parsed, opened, link, rules) as judge:
+        judging = _judging(parsed, opened, link, rules) if played is None else nullcontext()
+        with ProgressBar(opened.info.samples) as bar, judging as judge:
             source = Interruptible(opened, interrupt)
             observe = judge.feed if judge is not None else None
             outcome = run(source, wanted, options, threads=parsed.threads, progress=bar.advance, observe=observe)
             if judge is not None:
                 outcome.alarms = judge.finish(interrupted=interrupt.asked)
         outcome.interrupted = interrupt.asked
+    if played is not None:
+        outcome.alarms = played.alarms
+        outcome.interrupted |= played.status != 0
     _tell(outcome, as_json=parsed.json)
     if parsed.picture is not None:
         from monitor.snapshots import snapshot_of
@@ -55,7 +66,7 @@ def replay(parsed: argparse.Namespace) -> int:
         width, height = parsed.picture_size
         save_picture(snapshot_of(outcome), parsed.picture, width, height, parsed.theme)
     if outcome.interrupted:
-        return INTERRUPTED
+        return played.status if played is not None and played.status else INTERRUPTED
     if not outcome.measured:
         raise NothingToMeasure(f"{outcome.source.info.uri}: nothing to measure: {outcome.reason}")
     return LIMIT_BROKEN if rules and outcome.alarms else 0

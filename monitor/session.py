@@ -202,6 +202,15 @@ def run(
     return outcome
 
 
+def look_ahead(source: Source, wanted: Wanted) -> Identified | NotFound:
+    """The link in an open source's first seconds, which are taken from it. Raises InputError where link and samples do not fit."""
+    rate = source.info.sample_rate_hz
+    try:
+        return settle_link(_read_head(source.blocks(), rate, wanted), rate, wanted)
+    except DspError as error:
+        raise InputError(str(error)) from None
+
+
 def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Identified | NotFound:
     """The link as given where all of it is, identified from the stream's head where not. Raises DspError."""
     if not head:

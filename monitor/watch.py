@@ -1,5 +1,6 @@
 """A live watch: one thread reads the source, one runs the engine, any number of views look at the newest state."""
 
+import math
 import queue
 import threading
 import time
@@ -35,7 +36,7 @@ class Watch:
 
     What views call is safe from any thread.
 
-    ``failure`` holds what ended it if that was an error.
+    ``failure`` holds what ended it if that was an error; ``at_the_end`` is true when the source ended by itself.
     """
 
     def __init__(
@@ -53,7 +54,8 @@ class Watch:
         self._reader = ThreadedReader(open_source)
         self._wanted = wanted
         self._aside = ThreadPoolExecutor(1, thread_name_prefix="lidwatch identify")
-        self._options = replace(options, aside=self._aside)
+        # what can wait is identified at once, so that a recording gives the same lines each time
+        self._options = replace(options, aside=None if self._reader.patient else self._aside)
         self._keeper = keeper
         self._source_text = source_text
         self._tap = tap
@@ -72,12 +74,13 @@ class Watch:
         self._stop = threading.Event()
         self._over = threading.Event()
         self._began = False
-        self._why = "stopped"
+        self._why = ""
         self._notices: list[str] = list(self._reader.warnings)
         self._state = LiveState(
             Snapshot(source_text=source_text, lock_text="waiting for samples"), searching="waiting for samples"
         )
         self.failure: MonitorError | None = None
+        self.at_the_end = False
         self._thread = threading.Thread(target=self._run, name="lidwatch engine", daemon=True)
 
     @property
@@ -94,6 +97,11 @@ class Watch:
         """Wait for the end; whether it has come."""
         # not join: where Ctrl-C interrupts that, Python 3.11 takes the thread for ended
         return self._over.wait(timeout_s)
+
+    @property
+    def alarms(self) -> list[dict[str, Any]]:
+        """Each time an alarm stood, as the JSON document lists them; after the end."""
+        return self._alarms.record()
 
     # -- for views -----------------------------------------------------------------------------------------------------
 
@@ -156,6 +164,8 @@ class Watch:
         finally:
             self._reader.close()
             self._aside.shutdown(wait=False, cancel_futures=True)
+            if self.failure is not None:
+                self._notice(str(self.failure))
             try:
                 self._last_line()
                 self._publish(ended=True)
@@ -178,9 +188,11 @@ class Watch:
                     self._feed(item)
             if not items:
                 if self._reader.ended:
-                    self._why = "the source ended"
+                    self.at_the_end = True
+                    self._why = self._why or "the source ended"
                     return
-                self._idle(time.monotonic() - self._quiet_since)
+                if not self._reader.patient:
+                    self._idle(time.monotonic() - self._quiet_since)
             self._attend()
 
     def _feed(self, block: Block) -> None:
@@ -189,11 +201,12 @@ class Watch:
         if engine is None:
             return  # a source tells its rate before its first samples
         began = time.monotonic()
+        oldest_s = math.inf if self._reader.patient else _OLDEST_S
         size = block.samples.size
         step = max(min(int(_PIECE_S * engine.sample_rate_hz), _PIECE_SAMPLES), 256)
         clipped = at = 0
         while at < size or (size == 0 and block.lost and not at):
-            if at and self._reader.ring.held_s > 0 and time.monotonic() - began > _OLDEST_S:
+            if at and self._reader.ring.held_s > 0 and time.monotonic() - began > oldest_s:
                 self._owed += size - at
                 self._in_work = 0
                 return
@@ -259,6 +272,7 @@ class Watch:
     def _happened(self, event: StreamEvent) -> None:
         if event.kind in DESCRIBING and event.rate_hz is not None and event.format is not None:
             complex_in = event.format.startswith("c")
+            source_text = f"{self._source_text} · {event.encoding or event.format} · {event.rate_hz:g} Hz"
             if self._tap is not None:
                 self._tap.describe(event.rate_hz, complex_in=complex_in, centre_hz=event.centre_hz)
             if self._engine is None:
@@ -268,7 +282,7 @@ class Watch:
                     complex_in=complex_in,
                     options=self._options,
                     line=self._keep,
-                    source_text=f"{self._source_text} · {event.format} · {event.rate_hz:g} Hz",
+                    source_text=source_text,
                     alarms=self._alarms,
                     stalled=self._stalled,
                     tap=self._tap,
@@ -277,9 +291,11 @@ class Watch:
                     self._engine.notice(text)
                 self._notices = []
             elif event.kind != "centre":
+                self._engine.source_text = source_text
                 self._engine.changed(sample_rate_hz=event.rate_hz, complex_in=complex_in, why=event.text)
             return
         if event.kind == "ended":
+            self._why = event.text
             return
         self._notice(event.text)
         if self._engine is not None and event.kind in ("torn", "garbage", "oversize", "overflow"):
@@ -292,7 +308,7 @@ class Watch:
     def _last_line(self) -> None:
         engine = self._engine
         totals = {
-            "why": self._why,
+            "why": self._why or "stopped",
             "samples": engine.samples if engine is not None else 0,
             "samples_lost": engine.samples_lost if engine is not None else 0,
             "alarms_raised": engine.alarms.activations if engine is not None else 0,

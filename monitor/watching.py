@@ -2,32 +2,18 @@
 
 import argparse
 import os
-import signal
-import sys
-import threading
 from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Self
+from typing import TYPE_CHECKING
 
 from monitor.arguments import add_journal_options, add_link_options, error_rate, not_negative, positive, whole
 from monitor.errors import InputError
-from monitor.running import (
-    add_capture_options,
-    chain_options,
-    link_and_limits,
-    open_capture,
-    open_journal,
-    start_fields,
-)
-from monitor.terminal import SlowStartNotice, say
+from monitor.running import add_capture_options, chain_options, link_and_limits
+from monitor.showing import add_view_options, attend, default_view
+from monitor.terminal import SlowStartNotice
 
 if TYPE_CHECKING:
     from monitor.sources.stream import LiveSource
-    from monitor.watch import Watch
-
-INTERRUPTED = 130
-SWITCH_S = 0.0005  # view and chain take turns: with the usual 5 ms each waits for the other at every array operation
-VIEWS = ("window", "terminal", "none")
 
 
 def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
@@ -76,11 +62,7 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
         "--pace", type=not_negative, default=1.0, metavar="N", help="of a recording: times real time (default 1)"
     )
     measure.add_argument("--for", dest="for_s", type=positive, metavar="S", help="end by itself after so long")
-    out = parser.add_argument_group("output")
-    out.add_argument("--view", choices=VIEWS, help="default: a window where there is a display, else the terminal")
-    out.add_argument(
-        "--painter", choices=("auto", "raster", "opengl"), default="auto", help="what draws the window's eye"
-    )
+    add_view_options(parser)
     add_journal_options(parser)
     add_capture_options(parser)
     parser.set_defaults(run=watch)
@@ -89,15 +71,9 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
 def watch(parsed: argparse.Namespace) -> int:
     """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
-    view = parsed.view or _default_view()
+    view = parsed.view or default_view()
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
-        from monitor.watch import Watch
-
-        if view == "window":
-            # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
-            import monitor.views.window  # noqa: F401
-    sys.setswitchinterval(SWITCH_S)
 
     from dataclasses import replace
 
@@ -112,103 +88,17 @@ def watch(parsed: argparse.Namespace) -> int:
         display=view != "none",
         chain=replace(chain_options(parsed, link), keep_total=False),
     )
-    opener = _opener(parsed)
-    tell = _Telling(to_view=view != "none")
-    capture = open_capture(parsed, tell, live=True)
-    with open_journal(parsed, capture, tell) as journal:
-        running = Watch(
-            opener,
-            link.wanted(),
-            options,
-            keeper=journal,
-            source_text=parsed.source,
-            start_fields=start_fields(parsed.source, link, rules),
-            for_s=parsed.for_s,
-            tap=capture,
-        )
-        tell.attach(running)
-        if capture is not None:
-            capture.picture = lambda: running.state().snapshot
-        for warning in running.warnings:
-            say(f"warning: {warning}")
-        running.start()
-        try:
-            with _Asked(noted=view == "window") as asked:
-                status = _show(running, view, parsed, asked)
-        finally:
-            running.stop()
-    if running.failure is not None:
-        raise running.failure
+    _, status = attend(
+        parsed,
+        _opener(parsed),
+        link,
+        options,
+        view=view,
+        live=True,
+        for_s=parsed.for_s,
+        until=lambda running: parsed.for_s is not None and running.state().ended,
+    )
     return status
-
-
-class _Telling:
-    """Notices of what runs beside the watch: on the view where there is one, else on standard error. Called from any thread."""
-
-    def __init__(self, *, to_view: bool) -> None:
-        self._to_view = to_view
-        self._running: Watch | None = None
-
-    def attach(self, running: "Watch") -> None:
-        """From now on there is a view."""
-        self._running = running
-
-    def __call__(self, text: str) -> None:
-        if self._to_view and self._running is not None:
-            self._running.note(text)
-        else:
-            say(f"warning: {text}")
-
-
-class _Asked:
-    """The wish for the end by Ctrl-C or by the system: in a window noted, for Qt's loop to look at, else raised as Ctrl-C is."""
-
-    def __init__(self, *, noted: bool) -> None:
-        self._noted = noted
-        self.yet = False
-        self._before: dict[int, Any] = {}
-
-    def __enter__(self) -> Self:
-        if threading.current_thread() is threading.main_thread():
-            for number in (signal.SIGTERM, signal.SIGINT) if self._noted else (signal.SIGTERM,):
-                self._before[number] = signal.signal(number, self._ask)
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        for number, handler in self._before.items():
-            signal.signal(number, handler)
-
-    def _ask(self, number: int, frame: object) -> None:
-        self.yet = True
-        if not self._noted:
-            raise KeyboardInterrupt
-
-
-def _show(running: "Watch", view: str, parsed: argparse.Namespace, asked: _Asked) -> int:
-    if view == "window":
-        from monitor.views.window import run_window
-
-        def over() -> bool:
-            return asked.yet or (parsed.for_s is not None and running.state().ended)
-
-        status = run_window(running, painter=parsed.painter, title=parsed.source, until=over)
-        return INTERRUPTED if asked.yet else status
-    if view == "terminal":
-        from monitor.views.terminal import run_terminal
-
-        return run_terminal(running)
-    try:
-        running.wait()
-    except KeyboardInterrupt:
-        return INTERRUPTED
-    return 0
-
-
-def _default_view() -> str:
-    display = sys.platform in ("win32", "darwin") or os.environ.get("DISPLAY") or os.environ.get("WAYLAND_DISPLAY")
-    if display:
-        return "window"
-    return "terminal" if sys.stdout is not None and sys.stdout.isatty() else "none"
 
 
 def _opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":

@@ -359,7 +359,7 @@ def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> 
     from monitor.engine import EngineOptions
     from monitor.sources.stream import StreamOptions, open_stream
     from monitor.watch import Watch
-    from monitor.watching import SWITCH_S
+    from monitor.showing import SWITCH_S
 
     if shown:  # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
         from monitor.views.choices import Choices, save_choices

@@ -1,5 +1,6 @@
 """Between the thread that receives and the one that measures: a ring that forgets the oldest rather than wait."""
 
+import math
 import threading
 import time
 from collections import deque
@@ -28,6 +29,8 @@ class SampleRing:
 
     More than ``bound_s`` may wait, up to 64 MiB, as long as nothing waits longer than ``patience_s`` by the clock: samples
     that a network held up and then brings all at once are no reason to lose any.
+
+    For a source that can wait, `keep_all` drops nothing, and `wait_for_room` says when to put more.
 
     When blocks must be dropped, all but the share ``kept`` of the bound are, so that a taker that is too slow for good sees
     few long stretches rather than many short ones.
@@ -68,6 +71,15 @@ class SampleRing:
         """Stream time that waits."""
         with self._changed:
             return self._seconds
+
+    def keep_all(self) -> None:
+        """Drop nothing for being old."""
+        self._patience_s = math.inf
+
+    def wait_for_room(self, timeout_s: float) -> bool:
+        """Wait until no more than half the bound waits; whether that has come."""
+        with self._changed:
+            return self._changed.wait_for(lambda: self._seconds <= 0.5 * self._bound_s, timeout_s)
 
     def put(self, items: Iterable[Item]) -> None:
         """Append; never waits for the taker. Blocks before any event that tells a rate count as no time."""
@@ -143,6 +155,7 @@ class SampleRing:
                 if isinstance(item, Block):
                     blocks += 1
                     self._uncount(item, seconds)
+            self._changed.notify_all()
             if not taken and self._failure is not None:
                 self._told = True
                 raise self._failure
@@ -180,6 +193,7 @@ class ThreadedReader(LiveSource):
         self.ring = SampleRing(bound_s, patience_s, kept=_KEPT)
         self.uri = ""
         self.warnings: tuple[str, ...] = ()
+        self.patient = False
         self._open_source = open_source
         self._stop = threading.Event()
         self._opened = threading.Event()
@@ -228,15 +242,19 @@ class ThreadedReader(LiveSource):
             return
         failure: BaseException | None = None
         try:
-            self.uri, self.warnings = source.uri, source.warnings
+            self.uri, self.warnings, self.patient = source.uri, source.warnings, source.patient
+            if self.patient:
+                self.ring.keep_all()
             self._opened.set()
             while not (self._stop.is_set() or source.ended):
-                self.ring.put(source.poll(_POLL_S))
+                if not self.patient or self.ring.wait_for_room(_POLL_S):
+                    self.ring.put(source.poll(_POLL_S))
         except MonitorError as error:
             failure = error
         except BaseException as error:  # noqa: BLE001 - a thread that ends in silence would look like a silent sender
             failure = MonitorError(printable(f"{self.uri}: the source failed: {error!r}"))
             failure.__cause__ = error
         finally:
+            self._opened.set()
             source.close()
             self.ring.close(failure)

@@ -82,11 +82,14 @@ class LiveSource(Protocol):
         What the user should know at the start, one line each.
     ended
         No more will come.
+    patient
+        Its samples can wait, as a recording's can: none need be dropped while the taker is slow.
     """
 
     uri: str
     warnings: tuple[str, ...]
     ended: bool
+    patient: bool = False
 
     def poll(self, timeout_s: float) -> tuple[Item, ...]:
         """What has come, in order, waiting up to ``timeout_s`` for the first of it; may be empty.

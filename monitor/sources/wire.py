@@ -68,6 +68,8 @@ class StreamEvent:
         Index in the stream at which the next samples will lie.
     rate_hz, format, centre_hz
         What holds from here on; given by the first five kinds, else None (``centre_hz`` also where it is unknown).
+    encoding
+        How a file holds the samples, such as ``WAV PCM_16``, where that is not ``format``.
     """
 
     kind: EventKind
@@ -76,6 +78,7 @@ class StreamEvent:
     rate_hz: float | None = None
     format: str | None = None
     centre_hz: float | None = None
+    encoding: str = ""
 
 
 Item = Block | StreamEvent

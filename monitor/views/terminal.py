@@ -50,12 +50,13 @@ def run_terminal(
     now: Callable[[], float] = time.monotonic,
     pictures: Path | None = None,
     environ: Mapping[str, str] | None = None,
+    until: Callable[[], bool] | None = None,
 ) -> int:
     """Show a watched stream until the user ends it, from the main thread; the watched side is told to stop however this ends.
 
     On a terminal the picture with its keys; elsewhere, or where TERM is dumb, a line of figures a second until the stream ends.
-    ``pictures``: the folder for saved pictures, the current one by default. ``stdin`` and ``stdout`` default to those of the process; where
-    ``stdin`` is no terminal, keys come from the controlling one.
+    ``pictures``: the folder for saved pictures, the current one by default. ``until``: asked at each look whether to end. ``stdin`` and
+    ``stdout`` default to those of the process; where ``stdin`` is no terminal, keys come from the controlling one.
 
     Returns the exit status: 0; 130 after Ctrl-C, 143 after SIGTERM, 129 after a hang-up. The terminal is given back as it was found,
     also when the watched side raises, which is passed on.
@@ -73,7 +74,7 @@ def run_terminal(
             budget = _REMOTE_BYTES_PER_S if remote else _BYTES_PER_S
             with _keys_of(stdin) as keys_fd, Terminal(keys_fd, stdout.fileno()) as terminal:
                 view = TerminalView(watched, look, now, pictures or Path())
-                return _Loop(view, terminal, signals, now, budget).run()
+                return _Loop(view, terminal, signals, now, budget, until).run()
     finally:
         watched.stop()
 
@@ -243,13 +244,20 @@ class _Loop:
     """Moves bytes between a view and its terminal: pictures at most so often as the connection takes them."""
 
     def __init__(
-        self, view: TerminalView, terminal: Terminal, signals: Signals, now: Callable[[], float], bytes_per_s: float
+        self,
+        view: TerminalView,
+        terminal: Terminal,
+        signals: Signals,
+        now: Callable[[], float],
+        bytes_per_s: float,
+        until: Callable[[], bool] | None,
     ) -> None:
         self._view = view
         self._terminal = terminal
         self._signals = signals
         self._now = now
         self._bytes_per_s = bytes_per_s
+        self._until = until
         self._depth = view.look.depth
         self._keys = Keys()
         self._escape_at = 0.0
@@ -258,7 +266,7 @@ class _Loop:
         self._due = 0.0
 
     def run(self) -> int:
-        while not self._view.closing:
+        while not (self._view.closing or (self._until is not None and self._until())):
             now = self._now()
             if not self._pending and now >= self._due:
                 try:

@@ -43,6 +43,8 @@ def until(condition, what="it", timeout_s=PATIENCE_S):
 class Scripted:
     """A source under the test's control: gives each list it is handed, then waits."""
 
+    patient = False
+
     def __init__(self, *steps, end=True):
         self.uri, self.warnings, self.ended = "scripted", (), False
         self.steps, self.end = list(steps), end

@@ -11,7 +11,7 @@ import pytest
 import zmq
 import zmq.auth
 
-from monitor import watching
+from monitor import showing, watching
 from monitor.cli import main, parser
 from monitor.errors import InputError
 from tests.monitor.recordings import QPSK, RAW, one_line, qpsk, raw, run_program, start_program
@@ -59,7 +59,7 @@ def test_a_recording_is_watched_at_its_pace_into_the_journal(tmp_path):
     lines = lines_of(journal)
     assert (lines[0]["kind"], lines[-1]["kind"]) == ("start", "stop")
     assert lines[0]["source"] == path
-    assert lines[-1]["why"] == "the source ended"
+    assert lines[-1]["why"] == "the recording ended"
     assert lines[-1]["samples"] + lines[-1]["samples_lost"] == 96_000
 
 
@@ -158,11 +158,11 @@ def test_options_reach_what_they_are_for(opened, tmp_path):
 def test_the_view_is_a_window_where_there_is_a_display_and_none_where_there_is_no_terminal_either(monkeypatch):
     monkeypatch.setattr("sys.platform", "linux")
     monkeypatch.setenv("DISPLAY", ":7")
-    assert watching._default_view() == "window"
+    assert showing.default_view() == "window"
     monkeypatch.delenv("DISPLAY")
     monkeypatch.delenv("WAYLAND_DISPLAY", raising=False)
     monkeypatch.setattr("sys.stdout", io.StringIO())
-    assert watching._default_view() == "none"
+    assert showing.default_view() == "none"
 
 
 def test_notices_go_to_standard_error_without_a_view_and_to_the_view_with_one(capsys):
@@ -173,7 +173,7 @@ def test_notices_go_to_standard_error_without_a_view_and_to_the_view_with_one(ca
             said.append(text)
 
     for to_view in (False, True):
-        tell = watching._Telling(to_view=to_view)
+        tell = showing.Telling(to_view=to_view)
         tell("early")
         tell.attach(View())
         tell("late")

@@ -177,6 +177,8 @@ def test_two_threads_lose_nothing_without_a_count():
 class Scripted:
     """A source that gives what it is told to, one list for each poll."""
 
+    patient = False
+
     def __init__(self, *script, then_end=True):
         self.uri, self.warnings, self.ended = "scripted", ("mind the step",), False
         self.script, self.then_end = list(script), then_end
