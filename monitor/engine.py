@@ -25,9 +25,10 @@ from monitor.alarm_rules import AlarmRule, built_in_alarms
 from monitor.alarms import AlarmBoard, AlarmEvent
 from monitor.document import reading_document
 from monitor.errors import InputError
+from monitor.history import Gaps, History, Locks
 from monitor.session import settle_link
 from monitor.snapshot import Snapshot
-from monitor.state import AlarmLine, Change, HistoryPoint, LiveState, Mark, Verdict
+from monitor.state import AlarmLine, Change, LiveState, Mark, Verdict
 
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
@@ -39,7 +40,6 @@ LEAST_JUDGED = 1000  # symbols
 LOOK_SECONDS = 1.0  # between two tries to identify a link
 RELOOK_SECONDS = 5.0  # without lock, after which a link that was identified is identified anew
 HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20
-HISTORY = 4096
 
 Line = Callable[[str, int, float, Mapping[str, Any]], None]
 
@@ -142,12 +142,12 @@ class Engine:
         self._began_anew = False
         self._ending: str | None = None
         self._to_the_end = False  # locked until the stream ended
-        self._gaps: deque[float] = deque(maxlen=256)
-        self._locks: deque[tuple[float, bool]] = deque(maxlen=256)
+        self._gaps = Gaps()
+        self._locks = Locks()
         self._marks: deque[Mark] = deque(maxlen=64)
         self._mark_opening: _Opening | None = None
         self._notices: deque[str] = deque(maxlen=4)
-        self._history = _History()
+        self._history = History()
         self._best: Reading | None = None
         self._best_at = 0.0
         self.persistence_s: float | None = 2.0
@@ -192,7 +192,7 @@ class Engine:
             self.samples_lost += block.lost
             self._position += block.lost
             self._tick_lost += block.lost
-            self._gaps.append(self.seconds)
+            self._gaps.add(self.seconds)
             self._emit("gap", samples_lost=block.lost, why="samples lost")
             self._tell_alarms(self.alarms.condition("samples lost", True, self.seconds, self.position, block.lost))
             self._lost_before += block.lost
@@ -412,7 +412,7 @@ class Engine:
     def _lock_event(self, event: LockEvent) -> None:
         gained = event.state == "gained"
         at = event.sample / self.sample_rate_hz
-        self._locks.append((at, gained))
+        self._locks.add(at, gained)
         self._last_lock_loss = None if gained else at
         why = event.reason if self._ending is None else self._ending
         self._emit("lock", sample=event.sample, state=event.state, why=event.reason if gained else why)
@@ -585,8 +585,8 @@ class Engine:
             searching="" if locked else self._searching,
             history=self._history.points(),
             marks=tuple(self._marks),
-            gaps_s=tuple(self._gaps),
-            locks=tuple(self._locks),
+            gaps_s=self._gaps.all(),
+            locks=self._locks.all(),
             alarms=tuple(
                 AlarmLine(a.name, a.severity, a.state, a.since_s, a.text) for a in self.alarms.snapshot() if a.shown
             ),
@@ -636,47 +636,6 @@ class Engine:
     def _tell_alarms(self, events: Iterable[AlarmEvent]) -> None:
         for event in events:
             self._line("alarm", event.sample, event.seconds, event.fields())
-
-
-class _History:
-    """The opening over the whole stream in a bounded number of points: neighbours join when there are too many."""
-
-    def __init__(self) -> None:
-        self._points: list[HistoryPoint] = []
-        self._per_point = 1
-        self._open: list[tuple[float, float | None]] = []
-
-    def add(self, seconds: float, opening: float | None) -> None:
-        self._open.append((seconds, opening))
-        if len(self._open) >= self._per_point:
-            self._points.append(_join(self._open))
-            self._open = []
-        if len(self._points) >= HISTORY:
-            pairs = zip(self._points[::2], self._points[1::2], strict=False)
-            self._points = [_join_points(a, b) for a, b in pairs]
-            self._per_point *= 2
-
-    def points(self) -> tuple[HistoryPoint, ...]:
-        return (*self._points, *((_join(self._open),) if self._open else ()))
-
-
-def _join(values: list[tuple[float, float | None]]) -> HistoryPoint:
-    known = [value for _, value in values if value is not None]
-    if not known:
-        return HistoryPoint(values[-1][0], None, None, None)
-    return HistoryPoint(values[-1][0], sum(known) / len(known), min(known), max(known))
-
-
-def _join_points(a: HistoryPoint, b: HistoryPoint) -> HistoryPoint:
-    if a.opening_pct is None or b.opening_pct is None:
-        whole = a if b.opening_pct is None else b
-        return replace(whole, seconds=b.seconds)
-    return HistoryPoint(
-        b.seconds,
-        0.5 * (a.opening_pct + b.opening_pct),
-        min(v for v in (a.least_pct, b.least_pct) if v is not None),
-        max(v for v in (a.most_pct, b.most_pct) if v is not None),
-    )
 
 
 def _clock(seconds: float) -> str:

@@ -357,9 +357,9 @@ def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> 
     from dsp.link import find_scheme
     from dsp.pulses import Pulse
     from monitor.engine import EngineOptions
+    from monitor.showing import SWITCH_S
     from monitor.sources.stream import StreamOptions, open_stream
     from monitor.watch import Watch
-    from monitor.showing import SWITCH_S
 
     if shown:  # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
         from monitor.views.choices import Choices, save_choices

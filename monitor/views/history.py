@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,7 +11,7 @@ from monitor.state import AlarmLine, HistoryPoint
 
 _TIME_STEPS = (1, 2, 5, 10, 15, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200, 10800, 21600, 43200, 86400)
 _LEAST_SPAN_PCT = 30.0
-_MOST_PASSED = 256
+_MOST_PASSED = 512
 # the cause is gone, though the alarm still shows
 _OVER = ("returned", "latched")
 
@@ -120,7 +120,10 @@ class AlarmSpan:
 
 
 class AlarmMemory:
-    """Keeps which alarms stood when, from the states that a view was told; one thread. The oldest go first."""
+    """Keeps which alarms stood when, from the states that a view was told; one thread.
+
+    When there are too many, of the older ones those of one alarm that lie closest together become one.
+    """
 
     def __init__(self) -> None:
         self._passed: list[AlarmSpan] = []
@@ -134,8 +137,27 @@ class AlarmMemory:
             if alarm.state not in _OVER
         }
         self._passed += [span for key, span in self._standing.items() if key not in standing]
-        del self._passed[:-_MOST_PASSED]
+        while len(self._passed) > _MOST_PASSED:
+            self._join_two()
         self._standing = standing
+
+    def _join_two(self) -> None:
+        older = self._passed[: _MOST_PASSED // 2]
+        newest: dict[str, int] = {}
+        closest: tuple[float, int, int] | None = None
+        for at, span in enumerate(older):
+            before = newest.get(span.name)
+            newest[span.name] = at
+            if before is not None:
+                apart = span.start_s - older[before].end_s
+                if closest is None or apart < closest[0]:
+                    closest = apart, before, at
+        if closest is None:
+            del self._passed[0]
+            return
+        _, first, second = closest
+        self._passed[first] = replace(older[first], end_s=max(older[first].end_s, older[second].end_s))
+        del self._passed[second]
 
     def spans(self) -> tuple[AlarmSpan, ...]:
         """All that are remembered, those that stand last."""

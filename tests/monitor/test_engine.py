@@ -11,7 +11,6 @@ from dsp.pulses import Pulse
 from dsp.transmitter import TransmitSpec, transmit
 from monitor import engine as engine_module
 from monitor.errors import InputError
-from monitor.state import HistoryPoint
 from tests.monitor.recordings import RATE, SYMBOL_RATE, pam2, qpsk
 from tests.monitor.watched import QPSK_LINK, Watched, rules, stretches
 
@@ -313,18 +312,6 @@ def test_the_best_reading_stays():
 
 
 # --- what is shown
-
-
-def test_the_history_is_bounded_and_spans_the_whole_stream():
-    history = engine_module._History()
-    for i in range(100_000):
-        history.add(0.2 * i, None if i % 1000 < 3 else 50.0 + (i == 70_500) * 30.0)
-    points = history.points()
-    assert len(points) <= engine_module.HISTORY
-    assert points[0].seconds < 60
-    assert points[-1].seconds == pytest.approx(0.2 * 99_999)
-    assert max(p.most_pct for p in points if p.most_pct is not None) == 80.0
-    assert all(isinstance(p, HistoryPoint) for p in points)
 
 
 def test_persistence_shows_what_came_since_the_last_look_all_of_it_or_a_fading_share():

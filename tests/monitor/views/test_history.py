@@ -125,5 +125,17 @@ def test_the_memory_is_bounded():
     memory = AlarmMemory()
     for number in range(1000):
         memory.tell((alarm("a", float(number)),), number + 0.5)
-    assert len(memory.spans()) == 257
-    assert memory.spans()[-1].start_s == 999.0
+    spans = memory.spans()
+    assert len(spans) == 513
+    assert [span.start_s for span in spans[-200:]] == [float(number) for number in range(800, 1000)]
+    # older ones have become one, but none is forgotten
+    assert spans[0].start_s == 0.0
+    assert sum(span.end_s - span.start_s > 0.5 for span in spans) > 0
+
+
+def test_a_flood_of_one_alarm_does_not_drive_another_out_of_the_memory():
+    memory = AlarmMemory()
+    memory.tell((alarm("rain", 1.0),), 2.0)
+    for number in range(10, 2000):
+        memory.tell((alarm("a", float(number)),), number + 0.5)
+    assert ("rain", 1.0) in [(span.name, span.start_s) for span in memory.spans()]
