@@ -39,16 +39,29 @@ def join_negative_numbers(arguments: Sequence[str]) -> list[str]:
 def add_sample_options(parser: argparse.ArgumentParser) -> None:
     """What the user says of the samples."""
     group = parser.add_argument_group("the samples")
-    group.add_argument("--rate", type=positive, metavar="HZ", help="sample rate, where the file does not say it")
-    group.add_argument(
-        "--format", metavar="NAME", help="SigMF datatype of raw samples: cf32, ci16_le, cu8, rf32, ri16_be, ..."
-    )
-    group.add_argument(
-        "--channels", type=channels, metavar="N[,N]", help="which channel (1 is the first), or two for --iq"
-    )
-    group.add_argument("--iq", action="store_true", help="two channels are I and Q")
+    add_form_options(group)
     group.add_argument("--start", type=not_negative, default=0.0, metavar="S", help="begin so many seconds in")
     group.add_argument("--duration", type=positive, metavar="S", help="take so many seconds")
+
+
+def add_form_options(group: "argparse._ArgumentGroup") -> None:
+    """Rate, format and channels; rate and format once for all sources, or once for each."""
+    group.add_argument(
+        "--rate", type=positive, action="append", metavar="HZ", help="sample rate, where the source does not say it"
+    )
+    group.add_argument(
+        "--format",
+        action="append",
+        metavar="NAME",
+        help="SigMF datatype of raw samples: cf32, ci16_le, cu8, rf32, ri16_be, ...",
+    )
+    group.add_argument(
+        "--channels",
+        type=channels,
+        metavar="N[,N...]",
+        help="which channels, 1 is the first: each is a link, with --iq each two",
+    )
+    group.add_argument("--iq", action="store_true", help="two channels are I and Q")
 
 
 def add_link_options(parser: argparse.ArgumentParser) -> None:
@@ -66,7 +79,13 @@ def add_link_options(parser: argparse.ArgumentParser) -> None:
     group.add_argument(
         "--loop-bandwidth", type=bandwidth, metavar="BNT", help="of the timing loop, per symbol (default 0.005)"
     )
-    group.add_argument("--link", type=Path, metavar="LINK.toml", help="file with these; options win over it")
+    group.add_argument(
+        "--link",
+        type=Path,
+        action="append",
+        metavar="LINK.toml",
+        help="file with these; options win over it. Of several links: one for all, or one for each in order",
+    )
 
 
 def add_measure_options(parser: argparse.ArgumentParser) -> None:

@@ -84,7 +84,10 @@ def parser() -> argparse.ArgumentParser:
         allow_abbrev=False,
     )
     command.add_argument(
-        "source", metavar="FILE", help="sound file, raw file, SigMF recording, or - for standard input"
+        "source",
+        nargs="+",
+        metavar="FILE",
+        help="sound file, raw file, SigMF recording, or - for standard input; each is a link",
     )
     add_sample_options(command)
     add_link_options(command)

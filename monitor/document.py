@@ -3,7 +3,7 @@
 import dataclasses
 import json
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from typing import Any
 
 from dsp.reading import Reading
@@ -75,6 +75,20 @@ def document(outcome: Outcome) -> dict[str, Json]:
     return {key: _finite(value) for key, value in found.items()}
 
 
+def links_document(links: Sequence[tuple[str, Outcome | None, str]]) -> dict[str, Json]:
+    """The one JSON document of several links, each with its name, outcome and error.
+
+    ``links`` holds, in the user's order, the document of each as it would be by itself, with ``name`` and ``error`` (None if all went well)
+    before it; of one that could not be measured these two only.
+    """
+    found: list[Json] = []
+    for name, outcome, error in links:
+        own = document(outcome) if outcome is not None else {}
+        own.pop("lidwatch", None)
+        found.append({"name": name, "error": error or None, **own})
+    return {"lidwatch": version(), "links": found}
+
+
 def reading_document(reading: Reading | None) -> dict[str, Json] | None:
     """A reading by its keys; anything not finite becomes None."""
     if reading is None:
@@ -93,8 +107,13 @@ def _finite(value: Json | tuple[Any, ...]) -> Json:
 
 
 def to_json(outcome: Outcome) -> str:
-    """The document as JSON text, ASCII only."""
-    return json.dumps(document(outcome), indent=2, allow_nan=False)
+    """The document of a run as JSON text, ASCII only."""
+    return json_text(document(outcome))
+
+
+def json_text(found: dict[str, Json]) -> str:
+    """A document as JSON text, ASCII only."""
+    return json.dumps(found, indent=2, allow_nan=False)
 
 
 def text(outcome: Outcome) -> Iterator[str]:

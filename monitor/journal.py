@@ -23,7 +23,6 @@ CSV_COLUMNS: Final = ("time", "sample", "seconds", *READING_KEYS)
 
 _FIRST_KEYS: Final = ("kind", "time", "sample", "seconds")
 _JSON_BEGIN: Final = b'{"kind": '
-_CSV_HEADER: Final = (",".join(CSV_COLUMNS) + "\r\n").encode("ascii")
 _KEPT_KINDS: Final = ("start", "alarm", "mark", "stop")  # rare, and nothing later says the same
 _MOST_KEPT: Final = 1000
 _MOST_CUT_TEXT: Final = 4000
@@ -83,6 +82,19 @@ class Sink(Protocol):
         """No more lines come."""
 
 
+class Keeper(Protocol):
+    """What a watch writes its lines to."""
+
+    @property
+    def status(self) -> JournalStatus:
+        """How the journal fares now."""
+        ...
+
+    def write(self, kind: str, sample: int | None, seconds: float | None, fields: Mapping[str, Any]) -> None:
+        """Write one line."""
+        ...
+
+
 class Journal:
     """Writes a line for everything that happens. Owned by one thread.
 
@@ -103,6 +115,8 @@ class Journal:
         order of their names and then the file are the whole journal.
     sinks
         Get every line, whether the disk took it or not, after the disk. Closed with the journal.
+    links
+        There are several links: every line has ``link``, the name of the one that it is about, null where it is about none.
 
     Raises
     ------
@@ -117,8 +131,11 @@ class Journal:
         now: Callable[[], datetime],
         rotation: Rotation | None = None,
         sinks: Sequence[Sink] = (),
+        links: bool = False,
     ) -> None:
         self._now = now
+        self._links = links
+        self._columns = ("link", *CSV_COLUMNS) if links else CSV_COLUMNS
         self._rotation = rotation or Rotation()
         self._sinks = tuple(sinks)
         self._csv = path is not None and path.suffix.lower() == ".csv"
@@ -129,9 +146,10 @@ class Journal:
         self._rotation_failed_at: datetime | None = None
         self._file: LineFile | None = None
         if path is not None:
-            _check(path, _CSV_HEADER if self._csv else _JSON_BEGIN)
+            header = (",".join(self._columns) + "\r\n").encode("ascii")
+            _check(path, header if self._csv else _JSON_BEGIN)
             self._file = (
-                LineFile(path, header=_CSV_HEADER, mend=lambda fragment: b"")
+                LineFile(path, header=header, mend=lambda fragment: b"")
                 if self._csv
                 else LineFile(path, mend=self._mended)
             )
@@ -178,7 +196,9 @@ class Journal:
         now = self._now()
         record, line = self._made(kind, now, sample, seconds, fields)
         if self._file is not None and (kind == "reading" or not self._csv):
-            self._store(self._file, kind, _csv_row(record) if self._csv else line + b"\n", now, sample, seconds)
+            self._store(
+                self._file, kind, _csv_row(record, self._columns) if self._csv else line + b"\n", now, sample, seconds
+            )
         self._hand_on(record, line)
 
     def close(self) -> None:
@@ -261,6 +281,8 @@ class Journal:
         self, kind: str, now: datetime, sample: int | None, seconds: float | None, fields: Mapping[str, Any]
     ) -> tuple[dict[str, Any], bytes]:
         record = {"kind": kind, "time": time_text(now), "sample": _plain(sample), "seconds": _plain(seconds)}
+        if self._links:
+            record["link"] = None
         record |= {str(key): _plain(value) for key, value in fields.items() if key not in _FIRST_KEYS}
         text = json.dumps(record, ensure_ascii=False, allow_nan=False)
         return record, text.translate(_LINE_ENDS).encode("utf-8")
@@ -330,9 +352,9 @@ def _plain(value: Any) -> Any:  # noqa: ANN401  # whatever a field holds
     return _plain(str(value))
 
 
-def _csv_row(record: Mapping[str, Any]) -> bytes:
+def _csv_row(record: Mapping[str, Any], columns: Sequence[str]) -> bytes:
     row = io.StringIO(newline="")
-    csv.writer(row, lineterminator="\r\n").writerow([_cell(record.get(column)) for column in CSV_COLUMNS])
+    csv.writer(row, lineterminator="\r\n").writerow([_cell(record.get(column)) for column in columns])
     return row.getvalue().encode("utf-8")
 
 

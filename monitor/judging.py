@@ -5,8 +5,10 @@ from types import TracebackType
 from typing import Any, Self
 
 from monitor.alarm_rules import AlarmRule
+from monitor.capture import Capture
 from monitor.engine import Engine, EngineOptions
 from monitor.errors import printable
+from monitor.journal import Journal, Keeper
 from monitor.linkfile import LinkOptions
 from monitor.running import chain_options, open_capture, open_journal, start_fields
 from monitor.sources import Source
@@ -14,13 +16,26 @@ from monitor.terminal import say
 
 
 class Judged:
-    """Feeds an engine beside the replay's own chain, and keeps its journal; a context."""
+    """Feeds an engine beside the replay's own chain, and keeps its journal; a context.
+
+    ``keeper`` and ``capture``, where given, are the caller's; else they are opened as the arguments say, and closed at the end.
+    """
 
     def __init__(
-        self, parsed: argparse.Namespace, source: Source, link: LinkOptions, rules: tuple[AlarmRule, ...]
+        self,
+        parsed: argparse.Namespace,
+        source: Source,
+        link: LinkOptions,
+        rules: tuple[AlarmRule, ...],
+        *,
+        keeper: Keeper | None = None,
+        capture: Capture | None = None,
     ) -> None:
-        capture = open_capture(parsed, lambda text: say(f"warning: {text}"), live=False)
-        self._journal = open_journal(parsed, capture)
+        self._own: Journal | None = None
+        if keeper is None:
+            capture = open_capture(parsed, lambda text: say(f"warning: {text}"), live=False)
+            keeper = self._own = open_journal(parsed, capture)
+        self._journal = keeper
         self._start = start_fields(parsed.source, link, rules)
         self._engine = Engine(
             link.wanted(),
@@ -55,7 +70,8 @@ class Judged:
             if not self._ended:
                 self._last_line(printable(str(error)) or "interrupted" if error is not None else "interrupted")
         finally:
-            self._journal.close()
+            if self._own is not None:
+                self._own.close()
 
     def finish(self, *, interrupted: bool = False) -> list[dict[str, Any]]:
         """The stream has ended; returns the alarms that there were. Raises InputError."""

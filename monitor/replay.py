@@ -9,11 +9,13 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.errors import InputError, NothingToMeasure
+from monitor.links import links_of
 from monitor.playing import check_pace, play
 from monitor.running import chain_options, link_and_limits
 from monitor.terminal import ProgressBar, SlowStartNotice
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
     from contextlib import AbstractContextManager
 
     from monitor.alarm_rules import AlarmRule
@@ -29,9 +31,15 @@ def replay(parsed: argparse.Namespace) -> int:
     """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
     # one thread a matrix product: the chain's own two threads are what the cores are for
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
-    check_pace(parsed)
     if parsed.picture is not None:
         _check_picture(parsed.picture)
+    links = links_of(parsed)
+    if len(links) > 1:
+        from monitor.several_replay import replay_several
+
+        return replay_several(parsed, links)
+    parsed = links[0].parsed
+    check_pace(parsed)
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
         from monitor.interrupt import Interrupt, Interruptible
@@ -58,7 +66,7 @@ def replay(parsed: argparse.Namespace) -> int:
     if played is not None:
         outcome.alarms = played.alarms
         outcome.interrupted |= played.status != 0
-    _tell(outcome, as_json=parsed.json)
+    tell(_lines(outcome, as_json=parsed.json))
     if parsed.picture is not None:
         from monitor.snapshots import snapshot_of
         from monitor.views.painter import save_picture
@@ -84,11 +92,14 @@ def _judging(
     return Judged(parsed, source, link, rules)
 
 
-def _tell(outcome: "Outcome", *, as_json: bool) -> None:
-    """Write the document or the lines; a reader that has left is no error, a full disk is one."""
+def _lines(outcome: "Outcome", *, as_json: bool) -> list[str]:
     from monitor.document import text, to_json
 
-    lines = [to_json(outcome)] if as_json else list(text(outcome))
+    return [to_json(outcome)] if as_json else list(text(outcome))
+
+
+def tell(lines: "Sequence[str]") -> None:
+    """Write lines on standard output; a reader that has left is no error, a full disk is one (InputError)."""
     if sys.stdout is None:
         return
     try:

@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from dsp.chain import ChainOptions
     from monitor.alarm_rules import AlarmRule
     from monitor.capture import Capture
-    from monitor.journal import Journal
+    from monitor.journal import Journal, Sink
     from monitor.linkfile import LinkOptions
 
 
@@ -85,10 +85,17 @@ def open_capture(parsed: argparse.Namespace, tell: Callable[[str], None], *, liv
 
 
 def open_journal(
-    parsed: argparse.Namespace, capture: "Capture | None" = None, tell: Callable[[str], None] | None = None
+    parsed: argparse.Namespace,
+    capture: "Sink | None" = None,
+    tell: Callable[[str], None] | None = None,
+    *,
+    links: bool = False,
 ) -> "Journal":
-    """The journal with all that listens to it; ``tell`` is given what goes wrong with it later on. Raises InputError."""
-    from monitor.journal import Journal, Rotation, Sink
+    """The journal with all that listens to it; ``tell`` is given what goes wrong with it later on. Raises InputError.
+
+    ``links``: it is for several links.
+    """
+    from monitor.journal import Journal, Rotation
 
     tell = tell or _warn
     sinks: list[Sink] = []
@@ -107,7 +114,7 @@ def open_journal(
 
             sinks.append(AlarmCommand(parsed.on_alarm, failed=tell))
         rotation = Rotation(parsed.rotate_size, parsed.rotate_daily)
-        return Journal(parsed.journal, now=lambda: datetime.now(UTC), rotation=rotation, sinks=sinks)
+        return Journal(parsed.journal, now=lambda: datetime.now(UTC), rotation=rotation, sinks=sinks, links=links)
     except BaseException:
         for sink in sinks:
             sink.close()

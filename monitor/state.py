@@ -78,3 +78,21 @@ class LiveState:
     journal_text: str = ""
     ended: bool = False
     rails: tuple[str, ...] = ("",)
+
+
+@dataclass(frozen=True, slots=True)
+class LinkState:
+    """One of several links: its name, its state, and what ended it if that was an error."""
+
+    name: str
+    state: LiveState
+    failure: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class SeveralState:
+    """Several links in the user's order; ``front`` is the one shown large, ``pinned`` if the user chose it."""
+
+    links: tuple[LinkState, ...]
+    front: int = 0
+    pinned: bool = False

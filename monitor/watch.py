@@ -15,7 +15,7 @@ from monitor.alarm_rules import built_in_alarms
 from monitor.alarms import AlarmBoard, AlarmEvent
 from monitor.engine import Engine, EngineOptions, Tap
 from monitor.errors import MonitorError, printable
-from monitor.journal import Journal
+from monitor.journal import Keeper
 from monitor.snapshot import Snapshot
 from monitor.sources.ring import ThreadedReader
 from monitor.sources.stream import LiveSource
@@ -45,7 +45,7 @@ class Watch:
         wanted: Wanted,
         options: EngineOptions,
         *,
-        keeper: Journal | None = None,
+        keeper: Keeper | None = None,
         source_text: str,
         tap: Tap | None = None,
         start_fields: Mapping[str, Any] | None = None,
@@ -140,6 +140,15 @@ class Watch:
     def note(self, text: str) -> None:
         """Something the user should see."""
         self._notes.put(text)
+
+    def abandon(self) -> None:
+        """End without having begun: the source is closed, and there is no line in the journal."""
+        self._reader.close()
+        self._aside.shutdown(wait=False, cancel_futures=True)
+
+    def ask_to_stop(self) -> None:
+        """Let the watch end; returns at once."""
+        self._stop.set()
 
     def stop(self) -> None:
         """End the watch; returns when the journal has its last line, or after some seconds."""

@@ -6,8 +6,17 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from monitor.arguments import add_journal_options, add_link_options, error_rate, not_negative, positive, whole
+from monitor.arguments import (
+    add_form_options,
+    add_journal_options,
+    add_link_options,
+    error_rate,
+    not_negative,
+    positive,
+    whole,
+)
 from monitor.errors import InputError
+from monitor.links import links_of
 from monitor.running import add_capture_options, chain_options, link_and_limits
 from monitor.showing import add_view_options, attend, default_view
 from monitor.terminal import SlowStartNotice
@@ -19,19 +28,16 @@ if TYPE_CHECKING:
 def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
     """The options of the command."""
     parser.add_argument(
-        "source", metavar="SOURCE", help="tcp://HOST:PORT, ipc://PATH, audio:NAME, a recording, or - for standard input"
+        "source",
+        nargs="+",
+        metavar="SOURCE",
+        help="tcp://HOST:PORT, ipc://PATH, audio:NAME, a recording, or - for standard input; each is a link",
     )
-    samples = parser.add_argument_group("the samples")
-    samples.add_argument("--rate", type=positive, metavar="HZ", help="sample rate, where the stream does not say it")
-    samples.add_argument("--format", metavar="NAME", help="SigMF datatype: cf32, ci16_le, cu8, rf32, ri16_be, ...")
-    samples.add_argument(
-        "--channels", metavar="N[,N]", help="of a recording or sound card: which channel, or two for --iq"
-    )
-    samples.add_argument("--iq", action="store_true", help="two channels are I and Q")
+    add_form_options(parser.add_argument_group("the samples"))
     socket = parser.add_argument_group("the socket")
     socket.add_argument("--socket", choices=("sub", "pull"), default="sub", help="ZeroMQ pattern (default sub)")
     socket.add_argument("--bind", action="store_true", help="bind the address instead of connecting to it")
-    socket.add_argument("--topic", default="", metavar="TEXT", help="subscribe to messages that begin with this")
+    socket.add_argument("--topic", action="append", metavar="TEXT", help="subscribe to messages that begin with this")
     socket.add_argument("--key", type=Path, metavar="FILE", help="own NAME.key_secret: the stream is encrypted (CURVE)")
     socket.add_argument("--server-key", type=Path, metavar="FILE", help="the sender's NAME.key, to connect with --key")
     socket.add_argument(
@@ -71,9 +77,16 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
 def watch(parsed: argparse.Namespace) -> int:
     """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
-    view = parsed.view or default_view()
+    links = links_of(parsed)
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
+
+    if len(links) > 1:
+        from monitor.several_watching import watch_several
+
+        return watch_several(parsed, links, _opener)
+    parsed = links[0].parsed
+    view = parsed.view or default_view()
 
     from dataclasses import replace
 
@@ -103,11 +116,9 @@ def watch(parsed: argparse.Namespace) -> int:
 
 def _opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":
     """What opens the source, in the thread that will own it."""
-    from monitor.arguments import channels
     from monitor.sources import SampleOptions
 
-    picked = channels(parsed.channels) if parsed.channels else None
-    samples = SampleOptions(parsed.rate, parsed.format, picked, parsed.iq)
+    samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq)
     source: str = parsed.source
     if source.startswith(("tcp://", "ipc://")):
         from monitor.sources.keys import Curve
@@ -116,7 +127,7 @@ def _opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":
         if parsed.key is None and (parsed.server_key or parsed.client_keys):
             raise InputError("--server-key and --client-keys go with --key, the own secret key")
         curve = Curve(parsed.key, parsed.server_key, parsed.client_keys) if parsed.key is not None else None
-        stream = StreamOptions(parsed.rate, parsed.format, parsed.socket, parsed.bind, parsed.topic, curve)
+        stream = StreamOptions(parsed.rate, parsed.format, parsed.socket, parsed.bind, parsed.topic or "", curve)
         return lambda: open_stream(source, stream)
     if source == "-":
         from monitor.sources.stdin import StdinSource

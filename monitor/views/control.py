@@ -9,7 +9,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal, Protocol
 
-from monitor.state import LiveState
+from monitor.state import LiveState, SeveralState
 
 
 class Watched(Protocol):
@@ -45,6 +45,26 @@ class Watched(Protocol):
 
     def stop(self) -> None:
         """End the watch; may be called twice."""
+        ...
+
+
+class WatchedLinks(Watched, Protocol):
+    """Several links, of which one is in front; what `Watched` says is said of that one."""
+
+    def several(self) -> SeveralState:
+        """The newest state of all."""
+        ...
+
+    def choose(self, number: int) -> None:
+        """Keep one link in front, counted from 0."""
+        ...
+
+    def step(self, by: int) -> None:
+        """Keep the link so many further in front, round the end."""
+        ...
+
+    def release(self) -> None:
+        """The worst link to the front again, whichever it is from then on."""
         ...
 
 
@@ -142,6 +162,25 @@ ACTIONS: tuple[Action, ...] = (
 )
 MENUS: tuple[MenuName, ...] = ("Measure", "Alarm", "View", "Watch")
 
+LinkActionName = Literal["next link", "previous link", "worst link"]
+
+
+@dataclass(frozen=True, slots=True)
+class LinkAction:
+    """One thing to do where there are several links; the parts are those of `Action`."""
+
+    name: LinkActionName
+    keys: tuple[str, ...]
+    words: str
+    what: str
+
+
+LINK_ACTIONS: tuple[LinkAction, ...] = (
+    LinkAction("next link", ("PageDown",), "Next link", "bring it to the front, and keep it there"),
+    LinkAction("previous link", ("PageUp",), "Previous link", "bring it to the front, and keep it there"),
+    LinkAction("worst link", ("W",), "Worst link in front", "whichever it is from now on"),
+)
+
 SHELVE_SECONDS = 600.0
 PERSISTENCE_STEPS: tuple[float | None, ...] = (0.0, 0.5, 1.0, 2.0, 5.0, 10.0, 30.0, None)
 DEFAULT_PERSISTENCE: float | None = 2.0
@@ -153,6 +192,12 @@ def action_for(key: str) -> Action | None:
     """The action on a key, or None; a letter counts in either case."""
     wanted = key.upper() if len(key) == 1 else key
     return next((action for action in ACTIONS if wanted in action.keys), None)
+
+
+def link_action_for(key: str) -> LinkAction | None:
+    """The action on a key where there are several links, or None."""
+    wanted = key.upper() if len(key) == 1 else key
+    return next((action for action in LINK_ACTIONS if wanted in action.keys), None)
 
 
 def step_persistence(seconds: float | None, *, longer: bool) -> float | None:

@@ -1,6 +1,7 @@
 """The panels of the live page, each drawn on its own; `monitor.views.live_page` decides which are due."""
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 from dsp.picture import EyeImage
@@ -9,7 +10,7 @@ from monitor.snapshot import Snapshot
 from monitor.state import AlarmLine, LiveState
 from monitor.views import pixels
 from monitor.views.canvas import Canvas
-from monitor.views.control import ACTIONS, persistence_words
+from monitor.views.control import ACTIONS, Action, LinkAction, persistence_words
 from monitor.views.diagnosis_drawing import draw_page
 from monitor.views.diagnosis_wording import PAGE_TITLES, PAGES, PageName
 from monitor.views.drawing import (
@@ -432,7 +433,7 @@ def draw_footer(canvas: Canvas, box: Box, view: View) -> None:
     canvas.write("  ·  ".join(parts), room, _SMALL, theme.ink if view.said else theme.dim)
 
 
-def draw_help(canvas: Canvas, box: Box) -> None:
+def draw_help(canvas: Canvas, box: Box, actions: Sequence[Action | LinkAction] = ACTIONS) -> None:
     """All keys with what they do, over the page."""
     theme = canvas.theme
     canvas.fill(box, theme.panel)
@@ -440,11 +441,11 @@ def draw_help(canvas: Canvas, box: Box) -> None:
     inner = Box(box.x + canvas.px(24), box.y + canvas.px(14), box.width - canvas.px(48), box.height - canvas.px(28))
     title = replace(inner, height=canvas.px(30))
     canvas.write("Keys", title, _LARGE, theme.ink, bold=True)
-    pitch = min(canvas.px(32), (inner.bottom - title.bottom) // len(ACTIONS))
+    pitch = min(canvas.px(32), (inner.bottom - title.bottom) // len(actions))
     size = min(14.0, 0.6 * pitch / canvas.scale)
-    keys_width = max(canvas.text_width(" or ".join(a.keys), size, bold=True) for a in ACTIONS) + canvas.px(20)
-    words_width = max(canvas.text_width(a.words.rstrip("…"), size) for a in ACTIONS) + canvas.px(20)
-    for number, action in enumerate(ACTIONS):
+    keys_width = max(canvas.text_width(" or ".join(a.keys), size, bold=True) for a in actions) + canvas.px(20)
+    words_width = max(canvas.text_width(a.words.rstrip("…"), size) for a in actions) + canvas.px(20)
+    for number, action in enumerate(actions):
         row = Box(inner.x, title.bottom + number * pitch, inner.width, pitch)
         canvas.write(" or ".join(action.keys), replace(row, width=keys_width), size, theme.ink, bold=True)
         words = Box(row.x + keys_width, row.y, min(words_width, max(0, row.width - keys_width)), pitch)

@@ -6,6 +6,7 @@ libfontconfig1; the last brings a font with it.
 
 import os
 import sys
+from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -52,10 +53,27 @@ def save_picture(
 
     Raises InputError as `paint_picture` does, and when the file cannot be written.
     """
+    _write(png_bytes(paint_picture(snapshot, width, height, theme)), path)
+
+
+def save_tiles(
+    links: Sequence[tuple[str, Snapshot]],
+    front: int,
+    path: str | os.PathLike[str],
+    width: int = 1280,
+    height: int = 800,
+    theme: ThemeName = "light",
+) -> None:
+    """Draw several links, each with its name, as tiles over the picture of the one in front into a PNG file; see `save_picture`."""
+    ensure_application()
+    from monitor.views.tiles import tiles_picture
+
+    _write(png_bytes(tiles_picture(links, front, width, height, theme)), path)
+
+
+def _write(data: bytes, path: str | os.PathLike[str]) -> None:
     from monitor.errors import InputError
 
-    image = paint_picture(snapshot, width, height, theme)
-    data = png_bytes(image)
     try:
         Path(path).write_bytes(data)
     except (OSError, ValueError) as error:  # ValueError: a zero byte in the name

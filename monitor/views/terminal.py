@@ -6,7 +6,7 @@ import select
 import signal
 import sys
 import time
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import replace
 from datetime import datetime
 from pathlib import Path
@@ -51,12 +51,15 @@ def run_terminal(
     pictures: Path | None = None,
     environ: Mapping[str, str] | None = None,
     until: Callable[[], bool] | None = None,
+    view: "Callable[[Look, Callable[[], float], Path], TerminalView] | None" = None,
+    lines: Callable[[], tuple[Sequence[str], bool]] | None = None,
 ) -> int:
     """Show a watched stream until the user ends it, from the main thread; the watched side is told to stop however this ends.
 
     On a terminal the picture with its keys; elsewhere, or where TERM is dumb, a line of figures a second until the stream ends.
     ``pictures``: the folder for saved pictures, the current one by default. ``until``: asked at each look whether to end. ``stdin`` and
-    ``stdout`` default to those of the process; where ``stdin`` is no terminal, keys come from the controlling one.
+    ``stdout`` default to those of the process; where ``stdin`` is no terminal, keys come from the controlling one. ``view`` and ``lines``
+    make another picture than that of one stream, and other lines, with whether they are the last.
 
     Returns the exit status: 0; 130 after Ctrl-C, 143 after SIGTERM, 129 after a hang-up. The terminal is given back as it was found,
     also when the watched side raises, which is passed on.
@@ -68,13 +71,14 @@ def run_terminal(
     try:
         with Signals() as signals:
             if not stdout.isatty() or environ.get("TERM", "dumb") in ("", "dumb"):
-                return _run_lines(watched, stdout, look, signals, now)
+                return _run_lines(lines or (lambda: _line_of(watched)), stdout, look, signals, now)
             stdout.flush()
             remote = any(environ.get(name) for name in ("SSH_CONNECTION", "SSH_TTY"))
             budget = _REMOTE_BYTES_PER_S if remote else _BYTES_PER_S
             with _keys_of(stdin) as keys_fd, Terminal(keys_fd, stdout.fileno()) as terminal:
-                view = TerminalView(watched, look, now, pictures or Path())
-                return _Loop(view, terminal, signals, now, budget, until).run()
+                folder = pictures or Path()
+                shown = TerminalView(watched, look, now, folder) if view is None else view(look, now, folder)
+                return _Loop(shown, terminal, signals, now, budget, until).run()
     finally:
         watched.stop()
 
@@ -124,6 +128,11 @@ class TerminalView:
             self._shown = replace(self._shown, remark="")
         shown = replace(self._shown, alarm_spans=self._spans)
         return compose(self._state, columns, rows, self.look, shown)
+
+    def show_another(self, memory: AlarmMemory) -> None:
+        """Another stream is shown from now on, whose alarms are in this memory; what was said of the last one is gone."""
+        self._memory = memory
+        self._shown = replace(self._shown, rail=None, held=False, entry=None, remark="")
 
     def press(self, key: str) -> None:
         """Do what a key means."""
@@ -334,17 +343,28 @@ class _Loop:
             self._due = 0.0
 
 
-def _run_lines(watched: Watched, stdout: TextIO, look: Look, signals: Signals, now: Callable[[], float]) -> int:
+def _line_of(watched: Watched) -> tuple[Sequence[str], bool]:
+    state = watched.state()
+    return [figures_line(state)], state.ended
+
+
+def _run_lines(
+    lines: Callable[[], tuple[Sequence[str], bool]],
+    stdout: TextIO,
+    look: Look,
+    signals: Signals,
+    now: Callable[[], float],
+) -> int:
     """A line of figures a second, for a pipe, a file or a terminal that cannot move its cursor."""
     due = now()
     while True:
-        state = watched.state()
+        texts, ended = lines()
         try:
-            stdout.write(spell(figures_line(state), look.unicode) + "\n")
+            stdout.writelines(spell(text, look.unicode) + "\n" for text in texts)
             stdout.flush()
         except (OSError, ValueError):
             return 0  # nobody reads on
-        if state.ended:
+        if ended:
             return 0
         due = max(due + _LINE_S, now())
         while (pause := due - now()) > 0:

@@ -9,7 +9,10 @@ from monitor.state import LiveState
 from monitor.views.control import (
     ACTIONS,
     DEFAULT_PERSISTENCE,
+    LINK_ACTIONS,
+    Action,
     ActionName,
+    LinkAction,
     persistence_words,
 )
 from monitor.views.diagnosis_wording import PageName
@@ -80,6 +83,8 @@ class Shown:
         What the last key did, in words.
     alarm_spans
         When alarms stood.
+    several
+        There are other links beside this one.
     """
 
     rail: int | None = None
@@ -90,6 +95,7 @@ class Shown:
     entry: str | None = None
     remark: str = ""
     alarm_spans: tuple[AlarmSpan, ...] = ()
+    several: bool = False
 
 
 _AS_STARTED = Shown()
@@ -162,7 +168,7 @@ def _draw_page(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown) -> N
         for number, line in enumerate(lines):
             sheet.write(0, bottom + number, line, inks.text)
     if shown.helping:
-        _draw_help(sheet, inks, top, bottom)
+        _draw_help(sheet, inks, top, bottom, LINK_ACTIONS if shown.several else ())
     else:
         _draw_eye_area(sheet, inks, state, shown, top, left, bottom - top)
         if shown.page == "glance":
@@ -410,6 +416,8 @@ def _draw_keys(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y: i
         if shown.held:
             wanted = [("hold", "go on"), *(pair for pair in wanted if pair[0] != "hold")]
         parts = [(keys[name], words) for name, words in wanted]
+        if shown.several:
+            parts[1:1] = [("PageDown", "next link")]
     x = 0
     if shown.held:
         x = sheet.write(0, y, f" held at {clock(state.snapshot.seconds or state.seconds)} ", inks.held) + 2
@@ -420,8 +428,9 @@ def _draw_keys(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y: i
         x = sheet.write(x + 1, y, words, inks.dim) + 3
 
 
-def _draw_help(sheet: Sheet, inks: Palette, top: int, bottom: int) -> None:
-    actions = [action for action in ACTIONS if not action.window_only and action.name not in _NOT_HERE]
+def _draw_help(sheet: Sheet, inks: Palette, top: int, bottom: int, more: Sequence[LinkAction]) -> None:
+    actions: list[Action | LinkAction] = [*more]
+    actions += [action for action in ACTIONS if not action.window_only and action.name not in _NOT_HERE]
     names = [_key_names(action.keys) for action in actions]
     key_width = max(cells(name) for name in names)
     room = bottom - top

@@ -168,7 +168,7 @@ def draw_history(
     runs = history_runs(state.history, lost, start, end, plot)
     best = state.best.opening_pct if state.best is not None else None
     bottom, top = value_range(runs, best)
-    values = _filled(runs, plot)
+    values = filled_runs(runs, plot)
     times = start + (end - start) * (np.arange(plot) + 0.5) / plot
     sheet.fill(x + gutter, y + 1, plot, height, inks.history)
     if best is not None and bottom < best <= top:
@@ -194,7 +194,7 @@ def draw_history(
     sheet.write(taken + 2, y, text, inks.dim, room, align="right")
 
 
-def _filled(runs: Sequence[Run], plot: int) -> NDArray[np.float64]:
+def filled_runs(runs: Sequence[Run], plot: int) -> NDArray[np.float64]:
     """A value a column: a run's own, and straight between those of one run; NaN elsewhere."""
     values = np.full(plot, math.nan)
     for run in runs:

@@ -32,7 +32,9 @@ from monitor.views.control import (
     ACTIONS,
     MENUS,
     SHELVE_SECONDS,
+    Action,
     ActionName,
+    LinkAction,
     Watched,
     next_rail,
     persistence_words,
@@ -52,6 +54,7 @@ from monitor.views.tone import Tone
 if TYPE_CHECKING:
     from monitor.views.opengl import EyeCover
 
+PainterInUse = Literal["raster", "opengl"]
 PainterName = Literal["auto", "raster", "opengl"]
 
 _SCREEN_PACKAGES = "libxcb-cursor0 libxkbcommon-x11-0 libxcb-icccm4 libxcb-keysyms1 libxcb-image0 libxcb-render-util0"
@@ -111,13 +114,15 @@ class HelpSheet(QWidget):
     def __init__(self, parent: QWidget) -> None:
         super().__init__(parent)
         self.theme: ThemeName = "light"
+        self.actions_told: tuple[Action | LinkAction, ...] = ACTIONS
         self.hide()
 
     def paintEvent(self, event: QPaintEvent) -> None:
         """Draw the list."""
         painter = QPainter(self)
         scale = min(self.width() / 760, self.height() / 520)
-        draw_help(Canvas(painter, find_theme(self.theme), scale), Box(0, 0, self.width(), self.height()))
+        whole = Box(0, 0, self.width(), self.height())
+        draw_help(Canvas(painter, find_theme(self.theme), scale), whole, self.actions_told)
         painter.end()
 
 
@@ -265,6 +270,19 @@ class LiveWindow(QMainWindow):
         if self._choices.theme is not None:
             return self._choices.theme
         return "dark" if QApplication.styleHints().colorScheme() == Qt.ColorScheme.Dark else "light"
+
+    @property
+    def zoom(self) -> float:
+        """How much larger than usual the text is."""
+        return self._choices.zoom
+
+    def show_another(self, memory: AlarmMemory) -> None:
+        """Another stream is shown from now on, whose alarms are in this memory; what was said of the last one is gone."""
+        self._memory, self._marked, self._rail = memory, False, None
+        if self._held:
+            self._hold()
+        if self.name_line.isVisible():
+            self._leave_name()
 
     def say(self, text: str) -> None:
         """Show a remark at the page's foot for some seconds."""
@@ -600,6 +618,19 @@ def run_window(
     From the main thread. ``choices``: the file of the user's choices, ``pictures``: the folder for saved pictures, ``until``: asked at each
     look whether to end. Raises InputError where Qt does not load, no screen answers, or OpenGL was asked for in vain.
     """
+
+    def make(painter: PainterInUse, over: Callable[[], bool]) -> LiveWindow:
+        return LiveWindow(watched, title=title, painter=painter, choices=choices, pictures=pictures, until=over)
+
+    return show_window(make, painter, until)
+
+
+def show_window(
+    make: Callable[[PainterInUse, Callable[[], bool]], LiveWindow],
+    painter: PainterName,
+    until: Callable[[], bool] | None,
+) -> int:
+    """Make a window, given the painter and when to end, and show it until it is closed; see `run_window`."""
     application = _application()
     chosen = choose_painter(painter)
     with Interrupt() as interrupt:
@@ -607,7 +638,7 @@ def run_window(
         def over() -> bool:
             return interrupt.asked or (until is not None and until())
 
-        window = LiveWindow(watched, title=title, painter=chosen, choices=choices, pictures=pictures, until=over)
+        window = make(chosen, over)
         try:
             window.show()
             application.exec()

@@ -276,4 +276,4 @@ def test_every_option_is_in_the_help(capsys):
 
 def test_a_source_that_needs_another_is_told_by_an_error_of_ours():
     with pytest.raises(InputError):
-        watching._opener(parser().parse_args(["watch", "x.wav", "--pace", "0"]))
+        watching._opener(links_of(parser().parse_args(["watch", "x.wav", "--pace", "0"]))[0].parsed)

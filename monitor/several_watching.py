@@ -1,0 +1,211 @@
+"""`lidwatch watch` with several links."""
+
+import argparse
+import threading
+from collections import Counter
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from monitor.errors import InputError, MonitorError
+from monitor.links import LinkArguments, name_links
+from monitor.running import chain_options, link_and_limits, open_capture, open_journal, start_fields
+from monitor.shared_journal import ByLink, LinkJournal
+from monitor.showing import INTERRUPTED, Asked, Telling, default_view
+from monitor.terminal import say
+
+if TYPE_CHECKING:
+    from monitor.alarm_rules import AlarmRule
+    from monitor.capture import Capture
+    from monitor.journal import Journal
+    from monitor.linkfile import LinkOptions
+    from monitor.several import SeveralWatches
+    from monitor.snapshot import Snapshot
+    from monitor.sources.stream import LiveSource
+    from monitor.watch import Watch
+
+
+@dataclass(frozen=True, slots=True)
+class NamedLink:
+    """One link of several: its arguments, what is known of it, its limits and its name."""
+
+    arguments: LinkArguments
+    options: "LinkOptions"
+    rules: "tuple[AlarmRule, ...]"
+    name: str
+
+
+def named_links(several: Sequence[LinkArguments]) -> tuple[NamedLink, ...]:
+    """Read the link files and name the links. Raises InputError."""
+    read = [link_and_limits(one.parsed) for one in several]
+    labels = [one.label for one in several]
+    names = name_links([link.name or "" for link, _ in read], labels)
+    return tuple(
+        NamedLink(one, replace(link, name=name), rules, name)
+        for one, (link, rules), name in zip(several, read, names, strict=True)
+    )
+
+
+def open_captures(
+    parsed: argparse.Namespace, links: Sequence[NamedLink], tell: Callable[[str], None], *, live: bool
+) -> "list[Capture | None]":
+    """What writes the captures of each link, into a folder of its own inside the one asked for. Raises InputError."""
+    if parsed.capture is None:
+        return [None] * len(links)
+    folder: Path = parsed.capture
+    if not folder.parent.is_dir():
+        raise InputError(f"--capture {folder}: there is no folder {folder.parent}; make it first")
+    try:
+        folder.mkdir(exist_ok=True)
+    except OSError as error:
+        raise InputError(f"--capture {folder}: {error.strerror or error}; give another folder") from None
+    captures: list[Capture | None] = []
+    for link in links:
+        own = argparse.Namespace(**{**vars(link.arguments.parsed), "capture": folder / file_name(link.name)})
+        captures.append(open_capture(own, tell, live=live))
+    return captures
+
+
+def file_name(name: str) -> str:
+    """The name as a file's or folder's name."""
+    return "".join(c if c.isalnum() or c in "-_." else "-" for c in name).strip(".") or "link"
+
+
+def watch_several(
+    parsed: argparse.Namespace,
+    several: Sequence[LinkArguments],
+    opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]",
+) -> int:
+    """Watch several links in one view with one journal; returns the exit status. Raises MonitorError before the watch begins.
+
+    ``opener`` gives what opens the source of one link's arguments.
+    """
+    from monitor.several import SeveralWatches
+
+    view = parsed.view or default_view()
+    links = named_links(several)
+    tell = Telling(to_view=view != "none")
+    captures = open_captures(parsed, links, tell, live=True)
+    sink = ByLink({link.name: own for link, own in zip(links, captures, strict=True) if own is not None})
+    with open_journal(parsed, sink, tell, links=True) as journal:
+        running = SeveralWatches(_watches(links, captures, _openers(several, opener), journal, display=view != "none"))
+        tell.attach(running)
+        running.start()
+        told: set[str] = set()
+
+        def say_failure(name: str, error: MonitorError) -> None:
+            told.add(name)
+            say(f"lidwatch: {name}: {error}")
+
+        try:
+            with Asked(noted=view == "window") as asked:
+                status = _show(running, view, parsed, asked, say_failure)
+        finally:
+            running.stop()
+    for name, error in running.failures:
+        if name not in told:
+            say_failure(name, error)
+    return status or max((error.exit_status for _, error in running.failures), default=0)
+
+
+def _watches(
+    links: Sequence[NamedLink],
+    captures: "Sequence[Capture | None]",
+    openers: "Sequence[Callable[[], LiveSource]]",
+    journal: "Journal",
+    *,
+    display: bool,
+) -> "list[tuple[str, Watch]]":
+    from monitor.engine import EngineOptions
+    from monitor.watch import Watch
+
+    lock = threading.Lock()
+    watches: list[tuple[str, Watch]] = []
+    try:
+        for link, capture, open_source in zip(links, captures, openers, strict=True):
+            parsed = link.arguments.parsed
+            options = EngineOptions(
+                window=parsed.window,
+                every_s=parsed.every,
+                stall_s=parsed.stall,
+                rules=link.rules,
+                display=display,
+                chain=replace(chain_options(parsed, link.options), keep_total=False),
+            )
+            watch = Watch(
+                open_source,
+                link.options.wanted(),
+                options,
+                keeper=LinkJournal(journal, link.name, lock),
+                source_text=parsed.source,
+                start_fields=start_fields(parsed.source, link.options, link.rules),
+                for_s=parsed.for_s,
+                tap=capture,
+            )
+            watches.append((link.name, watch))
+            if capture is not None:
+                capture.picture = _picture_of(watch)
+            for warning in watch.warnings:
+                say(f"warning: {link.name}: {warning}")
+    except BaseException:
+        for _, watch in watches:
+            watch.abandon()
+        raise
+    return watches
+
+
+def _picture_of(watch: "Watch") -> "Callable[[], Snapshot | None]":
+    return lambda: watch.state().snapshot
+
+
+def _openers(
+    several: Sequence[LinkArguments], opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]"
+) -> "list[Callable[[], LiveSource]]":
+    """What opens each link's source; links in the same samples share one."""
+    from functools import partial
+
+    from monitor.sources.fan import Fan
+
+    count = Counter(one.stream for one in several)
+    fans = {
+        stream: Fan(opener(next(one.parsed for one in several if one.stream == stream)), links)
+        for stream, links in count.items()
+        if links > 1
+    }
+    taken: Counter[int] = Counter()
+    openers: list[Callable[[], LiveSource]] = []
+    for one in several:
+        if one.stream in fans:
+            openers.append(partial(fans[one.stream].branch, taken[one.stream]))
+            taken[one.stream] += 1
+        else:
+            openers.append(opener(one.parsed))
+    return openers
+
+
+def _show(
+    running: "SeveralWatches",
+    view: str,
+    parsed: argparse.Namespace,
+    asked: Asked,
+    failed: Callable[[str, MonitorError], None],
+) -> int:
+    def over() -> bool:
+        return parsed.for_s is not None and running.over
+
+    if view == "window":
+        from monitor.views.tile_window import run_tiles
+
+        title = f"lidwatch: {len(running.several().links)} links"
+        status = run_tiles(running, painter=parsed.painter, title=title, until=lambda: asked.yet or over())
+        return INTERRUPTED if asked.yet else status
+    if view == "terminal":
+        from monitor.views.terminal_tiles import run_terminal_tiles
+
+        return run_terminal_tiles(running, until=over)
+    try:
+        running.wait(failed)
+    except KeyboardInterrupt:
+        return INTERRUPTED
+    return 0
