@@ -14,6 +14,7 @@ import zmq.auth
 from monitor import showing, watching
 from monitor.cli import main, parser
 from monitor.errors import InputError
+from monitor.links import links_of
 from tests.monitor.recordings import QPSK, RAW, one_line, qpsk, raw, run_program, start_program
 from tests.monitor.sending import frame
 from tests.monitor.sources.conftest import senders
