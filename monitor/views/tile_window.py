@@ -16,6 +16,9 @@ from monitor.views.tiles import TileImage, arrange_tiles
 from monitor.views.window import LEAST_SIZE, LiveWindow, PainterInUse, PainterName, logical_rect, show_window
 
 
+_QT_KEYS = {"PageUp": "PgUp", "PageDown": "PgDown"}
+
+
 class TileStrip(QWidget):
     """The tiles; a click brings a link to the front."""
 
@@ -112,7 +115,7 @@ class TileWindow(LiveWindow):
         }
         for entry in LINK_ACTIONS:
             action = QAction(entry.words, self)
-            action.setShortcuts([QKeySequence(key) for key in entry.keys])
+            action.setShortcuts([QKeySequence(_QT_KEYS.get(key, key)) for key in entry.keys])
             action.setStatusTip(entry.what)
             action.triggered.connect(self._then_refresh(does[entry.name]))
             menu.addAction(action)
