@@ -16,6 +16,7 @@ from monitor.arguments import (
 )
 from monitor.errors import InputError, MonitorError
 from monitor.key_command import add_key_arguments
+from monitor.probing import add_probe_arguments
 from monitor.replay import INTERRUPTED, discard_standard_output, replay
 from monitor.running import add_capture_options
 from monitor.showing import add_view_options
@@ -111,6 +112,15 @@ def parser() -> argparse.ArgumentParser:
         allow_abbrev=False,
     )
     add_watch_arguments(live)
+    look = commands.add_parser(
+        "probe",
+        help="say what link there is",
+        description="Listens to a few seconds and says what the link is: symbol rate, scheme, pulse, carrier, SNR, each with how "
+        "sure that is and what else it might be; of several links the strongest first.",
+        epilog="Exit status: 0 a link; 2 source or arguments unusable; 3 no link; 130 interrupted.",
+        allow_abbrev=False,
+    )
+    add_probe_arguments(look)
     pair = commands.add_parser(
         "keys",
         help="make keys for an encrypted stream",

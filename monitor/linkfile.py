@@ -3,6 +3,7 @@
 import io
 import math
 import tomllib
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, fields, replace
 from pathlib import Path
 from typing import Any, Final
@@ -104,6 +105,46 @@ def read_link_file(path: Path) -> LinkFile:
     if not isinstance(alarms, list) or not all(isinstance(alarm, dict) for alarm in alarms):
         raise InputError(f"{where}: alarms must be tables; write each as [[alarm]]")
     return LinkFile(_link_of(table, path, where), tuple(alarms))
+
+
+def link_file_text(
+    options: LinkOptions,
+    *,
+    head: Sequence[str] = (),
+    remarks: Mapping[str, str] | None = None,
+    example_alarms: Sequence[Mapping[str, str | float]] = (),
+) -> str:
+    """A link file that `read_link_file` reads back as ``options``.
+
+    ``head`` stands above as comments, ``remarks`` behind the keys they are about, ``example_alarms`` as comments that need only their
+    signs taken away.
+    """
+    remarks = remarks or {}
+    lines = [f"# {_one_line(text)}" for text in head]
+    lines.append("[link]")
+    for key in (*_TEXTS[:1], *_NUMBERS[:1], *_TEXTS[1:3], *_NUMBERS[1:2], *_TEXTS[3:], *_NUMBERS[2:]):
+        value = getattr(options, key)
+        if value is not None:
+            remark = remarks.get(key)
+            lines.append(f"{key} = {_toml(value)}" + (f"  # {_one_line(remark)}" if remark else ""))
+    if example_alarms:
+        lines += ["", "# Limits, for you to think about: take the signs away from those that you want."]
+    for alarm in example_alarms:
+        lines += ["# [[alarm]]", *(f"# {key} = {_toml(value)}" for key, value in alarm.items()), ""]
+    return "\n".join(lines).rstrip("\n") + "\n"
+
+
+def _one_line(text: str) -> str:
+    return "".join(c if c.isprintable() else " " for c in " ".join(text.split()))
+
+
+def _toml(value: str | float) -> str:
+    if not isinstance(value, str):
+        return repr(value) if isinstance(value, int) or value != int(value) or abs(value) >= 1e15 else f"{value:.1f}"
+    escaped = "".join(
+        c if c.isprintable() and c not in '"\\' else f"\\{c}" if c in '"\\' else f"\\U{ord(c):08x}" for c in value
+    )
+    return f'"{escaped}"'
 
 
 def _link_of(table: dict[str, Any], path: Path, where: str) -> LinkOptions:

@@ -15,7 +15,6 @@ from monitor.views.theme import ThemeName
 from monitor.views.tiles import TileImage, arrange_tiles
 from monitor.views.window import LEAST_SIZE, LiveWindow, PainterInUse, PainterName, logical_rect, show_window
 
-
 _QT_KEYS = {"PageUp": "PgUp", "PageDown": "PgDown"}
 
 
