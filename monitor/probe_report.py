@@ -38,7 +38,7 @@ def text(heard: Heard, findings: Findings) -> Iterator[str]:
             sure = "" if confidence is None else f"{plain(100 * confidence, 0)} %"
             yield f"  {label:{_LABEL}}{value:{_VALUE}}{sure:>{_SURE}}  {other}".rstrip()
         for note in found.notes:
-            yield printable(f"  note: {note}")
+            yield "  " + printable(f"note: {note}")
 
 
 def _sample_words(heard: Heard, findings: Findings) -> list[str]:
@@ -91,7 +91,7 @@ def _rows(found: FoundLink) -> Iterator[tuple[str, str, float | None, str]]:
 
 def _decimals(found: FoundLink) -> int:
     """A carrier is told to a hundred-thousandth of the symbol rate or so."""
-    return min(max(4 - math.floor(math.log10(max(found.symbol_rate_hz.value, 1.0))), 0), 3)
+    return min(max(5 - math.floor(math.log10(max(found.symbol_rate_hz.value, 1.0))), 0), 3)
 
 
 def _rate_text(rate_hz: float) -> str:
