@@ -6,7 +6,7 @@ import signal
 import sys
 import threading
 from collections.abc import Callable
-from typing import TYPE_CHECKING, Any, Self
+from typing import TYPE_CHECKING, Any, Protocol, Self
 
 from monitor.running import open_capture, open_journal, start_fields
 from monitor.terminal import say
@@ -22,14 +22,22 @@ VIEWS = ("window", "terminal", "none")
 SWITCH_S = 0.0005  # view and chain take turns: with the usual 5 ms each waits for the other at every array operation
 
 
+class Noting(Protocol):
+    """What shows notes on its view."""
+
+    def note(self, text: str) -> None:
+        """Something the user should see."""
+        ...
+
+
 class Telling:
     """Notices of what runs beside the watch: on the view where there is one, else on standard error. Called from any thread."""
 
     def __init__(self, *, to_view: bool) -> None:
         self._to_view = to_view
-        self._running: Watch | None = None
+        self._running: Noting | None = None
 
-    def attach(self, running: "Watch") -> None:
+    def attach(self, running: Noting) -> None:
         """From now on there is a view."""
         self._running = running
 

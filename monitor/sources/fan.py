@@ -7,11 +7,14 @@ from collections.abc import Callable
 from monitor.sources.stream import LiveSource
 from monitor.sources.wire import Item
 
+_MOST_WAITING = 64
+
 
 class Fan:
     """Opens a source with its first branch and closes it with its last; whichever branch is asked first asks the source.
 
-    The source is used by one thread at a time, not always the same one. What a branch has not taken waits for it: each needs a reader.
+    The source is used by one thread at a time, not always the same one. What a branch has not taken waits for it: each needs a reader. A
+    patient source is not asked while much waits for any of them.
     """
 
     def __init__(self, open_source: Callable[[], LiveSource], branches: int) -> None:
@@ -44,11 +47,15 @@ class Fan:
             if not queue and self._asking:
                 self._changed.wait(timeout_s)
             if len(queue) or self._asking:
-                return _emptied(queue)
+                return self._emptied(queue)
             if self._failure is not None:
                 raise self._failure
-            source, self._asking = self._source, True
-        assert source is not None
+            source = self._source
+            assert source is not None
+            if source.patient and any(other is not None and len(other) >= _MOST_WAITING for other in self._waiting):
+                self._changed.wait(timeout_s)
+                return ()
+            self._asking = True
         items: tuple[Item, ...] = ()
         failure: BaseException | None = None
         try:
@@ -65,7 +72,7 @@ class Fan:
             self._changed.notify_all()
             if failure is not None and not queue:
                 raise failure
-            return _emptied(queue)
+            return self._emptied(queue)
 
     def over(self, number: int) -> bool:
         """Whether no more will come for a branch."""
@@ -73,10 +80,17 @@ class Fan:
             queue = self._waiting[number]
             return queue is None or (self._source is not None and self._source.ended and not queue and not self._asking)
 
+    def _emptied(self, queue: "deque[Item]") -> tuple[Item, ...]:
+        items = tuple(queue)
+        queue.clear()
+        self._changed.notify_all()
+        return items
+
     def leave(self, number: int) -> None:
         """A branch wants no more; the last one closes the source."""
         with self._changed:
             self._waiting[number] = None
+            self._changed.notify_all()
             if any(queue is not None for queue in self._waiting):
                 return
             # nobody is left to ask it
@@ -85,15 +99,9 @@ class Fan:
             source.close()
 
 
-def _emptied(queue: "deque[Item]") -> tuple[Item, ...]:
-    items = tuple(queue)
-    queue.clear()
-    return items
-
-
 class _Branch(LiveSource):
     def __init__(self, fan: Fan, number: int, source: LiveSource) -> None:
-        self.uri = source.uri
+        self.uri, self.patient = source.uri, source.patient
         # told once, not by every branch
         self.warnings = source.warnings if number == 0 else ()
         self._fan = fan

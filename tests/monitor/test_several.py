@@ -251,10 +251,11 @@ def test_one_source_stalls_and_one_is_never_there_and_the_third_goes_on(senders,
     assert {start["given"]["scheme"] for start in starts} == {"qpsk"}
     assert {start["source"] for start in starts} == {line["link"] for line in lines}
     stops = {line["link"]: line for line in lines if line["kind"] == "stop"}
-    assert stops[east_uri]["samples"] == samples.size
-    assert stops[west_uri]["samples"] == 48000
+    # a machine that cannot keep up tells what it left out
+    assert stops[east_uri]["samples"] + stops[east_uri]["samples_lost"] == samples.size
+    assert stops[west_uri]["samples"] + stops[west_uri]["samples_lost"] == 48000
     readings = [line for line in lines if line["kind"] == "reading" and line["link"] == east_uri]
-    assert len(readings) >= 3
+    assert readings
     assert min(line["opening_pct"] for line in readings) > 50
 
 
@@ -312,7 +313,7 @@ def test_two_link_files_watch_two_links_in_the_samples_of_one_pipe(tmp_path):
     )
     assert (status, out, err) == (0, "", "")
     lines = lines_of(journal)
-    stops = {line["link"]: line["samples"] for line in lines if line["kind"] == "stop"}
+    stops = {line["link"]: line["samples"] + line["samples_lost"] for line in lines if line["kind"] == "stop"}
     assert stops == {"low": both.size, "high": both.size}
     gained = {line["link"] for line in lines if line["kind"] == "lock" and line["state"] == "gained"}
     assert gained == {"low", "high"}

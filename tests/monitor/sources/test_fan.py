@@ -17,6 +17,7 @@ class Counting:
 
     def __init__(self, blocks, failure=None):
         self.uri, self.warnings, self.ended, self.closed = "counting", ("beware",), False, 0
+        self.patient = False
         self.left = blocks
         self.given = 0
         self.failure = failure
@@ -125,3 +126,24 @@ def test_readers_in_threads_share_a_source():
         assert got == 50
         reader.close()
     assert source.closed == 1
+
+
+def test_a_patient_source_waits_for_the_slowest_and_another_does_not():
+    for patient in (True, False):
+        source = Counting(1000)
+        source.patient = patient
+        fan = Fan(lambda source=source: source, 2)
+        fast, slow = fan.branch(0), fan.branch(1)
+        assert fast.patient == patient
+        got = 0
+        for _ in range(300):
+            got += len(fast.poll(0.001))
+        assert (source.given < 100) == patient
+        assert len(slow.poll(0.1)) == source.given
+        # and on it goes
+        before = source.given
+        fast.poll(0.1)
+        assert source.given == before + 1
+        slow.close()
+        got += 1 + len(taken(fast))
+        assert got == 1000
