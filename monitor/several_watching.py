@@ -1,6 +1,7 @@
 """`lidwatch watch` with several links."""
 
 import argparse
+import sys
 import threading
 from collections import Counter
 from collections.abc import Callable, Sequence
@@ -12,7 +13,7 @@ from monitor.errors import InputError, MonitorError
 from monitor.links import LinkArguments, name_links
 from monitor.running import chain_options, link_and_limits, open_capture, open_journal, start_fields
 from monitor.shared_journal import ByLink, LinkJournal
-from monitor.showing import INTERRUPTED, Asked, Telling, default_view
+from monitor.showing import INTERRUPTED, SWITCH_S, Asked, Telling, default_view
 from monitor.terminal import say
 
 if TYPE_CHECKING:
@@ -84,6 +85,10 @@ def watch_several(
     from monitor.several import SeveralWatches
 
     view = parsed.view or default_view()
+    if view == "window":
+        # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
+        import monitor.views.tile_window  # noqa: F401
+    sys.setswitchinterval(SWITCH_S)
     links = named_links(several)
     tell = Telling(to_view=view != "none")
     captures = open_captures(parsed, links, tell, live=True)

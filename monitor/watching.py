@@ -3,7 +3,6 @@
 import argparse
 import os
 from collections.abc import Callable
-from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.arguments import (
@@ -17,6 +16,7 @@ from monitor.arguments import (
 )
 from monitor.errors import InputError
 from monitor.links import links_of
+from monitor.live_source import add_socket_options, live_opener
 from monitor.running import add_capture_options, chain_options, link_and_limits
 from monitor.showing import add_view_options, attend, default_view
 from monitor.terminal import SlowStartNotice
@@ -34,15 +34,7 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
         help="tcp://HOST:PORT, ipc://PATH, audio:NAME, a recording, or - for standard input; each is a link",
     )
     add_form_options(parser.add_argument_group("the samples"))
-    socket = parser.add_argument_group("the socket")
-    socket.add_argument("--socket", choices=("sub", "pull"), default="sub", help="ZeroMQ pattern (default sub)")
-    socket.add_argument("--bind", action="store_true", help="bind the address instead of connecting to it")
-    socket.add_argument("--topic", action="append", metavar="TEXT", help="subscribe to messages that begin with this")
-    socket.add_argument("--key", type=Path, metavar="FILE", help="own NAME.key_secret: the stream is encrypted (CURVE)")
-    socket.add_argument("--server-key", type=Path, metavar="FILE", help="the sender's NAME.key, to connect with --key")
-    socket.add_argument(
-        "--client-keys", type=Path, metavar="FOLDER", help="NAME.key files of who may connect, with --bind"
-    )
+    add_socket_options(parser)
     add_link_options(parser)
     measure = parser.add_argument_group("how to watch")
     measure.add_argument(
@@ -116,30 +108,13 @@ def watch(parsed: argparse.Namespace) -> int:
 
 def _opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":
     """What opens the source, in the thread that will own it."""
-    from monitor.sources import SampleOptions
-
-    samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq)
-    source: str = parsed.source
-    if source.startswith(("tcp://", "ipc://")):
-        from monitor.sources.keys import Curve
-        from monitor.sources.stream import StreamOptions, open_stream
-
-        if parsed.key is None and (parsed.server_key or parsed.client_keys):
-            raise InputError("--server-key and --client-keys go with --key, the own secret key")
-        curve = Curve(parsed.key, parsed.server_key, parsed.client_keys) if parsed.key is not None else None
-        stream = StreamOptions(parsed.rate, parsed.format, parsed.socket, parsed.bind, parsed.topic or "", curve)
-        return lambda: open_stream(source, stream)
-    if source == "-":
-        from monitor.sources.stdin import StdinSource
-
-        return lambda: StdinSource(parsed.rate, parsed.format)
-    if source.startswith("audio:"):
-        from monitor.sources.audio import AudioSource
-
-        return lambda: AudioSource(source, samples)
-    from monitor.sources import open_source
+    from monitor.sources import SampleOptions, open_source
+    from monitor.sources.live import is_live
     from monitor.sources.paced import PacedSource
 
+    if is_live(parsed.source):
+        return live_opener(parsed)
     if not parsed.pace:
         raise InputError("--pace 0: a recording without pace is for lidwatch replay")
-    return lambda: PacedSource(open_source(source, samples), parsed.pace)
+    samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq)
+    return lambda: PacedSource(open_source(parsed.source, samples), parsed.pace)

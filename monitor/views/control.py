@@ -176,8 +176,8 @@ class LinkAction:
 
 
 LINK_ACTIONS: tuple[LinkAction, ...] = (
-    LinkAction("next link", ("PageDown",), "Next link", "bring it to the front, and keep it there"),
-    LinkAction("previous link", ("PageUp",), "Previous link", "bring it to the front, and keep it there"),
+    LinkAction("next link", (".",), "Next link", "bring it to the front, and keep it there"),
+    LinkAction("previous link", (",",), "Previous link", "bring it to the front, and keep it there"),
     LinkAction("worst link", ("W",), "Worst link in front", "whichever it is from now on"),
 )
 

@@ -417,7 +417,7 @@ def _draw_keys(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y: i
             wanted = [("hold", "go on"), *(pair for pair in wanted if pair[0] != "hold")]
         parts = [(keys[name], words) for name, words in wanted]
         if shown.several:
-            parts[1:1] = [("PageDown", "next link")]
+            parts[1:1] = [(LINK_ACTIONS[0].keys[0], "next link")]
     x = 0
     if shown.held:
         x = sheet.write(0, y, f" held at {clock(state.snapshot.seconds or state.seconds)} ", inks.held) + 2

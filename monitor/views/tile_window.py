@@ -1,5 +1,6 @@
 """The window of several live links: a tile each, and below them the whole page of the one in front."""
 
+import time
 from collections.abc import Callable
 from pathlib import Path
 
@@ -15,7 +16,7 @@ from monitor.views.theme import ThemeName
 from monitor.views.tiles import TileImage, arrange_tiles
 from monitor.views.window import LEAST_SIZE, LiveWindow, PainterInUse, PainterName, logical_rect, show_window
 
-_QT_KEYS = {"PageUp": "PgUp", "PageDown": "PgDown"}
+_TILES_S = 0.2
 
 
 class TileStrip(QWidget):
@@ -92,6 +93,7 @@ class TileWindow(LiveWindow):
         self._links = watched
         self._memories = [AlarmMemory() for _ in watched.several().links]
         self._front: int | None = None
+        self._tiles_due = 0.0
         self.setMinimumSize(QSize(LEAST_SIZE.width(), LEAST_SIZE.height() + 150))
         self.strip = TileStrip(self)
         self.strip.picked.connect(self._pick)
@@ -114,7 +116,7 @@ class TileWindow(LiveWindow):
         }
         for entry in LINK_ACTIONS:
             action = QAction(entry.words, self)
-            action.setShortcuts([QKeySequence(_QT_KEYS.get(key, key)) for key in entry.keys])
+            action.setShortcuts([QKeySequence(key) for key in entry.keys])
             action.setStatusTip(entry.what)
             action.triggered.connect(self._then_refresh(does[entry.name]))
             menu.addAction(action)
@@ -136,8 +138,17 @@ class TileWindow(LiveWindow):
         self._links.choose(number)
         self.refresh()
 
+    def _peek(self) -> None:
+        """Look if there is a reason to: the link in front has a new state, or its turn has passed, or the tiles' time has come."""
+        now = time.monotonic()
+        if now >= self._tiles_due or self._links.several().front != self._front:
+            self.refresh()
+        else:
+            super()._peek()
+
     def refresh(self) -> None:
         """Take the newest states, and show the one in front."""
+        self._tiles_due = time.monotonic() + _TILES_S
         several = self._links.several()
         for memory, link in zip(self._memories, several.links, strict=True):
             memory.tell(link.state.alarms, link.state.seconds)
