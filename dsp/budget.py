@@ -6,7 +6,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from dsp.error_rate import Modulated, joined, spread_given
+from dsp.error_rate import Decisions, Modulated, joined, spread_given
 from dsp.eye import LAGS
 from dsp.link import Scheme
 from dsp.mixture import Spread, spread
@@ -71,6 +71,16 @@ class LinkModel:
             height = self.levels[rail, 1:] + low[1:] - self.levels[rail, :-1] - high[:-1]
             least = min(least, float((height / spacing).min()))
         return 100.0 * least
+
+    def decisions(self, worth: NDArray[np.float64]) -> Decisions:
+        """Where samples lie for whoever decides in other level units: of these, ``worth`` ``(rails,)`` is one."""
+        rails = range(self.scheme.rails)
+        spreads = []
+        for rail in rails:
+            reach = [one.scaled(float(worth[rail])) for one in self._reach(rail)]
+            spreads.append(tuple(reach * (self.scheme.levels // len(reach))))
+        nominal = np.asarray(self.scheme.rail_levels)
+        return Decisions(self.levels + nominal * (worth[:, None] - 1.0), tuple(spreads), self.scheme.bits)
 
     def _reach(self, rail: int) -> list[Spread]:
         """How each level's samples are spread about its mean; one for all where that is the same."""

@@ -423,6 +423,7 @@ class Chain:
         if self._total is None:
             self._total = EyeSums(self.link.scheme, self._phases)
         self._total.merge(sums)
+        self._total.keep_apart(sums.apart())
 
 
 class LockGuard:

@@ -1,6 +1,7 @@
 """What stands behind a reading's budget and error rate: curves and taps for views and reports. What cannot be known is None."""
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from typing import Literal
 
 import numpy as np
@@ -71,6 +72,7 @@ class Diagnosis:
 
     ``over_time``: BER against the sampling instant, UI about the best one; ``over_threshold``: against the worst eye's
     threshold, level units. ``remarks``: sentences on second causes, at most two; the first sentence is the reading's verdict.
+    ``intervals``: 95 % ones of the reading's figures, by name.
     """
 
     response: Response | None = None
@@ -86,3 +88,4 @@ class Diagnosis:
     compression_db: float | None = None
     am_pm_deg: float | None = None
     remarks: tuple[str, ...] = ()
+    intervals: Mapping[str, tuple[float, float]] = field(default_factory=dict)

@@ -18,7 +18,7 @@ from dsp.mixture import Spread, spread
 
 _PATTERNS = 1024  # data patterns that are told apart where the noise depends on them
 _NEGLIGIBLE = 0.01  # share of the noise variance that may as well be everywhere the same
-_CURVE = 64  # steps of a curve
+_CURVE = 48  # steps of a curve
 
 
 @dataclass(frozen=True, slots=True)

@@ -25,6 +25,9 @@ EARLIEST, LATEST = -8, 12  # lags of the pattern response: symbols still to come
 LAGS = LATEST - EARLIEST + 1
 HALO = 16  # symbols on either side that a symbol's sums look at
 CROSSING_BINS = 2048
+MOST_GROUPS = 10  # stretches of a window whose small sums are kept apart, for the figures' intervals
+FEWEST_APART = 256  # symbols of such a stretch
+WINDOWS_APART = 8  # windows of a run that are kept apart in stretches; each later one is a stretch itself
 RUN = 256  # symbols in a row that are drawn, or left out, where not all are
 _AROUND = {2: (-5, -4, -3, -2, -1, 0, 2, 3), 3: (-2, -1, 0, 2), 4: (-2, -1, 0, 2), 8: (-1, 0, 2)}
 
@@ -64,15 +67,17 @@ class LineSums:
         row = np.array([k.size, k.sum(), d.sum(), k @ k, k @ d, d @ d], dtype=np.float64)
         self.sums[segment] = self.sums.get(segment, np.zeros(6)) + row
 
-    def merge(self, other: LineSums) -> None:
-        """Add another's points."""
+    def merge(self, other: LineSums, sign: int = 1) -> None:
+        """Add another's points, or with ``sign`` -1 take them away."""
         for segment, row in other.sums.items():
-            self.sums[segment] = self.sums.get(segment, np.zeros(6)) + row
+            self.sums[segment] = self.sums.get(segment, np.zeros(6)) + sign * row
 
     def line(self) -> tuple[float, float, float] | None:
         """Common slope, mean of d, and rms about the lines; None for fewer than 3 points."""
         sxx = sxy = syy = count = total = 0.0
         for n, k, d, kk, kd, dd in self.sums.values():
+            if n < 1:
+                continue
             sxx += kk - k * k / n
             sxy += kd - k * d / n
             syy += dd - d * d / n
@@ -82,6 +87,12 @@ class LineSums:
             return None
         slope = sxy / sxx
         return slope, total / count, float(np.sqrt(max(syy - slope * sxy, 0.0) / count))
+
+
+_ADDED = (
+    "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums",
+    "timing_power",
+)  # fmt: skip
 
 
 class EyeSums:
@@ -94,7 +105,9 @@ class EyeSums:
     pair
         Whether the raster's classes are pairs (left level, right level) of one interval; else left and right are kept apart.
     left
-        Shape ``(rails, 64, classes, rows)``, uint64.
+        Shape ``(rails, 64, classes, rows)``, uint32; no columns where there is no ``raster``.
+    middle
+        Traces at the decision instant alone, ``(rails, levels, rows)``; only where there is no raster.
     gram, cross, square
         Normal equations: symbols with symbols ``(k, k)``, with the wave ``(rails, k, phases)``, the wave's energy ``(rails, phases)``;
         the k regressors are the rails' decided levels at all lags, earliest lag first, then a constant 1.
@@ -104,9 +117,11 @@ class EyeSums:
         Summed power spectra of the timing error and how many blocks they are of; see `dsp.jitter.TimingSpectrum`.
     stretches
         Some of the symbols as they are, for what no sum can tell.
+    groups
+        The same symbols in up to 10 stretches, without raster and stretches; empty where they were not kept apart.
     """
 
-    def __init__(self, scheme: Scheme, phases: int) -> None:
+    def __init__(self, scheme: Scheme, phases: int, *, raster: bool = True) -> None:
         self.scheme = scheme
         self.phases = phases
         self.rows = rows_for(scheme)
@@ -115,7 +130,7 @@ class EyeSums:
         classes = levels**2 if self.pair else levels
         self.symbols = 0
         self.drawn = 0
-        self.left = np.zeros((rails, COLUMNS, classes, self.rows.count), np.uint32)
+        self.left = np.zeros((rails, COLUMNS if raster else 0, classes, self.rows.count), np.uint32)
         self.right = np.zeros_like(self.left) if not self.pair else None
         regressors = rails * LAGS + 1
         self.gram = np.zeros((regressors, regressors))
@@ -131,28 +146,76 @@ class EyeSums:
         self.residual = ResidualSums(scheme)
         self.timing_power = np.zeros(BLOCK // 2 + 1)
         self.timing_blocks = 0
+        self.middle = np.zeros((rails, levels, 0 if raster else self.rows.count), np.int64)
         self.stretches = Stretches()
+        self.groups: list[EyeSums] = []
         self.clock = LineSums()
         self.carrier = LineSums()
 
     def merge(self, other: EyeSums) -> None:
-        """Add the sums of another stretch of the same link."""
-        self.symbols += other.symbols
-        self.drawn += other.drawn
-        self.left += other.left
-        if self.right is not None and other.right is not None:
-            self.right += other.right
-        self.across += other.across
-        self.timing_blocks += other.timing_blocks
-        self.stretches.merge(other.stretches)
-        for name in (
-            "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums",
-            "timing_power",
-        ):  # fmt: skip
-            getattr(self, name)[...] += getattr(other, name)
-        self.residual.merge(other.residual)
-        self.clock.merge(other.clock)
-        self.carrier.merge(other.carrier)
+        """Add the sums of another stretch of the same link; what it kept apart is left to `keep_apart`."""
+        if self.raster:
+            self.left += other.left
+            if self.right is not None and other.right is not None:
+                self.right += other.right
+            self.stretches.merge(other.stretches)
+        self._add(other, 1)
+
+    def _add(self, other: EyeSums, sign: int) -> None:
+        """Add the small sums of another stretch, or with ``sign`` -1 take them away."""
+        self.symbols += sign * other.symbols
+        self.drawn += sign * other.drawn
+        self.across += sign * other.across
+        self.timing_blocks += sign * other.timing_blocks
+        for name in _ADDED:
+            mine = getattr(self, name)
+            mine += sign * getattr(other, name)
+        if not self.raster:
+            self.middle += sign * other.at_decision()
+        self.residual.merge(other.residual, sign)
+        self.clock.merge(other.clock, sign)
+        self.carrier.merge(other.carrier, sign)
+
+    @property
+    def raster(self) -> bool:
+        """Whether there is one, or only what small sums tell."""
+        return self.left.size > 0
+
+    def at_decision(self) -> NDArray[np.int64]:
+        """Traces at the decision instant by rail, level and row, shape ``(rails, levels, rows)``."""
+        return self.histogram(range(COLUMNS, COLUMNS + 1))[:, :, 0] if self.raster else self.middle
+
+    def small(self) -> EyeSums:
+        """All but raster and stretches, a copy."""
+        result = EyeSums(self.scheme, self.phases, raster=False)
+        result._add(self, 1)
+        return result
+
+    def without(self, part: EyeSums) -> EyeSums:
+        """The small sums of all but a stretch of these symbols."""
+        result = self.small()
+        result._add(part, -1)
+        return result
+
+    def apart(self) -> list[EyeSums]:
+        """The small sums of these symbols in stretches, as far as they were kept apart."""
+        rest = self.symbols - sum(group.symbols for group in self.groups)
+        if not rest:
+            return self.groups
+        last = self.small()
+        for group in self.groups:
+            last._add(group, -1)
+        return [*self.groups, last]
+
+    def keep_apart(self, parts: list[EyeSums]) -> None:
+        """Keep small sums that have been added as stretches of their own; neighbours that hold the fewest symbols join."""
+        groups = [*self.groups, *parts]
+        while len(groups) > MOST_GROUPS:
+            pair = min(range(len(groups) - 1), key=lambda i: groups[i].symbols + groups[i + 1].symbols)
+            joined = groups[pair].small()
+            joined._add(groups.pop(pair + 1), 1)
+            groups[pair] = joined
+        self.groups = groups
 
     def histogram(self, columns: range = range(2 * COLUMNS)) -> NDArray[np.int64]:
         """Traces by rail, level, column and row, shape ``(rails, levels, columns, rows)``; column 64 of 128 is the decision instant."""
@@ -206,12 +269,14 @@ class EyeMeter:
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
         self._stretches = 0  # that there were since then
+        self._windows = 0
         self._segment = 0
         self._origin = 0.0
         self._seen = 0  # symbols of this segment
         self._capacity = 0
         self._pending = 0
         self._waves: list[NDArray[np.float32]] = []
+        self._loops = np.zeros((7, 0))
         self._decided = np.zeros((2, 0), np.float32)
         self._classes = np.zeros((2, 0), np.int8)
 
@@ -248,14 +313,11 @@ class EyeMeter:
             pending[:, self._pending : self._pending + n] = wave
         self._decided[:rails, self._pending : self._pending + n] = track.decided[:rails]
         self._classes[:rails, self._pending : self._pending + n] = track.classes[:rails]
-        for power in self._spectrum.push(self._lines(track, n), waves, track.decided[:rails]):
+        self._follow(track, n)
+        late = self._loops[0, self._pending : self._pending + n]
+        for power in self._spectrum.push(late, waves, track.decided[:rails]):
             self.sums.timing_power += power
             self.sums.timing_blocks += 1
-        units = np.zeros((3, 2))
-        units[0], units[1], units[2] = track.gain * n, track.zero * n, n
-        self.sums.unit_sums += units
-        if self._scheme.kind == "carrier" and rails == 1:
-            self.sums.across += float(track.values[1] @ track.values[1])
         self._pending += n
         if self._pending - 2 * HALO >= self._slab:
             self._settle()
@@ -281,35 +343,61 @@ class EyeMeter:
         decided, classes = np.zeros((2, capacity), np.float32), np.zeros((2, capacity), np.int8)
         decided[:, : self._pending] = self._decided[:, : self._pending]
         classes[:, : self._pending] = self._classes[:, : self._pending]
-        self._waves, self._decided, self._classes, self._capacity = waves, decided, classes, capacity
+        loops = np.zeros((7, capacity))
+        loops[:, : self._pending] = self._loops[:, : self._pending]
+        self._waves, self._decided, self._classes, self._loops, self._capacity = (
+            waves,
+            decided,
+            classes,
+            loops,
+            capacity,
+        )
 
-    def _lines(self, track: Track, n: int) -> NDArray[np.float64]:
-        """Add to the lines of clock and carrier; returns how late the instants are against the first one's clock, UI."""
+    def _follow(self, track: Track, n: int) -> None:
+        """What the loops say of the next symbols.
+
+        How late they are against the first one's clock (UI), carrier (cycles), level unit and middle by rail, the idle rail's energy.
+        """
         k = np.arange(self._seen, self._seen + n, dtype=np.float64)
         absolute = track.base + track.instants[:n]
         if self._seen == 0:
             self._origin = float(absolute[0])
-        late = (absolute - self._origin) / self._sps - k
+        rows = self._loops[:, self._pending : self._pending + n]
+        rows[0] = (absolute - self._origin) / self._sps - k
+        if self._scheme.kind == "carrier":
+            rows[1] = track.phases[:n] + (self.extra_turn - self._scheme.rotation) * k
+        rows[2:4], rows[4:6] = track.gain[:, None], track.zero[:, None]
+        if self._scheme.kind == "carrier" and self._scheme.rails == 1:
+            rows[6] = track.values[1].astype(np.float64) ** 2
+        self._seen += n
+
+    def _add_loops(self, first: int, last: int) -> None:
+        late, turned = self._loops[:2, first:last]
+        # symbols of the segment ahead of the first that is pending
+        before = self._seen - self._pending
+        k = np.arange(before + first, before + last, dtype=np.float64)
         self.sums.clock.add(self._segment, k, late)
         if self._scheme.kind == "carrier":
-            self.sums.carrier.add(self._segment, k, track.phases[:n] + (self.extra_turn - self._scheme.rotation) * k)
-        self._seen += n
-        return late
+            self.sums.carrier.add(self._segment, k, turned)
+        self.sums.unit_sums[:2] += self._loops[2:6, first:last].sum(axis=1).reshape(2, 2)
+        self.sums.unit_sums[2] += last - first
+        self.sums.across += float(self._loops[6, first:last].sum())
 
     def _settle(self) -> None:
         """Sum all pending symbols that have their neighbours, window by window."""
         first = HALO
         while (ready := self._pending - HALO - first) > 0:
-            count = min(ready, self._window - self.sums.symbols)
+            count = min(ready, self._window - self.sums.symbols, self._until_apart())
             self._sum(first, count)
             first += count
             if self.sums.symbols == self._window:
+                self._windows += 1
                 self._finished(self.sums)
                 self.sums = EyeSums(self._scheme, self._phases)
         keep = first - HALO
         if keep > 0:
             rest = self._pending - keep
-            pending: tuple[NDArray[Any], ...] = (*self._waves, self._decided, self._classes)
+            pending: tuple[NDArray[Any], ...] = (*self._waves, self._decided, self._classes, self._loops)
             for array in pending:
                 array[:, :rest] = array[:, keep : self._pending].copy()
             self._pending = rest
@@ -317,6 +405,7 @@ class EyeMeter:
     def _sum(self, first: int, count: int) -> None:
         sums, rails = self.sums, self._scheme.rails
         last = first + count
+        self._add_loops(first, last)
         lagged = np.empty((rails * LAGS + 1, count), np.float32)
         for rail in range(rails):
             for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
@@ -371,6 +460,18 @@ class EyeMeter:
         sums.drawn += sum(size for _, size in runs)
         sums.symbols += count
         self._count += count
+        if self._until_apart() <= 0:
+            sums.keep_apart(sums.apart()[len(sums.groups) :])
+
+    def _until_apart(self) -> int:
+        """Symbols until the next stretch of the open window is kept apart.
+
+        Ever longer ones, so that a short recording has its stretches and a long one does not pay for them.
+        """
+        if self._windows >= WINDOWS_APART:
+            return self._window
+        apart = sum(group.symbols for group in self.sums.groups)
+        return apart + max(FEWEST_APART, apart // 8) - self.sums.symbols
 
     def _keep_stretches(self, first: int, last: int) -> None:
         """Keep some of the pending symbols ``first .. last`` with their neighbours."""

@@ -1,8 +1,9 @@
 """From the sums of a window to its reading. Definitions stand beside the code that computes them."""
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,6 +14,7 @@ from dsp.diagnosis import Diagnosis, JitterSplit
 from dsp.equaliser import Equalisers
 from dsp.error_rate import Decisions, over_time, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
+from dsp.intervals import LEAST_STRETCHES, Estimate, jackknife
 from dsp.jitter import periodic_line, sample_response, split_jitter
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
 from dsp.openings import (
@@ -58,9 +60,12 @@ class Context:
 
 
 class Figures:
-    """Figures of one `EyeSums`; the heavier ones are computed when `reading` asks."""
+    """Figures of one `EyeSums`; the heavier ones are computed when `reading` asks.
 
-    def __init__(self, sums: EyeSums, context: Context) -> None:
+    ``like``: taken at the same instant and by the same ways as those figures; sums without a raster need it.
+    """
+
+    def __init__(self, sums: EyeSums, context: Context, *, like: "Figures | None" = None) -> None:
         self._sums = sums
         self._context = context
         self._scheme = sums.scheme
@@ -81,7 +86,12 @@ class Figures:
         self._corner: float | None = None
         if not self.enough:
             return
-        errors = self._bit_errors(0.0)
+        if like is not None:
+            self._tails_counted, self._best, self._corner = like._tails_counted, like._best, like._corner
+            if like._mixtures is not None:
+                self._fit_mixtures()
+            return
+        errors = self._rough_error_rate()
         self._tails_counted = self._drawn >= FULL_CLASS and errors < _TAIL_WHOLE
         if errors > _DECISIONS_RIGHT:
             self._fit_mixtures()
@@ -92,7 +102,7 @@ class Figures:
     def _fit_mixtures(self) -> None:
         """Where decisions are often wrong: scale and noise from the levels' mixture, which knows nothing of decisions."""
         centres = self._sums.rows.centres()
-        column = self._sums.histogram(range(COLUMNS, COLUMNS + 1))[:, :, 0].sum(axis=1).astype(np.float64)
+        column = self._sums.at_decision().sum(axis=1).astype(np.float64)
         model = self._pattern.model(0.0)
         mixtures, isi = [], []
         for rail, counts in enumerate(column):
@@ -226,8 +236,14 @@ class Figures:
         modelled = self._modelled(best, TAIL)
         if not self._tails_counted:
             return modelled
+        if not self._sums.raster:
+            column = COLUMNS
+            middle = self._sums.at_decision()[:, :, None]
+            counted = opening_curves(middle, self._sums.rows, self._gain, self._spacing, TAIL)[:, :, 0]
+        else:
+            counted = self._ragged[:, :, column]
         # the curve may have its peak between two columns: the model tells what lies there
-        return self._ragged[:, :, column] * self._scale() + modelled - self._modelled(_ui(column), TAIL)
+        return counted * self._scale() + modelled - self._modelled(_ui(column), TAIL)
 
     @cached_property
     def _curves(self) -> NDArray[np.float64]:
@@ -269,100 +285,140 @@ class Figures:
     @cached_property
     def _link(self) -> LinkModel:
         """The link at the best instant."""
-        best = _ui(self._best)
+        return self._link_at(_ui(self._best))
+
+    def _link_at(self, ui: float) -> LinkModel:
+        """The link at an instant, with the noise that there is at the best one."""
         counts = self._counts.sum(axis=0)
         units = self._sums.unit_sums[0, : self._scheme.rails] / np.maximum(
             self._sums.unit_sums[2, : self._scheme.rails], 1.0
         )
+        best = self._pattern.model(_ui(self._best))
         return link_model(
-            self._scheme, self._pattern, best, shares=counts / counts.sum(),
+            self._scheme, self._pattern, ui, shares=counts / counts.sum(),
             levels=np.asarray([self._levels(rail) for rail in range(self._scheme.rails)]),
-            noise=self._noise(self._pattern.model(best)), units=units, split=self._split,
+            noise=self._noise(best) / self._worth(ui) ** 2, units=units, split=self._split,
         )  # fmt: skip
+
+    def _worth(self, ui: float) -> NDArray[np.float64]:
+        """What a symbol is worth at ``ui`` over what it is worth at the best instant, shape ``(rails,)``."""
+        model, best = self._pattern.model(ui), self._pattern.model(_ui(self._best))
+        rails = range(self._scheme.rails)
+        return np.asarray([max(abs(model.cursor(r)), 1e-9) / max(abs(best.cursor(r)), 1e-9) for r in rails])
 
     # -- the reading ---------------------------------------------------------------------------------------------------
 
     def reading(self, *, whole: bool = True) -> Reading:
-        """Every figure that can be known from these sums; without ``whole`` all but the equaliser, which takes the longest."""
+        """Every figure that can be known from these sums; without ``whole`` less the equaliser and the intervals, which take longest."""
         opening = self.opening_pct()
         if opening is None:
             return Reading(symbols=self._sums.symbols)
         best = _ui(self._best)
-        model = self._pattern.model(best)
-        noise = self._noise(model)
-        worst_eye = int(np.unravel_index(int(np.argmin(self._openings)), self._openings.shape)[1])
-        half_height = opening / 100.0 * float(self._spacing[worst_eye]) / 2
         slope, tolerance = slope_and_tolerance(self._curves.min(axis=(0, 1)), self._best, opening)
         eyes = self._eyes()
         widths = [eye.width_ui for eye in eyes if eye.width_ui is not None]
-        mer = self._mer_db(best)
-        snr = 10 * math.log10(self._scheme.symbol_energy() / (float(noise.sum()) + self._idle_noise()))
-        crossing = crossings(self._sums)
         periodic_ui, periodic_hz = self._periodic_jitter()
-        clock_ppm, jitter = self._clock()
-        carrier, phase_rms = self._carrier()
-        target = self._context.target_ber
-        at_target = self._link.opening(target)
-        iq_gain, iq_skew = self._iq(model)
-        return Reading(
+        reading = Reading(
             symbols=self._sums.symbols,
-            opening_pct=opening,
-            closure_db=20 * math.log10(100.0 / opening) if opening > 0 else None,
             eyes=eyes,
             width_ui=min(widths) if len(widths) == len(eyes) else None,
             best_instant_ui=self._loop_ui(best if self._corner is None else _ui(self._corner)),
             timing_slope_pct_per_ui=slope,
             timing_tolerance_ui=tolerance,
-            noise_margin_db=20 * math.log10(half_height / math.sqrt(float(noise.max()))) if opening > 0 else None,
-            level_rms_pct=self._thickness_pct(best),
-            crossing_rms_ui=crossing.rms,
-            crossing_pp_ui=crossing.pp,
-            crossing_pattern_pp_ui=crossing.pattern_pp,
-            crossing_random_rms_ui=crossing.random_rms,
-            dcd_ui=crossing.dcd,
+            crossing_pattern_pp_ui=crossings(self._sums).pattern_pp,
             rise_20_80_ui=rise_time(self._sums),
             periodic_jitter_ui=periodic_ui,
             periodic_jitter_hz=periodic_hz,
-            level_linearity=self._linearity(),
-            q=self._q(best),
-            snr_db=snr if mer is not None else None,
-            mer_db=mer,
-            evm_pct=100.0 * 10 ** (-mer / 20) if mer is not None else None,
-            ber=self._bit_errors(best),
-            opening_at_ber_pct=at_target,
-            clock_ppm=clock_ppm,
-            jitter_rms_ui=jitter,
-            carrier_hz=carrier,
-            phase_rms_deg=phase_rms,
-            iq_gain_db=iq_gain,
-            iq_skew_deg=iq_skew,
-            dc_pct=self._dc_pct(),
-            equaliser=self._equaliser() if whole else None,
-            budget=budget(self._link, self._split, target, at_target),
+            budget=budget(self._link, self._split, self._context.target_ber, self._numbers["opening_at_ber_pct"]),
+            **self._numbers,
         )
+        if not whole:
+            return reading
+        opening_range, ber_range = (self.interval(key) or (None, None) for key in ("opening_pct", "ber"))
+        return replace(
+            reading,
+            opening_low_pct=opening_range[0],
+            opening_high_pct=opening_range[1],
+            ber_low=ber_range[0],
+            ber_high=ber_range[1],
+            equaliser=self._equaliser(),
+        )
+
+    @cached_property
+    def _numbers(self) -> dict[str, Any]:
+        """The figures that small sums tell, by their names in a reading."""
+        opening = float(self._openings.min())
+        best = _ui(self._best)
+        model = self._pattern.model(best)
+        noise = self._noise(model)
+        worst_eye = int(np.unravel_index(int(np.argmin(self._openings)), self._openings.shape)[1])
+        half_height = opening / 100.0 * float(self._spacing[worst_eye]) / 2
+        mer = self._mer_db(best)
+        snr = 10 * math.log10(self._scheme.symbol_energy() / (float(noise.sum()) + self._idle_noise()))
+        crossing = crossings(self._sums)
+        clock_ppm, jitter = self._clock()
+        carrier, phase_rms = self._carrier()
+        iq_gain, iq_skew = self._iq(model)
+        return {
+            "opening_pct": opening,
+            "closure_db": 20 * math.log10(100.0 / opening) if opening > 0 else None,
+            "noise_margin_db": 20 * math.log10(half_height / math.sqrt(float(noise.max()))) if opening > 0 else None,
+            "level_rms_pct": self._thickness_pct(best),
+            "crossing_rms_ui": crossing.rms,
+            "crossing_pp_ui": crossing.pp,
+            "crossing_random_rms_ui": crossing.random_rms,
+            "dcd_ui": crossing.dcd,
+            "level_linearity": self._linearity(),
+            "q": self._q(best),
+            "snr_db": snr if mer is not None else None,
+            "mer_db": mer,
+            "evm_pct": 100.0 * 10 ** (-mer / 20) if mer is not None else None,
+            "ber": self._error_rate(),
+            "opening_at_ber_pct": self._link.opening(self._context.target_ber),
+            "clock_ppm": clock_ppm,
+            "jitter_rms_ui": jitter,
+            "carrier_hz": carrier,
+            "phase_rms_deg": phase_rms,
+            "iq_gain_db": iq_gain,
+            "iq_skew_deg": iq_skew,
+            "dc_pct": self._dc_pct(),
+        }
+
+    @cached_property
+    def estimates(self) -> dict[str, Estimate]:
+        """Figures by their names in a reading with their errors; of those that small sums tell, and none for too few symbols."""
+        parts = self._sums.apart()
+        if not self.enough or len(parts) < LEAST_STRETCHES:
+            return {}
+        without = [Figures(self._sums.without(part), self._context, like=self) for part in parts]
+        if not all(figures.enough for figures in without):
+            return {}
+        whole = Figures(self._sums.small(), self._context, like=self)
+        found = jackknife(whole._numbers, [figures._numbers for figures in without], [part.symbols for part in parts])
+        return {key: estimate.about(self._numbers[key]) for key, estimate in found.items()}
+
+    def interval(self, key: str) -> tuple[float, float] | None:
+        """The 95 % interval of the figure of that name; None where it cannot be told."""
+        estimate = self.estimates.get(key)
+        return None if estimate is None else estimate.interval()
 
     def diagnosis(self) -> Diagnosis:
         """What stands behind the reading's budget and error rate; costs more than the reading does."""
         if not self.enough:
             return Diagnosis()
         best = _ui(self._best)
-        decisions = self._decisions(best, best)
         rail, eye = np.unravel_index(int(np.argmin(self._openings)), self._openings.shape)
         circle = self._scheme.name == "8psk"  # whose rails are not decided one by one
         return Diagnosis(
             response=self._pattern.response(best),
-            over_time=over_time(self._bit_errors if circle else self._errors_at, best),
-            over_threshold=None if circle else decisions.over_threshold(int(rail), int(eye)),
+            intervals={key: estimate.interval() for key, estimate in self.estimates.items()},
+            over_time=over_time(self._errors_at, best),
+            over_threshold=None if circle else self._decisions.over_threshold(int(rail), int(eye)),
             jitter=self._jitter_split(),
             equalisers=self._equalisers.trials(),
-            best_thresholds=() if circle else tuple(decisions.best_thresholds().ravel().tolist()),
+            best_thresholds=() if circle else tuple(self._decisions.best_thresholds().ravel().tolist()),
             opening_with_3db_more_pct=self._opening_with(10**-0.3),
         )
-
-    def _errors_at(self, ui: float) -> float:
-        """Error rate at ``ui`` of a receiver whose thresholds stay as they are best at the best instant."""
-        best = _ui(self._best)
-        return self._decisions(ui, best).error_rate(self._decisions(best, best).midpoints())
 
     def _opening_with(self, noise: float) -> float:
         """The least opening that there would be with ``noise`` times the noise variance."""
@@ -464,27 +520,41 @@ class Figures:
         # above this the mixture's levels melt into one and no estimate without known data holds
         return 10 * math.log10(energy / error) if error / energy * float(self._nominal[-1]) ** 2 < 12.0 else None
 
-    def _bit_errors(self, ui: float) -> float:
-        """Semi-analytic error rate of a receiver that decides at ``ui``, its thresholds half-way between the levels there."""
-        decisions = self._decisions(ui, ui)
+    def _error_rate(self) -> float:
+        """Semi-analytic error rate at the best instant, thresholds half-way between the levels."""
         if self._scheme.name == "8psk":
-            return phase_error_rate(self._scheme, decisions.spreads[0][0])
-        return decisions.error_rate(decisions.midpoints())
+            return self._circle_errors(_ui(self._best))
+        return self._decisions.error_rate(self._decisions.midpoints())
 
-    def _decisions(self, ui: float, unit_ui: float) -> Decisions:
-        """Where samples at ``ui`` lie, in level units of ``unit_ui``."""
-        model, unit = self._pattern.model(ui), self._pattern.model(unit_ui)
-        noise = self._noise(unit)
-        shares = self._counts.sum(axis=0) / self._counts.sum()
-        levels = np.empty((self._scheme.rails, self._scheme.levels))
-        spreads = []
-        for rail, variance in enumerate(noise):
-            cursor = max(unit.cursor(rail), 1e-9)
-            own = self._levels(rail)
-            levels[rail] = own + self._nominal * (model.cursor(rail) / cursor - 1.0)
-            reach = spread(model.neighbours(rail) / cursor, self._nominal, shares, math.sqrt(float(variance)))
-            spreads.append((reach,) * self._scheme.levels)
-        return Decisions(levels, tuple(spreads), self._scheme.bits)
+    def _errors_at(self, ui: float) -> float:
+        """Error rate at ``ui`` of a receiver whose thresholds stay as they are at the best instant."""
+        if self._scheme.name == "8psk":
+            return self._circle_errors(ui)
+        return self._link_at(ui).decisions(self._worth(ui)).error_rate(self._decisions.midpoints())
+
+    def _circle_errors(self, ui: float) -> float:
+        """Error rate of points on a circle at ``ui``."""
+        model = self._pattern.model(ui)
+        return phase_error_rate(self._scheme, self._isi(0, model, math.sqrt(float(self._noise(model).mean()))))
+
+    @cached_property
+    def _decisions(self) -> Decisions:
+        """Where samples lie at the best instant."""
+        return self._link.decisions(np.ones(self._scheme.rails))
+
+    def _rough_error_rate(self) -> float:
+        """Error rate at the decision instant with all that is not ISI taken for additive noise."""
+        if self._scheme.name == "8psk":
+            return self._circle_errors(0.0)
+        model = self._pattern.model(0.0)
+        sigmas = np.sqrt(self._noise(model))
+        rails = range(self._scheme.rails)
+        decisions = Decisions(
+            np.asarray([self._levels(rail) for rail in rails]),
+            tuple((self._isi(rail, model, float(sigmas[rail])),) * self._scheme.levels for rail in rails),
+            self._scheme.bits,
+        )
+        return decisions.error_rate(decisions.midpoints())
 
     def _linearity(self) -> float | None:
         """Level separation mismatch ratio. Four levels: IEEE 802.3 Annex 120D.3.1.2 (from memory); more: least over mean spacing."""

@@ -75,6 +75,10 @@ class Spread:
         sigma = self.sigma if isinstance(self.sigma, float) else self.sigma[::-1]
         return Spread(-self.at[::-1], self.share[::-1], sigma)
 
+    def scaled(self, factor: float) -> "Spread":
+        """The same spread in units ``factor`` times smaller."""
+        return Spread(self.at * factor, self.share, self.sigma * factor)
+
     def below(self, limit: float) -> float:
         """Probability of a sample below ``limit``; exact in the far tail."""
         return float(self.share @ ndtr((limit - self.at) / self.sigma))

@@ -66,11 +66,15 @@ class ResidualSums:
         self.constellation = np.zeros((CELLS, CELLS) if scheme.rails == 2 else (0, 0), np.uint32)
         self.reach = 1.6 * max(scheme.rail_levels)
 
-    def merge(self, other: "ResidualSums") -> None:
-        """Add the sums of another stretch of the same link."""
-        self.frames += other.frames
+    def merge(self, other: "ResidualSums", sign: int = 1) -> None:
+        """Add the sums of another stretch of the same link, or with ``sign`` -1 take them away."""
+        self.frames += sign * other.frames
         for name in ("products", "patterns", "square", "points", "power", "constellation"):
-            getattr(self, name)[...] += getattr(other, name)
+            mine = getattr(self, name)
+            if sign > 0:
+                mine += getattr(other, name)
+            else:
+                mine -= getattr(other, name)
 
 
 class ResidualMeter:

@@ -9,7 +9,6 @@ from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import stdtrit
 
 from dsp.acquisition import NotFound
 from dsp.block import Block
@@ -17,8 +16,9 @@ from dsp.chain import Chain, ChainOptions, LockEvent
 from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
-from dsp.figures import Figures, window_opening
+from dsp.figures import Figures
 from dsp.identify import Identified, Wanted
+from dsp.intervals import LEAST_STRETCHES, Estimate, difference
 from dsp.picture import EyeImage
 from dsp.reading import Reading
 from monitor.alarm_rules import AlarmRule, built_in_alarms
@@ -77,19 +77,6 @@ class EngineOptions:
         return self.display or bool(self.rules)
 
 
-@dataclass(slots=True)
-class _Opening:
-    """The opening of the window and how far it may be off, from the scatter of its blocks."""
-
-    value: float
-    error: float
-    blocks: int
-
-    def interval(self) -> tuple[float, float]:
-        reach = float(stdtrit(max(self.blocks - 1, 1), 0.975)) * self.error
-        return self.value - reach, self.value + reach
-
-
 class Engine:
     """Watches one link in one stream.
 
@@ -145,7 +132,7 @@ class Engine:
         self._gaps = Gaps()
         self._locks = Locks()
         self._marks: deque[Mark] = deque(maxlen=64)
-        self._mark_opening: _Opening | None = None
+        self._mark_opening: Estimate | None = None
         self._notices: deque[str] = deque(maxlen=4)
         self._history = History()
         self._best: Reading | None = None
@@ -157,12 +144,11 @@ class Engine:
 
     def _reset_measures(self) -> None:
         self._blocks: deque[EyeSums] = deque(maxlen=BLOCKS)
-        self._openings: deque[float | None] = deque(maxlen=BLOCKS)
         self._block: EyeSums | None = None
         self._reading: Reading | None = None
         self._diagnosis: Diagnosis | None = None
         self._next_diagnosis = 0.0
-        self._opening: _Opening | None = None
+        self._opening: Estimate | None = None
         self._curve: NDArray[np.float64] | None = None
         self._base_image: EyeImage | None = None
         self._density: NDArray[np.float32] | None = None
@@ -425,7 +411,6 @@ class Engine:
         elif not gained:
             self._reading, self._opening, self._diagnosis = None, None, None
             self._blocks.clear()
-            self._openings.clear()
             self._block = None
 
     # -- measuring -----------------------------------------------------------------------------------------------------
@@ -441,7 +426,6 @@ class Engine:
             self._block.merge(sums)
         if self._block.symbols >= self._block_symbols:
             self._blocks.append(self._block)
-            self._openings.append(window_opening(self._block, self._chain.context()))
             self._block = None
         measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
         due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
@@ -457,25 +441,32 @@ class Engine:
             if total is None:
                 total = EyeSums(sums.scheme, sums.phases)
             total.merge(sums)
+            total.keep_apart([sums.small()])
         assert total is not None
         return total
 
     def _judge(self, seconds: float) -> None:
         assert self._chain is not None
         figures = Figures(self._merged(), self._chain.context())
-        reading = figures.reading()
-        self._base_image = figures.image()
-        if self._options.display and seconds >= self._next_diagnosis:
+        told = seconds >= self._next_line
+        looked = self._options.display and seconds >= self._next_diagnosis
+        # what takes long is looked at for a line or for the eyes, and once there is enough for it; in between it stands as it was
+        if told or looked or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
+            reading = figures.reading()
+            self._opening = figures.estimates.get("opening_pct")
+        else:
+            reading = figures.reading(whole=False)
+            if self._reading is not None:
+                reading = replace(reading, equaliser=self._reading.equaliser)
+            if reading.opening_pct is not None and self._opening is not None:
+                self._opening = self._opening.about(reading.opening_pct)
+                low, high = self._opening.interval()
+                reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
+        if looked:
             self._next_diagnosis = seconds + DIAGNOSIS_SECONDS
             self._diagnosis = figures.diagnosis()
-        opening = None
-        values = [value for value in self._openings if value is not None]
-        if reading.opening_pct is not None and len(values) >= 3:
-            error = float(np.std(values, ddof=1)) / math.sqrt(len(values))
-            opening = _Opening(reading.opening_pct, error, len(values))
-            low, high = opening.interval()
-            reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
-        self._reading, self._opening = reading, opening
+        self._base_image = figures.image()
+        self._reading = reading
         self._history.add(seconds, reading.opening_pct)
         if reading.opening_pct is not None and (
             self._best is None or reading.opening_pct > (self._best.opening_pct or -math.inf)
@@ -484,7 +475,7 @@ class Engine:
         sample = self._chain.position
         document = reading_document(reading) or {}
         self._tell_alarms(self.alarms.update(document, seconds, sample))
-        if seconds >= self._next_line:
+        if told:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
             self._emit("reading", sample=sample, **document)
 
@@ -524,7 +515,6 @@ class Engine:
         self._opening = None  # a change is told of what comes from now on
         # what follows is measured on its own, not mixed with what was before the mark
         self._blocks.clear()
-        self._openings.clear()
         self._block = None
         self._emit("mark", name=name, opening_pct=reading.opening_pct if reading else None)
 
@@ -538,7 +528,6 @@ class Engine:
         """Empty the picture and the window."""
         self._density = None
         self._blocks.clear()
-        self._openings.clear()
         self._block = None
 
     def acknowledge(self) -> None:
@@ -613,19 +602,10 @@ class Engine:
         before, now = self._mark_opening, self._opening
         if before is None or now is None or not self._marks:
             return None
-        points = now.value - before.value
-        variance = now.error**2 + before.error**2
-        # Welch and Satterthwaite's degrees of freedom
-        freedom = variance**2 / max(
-            now.error**4 / max(now.blocks - 1, 1) + before.error**4 / max(before.blocks - 1, 1), 1e-300
-        )
-        reach = float(stdtrit(max(freedom, 1.0), 0.975)) * math.sqrt(variance)
-        verdict: Verdict = "no significant change"
-        if points - reach > 0:
-            verdict = "better"
-        elif points + reach < 0:
-            verdict = "worse"
-        return Change(points, points - reach, points + reach, verdict)
+        change = difference(now, before)
+        low, high = change.interval()
+        verdict: Verdict = "better" if low > 0 else "worse" if high < 0 else "no significant change"
+        return Change(change.value, low, high, verdict)
 
     # -- lines ---------------------------------------------------------------------------------------------------------
 

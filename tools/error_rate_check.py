@@ -174,8 +174,58 @@ def check(quick: bool, progress: Callable[[str], None], names: tuple[str, ...] =
             }
 
 
+COVERED = (
+    (Case("AWGN", "qpsk", (14.0,) * 3), 6000),
+    (Case("echo", "qpsk", (18.0,) * 3, more={"echoes": ((1.0, 0.3 + 0.1j),)}), 6000),
+    (Case("echo, closed", "qpsk", (10.0,) * 3, more={"echoes": ((1.0, 0.3 + 0.1j),)}), 10000),
+    (Case("cable, square pulses", "pam2", (20.0,) * 3, "rect", 32.0, {"t_over_tau": 1.5}), 6000),
+    (Case("four levels", "pam4", (22.0,) * 3), 50000),
+    (Case("two levels", "pam2", (18.0,) * 3, more={"echoes": ((1.0, 0.2),)}), 30000),
+    (Case("jitter and phase noise", "16qam", (24.0,) * 3, more={"jitter_rms_ui": 0.02, "phase_noise_deg": 0.2}), 10000),
+)
+LONG = 100  # runs' worth of symbols that the truth is taken from
+
+
+def measured(spec: TransmitSpec) -> Figures | None:
+    """Figures of one transmission."""
+    link = Link(find_scheme(spec.scheme), spec.sample_rate_hz, spec.symbol_rate_hz, spec.pulse)
+    chain = Chain(link, complex_in=not spec.real)
+    for part in transmit_blocks(spec):
+        chain.push(Block(part.samples, part.start))
+    chain.finish()
+    return None if chain.total is None else Figures(chain.total, chain.context())
+
+
+def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] = ()) -> Iterator[dict[str, Any]]:
+    """Share of the runs of each link whose interval held the truth, figure by figure."""
+    for case, symbols in COVERED:
+        if names and case.name not in names:
+            continue
+        long = measured(case.spec(case.snr_db[0], LONG * symbols, 999_999))
+        if long is None:
+            continue
+        truth = long.reading(whole=False)
+        held: dict[str, int] = {}
+        told: dict[str, int] = {}
+        for seed in range(runs):
+            progress(f"{case.name}: run {seed + 1} of {runs}")
+            figures = measured(case.spec(case.snr_db[0], symbols, seed))
+            if figures is None:
+                continue
+            for key, estimate in figures.estimates.items():
+                low, high = estimate.interval()
+                told[key] = told.get(key, 0) + 1
+                held[key] = held.get(key, 0) + (low <= getattr(truth, key) <= high)
+        for key, count in told.items():
+            yield {"case": case.name, "figure": key, "runs": count, "held_pct": 100.0 * held[key] / count}
+
+
 if __name__ == "__main__":
     import sys
 
-    for row in check("quick" in sys.argv, print, tuple(a for a in sys.argv[1:] if a != "quick")):
-        print(row)
+    if sys.argv[1] == "coverage":
+        for row in coverage(int(sys.argv[2]), lambda text: None, tuple(sys.argv[3:])):
+            print(row["case"], row["figure"], row["runs"], f"{row['held_pct']:.1f}", flush=True)
+    else:
+        for row in check("quick" in sys.argv, print, tuple(a for a in sys.argv[1:] if a != "quick")):
+            print(row)
