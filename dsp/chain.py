@@ -19,6 +19,8 @@ from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
 FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
 LOOK_BACK = 1024  # symbols of the newest that are tried by themselves in between
+HOLD_S, HOLD_SYMBOLS = 0.25, 2048  # how long a lock is held behind a gap while the clock is looked for
+LONGEST_GAP_S = 2.0  # behind which a lock is still held
 UNHURRIED_BD = 50_000.0  # up to this symbol rate every sample is searched
 WAVE_PHASES, CORNER_PHASES = 8, 64  # points a symbol at which the wave is kept
 
@@ -108,6 +110,7 @@ class Chain:
         )
         # as often as new symbols fill it, but no more than 25 times a second
         self._look_every = round(max(LOOK_BACK, 0.04 * link.symbol_rate_hz) * self._plan.rail_sps)
+        self._every = self.options.every
         self._lane = lane or AtOnce()
         self._on_window = on_window
         self._on_event = on_event
@@ -135,20 +138,22 @@ class Chain:
         self._total: EyeSums | None = None
         self._sps = self._plan.sps
         self._carrier: float | None = None  # cycles a rail sample, of the first run
+        self._held_from: int | None = None  # the gap over which a lock is held
+        self._hold = round(max(HOLD_S * rate, HOLD_SYMBOLS * link.samples_per_symbol))
         self._slip = SlipCounter(256 if link.symbol_rate_hz < 100_000 else 2048)
         self._begin()
 
     # -- the stream ----------------------------------------------------------------------------------------------------
 
     def push(self, block: Block) -> None:
-        """Take the next block; a gap before it ends the run of symbols and acquisition begins anew."""
+        """Take the next block. Behind a gap a new run of symbols begins; a lock is held over it if the link is found again at once."""
         if block.lost:
             self.gaps += 1
             self.samples_lost += block.lost
-            self._break("samples lost")
-            self._position = block.start
+            self._break("samples lost", hold=block.lost <= LONGEST_GAP_S * self.link.sample_rate_hz)
+            self._position = self._run_began = block.start
         elif not self.samples:
-            self._position = block.start
+            self._position = self._run_began = block.start
         self.samples += block.samples.size
         self.clipped += block.clipped
         self.nonfinite += block.nonfinite
@@ -169,6 +174,12 @@ class Chain:
         if self._meter is not None and self._meter.sums.symbols:
             self._merge(self._meter.sums)
 
+    def draw_every(self, n: int) -> None:
+        """From now on draw one of ``n`` traces only, in runs; what is not drawn is measured all the same."""
+        self._every = n
+        if self._meter is not None:
+            self._meter.every = n
+
     @property
     def total(self) -> EyeSums | None:
         """Sums of all symbols, after `finish`; None if there was never a lock."""
@@ -181,8 +192,8 @@ class Chain:
 
     @property
     def locked(self) -> bool:
-        """Whether the loops run now."""
-        return self._tracker is not None
+        """Whether the loops run now, or are held over a gap."""
+        return self._tracker is not None or self._held_from is not None
 
     def context(self) -> Context:
         """What `dsp.figures.Figures` needs to read this chain's sums."""
@@ -214,6 +225,7 @@ class Chain:
         """A new run: everything with memory starts afresh."""
         self._front = FrontEnd(self.link, self._plan)
         self._tracker: Tracker | None = None
+        self._run_began = self._position
         self._search()
 
     def _search(self) -> None:
@@ -239,6 +251,8 @@ class Chain:
                 self._try()
             elif self._since_look >= self._look_every:
                 self._look_back()
+        if self._tracker is None and self._held_from is not None and self._position - self._run_began > self._hold:
+            self._let_go()
 
     def _look_back(self) -> None:
         """Try the newest samples alone: a link that has just come stands behind a long stretch of none."""
@@ -289,7 +303,9 @@ class Chain:
         self._run_from = self._position - self._kept_samples * front.decimate
         self._matched = filters
         first = self._sample_of(found.start.instant)
-        self._tell(LockEvent("gained", first, f"MER {found.mer_db:.1f} dB"))
+        if self._held_from is None:
+            self._tell(LockEvent("gained", first, f"MER {found.mer_db:.1f} dB"))
+        self._held_from = None
         if self.acquired_at is None:
             self.acquired_at = first
         self._locked_from = first
@@ -304,7 +320,7 @@ class Chain:
                 phases=self._phases,
                 slab=min(max(round(self.link.symbol_rate_hz * 0.01), 64), 2048),
                 window=self.window,
-                every=options.every,
+                every=self._every,
                 finished=self._window_full,
             )
         self._meter.offset_ui = found.start.offset_ui
@@ -355,7 +371,7 @@ class Chain:
                 self._on_track(track)
             meter = self._meter
             assert meter is not None
-            if self.options.every > 1:  # the lane has time to spare
+            if meter.every > 1:  # the lane has time to spare
                 self._lane.do(lambda meter=meter, track=track: meter.push(track, meter.resample(track)))  # type: ignore[misc]
             else:
                 waves = meter.resample(track)
@@ -390,9 +406,7 @@ class Chain:
         self._tracker = None
         if reason != "end of stream":
             self.last_reason = reason
-        meter = self._meter
-        assert meter is not None
-        self._lane.do(lambda: meter.end_segment(keep=self.options.keep_total))
+        self._end_segment(keep=self.options.keep_total)
         self._tell(LockEvent("lost", sample, reason))
 
     def _tell(self, event: LockEvent) -> None:
@@ -400,16 +414,38 @@ class Chain:
         if self._on_event is not None:
             self._on_event(event)
 
-    def _break(self, reason: str) -> None:
-        """End the run of samples: work on what is there, settle the sums, begin afresh."""
+    def _break(self, reason: str, *, hold: bool = False) -> None:
+        """End the run of samples: work on what is there, settle the sums, begin afresh; ``hold``: a lock may last over it."""
         if self._filled:
             self._work(self._buffer[: self._filled].copy())
         if self._tracker is None and self._kept_samples:
             self._try(last=True)
         if self._tracker is not None:
             self._release(0)
-            self._end_run(self._position, reason)
+            if hold:
+                self._held_from = self._position
+                self.locked_samples += max(self._position - self._locked_from, 0)
+                self._tracker = None
+                self._end_segment(keep=True)
+            else:
+                self._end_run(self._position, reason)
+        elif self._held_from is not None and not (
+            hold and self._position - self._held_from <= LONGEST_GAP_S * self.link.sample_rate_hz
+        ):
+            self._let_go()
         self._begin()
+
+    def _let_go(self) -> None:
+        """The link was not found again behind a gap: lock was lost there."""
+        assert self._held_from is not None
+        sample, self._held_from = self._held_from, None
+        self._end_segment(keep=self.options.keep_total)
+        self._tell(LockEvent("lost", sample, "samples lost"))
+
+    def _end_segment(self, *, keep: bool) -> None:
+        meter = self._meter
+        assert meter is not None
+        self._lane.do(lambda: meter.end_segment(keep=keep))
 
     # -- sums ----------------------------------------------------------------------------------------------------------
 

@@ -260,7 +260,7 @@ class EyeMeter:
         self._phases = phases
         self._slab = slab
         self._window = window
-        self._every = every
+        self.every = every  # may be changed at any time
         self._finished = finished
         self.sums = EyeSums(scheme, phases)
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
@@ -484,11 +484,11 @@ class EyeMeter:
 
     def _drawn_runs(self, count: int) -> list[tuple[int, int]]:
         """Start and length of the stretches to draw among the next ``count`` symbols: one of ``every`` runs of `RUN` symbols."""
-        if self._every == 1:
+        if self.every == 1:
             return [(0, count)]
         runs = []
         for run in range(self._count // RUN, (self._count + count - 1) // RUN + 1):
-            if run % self._every == 0:
+            if run % self.every == 0:
                 start = max(run * RUN - self._count, 0)
                 runs.append((start, min((run + 1) * RUN - self._count, count) - start))
         return runs

@@ -58,8 +58,8 @@ class Tap(Protocol):
 class EngineOptions:
     """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``.
 
-    ``aside`` is where identification runs while a live stream goes on; None: at once, so that a replay repeats itself. ``first`` is a
-    link that was identified before the stream began.
+    ``aside`` is where a link is identified, and diagnosed for the view, while a live stream goes on; None: at once, so that a replay
+    repeats itself. ``first`` is a link that was identified before the stream began.
     """
 
     window: int | None = None
@@ -88,6 +88,8 @@ class Engine:
     ----------
     samples, samples_lost
         Totals of the stream.
+    relief
+        How far work is left out for want of time: 0 none; each step halves the traces drawn and the readings between two lines.
     source_text
         Where the samples come from, for views.
     """
@@ -127,6 +129,7 @@ class Engine:
         self._tick_samples = self._tick_clipped = self._tick_lost = 0
         self._unusable = ""
         self._began_anew = False
+        self.relief = 0
         self._ending: str | None = None
         self._to_the_end = False  # locked until the stream ended
         self._gaps = Gaps()
@@ -147,6 +150,8 @@ class Engine:
         self._block: EyeSums | None = None
         self._reading: Reading | None = None
         self._diagnosis: Diagnosis | None = None
+        self._diagnosing: Future[Diagnosis] | None = None
+        self._coverage_pct: float | None = None
         self._next_diagnosis = 0.0
         self._opening: Estimate | None = None
         self._curve: NDArray[np.float64] | None = None
@@ -386,6 +391,7 @@ class Engine:
             on_window=self._part,
             on_event=self._lock_event,
         )
+        self.relieve(self.relief)
         self._searching = f"{link.scheme.name} at {link.symbol_rate_hz:.6g} Bd"
         head, self._head, self._head_samples = self._head, [], 0
         for block in head:
@@ -409,7 +415,7 @@ class Engine:
         if not gained and self._ending == "end of stream":
             self._to_the_end = True  # the last figures stay
         elif not gained:
-            self._reading, self._opening, self._diagnosis = None, None, None
+            self._reading, self._opening, self._diagnosis, self._diagnosing = None, None, None, None
             self._blocks.clear()
             self._block = None
 
@@ -431,7 +437,8 @@ class Engine:
         due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
         if seconds >= due and measured >= min(LEAST_JUDGED, self._block_symbols):
             # at fixed places of the stream, so that who watches makes no difference to the lines
-            self._next_judge = (seconds // JUDGE_SECONDS + 1) * JUDGE_SECONDS
+            step = JUDGE_SECONDS * 2**self.relief
+            self._next_judge = (seconds // step + 1) * step
             self._judge(seconds)
 
     def _merged(self) -> EyeSums:
@@ -447,7 +454,9 @@ class Engine:
 
     def _judge(self, seconds: float) -> None:
         assert self._chain is not None
-        figures = Figures(self._merged(), self._chain.context())
+        merged = self._merged()
+        self._coverage_pct = 100.0 * merged.drawn / max(merged.symbols, 1)
+        figures = Figures(merged, self._chain.context())
         told = seconds >= self._next_line
         looked = self._options.display and seconds >= self._next_diagnosis
         # what takes long is looked at for a line or for the eyes, and once there is enough for it; in between it stands as it was
@@ -464,7 +473,12 @@ class Engine:
                 reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
         if looked:
             self._next_diagnosis = seconds + DIAGNOSIS_SECONDS
-            self._diagnosis = figures.diagnosis()
+            if self._options.aside is None:
+                self._diagnosis = figures.diagnosis()
+            elif self._diagnosing is None:
+                self._diagnosing = self._options.aside.submit(figures.diagnosis)
+        if self._diagnosing is not None and self._diagnosing.done():
+            self._diagnosis, self._diagnosing = self._diagnosing.result(), None
         self._base_image = figures.image()
         self._reading = reading
         self._history.add(seconds, reading.opening_pct)
@@ -477,7 +491,7 @@ class Engine:
         self._tell_alarms(self.alarms.update(document, seconds, sample))
         if told:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
-            self._emit("reading", sample=sample, **document)
+            self._emit("reading", sample=sample, **document, coverage_pct=self._coverage_pct)
 
     def _draw(self, sums: EyeSums) -> None:
         """Fold a part into the picture; what is older fades by the persistence."""
@@ -542,6 +556,12 @@ class Engine:
         """Something the user should see; the newest few stay on the view."""
         self._notices.append(f"{_clock(self.seconds)} {text}")
 
+    def relieve(self, relief: int) -> None:
+        """Leave out more work or less; see ``relief``."""
+        self.relief = relief
+        if self._chain is not None:
+            self._chain.draw_every(self._options.chain.every << relief)
+
     # -- what is shown -------------------------------------------------------------------------------------------------
 
     def state(self, *, notices: Iterable[str] = (), journal_text: str = "", ended: bool = False) -> LiveState:
@@ -564,7 +584,7 @@ class Engine:
             lock_text="locked" if locked else f"no lock: {self._searching}",
             notes=(),
             seconds=self.seconds,
-            coverage_pct=100.0 / self._options.chain.every,
+            coverage_pct=self._coverage_pct,
         )
         position = chain.position if chain is not None else 0
         return LiveState(

@@ -28,6 +28,9 @@ _PUBLISH_UNSEEN_S = 0.25
 _PIECE_S = 0.05  # what the engine is given at once
 _PIECE_SAMPLES = 65536
 _OLDEST_S = 0.5
+_LATE_S, _PROMPT_S = 0.15, 0.05  # so much waits where work is to be left out, and where it can be taken up again
+_RELIEF_S, _RECOVERY_S = 0.25, 5.0  # at most one step of either in so long
+_MOST_RELIEF = 4
 _JOIN_S = 10.0
 
 
@@ -65,6 +68,7 @@ class Watch:
         self._owed = 0
         self._in_work = 0  # samples of the block that is being worked on
         self._published = 0.0
+        self._late_at = self._stepped_at = 0.0  # when too much waited last; when the work was last changed for it
         self._quiet_since = 0.0
         self._start_fields = dict(start_fields or {})
         self._for_s = for_s
@@ -264,9 +268,27 @@ class Watch:
             except queue.Empty:
                 break
         now = time.monotonic()
+        if engine is not None and not self._reader.patient:
+            self._balance(engine, now)
         if now - self._published >= (_PUBLISH_S if self._options.display else _PUBLISH_UNSEEN_S):
             self._published = now
             self._publish()
+
+    def _waiting_s(self, engine: Engine) -> float:
+        return self._reader.ring.held_s + self._in_work / engine.sample_rate_hz
+
+    def _balance(self, engine: Engine, now: float) -> None:
+        """Leave out work while too much waits, long before samples must be dropped; take it up again when all is prompt."""
+        waiting_s = self._waiting_s(engine)
+        if waiting_s > _PROMPT_S:
+            self._late_at = now
+        if waiting_s > _LATE_S:
+            if engine.relief < _MOST_RELIEF and now - self._stepped_at >= _RELIEF_S:
+                self._stepped_at = now
+                engine.relieve(engine.relief + 1)
+        elif engine.relief and now - max(self._stepped_at, self._late_at) >= _RECOVERY_S:
+            self._stepped_at = now
+            engine.relieve(engine.relief - 1)
 
     def _notice(self, text: str) -> None:
         if self._engine is not None:
@@ -329,8 +351,7 @@ class Watch:
         status = self._keeper.status.text if self._keeper is not None else ""
         if self._engine is not None:
             state = self._engine.state(notices=self._notices, journal_text=status, ended=ended)
-            waiting_s = self._reader.ring.held_s + self._in_work / self._engine.sample_rate_hz
-            self._state = replace(state, behind_s=state.behind_s + waiting_s)
+            self._state = replace(state, behind_s=state.behind_s + self._waiting_s(self._engine))
             return
         self._state = replace(
             self._state,

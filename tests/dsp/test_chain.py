@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from scipy import signal
 
 from dsp.block import Block
-from dsp.chain import LockGuard, SlipCounter
+from dsp.chain import HOLD_S, LockGuard, SlipCounter
 from dsp.eye import RUN, EyeSums
 from dsp.figures import Figures
 from dsp.link import Link, find_scheme
@@ -202,22 +202,47 @@ def test_the_link_itself_does_lock():
 # -- gaps, fades, loss --------------------------------------------------------------------------------------------------
 
 
-def test_after_a_gap_the_link_is_found_again_without_restart():
+def test_a_lock_is_held_over_a_gap_behind_which_the_link_is_found_again():
     sent = send("qpsk", symbols=12_000, snr_db=18.0, carrier_hz=80.0)
     gap = {20_000: 12_345}
     chain = run(link_of("qpsk"), sent.samples, cuts=[1000, 19_000], gaps=gap)
     assert chain.gaps == 1
     assert chain.samples_lost == 12_345
     states = [event.state for event in chain.events]
-    assert states == ["gained", "lost", "gained", "lost"]
-    assert chain.events[1].sample == 20_000
-    assert chain.events[2].sample == pytest.approx(20_000 + 12_345, abs=300)
+    assert states == ["gained", "lost"]
+    assert chain.events[1].reason == "end of stream"
     assert chain.total.symbols > 11_000
     reading = Figures(chain.total, chain.context()).reading()
     assert reading.clock_ppm == pytest.approx(0.0, abs=2.0)
     assert reading.carrier_hz == pytest.approx(80.0, abs=1.0)
     assert reading.snr_db == pytest.approx(18.0, abs=0.3)
     assert chain.slips == 0  # a gap is no slip
+
+
+def test_many_gaps_in_a_row_are_one_lock():
+    samples = send("qpsk", symbols=30_000, snr_db=18.0).samples
+    gaps = dict.fromkeys(range(9000, samples.size - 9000, 9000), 40_000)
+    chain = run(link_of("qpsk"), samples, gaps=gaps)
+    assert chain.gaps == len(gaps) >= 5
+    assert [event.state for event in chain.events] == ["gained", "lost"]
+    assert chain.locked_samples > 0.97 * samples.size
+
+
+@pytest.mark.parametrize("lost", [4000, 3 * int(RATE)], ids=["short gap", "long gap"])
+def test_a_lock_ends_at_a_gap_that_only_noise_follows(lost):
+    samples = np.concatenate((send("qpsk", symbols=6000, snr_db=18.0).samples, noise(3, complex_samples=True)[:24_000]))
+    size = samples.size - 24_000
+    chain = chain_for(link_of("qpsk"), samples)
+    told = []
+    for start in range(0, samples.size, 1000):
+        gap = lost if start == size else 0
+        chain.push(Block(samples[start : start + 1000], start + (lost if start >= size else 0), gap))
+        if not told and len(chain.events) == 2:
+            told.append((start + 1000 - size) / RATE)
+    assert [(event.state, event.sample) for event in chain.events[1:]] == [("lost", size)]
+    assert not chain.locked
+    # behind a long gap at once
+    assert told[0] <= (0.0 if lost > 2 * RATE else HOLD_S + 0.1) + 1000 / RATE
 
 
 FADE = (0.9, 0.35)  # seconds

@@ -77,15 +77,16 @@ def test_the_readings_figures_are_those_of_the_stream():
 # --- what happens to a stream
 
 
-def test_a_gap_is_a_line_an_alarm_and_a_place_in_the_history_and_the_lock_comes_back():
+def test_a_gap_is_a_line_an_alarm_and_a_place_in_the_history_over_which_the_lock_is_held():
     samples = stretches(25.0, 25.0)
     watched = Watched().feed(samples[:48_000]).feed(samples[48_000:], lost=960)
     state = watched.engine.state()
     assert state.samples_lost == 960
     assert state.gaps_s == (48_960 / RATE,)
     assert state.locked
-    assert ("samples lost", "raised") in watched.raised()
-    assert [line[3]["state"] for line in watched.of("lock")] == ["gained", "lost", "gained"]
+    assert watched.raised() == [("samples lost", "raised")]
+    assert [line[3]["state"] for line in watched.of("lock")] == ["gained"]
+    assert len(watched.of("reading")) == 2
     assert watched.engine.position == samples.size + 960
     assert watched.engine.samples == samples.size
 
@@ -95,7 +96,8 @@ def test_lost_samples_before_an_empty_block_are_told_to_the_chain_with_the_next(
     watched = Watched().feed(samples[:48_000])
     watched.engine.feed(Block(samples[:0], 48_000, 500))
     watched.feed(samples[48_000:])
-    assert [line[3]["state"] for line in watched.of("lock")] == ["gained", "lost", "gained"]
+    assert watched.engine._chain.gaps == 1
+    assert watched.engine._chain.samples_lost == 500
     assert watched.engine.position == samples.size + 500
 
 
@@ -384,3 +386,28 @@ def test_wanted_parts_that_are_given_stay_as_given():
     wanted = Wanted(scheme=QPSK_LINK.scheme)
     watched = Watched(wanted).feed(stretches(25.0, 25.0, 25.0))
     assert "qpsk at 12000 Bd" in watched.engine.state().snapshot.link_text
+
+
+# --- what is left out for want of time
+
+
+def test_relief_leaves_out_traces_and_readings_in_between_and_says_so():
+    samples = stretches(*[22.0] * 4)
+    plain, relieved = (Watched(rules=RULES, window=8000).feed(samples[:96_000]) for _ in range(2))
+    relieved.engine.relieve(2)
+    judged = []
+    for watched in (plain, relieved):
+        before = len(watched.engine.state().history)
+        watched.feed(samples[96_000:])
+        judged.append(len(watched.engine.state().history) - before)
+    assert judged[1] <= judged[0] / 2
+    now, then = (watched.of("reading")[-1][3] for watched in (relieved, plain))
+    assert then["coverage_pct"] == 100.0
+    assert now["coverage_pct"] == pytest.approx(25.0, abs=5.0)
+    assert relieved.engine.state().snapshot.coverage_pct == pytest.approx(now["coverage_pct"], abs=2.0)
+    # timing, noise and errors see every symbol all the same
+    assert now["symbols"] == pytest.approx(then["symbols"], rel=0.2)
+    assert now["snr_db"] == pytest.approx(then["snr_db"], abs=0.3)
+    relieved.engine.relieve(0)
+    relieved.feed(samples[48_000:])
+    assert relieved.engine.state().snapshot.coverage_pct == 100.0

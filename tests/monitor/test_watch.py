@@ -115,7 +115,10 @@ def pulling(uri):
 # --- live is replay
 
 
-def test_live_over_a_socket_gives_the_lines_of_the_engine_alone(watching, senders):
+def test_live_over_a_socket_gives_the_lines_of_the_engine_alone(watching, senders, monkeypatch):
+    # what depends on how busy this machine is
+    monkeypatch.setattr("monitor.watch._OLDEST_S", PATIENCE_S)
+    monkeypatch.setattr("monitor.watch._MOST_RELIEF", 0)
     samples = stretches(25.0, 12.0, 25.0)
     options = {"rules": rules("snr_db < 18", hold_s=0.2), "window": 4800}
     push, uri = senders(zmq.PUSH)
@@ -304,6 +307,40 @@ def test_a_watch_that_is_too_slow_drops_samples_counts_them_and_stays_near_the_n
     assert watch.state().samples_lost == stop["samples_lost"]
     # half a second waits at most, and the piece in work
     assert max(behind) < 0.65
+
+
+def test_a_watch_that_is_nearly_too_slow_draws_fewer_traces_before_any_sample_is_lost(watching, monkeypatch):
+    """The work is given as a pretence of time: too much with all traces, enough with half of them."""
+    feed = Engine.feed
+    samples = stretches(25.0, 25.0, 25.0)
+    most = []
+
+    def slow(self, block):
+        time.sleep((1.2 if self.relief == 0 else 0.4) * block.samples.size / self.sample_rate_hz)
+        most.append(self.relief)
+        feed(self, block)
+
+    monkeypatch.setattr(Engine, "feed", slow)
+    monkeypatch.setattr("monitor.watch._RECOVERY_S", 0.3)
+
+    class RealTime(Scripted):
+        def __init__(self):
+            super().__init__((START,), *blocks(samples, 1200))
+            self.began = time.monotonic()
+            self.given = 0
+
+        def poll(self, timeout_s):
+            time.sleep(max(0.0, self.began + self.given * 1200 / RATE - time.monotonic()))
+            self.given += 1
+            return super().poll(timeout_s)
+
+    watch = watching(RealTime)
+    assert watch.wait(PATIENCE_S)
+    assert max(most) >= 1
+    # taken up again when all was prompt
+    assert 0 in most[most.index(1) :]
+    assert watch.lines()[-1]["samples_lost"] == 0
+    assert [line["state"] for line in watch.of("lock")] == ["gained", "lost"]
 
 
 def test_a_long_message_that_a_newer_one_overtakes_is_left_half_done_and_counted(watching, monkeypatch):
