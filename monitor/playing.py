@@ -10,6 +10,7 @@ from monitor.showing import attend, default_view
 
 if TYPE_CHECKING:
     from monitor.alarm_rules import AlarmRule
+    from monitor.engine import EngineOptions
     from monitor.linkfile import LinkOptions
     from monitor.sources import SampleOptions
 
@@ -36,36 +37,48 @@ def play(
     parsed: argparse.Namespace, samples: "SampleOptions", link: "LinkOptions", rules: "tuple[AlarmRule, ...]"
 ) -> Played:
     """Play the recording with its view, journal and captures until its end or until the user ends it. Raises MonitorError."""
-    from dsp.identify import Identified
-    from monitor.engine import EngineOptions
-    from monitor.session import look_ahead
     from monitor.sources import open_source
     from monitor.sources.paced import PacedSource
 
     view = parsed.view or default_view()
-    wanted = link.wanted()
-    first = None
-    if None in (wanted.scheme, wanted.symbol_rate_hz, wanted.pulse):
-        # a recording can be looked at before it is played
-        with open_source(parsed.source, samples) as source:
-            found = look_ahead(source, wanted)
-        first = found if isinstance(found, Identified) else None
-    options = EngineOptions(
-        window=parsed.window,
-        every_s=parsed.every,
-        rules=rules,
-        first=first,
-        display=view != "none",
-        chain=replace(chain_options(parsed, link), keep_total=False),
-    )
     running, status = attend(
         parsed,
         lambda: PacedSource(open_source(parsed.source, samples), parsed.pace),
         link,
-        options,
+        play_options(parsed, samples, link, rules, display=view != "none"),
         view=view,
         live=False,
         # a window keeps its last picture until it is closed
         until=lambda running: view != "window" and running.state().ended,
     )
     return Played(None if running.at_the_end else running.state().seconds, running.alarms, status)
+
+
+def play_options(
+    parsed: argparse.Namespace,
+    samples: "SampleOptions",
+    link: "LinkOptions",
+    rules: "tuple[AlarmRule, ...]",
+    *,
+    display: bool,
+) -> "EngineOptions":
+    """How to watch a recording that is played: what is not given of the link is looked for before. Raises MonitorError."""
+    from dsp.identify import Identified
+    from monitor.engine import EngineOptions
+    from monitor.session import look_ahead
+    from monitor.sources import open_source
+
+    wanted = link.wanted()
+    first = None
+    if None in (wanted.scheme, wanted.symbol_rate_hz, wanted.pulse):
+        with open_source(parsed.source, samples) as source:
+            found = look_ahead(source, wanted)
+        first = found if isinstance(found, Identified) else None
+    return EngineOptions(
+        window=parsed.window,
+        every_s=parsed.every,
+        rules=rules,
+        first=first,
+        display=display,
+        chain=replace(chain_options(parsed, link), keep_total=False),
+    )

@@ -114,6 +114,11 @@ class SeveralWatches:
         return all(watch.wait(0.0) for watch in self._watches)
 
     @property
+    def watches(self) -> tuple[Watch, ...]:
+        """Each of them, in the user's order."""
+        return tuple(self._watches)
+
+    @property
     def failures(self) -> list[tuple[str, MonitorError]]:
         """Those that an error ended."""
         pairs = zip(self._names, self._watches, strict=True)
@@ -125,6 +130,8 @@ class SeveralWatches:
         """The newest state of all."""
         links = tuple(_link_state(name, watch) for name, watch in zip(self._names, self._watches, strict=True))
         front = self._foremost.look(links)
+        for number, watch in enumerate(self._watches):
+            watch.aside = number != front
         return SeveralState(links, front, self._foremost.pinned)
 
     def choose(self, number: int) -> None:

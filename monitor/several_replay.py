@@ -9,15 +9,17 @@ from typing import TYPE_CHECKING
 
 from dsp.block import Block
 from monitor.document import json_text, links_document, text
-from monitor.errors import InputError, MonitorError, printable
+from monitor.errors import InputError, MonitorError, NothingToMeasure, printable
 from monitor.interrupt import Interrupt
 from monitor.judging import Judged
 from monitor.links import LinkArguments
+from monitor.playing import Played, check_pace, play_options
 from monitor.replay import tell
 from monitor.running import chain_options, open_journal
 from monitor.session import Outcome, run
-from monitor.several_watching import NamedLink, named_links, open_captures
+from monitor.several_watching import NamedLink, attend_several, named_links, open_captures
 from monitor.shared_journal import ByLink, LinkJournal
+from monitor.showing import default_view
 from monitor.snapshot import Snapshot
 from monitor.sources import SampleOptions, Source, open_source
 from monitor.terminal import ProgressBar, say
@@ -26,7 +28,9 @@ from monitor.views.wording import plain
 if TYPE_CHECKING:
     from monitor.capture import Capture
     from monitor.document import Json
+    from monitor.engine import EngineOptions
     from monitor.journal import Journal, Keeper
+    from monitor.sources.stream import LiveSource
 
 LIMIT_BROKEN, NOTHING, INTERRUPTED = 1, 3, 130
 
@@ -47,8 +51,17 @@ class LinkOutcome:
 
 
 def replay_several(parsed: argparse.Namespace, several: Sequence[LinkArguments]) -> int:
-    """Measure several links and tell of them; returns the exit status. Raises MonitorError."""
-    found, status = measure_links(parsed, several)
+    """Measure several links, after playing them where a pace is asked for, and tell of them; returns the exit status.
+
+    Raises MonitorError.
+    """
+    for one in several:
+        check_pace(one.parsed)
+    if len({one.stream for one in several}) < len(several) and several[0].parsed.source == "-":
+        raise InputError("standard input can be replayed as one link only; save it to a file, or take lidwatch watch")
+    links = named_links(several)
+    played = play_several(parsed, links) if parsed.pace is not None else None
+    found, status = measure_links(parsed, links, played)
     for link in found:
         if link.failure is not None:
             say(f"lidwatch: {link.name}: {link.failure}")
@@ -60,6 +73,34 @@ def replay_several(parsed: argparse.Namespace, several: Sequence[LinkArguments])
             if link.outcome is not None and not link.outcome.measured:
                 say(f"lidwatch: {link.name}: nothing to measure: {link.outcome.reason}")
     return status
+
+
+def play_several(parsed: argparse.Namespace, links: Sequence[NamedLink]) -> list[Played]:
+    """Play the recordings side by side with their view, journal and captures, until all end or the user ends them. Raises MonitorError."""
+    from monitor.sources.paced import PacedSource
+
+    view = parsed.view or default_view()
+
+    def opener(own: argparse.Namespace) -> "Callable[[], LiveSource]":
+        return lambda: PacedSource(_opened(own), own.pace)
+
+    def options_of(link: NamedLink) -> "EngineOptions":
+        own = link.arguments.parsed
+        return play_options(own, _samples(own), link.options, link.rules, display=view != "none")
+
+    running, status = attend_several(
+        parsed,
+        links,
+        opener,
+        options_of,
+        view=view,
+        live=False,
+        # a window keeps its last picture until it is closed
+        until=lambda running: view != "window" and running.over,
+    )
+    return [
+        Played(None if watch.at_the_end else watch.state().seconds, watch.alarms, status) for watch in running.watches
+    ]
 
 
 def _document(found: Sequence[LinkOutcome]) -> "dict[str, Json]":
@@ -106,27 +147,36 @@ def worst_of(found: Sequence[LinkOutcome]) -> int:
     return min(range(len(found)), key=order)
 
 
-def measure_links(parsed: argparse.Namespace, several: Sequence[LinkArguments]) -> tuple[list[LinkOutcome], int]:
-    """Measure each link in a thread of its own; what came of each, and the exit status. Raises InputError before anything is measured."""
-    if len({one.stream for one in several}) < len(several) and several[0].parsed.source == "-":
-        raise InputError("standard input can be replayed as one link only; save it to a file, or take lidwatch watch")
-    links = named_links(several)
+def measure_links(
+    parsed: argparse.Namespace, links: Sequence[NamedLink], played: Sequence[Played] | None = None
+) -> tuple[list[LinkOutcome], int]:
+    """Measure each link in a thread of its own; what came of each, and the exit status. Raises InputError before anything is measured.
+
+    What was ``played`` has been judged: it is measured as far as it was played.
+    """
     found = [LinkOutcome(link.name) for link in links]
-    judged = any(link.rules for link in links) or any(
-        wish is not None for wish in (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture)
+    unplayed = {number for number, one in enumerate(played or ()) if one.seconds == 0}
+    judged = played is None and (
+        any(link.rules for link in links)
+        or any(wish is not None for wish in (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture))
     )
     with ExitStack() as stack:
         interrupt = stack.enter_context(Interrupt())
-        sources = [stack.enter_context(_opened(link.arguments.parsed)) for link in links]
+        # of what was not played at all nothing is opened: not a sample is no stretch
+        lengths = [one.seconds or None for one in played] if played is not None else [None] * len(links)
+        sources = [
+            stack.enter_context(_opened(link.arguments.parsed, seconds))
+            for link, seconds in zip(links, lengths, strict=True)
+        ]
         journal: Journal | None = None
         captures: list[Capture | None] = [None] * len(links)
         if judged:
             captures = open_captures(parsed, links, lambda text: say(f"warning: {text}"), live=False)
             sink = ByLink({link.name: own for link, own in zip(links, captures, strict=True) if own is not None})
             journal = stack.enter_context(open_journal(parsed, sink, links=True))
-        lengths = [source.info.samples for source in sources]
-        known = [length for length in lengths if length is not None]
-        bar = stack.enter_context(ProgressBar(sum(known) if len(known) == len(lengths) else None))
+        counts = [source.info.samples for source in sources]
+        known = [count for count in counts if count is not None]
+        bar = stack.enter_context(ProgressBar(sum(known) if len(known) == len(counts) else None))
         progress = _Progress(len(links), bar)
         lock = threading.Lock()
         threads = []
@@ -134,11 +184,18 @@ def measure_links(parsed: argparse.Namespace, several: Sequence[LinkArguments]) 
             keeper = LinkJournal(journal, link.name, lock) if journal is not None else None
             task = _Task(link, _Stoppable(source, interrupt), keeper, capture, found[number], progress.of(number))
             threads.append(threading.Thread(target=task.run, name=f"lidwatch {link.name}", daemon=True))
-        _run_all(threads, interrupt)
-    return found, _status(found, links, interrupted=interrupt.asked)
+        _run_all([thread for number, thread in enumerate(threads) if number not in unplayed])
+    for number, (one, own) in enumerate(zip(played or (), found, strict=False)):
+        if number in unplayed:
+            own.failure = NothingToMeasure("nothing to measure: ended before any of it was played")
+        elif own.outcome is not None:
+            own.outcome.alarms = one.alarms
+            own.outcome.interrupted |= one.status != 0
+    interrupted = interrupt.asked or any(one.status for one in played or ())
+    return found, _status(found, links, interrupted=interrupted)
 
 
-def _run_all(threads: Sequence[threading.Thread], interrupt: Interrupt) -> None:
+def _run_all(threads: Sequence[threading.Thread]) -> None:
     for thread in threads:
         thread.start()
     for thread in threads:
@@ -146,9 +203,13 @@ def _run_all(threads: Sequence[threading.Thread], interrupt: Interrupt) -> None:
             thread.join(0.1)
 
 
-def _opened(parsed: argparse.Namespace) -> Source:
-    samples = SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration)
-    return open_source(parsed.source, samples)
+def _samples(parsed: argparse.Namespace) -> SampleOptions:
+    return SampleOptions(parsed.rate, parsed.format, parsed.channels, parsed.iq, parsed.start, parsed.duration)
+
+
+def _opened(parsed: argparse.Namespace, seconds: float | None = None) -> Source:
+    samples = _samples(parsed)
+    return open_source(parsed.source, samples if seconds is None else replace(samples, duration_s=seconds))
 
 
 def _status(found: Sequence[LinkOutcome], links: Sequence[NamedLink], *, interrupted: bool) -> int:

@@ -19,7 +19,7 @@ from monitor.terminal import say
 if TYPE_CHECKING:
     from monitor.alarm_rules import AlarmRule
     from monitor.capture import Capture
-    from monitor.journal import Journal
+    from monitor.engine import EngineOptions
     from monitor.linkfile import LinkOptions
     from monitor.several import SeveralWatches
     from monitor.snapshot import Snapshot
@@ -82,19 +82,67 @@ def watch_several(
 
     ``opener`` gives what opens the source of one link's arguments.
     """
-    from monitor.several import SeveralWatches
+    from monitor.engine import EngineOptions
 
     view = parsed.view or default_view()
+
+    def options_of(link: NamedLink) -> EngineOptions:
+        own = link.arguments.parsed
+        return EngineOptions(
+            window=own.window,
+            every_s=own.every,
+            stall_s=own.stall,
+            rules=link.rules,
+            display=view != "none",
+            chain=replace(chain_options(own, link.options), keep_total=False),
+        )
+
+    running, status = attend_several(
+        parsed,
+        named_links(several),
+        opener,
+        options_of,
+        view=view,
+        live=True,
+        for_s=parsed.for_s,
+        until=lambda running: parsed.for_s is not None and running.over,
+    )
+    return status or max((error.exit_status for _, error in running.failures), default=0)
+
+
+def attend_several(
+    parsed: argparse.Namespace,
+    links: Sequence[NamedLink],
+    opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]",
+    options_of: "Callable[[NamedLink], EngineOptions]",
+    *,
+    view: str,
+    live: bool,
+    for_s: float | None = None,
+    until: "Callable[[SeveralWatches], bool]",
+) -> "tuple[SeveralWatches, int]":
+    """What `monitor.showing.attend` does for one link, for several; an error that ends one of them is told, not raised."""
+    from monitor.several import SeveralWatches
+
     if view == "window":
         # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
         import monitor.views.tile_window  # noqa: F401
     sys.setswitchinterval(SWITCH_S)
-    links = named_links(several)
     tell = Telling(to_view=view != "none")
-    captures = open_captures(parsed, links, tell, live=True)
+    captures = open_captures(parsed, links, tell, live=live)
     sink = ByLink({link.name: own for link, own in zip(links, captures, strict=True) if own is not None})
     with open_journal(parsed, sink, tell, links=True) as journal:
-        running = SeveralWatches(_watches(links, captures, _openers(several, opener), journal, display=view != "none"))
+        lock = threading.Lock()
+        watches: list[tuple[str, Watch]] = []
+        try:
+            for link, capture, open_source in zip(links, captures, _openers(links, opener), strict=True):
+                keeper = LinkJournal(journal, link.name, lock)
+                watches.append((link.name, _watch(link, options_of(link), open_source, keeper, capture, for_s)))
+        except BaseException:
+            for _, watch in watches:
+                watch.abandon()
+            raise
+        running = SeveralWatches(watches)
         tell.attach(running)
         running.start()
         told: set[str] = set()
@@ -105,59 +153,41 @@ def watch_several(
 
         try:
             with Asked(noted=view == "window") as asked:
-                status = _show(running, view, parsed, asked, say_failure)
+                status = _show(running, view, parsed, asked, say_failure, lambda: until(running))
         finally:
             running.stop()
     for name, error in running.failures:
         if name not in told:
             say_failure(name, error)
-    return status or max((error.exit_status for _, error in running.failures), default=0)
+    return running, status
 
 
-def _watches(
-    links: Sequence[NamedLink],
-    captures: "Sequence[Capture | None]",
-    openers: "Sequence[Callable[[], LiveSource]]",
-    journal: "Journal",
-    *,
-    display: bool,
-) -> "list[tuple[str, Watch]]":
-    from monitor.engine import EngineOptions
+def _watch(
+    link: NamedLink,
+    options: "EngineOptions",
+    open_source: "Callable[[], LiveSource]",
+    keeper: LinkJournal,
+    capture: "Capture | None",
+    for_s: float | None,
+) -> "Watch":
     from monitor.watch import Watch
 
-    lock = threading.Lock()
-    watches: list[tuple[str, Watch]] = []
-    try:
-        for link, capture, open_source in zip(links, captures, openers, strict=True):
-            parsed = link.arguments.parsed
-            options = EngineOptions(
-                window=parsed.window,
-                every_s=parsed.every,
-                stall_s=parsed.stall,
-                rules=link.rules,
-                display=display,
-                chain=replace(chain_options(parsed, link.options), keep_total=False),
-            )
-            watch = Watch(
-                open_source,
-                link.options.wanted(),
-                options,
-                keeper=LinkJournal(journal, link.name, lock),
-                source_text=parsed.source,
-                start_fields=start_fields(parsed.source, link.options, link.rules),
-                for_s=parsed.for_s,
-                tap=capture,
-            )
-            watches.append((link.name, watch))
-            if capture is not None:
-                capture.picture = _picture_of(watch)
-            for warning in watch.warnings:
-                say(f"warning: {link.name}: {warning}")
-    except BaseException:
-        for _, watch in watches:
-            watch.abandon()
-        raise
-    return watches
+    source = link.arguments.parsed.source
+    watch = Watch(
+        open_source,
+        link.options.wanted(),
+        options,
+        keeper=keeper,
+        source_text=source,
+        start_fields=start_fields(source, link.options, link.rules),
+        for_s=for_s,
+        tap=capture,
+    )
+    if capture is not None:
+        capture.picture = _picture_of(watch)
+    for warning in watch.warnings:
+        say(f"warning: {link.name}: {warning}")
+    return watch
 
 
 def _picture_of(watch: "Watch") -> "Callable[[], Snapshot | None]":
@@ -165,18 +195,19 @@ def _picture_of(watch: "Watch") -> "Callable[[], Snapshot | None]":
 
 
 def _openers(
-    several: Sequence[LinkArguments], opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]"
+    links: Sequence[NamedLink], opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]"
 ) -> "list[Callable[[], LiveSource]]":
     """What opens each link's source; links in the same samples share one."""
     from functools import partial
 
     from monitor.sources.fan import Fan
 
+    several = [link.arguments for link in links]
     count = Counter(one.stream for one in several)
     fans = {
-        stream: Fan(opener(next(one.parsed for one in several if one.stream == stream)), links)
-        for stream, links in count.items()
-        if links > 1
+        stream: Fan(opener(next(one.parsed for one in several if one.stream == stream)), branches)
+        for stream, branches in count.items()
+        if branches > 1
     }
     taken: Counter[int] = Counter()
     openers: list[Callable[[], LiveSource]] = []
@@ -195,10 +226,8 @@ def _show(
     parsed: argparse.Namespace,
     asked: Asked,
     failed: Callable[[str, MonitorError], None],
+    over: Callable[[], bool],
 ) -> int:
-    def over() -> bool:
-        return parsed.for_s is not None and running.over
-
     if view == "window":
         from monitor.views.tile_window import run_tiles
 

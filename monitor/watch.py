@@ -40,6 +40,7 @@ class Watch:
     What views call is safe from any thread.
 
     ``failure`` holds what ended it if that was an error; ``at_the_end`` is true when the source ended by itself.
+    ``aside`` is set by whoever shows it in little only: new states then come less often.
     """
 
     def __init__(
@@ -85,6 +86,7 @@ class Watch:
         )
         self.failure: MonitorError | None = None
         self.at_the_end = False
+        self.aside = False
         self._thread = threading.Thread(target=self._run, name="lidwatch engine", daemon=True)
 
     @property
@@ -270,7 +272,7 @@ class Watch:
         now = time.monotonic()
         if engine is not None and not self._reader.patient:
             self._balance(engine, now)
-        if now - self._published >= (_PUBLISH_S if self._options.display else _PUBLISH_UNSEEN_S):
+        if now - self._published >= (_PUBLISH_S if self._options.display and not self.aside else _PUBLISH_UNSEEN_S):
             self._published = now
             self._publish()
 

@@ -405,3 +405,32 @@ def test_a_wish_to_end_leaves_a_stop_line_of_every_link(tmp_path, number):
     watch.send_signal(number)
     assert watch.wait(PATIENCE_S) == 130
     assert {line["link"] for line in lines_of(journal) if line["kind"] == "stop"} == set(uris)
+
+
+def test_recordings_are_played_side_by_side_at_their_pace_and_then_measured(tmp_path):
+    files = [raw(tmp_path, qpsk(24_000, snr), f"{name}.iq") for name, snr in (("east", 25.0), ("west", 15.0))]
+    journal = tmp_path / "w.jsonl"
+    began = time.monotonic()
+    status, out, err = run_program(
+        "replay",
+        *files,
+        *RAW,
+        *QPSK,
+        "--pace",
+        "2",
+        "--view",
+        "none",
+        "--json",
+        "--journal",
+        str(journal),
+        "--every",
+        "0.5",
+    )
+    assert (status, err) == (0, "")
+    assert time.monotonic() - began >= 1.0
+    east, west = strict_json(out)["links"]
+    assert east["source"]["samples"] == west["source"]["samples"] == 96_000
+    assert east["reading"]["opening_pct"] > west["reading"]["opening_pct"]
+    stops = [line for line in lines_of(journal) if line["kind"] == "stop"]
+    # a recording that is played waits for the machine
+    assert [(stop["samples"], stop["samples_lost"]) for stop in stops] == [(96_000, 0)] * 2
