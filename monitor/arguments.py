@@ -89,7 +89,13 @@ def add_link_options(parser: argparse.ArgumentParser) -> None:
 
 
 def add_measure_options(parser: argparse.ArgumentParser) -> None:
-    """How to measure."""
+    """How to measure one link."""
+    group = add_figure_options(parser)
+    group.add_argument("--threads", type=int, choices=(1, 2), default=2, help="threads for one link (default 2)")
+
+
+def add_figure_options(parser: argparse.ArgumentParser) -> "argparse._ArgumentGroup":
+    """How to measure; returns the group, for what else belongs there."""
     group = parser.add_argument_group("how to measure")
     group.add_argument(
         "--window",
@@ -111,7 +117,7 @@ def add_measure_options(parser: argparse.ArgumentParser) -> None:
         metavar="RATE",
         help="error rate that the opening is told for (default 1e-6)",
     )
-    group.add_argument("--threads", type=int, choices=(1, 2), default=2, help="threads for one link (default 2)")
+    return group
 
 
 def add_output_options(parser: argparse.ArgumentParser) -> None:

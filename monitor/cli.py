@@ -20,6 +20,7 @@ from monitor.probing import add_probe_arguments
 from monitor.replay import INTERRUPTED, discard_standard_output, replay
 from monitor.running import add_capture_options
 from monitor.showing import add_view_options
+from monitor.surveying import add_survey_arguments
 from monitor.terminal import say
 from monitor.version import version
 from monitor.watching import add_watch_arguments
@@ -121,6 +122,15 @@ def parser() -> argparse.ArgumentParser:
         allow_abbrev=False,
     )
     add_probe_arguments(look)
+    many = commands.add_parser(
+        "survey",
+        help="measure many recordings",
+        description="Measures many recordings side by side: a row each, and totals.",
+        epilog="Exit status: 0 all measured; 1 a limit was broken; 2 a recording or the arguments unusable; 3 a recording "
+        "without an eye; 130 interrupted.",
+        allow_abbrev=False,
+    )
+    add_survey_arguments(many)
     pair = commands.add_parser(
         "keys",
         help="make keys for an encrypted stream",

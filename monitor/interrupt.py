@@ -2,7 +2,7 @@
 
 import signal
 import threading
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from types import FrameType, TracebackType
 from typing import Any, Self
 
@@ -71,6 +71,27 @@ class Interruptible(Source):
     def blocks(self) -> Iterator[Block]:
         """The source's blocks until the end is asked for."""
         return self._interrupt.blocks_until(self._source.blocks())
+
+    def close(self) -> None:
+        """Close the source."""
+        self._source.close()
+
+
+class Stoppable(Source):
+    """A source whose stream ends where ``asked`` says so between two blocks: read elsewhere than where Ctrl-C arrives."""
+
+    def __init__(self, source: Source, asked: Callable[[], bool]) -> None:
+        self.info = source.info
+        self.notes = source.notes
+        self.asked = asked
+        self._source = source
+
+    def blocks(self) -> Iterator[Block]:
+        """The source's blocks until the end is asked for."""
+        for block in self._source.blocks():
+            if self.asked():
+                return
+            yield block
 
     def close(self) -> None:
         """Close the source."""

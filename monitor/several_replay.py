@@ -7,10 +7,9 @@ from contextlib import ExitStack
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
-from dsp.block import Block
 from monitor.document import json_text, links_document, text
 from monitor.errors import InputError, MonitorError, NothingToMeasure, printable
-from monitor.interrupt import Interrupt
+from monitor.interrupt import Interrupt, Stoppable
 from monitor.judging import Judged
 from monitor.links import LinkArguments
 from monitor.playing import Played, check_pace, play_options
@@ -182,7 +181,9 @@ def measure_links(
         threads = []
         for number, (link, source, capture) in enumerate(zip(links, sources, captures, strict=True)):
             keeper = LinkJournal(journal, link.name, lock) if journal is not None else None
-            task = _Task(link, _Stoppable(source, interrupt), keeper, capture, found[number], progress.of(number))
+            task = _Task(
+                link, Stoppable(source, lambda: interrupt.asked), keeper, capture, found[number], progress.of(number)
+            )
             threads.append(threading.Thread(target=task.run, name=f"lidwatch {link.name}", daemon=True))
         _run_all([thread for number, thread in enumerate(threads) if number not in unplayed])
     for number, (one, own) in enumerate(zip(played or (), found, strict=False)):
@@ -242,36 +243,10 @@ class _Progress:
         return advance
 
 
-class _Stoppable(Source):
-    """A source that ends when the user asks for it; read by another thread than the one that Ctrl-C reaches."""
-
-    def __init__(self, source: Source, interrupt: Interrupt) -> None:
-        self.info = source.info
-        self.notes = source.notes
-        self._source = source
-        self._interrupt = interrupt
-
-    @property
-    def asked(self) -> bool:
-        """Whether the end was asked for."""
-        return self._interrupt.asked
-
-    def blocks(self) -> Iterator[Block]:
-        """The source's blocks until the end is asked for."""
-        for block in self._source.blocks():
-            if self._interrupt.asked:
-                return
-            yield block
-
-    def close(self) -> None:
-        """Close the source."""
-        self._source.close()
-
-
 @dataclass
 class _Task:
     link: NamedLink
-    source: _Stoppable
+    source: Stoppable
     keeper: "Keeper | None"
     capture: "Capture | None"
     found: LinkOutcome
@@ -293,6 +268,6 @@ class _Task:
             return run(self.source, link.wanted(), options, threads=1, progress=self.progress)
         with Judged(parsed, self.source, link, self.link.rules, keeper=self.keeper, capture=self.capture) as judge:
             outcome = run(self.source, link.wanted(), options, threads=1, progress=self.progress, observe=judge.feed)
-            outcome.interrupted = self.source.asked
+            outcome.interrupted = self.source.asked()
             outcome.alarms = judge.finish(interrupted=outcome.interrupted)
         return outcome

@@ -93,7 +93,7 @@ def test_without_a_command_one_line_says_what_to_type(capsys):
     assert "lidwatch replay FILE" in one_line(err)
 
 
-@pytest.mark.parametrize("name", ["frobnicate", "survey", ""])
+@pytest.mark.parametrize("name", ["frobnicate", "surveys", ""])
 def test_an_unknown_command_is_one_line_that_names_those_there_are(capsys, name):
     status, out, err = typed(capsys, name)
     assert (status, out) == (UNUSABLE, "")
@@ -104,7 +104,6 @@ def test_help_lists_only_what_exists(capsys):
     status, out, err = typed(capsys, "--help")
     assert (status, err) == (ALL, "")
     assert "replay" in out
-    assert not any(f"  {word}" in out for word in ("survey",))
     status, out, _ = typed(capsys, "replay", "--help")
     assert status == ALL
     for option in RELIED_ON.split():
