@@ -2,6 +2,7 @@
 
 import io
 import json
+import math
 import os
 import signal
 import subprocess
@@ -130,3 +131,19 @@ def wav_bytes(samples: NDArray, rate: int = 48000, subtype: str = "FLOAT") -> by
     buffer = io.BytesIO()
     soundfile.write(buffer, samples, rate, format="WAV", subtype=subtype)
     return buffer.getvalue()
+
+
+def assert_alike(one, other):
+    """The same document, but for the last digits of sums that a linear algebra library makes in another order with other threads."""
+    if isinstance(one, dict):
+        assert one.keys() == other.keys()
+        for key in one:
+            assert_alike(one[key], other[key])
+    elif isinstance(one, list):
+        assert len(one) == len(other)
+        for a, b in zip(one, other, strict=True):
+            assert_alike(a, b)
+    elif isinstance(one, float) and isinstance(other, float):
+        assert math.isclose(one, other, rel_tol=1e-6, abs_tol=1e-9), (one, other)
+    else:
+        assert one == other

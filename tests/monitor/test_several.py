@@ -22,6 +22,7 @@ from tests.monitor.recordings import (
     PAM2,
     QPSK,
     RAW,
+    assert_alike,
     one_line,
     pam2,
     qpsk,
@@ -350,9 +351,8 @@ def test_two_channels_are_replayed_as_two_links_with_one_document(tmp_path):
     assert (east["alarms"], len(west["alarms"])) == ([], 1)
     # what stands of one link is what its own document would say
     alone = strict_json(run_program("replay", str(path), "--channels", "1", *files[:2], "--json")[1])
-    assert {key: alone[key] for key in ("source", "link", "lock", "reading", "windows", "alarms")} == {
-        key: east[key] for key in ("source", "link", "lock", "reading", "windows", "alarms")
-    }
+    for key in ("source", "link", "lock", "reading", "windows", "alarms"):
+        assert_alike(alone[key], east[key])
     lines = lines_of(journal)
     assert {line["link"] for line in lines} == {"east", "west"}
     assert {line["link"] for line in lines if line["kind"] == "alarm"} == {"west"}
