@@ -89,7 +89,8 @@ class Engine:
     samples, samples_lost
         Totals of the stream.
     relief
-        How far work is left out for want of time: 0 none; each step halves the traces drawn and the readings between two lines.
+        How far work is left out for want of time: 0 none; each step halves the traces drawn, the readings between two lines, and how
+        often what takes long is looked at.
     source_text
         Where the samples come from, for views.
     """
@@ -161,6 +162,7 @@ class Engine:
         self._taken = False  # whether the picture as it is now was handed out
         self._next_judge = 0.0
         self._next_line = 0.0
+        self._next_whole = 0.0
 
     # -- the stream ----------------------------------------------------------------------------------------------------
 
@@ -460,7 +462,9 @@ class Engine:
         told = seconds >= self._next_line
         looked = self._options.display and seconds >= self._next_diagnosis
         # what takes long is looked at for a line or for the eyes, and once there is enough for it; in between it stands as it was
-        if told or looked or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
+        now = not self.relief or seconds >= self._next_whole
+        if (now and (told or looked)) or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
+            self._next_whole = seconds + 2.0**self.relief
             reading = figures.reading()
             self._opening = figures.estimates.get("opening_pct")
         else:
@@ -472,7 +476,7 @@ class Engine:
                 low, high = self._opening.interval()
                 reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
         if looked:
-            self._next_diagnosis = seconds + DIAGNOSIS_SECONDS
+            self._next_diagnosis = seconds + DIAGNOSIS_SECONDS * 2**self.relief
             if self._options.aside is None:
                 self._diagnosis = figures.diagnosis()
             elif self._diagnosing is None:

@@ -115,6 +115,7 @@ def attend(
             start_fields=start_fields(parsed.source, link, options.rules),
             for_s=for_s,
             tap=capture,
+            tell=tell if view == "none" else None,
         )
         tell.attach(running)
         if capture is not None:

@@ -15,7 +15,7 @@ from monitor.alarm_rules import built_in_alarms
 from monitor.alarms import AlarmBoard, AlarmEvent
 from monitor.engine import Engine, EngineOptions, Tap
 from monitor.errors import MonitorError, printable
-from monitor.journal import Keeper
+from monitor.journal import JournalStatus, Keeper
 from monitor.snapshot import Snapshot
 from monitor.sources.ring import ThreadedReader
 from monitor.sources.stream import LiveSource
@@ -27,10 +27,11 @@ _PUBLISH_S = 0.033  # a new state for the views at most so often
 _PUBLISH_UNSEEN_S = 0.25
 _PIECE_S = 0.05  # what the engine is given at once
 _PIECE_SAMPLES = 65536
-_OLDEST_S = 0.5
+_OLDEST_S = 0.4
 _LATE_S, _PROMPT_S = 0.15, 0.05  # so much waits where work is to be left out, and where it can be taken up again
 _RELIEF_S, _RECOVERY_S = 0.25, 5.0  # at most one step of either in so long
 _MOST_RELIEF = 4
+_TROUBLE_AGAIN_S, _TROUBLE_OVER_S = 60.0, 2.0  # between two notices of one trouble; before it is told to be over
 _JOIN_S = 10.0
 
 
@@ -38,6 +39,8 @@ class Watch:
     """Runs until the source ends, ``for_s`` seconds are over, `stop` is called or the engine fails.
 
     What views call is safe from any thread.
+
+    ``tell`` is given, a line each, what happens to the journal, for where no view shows it.
 
     ``failure`` holds what ended it if that was an error; ``at_the_end`` is true when the source ended by itself.
     ``aside`` is set by whoever shows it in little only: new states then come less often.
@@ -54,6 +57,7 @@ class Watch:
         tap: Tap | None = None,
         start_fields: Mapping[str, Any] | None = None,
         for_s: float | None = None,
+        tell: Callable[[str], None] | None = None,
     ) -> None:
         self._reader = ThreadedReader(open_source)
         self._wanted = wanted
@@ -61,6 +65,8 @@ class Watch:
         # what can wait is identified at once, so that a recording gives the same lines each time
         self._options = replace(options, aside=None if self._reader.patient else self._aside)
         self._keeper = keeper
+        self._tell = tell
+        self._trouble_told_at: float | None = None
         self._source_text = source_text
         self._tap = tap
         self._alarms = AlarmBoard(options.rules, built_in_alarms(options.stall_s))
@@ -335,8 +341,22 @@ class Watch:
             self._keep("gap", self._engine.position, self._engine.seconds, {"samples_lost": None, "why": event.text})
 
     def _keep(self, kind: str, sample: int, seconds: float, fields: Mapping[str, Any]) -> None:
-        if self._keeper is not None:
-            self._keeper.write(kind, sample, seconds, fields)
+        if self._keeper is None:
+            return
+        self._keeper.write(kind, sample, seconds, fields)
+        if self._tell is not None:
+            self._watch_journal(self._keeper.status, self._tell)
+
+    def _watch_journal(self, status: JournalStatus, tell: Callable[[str], None]) -> None:
+        """Tell of lines that cannot be written, once a minute at most, and when they can be again."""
+        now = time.monotonic()
+        told = self._trouble_told_at
+        if status.trouble and (told is None or now - told >= _TROUBLE_AGAIN_S):
+            self._trouble_told_at = now
+            tell(status.text)
+        elif told is not None and not status.trouble and not status.waiting and now - told >= _TROUBLE_OVER_S:
+            self._trouble_told_at = None
+            tell(status.text or "journal is written again")
 
     def _last_line(self) -> None:
         engine = self._engine

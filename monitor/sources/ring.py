@@ -13,7 +13,7 @@ from monitor.errors import MonitorError, printable
 from monitor.sources.stream import LiveSource
 from monitor.sources.wire import DESCRIBING, Item, StreamEvent
 
-BOUND_S: Final = 0.5
+BOUND_S: Final = 0.4
 _MOST_EVENTS = 256
 _MOST_BYTES = 64 << 20
 _KEPT = 0.2

@@ -143,8 +143,6 @@ def _draw_page(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown) -> N
     settings = [persistence_words(shown.persistence)]
     if not state.locked or state.ended:
         settings = ["ended" if state.ended else "no lock"]
-    if state.journal_text and columns >= 100:
-        settings.append(state.journal_text)
     _draw_pair(sheet, inks.dim, inks.dim, 1, snapshot.link_text, "  ·  ".join(settings))
     alarms = _alarm_lines(state, min(_MOST_ALARM_ROWS, 1 + (rows - LEAST_ROWS) // 8))
     for y, (text, more, ink) in enumerate(
@@ -397,7 +395,7 @@ def _draw_remark(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown, y:
         sheet.cursor = (min(start + cells(typed), sheet.columns - 1), y)
         sheet.write(start, y, typed, inks.text)
         return
-    text = shown.remark or (state.notices[-1] if state.notices else "")
+    text = shown.remark or state.journal_text or (state.notices[-1] if state.notices else "")
     if text:
         sheet.fill(0, y, sheet.columns, 1, inks.text)
         sheet.write(0, y, text, inks.text)
@@ -469,5 +467,7 @@ def figures_line(state: LiveState) -> str:
         parts += [f"{figure.label} {figure.value}" for figure in key_figures(reading)[:4]]
     if state.samples_lost:
         parts.append(f"{plain(state.samples_lost, 0)} samples lost")
+    if state.journal_text:
+        parts.append(state.journal_text)
     parts += [f"alarm, {alarm.severity}: {alarm_words(alarm)}" for alarm in by_urgency(state.alarms) if calls(alarm)]
     return "; ".join(spell(part.replace("  ·  ", ", "), True) for part in parts)

@@ -1,5 +1,6 @@
 """The watch with its threads, over real sockets on loopback."""
 
+import errno
 import json
 import os
 import signal
@@ -352,6 +353,33 @@ def test_a_long_message_that_a_newer_one_overtakes_is_left_half_done_and_counted
     stop = watch.lines()[-1]
     assert 0 < stop["samples_lost"] < 48_000
     assert stop["samples"] + stop["samples_lost"] == samples.size
+
+
+def test_a_journal_that_cannot_be_written_is_told_once_and_so_is_its_recovery(monkeypatch, tmp_path):
+    monkeypatch.setattr("monitor.watch._TROUBLE_OVER_S", 0.0)
+    full, told = [True], []
+
+    class Disk(Journal):
+        def _append(self, file, kind, line, now):
+            if full[0]:
+                raise OSError(errno.ENOSPC, "No space left on device")
+            super()._append(file, kind, line, now)
+
+    samples = stretches(25.0, 25.0)
+    source = Scripted((START,), *blocks(samples), end=False)
+    with Disk(tmp_path / "w.jsonl", now=lambda: datetime.now(UTC)) as journal:
+        options = EngineOptions(display=False, every_s=0.1)
+        watch = Watch(lambda: source, QPSK_LINK, options, keeper=journal, source_text="west", tell=told.append)
+        watch.start()
+        try:
+            until(lambda: watch._engine is not None and watch._engine.position > 48_000, "the samples")
+            full[0] = False
+            until(lambda: len(told) > 1, "the recovery")
+        finally:
+            watch.stop()
+    assert len(told) == 2
+    assert told[0].startswith("journal not written: No space left on device")
+    assert told[1].startswith("journal is written again")
 
 
 # --- views
