@@ -499,6 +499,8 @@ class Engine:
 
     def _draw(self, sums: EyeSums) -> None:
         """Fold a part into the picture; what is older fades by the persistence."""
+        if not sums.drawn and self.persistence_s == 0:
+            return  # the newest traces are those before
         density = sums.histogram().sum(axis=1).astype(np.float32)
         old = self.persistence_s == 0 and self._taken
         self._taken = False

@@ -411,3 +411,16 @@ def test_relief_leaves_out_traces_and_readings_in_between_and_says_so():
     relieved.engine.relieve(0)
     relieved.feed(samples[48_000:])
     assert relieved.engine.state().snapshot.coverage_pct == 100.0
+
+
+def test_with_few_traces_drawn_the_newest_of_them_stay_until_there_are_newer():
+    samples = stretches(25.0, 25.0)
+    watched = Watched(display=True)
+    watched.engine.persistence_s = 0.0
+    watched.feed(samples[:24_000])
+    watched.engine.relieve(4)
+    traces = []
+    for at in range(24_000, samples.size, 2400):
+        watched.feed(samples[at : at + 2400])
+        traces.append(watched.engine.state().snapshot.image.traces)
+    assert min(traces) > 0
