@@ -28,7 +28,7 @@ _PUBLISH_UNSEEN_S = 0.25
 _PIECE_S = 0.05  # what the engine is given at once
 _PIECE_SAMPLES = 65536
 _OLDEST_S = 0.4
-_LATE_S, _PROMPT_S = 0.15, 0.05  # so much waits where work is to be left out, and where it can be taken up again
+_LATE_S, _PROMPT_S = 0.15, 0.05  # so long samples wait when work is to be left out, and when it can be taken up again
 _RELIEF_S, _RECOVERY_S = 0.25, 5.0  # at most one step of either in so long
 _MOST_RELIEF = 4
 _TROUBLE_AGAIN_S, _TROUBLE_OVER_S = 60.0, 2.0  # between two notices of one trouble; before it is told to be over
@@ -287,7 +287,7 @@ class Watch:
 
     def _balance(self, engine: Engine, now: float) -> None:
         """Leave out work while too much waits, long before samples must be dropped; take it up again when all is prompt."""
-        waiting_s = self._waiting_s(engine)
+        waiting_s = self._reader.ring.oldest_s  # by the clock: long messages are not late for being long
         if waiting_s > _PROMPT_S:
             self._late_at = now
         if waiting_s > _LATE_S:

@@ -72,6 +72,12 @@ class SampleRing:
         with self._changed:
             return self._seconds
 
+    @property
+    def oldest_s(self) -> float:
+        """How long, by the clock, the oldest block has waited."""
+        with self._changed:
+            return self._now() - self._came[0] if self._came else 0.0
+
     def keep_all(self) -> None:
         """Drop nothing for being old."""
         self._patience_s = math.inf

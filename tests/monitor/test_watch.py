@@ -344,6 +344,27 @@ def test_a_watch_that_is_nearly_too_slow_draws_fewer_traces_before_any_sample_is
     assert (stop["samples"], stop["samples_lost"]) == (samples.size, 0)
 
 
+def test_long_messages_are_no_reason_to_draw_fewer_traces(watching, monkeypatch):
+    # as if the machine were a fast one
+    monkeypatch.setattr(Engine, "feed", lambda self, block: time.sleep(0.1 * block.samples.size / RATE))
+    samples = stretches(25.0, 25.0)
+    began = time.monotonic()
+
+    class Slow(Scripted):
+        """A message of 0.3 s each 0.3 s."""
+
+        def poll(self, timeout_s):
+            if len(self.steps) < 6:
+                time.sleep(max(0.0, began + (6 - len(self.steps)) * 0.3 - time.monotonic()))
+            return super().poll(timeout_s)
+
+    watch = watching(lambda: Slow((START,), *blocks(samples, 14_400)))
+    reliefs = set()
+    while not watch.wait(0.02):
+        reliefs.add(watch._engine.relief if watch._engine is not None else 0)
+    assert reliefs == {0}
+
+
 def test_a_long_message_that_a_newer_one_overtakes_is_left_half_done_and_counted(watching, monkeypatch):
     monkeypatch.setattr("monitor.watch._OLDEST_S", 0.0)
     samples = stretches(25.0, 25.0)

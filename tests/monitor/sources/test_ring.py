@@ -80,6 +80,34 @@ def test_what_comes_all_at_once_is_kept_until_its_oldest_has_waited_too_long():
     assert (first.start, first.lost) == (2700, 2700)
 
 
+def test_it_tells_how_long_the_oldest_block_has_waited_whatever_its_length():
+    clock = SimpleNamespace(now=10.0)
+    ring = SampleRing(0.5, 0.5, now=lambda: clock.now)
+    assert ring.oldest_s == 0.0
+    ring.put([START, *stream(400)])
+    assert ring.oldest_s == 0.0
+    clock.now += 0.2
+    ring.put(stream(50, start=400))
+    assert ring.oldest_s == pytest.approx(0.2)
+    ring.take(0, 1)
+    assert ring.oldest_s == 0.0
+    clock.now += 0.1
+    assert ring.oldest_s == pytest.approx(0.1)
+
+
+def test_a_source_that_can_wait_puts_more_when_half_the_bound_is_free_and_loses_nothing():
+    clock = SimpleNamespace(now=10.0)
+    ring = SampleRing(0.5, 0.0, now=lambda: clock.now)
+    ring.keep_all()
+    ring.put([START, *stream(*[100] * 3)])
+    assert not ring.wait_for_room(0.0)
+    clock.now += 100.0
+    ring.put(stream(*[100] * 7, start=300))
+    assert ring.dropped == 0
+    ring.take(0, 8)
+    assert ring.wait_for_room(0.0)
+
+
 def test_what_comes_all_at_once_is_bounded_in_bytes():
     ring = SampleRing(0.5, 1e9)
     size = 4 << 20
