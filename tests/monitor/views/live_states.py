@@ -55,7 +55,6 @@ def make_states():
         samples_lost=1024,
         behind_s=0.1,
         notices=("6:30 samples lost: 1,024",),
-        journal_text="skerry.jsonl: 2,041 lines",
         rails=("I", "Q"),
     )
     calm = LiveState(
