@@ -39,7 +39,8 @@ CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
 LOOK_SECONDS = 1.0  # between two tries to identify a link
 RELOOK_SECONDS = 5.0  # without lock, after which a link that was identified is identified anew
-HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20
+HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20  # of the newest samples that are looked at
+LONG_HEAD_SECONDS = 8.0  # at every other look: a slow link needs them
 
 Line = Callable[[str, int, float, Mapping[str, Any]], None]
 
@@ -121,6 +122,8 @@ class Engine:
         self._head: list[Block] = []
         self._head_samples = 0
         self._next_look = 0
+        self._looks = 0  # in vain, since there was a link
+        self._found_none = ""  # why the last look was in vain
         self._looking: Future[Identified | NotFound] | None = None
         self._searching = "waiting for samples"
         self._position = 0
@@ -303,7 +306,8 @@ class Engine:
         self._chain = None
         self._looking = None
         self._head, self._head_samples = [], 0
-        self._next_look = 0
+        self._next_look = self._looks = 0
+        self._found_none = ""
         self._last_lock_loss = None
         self._unusable, self._began_anew = "", True
         self._tick_samples = self._tick_clipped = self._tick_lost = 0
@@ -339,17 +343,18 @@ class Engine:
         if self._options.first is not None and self._identified is None:
             self._settle(self._options.first, last=False)
         elif self._looking is not None:
-            self._keep_head(0.25)
+            self._keep_head(LONG_HEAD_SECONDS)
             if self._looking.done():
                 found, self._looking = self._looking.result(), None
+                if isinstance(found, Identified):
+                    self._keep_head(0.25)  # what came while it was looked for is old
                 self._settle(found, last=False)
         elif self._head_samples >= self._look_at():
             # a link that is given whole is placed at once, so that live and replayed it begins at the same sample
             if self._options.aside is not None and not self._given():
-                self._searching = "looking at the first samples"
-                self._looking = self._options.aside.submit(
-                    settle_link, list(self._head), self.sample_rate_hz, self._wanted
-                )
+                head = self._newest_head()
+                self._tell_search(sum(block.samples.size for block in head) / self.sample_rate_hz)
+                self._looking = self._options.aside.submit(settle_link, head, self.sample_rate_hz, self._wanted)
             else:
                 self._try_head()
 
@@ -366,18 +371,41 @@ class Engine:
             surplus -= dropped
 
     def _try_head(self, *, last: bool = False) -> None:
-        self._settle(settle_link(self._head, self.sample_rate_hz, self._wanted), last=last)
+        self._settle(settle_link(self._newest_head(), self.sample_rate_hz, self._wanted), last=last)
+
+    def _newest_head(self) -> list[Block]:
+        """What is looked at: the newest seconds, where a link that has just come fills them, and in turn all that is kept."""
+        if self._looks % 2 == 1:
+            return list(self._head)
+        need = HEAD_SECONDS * self.sample_rate_hz
+        newest: list[Block] = []
+        for block in reversed(self._head):
+            if need <= 0:
+                break
+            newest.insert(0, block)
+            need -= block.samples.size
+        return newest
+
+    def _tell_search(self, seconds: float) -> None:
+        """Say what is tried now."""
+        wanted = self._wanted
+        parts = (("symbol rate", wanted.symbol_rate_hz), ("scheme", wanted.scheme), ("pulse", wanted.pulse))
+        *others, last = (name for name, given in parts if given is None)
+        missing = f"{', '.join(others)} and {last}" if others else last
+        before = f"; before: {self._found_none}" if self._found_none else ""
+        self._searching = f"looking for {missing} in the last {seconds:.1f} s{before}"
 
     def _settle(self, found: Identified | NotFound, *, last: bool) -> None:
         if isinstance(found, NotFound):
-            self._searching = found.reason
+            self._searching = self._found_none = found.reason
+            self._looks += 1
             if last:
                 return
-            # keep what the next look needs, and look again when as much new has come
-            self._keep_head(HEAD_SECONDS)
+            # keep what the next look needs, and look again when something new has come
+            self._keep_head(LONG_HEAD_SECONDS)
             self._next_look = self._head_samples + int(LOOK_SECONDS * self.sample_rate_hz)
             return
-        self._identified = found
+        self._identified, self._looks, self._found_none = found, 0, ""
         link = found.link
         window = self._options.window or int(min(max(2.0 * link.symbol_rate_hz, 2000), 200_000))
         self._block_symbols = max(window // BLOCKS, 64)

@@ -112,12 +112,13 @@ def link_file_text(
     *,
     head: Sequence[str] = (),
     remarks: Mapping[str, str] | None = None,
+    doubtful: Sequence[str] = (),
     example_alarms: Sequence[Mapping[str, str | float]] = (),
 ) -> str:
     """A link file that `read_link_file` reads back as ``options``.
 
-    ``head`` stands above as comments, ``remarks`` behind the keys they are about, ``example_alarms`` as comments that need only their
-    signs taken away.
+    ``head`` stands above as comments, ``remarks`` behind the keys they are about; ``doubtful`` keys and ``example_alarms`` are comments
+    that need only their signs taken away.
     """
     remarks = remarks or {}
     lines = [f"# {_one_line(text)}" for text in head]
@@ -126,7 +127,8 @@ def link_file_text(
         value = getattr(options, key)
         if value is not None:
             remark = remarks.get(key)
-            lines.append(f"{key} = {_toml(value)}" + (f"  # {_one_line(remark)}" if remark else ""))
+            sign = "# " if key in doubtful else ""
+            lines.append(f"{sign}{key} = {_toml(value)}" + (f"  # {_one_line(remark)}" if remark else ""))
     if example_alarms:
         lines += ["", "# Limits, for you to think about: take the signs away from those that you want."]
     for alarm in example_alarms:

@@ -20,6 +20,7 @@ _LABEL, _VALUE, _SURE = 14, 24, 8
 # symbol rates that are in use (common practice); others count as round with three digits
 _USUAL_BD = (45.45, 1200, 2400, 4800, 9600, 14400, 19200, 28800, 33600, 38400, 57600, 115200, 1625e3 / 6)
 _ROUND_PPM = 50.0
+_LEAST_SURE = 0.5  # below it a part is written as a comment, and stays to be found
 
 
 def text(heard: Heard, findings: Findings) -> Iterator[str]:
@@ -191,7 +192,12 @@ def _link_file_of(heard: Heard, found: FoundLink, given: LinkOptions, number: in
         {"rule": "opening_pct < 40", "clear": 45, "hold_s": 2.0, "release_s": 5.0, "severity": "high"},
         {"rule": f"snr_db < {snr_limit:g}", "clear": snr_limit + 1, "hold_s": 5.0, "severity": "medium"},
     )
-    return link_file_text(options, head=head, remarks=remarks, example_alarms=alarms)
+    doubtful = [
+        key
+        for key, guess, own in (("scheme", found.scheme, given.scheme), ("pulse", found.pulse, given.pulse))
+        if guess.confidence < _LEAST_SURE and own is None
+    ]
+    return link_file_text(options, head=head, remarks=remarks, doubtful=doubtful, example_alarms=alarms)
 
 
 def _standing(pulse: str) -> str:

@@ -4,12 +4,13 @@ import math
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
 
 from dsp.acquisition import NotFound
-from dsp.block import Block
+from dsp.block import Block, Samples
 from dsp.chain import AtOnce, Chain, ChainOptions, LockEvent
 from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
@@ -130,8 +131,8 @@ class Outcome:
         return (*self.source_notes, *counted)
 
 
-def _counted(count: int, noun: str) -> str:
-    return f"{count} {noun}{'s' * (count != 1)}"
+def _counted(count: int, noun: str, nouns: str = "") -> str:
+    return f"{count} {noun if count == 1 else nouns or noun + 's'}"
 
 
 class _Worst:
@@ -186,8 +187,7 @@ def run(
     outcome = Outcome(source)
     rate = source.info.sample_rate_hz
     try:
-        head = _read_head(stream, rate, wanted)
-        identified = settle_link(head, rate, wanted)
+        head, identified = _look_along(stream, rate, wanted, passed=_count_of(outcome, progress, observe))
         rest = _counting(_joined(head, stream), outcome, progress, observe)
         if isinstance(identified, NotFound):
             outcome.reason = identified.reason
@@ -203,19 +203,51 @@ def run(
 
 
 def look_ahead(source: Source, wanted: Wanted) -> Identified | NotFound:
-    """The link in an open source's first seconds, which are taken from it. Raises InputError where link and samples do not fit."""
-    rate = source.info.sample_rate_hz
+    """The link in an open source, whose samples are taken from it. Raises InputError where link and samples do not fit."""
     try:
-        return settle_link(_read_head(source.blocks(), rate, wanted), rate, wanted)
+        return _look_along(source.blocks(), source.info.sample_rate_hz, wanted)[1]
     except DspError as error:
         raise InputError(str(error)) from None
+
+
+def _look_along(
+    stream: Iterator[Block], rate: float, wanted: Wanted, passed: Callable[[Block], None] = lambda block: None
+) -> tuple[list[Block], Identified | NotFound]:
+    """The first stretch with a link and that link; else the last one.
+
+    Looked at are the first stretch, the next, and then ever fewer, so that an hour of nothing costs no hour. The blocks before what is
+    returned are handed to ``passed``.
+    """
+    head = _read_head(stream, rate, wanted)
+    found = settle_link(head, rate, wanted)
+    first = found
+    index = looks = 0
+    while isinstance(found, NotFound):
+        for _ in range(max(2 * index, 1) - index):
+            index += 1
+            later = _read_head(stream, rate, wanted)
+            if not later:
+                break
+            for block in head:
+                passed(block)
+            head = later
+        if not later:
+            break
+        looks += 1
+        found = settle_link(head, rate, wanted)
+    if isinstance(found, NotFound) and isinstance(first, NotFound) and looks:
+        # a last stretch may be too short to say anything
+        found = NotFound(
+            f"{first.reason}; nor is there a link in {_counted(looks, 'later stretch', 'later stretches')}"
+        )
+    return head, found
 
 
 def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Identified | NotFound:
     """The link as given where all of it is, identified from the stream's head where not. Raises DspError."""
     if not head:
         return NotFound("there are no samples")
-    samples = np.concatenate([block.samples for block in head])
+    samples = _unbroken(head)
     if wanted.scheme is not None and wanted.symbol_rate_hz is not None and wanted.pulse is not None:
         link = Link(wanted.scheme, sample_rate_hz, wanted.symbol_rate_hz, wanted.pulse, wanted.carrier_hz, wanted.name)
         is_complex = bool(np.iscomplexobj(samples))
@@ -227,6 +259,14 @@ def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Ide
         # refuse what cannot be measured before looking for it
         Link(SCHEMES["qpsk"], sample_rate_hz, wanted.symbol_rate_hz, Pulse("none"), wanted.carrier_hz)
     return identify(samples, sample_rate_hz, wanted)
+
+
+def _unbroken(blocks: list[Block]) -> Samples:
+    """The longest run of samples without a gap."""
+    starts = [0, *(number for number, block in enumerate(blocks) if block.lost and number), len(blocks)]
+    runs = [blocks[a:b] for a, b in pairwise(starts)]
+    longest = max(runs, key=lambda run: sum(block.samples.size for block in run))
+    return np.concatenate([block.samples for block in longest])
 
 
 def _read_head(stream: Iterator[Block], rate: float, wanted: Wanted) -> list[Block]:
@@ -288,7 +328,20 @@ def _counting(
     observe: Callable[[Block], None] | None,
 ) -> Iterator[Block]:
     """The blocks, counted into the outcome as each is done with."""
+    count = _count_of(outcome, None, observe)
     for block in stream:
+        count(block)
+        yield block
+        if progress is not None:
+            progress(outcome.samples)
+
+
+def _count_of(
+    outcome: Outcome, progress: Callable[[int], None] | None, observe: Callable[[Block], None] | None
+) -> Callable[[Block], None]:
+    """What counts a block into the outcome."""
+
+    def count(block: Block) -> None:
         if observe is not None:
             observe(block)
         outcome.samples_lost += block.lost
@@ -296,6 +349,7 @@ def _counting(
         outcome.clipped += block.clipped
         outcome.nonfinite += block.nonfinite
         outcome.samples += block.samples.size
-        yield block
         if progress is not None:
             progress(outcome.samples)
+
+    return count

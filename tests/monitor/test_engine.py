@@ -1,9 +1,12 @@
 """The heart of a watch: lines and states from blocks, without threads and clocks."""
 
+from concurrent.futures import Future
+
 import numpy as np
 import pytest
 from scipy.stats import binom
 
+from dsp.acquisition import NotFound
 from dsp.block import Block
 from dsp.identify import Wanted
 from dsp.link import find_scheme
@@ -11,6 +14,7 @@ from dsp.pulses import Pulse
 from dsp.transmitter import TransmitSpec, transmit
 from monitor import engine as engine_module
 from monitor.errors import InputError
+from monitor.session import settle_link
 from tests.monitor.recordings import RATE, SYMBOL_RATE, pam2, qpsk
 from tests.monitor.watched import QPSK_LINK, Watched, rules, stretches
 
@@ -424,3 +428,53 @@ def test_with_few_traces_drawn_the_newest_of_them_stay_until_there_are_newer():
         watched.feed(samples[at : at + 2400])
         traces.append(watched.engine.state().snapshot.image.traces)
     assert min(traces) > 0
+
+
+class Aside:
+    """An executor under the test's control: ``answer`` finishes what was asked."""
+
+    def __init__(self):
+        self.asked = []
+
+    def submit(self, work, *arguments):
+        self.asked.append((arguments, Future()))
+        return self.asked[-1][1]
+
+    def answer(self, what):
+        self.asked[-1][1].set_result(what)
+
+
+def test_a_search_in_vain_is_told_and_goes_on_with_short_and_long_stretches_in_turn():
+    aside = Aside()
+    watched = Watched(Wanted(scheme=find_scheme("qpsk")), aside=aside)
+    noise = np.random.default_rng(5).normal(size=(48_000, 2)).astype(np.float32).view(np.complex64).ravel()
+    lengths, told = [], []
+    for _ in range(30):
+        before = len(aside.asked)
+        watched.feed(noise)
+        if len(aside.asked) > before:
+            head = aside.asked[-1][0][0]
+            lengths.append(round(sum(block.samples.size for block in head) / RATE))
+            told.append(watched.engine.state().searching)
+            aside.answer(NotFound("no clock line"))
+    # the newest two seconds, then all there is, up to eight and the second since; never long without a look
+    assert set(lengths[0::2]) == {2}
+    long = lengths[1::2]
+    assert long == sorted(long)
+    assert 8 <= long[-1] <= 9
+    assert len(lengths) >= 9
+    assert told[0] == "looking for symbol rate and pulse in the last 2.0 s"
+    assert told[1].endswith("; before: no clock line")
+
+
+def test_a_link_that_comes_after_a_search_in_vain_is_locked_to():
+    watched = Watched(Wanted(), aside=(aside := Aside()))
+    watched.feed(np.zeros(3 * 48_000, np.complex64))
+    aside.answer(NotFound("silence"))
+    watched.feed(qpsk(48_000))
+    found = aside.asked[-1][0]
+    aside.answer(settle_link(*found))
+    watched.feed(qpsk(24_000))
+    assert watched.of("lock", state="gained")
+    # the next search, should there be one, begins afresh
+    assert "before" not in watched.engine.state().searching

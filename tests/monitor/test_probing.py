@@ -131,6 +131,15 @@ def test_each_of_several_links_gets_a_file_with_a_name_of_its_own(tmp_path):
     assert [table["carrier_hz"] for table in tables] == [12.3, -6000.0]
 
 
+def test_what_is_more_guessed_than_known_is_left_to_be_found_unless_it_was_given():
+    doubtful = replace(found(), pulse=Guess(Pulse.parse("rect"), 0.2, Pulse.parse("rrc:0.4")))
+    (content,) = link_file_texts(heard(), findings(doubtful), LinkOptions())
+    assert "pulse" not in tomllib.loads(content)["link"]
+    assert '# pulse = "rect"  # 20 % sure, else rrc:0.4' in content
+    (content,) = link_file_texts(heard(), findings(doubtful), LinkOptions(pulse="rect"))
+    assert tomllib.loads(content)["link"]["pulse"] == "rect"
+
+
 @pytest.mark.parametrize(
     ("measured", "nominal"),
     [

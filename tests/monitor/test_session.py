@@ -162,3 +162,54 @@ def test_a_link_given_whole_is_taken_at_its_word():
     assert settled.link.carrier_hz == 100.0
     assert settled.found == ()
     assert isinstance(settle_link([], RATE, GIVEN), NotFound)
+
+
+def noise(count, seed=3):
+    rng = np.random.default_rng(seed)
+    return (0.05 * rng.normal(size=(count, 2))).astype(np.float32).view(np.complex64).ravel()
+
+
+def stream_of(*parts, step=48_000):
+    whole = np.concatenate(parts)
+    return [Block(whole[at : at + step], at) for at in range(0, whole.size, step)]
+
+
+def test_a_link_that_begins_late_in_a_recording_is_found_and_all_samples_are_counted():
+    before = noise(480_000)
+    blocks = stream_of(before, qpsk(24_000))
+    seen = []
+    outcome = run(InMemory(*blocks), Wanted(), ChainOptions(), observe=lambda block: seen.append(block.start))
+    assert outcome.measured
+    assert outcome.link.scheme.name == "qpsk"
+    assert outcome.samples == before.size + 96_000
+    assert seen == [block.start for block in blocks]
+    assert outcome.acquired_at == pytest.approx(before.size, abs=0.1 * RATE)
+    assert 0 < outcome.locked_pct < 25
+
+
+def test_a_long_recording_of_nothing_is_looked_at_ever_less_and_said_to_be_so(monkeypatch):
+    looked = []
+
+    def none(head, rate, wanted):
+        looked.append(head[0].start / rate)
+        return NotFound("no clock line")
+
+    monkeypatch.setattr("monitor.session.settle_link", none)
+    silent = np.zeros(48_000, np.complex64)
+    blocks = [Block(silent, at * silent.size) for at in range(160)]
+    outcome = run(InMemory(*blocks), Wanted(), ChainOptions())
+    assert looked == [0.0, 4.0, 8.0, 16.0, 32.0, 64.0, 128.0]
+    assert outcome.samples == 160 * silent.size
+    assert outcome.reason == "no clock line; nor is there a link in 6 later stretches"
+
+
+def test_what_is_looked_at_has_no_gap_in_it(monkeypatch):
+    given = []
+    monkeypatch.setattr("monitor.session.identify", lambda samples, rate, wanted: given.append(samples.size))
+    samples = qpsk()[:1000]
+    settle_link(
+        [Block(samples, 0), Block(samples, 2000, lost=1000), Block(samples, 3000), Block(samples, 4500, lost=500)],
+        RATE,
+        Wanted(),
+    )
+    assert given == [2000]
