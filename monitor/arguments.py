@@ -128,7 +128,7 @@ def add_output_options(parser: argparse.ArgumentParser) -> None:
     group.add_argument(
         "--picture-size", type=size, default=(1280, 800), metavar="WxH", help="of the picture (default 1280x800)"
     )
-    group.add_argument("--theme", choices=("light", "dark"), default="light", help="of the picture (default light)")
+    group.add_argument("--theme", choices=("light", "dark", "paper"), default="light", help="of the picture (default light); paper: for print")
 
 
 def add_journal_options(parser: argparse.ArgumentParser) -> None:

@@ -9,7 +9,6 @@ from monitor.views.canvas import Canvas
 from monitor.views.drawing import y_of
 from monitor.views.history import AlarmSpan, Run, history_runs, lost_spans, time_ticks, value_range
 from monitor.views.layout import Box
-from monitor.views.live_layout import LiveBoxes
 from monitor.views.live_wording import clock, span_words
 from monitor.views.pixels import tick_step
 from monitor.views.wording import plain
@@ -36,13 +35,13 @@ class _Strip:
 
 
 def draw_history(
-    canvas: Canvas, boxes: LiveBoxes, state: LiveState, alarms: Sequence[AlarmSpan], span_s: float | None
+    canvas: Canvas, box: Box, plot: Box, state: LiveState, alarms: Sequence[AlarmSpan], span_s: float | None
 ) -> None:
-    """The opening over the last ``span_s`` seconds or, for None, the whole watch.
+    """The opening over the last ``span_s`` seconds or, for None, the whole watch: ``plot`` within ``box``.
 
     With marks above it, alarms under it, lost samples and missing lock on it.
     """
-    theme, box, plot = canvas.theme, boxes.history, boxes.history_plot
+    theme = canvas.theme
     now = max(state.seconds, 1e-9)
     start = 0.0 if span_s is None else max(0.0, now - span_s)
     # before the first minute is over, time runs into an empty strip instead of being squeezed anew at every look
@@ -79,7 +78,7 @@ def draw_history(
         canvas.write(f"{plain(value, 0)} %", label, _SMALL, theme.dim, align="right")
     _draw_alarms(canvas, strip, alarms)
     _draw_times(canvas, strip)
-    _draw_mark_names(canvas, boxes, strip, state)
+    _draw_mark_names(canvas, box, strip, state)
     present = {"best": best is not None, "alarm": bool(alarms), "samples lost": bool(gaps), "no lock": bool(shown_lost)}
     title = Box(box.x, box.y, box.width, canvas.px(20))
     right = _draw_legend(canvas, title, [entry for entry, there in present.items() if there])
@@ -161,10 +160,10 @@ def _draw_times(canvas: Canvas, strip: _Strip) -> None:
         canvas.write(clock(at), Box(edge, top, 2 * half, canvas.px(16)), _SMALL, theme.dim, align="centre")
 
 
-def _draw_mark_names(canvas: Canvas, boxes: LiveBoxes, strip: _Strip, state: LiveState) -> None:
+def _draw_mark_names(canvas: Canvas, box: Box, strip: _Strip, state: LiveState) -> None:
     """Flags over the strip; the newest mark's name has the first right to the room."""
     theme, plot = canvas.theme, strip.plot
-    y, height = boxes.history.y + canvas.px(21), canvas.px(17)
+    y, height = box.y + canvas.px(21), canvas.px(17)
     limit = float(plot.right)
     for number, mark in reversed(list(enumerate(state.marks, start=1))):
         if mark.seconds < strip.start:

@@ -78,11 +78,13 @@ def arrange_live(width: int, height: int, unit: float, *, rails: int, small_figu
     figure = Box(side.x, side.y, side.width, figure_height)
     detail = Box(side.x, figure.bottom, side.width, side.height - figure_height)
     body = Box(margin, top, inner - side_width - gap, bottom - top)
-    page = _arrange_eye(width, height, unit, header, body, rails)
+    page = arrange_eye(width, height, unit, header, body, rails)
     return LiveBoxes(page, header, band, body, figure, detail, history, history_plot, footer)
 
 
-def _arrange_eye(width: int, height: int, unit: float, header: Box, body: Box, rails: int) -> Page:
+def arrange_eye(width: int, height: int, unit: float, header: Box, body: Box, rails: int) -> Page:
+    """The eye's own areas within ``body``."""
+
     def px(units: float) -> int:
         return round(units * unit)
 

@@ -165,7 +165,7 @@ class LivePage:
                     view.span_s,
                     int(state.seconds * 4),
                 ),
-                lambda canvas: draw_history(canvas, boxes, state, view.spans, view.span_s),
+                lambda canvas: draw_history(canvas, boxes.history, boxes.history_plot, state, view.spans, view.span_s),
             ),
             _Panel(
                 "footer",

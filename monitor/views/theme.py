@@ -1,19 +1,19 @@
-"""Colours of the views, light and dark, built in Oklab; no Qt here.
+"""Colours of the views, light, dark and black on white for print, built in Oklab; no Qt here.
 
 Oklab: B. Ottosson, "A perceptual color space for image processing", 2020. Contrast: WCAG 2.2, "relative luminance" and
 "contrast ratio". Densities run from the paper's colour over slate blue to ink (light) or from night over slate blue to
 chalk (dark), in equal steps of Oklab; the one accent is copper, which every kind of colour vision tells from blue.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cache
 from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 
-ThemeName = Literal["light", "dark"]
-THEME_NAMES: tuple[ThemeName, ...] = ("light", "dark")
+ThemeName = Literal["light", "dark", "paper"]
+THEME_NAMES: tuple[ThemeName, ...] = ("light", "dark", "paper")
 RAMP_STEPS = 256
 
 _LMS_FROM_RGB = np.array(
@@ -137,6 +137,7 @@ class Theme:
 _Stops = tuple[tuple[float, float, float], tuple[float, float, float], tuple[float, float, float]]
 DENSITY_STOPS: dict[ThemeName, _Stops] = {
     "light": ((0.985, 0.004, 85.0), (0.640, 0.092, 248.0), (0.235, 0.075, 276.0)),
+    "paper": ((1.0, 0.0, 85.0), (0.640, 0.092, 248.0), (0.205, 0.060, 276.0)),
     "dark": ((0.190, 0.022, 262.0), (0.570, 0.088, 250.0), (0.965, 0.022, 95.0)),
 }
 
@@ -145,11 +146,23 @@ DENSITY_STOPS: dict[ThemeName, _Stops] = {
 def find_theme(name: ThemeName) -> Theme:
     """The theme of that name; raises ValueError for any other."""
     if name not in THEME_NAMES:
-        raise ValueError(f"theme must be light or dark, got {name!r}")
+        raise ValueError(f"theme must be one of {', '.join(THEME_NAMES)}, got {name!r}")
     rgb = np.rint(srgb_from_oklab(ramp_oklab(DENSITY_STOPS[name])) * 255.0).astype(np.uint32)
     ramp = np.uint32(0xFF000000) | rgb[:, 0] << np.uint32(16) | rgb[:, 1] << np.uint32(8) | rgb[:, 2]
     ramp.setflags(write=False)
     panel = Colour(*(int(part) for part in rgb[0]))
+    if name == "paper":
+        return replace(
+            find_theme("light"),
+            name=name,
+            page=panel,
+            panel=panel,
+            ink=_colour(0.150, 0.010, 270.0),
+            dim=_colour(0.400, 0.015, 265.0),
+            edge=_colour(0.560, 0.010, 262.0),
+            accent_wash=_colour(0.955, 0.025, 62.0),
+            ramp=ramp,
+        )
     if name == "light":
         return Theme(
             name=name,
