@@ -1,6 +1,7 @@
 """The options that commands share, and how what is typed becomes values."""
 
 import argparse
+import os
 from collections.abc import Sequence
 from pathlib import Path
 from typing import NoReturn
@@ -128,7 +129,33 @@ def add_output_options(parser: argparse.ArgumentParser) -> None:
     group.add_argument(
         "--picture-size", type=size, default=(1280, 800), metavar="WxH", help="of the picture (default 1280x800)"
     )
-    group.add_argument("--theme", choices=("light", "dark", "paper"), default="light", help="of the picture (default light); paper: for print")
+    add_report_option(group)
+    group.add_argument(
+        "--theme",
+        choices=("light", "dark", "paper"),
+        default="light",
+        help="of the picture (default light); paper: for print",
+    )
+
+
+def add_report_option(group: argparse._ArgumentGroup) -> None:
+    """The report, of a replay as of a watch."""
+    group.add_argument(
+        "--report",
+        metavar="FILE.html",
+        help="one page with pictures, all figures and their meaning, alarms and assumptions",
+    )
+
+
+def check_output_name(option: str, name: str, suffix: str) -> None:
+    """Refuse a file name that nothing could be written to, before any work is done. Raises InputError."""
+    path = Path(name)
+    if path.suffix.lower() != suffix:
+        raise InputError(f"{option} {name}: is written as {suffix[1:].upper()}; give a name that ends in {suffix}")
+    if not os.path.isdir(path.parent):  # false too for a name that cannot be
+        raise InputError(f"{option} {name}: there is no folder {path.parent}; make it first")
+    if os.path.isdir(path):
+        raise InputError(f"{option} {name}: is a folder; give a file's name")
 
 
 def add_journal_options(parser: argparse.ArgumentParser) -> None:

@@ -27,7 +27,7 @@ DEFINITIONS = {
     "Periodic jitter": "Peak and frequency of a line that stands clear of the floor in the timing error's spectrum.",
     "SNR": "Mean symbol energy over noise variance behind the matched filter (for I/Q: Es/N0); what neighbouring symbols do is no noise.",
     "MER": "Modulation error ratio: mean power of the ideal points over that of the deviation from them, after least-squares gain.",
-    "EVM": "Error vector magnitude: 100 x 10^(-MER/20), of the rms constellation.",
+    "EVM": "Error vector magnitude: 100 · 10^(−MER/20), of the rms constellation.",
     "Q": "Distance of two neighbouring levels over the sum of their standard deviations, the worst eye.",
     "Bit error rate": "Semi-analytic: for the patterns of neighbouring symbols the distance to the thresholds, the Gaussian tail beyond "
     "it, averaged over symbols and bits (Gray coding). An estimate, not a count of errors.",
@@ -59,7 +59,7 @@ BEHIND = (
     ),
     (
         "Deterministic and random jitter",
-        "Dual-Dirac model of the crossings' tails: total jitter at an error rate = deterministic part + 2 Q^-1(rate) x random part.",
+        "Dual-Dirac model of the crossings' tails: total jitter at an error rate = deterministic part + 2 Q⁻¹(rate) × random part.",
     ),
     (
         "What would open it",

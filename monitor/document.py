@@ -10,7 +10,7 @@ from dsp.reading import Reading
 from monitor.errors import printable
 from monitor.session import Outcome
 from monitor.version import version
-from monitor.views.wording import figure_groups, interval_text, plain
+from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
 
 # a value of the document; its arrays and objects hold more of them
 Json = None | bool | int | float | str | list[Any] | dict[str, Any]
@@ -132,6 +132,15 @@ def text(outcome: Outcome) -> Iterator[str]:
     yield f"{lock_text(outcome)}, {reading.symbols} symbols"
     interval = interval_text(reading)
     yield f"opening {plain(reading.opening_pct, 1)} %" + (f" ({interval})" if interval else "")
+    if reading.verdict is not None:
+        yield printable(reading.verdict)
+        for remark in outcome.diagnosis.remarks if outcome.diagnosis is not None else ():
+            yield printable(remark)
+    rows = budget_rows(reading.budget) if reading.budget is not None else []
+    if rows:
+        yield "What closes the eye, points of opening:"
+        for label, points in rows:
+            yield f"  {label:{_LABEL_WIDTH}}{plain(points, 1)}"
     for group in figure_groups(reading):
         yield f"{group.title}:"
         for figure in group.figures:

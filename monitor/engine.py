@@ -59,8 +59,8 @@ class Tap(Protocol):
 class EngineOptions:
     """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``.
 
-    ``aside`` is where a link is identified, and diagnosed for the view, while a live stream goes on; None: at once, so that a replay
-    repeats itself. ``first`` is a link that was identified before the stream began.
+    ``history`` keeps the opening's course where nobody looks. ``aside`` is where a link is identified, and diagnosed for the view, while
+    a live stream goes on; None: at once, so that a replay repeats itself. ``first`` is a link that was identified before the stream began.
     """
 
     window: int | None = None
@@ -69,13 +69,14 @@ class EngineOptions:
     rules: tuple[AlarmRule, ...] = ()
     chain: ChainOptions = field(default_factory=ChainOptions)
     display: bool = True
+    history: bool = False
     aside: Executor | None = None
     first: Identified | None = None
 
     @property
     def judges(self) -> bool:
         """Whether somebody wants readings between two lines."""
-        return self.display or bool(self.rules)
+        return self.display or self.history or bool(self.rules)
 
 
 class Engine:
@@ -173,6 +174,11 @@ class Engine:
     def seconds(self) -> float:
         """Length of the stream so far, lost samples included."""
         return self._position / self.sample_rate_hz
+
+    @property
+    def identified(self) -> Identified | None:
+        """The link that is watched, and which of its parts were found; None before there is one."""
+        return self._identified
 
     @property
     def position(self) -> int:

@@ -12,6 +12,7 @@ from monitor.journal import Journal, Keeper
 from monitor.linkfile import LinkOptions
 from monitor.running import chain_options, open_capture, open_journal, start_fields
 from monitor.sources import Source
+from monitor.state import LiveState
 from monitor.terminal import say
 
 
@@ -19,6 +20,7 @@ class Judged:
     """Feeds an engine beside the replay's own chain, and keeps its journal; a context.
 
     ``keeper`` and ``capture``, where given, are the caller's; else they are opened as the arguments say, and closed at the end.
+    ``history`` keeps the opening's course.
     """
 
     def __init__(
@@ -30,6 +32,7 @@ class Judged:
         *,
         keeper: Keeper | None = None,
         capture: Capture | None = None,
+        history: bool = False,
     ) -> None:
         self._own: Journal | None = None
         if keeper is None:
@@ -46,6 +49,7 @@ class Judged:
                 every_s=parsed.every,
                 rules=rules,
                 display=False,
+                history=history,
                 chain=chain_options(parsed, link),
             ),
             line=self._journal.write,
@@ -78,6 +82,10 @@ class Judged:
         self._engine.finish()
         self._last_line("interrupted" if interrupted else "the recording ended")
         return self._engine.alarms.record()
+
+    def state(self) -> LiveState:
+        """What a view would have been told at the end."""
+        return self._engine.state(ended=True)
 
     def _last_line(self, why: str) -> None:
         engine = self._engine

@@ -4,6 +4,7 @@ import argparse
 import os
 from collections.abc import Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 from monitor.errors import InputError
@@ -65,6 +66,16 @@ def links_of(parsed: argparse.Namespace) -> tuple[LinkArguments, ...]:
         LinkArguments(_changed(stream.parsed, link=files[number % len(files)]), stream.stream, stream.label)
         for number, stream in enumerate(streams)
     )
+
+
+def file_name(name: str) -> str:
+    """A link's name as a file's or folder's name."""
+    return "".join(c if c.isalnum() or c in "-_." else "-" for c in name).strip(".") or "link"
+
+
+def named_file(path: Path, name: str) -> Path:
+    """The file's name with the link's name in it: one file each where one was asked for."""
+    return path.with_name(f"{path.stem}-{file_name(name)}{path.suffix}")
 
 
 def name_links(names: Sequence[str], labels: Sequence[str]) -> tuple[str, ...]:

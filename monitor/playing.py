@@ -13,15 +13,17 @@ if TYPE_CHECKING:
     from monitor.engine import EngineOptions
     from monitor.linkfile import LinkOptions
     from monitor.sources import SampleOptions
+    from monitor.state import LiveState
 
 
 @dataclass(frozen=True, slots=True)
 class Played:
-    """What came of it: how much was played, in seconds of the recording (None: all), the alarms, and the view's exit status."""
+    """What came of it: how much was played, in seconds of the recording (None: all), the alarms, the exit status and the last state."""
 
     seconds: float | None
     alarms: list[dict[str, Any]]
     status: int
+    state: "LiveState"
 
 
 def check_pace(parsed: argparse.Namespace) -> None:
@@ -51,7 +53,8 @@ def play(
         # a window keeps its last picture until it is closed
         until=lambda running: view != "window" and running.state().ended,
     )
-    return Played(None if running.at_the_end else running.state().seconds, running.alarms, status)
+    state = running.state()
+    return Played(None if running.at_the_end else state.seconds, running.alarms, status, state)
 
 
 def play_options(

@@ -5,9 +5,9 @@ import os
 import sys
 from contextlib import nullcontext, suppress
 from dataclasses import replace
-from pathlib import Path
 from typing import TYPE_CHECKING
 
+from monitor.arguments import check_output_name
 from monitor.errors import InputError, NothingToMeasure
 from monitor.links import links_of
 from monitor.playing import check_pace, play
@@ -31,8 +31,9 @@ def replay(parsed: argparse.Namespace) -> int:
     """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
     # one thread a matrix product: the chain's own two threads are what the cores are for
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
-    if parsed.picture is not None:
-        _check_picture(parsed.picture)
+    for option, name, suffix in (("--picture", parsed.picture, ".png"), ("--report", parsed.report, ".html")):
+        if name is not None:
+            check_output_name(option, name, suffix)
     links = links_of(parsed)
     if len(links) > 1:
         from monitor.several_replay import replay_several
@@ -73,6 +74,11 @@ def replay(parsed: argparse.Namespace) -> int:
 
         width, height = parsed.picture_size
         save_picture(snapshot_of(outcome), parsed.picture, width, height, parsed.theme)
+    if parsed.report is not None:
+        from monitor.report import facts_of_run, save_report
+
+        state = played.state if played is not None else judge.state() if judge is not None else None
+        save_report(facts_of_run(outcome, options, [rule.text for rule in rules], state), parsed.report)
     if outcome.interrupted:
         return played.status if played is not None and played.status else INTERRUPTED
     if not outcome.measured:
@@ -83,13 +89,13 @@ def replay(parsed: argparse.Namespace) -> int:
 def _judging(
     parsed: argparse.Namespace, source: "Source", link: "LinkOptions", rules: "tuple[AlarmRule, ...]"
 ) -> "AbstractContextManager[Judged | None]":
-    """The judge of limits, keeper of the journal and of captures; None where nothing of them is asked for."""
-    wishes = (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture)
+    """The judge of limits, keeper of the journal, of captures and of the report's history; None where nothing of them is asked for."""
+    wishes = (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture, parsed.report)
     if not rules and all(wish is None for wish in wishes):
         return nullcontext()
     from monitor.judging import Judged
 
-    return Judged(parsed, source, link, rules)
+    return Judged(parsed, source, link, rules, history=parsed.report is not None)
 
 
 def _lines(outcome: "Outcome", *, as_json: bool) -> list[str]:
@@ -118,13 +124,3 @@ def discard_standard_output() -> None:
     """Send what is still to be written nowhere, so that the interpreter's end does not stumble over it."""
     with suppress(OSError, ValueError):
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-
-
-def _check_picture(name: str) -> None:
-    path = Path(name)
-    if path.suffix.lower() != ".png":
-        raise InputError(f"--picture {name}: pictures are PNG; give a name that ends in .png")
-    if not os.path.isdir(path.parent):  # false too for a name that cannot be
-        raise InputError(f"--picture {name}: there is no folder {path.parent}; make it first")
-    if os.path.isdir(path):
-        raise InputError(f"--picture {name}: is a folder; give a file's name")

@@ -2,7 +2,7 @@
 
 import base64
 import os
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from dataclasses import dataclass, field
 from datetime import UTC, datetime
 from importlib.resources import files
@@ -10,9 +10,11 @@ from pathlib import Path
 from typing import Any
 
 from jinja2 import Environment, StrictUndefined
+from markupsafe import Markup
 
 from dsp.chain import ChainOptions
 from dsp.diagnosis import Diagnosis
+from dsp.identify import Identified
 from dsp.link import Link
 from dsp.reading import Budget, Reading
 from monitor.definitions import BEHIND, OPENING, definition_of
@@ -37,6 +39,7 @@ from monitor.views.wording import (
 )
 
 _MOST_EVENTS = 200
+_END_S = 0.01
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,7 +95,11 @@ def link_settings(link: Link | None, found: Iterable[str], options: ChainOptions
         scheme = link.scheme
         carrier = "found by the carrier loop" if link.carrier_hz is None else f"{signed(link.carrier_hz, 1)} Hz"
         rows += [
-            Setting("Scheme", f"{scheme.name}: {scheme.levels} levels on {scheme.rails} rail{'s' * (scheme.rails > 1)}", how("scheme")),
+            Setting(
+                "Scheme",
+                f"{scheme.name}: {scheme.levels} levels on {scheme.rails} rail{'s' * (scheme.rails > 1)}",
+                how("scheme"),
+            ),
             Setting("Symbol rate", f"{link.symbol_rate_hz:.9g} Bd", how("symbol_rate_hz")),
             Setting("Samples a symbol", f"{link.samples_per_symbol:.6g}", "follows"),
             Setting("Pulse", str(link.pulse), how("pulse")),
@@ -137,6 +144,34 @@ def facts_of_run(
     )
 
 
+def facts_of_watch(
+    state: LiveState,
+    identified: Identified | None,
+    options: ChainOptions,
+    limits: Iterable[str] = (),
+    alarms: Iterable[dict[str, Any]] = (),
+) -> ReportFacts:
+    """What is to be told of a watch up to a state: its newest figures, and the course of all of it."""
+    link, found = (None, ()) if identified is None else (identified.link, identified.found)
+    stream = [
+        ("Watched", f"{plain(state.seconds, 1)} s of the stream"),
+        ("Samples lost", plain(state.samples_lost, 0)),
+    ]
+    reading = state.snapshot.reading
+    if reading is not None:
+        stream.append(("Figures are of the last", f"{plain(reading.symbols, 0)} symbols"))
+    if state.best is not None and state.best.opening_pct is not None:
+        at = "" if state.best_at_s is None else f" at {clock(state.best_at_s)}"
+        stream.append(("Best opening", f"{plain(state.best.opening_pct, 1)} %{at}"))
+    if state.change is not None and state.marks:
+        change = state.change
+        between = f"{signed(change.low, 1)} to {signed(change.high, 1)}"
+        stream.append(("Since the last mark", f"{change.verdict}: {signed(change.points, 1)} points (95 %: {between})"))
+    return ReportFacts(
+        state.snapshot, link_settings(link, found, options), tuple(limits), state, tuple(alarms), tuple(stream)
+    )
+
+
 def save_report(facts: ReportFacts, path: str | os.PathLike[str]) -> None:
     """Write the page; a file of that name is overwritten. From the main thread at first. Raises InputError."""
     from monitor.views.painter import ensure_application
@@ -158,24 +193,31 @@ def render(facts: ReportFacts) -> str:
     reading, diagnosis = snapshot.reading, snapshot.diagnosis or Diagnosis()
     end = state.seconds if state is not None else snapshot.seconds or 0.0
     spans = [
-        AlarmSpan(alarm["rule"], alarm["severity"], alarm["raised_at_s"], end if alarm["cleared_at_s"] is None else alarm["cleared_at_s"])
+        AlarmSpan(
+            alarm["rule"],
+            alarm["severity"],
+            alarm["raised_at_s"],
+            end if alarm["cleared_at_s"] is None else alarm["cleared_at_s"],
+        )
         for alarm in facts.alarms
     ]
     pictures = {
-        name: "data:image/png;base64," + base64.b64encode(data).decode("ascii")
+        name: Markup("data:image/png;base64," + base64.b64encode(data).decode("ascii"))
         for name, data in draw_pictures(snapshot, state, spans).items()
     }
-    environment = Environment(autoescape=True, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True)
+    environment = Environment(
+        autoescape=True, finalize=_one_line, undefined=StrictUndefined, trim_blocks=True, lstrip_blocks=True
+    )
     template = environment.from_string(files("monitor").joinpath("report.html.j2").read_text(encoding="utf-8"))
     return template.render(
-        title=printable(snapshot.link_text or snapshot.source_text or "no link"),
-        source=printable(snapshot.source_text),
-        lock=printable(snapshot.lock_text),
+        title=snapshot.link_text or snapshot.source_text or "no link",
+        source=snapshot.source_text,
+        lock=snapshot.lock_text,
         version=version(),
         made=facts.made.astimezone(UTC).strftime("%Y-%m-%d %H:%M:%S UTC"),
-        notes=[printable(note) for note in snapshot.notes],
-        settings=[(s.label, printable(s.value), s.how) for s in facts.settings],
-        limits=[printable(limit) for limit in facts.limits],
+        notes=snapshot.notes,
+        settings=facts.settings,
+        limits=facts.limits,
         stream=facts.stream,
         pictures=pictures,
         opening=_opening(reading),
@@ -189,7 +231,11 @@ def render(facts: ReportFacts) -> str:
         else [],
         causes=cause_figures(diagnosis),
         remedies=[
-            (r.words, None if r.before_pct is None else plain(r.before_pct, 1), None if r.after_pct is None else plain(r.after_pct, 1))
+            (
+                r.words,
+                None if r.before_pct is None else plain(r.before_pct, 1),
+                None if r.after_pct is None else plain(r.after_pct, 1),
+            )
             for r in (remedies(reading, diagnosis) if reading is not None else [])
         ],
         neighbours=strongest(diagnosis.response, 6) if diagnosis.response is not None else [],
@@ -201,9 +247,14 @@ def render(facts: ReportFacts) -> str:
         worst=_worst(facts),
         events=_events(state) if state is not None else [],
         more_events=_more_events(state) if state is not None else 0,
-        alarms=[_alarm(alarm) for alarm in facts.alarms],
+        alarms=[_alarm(alarm, end) for alarm in facts.alarms],
         judged=state is not None,
     )
+
+
+def _one_line(value: object) -> object:
+    """Names and words without control characters; what is known to be safe as it is."""
+    return printable(value) if isinstance(value, str) and not isinstance(value, Markup) else value
 
 
 def _opening(reading: Reading | None) -> str | None:
@@ -255,7 +306,7 @@ def _eyes(reading: Reading, snapshot: Snapshot) -> list[tuple[str, ...]]:
 
     rails = snapshot.image.rails if snapshot.image is not None else ("",)
     each = max(len(reading.eyes) // len(rails), 1)
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for number, eye in enumerate(reading.eyes):
         rail = rails[min(number // each, len(rails) - 1)]
         name = f"{rail} {number % each + 1}".strip() if len(reading.eyes) > 1 else "the eye"
@@ -292,7 +343,10 @@ def _worst(facts: ReportFacts) -> list[tuple[str, str]]:
     if facts.worst is None:
         return []
     text, reading = facts.worst
-    rows = [("Windows", text), ("Least opening of them", f"{_opening(reading) or 'not known'} %".replace("known %", "known"))]
+    rows = [
+        ("Windows", text),
+        ("Least opening of them", f"{_opening(reading) or 'not known'} %".replace("known %", "known")),
+    ]
     if reading.snr_db is not None:
         rows.append(("SNR in that one", f"{plain(reading.snr_db, 1)} dB"))
     if reading.ber is not None:
@@ -300,46 +354,43 @@ def _worst(facts: ReportFacts) -> list[tuple[str, str]]:
     return rows
 
 
+def _at(seconds: float, length: float) -> str:
+    """A place in a stream of that length."""
+    return f"{seconds:.2f} s" if length < 120 else clock(seconds)
+
+
 def _all_events(state: LiveState) -> list[tuple[float, str]]:
-    events = [(at, "lock gained" if gained else "lock lost") for at, gained in state.locks]
+    locks = state.locks
+    if state.ended and locks and not locks[-1][1] and locks[-1][0] >= state.seconds - _END_S:
+        locks = locks[:-1]  # that was the stream's end
+    events = [(at, "lock gained" if gained else "lock lost") for at, gained in locks]
     events += [(at, "samples lost") for at in state.gaps_s]
     for number, mark in enumerate(state.marks, start=1):
         opening = "" if mark.opening_pct is None else f", opening {plain(mark.opening_pct, 1)} %"
-        events.append((mark.seconds, f"{mark_words(printable(mark.name), number)}{opening}"))
+        events.append((mark.seconds, f"{mark_words(mark.name, number)}{opening}"))
     return sorted(events)
 
 
 def _events(state: LiveState) -> list[tuple[str, str]]:
     """What happened when, oldest first."""
-    return [(clock(at), what) for at, what in _all_events(state)[:_MOST_EVENTS]]
+    return [(_at(at, state.seconds), what) for at, what in _all_events(state)[:_MOST_EVENTS]]
 
 
 def _more_events(state: LiveState) -> int:
     return max(0, len(_all_events(state)) - _MOST_EVENTS)
 
 
-def _alarm(alarm: dict[str, Any]) -> tuple[str, ...]:
+def _alarm(alarm: dict[str, Any], length: float) -> tuple[str, ...]:
     def number(value: object, unit: str = "") -> str:
         return f"{value:.6g}{unit}" if isinstance(value, int | float) else ""
 
     unit = f" {alarm['unit']}" if alarm["unit"] else ""
     cleared = alarm["cleared_at_s"]
     return (
-        printable(alarm["rule"]),
+        alarm["rule"],
         alarm["severity"],
-        clock(alarm["raised_at_s"]),
-        "stood at the end" if cleared is None else clock(cleared),
+        _at(alarm["raised_at_s"], length),
+        "stood at the end" if cleared is None else _at(cleared, length),
         number(alarm["worst"], unit),
         number(alarm["limit"], unit),
     )
-
-
-def check_page_name(name: str, option: str, suffixes: Sequence[str], kind: str) -> None:
-    """Refuse a file name that nothing could be written to, before any work is done. Raises InputError."""
-    path = Path(name)
-    if path.suffix.lower() not in suffixes:
-        raise InputError(f"{option} {name}: {kind}; give a name that ends in {suffixes[0]}")
-    if not os.path.isdir(path.parent):  # false too for a name that cannot be
-        raise InputError(f"{option} {name}: there is no folder {path.parent}; make it first")
-    if os.path.isdir(path):
-        raise InputError(f"{option} {name}: is a folder; give a file's name")

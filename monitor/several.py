@@ -4,8 +4,10 @@ import math
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from pathlib import Path
 
 from monitor.errors import MonitorError
+from monitor.links import named_file
 from monitor.state import LinkState, LiveState, SeveralState
 from monitor.watch import Watch
 
@@ -181,6 +183,15 @@ class SeveralWatches:
         """How long traces stay, in every eye."""
         for watch in self._watches:
             watch.set_persistence(seconds)
+
+    def report(self, path: Path) -> None:
+        """A report on the link in front. Raises InputError."""
+        self._front.report(path)
+
+    def report_each(self, path: Path) -> None:
+        """A report on every link, the link's name in the file's. Raises InputError."""
+        for name, watch in zip(self._names, self._watches, strict=True):
+            watch.report(named_file(path, name))
 
     def stop(self) -> None:
         """End all watches."""

@@ -5,13 +5,14 @@ import threading
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.document import json_text, links_document, text
 from monitor.errors import InputError, MonitorError, NothingToMeasure, printable
 from monitor.interrupt import Interrupt, Stoppable
 from monitor.judging import Judged
-from monitor.links import LinkArguments
+from monitor.links import LinkArguments, named_file
 from monitor.playing import Played, check_pace, play_options
 from monitor.replay import tell
 from monitor.running import chain_options, open_journal
@@ -21,6 +22,7 @@ from monitor.shared_journal import ByLink, LinkJournal
 from monitor.showing import default_view
 from monitor.snapshot import Snapshot
 from monitor.sources import SampleOptions, Source, open_source
+from monitor.state import LiveState
 from monitor.terminal import ProgressBar, say
 from monitor.views.wording import plain
 
@@ -36,10 +38,11 @@ LIMIT_BROKEN, NOTHING, INTERRUPTED = 1, 3, 130
 
 @dataclass
 class LinkOutcome:
-    """What came of one link: its outcome, or the error that ended it."""
+    """What came of one link: its outcome, with the course of it where it was judged, or the error that ended it."""
 
     name: str
     outcome: Outcome | None = None
+    state: LiveState | None = None
     failure: MonitorError | None = None
 
     @property
@@ -67,6 +70,8 @@ def replay_several(parsed: argparse.Namespace, several: Sequence[LinkArguments])
     tell([json_text(_document(found))] if parsed.json else list(_text(found)))
     if parsed.picture is not None:
         _save_picture(parsed, found)
+    if parsed.report is not None:
+        _save_reports(parsed, links, found)
     if status == NOTHING:
         for link in found:
             if link.outcome is not None and not link.outcome.measured:
@@ -98,7 +103,8 @@ def play_several(parsed: argparse.Namespace, links: Sequence[NamedLink]) -> list
         until=lambda running: view != "window" and running.over,
     )
     return [
-        Played(None if watch.at_the_end else watch.state().seconds, watch.alarms, status) for watch in running.watches
+        Played(None if watch.at_the_end else watch.state().seconds, watch.alarms, status, watch.state())
+        for watch in running.watches
     ]
 
 
@@ -135,6 +141,18 @@ def _save_picture(parsed: argparse.Namespace, found: Sequence[LinkOutcome]) -> N
     save_tiles(snapshots, worst_of(found), parsed.picture, width, height, parsed.theme)
 
 
+def _save_reports(parsed: argparse.Namespace, links: Sequence[NamedLink], found: Sequence[LinkOutcome]) -> None:
+    """One for each link, its name in the file's."""
+    from monitor.report import facts_of_run, save_report
+
+    for link, one in zip(links, found, strict=True):
+        if one.outcome is not None:
+            options = replace(chain_options(link.arguments.parsed, link.options), window=parsed.window)
+            limits = [rule.text for rule in link.rules]
+            facts = facts_of_run(one.outcome, options, limits, one.state)
+            save_report(facts, named_file(Path(parsed.report), link.name))
+
+
 def worst_of(found: Sequence[LinkOutcome]) -> int:
     """Which link is worst: one that failed, else one without an eye, else the least open."""
 
@@ -157,7 +175,10 @@ def measure_links(
     unplayed = {number for number, one in enumerate(played or ()) if one.seconds == 0}
     judged = played is None and (
         any(link.rules for link in links)
-        or any(wish is not None for wish in (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture))
+        or any(
+            wish is not None
+            for wish in (parsed.journal, parsed.publish, parsed.on_alarm, parsed.capture, parsed.report)
+        )
     )
     with ExitStack() as stack:
         interrupt = stack.enter_context(Interrupt())
@@ -192,6 +213,7 @@ def measure_links(
         elif own.outcome is not None:
             own.outcome.alarms = one.alarms
             own.outcome.interrupted |= one.status != 0
+            own.state = one.state
     interrupted = interrupt.asked or any(one.status for one in played or ())
     return found, _status(found, links, interrupted=interrupted)
 
@@ -266,8 +288,17 @@ class _Task:
         options = replace(chain_options(parsed, link), window=parsed.window)
         if self.keeper is None:
             return run(self.source, link.wanted(), options, threads=1, progress=self.progress)
-        with Judged(parsed, self.source, link, self.link.rules, keeper=self.keeper, capture=self.capture) as judge:
+        with Judged(
+            parsed,
+            self.source,
+            link,
+            self.link.rules,
+            keeper=self.keeper,
+            capture=self.capture,
+            history=parsed.report is not None,
+        ) as judge:
             outcome = run(self.source, link.wanted(), options, threads=1, progress=self.progress, observe=judge.feed)
             outcome.interrupted = self.source.asked()
             outcome.alarms = judge.finish(interrupted=outcome.interrupted)
+            self.found.state = judge.state()
         return outcome

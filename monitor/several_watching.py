@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.errors import InputError, MonitorError
-from monitor.links import LinkArguments, name_links
+from monitor.links import LinkArguments, file_name, name_links
 from monitor.running import chain_options, link_and_limits, open_capture, open_journal, start_fields
 from monitor.shared_journal import ByLink, LinkJournal
 from monitor.showing import INTERRUPTED, SWITCH_S, Asked, Telling, default_view
@@ -68,11 +68,6 @@ def open_captures(
     return captures
 
 
-def file_name(name: str) -> str:
-    """The name as a file's or folder's name."""
-    return "".join(c if c.isalnum() or c in "-_." else "-" for c in name).strip(".") or "link"
-
-
 def watch_several(
     parsed: argparse.Namespace,
     several: Sequence[LinkArguments],
@@ -93,7 +88,7 @@ def watch_several(
             every_s=own.every,
             stall_s=own.stall,
             rules=link.rules,
-            display=view != "none",
+            display=view != "none" or parsed.report is not None,
             chain=replace(chain_options(own, link.options), keep_total=False),
         )
 
@@ -107,6 +102,8 @@ def watch_several(
         for_s=parsed.for_s,
         until=lambda running: parsed.for_s is not None and running.over,
     )
+    if parsed.report is not None:
+        running.report_each(Path(parsed.report))
     return status or max((error.exit_status for _, error in running.failures), default=0)
 
 

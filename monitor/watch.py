@@ -7,6 +7,7 @@ import time
 from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 from dsp.block import Block
@@ -148,6 +149,14 @@ class Watch:
             engine.persistence_s = seconds
 
         self._commands.put(apply)
+
+    def report(self, path: Path) -> None:
+        """Write a report on the watch so far. From the thread that draws. Raises InputError."""
+        from monitor.report import facts_of_watch, save_report
+
+        identified = self._engine.identified if self._engine is not None else None
+        limits = [rule.text for rule in self._options.rules]
+        save_report(facts_of_watch(self._state, identified, self._options.chain, limits, self._alarms.record()), path)
 
     def note(self, text: str) -> None:
         """Something the user should see."""

@@ -3,12 +3,15 @@
 import argparse
 import os
 from collections.abc import Callable
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from monitor.arguments import (
     add_form_options,
     add_journal_options,
     add_link_options,
+    add_report_option,
+    check_output_name,
     error_rate,
     not_negative,
     positive,
@@ -61,6 +64,7 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
     )
     measure.add_argument("--for", dest="for_s", type=positive, metavar="S", help="end by itself after so long")
     add_view_options(parser)
+    add_report_option(parser.add_argument_group("output"))
     add_journal_options(parser)
     add_capture_options(parser)
     parser.set_defaults(run=watch)
@@ -69,6 +73,8 @@ def add_watch_arguments(parser: argparse.ArgumentParser) -> None:
 def watch(parsed: argparse.Namespace) -> int:
     """Run the command on parsed arguments; returns the exit status. Raises MonitorError."""
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+    if parsed.report is not None:
+        check_output_name("--report", parsed.report, ".html")
     links = links_of(parsed)
     with SlowStartNotice():
         import dsp.chain  # noqa: F401  # the kernels
@@ -90,10 +96,10 @@ def watch(parsed: argparse.Namespace) -> int:
         every_s=parsed.every,
         stall_s=parsed.stall,
         rules=rules,
-        display=view != "none",
+        display=view != "none" or parsed.report is not None,
         chain=replace(chain_options(parsed, link), keep_total=False),
     )
-    _, status = attend(
+    running, status = attend(
         parsed,
         _opener(parsed),
         link,
@@ -103,6 +109,8 @@ def watch(parsed: argparse.Namespace) -> int:
         for_s=parsed.for_s,
         until=lambda running: parsed.for_s is not None and running.state().ended,
     )
+    if parsed.report is not None:
+        running.report(Path(parsed.report))
     return status
 
 

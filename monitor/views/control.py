@@ -7,13 +7,15 @@ Nothing that cannot be taken back lies on a single key.
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from datetime import datetime
+from pathlib import Path
 from typing import Literal, Protocol
 
 from monitor.state import LiveState, SeveralState
 
 
 class Watched(Protocol):
-    """The engine's side of a view. Every call returns at once and may come from any thread."""
+    """The engine's side of a view. Every call but `report` returns at once and may come from any thread."""
 
     def state(self) -> LiveState:
         """The newest state."""
@@ -41,6 +43,10 @@ class Watched(Protocol):
 
     def set_persistence(self, seconds: float | None) -> None:
         """How long traces stay: 0 for the newest only, None for ever."""
+        ...
+
+    def report(self, path: Path) -> None:
+        """Write a report on the watch so far; the one call that takes its time. Raises InputError."""
         ...
 
     def stop(self) -> None:
@@ -84,6 +90,7 @@ ActionName = Literal[
     "further",
     "nearer",
     "save",
+    "report",
     "larger",
     "smaller",
     "theme",
@@ -156,6 +163,7 @@ ACTIONS: tuple[Action, ...] = (
     Action("smaller", ("-",), "Smaller text", "more room for the eye", "View", window_only=True),
     Action("theme", ("L",), "Light or dark", "for daylight or for the night", "View", window_only=True),
     Action("save", ("S",), "Save picture", "a PNG file of what is shown", "Watch"),
+    Action("report", ("R",), "Save report", "an HTML page with all that is known so far", "Watch"),
     Action("tone", ("T",), "Tone", "a tone that rises as the eye opens", "Watch"),
     Action("help", ("F1", "?"), "Keys", "show or hide this list", "Watch"),
     Action("close", ("Ctrl+Q",), "End the watch", "the journal gets its last line", "Watch"),
@@ -186,6 +194,16 @@ PERSISTENCE_STEPS: tuple[float | None, ...] = (0.0, 0.5, 1.0, 2.0, 5.0, 10.0, 30
 DEFAULT_PERSISTENCE: float | None = 2.0
 HISTORY_STEPS: tuple[float | None, ...] = (60.0, 600.0, 3600.0, 86400.0, None)
 TEXT_STEPS = (1.0, 1.2, 1.45, 1.75, 2.1)
+
+
+def free_name(folder: Path, suffix: str) -> Path:
+    """A name of this second for a picture or report in the folder, that no file has yet."""
+    path = folder / f"lidwatch-{datetime.now().astimezone():%Y%m%d-%H%M%S}{suffix}"
+    number = 1
+    while path.exists():
+        number += 1
+        path = path.with_name(f"{path.stem.rsplit('_', 1)[0]}_{number}{suffix}")
+    return path
 
 
 def action_for(key: str) -> Action | None:

@@ -216,7 +216,7 @@ def _draw_figures(canvas: Canvas, box: Box, figures: Sequence[Figure]) -> int:
 def _framed(canvas: Canvas, box: Box, gutter: float, foot: float) -> Box:
     """The inside of a plot that leaves room for ticks at its left and its foot."""
     left, tick = canvas.px(gutter), canvas.px(6)
-    inside = Box(box.x + left, box.y + tick, box.width - left - canvas.px(10), box.height - tick - canvas.px(foot))
+    inside = Box(box.x + left, box.y + tick, box.width - left - canvas.px(16), box.height - tick - canvas.px(foot))
     canvas.fill(inside, canvas.theme.panel)
     return inside
 
@@ -276,7 +276,7 @@ def _draw_taps(canvas: Canvas, box: Box, response: Response) -> None:
     whole = reach > 0.7
     low, high = (min(-0.2, -reach), max(1.15, reach)) if whole else (-reach, reach)
     plot = _Plot(inside, float(lags[0]) - 0.6, float(lags[-1]) + 0.6, low, high)
-    step = pixels.tick_step(high - low, max(2, inside.height // max(canvas.px(32), 1)))
+    step = pixels.tick_step(high - low, max(3, inside.height // max(canvas.px(26), 1)))
     for k in range(math.ceil(low / step), math.floor(high / step) + 1):
         _left_tick(canvas, plot, k * step, f"{plain(100.0 * k * step, 0 if step >= 0.01 else 1)} %", strong=k == 0)
     every = next(n for n in (1, 2, 3, 4, 6, 12) if n >= len(lags) * canvas.px(26) / inside.width or n == 12)

@@ -45,7 +45,7 @@ def draw_history(
     now = max(state.seconds, 1e-9)
     start = 0.0 if span_s is None else max(0.0, now - span_s)
     # before the first minute is over, time runs into an empty strip instead of being squeezed anew at every look
-    end = max(now, start + (_LEAST_SPAN_S if span_s is None else span_s))
+    end = now if state.ended else max(now, start + (_LEAST_SPAN_S if span_s is None else span_s))
     lost = lost_spans(state.locks, now, locked=state.locked)
     runs = history_runs(state.history, lost, start, end, plot.width)
     best = state.best.opening_pct if state.best is not None else None

@@ -48,7 +48,8 @@ def draw_pictures(snapshot: Snapshot, state: LiveState | None, alarms: Sequence[
         rails = len(image.rails)
 
         def draw_eye(canvas: Canvas, box: Box) -> None:
-            page = arrange_eye(box.width, box.height, _SCALE, box, box, rails)
+            inside = Box(0, 0, box.width - canvas.px(4), box.height)
+            page = arrange_eye(box.width, box.height, _SCALE, inside, inside, rails)
             draw_eye_axes(canvas, page, image, reading)
             for rail, places in enumerate(page.rails):
                 draw_traces(canvas, places.eye, image, rail)
@@ -57,7 +58,7 @@ def draw_pictures(snapshot: Snapshot, state: LiveState | None, alarms: Sequence[
     if diagnosis is not None and reading is not None:
         if diagnosis.response is not None:
             response, names = diagnosis.response, image.rails if image is not None else ()
-            made["response"] = picture(350, 270, lambda canvas, box: draw_response(canvas, box, response, names))
+            made["response"] = picture(350, 300, lambda canvas, box: draw_response(canvas, box, response, names))
         target = diagnosis.jitter.at_ber if diagnosis.jitter is not None else None
         curves = {
             "instant": (diagnosis.over_time, "Over the sampling instant", "UI from the best instant"),

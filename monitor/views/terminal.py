@@ -8,7 +8,6 @@ import sys
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import replace
-from datetime import datetime
 from pathlib import Path
 from typing import TextIO
 
@@ -18,6 +17,7 @@ from monitor.views.control import (
     SHELVE_SECONDS,
     Watched,
     action_for,
+    free_name,
     next_rail,
     persistence_words,
     step_persistence,
@@ -179,6 +179,8 @@ class TerminalView:
                 self._keep(0.0)
             case "save":
                 self._save()
+            case "report":
+                self._report()
             case "tone":
                 self._say("the tone is only in the window")
             case "help":
@@ -226,17 +228,22 @@ class TerminalView:
     def _save(self) -> None:
         from monitor.views.painter import save_picture
 
-        path = self._pictures / f"lidwatch-{datetime.now().astimezone():%Y%m%d-%H%M%S}.png"
-        number = 1
-        while path.exists():
-            number += 1
-            path = path.with_name(f"{path.stem.rsplit('_', 1)[0]}_{number}.png")
+        path = free_name(self._pictures, ".png")
         try:
             save_picture(self._state.snapshot, path)
         except MonitorError as error:
             self._say(f"picture not saved: {error}")
         else:
             self._say(f"picture saved: {path}")
+
+    def _report(self) -> None:
+        path = free_name(self._pictures, ".html")
+        try:
+            self._watched.report(path)
+        except MonitorError as error:
+            self._say(str(error))
+        else:
+            self._say(f"report saved: {path}")
 
 
 def _held(before: LiveState, newest: LiveState) -> LiveState:

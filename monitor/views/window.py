@@ -4,7 +4,6 @@ import os
 import sys
 import time
 from collections.abc import Callable
-from datetime import datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Literal
 
@@ -24,7 +23,7 @@ from PySide6.QtGui import (
 )
 from PySide6.QtWidgets import QApplication, QLineEdit, QMainWindow, QWidget
 
-from monitor.errors import InputError
+from monitor.errors import InputError, MonitorError
 from monitor.interrupt import Interrupt
 from monitor.views.canvas import Canvas, qcolour
 from monitor.views.choices import load_choices, save_choices, settings_file
@@ -36,6 +35,7 @@ from monitor.views.control import (
     ActionName,
     LinkAction,
     Watched,
+    free_name,
     next_rail,
     persistence_words,
     step_history,
@@ -312,6 +312,7 @@ class LiveWindow(QMainWindow):
             "smaller": lambda: self._resize_text(larger=False),
             "theme": self._other_theme,
             "save": self._save,
+            "report": self._report,
             "tone": self._switch_tone,
             "help": self._help,
             "close": self._close,
@@ -441,11 +442,7 @@ class LiveWindow(QMainWindow):
         self.help.update()
 
     def _save(self) -> None:
-        path = self._pictures / f"lidwatch-{datetime.now().astimezone():%Y%m%d-%H%M%S}.png"
-        number = 1
-        while path.exists():
-            number += 1
-            path = path.with_name(f"{path.stem.rsplit('_', 1)[0]}_{number}.png")
+        path = free_name(self._pictures, ".png")
         page = LivePage()
         width, height = self.face.pixels()
         page.draw(self.view(), width, height, self.face.devicePixelRatioF())
@@ -456,6 +453,15 @@ class LiveWindow(QMainWindow):
             self.say(f"picture not saved: {error.strerror or error}: {path.parent}")
         else:
             self.say(f"picture saved: {path.name}")
+
+    def _report(self) -> None:
+        path = free_name(self._pictures, ".html")
+        try:
+            self._watched.report(path)
+        except MonitorError as error:
+            self.say(str(error))
+        else:
+            self.say(f"report saved: {path.name}")
 
     def _switch_tone(self) -> None:
         if self._tone.on:

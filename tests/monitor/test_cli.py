@@ -37,7 +37,7 @@ from tests.monitor.recordings import (
 
 ALL, BROKEN, UNUSABLE, NOTHING, INTERRUPTED = 0, 1, 2, 3, 130
 RELIED_ON = """--rate --format --channels --iq --start --duration --symbol-rate --scheme --pulse --carrier --timing
-    --loop-bandwidth --link --json --picture --target-ber"""
+    --loop-bandwidth --link --json --picture --report --target-ber"""
 
 
 @pytest.fixture
@@ -127,7 +127,9 @@ def test_help_lists_only_what_exists(capsys):
         (("x.iq", "--sym", "9600"), "unrecognized arguments: --sym"),
         (("x.iq", "y.iq", *RAW), "x.iq: no such file"),
         (("x.iq", "--picture-size", "0x0"), "--picture-size"),
-        (("x.iq", "--picture", "eye.jpg"), "pictures are PNG; give a name that ends in .png"),
+        (("x.iq", "--picture", "eye.jpg"), "is written as PNG; give a name that ends in .png"),
+        (("x.iq", "--report", "report.pdf"), "is written as HTML; give a name that ends in .html"),
+        (("x.iq", "--report", "nowhere/report.html"), "there is no folder nowhere; make it first"),
         (("x.iq", "--picture", "nowhere/eye.png"), "there is no folder nowhere; make it first"),
         (("x.iq", "--scheme", "qam17", *RAW), "scheme 'qam17' is not known; take one of"),
         (("x.iq", "--pulse", "rrc", *RAW), "rrc needs its roll-off"),

@@ -54,6 +54,10 @@ class NotedCalls:
     def set_persistence(self, seconds):
         self.note(f"persistence {seconds}")
 
+    def report(self, path):
+        path.write_text("<!DOCTYPE html>")
+        self.note("report")
+
     def stop(self):
         self.note("stop")
 

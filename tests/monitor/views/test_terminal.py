@@ -217,6 +217,7 @@ def test_every_key_does_what_the_list_of_keys_says(session, tmp_path):
         (b"h", "held at"),
         (b"\x1b", "Escape hold"),
         (b"s", "picture saved"),
+        (b"r", "report saved"),
         (b"t", "only in the window"),
     ):
         one.type(key)
@@ -234,8 +235,10 @@ def test_every_key_does_what_the_list_of_keys_says(session, tmp_path):
         "persistence 5.0",
         "persistence 2.0",
         "persistence 0.0",
+        "report",
         "stop",
     ]
+    assert len(list(tmp_path.glob("lidwatch-*.html"))) == 1
     picture = next(tmp_path.glob("lidwatch-*.png"))
     assert picture.read_bytes().startswith(b"\x89PNG")
 

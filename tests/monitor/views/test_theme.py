@@ -114,7 +114,7 @@ def test_the_accent_differs_from_bars_and_densities_for_colour_blind_eyes(name, 
 
 
 def test_an_unknown_theme_is_refused():
-    with pytest.raises(ValueError, match="light or dark"):
+    with pytest.raises(ValueError, match="light, dark, paper"):
         find_theme("sepia")
 
 

@@ -45,6 +45,10 @@ class RecordingWatch:
     def set_persistence(self, seconds):
         self.told.append(("set_persistence", seconds))
 
+    def report(self, path):
+        path.write_text("<!DOCTYPE html>")
+        self.told.append(("report",))
+
     def stop(self):
         self.told.append(("stop",))
 
