@@ -292,7 +292,15 @@ def _balance(reading: Reading) -> list[_Step]:
     steps = []
     for (label, points, kind), a, b in zip(rows, ends[:-1], ends[1:], strict=True):
         start, stop = (100.0 * (value - low) / (high - low) for value in sorted((a, b)))
-        steps.append(_Step(label, plain(points, 1), round(start, 2), round(max(stop - start, 0.3), 2), kind))
+        steps.append(
+            _Step(
+                label,
+                plain(points, 1),
+                round(start, 2),
+                round(max(stop - start, 0.3) if abs(points) >= 0.05 else 0.0, 2),
+                kind,
+            )
+        )
     whole = 100.0 * (0.0 - low) / (high - low)
     steps.append(_Step("Together", plain(ends[-1], 1), round(whole, 2), 0.0, "sum"))
     return steps

@@ -328,6 +328,39 @@ def test_a_picture_that_cannot_be_written_loses_no_figure(lidwatch, recording, t
     assert strict_json(out)["reading"]["symbols"] > 2800
 
 
+# -- reports -----------------------------------------------------------------------------------------------------------
+
+
+def test_a_report_is_made_beside_the_document_and_changes_none_of_it(lidwatch, recording, tmp_path):
+    report = tmp_path / "link.html"
+    status, out, err = lidwatch(recording, *RAW, *QPSK, "--json", "--report", str(report))
+    assert (status, err) == (ALL, "")
+    _, alone, _ = lidwatch(recording, *RAW, *QPSK, "--json")
+    assert strict_json(out)["reading"] == strict_json(alone)["reading"]
+    html = report.read_text(encoding="utf-8")
+    assert f"{strict_json(out)['reading']['opening_pct']:.1f} <small>% open" in html
+    assert "The opening over the stream" in html
+
+
+def test_a_file_name_that_is_html_stays_a_name(lidwatch, tmp_path):
+    path = tmp_path / "<script>alert(1)<!--.iq"
+    path.write_bytes(qpsk().tobytes())
+    report = tmp_path / "link.html"
+    status, _, err = lidwatch(str(path), *RAW, *QPSK, "--report", str(report))
+    assert (status, err) == (ALL, "")
+    html = report.read_text(encoding="utf-8")
+    assert "<script" not in html
+    assert "<!--" not in html
+    assert "&lt;script&gt;alert(1)&lt;!--.iq" in html
+
+
+def test_a_report_without_a_lock_says_so(lidwatch, tmp_path):
+    path, report = raw(tmp_path, 0 * qpsk()), tmp_path / "link.html"
+    status, _, err = lidwatch(path, *RAW, "--report", str(report))
+    assert status == NOTHING
+    assert one_line(err).rpartition("nothing to measure: ")[2].strip() in report.read_text(encoding="utf-8")
+
+
 # -- bad input ---------------------------------------------------------------------------------------------------------
 
 

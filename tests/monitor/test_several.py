@@ -367,6 +367,15 @@ def test_several_replays_are_told_one_after_the_other_and_the_worst_at_the_end(t
     assert out.splitlines()[-1].startswith("worst of 2 links: west, ")
 
 
+def test_each_of_several_links_has_a_report_with_its_name_in_the_files(tmp_path):
+    files = [raw(tmp_path, qpsk(4000, snr), f"{name}.iq") for name, snr in (("east", 25.0), ("west", 15.0))]
+    assert main(["replay", *files, *RAW, *QPSK, "--report", str(tmp_path / "links.html")]) == 0
+    pages = {path.name: path.read_text(encoding="utf-8") for path in tmp_path.glob("*.html")}
+    assert set(pages) == {"links-east.html", "links-west.html"}
+    assert "east.iq" in pages["links-east.html"]
+    assert "The opening over the stream" in pages["links-west.html"]
+
+
 def test_a_recording_without_a_link_is_status_3_and_does_not_hide_the_other(tmp_path, capsys):
     noise = np.random.default_rng(1).normal(size=(48000, 2)).astype(np.float32).view(np.complex64).ravel()
     files = [raw(tmp_path, qpsk(4000), "good.iq"), raw(tmp_path, noise, "noise.iq")]

@@ -64,6 +64,18 @@ def test_a_recording_is_watched_at_its_pace_into_the_journal(tmp_path):
     assert lines[-1]["samples"] + lines[-1]["samples_lost"] == 96_000
 
 
+def test_a_watch_leaves_a_report_of_its_last_figures(tmp_path):
+    path, report = raw(tmp_path, qpsk(24_000)), tmp_path / "watch.html"
+    command = ["watch", path, *RAW, *QPSK, "--pace", "2", "--view", "none", "--report", str(report)]
+    assert run_program(*command) == (0, "", "")
+    html = report.read_text(encoding="utf-8")
+    assert "% open" in html
+    for picture in ("The eye", "Response of the link", "The opening over the stream"):
+        assert f'alt="{picture}' in html
+    assert "2.0 s of the stream" in html
+    assert "<td class=\"w\">qpsk: 2 levels on 2 rails</td><td class=\"dim v\">given</td>" in html
+
+
 def test_standard_input_is_watched():
     status, out, err = run_program("watch", "-", *RAW, *QPSK, "--view", "none", stdin=qpsk(3000).tobytes())
     assert (status, out, err) == (0, "", "")
