@@ -291,7 +291,7 @@ def test_impossible_sizes_are_refused(snapshots, size):
 
 
 def test_an_unknown_theme_is_refused(snapshots):
-    with pytest.raises(ValueError, match="light or dark"):
+    with pytest.raises(ValueError, match="light, dark, paper"):
         paint_picture(snapshots["pam2"], theme="sepia")
 
 
