@@ -73,7 +73,7 @@ def test_a_watch_leaves_a_report_of_its_last_figures(tmp_path):
     for picture in ("The eye", "Response of the link", "The opening over the stream"):
         assert f'alt="{picture}' in html
     assert "2.0 s of the stream" in html
-    assert "<td class=\"w\">qpsk: 2 levels on 2 rails</td><td class=\"dim v\">given</td>" in html
+    assert '<td class="w">qpsk: 2 levels on 2 rails</td><td class="dim v">given</td>' in html
 
 
 def test_standard_input_is_watched():
