@@ -8,6 +8,7 @@ from numpy.typing import NDArray
 
 from dsp.error_rate import Decisions, Modulated, joined, spread_given
 from dsp.eye import LAGS
+from dsp.limiter import Bend, Limiter
 from dsp.link import Scheme
 from dsp.mixture import Spread, spread
 from dsp.pattern import CURSOR, Pattern
@@ -34,9 +35,13 @@ class LinkModel:
     common, turn
         Variances of timing jitter shared by neighbours, UI squared, and of phase jitter, radians squared.
     deviations
-        What patterns of a rail's own symbols add, ``(rails, patterns)``, level units.
-    gains
-        One level unit of each rail against the mean of all, ``(rails,)``.
+        What patterns of a rail's own symbols add beyond the response where there is no telling why, ``(rails, patterns)``.
+    turn_by_isi
+        What of ``turn`` is the carrier loop's answer to ISI.
+    limiter, bend
+        A bend of the amplitude and what it does to this link; None if there is none.
+    gains, cursors
+        One level unit of each rail against the mean of all, and in the wave's level units, ``(rails,)``.
     """
 
     scheme: Scheme
@@ -50,8 +55,12 @@ class LinkModel:
     tone: NDArray[np.float64]
     common: float
     turn: float
+    turn_by_isi: float
     deviations: NDArray[np.float64]
     gains: NDArray[np.float64]
+    cursors: NDArray[np.float64]
+    limiter: Limiter | None
+    bend: Bend | None
 
     def own(self, rail: int) -> int:
         """Place of a rail's own symbol among the taps."""
@@ -95,7 +104,13 @@ class LinkModel:
             level = float(np.sqrt(self.shares @ nominal**2))
             used = tuple(part for part in jitter if part.variance > 0 and part.taps.any())
             whole = spread_given(level, own, taps, max(float(self.additive[rail]), 1e-8), used, nominal, self.shares)
-            return [_with_tone(whole, float(self.tone[rail]))]
+            whole = _with_tone(whole, float(self.tone[rail]))
+            if self.bend is None:
+                return [whole]
+            return [
+                _bent(whole, float(slope), points / self.cursors[rail])
+                for slope, points in zip(self.bend.slopes[rail], self.bend.points[rail], strict=True)
+            ]
         energy = float(self.shares @ nominal**2)
         variance = (
             float(self.additive[rail]) + sum(part.variance * float(part.taps @ part.taps) for part in jitter) * energy
@@ -128,33 +143,61 @@ class LinkModel:
 
     def without_isi(self) -> "LinkModel":
         """Every symbol by itself."""
-        taps = np.zeros_like(self.taps)
-        for rail in range(self.scheme.rails):
-            for other in range(self.scheme.rails):
-                taps[rail, other * LAGS + CURSOR] = self.taps[rail, other * LAGS + CURSOR]
-        return replace(self, taps=taps)
+        places = np.arange(self.scheme.rails) * LAGS + CURSOR
+        alone = np.zeros_like(self.taps)
+        alone[:, places] = self.taps[:, places]
+        quiet = replace(
+            self, deviations=np.zeros_like(self.deviations), turn=self.turn - self.turn_by_isi, turn_by_isi=0.0
+        )
+        if self.limiter is None:
+            return replace(quiet, taps=alone)
+        matrix = (self.taps * self.cursors[:, None])[:, places]
+        return quiet._meeting(alone, self.limiter.pulses(matrix))
 
     def without_random(self) -> "LinkModel":
-        """No noise, no jitter, no tone."""
+        """No noise, no tone, no jitter but what other causes make."""
         nothing = np.zeros_like(self.additive)
-        return replace(self, additive=nothing, tone=nothing, common=0.0, turn=0.0)
+        return replace(self, additive=nothing, tone=nothing, common=0.0, turn=self.turn_by_isi)
 
     def without_imbalance(self) -> "LinkModel":
         """Rails of the same gain, a quarter turn apart."""
-        taps = self.taps.copy()
+        places = np.arange(self.scheme.rails) * LAGS + CURSOR
+        apart = self.taps.copy()
+        across = ~np.eye(self.scheme.rails, dtype=bool)
         for rail in range(self.scheme.rails):
-            for other in range(self.scheme.rails):
-                if other != rail:
-                    taps[rail, other * LAGS + CURSOR] = 0.0
-        return replace(self, taps=taps, additive=self.additive * self.gains**2, tone=self.tone * self.gains**2)
+            apart[rail, places[across[rail]]] = 0.0
+        even = replace(self, additive=self.additive * self.gains**2, tone=self.tone * self.gains**2)
+        if self.limiter is None:
+            return replace(even, taps=apart)
+        matrix = (self.taps * self.cursors[:, None])[:, places]
+        crossed = self.limiter.pulses(np.where(across, matrix, 0.0))
+        return even._meeting(apart, None if crossed is None else self.limiter.raw - crossed)
+
+    def _meeting(self, taps: NDArray[np.float64], raw: NDArray[np.float64] | None) -> "LinkModel":
+        """The link of other ``taps``, whose wave ahead of the filter has the response ``raw``."""
+        if self.limiter is None or self.bend is None or raw is None:
+            return replace(self, taps=taps)
+        bend = self.limiter.bend(taps * self.cursors[:, None], raw)
+        levels = self.levels + (bend.means - self.bend.means) / self.cursors[:, None]
+        return replace(self, taps=taps, bend=bend, levels=levels, compressed=self.compressed + levels - self.levels)
 
     def without_clipping(self) -> "LinkModel":
         """Levels as the limiter met them, and none of what it made of patterns."""
         nominal = np.asarray(self.scheme.rail_levels)
-        return replace(
-            self, levels=self.levels - self.compressed + nominal, deviations=np.zeros_like(self.deviations),
+        even = replace(
+            self,
+            levels=self.levels - self.compressed + nominal,
             compressed=np.broadcast_to(nominal, self.compressed.shape),
-        )  # fmt: skip
+            limiter=None,
+            bend=None,
+        )
+        if self.bend is None:
+            return even
+        # its linear part is known less well than the rest: no more is taken than makes less ISI
+        clean = self.taps - self.bend.taps / self.cursors[:, None]
+        for rail in range(self.scheme.rails):
+            clean[rail] /= max(float(clean[rail, self.own(rail)]), 0.2)
+        return replace(even, taps=np.where(np.abs(clean) < np.abs(self.taps), clean, self.taps))
 
     def with_even_levels(self) -> "LinkModel":
         """Levels uneven by no more than a limiter makes them."""
@@ -171,47 +214,58 @@ def link_model(
     noise: NDArray[np.float64],
     units: NDArray[np.float64],
     split: Split | None,
+    limiter: Limiter | None,
+    carrier_bandwidth: float,
 ) -> LinkModel:
     """The link at ``ui`` from its pattern response.
 
     ``shares`` ``(levels,)``: how often each level is sent; ``levels`` ``(rails, levels)`` and ``noise`` ``(rails,)``, all that no linear
-    response explains, in level units; ``units`` ``(rails,)``: one level unit of each rail in the signal's own unit.
+    response explains, in level units; ``units`` ``(rails,)``: one level unit of each rail in the signal's own unit;
+    ``carrier_bandwidth``: BnT of the loop, 0 where there is none.
     """
     rails = scheme.rails
     model = pattern.model(ui)
     cursors = np.asarray([max(abs(model.cursor(rail)), 1e-9) for rail in range(rails)])
     taps, late, early = (part.reshape(rails, -1) / cursors[:, None] for part in (model.taps, *pattern.flanks(ui)))
     gains = units * cursors
+    compressed = compressed_levels(levels, scheme)
     deviations, tone, common, turn = np.zeros((rails, 1)), np.zeros(rails), 0.0, 0.0
+    bend = None
+    if limiter is not None:
+        bend = limiter.bend(taps * cursors[:, None])
+        noise = noise * limiter.rest / (limiter.rest + bend.variance)
+        compressed = np.asarray(scheme.rail_levels) + bend.means / cursors[:, None]
+    elif split is not None and split.deviations.any():
+        deviations = split.deviations - _level_means(split.deviations, scheme)
+        noise = noise * split.random / (split.random + np.mean(deviations**2, axis=1))
+        deviations /= cursors[:, None]
     additive = noise
     if split is not None:
-        own = _centre(scheme)
-        deviations = split.deviations.copy()
-        for rail in range(rails):
-            for level in range(scheme.levels):
-                deviations[rail, own == level] -= deviations[rail, own == level].mean()
-        bent = deviations.any()
         random = np.maximum(split.random, 1e-18)
-        noise = noise * random / (random + np.mean(deviations**2, axis=1))
-        deviations /= cursors[:, None]
         common, turn = split.common, split.turn
         if split.tone is not None:
             tone = noise * np.minimum(split.tone.variance / rails / random, 0.98)
         shared = split.timing * common / max(common + split.single, 1e-18)
         additive = np.maximum(noise * (1.0 - (shared + split.phase) / random) - tone, 0.01 * noise)
-        if not bent:
-            deviations = np.zeros((rails, 1))
+    others = taps.copy()
+    places = np.arange(rails) * LAGS + CURSOR
+    others[:, places] = 0.0
+    energy = float(shares @ np.square(scheme.rail_levels))
+    # a decision-directed loop averages the error across the carrier, and that of ISI is as good as white
+    answered = 2.0 * carrier_bandwidth * float(np.mean(np.sum(others**2, axis=1))) * energy / scheme.symbol_energy()
     return LinkModel(
-        scheme, shares, levels, compressed_levels(levels, scheme), taps, late, early, additive, tone, common, turn, deviations,
-        gains / np.exp(np.mean(np.log(gains))),
+        scheme, shares, levels, compressed, taps, late, early, additive, tone, common, turn, min(answered, turn), deviations,
+        gains / np.exp(np.mean(np.log(gains))), cursors, limiter, bend,
     )  # fmt: skip
 
 
-def _centre(scheme: Scheme) -> NDArray[np.int64]:
-    """Level of the symbol itself in each pattern."""
+def _level_means(deviations: NDArray[np.float64], scheme: Scheme) -> NDArray[np.float64]:
+    """Mean deviation of each pattern's own level, in its place."""
     around = pattern_around(scheme.levels)
-    places = np.arange(scheme.levels ** len(around), dtype=np.int64)
-    return np.asarray(places // scheme.levels ** (len(around) - 1 - around.index(0)) % scheme.levels)
+    middle = around.index(0)
+    cube = deviations.reshape(-1, *(scheme.levels,) * len(around))
+    others = tuple(axis + 1 for axis in range(len(around)) if axis != middle)
+    return np.asarray(np.broadcast_to(cube.mean(axis=others, keepdims=True), cube.shape).reshape(deviations.shape))
 
 
 def compressed_levels(levels: NDArray[np.float64], scheme: Scheme) -> NDArray[np.float64]:
@@ -233,8 +287,29 @@ def _with_tone(reach: Spread, variance: float) -> Spread:
     if variance <= 0:
         return reach
     at = math.sqrt(2.0 * variance) * np.cos(math.pi * (np.arange(_TONE_POINTS) + 0.5) / _TONE_POINTS)
-    sigma = float(np.sqrt(np.mean(np.square(reach.sigma))))
-    return joined(np.sort(at), np.full(_TONE_POINTS, 1.0 / _TONE_POINTS), np.full(_TONE_POINTS, sigma), reach)
+    return _added(reach, np.sort(at))
+
+
+def _bent(reach: Spread, slope: float, points: NDArray[np.float64]) -> Spread:
+    """The same behind a bend that adds ``slope`` times the ISI met and one of ``points``."""
+    return _added(Spread(reach.at * (1.0 + slope), reach.share, reach.sigma), points)
+
+
+def _added(reach: Spread, at: NDArray[np.float64]) -> Spread:
+    """The sum with one of the places ``at``, all as likely."""
+    share = np.full(at.size, 1.0 / at.size)
+    if isinstance(reach.sigma, float):
+        return joined(at, share, np.full(at.size, reach.sigma), reach)
+    parts = []
+    for sigma in np.unique(reach.sigma):
+        here = reach.sigma == sigma
+        weight = float(reach.share[here].sum())
+        part = Spread(reach.at[here], reach.share[here] / weight, float(sigma))
+        whole = joined(at, share, np.full(at.size, float(sigma)), part)
+        parts.append((whole.at, whole.share * weight, np.full(whole.at.size, float(sigma))))
+    places, shares, sigmas = (np.concatenate(column) for column in zip(*parts, strict=True))
+    order = np.argsort(places)
+    return Spread(places[order], shares[order], sigmas[order])
 
 
 def budget(model: LinkModel, split: Split | None, tail: float, opening_pct: float) -> Budget:
@@ -246,12 +321,12 @@ def budget(model: LinkModel, split: Split | None, tail: float, opening_pct: floa
     whole = model.opening(tail)
     scheme = model.scheme
     random = model.without_random().opening(tail) - whole
-    shares = random_shares(split)
+    shares = random_shares(split, model.turn_by_isi)
     timing, phase = random * shares[0], random * shares[1]
     isi = model.without_isi().opening(tail) - whole
     levels = model.with_even_levels().opening(tail) - whole if scheme.levels > 2 else 0.0
     iq = model.without_imbalance().opening(tail) - whole if scheme.rails == 2 else None
-    bent = bool(model.deviations.any()) or not np.allclose(model.compressed, scheme.rail_levels)
+    bent = model.bend is not None or not np.allclose(model.compressed, scheme.rail_levels)
     clipping = model.without_clipping().opening(tail) - whole if bent else 0.0
     parts = Budget(
         isi_pct=isi, noise_pct=random - timing - phase, timing_pct=timing, phase_pct=phase if scheme.kind == "carrier" else None,
@@ -261,12 +336,16 @@ def budget(model: LinkModel, split: Split | None, tail: float, opening_pct: floa
     return replace(parts, unexplained_pct=100.0 - opening_pct - sum(known))
 
 
-def random_shares(split: Split | None) -> tuple[float, float]:
-    """Of all that is random, the share of timing jitter and that of phase jitter, on the rail that has more of it."""
+def random_shares(split: Split | None, turn_by_isi: float) -> tuple[float, float]:
+    """Of all that is random, the share of timing jitter and that of phase jitter, on the rail that has more of it.
+
+    ``turn_by_isi``: variance of phase jitter that has another cause.
+    """
     if split is None:
         return 0.0, 0.0
     rail = int(np.argmax(split.random))
-    total = max(float(split.random[rail]), 1e-18)
-    timing, phase = float(split.timing[rail]) / total, float(split.phase[rail]) / total
+    caused = float(split.phase[rail]) * min(turn_by_isi / max(split.turn, 1e-18), 1.0)
+    total = max(float(split.random[rail]) - caused, 1e-18)
+    timing, phase = float(split.timing[rail]) / total, (float(split.phase[rail]) - caused) / total
     scale = 1.0 / max(timing + phase, 1.0)
     return timing * scale, phase * scale

@@ -14,7 +14,9 @@ from dsp.eye import HALO, EyeMeter, EyeSums
 from dsp.figures import Context
 from dsp.filters import Oscillator
 from dsp.frontend import FrontEnd, matched_filter, plan, wants_corners
+from dsp.limiter import RATE
 from dsp.link import Link, Scheme
+from dsp.pulses import receive_filter
 from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
 FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
@@ -133,6 +135,8 @@ class Chain:
         corners = wants_corners(link.scheme, link.pulse)
         self._phases = CORNER_PHASES if corners else WAVE_PHASES
         number = link.pulse.number or 1.0
+        filtered = None if link.scheme.kind == "frequency" else receive_filter(link.pulse, RATE)
+        self._filter = np.asarray(filtered.real, dtype=np.float64) if filtered is not None else None
         self._tables = tables_for(self._plan.sps, 0.5 * (1 + number) if link.pulse.family in ("rrc", "rc") else 1.0)
         self._meter: EyeMeter | None = None
         self._total: EyeSums | None = None
@@ -217,6 +221,8 @@ class Chain:
             base,
             scheme.kind == "frequency",
             self.options.target_ber,
+            self._filter,
+            self.options.carrier_bandwidth if scheme.kind == "carrier" else 0.0,
         )
 
     # -- one chunk -----------------------------------------------------------------------------------------------------

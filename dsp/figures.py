@@ -16,6 +16,7 @@ from dsp.error_rate import Decisions, over_time, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
 from dsp.intervals import LEAST_STRETCHES, Estimate, jackknife
 from dsp.jitter import periodic_line, sample_response, split_jitter
+from dsp.limiter import RATE, Limiter
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
 from dsp.openings import (
     between,
@@ -31,7 +32,7 @@ from dsp.openings import (
 from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
 from dsp.picture import EyeImage
 from dsp.reading import Equaliser, Eye, Reading
-from dsp.residual import Split, split
+from dsp.residual import Split, pattern_means, products_of, split
 from dsp.tracking import level_units
 
 TAIL = 1e-3  # the share of a level's traces that the opening leaves outside
@@ -47,7 +48,9 @@ class Context:
     """What the figures need beside the sums: rates, the loop's place, and targets.
 
     ``sps_ratio`` is the loop's nominal symbol period over the link's; ``offset_ui`` lies from the loop's instant to the decision
-    instant; ``late_bias_ui`` is the timing loop's own known lateness; ``carrier_base_hz`` what was taken out before the loops.
+    instant; ``late_bias_ui`` is the timing loop's own known lateness; ``carrier_base_hz`` what was taken out before the loops;
+    ``receive_filter`` the matched filter at `dsp.limiter.RATE` points a symbol, None where no linear one leads to the samples;
+    ``carrier_bandwidth`` BnT of the carrier loop, 0 where there is none.
     """
 
     symbol_rate_hz: float
@@ -57,6 +60,8 @@ class Context:
     carrier_base_hz: float | None = None
     frequency_rails: bool = False
     target_ber: float = 1e-6
+    receive_filter: NDArray[np.float64] | None = None
+    carrier_bandwidth: float = 0.0
 
 
 class Figures:
@@ -278,9 +283,36 @@ class Figures:
     # -- what closes it ------------------------------------------------------------------------------------------------
 
     @cached_property
+    def _limiter(self) -> Limiter | None:
+        """What a bend of the amplitude ahead of the receive filter does; looked for where patterns or points tell of one."""
+        matched, residual = self._context.receive_filter, self._sums.residual
+        if matched is None or self._mixtures is not None:
+            return None
+        told = bool(pattern_means(residual.patterns, residual.square)[1].any())
+        if self._scheme.rails == 2 and not told:
+            table = np.stack([residual.points[:, [0, 1 + rail]] for rail in range(2)])
+            told = bool(pattern_means(table, residual.square)[1].any())
+        if not told:
+            return None
+        limiter = Limiter(self._sums.stretches, self._scheme, self._pattern.line(RATE), matched)
+        return limiter if limiter.found else None
+
+    @cached_property
     def _split(self) -> Split | None:
-        late, early = (slope.reshape(self._scheme.rails, -1) for slope in self._pattern.flanks(0.0))
-        return split(self._sums.residual, self._scheme, 0.5 * (late + early), smooth=self._pattern.smooth)
+        rails, limiter = self._scheme.rails, self._limiter
+        late, early = (slope.reshape(rails, -1) for slope in self._pattern.flanks(0.0))
+        products = None
+        if limiter is not None:
+            value = self._pattern.model(0.0).taps.reshape(rails, -1)
+            other = np.stack((-value[1], value[0])) if rails == 2 and not self._scheme.stagger else np.zeros_like(value)
+            rows = [part.astype(np.float32) for part in (late, early, other)]
+            products = np.sum(
+                [products_of(one.errors, *(part @ one.symbols for part in rows)) for one in limiter.residuals()],
+                axis=0,
+            )
+        return split(
+            self._sums.residual, self._scheme, 0.5 * (late + early), smooth=self._pattern.smooth, products=products
+        )
 
     @cached_property
     def _link(self) -> LinkModel:
@@ -293,11 +325,13 @@ class Figures:
         units = self._sums.unit_sums[0, : self._scheme.rails] / np.maximum(
             self._sums.unit_sums[2, : self._scheme.rails], 1.0
         )
-        best = self._pattern.model(_ui(self._best))
+        # near a corner what is left over is not noise but what sampling made of the corner
+        noise = self._noise(self._pattern.model(_ui(self._best) if self._pattern.smooth else 0.0))
         return link_model(
             self._scheme, self._pattern, ui, shares=counts / counts.sum(),
             levels=np.asarray([self._levels(rail) for rail in range(self._scheme.rails)]),
-            noise=self._noise(best) / self._worth(ui) ** 2, units=units, split=self._split,
+            noise=noise / self._worth(ui) ** 2, units=units, split=self._split, limiter=self._limiter,
+            carrier_bandwidth=self._context.carrier_bandwidth,
         )  # fmt: skip
 
     def _worth(self, ui: float) -> NDArray[np.float64]:

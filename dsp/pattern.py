@@ -101,6 +101,11 @@ class Pattern:
         before, here, after = (self.model(ui + step / 16).taps for step in (-1, 0, 1))
         return 16.0 * (after - here), 16.0 * (here - before)
 
+    def line(self, rate: int) -> NDArray[np.float64]:
+        """The response at ``rate`` points a symbol (a divisor of the phases), from the earliest lag on, ``(rails, rails, lags * rate)``."""
+        rails = self._solution.shape[0]
+        return self._solution[:, :, :: self._phases // rate].reshape(rails, rails, -1)
+
     def response(self, ui: float) -> Response:
         """The taps at ``ui`` for people to look at: each rail's in units of its cursor."""
         model = self.model(ui)

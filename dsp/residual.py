@@ -142,12 +142,7 @@ class ResidualMeter:
         late, early = parts[:, 1], parts[:, 2]
         others = np.stack((-parts[0, 3], parts[1, 3])) if rails == 2 else np.zeros_like(errors)
         self._take_patterns(sums, errors, classes, first, keep, fresh=fresh)
-        for row, (a, b, lag) in zip(sums.products, pairs(rails), strict=True):
-            to, on = slice(0, count - lag), slice(lag, count)
-            kernel.add_products(
-                errors[a, to], late[a, to], early[a, to], others[a, to],
-                errors[b, on], late[b, on], early[b, on], others[b, on], row,
-            )  # fmt: skip
+        sums.products += products_of(errors, late, early, others)
         if rails == 2:
             kernel.add_constellation(values[0], values[1], 0.5 * CELLS / sums.reach, 0.5 * CELLS, sums.constellation)
         self._spectra(sums, errors)
@@ -235,6 +230,24 @@ class ResidualMeter:
         sums.frames += whole
 
 
+def products_of(
+    errors: NDArray[np.float32], late: NDArray[np.float32], early: NDArray[np.float32], others: NDArray[np.float32]
+) -> NDArray[np.float64]:
+    """Sums of products, ``(pairs, 10)``, of neighbouring symbols' residuals.
+
+    With their slopes after and before, and the other rails' values: each ``(rails, n)``.
+    """
+    rails, count = errors.shape
+    result = np.zeros((len(pairs(rails)), 10))
+    for row, (a, b, lag) in zip(result, pairs(rails), strict=True):
+        to, on = slice(0, count - lag), slice(lag, count)
+        kernel.add_products(
+            errors[a, to], late[a, to], early[a, to], others[a, to],
+            errors[b, on], late[b, on], early[b, on], others[b, on], row,
+        )  # fmt: skip
+    return result
+
+
 @dataclass(frozen=True, slots=True)
 class Tone:
     """A line in the residual's spectrum: variance in level units squared, frequency in cycles a symbol, -0.5 to 0.5."""
@@ -272,11 +285,18 @@ class Split:
     tone: Tone | None
 
 
-def split(sums: ResidualSums, scheme: Scheme, slopes: NDArray[np.float64], *, smooth: bool) -> Split | None:
+def split(
+    sums: ResidualSums,
+    scheme: Scheme,
+    slopes: NDArray[np.float64],
+    *,
+    smooth: bool,
+    products: NDArray[np.float64] | None = None,
+) -> Split | None:
     """Take the residual apart; None for too few symbols.
 
     ``slopes`` ``(rails, rails * lags)``: of the response at the decision instant, per UI. ``smooth``: no corners, so that each symbol's
-    own jitter shows in its neighbours.
+    own jitter shows in its neighbours. ``products``: other than those of ``sums``.
 
     Additive noise is independent of the data; timing jitter grows with the wave's slope, phase jitter with the other rail: least squares of
     the residuals' products on those. Jitter of each symbol by itself leaves no such trace, but a correlation of residuals near each other,
@@ -284,14 +304,16 @@ def split(sums: ResidualSums, scheme: Scheme, slopes: NDArray[np.float64], *, sm
     """
     rails = scheme.rails
     own = [pairs(rails).index((rail, rail, 0)) for rail in range(rails)]
-    n = float(sums.products[0, 0])
+    if products is None:
+        products = sums.products
+    n = float(products[0, 0])
     if n < _LEAST_SPLIT:
         return None
-    steepness, others = (sums.products[own, i] / n for i in (1, 2))
-    random = sums.products[own, 6] / n
+    steepness, others = (products[own, i] / n for i in (1, 2))
+    random = products[own, 6] / n
     tone = find_tone(sums.power, sums.frames, real=rails == 1)
-    single = _single(sums, rails, tone) if smooth else 0.0
-    common, turn = _shared(sums, scheme, np.sum(slopes**4, axis=1), single)
+    single = _single(products, rails, tone) if smooth else 0.0
+    common, turn = _shared(products, scheme, np.sum(slopes**4, axis=1), single)
     deviations, pattern = pattern_means(sums.patterns, sums.square)
     return Split(
         random, (common + single) * steepness, turn * others, common, single, turn, pattern, deviations, tone
@@ -304,7 +326,9 @@ def _normal(row: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.f
     return np.array([[n, x, y], [x, xx, xy], [y, xy, yy]]), np.array([r, rx, ry]), rr
 
 
-def _shared(sums: ResidualSums, scheme: Scheme, quartic: NDArray[np.float64], single: float) -> tuple[float, float]:
+def _shared(
+    products: NDArray[np.float64], scheme: Scheme, quartic: NDArray[np.float64], single: float
+) -> tuple[float, float]:
     """Variances of the jitter in time and in phase that all symbols near share: one least-squares fit to all products at lag 0.
 
     What jitter of each symbol by itself (of variance ``single``) puts into them is taken out; ``quartic`` ``(rails,)``: sums of the slopes'
@@ -313,7 +337,7 @@ def _shared(sums: ResidualSums, scheme: Scheme, quartic: NDArray[np.float64], si
     matrix, right = np.zeros((2, 2)), np.zeros(2)
     squares = np.square(scheme.rail_levels)
     rails = scheme.rails
-    for (a, b, lag), row in zip(pairs(rails), sums.products, strict=True):
+    for (a, b, lag), row in zip(pairs(rails), products, strict=True):
         if lag:
             continue
         gram, cross, square = _normal(row)
@@ -334,10 +358,10 @@ def _shared(sums: ResidualSums, scheme: Scheme, quartic: NDArray[np.float64], si
     return float(result[0]), float(result[1])
 
 
-def _single(sums: ResidualSums, rails: int, tone: Tone | None) -> float:
+def _single(products: NDArray[np.float64], rails: int, tone: Tone | None) -> float:
     """Variance of the jitter of each symbol by itself: what the residuals of neighbours have in common over what their slopes have."""
     weight = total = 0.0
-    for row, (a, b, lag) in zip(sums.products, pairs(rails), strict=True):
+    for row, (a, b, lag) in zip(products, pairs(rails), strict=True):
         if lag == 0 or a != b:
             continue
         gram, cross, square = _normal(row)

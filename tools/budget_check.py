@@ -74,9 +74,9 @@ def draw(cause: str, scheme: tuple[str, float, str, float], random: np.random.Ge
         return Defect(cause, "I/Q skew", {"iq_skew_deg": 38.0 * size * scale * random.choice((-1.0, 1.0))})
     if cause == "clipping":
         kind = str(random.choice(("soft", "hard")))
-        low, high = {"soft": (1.3, 0.55), "hard": (0.75, 0.42)}[kind]
+        low, high = {"soft": (1.3, 0.6), "hard": (0.8, 0.6)}[kind]
         if scale < 0.9:
-            low, high = {"soft": (2.5, 1.2), "hard": (0.85, 0.62)}[kind]
+            low, high = {"soft": (2.5, 1.2), "hard": (0.85, 0.72)}[kind]
         return Defect(cause, f"{kind} clipping", {"clipping": kind, "clip_at": low + size * (high - low)})
     if pulse == "rect" and random.random() < 0.5:
         return Defect(cause, "low-pass", {"t_over_tau": float(np.exp(np.log(3.5) - size * np.log(2.2)))})

@@ -1,0 +1,238 @@
+"""What a limiter or another bend of the amplitude, ahead of the receive filter, does to the samples that are decided.
+
+The wave ahead of the filter is put together again from the decisions and the pattern response; powers of it, behind the filter, are
+what the linear response's residual is searched for.
+"""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import cho_factor, cho_solve
+from scipy.signal import oaconvolve
+
+from dsp.eye import EARLIEST, HALO, LAGS, LATEST
+from dsp.link import Scheme
+from dsp.stretches import Stretches
+
+RATE = 8  # points a symbol at which the wave is put together
+_MOST = 8000  # symbols looked at
+_LEAST = 2000
+_RIDGE = 1e-3  # of the filter's greatest power gain, below which what it took away is left away
+_LEAST_SHARE = (
+    0.03  # of what is left over, below which a bend is not worth telling of unless it stands out now and then
+)
+_POINTS = 32  # places that stand for the spread of a level
+
+
+@dataclass(frozen=True, slots=True)
+class Bend:
+    """What a bend of the amplitude puts on top of a linear response, at the decision instants; the wave's level units.
+
+    Attributes
+    ----------
+    taps
+        The part of it that a linear response takes in, ``(rails, rails * lags)``.
+    means, slopes
+        By rail and level, ``(rails, levels)``: the mean of the rest, and how it changes with the ISI met.
+    points
+        What else there is, ``_POINTS`` places of equal share by rail and level, ``(rails, levels, points)``.
+    variance
+        Of all but the linear part within the levels, ``(rails,)``.
+    """
+
+    taps: NDArray[np.float64]
+    means: NDArray[np.float64]
+    slopes: NDArray[np.float64]
+    points: NDArray[np.float64]
+    variance: NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Residual:
+    """One stretch's residual behind response and bend, ``(rails, n)``, and the symbols of all rails and lags, ``(rails * lags, n)``."""
+
+    errors: NDArray[np.float32]
+    symbols: NDArray[np.float32]
+
+
+def raw_response(response: NDArray[np.float64], matched: NDArray[np.float64]) -> NDArray[np.float64]:
+    """The response ``(..., n)`` as it was ahead of the filter ``matched`` ``(m,)``, both of `RATE` points a symbol."""
+    size = 1 << math.ceil(math.log2(response.shape[-1] + matched.size))
+    centred = np.zeros(size)
+    centred[: matched.size] = matched
+    gain = np.fft.rfft(np.roll(centred, -(matched.size // 2)))
+    power = np.abs(gain) ** 2
+    spectrum = np.fft.rfft(response, size, axis=-1) * np.conj(gain) / (power + _RIDGE * power.max())
+    return np.asarray(np.fft.irfft(spectrum, size, axis=-1)[..., : response.shape[-1]])
+
+
+class Limiter:
+    """A bend of the amplitude, if there is one: a limiter's, an amplifier's.
+
+    ``response`` ``(rails, rails, lags * RATE)``: of a rail, to a rail's symbols, from the earliest lag on; ``matched`` ``(m,)``: the
+    receive filter. `found` tells whether there is a bend beyond chance; nothing else means anything if there is none.
+    """
+
+    def __init__(
+        self, stretches: Stretches, scheme: Scheme, response: NDArray[np.float64], matched: NDArray[np.float64]
+    ) -> None:
+        self.found = False
+        self._scheme = scheme
+        self._matched = matched
+        kept = [stretch for stretch in stretches if stretch.decided.shape[1] > 4 * HALO]
+        total = sum(stretch.decided.shape[1] - 2 * HALO for stretch in kept)
+        if total < _LEAST:
+            return
+        kept = kept[:: max(math.ceil(total / _MOST), 1)]
+        self._decided = np.concatenate([stretch.decided for stretch in kept], axis=1)
+        ends = np.cumsum([stretch.decided.shape[1] for stretch in kept])
+        # the symbols that have their neighbours
+        self._core = np.concatenate(
+            [
+                np.arange(end - stretch.decided.shape[1] + HALO, end - HALO)
+                for end, stretch in zip(ends, kept, strict=True)
+            ]
+        )
+        self._sizes = [stretch.decided.shape[1] - 2 * HALO for stretch in kept]
+        rails = scheme.rails
+        self._lagged = np.ones((rails * LAGS + 1, self._core.size), np.float32)
+        for rail in range(rails):
+            for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
+                self._lagged[rail * LAGS + i] = self._decided[rail, self._core - lag]
+        gram = (self._lagged @ self._lagged.T).astype(np.float64)
+        self._factor = cho_factor(gram + np.eye(len(gram)) * 1e-7 * np.trace(gram) / len(gram), check_finite=False)
+        wave = np.concatenate([[wave[0, HALO:-HALO] for wave in stretch.waves] for stretch in kept], axis=1)
+        self.raw = raw_response(response, matched)
+        reach = float(np.abs(self.raw).sum(axis=(1, 2)).max()) * max(scheme.rail_levels)
+        self._scale = 2.5 / max(reach, 1e-9)
+        features = self._features(self.raw)
+        _, rest = self._linear(np.concatenate((wave, features)))
+        error, free = rest[:rails], rest[rails:]
+        self._weights = _fit(error, free)
+        explained = self._weighted(free)
+        self._left = error - explained
+        used = self._weights.size * rails
+        noise = float(np.sum(self._left**2)) / (error.size - used)
+        beyond = float(np.sum(explained**2)) - noise * (used + 4.0 * math.sqrt(2.0 * used))
+        rare = float(np.abs(explained).max()) > math.sqrt(noise)
+        self.found = beyond > (0.0 if rare else _LEAST_SHARE * noise * error.size)
+        self.rest = np.mean(self._left**2, axis=1)
+
+    def residuals(self) -> list[Residual]:
+        """What neither response nor bend explains, stretch by stretch."""
+        ends = np.cumsum(self._sizes)[:-1]
+        return [
+            Residual(np.ascontiguousarray(errors, np.float32), np.ascontiguousarray(symbols))
+            for errors, symbols in zip(
+                np.split(self._left, ends, axis=1), np.split(self._lagged[:-1], ends, axis=1), strict=True
+            )
+        ]
+
+    def pulses(self, matrix: NDArray[np.float64]) -> NDArray[np.float64] | None:
+        """The response, as `raw`, of pulses matched to the filter that reach the instants as ``matrix`` ``(rails, rails)``.
+
+        None where there is no filter to tell the pulse.
+        """
+        if self._matched.size == 1:
+            return None
+        pulse = self._matched / float(self._matched @ self._matched)
+        place = -EARLIEST * RATE - pulse.size // 2
+        line = np.zeros(self.raw.shape[2])
+        first, last = max(place, 0), min(place + pulse.size, line.size)
+        line[first:last] = pulse[first - place : last - place]
+        return np.asarray(matrix[:, :, None] * line)
+
+    def bend(self, taps: NDArray[np.float64], raw: NDArray[np.float64] | None = None) -> Bend:
+        """What it does to the link of the response ``taps`` ``(rails, rails * lags)``, ahead of the filter ``raw``, None: as it is."""
+        rails, levels = self._scheme.rails, self._scheme.levels
+        weights, free = self._linear(self._features(self.raw if raw is None else raw))
+        bent = self._weighted(free)
+        others = taps.copy()
+        for rail in range(rails):
+            others[rail, rail * LAGS - EARLIEST] = 0.0
+        isi = others.astype(np.float32) @ self._lagged[:-1]
+        means, slopes = np.zeros((rails, levels)), np.zeros((rails, levels))
+        points = np.zeros((rails, levels, _POINTS))
+        variance = np.zeros(rails)
+        share = (np.arange(_POINTS) + 0.5) / _POINTS
+        for rail in range(rails):
+            own = self._decided[rail, self._core]
+            for m, level in enumerate(self._scheme.rail_levels):
+                here = np.abs(own - level) < 1e-3
+                if here.sum() < 2 * _POINTS:
+                    continue
+                value, about = bent[rail, here], isi[rail, here] - isi[rail, here].mean()
+                means[rail, m] = value.mean()
+                value = value - value.mean()
+                variance[rail] += float(value @ value) / own.size
+                spread = float(about @ about)
+                if spread > 1e-6 * here.sum():
+                    slopes[rail, m] = float(value @ about) / spread
+                rest = np.sort(value - slopes[rail, m] * about)
+                points[rail, m] = np.quantile(rest, share)
+                points[rail, m, 0], points[rail, m, -1] = rest[0], rest[-1]
+        return Bend(self._weighted(weights.T)[:, :-1], means, slopes, points, variance)
+
+    def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Powers of the wave ahead of the filter, behind the filter: ``(features, n)``, of I/Q real over imaginary parts."""
+        rails, n = self._decided.shape
+        impulses = np.zeros((rails, n * RATE))
+        impulses[:, ::RATE] = self._decided
+        start = -EARLIEST * RATE
+        sent = [
+            sum(oaconvolve(impulses[s], raw[r, s])[start : start + n * RATE] for s in range(rails))
+            for r in range(rails)
+        ]
+        wave = np.asarray(sent[0] + 1j * sent[1] if rails == 2 else sent[0])
+        bent = _powers(wave * self._scale)
+        if self._matched.size > 1:
+            bent = oaconvolve(bent, self._matched[None, :], mode="same", axes=1)
+        taken = bent[:, self._core * RATE]
+        return np.concatenate((taken.real, taken.imag)) if rails == 2 else np.asarray(taken)
+
+    def _linear(self, waves: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Least-squares weights of the symbols for each wave ``(m, n)``, ``(k, m)``, and what they leave over, ``(m, n)``."""
+        right = (self._lagged @ waves.T.astype(np.float32)).astype(np.float64)
+        weights = cho_solve(self._factor, right, check_finite=False)
+        return weights, waves - weights.T.astype(np.float32) @ self._lagged
+
+    def _weighted(self, features: NDArray[np.float64]) -> NDArray[np.float64]:
+        """The bend of features ``(features, n)``, ``(rails, n)``."""
+        if self._scheme.rails == 1:
+            return np.asarray(self._weights.real @ features)[None, :]
+        half = self._weights.size
+        bent = self._weights @ (features[:half] + 1j * features[half:])
+        return np.stack((bent.real, bent.imag))
+
+
+def _powers(v: NDArray[np.complex128] | NDArray[np.float64]) -> NDArray[np.complex128] | NDArray[np.float64]:
+    """Odd powers up to the seventh of a wave, ``(powers, n)``.
+
+    For I/Q all that a bend of each rail or of the envelope makes, however turned.
+    """
+    square = np.abs(v) ** 2
+    if not np.iscomplexobj(v):
+        return np.asarray([v * square, v * square**2, v * square**3])
+    back = np.conj(v)
+    return np.asarray(
+        [
+            v * square, v * square**2, v * square**3,
+            back**3, back**3 * square, back**3 * square**2,
+            v**5, v**5 * square, back**7,
+        ]
+    )  # fmt: skip
+
+
+def _fit(error: NDArray[np.float64], free: NDArray[np.float64]) -> NDArray[np.complex128]:
+    """Least-squares weights of features, complex ones as real over imaginary parts, for errors ``(rails, n)``."""
+    if error.shape[0] == 2:
+        half = free.shape[0] // 2
+        basis, target = free[:half] + 1j * free[half:], error[0] + 1j * error[1]
+    else:
+        basis, target = free.astype(np.complex128), error[0].astype(np.complex128)
+    norm = np.sqrt(np.maximum(np.sum(np.abs(basis) ** 2, axis=1), 1e-300))
+    gram = (basis.conj() @ basis.T) / np.outer(norm, norm)
+    weights = np.linalg.lstsq(gram, (basis.conj() @ target) / norm, rcond=1e-7)[0] / norm
+    return np.asarray(weights, dtype=np.complex128)
