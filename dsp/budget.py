@@ -312,7 +312,7 @@ def _added(reach: Spread, at: NDArray[np.float64]) -> Spread:
     return Spread(places[order], shares[order], sigmas[order])
 
 
-def budget(model: LinkModel, split: Split | None, tail: float, opening_pct: float) -> Budget:
+def budget_of(model: LinkModel, split: Split | None, tail: float, opening_pct: float) -> Budget:
     """Points of opening that each cause takes at ``tail``: the drop between the model with and without it.
 
     Random causes share theirs in proportion to their variances; an interfering tone counts as noise. With ``opening_pct`` and what is

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from dsp.budget import LinkModel, budget, link_model
+from dsp.budget import LinkModel, budget_of, link_model
 from dsp.crossings import crossings, rise_time
 from dsp.diagnosis import Diagnosis, JitterSplit
 from dsp.equaliser import Equalisers
@@ -31,7 +31,7 @@ from dsp.openings import (
 )
 from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
 from dsp.picture import EyeImage
-from dsp.reading import Equaliser, Eye, Reading
+from dsp.reading import Budget, Equaliser, Eye, Reading
 from dsp.residual import Split, pattern_means, products_of, split
 from dsp.tracking import level_units
 
@@ -92,6 +92,7 @@ class Figures:
         if not self.enough:
             return
         if like is not None:
+            self._limiter = like._limiter
             self._tails_counted, self._best, self._corner = like._tails_counted, like._best, like._corner
             if like._mixtures is not None:
                 self._fit_mixtures()
@@ -319,6 +320,11 @@ class Figures:
         """The link at the best instant."""
         return self._link_at(_ui(self._best))
 
+    def budget(self) -> Budget:
+        """What closes the eye, in points of opening at the target error rate."""
+        target = self._context.target_ber
+        return budget_of(self._link, self._split, target, self._numbers["opening_at_ber_pct"])
+
     def _link_at(self, ui: float) -> LinkModel:
         """The link at an instant, with the noise that there is at the best one."""
         counts = self._counts.sum(axis=0)
@@ -343,7 +349,7 @@ class Figures:
     # -- the reading ---------------------------------------------------------------------------------------------------
 
     def reading(self, *, whole: bool = True) -> Reading:
-        """Every figure that can be known from these sums; without ``whole`` less the equaliser and the intervals, which take longest."""
+        """Every figure that can be known from these sums; without ``whole`` less what takes long: equaliser, intervals, budget."""
         opening = self.opening_pct()
         if opening is None:
             return Reading(symbols=self._sums.symbols)
@@ -363,7 +369,7 @@ class Figures:
             rise_20_80_ui=rise_time(self._sums),
             periodic_jitter_ui=periodic_ui,
             periodic_jitter_hz=periodic_hz,
-            budget=budget(self._link, self._split, self._context.target_ber, self._numbers["opening_at_ber_pct"]),
+            budget=self.budget() if whole else None,
             **self._numbers,
         )
         if not whole:

@@ -6,6 +6,7 @@ what the linear response's residual is searched for.
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -17,8 +18,8 @@ from dsp.link import Scheme
 from dsp.stretches import Stretches
 
 RATE = 8  # points a symbol at which the wave is put together
-_MOST = 8000  # symbols looked at
-_LEAST = 2000
+_MOST = 4000  # symbols looked at
+_LEAST = 1500
 _RIDGE = 1e-3  # of the filter's greatest power gain, below which what it took away is left away
 _LEAST_SHARE = (
     0.03  # of what is left over, below which a bend is not worth telling of unless it stands out now and then
@@ -178,17 +179,17 @@ class Limiter:
     def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
         """Powers of the wave ahead of the filter, behind the filter: ``(features, n)``, of I/Q real over imaginary parts."""
         rails, n = self._decided.shape
-        impulses = np.zeros((rails, n * RATE))
+        impulses = np.zeros((rails, n * RATE), np.float32)
         impulses[:, ::RATE] = self._decided
         start = -EARLIEST * RATE
         sent = [
             sum(oaconvolve(impulses[s], raw[r, s])[start : start + n * RATE] for s in range(rails))
             for r in range(rails)
         ]
-        wave = np.asarray(sent[0] + 1j * sent[1] if rails == 2 else sent[0])
-        bent = _powers(wave * self._scale)
+        wave = np.asarray(sent[0] + 1j * sent[1] if rails == 2 else sent[0]) * np.float32(self._scale)
+        bent = _powers(wave)
         if self._matched.size > 1:
-            bent = oaconvolve(bent, self._matched[None, :], mode="same", axes=1)
+            bent = oaconvolve(bent, self._matched[None, :].astype(np.float32), mode="same", axes=1)
         taken = bent[:, self._core * RATE]
         return np.concatenate((taken.real, taken.imag)) if rails == 2 else np.asarray(taken)
 
@@ -207,22 +208,19 @@ class Limiter:
         return np.stack((bent.real, bent.imag))
 
 
-def _powers(v: NDArray[np.complex128] | NDArray[np.float64]) -> NDArray[np.complex128] | NDArray[np.float64]:
+def _powers(v: NDArray[Any]) -> NDArray[Any]:
     """Odd powers up to the seventh of a wave, ``(powers, n)``.
 
     For I/Q all that a bend of each rail or of the envelope makes, however turned.
     """
-    square = np.abs(v) ** 2
+    square = (v * np.conj(v)).real
+    fourth = square * square
+    own = [v * square, v * fourth, v * square * fourth]
     if not np.iscomplexobj(v):
-        return np.asarray([v * square, v * square**2, v * square**3])
-    back = np.conj(v)
-    return np.asarray(
-        [
-            v * square, v * square**2, v * square**3,
-            back**3, back**3 * square, back**3 * square**2,
-            v**5, v**5 * square, back**7,
-        ]
-    )  # fmt: skip
+        return np.asarray(own)
+    third, fifth = np.conj(v * v * v), v * v * v * v * v
+    back = [third, third * square, third * fourth]
+    return np.asarray([*own, *back, fifth, fifth * square, np.conj(v * v * fifth)])
 
 
 def _fit(error: NDArray[np.float64], free: NDArray[np.float64]) -> NDArray[np.complex128]:

@@ -504,7 +504,8 @@ class Engine:
         else:
             reading = figures.reading(whole=False)
             if self._reading is not None:
-                reading = replace(reading, equaliser=self._reading.equaliser)
+                before = self._reading
+                reading = replace(reading, equaliser=before.equaliser, budget=before.budget, verdict=before.verdict)
             if reading.opening_pct is not None and self._opening is not None:
                 self._opening = self._opening.about(reading.opening_pct)
                 low, high = self._opening.interval()

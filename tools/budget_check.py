@@ -129,7 +129,7 @@ def measured(spec: TransmitSpec, target: float) -> tuple[Reading | None, Any]:
     if chain.total is None:
         return None, None
     figures = Figures(chain.total, chain.context())
-    reading = figures.reading(whole=False)
+    reading = replace(figures.reading(whole=False), budget=figures.budget())
     split = figures._split
     return reading, float(split.random.max()) if split is not None else None
 
