@@ -30,8 +30,8 @@ class LinkModel:
         Response and its slopes after and before the instant, of cursor 1, ``(rails, rails * lags)``.
     additive
         Variance of noise that no data changes, each symbol's own jitter included, ``(rails,)``.
-    tone
-        Variance of an interfering tone, ``(rails,)``.
+    noise, tone
+        Variances of the noise in ``additive`` and of an interfering tone beside it, ``(rails,)``.
     common, turn
         Variances of timing jitter shared by neighbours, UI squared, and of phase jitter, radians squared.
     deviations
@@ -52,6 +52,7 @@ class LinkModel:
     late: NDArray[np.float64]
     early: NDArray[np.float64]
     additive: NDArray[np.float64]
+    noise: NDArray[np.float64]
     tone: NDArray[np.float64]
     common: float
     turn: float
@@ -139,6 +140,15 @@ class LinkModel:
             return np.zeros(self.taps.shape[1])
         return np.asarray(self.taps[1 - rail] * float(self.gains[1 - rail] / self.gains[rail]))
 
+    def with_noise(self, factor: float) -> "LinkModel":
+        """``factor`` times the variance of noise and tone, jitter as it is."""
+        return replace(
+            self,
+            additive=self.additive - (1.0 - factor) * self.noise,
+            noise=factor * self.noise,
+            tone=factor * self.tone,
+        )
+
     # -- without one cause ---------------------------------------------------------------------------------------------
 
     def without_isi(self) -> "LinkModel":
@@ -157,7 +167,11 @@ class LinkModel:
     def without_random(self) -> "LinkModel":
         """No noise, no tone, no jitter but what other causes make."""
         nothing = np.zeros_like(self.additive)
-        return replace(self, additive=nothing, tone=nothing, common=0.0, turn=self.turn_by_isi)
+        return replace(self, additive=nothing, noise=nothing, tone=nothing, common=0.0, turn=self.turn_by_isi)
+
+    def without_tone(self) -> "LinkModel":
+        """No interfering tone."""
+        return replace(self, tone=np.zeros_like(self.tone))
 
     def without_imbalance(self) -> "LinkModel":
         """Rails of the same gain, a quarter turn apart."""
@@ -239,7 +253,7 @@ def link_model(
         deviations = split.deviations - _level_means(split.deviations, scheme)
         noise = noise * split.random / (split.random + np.mean(deviations**2, axis=1))
         deviations /= cursors[:, None]
-    additive = noise
+    additive = plain = noise
     if split is not None:
         random = np.maximum(split.random, 1e-18)
         common, turn = split.common, split.turn
@@ -247,6 +261,7 @@ def link_model(
             tone = noise * np.minimum(split.tone.variance / rails / random, 0.98)
         shared = split.timing * common / max(common + split.single, 1e-18)
         additive = np.maximum(noise * (1.0 - (shared + split.phase) / random) - tone, 0.01 * noise)
+        plain = np.clip(noise * (1.0 - (split.timing + split.phase) / random) - tone, 0.0, additive)
     others = taps.copy()
     places = np.arange(rails) * LAGS + CURSOR
     others[:, places] = 0.0
@@ -254,7 +269,7 @@ def link_model(
     # a decision-directed loop averages the error across the carrier, and that of ISI is as good as white
     answered = 2.0 * carrier_bandwidth * float(np.mean(np.sum(others**2, axis=1))) * energy / scheme.symbol_energy()
     return LinkModel(
-        scheme, shares, levels, compressed, taps, late, early, additive, tone, common, turn, min(answered, turn), deviations,
+        scheme, shares, levels, compressed, taps, late, early, additive, plain, tone, common, turn, min(answered, turn), deviations,
         gains / np.exp(np.mean(np.log(gains))), cursors, limiter, bend,
     )  # fmt: skip
 

@@ -10,13 +10,13 @@ from numpy.typing import NDArray
 
 from dsp.budget import LinkModel, budget_of, link_model
 from dsp.crossings import crossings, rise_time
-from dsp.diagnosis import Diagnosis, JitterSplit
+from dsp.diagnosis import Constellation, Diagnosis, JitterSplit
 from dsp.equaliser import Equalisers
 from dsp.error_rate import Decisions, over_time, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
 from dsp.intervals import LEAST_STRETCHES, Estimate, jackknife
 from dsp.jitter import periodic_line, sample_response, split_jitter
-from dsp.limiter import RATE, Limiter
+from dsp.limiter import RATE, Limiter, compression
 from dsp.mixture import Mixture, Spread, fit_mixture, spread
 from dsp.openings import (
     between,
@@ -34,6 +34,7 @@ from dsp.picture import EyeImage
 from dsp.reading import Budget, Equaliser, Eye, Reading
 from dsp.residual import Split, pattern_means, products_of, split
 from dsp.tracking import level_units
+from dsp.verdict import Evidence, sentences
 
 TAIL = 1e-3  # the share of a level's traces that the opening leaves outside
 FULL_CLASS = 10.0 / TAIL  # symbols a level needs for its tail to be counted rather than modelled
@@ -267,10 +268,10 @@ class Figures:
         scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(_ui(self._best)), 1e-9)
         return np.asarray(np.clip(scale, 0.5, 2.0)[:, None])
 
-    def _modelled(self, ui: float, tail: float, noise: float = 1.0) -> NDArray[np.float64]:
-        """Openings by the pattern model with Gaussian noise, ``noise`` times as much as there is, per cent, shape ``(rails, eyes)``."""
+    def _modelled(self, ui: float, tail: float) -> NDArray[np.float64]:
+        """Openings by the pattern model with Gaussian noise, per cent, shape ``(rails, eyes)``."""
         model = self._pattern.model(ui)
-        sigmas = np.sqrt(noise * self._noise(model))
+        sigmas = np.sqrt(self._noise(model))
         result = np.empty((self._scheme.rails, self._spacing.size))
         for rail, sigma in enumerate(sigmas):
             reach = self._isi(rail, model, float(sigma))
@@ -325,6 +326,41 @@ class Figures:
         target = self._context.target_ber
         return budget_of(self._link, self._split, target, self._numbers["opening_at_ber_pct"])
 
+    @cached_property
+    def _evidence(self) -> Evidence:
+        split, link, context = self._split, self._link, self._context
+        tone = split.tone if split is not None else None
+        bent = self._compression()
+        return Evidence(
+            context.target_ber,
+            context.symbol_rate_hz,
+            response=self._pattern.response(_ui(self._best)),
+            timing_rms_ui=math.sqrt(split.common + split.single)
+            if split is not None and self._pattern.smooth
+            else None,
+            phase_rms_deg=math.degrees(math.sqrt(split.turn)) if split is not None else None,
+            tone_hz=tone.frequency * context.symbol_rate_hz if tone is not None else None,
+            tone_pct=link.without_tone().opening(context.target_ber) - link.opening(context.target_ber)
+            if tone is not None
+            else None,
+            compression_db=bent[0] if bent is not None else None,
+            opening_with_3db_more_pct=self._opening_with(10**-0.3),
+        )
+
+    def _compression(self) -> tuple[float, float] | None:
+        """Loss of gain, dB, and turn, degrees, at the greatest amplitude against the smallest; None where none is met or known."""
+        if self._mixtures is not None or self._context.frequency_rails or self._split is None:
+            return None
+        noise = float(self._split.random.sum())
+        if self._scheme.rails == 1:
+            off = self._levels(0) - self._nominal
+            return compression(self._nominal + 0j, off + 0j, self._counts[0], noise)
+        counts, in_phase, across = self._sums.residual.points.T
+        points = (self._nominal[:, None] + 1j * self._nominal[None, :]).ravel()
+        met = counts > 0
+        shifts = (in_phase[met] + 1j * across[met]) / counts[met]
+        return compression(points[met], shifts, counts[met], noise) if met.any() else None
+
     def _link_at(self, ui: float) -> LinkModel:
         """The link at an instant, with the noise that there is at the best one."""
         counts = self._counts.sum(axis=0)
@@ -374,6 +410,8 @@ class Figures:
         )
         if not whole:
             return reading
+        reading = replace(reading, equaliser=self._equaliser())
+        told = sentences(reading, self._evidence)
         opening_range, ber_range = (self.interval(key) or (None, None) for key in ("opening_pct", "ber"))
         return replace(
             reading,
@@ -381,7 +419,7 @@ class Figures:
             opening_high_pct=opening_range[1],
             ber_low=ber_range[0],
             ber_high=ber_range[1],
-            equaliser=self._equaliser(),
+            verdict=told[0] if told else None,
         )
 
     @cached_property
@@ -390,11 +428,11 @@ class Figures:
         opening = float(self._openings.min())
         best = _ui(self._best)
         model = self._pattern.model(best)
-        noise = self._noise(model)
+        noise = self._link.noise + self._link.tone
         worst_eye = int(np.unravel_index(int(np.argmin(self._openings)), self._openings.shape)[1])
         half_height = opening / 100.0 * float(self._spacing[worst_eye]) / 2
         mer = self._mer_db(best)
-        snr = 10 * math.log10(self._scheme.symbol_energy() / (float(noise.sum()) + self._idle_noise()))
+        snr = 10 * math.log10(self._scheme.symbol_energy() / max(float(noise.sum()) + self._idle_noise(), 1e-12))
         crossing = crossings(self._sums)
         clock_ppm, jitter = self._clock()
         carrier, phase_rms = self._carrier()
@@ -402,7 +440,9 @@ class Figures:
         return {
             "opening_pct": opening,
             "closure_db": 20 * math.log10(100.0 / opening) if opening > 0 else None,
-            "noise_margin_db": 20 * math.log10(half_height / math.sqrt(float(noise.max()))) if opening > 0 else None,
+            "noise_margin_db": 20 * math.log10(half_height / math.sqrt(max(float(noise.max()), 1e-12)))
+            if opening > 0
+            else None,
             "level_rms_pct": self._thickness_pct(best),
             "crossing_rms_ui": crossing.rms,
             "crossing_pp_ui": crossing.pp,
@@ -449,22 +489,30 @@ class Figures:
         best = _ui(self._best)
         rail, eye = np.unravel_index(int(np.argmin(self._openings)), self._openings.shape)
         circle = self._scheme.name == "8psk"  # whose rails are not decided one by one
+        evidence, residual = self._evidence, self._sums.residual
+        bent = self._compression()
         return Diagnosis(
-            response=self._pattern.response(best),
+            response=evidence.response,
             intervals={key: estimate.interval() for key, estimate in self.estimates.items()},
             over_time=over_time(self._errors_at, best),
             over_threshold=None if circle else self._decisions.over_threshold(int(rail), int(eye)),
             jitter=self._jitter_split(),
             equalisers=self._equalisers.trials(),
             best_thresholds=() if circle else tuple(self._decisions.best_thresholds().ravel().tolist()),
-            opening_with_3db_more_pct=self._opening_with(10**-0.3),
+            opening_with_3db_more_pct=evidence.opening_with_3db_more_pct,
+            constellation=Constellation(residual.constellation.copy(), residual.reach)
+            if self._scheme.rails == 2
+            else None,
+            tone_hz=evidence.tone_hz,
+            compression_db=bent[0] if bent is not None else None,
+            am_pm_deg=bent[1] if bent is not None and self._scheme.rails == 2 else None,
+            remarks=sentences(self.reading(), evidence)[1:],
         )
 
     def _opening_with(self, noise: float) -> float:
-        """The least opening that there would be with ``noise`` times the noise variance."""
-        best = _ui(self._best)
-        change = self._modelled(best, TAIL, noise) - self._modelled(best, TAIL)
-        return float((self._openings + change).min())
+        """The least opening that there would be with ``noise`` times the noise variance, all else as it is."""
+        change = self._link.with_noise(noise).opening(TAIL) - self._link.opening(TAIL)
+        return float(self._openings.min()) + change
 
     def _jitter_split(self) -> JitterSplit | None:
         """Of the rail whose crossings are spread most at the target error rate."""

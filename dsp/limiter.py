@@ -108,11 +108,11 @@ class Limiter:
         self.raw = raw_response(response, matched)
         reach = float(np.abs(self.raw).sum(axis=(1, 2)).max()) * max(scheme.rail_levels)
         self._scale = 2.5 / max(reach, 1e-9)
-        features = self._features(self.raw)
-        _, rest = self._linear(np.concatenate((wave, features)))
+        weights, rest = self._linear(np.concatenate((wave, self._features(self.raw))))
         error, free = rest[:rails], rest[rails:]
         self._weights = _fit(error, free)
         explained = self._weighted(free)
+        self._met = self._weighted(weights[:, rails:].T)[:, :-1], explained
         self._left = error - explained
         used = self._weights.size * rails
         noise = float(np.sum(self._left**2)) / (error.size - used)
@@ -148,8 +148,11 @@ class Limiter:
     def bend(self, taps: NDArray[np.float64], raw: NDArray[np.float64] | None = None) -> Bend:
         """What it does to the link of the response ``taps`` ``(rails, rails * lags)``, ahead of the filter ``raw``, None: as it is."""
         rails, levels = self._scheme.rails, self._scheme.levels
-        weights, free = self._linear(self._features(self.raw if raw is None else raw))
-        bent = self._weighted(free)
+        if raw is None:
+            linear, bent = self._met
+        else:
+            weights, free = self._linear(self._features(raw))
+            linear, bent = self._weighted(weights.T)[:, :-1], self._weighted(free)
         others = taps.copy()
         for rail in range(rails):
             others[rail, rail * LAGS - EARLIEST] = 0.0
@@ -174,7 +177,7 @@ class Limiter:
                 rest = np.sort(value - slopes[rail, m] * about)
                 points[rail, m] = np.quantile(rest, share)
                 points[rail, m, 0], points[rail, m, -1] = rest[0], rest[-1]
-        return Bend(self._weighted(weights.T)[:, :-1], means, slopes, points, variance)
+        return Bend(linear, means, slopes, points, variance)
 
     def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
         """Powers of the wave ahead of the filter, behind the filter: ``(features, n)``, of I/Q real over imaginary parts."""
@@ -234,3 +237,28 @@ def _fit(error: NDArray[np.float64], free: NDArray[np.float64]) -> NDArray[np.co
     gram = (basis.conj() @ basis.T) / np.outer(norm, norm)
     weights = np.linalg.lstsq(gram, (basis.conj() @ target) / norm, rcond=1e-7)[0] / norm
     return np.asarray(weights, dtype=np.complex128)
+
+
+def compression(
+    points: NDArray[np.complex128], shifts: NDArray[np.complex128], counts: NDArray[np.float64], noise: float
+) -> tuple[float, float] | None:
+    """How much less gain, dB, the greatest amplitude meets than the smallest, and how far it is turned against that, degrees.
+
+    ``points`` ``(n,)`` ideal ones, ``shifts`` what they are off from a linear link, of samples of variance ``noise``. A gain that changes
+    with the squared amplitude is fitted; None where all points are as large or where chance explains the change.
+    """
+    square = np.abs(points) ** 2
+    weight = counts * square
+    about = square - float(weight @ square) / float(weight.sum())
+    spread = float(weight @ about**2)
+    if spread < 1e-9 * float(weight @ square**2):
+        return None
+    # each point's own gain, least squares over all of them
+    gain = 1.0 + shifts * np.conj(points) / np.maximum(square, 1e-12)
+    slope = complex((weight * about) @ gain) / spread
+    if abs(slope) < 4.0 * math.sqrt(noise / spread):
+        return None
+    mean = complex(weight @ gain) / float(weight.sum())
+    nought = mean - slope * float(weight @ square) / float(weight.sum())
+    ratio = (nought + slope * float(square.max())) / nought
+    return -20.0 * math.log10(max(abs(ratio), 1e-6)), math.degrees(math.atan2(ratio.imag, ratio.real))
