@@ -353,13 +353,14 @@ class Figures:
             return None
         noise = float(self._split.random.sum())
         if self._scheme.rails == 1:
-            off = self._levels(0) - self._nominal
-            return compression(self._nominal + 0j, off + 0j, self._counts[0], noise)
+            points = np.asarray(self._nominal, dtype=np.complex128)
+            off = np.asarray(self._levels(0) - self._nominal, dtype=np.complex128)
+            return compression(points, off, self._counts[0], noise)
         counts, in_phase, across = self._sums.residual.points.T
-        points = (self._nominal[:, None] + 1j * self._nominal[None, :]).ravel()
+        grid = (self._nominal[:, None] + 1j * self._nominal[None, :]).ravel()
         met = counts > 0
-        shifts = (in_phase[met] + 1j * across[met]) / counts[met]
-        return compression(points[met], shifts, counts[met], noise) if met.any() else None
+        shifts = np.asarray((in_phase[met] + 1j * across[met]) / counts[met], dtype=np.complex128)
+        return compression(grid[met], shifts, counts[met], noise) if met.any() else None
 
     def _link_at(self, ui: float) -> LinkModel:
         """The link at an instant, with the noise that there is at the best one."""

@@ -111,7 +111,7 @@ def _noise(reading: Reading, evidence: Evidence) -> tuple[str, str]:
     noise = budget.noise_pct if budget is not None else None
     if evidence.tone_hz is not None and evidence.tone_pct is not None and noise and evidence.tone_pct > _TONE * noise:
         return (
-            f"noise, {evidence.tone_pct:.0f} points of it an interfering tone seen at {_hertz(evidence.tone_hz)} "
+            f"noise, {evidence.tone_pct:.0f} points of it from an interfering tone seen at {_hertz(evidence.tone_hz)} "
             f"(give or take whole multiples of {_hertz(evidence.symbol_rate_hz)}),",
             "takes",
         )
@@ -153,7 +153,9 @@ def _by_equaliser(reading: Reading, evidence: Evidence) -> str:
     equaliser, opening = reading.equaliser, reading.opening_pct
     if equaliser is None or opening is None or equaliser.opening_pct - opening < _HELPS:
         return ""
-    return f"; a {equaliser.taps}-tap equaliser would bring the opening from {opening:.0f} to {equaliser.opening_pct:.0f} %"
+    article = "an" if equaliser.taps == 11 else "a"
+    better = f"from {opening:.0f} to {equaliser.opening_pct:.0f} %"
+    return f"; {article} {equaliser.taps}-tap equaliser would bring the opening {better}"
 
 
 def _by_signal(reading: Reading, evidence: Evidence) -> str:
