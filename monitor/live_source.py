@@ -31,6 +31,8 @@ def live_opener(parsed: argparse.Namespace) -> "Callable[[], LiveSource]":
     from monitor.sources.live import open_live
     from monitor.sources.stream import StreamOptions
 
+    if parsed.channels is not None and not parsed.source.startswith("audio:"):
+        raise InputError(f"{parsed.source}: a stream has one channel; leave out --channels")
     if parsed.key is None and (parsed.server_key or parsed.client_keys):
         raise InputError("--server-key and --client-keys go with --key, the own secret key")
     curve = Curve(parsed.key, parsed.server_key, parsed.client_keys) if parsed.key is not None else None

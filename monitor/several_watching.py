@@ -194,27 +194,56 @@ def _picture_of(watch: "Watch") -> "Callable[[], Snapshot | None]":
 def _openers(
     links: Sequence[NamedLink], opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]"
 ) -> "list[Callable[[], LiveSource]]":
-    """What opens each link's source; links in the same samples share one."""
+    """What opens each link's source; links in the same samples share one, as do two channels of one sound card."""
     from functools import partial
 
     from monitor.sources.fan import Fan
 
     several = [link.arguments for link in links]
-    count = Counter(one.stream for one in several)
-    fans = {
-        stream: Fan(opener(next(one.parsed for one in several if one.stream == stream)), branches)
-        for stream, branches in count.items()
-        if branches > 1
-    }
-    taken: Counter[int] = Counter()
     openers: list[Callable[[], LiveSource]] = []
+    fans: dict[int | str, Fan] = {}
+    taken: Counter[int | str] = Counter()
+    sharing = Counter(_shared(one) for one in several)
     for one in several:
-        if one.stream in fans:
-            openers.append(partial(fans[one.stream].branch, taken[one.stream]))
-            taken[one.stream] += 1
-        else:
+        share = _shared(one)
+        if sharing[share] == 1:
             openers.append(opener(one.parsed))
+            continue
+        whole = _whole_card(several, one)
+        if share not in fans:
+            fans[share] = Fan(opener(whole), sharing[share])
+        branch = partial(fans[share].branch, taken[share])
+        taken[share] += 1
+        if isinstance(share, int):
+            openers.append(branch)
+        else:
+            openers.append(partial(_rail, branch, whole.channels.index(one.parsed.channels[0])))
     return openers
+
+
+def _shared(one: LinkArguments) -> int | str:
+    """What links that share a source have in common: the number of their stream, or the sound card of which each is a channel."""
+    own = one.parsed
+    card = own.source.startswith("audio:") and own.channels is not None and not own.iq
+    return str(own.source) if card else one.stream
+
+
+def _whole_card(several: Sequence[LinkArguments], one: LinkArguments) -> argparse.Namespace:
+    """The arguments that open what links share: of a sound card its two channels at once, as many systems open it only once."""
+    share = _shared(one)
+    if isinstance(share, int):
+        return one.parsed
+    channels = sorted({other.parsed.channels[0] for other in several if _shared(other) == share})
+    if len(channels) != sum(_shared(other) == share for other in several) or len(channels) != 2:
+        raise InputError(f"{share}: of one sound card two different channels can be two links, and no more")
+    return argparse.Namespace(**{**vars(one.parsed), "channels": tuple(channels), "iq": True})
+
+
+def _rail(branch: "Callable[[], LiveSource]", rail: int) -> "LiveSource":
+    from monitor.sources.audio import END_STOP
+    from monitor.sources.rails import RailSource
+
+    return RailSource(branch(), 1 if rail else 0, end_stop=END_STOP)
 
 
 def _show(

@@ -20,6 +20,8 @@ from monitor.sources.wire import Item, StreamEvent
 PREFIX: Final = "audio:"
 _FULL_SCALE: Final = 1 << 31
 _END_STOP: Final = 32767 << 16  # where a 16-bit converter stops; PortAudio fills the lower bits with zeros
+END_STOP: Final = _END_STOP / _FULL_SCALE
+"""A sample of this size or more is taken for clipped."""
 _BLOCK_S: Final = 0.02
 _HELD_BLOCKS: Final = 100
 

@@ -11,12 +11,17 @@ import numpy as np
 import pytest
 import zmq
 
+from dsp.block import Block
 from dsp.reading import Reading
-from monitor.cli import main
-from monitor.errors import MonitorError
+from monitor.cli import main, parser
+from monitor.errors import InputError, MonitorError
 from monitor.journal import CSV_COLUMNS
+from monitor.links import links_of
 from monitor.several import MARGIN_S, Foremost, SeveralWatches, badness
+from monitor.several_watching import _openers, named_links
 from monitor.snapshot import Snapshot
+from monitor.sources.audio import END_STOP
+from monitor.sources.wire import StreamEvent
 from monitor.state import AlarmLine, LinkState, LiveState
 from tests.monitor.recordings import (
     PAM2,
@@ -208,6 +213,67 @@ def test_a_failure_is_told_when_it_happens_while_others_go_on():
         two.over.set()
         thread.join(5)
     assert [name for name, _ in watches.failures] == ["one"]
+
+
+# --- links that share a source
+
+
+def openers_of(*arguments, opener):
+    return _openers(named_links(links_of(parser().parse_args(["watch", *arguments]))), opener)
+
+
+def test_two_channels_of_a_sound_card_open_it_once_and_each_gets_its_own():
+    opened = []
+
+    class Card:
+        uri, warnings, ended, patient = "audio:rx", ("beware",), False, False
+
+        def poll(self, timeout_s):
+            self.ended = True
+            both = np.array([0.25 + 0.5j, END_STOP - 0.25j], np.complex64)
+            return (StreamEvent("start", "arrives", 0, 48000.0, "ci32_le"), Block(both, 7, 3, 1, 0))
+
+        def close(self):
+            opened.append("closed")
+
+    def opener(own):
+        opened.append((own.channels, own.iq))
+        return Card
+
+    two, one = [open_source() for open_source in openers_of("audio:rx", "--channels", "2,1", opener=opener)]
+    start, block = one.poll(1)
+    assert (start.format, block.start, block.lost, block.clipped) == ("ri32_le", 7, 3, 1)
+    assert block.samples.dtype == np.float32
+    assert block.samples.flags.c_contiguous
+    np.testing.assert_array_equal(block.samples, np.float32([0.25, END_STOP]))
+    _, block = two.poll(1)
+    np.testing.assert_array_equal(block.samples, np.float32([0.5, -0.25]))
+    assert block.clipped == 0
+    assert one.ended
+    assert two.ended
+    for source in (one, two):
+        source.close()
+    assert opened == [((1, 2), True), "closed"]
+
+
+def test_recordings_and_sockets_are_opened_by_each_link_itself():
+    def opener(own):
+        return lambda: (own.source, own.channels)
+
+    found = openers_of("a.wav", "b.wav", "--channels", "1,2", opener=opener)
+    assert [open_source() for open_source in found] == [
+        ("a.wav", (1,)),
+        ("a.wav", (2,)),
+        ("b.wav", (1,)),
+        ("b.wav", (2,)),
+    ]
+    found = openers_of("tcp://127.0.0.1:5555", "tcp://127.0.0.1:5556", opener=opener)
+    assert [open_source()[0] for open_source in found] == ["tcp://127.0.0.1:5555", "tcp://127.0.0.1:5556"]
+
+
+def test_a_sound_card_is_two_links_at_most():
+    with pytest.raises(InputError, match="two different channels"):
+        openers_of("audio:rx", "--channels", "1,2,3", opener=lambda own: None)
 
 
 # --- the commands

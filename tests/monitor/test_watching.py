@@ -126,6 +126,7 @@ def test_bare_samples_whose_rate_is_not_given_end_it_with_one_line(senders):
         (["tcp://127.0.0.1:5555", "--client-keys", "x"], "go with --key"),
         (["tcp://127.0.0.1:5555", "--key", "no.key_secret", "--server-key", "no.key"], "cannot be read"),
         (["no-such-file.wav"], "no such file"),
+        (["tcp://127.0.0.1:5555", "--channels", "1"], "a stream has one channel"),
         (["x.wav", "--pace", "0"], "is for lidwatch replay"),
         (["-", "--for", "0"], "must be above 0"),
         (["-", "--every", "nan"], "must be finite"),
