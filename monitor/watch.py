@@ -382,10 +382,18 @@ class Watch:
         status = self._keeper.status.text if self._keeper is not None else ""
         if self._engine is not None:
             state = self._engine.state(notices=self._notices, journal_text=status, ended=ended)
-            self._state = replace(state, behind_s=state.behind_s + self._waiting_s(self._engine))
+            self._state = replace(
+                state,
+                behind_s=state.behind_s + self._waiting_s(self._engine),
+                searching=state.searching if self.failure is None or state.locked else str(self.failure),
+            )
             return
+        searching = self._state.searching
+        if ended:
+            searching = "no samples came" if self.failure is None else str(self.failure)
         self._state = replace(
             self._state,
+            searching=searching,
             notices=tuple(self._notices),
             journal_text=status,
             ended=ended,

@@ -164,7 +164,7 @@ def test_a_watch_for_some_seconds_ends_even_if_no_sample_ever_came(watching):
     assert watch.wait(PATIENCE_S)
     assert watch.lines()[-1]["why"] == "watched for 0.05 s"
     assert watch.state().ended
-    assert watch.state().snapshot.lock_text == "waiting for samples"
+    assert watch.state().searching == "no samples came"
 
 
 def test_an_engine_that_fails_ends_the_watch_with_its_reason_and_the_stop_line(watching, monkeypatch):
@@ -177,6 +177,8 @@ def test_an_engine_that_fails_ends_the_watch_with_its_reason_and_the_stop_line(w
     assert "worn out" in str(watch.failure)
     assert "worn out" in watch.lines()[-1]["why"]
     assert watch.state().ended
+    assert "worn out" in watch.state().searching
+    assert "worn out" in watch.state().notices[-1]
 
 
 # --- what a sender does
