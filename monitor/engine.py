@@ -33,6 +33,7 @@ from monitor.state import AlarmLine, Change, LiveState, Mark, Verdict
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
+WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
 DIAGNOSIS_SECONDS = 1.0  # between two looks at what stands behind them
 TICK_SECONDS = 0.2  # in which clipped samples are counted together
 CLIPPED_PCT = 0.01  # more of a tick is clipping
@@ -495,10 +496,11 @@ class Engine:
         figures = Figures(merged, self._chain.context())
         told = seconds >= self._next_line
         looked = self._options.display and seconds >= self._next_diagnosis
-        # what takes long is looked at for a line or for the eyes, and once there is enough for it; in between it stands as it was
-        now = not self.relief or seconds >= self._next_whole
-        if (now and (told or looked)) or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
-            self._next_whole = seconds + 2.0**self.relief
+        # what takes long is read for a line, at fixed places of the stream, and once there is enough for it; in between it stands as it was
+        due = seconds >= self._next_whole or (told and not self.relief)
+        if due or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
+            step = WHOLE_SECONDS * 2**self.relief
+            self._next_whole = (seconds // step + 1) * step
             reading = figures.reading()
             self._opening = figures.estimates.get("opening_pct")
         else:

@@ -54,6 +54,15 @@ def test_the_lines_are_the_same_whether_somebody_watches_or_not():
     assert len(plain) > 3
 
 
+@pytest.mark.parametrize("rule", ["opening_low_pct < 60", "equaliser.opening_pct < 60"])
+def test_alarms_over_what_takes_long_to_read_are_the_same_whether_somebody_watches_or_not(rule):
+    samples = stretches(25.0, 13.0)
+    options = {"rules": rules(rule), "every_s": 5.0, "window": 4800}
+    plain = Watched(display=False, **options).feed(samples).finish().lines
+    assert Watched(display=True, **options).feed(samples).finish().lines == plain
+    assert [line[3]["state"] for line in plain if line[0] == "alarm"] == ["raised"]
+
+
 def test_a_link_that_is_identified_gives_the_same_lines_however_the_stream_is_cut():
     samples = stretches(25.0, 25.0, 25.0)
     lines = [Watched(Wanted()).feed(samples, step=step).finish().lines for step in (4800, 50_001)]
