@@ -72,11 +72,14 @@ def blocks(samples, step=4800, start=0):
 
 
 @pytest.fixture
-def watching(tmp_path):
-    """Makes running watches with a journal; stopped at the end. ``lines()`` reads the journal."""
+def watching(tmp_path, monkeypatch):
+    """Makes running watches with a journal; stopped at the end. ``lines()`` reads the journal.
+
+    Unless ``hurried``, they have all the time that a busy machine takes.
+    """
     made = []
 
-    def make(opener, wanted=QPSK_LINK, *, for_s=None, tap=None, **options):
+    def make(opener, wanted=QPSK_LINK, *, for_s=None, tap=None, hurried=False, **options):
         options.setdefault("display", False)
         journal = Journal(tmp_path / f"{len(made)}.jsonl", now=lambda: datetime.now(UTC))
         watch = Watch(
@@ -89,6 +92,10 @@ def watching(tmp_path):
             for_s=for_s,
             tap=tap,
         )
+        if not hurried:
+            watch._reader.ring._bound_s = PATIENCE_S
+            monkeypatch.setattr("monitor.watch._OLDEST_S", PATIENCE_S)
+            monkeypatch.setattr("monitor.watch._MOST_RELIEF", 0)
         path = tmp_path / f"{len(made)}.jsonl"
         watch.lines = lambda: lines_of(path)
         watch.of = lambda kind, **f: [
@@ -116,19 +123,13 @@ def pulling(uri):
 # --- live is replay
 
 
-def test_live_over_a_socket_gives_the_lines_of_the_engine_alone(watching, senders, monkeypatch):
-    # what depends on how busy this machine is
-    monkeypatch.setattr("monitor.watch._OLDEST_S", PATIENCE_S)
-    monkeypatch.setattr("monitor.watch._MOST_RELIEF", 0)
+def test_live_over_a_socket_gives_the_lines_of_the_engine_alone(watching, senders):
     samples = stretches(25.0, 12.0, 25.0)
     options = {"rules": rules("snr_db < 18", hold_s=0.2), "window": 4800}
     push, uri = senders(zmq.PUSH)
     watch = watching(pulling(uri), **options)
-    # no faster than the watch takes it, so that nothing is lost on a busy machine
-    for at in range(0, samples.size, 4800):
-        push.send_multipart(frame(samples[at : at + 4800], at))
-        if at % 19_200 == 14_400:
-            until(lambda at=at: watch._engine is not None and watch._engine.position >= at, "the samples")
+    send_all(push, samples, step=4800)
+    until(lambda: watch._engine is not None, "the start")
     until(lambda: watch._engine.position == samples.size, "all samples")
     watch.stop()
     alone = Watched(**options).feed(samples).finish()
@@ -298,7 +299,7 @@ def test_a_watch_that_is_too_slow_drops_samples_counts_them_and_stays_near_the_n
 
     behind = []
     slow_link = Wanted(scheme=find_scheme("qpsk"), symbol_rate_hz=2000.0, pulse=Pulse("rrc", 0.35))
-    watch = watching(RealTime, slow_link)
+    watch = watching(RealTime, slow_link, hurried=True)
     while not watch.wait(0.02):
         behind.append(watch.state().behind_s)
     assert watch.failure is None
@@ -337,7 +338,7 @@ def test_a_watch_that_is_nearly_too_slow_draws_fewer_traces_before_any_sample_is
             self.given += 1
             return super().poll(timeout_s)
 
-    watch = watching(RealTime)
+    watch = watching(RealTime, hurried=True)
     assert watch.wait(PATIENCE_S)
     assert max(most) >= 1
     # taken up again when all was prompt
@@ -360,7 +361,7 @@ def test_long_messages_are_no_reason_to_draw_fewer_traces(watching, monkeypatch)
                 time.sleep(max(0.0, began + (6 - len(self.steps)) * 0.3 - time.monotonic()))
             return super().poll(timeout_s)
 
-    watch = watching(lambda: Slow((START,), *blocks(samples, 14_400)))
+    watch = watching(lambda: Slow((START,), *blocks(samples, 14_400)), hurried=True)
     reliefs = set()
     while not watch.wait(0.02):
         reliefs.add(watch._engine.relief if watch._engine is not None else 0)
@@ -371,7 +372,7 @@ def test_a_long_message_that_a_newer_one_overtakes_is_left_half_done_and_counted
     monkeypatch.setattr("monitor.watch._OLDEST_S", 0.0)
     samples = stretches(25.0, 25.0)
     source = Scripted((START, Block(samples[:48_000], 0), Block(samples[48_000:], 48_000)))
-    watch = watching(lambda: source)
+    watch = watching(lambda: source, hurried=True)
     assert watch.wait(PATIENCE_S)
     stop = watch.lines()[-1]
     assert 0 < stop["samples_lost"] < 48_000
@@ -440,7 +441,7 @@ def test_stopping_twice_and_before_the_start_is_no_matter(watching):
 
 
 def test_a_killed_watch_leaves_a_journal_whose_every_line_but_the_last_parses_and_is_gone_on_with(tmp_path, senders):
-    push, uri = senders(zmq.PUSH)
+    push, uri = senders(zmq.PUSH, sndtimeo=60_000)  # a program starts slowly on a busy machine
     journal = tmp_path / "watch.jsonl"
     command = ["watch", uri, "--socket", "pull", "--view", "none", *QPSK, "--journal", str(journal), "--every", "0.2"]
     samples = stretches(25.0)
