@@ -229,7 +229,7 @@ def test_an_encrypted_stream_with_keys_of_our_own_command_is_watched_and_a_stran
     )  # fmt: skip
     try:
         server = zmq.auth.load_certificate(keys / "station.key")[0]
-        samples = stretches(25.0)
+        samples = stretches(25.0)[:19_200]  # no more than may wait on a busy machine
 
         def sender(name):
             public, secret = zmq.auth.load_certificate(keys / f"{name}.key_secret")
