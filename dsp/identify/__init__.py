@@ -2,7 +2,8 @@
 
 from dsp.acquisition import NotFound
 from dsp.identify.findings import Band, Findings, FoundLink, Guess, Identified, Wanted
-from dsp.identify.search import identify, occupied_band, placement, rate_lines
+from dsp.identify.search import identify, placement
+from dsp.identify.spectrum import occupied_band
 from dsp.identify.survey import survey_links
 
 __all__ = [
@@ -16,6 +17,5 @@ __all__ = [
     "identify",
     "occupied_band",
     "placement",
-    "rate_lines",
     "survey_links",
 ]

@@ -8,7 +8,8 @@ from numpy.typing import NDArray
 from dsp.acquisition import NotFound
 from dsp.block import Samples
 from dsp.identify.findings import Findings, FoundLink, Guess, Identified, Wanted
-from dsp.identify.search import identify, occupied_band
+from dsp.identify.search import identify
+from dsp.identify.spectrum import occupied_band
 
 
 def survey_links(samples: Samples, sample_rate_hz: float, wanted: Wanted | None = None, most: int = 3) -> Findings:

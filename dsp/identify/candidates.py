@@ -1,0 +1,462 @@
+"""From a spectrum to what the link may be: symbol rates from lines, then each scheme's agreement with the symbols at that rate."""
+
+import math
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import fft, signal
+
+from dsp.acquisition import interpolate, power_line
+from dsp.identify.likelihood import Agreement, agreement, decide, no_structure, repetition, surprise
+from dsp.identify.lines import Line, Products
+from dsp.identify.shape import PHASES, Response, best_pulse, response_of, spectrum_shapes
+from dsp.identify.spectrum import Spectrum, spectrum_of
+from dsp.interpolation import BEFORE, TAPS
+from dsp.link import Scheme, find_scheme
+from dsp.pulses import Pulse, receive_filter
+from dsp.tracking import tables_for
+
+_SYMBOLS = 4096  # that are looked at
+_SCAN = 32
+_CLEAN_LAGS = (-6, 10)
+_SURPRISE = 0.4
+_REPETITION = 0.6
+_BIT_ERRORS = 0.012
+_CHANCE = 1e-8
+
+Values = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class Candidate:
+    """One answer with its evidence.
+
+    ``rate`` in symbols a sample, ``centre`` in cycles a sample; ``line`` is the clock's; ``excess`` the log-likelihood of a symbol over
+    that of no structure, ``margin`` over that of the ``rival`` scheme (nats); ``index`` the modulation index; ``noise_db`` the ratio of
+    symbol energy to noise at the decisions. ``doubt`` says why this may be none; empty if nothing speaks against it.
+    """
+
+    scheme: Scheme
+    rate: float
+    pulse: Pulse
+    centre: float
+    line: Line
+    symbols: int
+    excess: float
+    margin: float
+    rival: Scheme | None
+    snr_db: float
+    doubt: str = ""
+    index: float | None = None
+    other_pulse: Pulse | None = None
+    pulse_margin_db: float = 0.0
+    response: Response | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class _Wave:
+    """A wave at some 4.6 to 9 samples a symbol with the instants of its busiest stretch: ``tau`` in samples, ``count`` symbols."""
+
+    samples: NDArray[np.complex128]
+    sps: float
+    rate: float
+    half: float  # band in symbol rates
+
+
+def _filtered(wave: _Wave, pulse: Pulse) -> NDArray[np.complex128]:
+    taps = receive_filter(pulse, wave.sps)
+    if taps.size == 1:
+        return wave.samples
+    return np.asarray(signal.oaconvolve(wave.samples, taps, mode="same"))
+
+
+def _at(samples: NDArray[np.complex128], instants: Values, sps: float) -> NDArray[np.complex128]:
+    table = tables_for(sps, min(1.1, 0.4 * sps)).value
+    real = interpolate(np.ascontiguousarray(samples.real, np.float32), instants, table).astype(np.float64)
+    if not np.iscomplexobj(samples) or not np.any(samples.imag):
+        return real + 0j
+    return real + 1j * interpolate(np.ascontiguousarray(samples.imag, np.float32), instants, table)
+
+
+def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
+    """First instant and count of the stretch to look at: the first that is nearly as strong as any."""
+    margin = BEFORE + TAPS + 2 * sps
+    count = int((samples.size - 2 * margin) / sps)
+    if count <= _SYMBOLS:
+        return margin, max(count, 0)
+    block = int(_SYMBOLS / 8 * sps)
+    blocks = samples.size // block
+    power = np.mean(np.abs(samples[: blocks * block].reshape(blocks, block)) ** 2, axis=1)
+    runs = np.convolve(power, np.ones(8), mode="valid")
+    first = int(np.argmax(runs > 0.9 * runs.max()))
+    return max(first * block, margin), min(_SYMBOLS, int((samples.size - margin - first * block) / sps) - 2)
+
+
+def _timed(samples: NDArray[np.complex128], wave: _Wave, stagger: bool = False) -> Values:
+    """Instants of the symbols: where the values' spread of power is least, as it is for every constellation but not between."""
+    start, count = _busiest(samples, wave.sps)
+    some = start + wave.sps * np.arange(min(count, 1024))
+    table = []
+    for k in range(_SCAN):
+        power = np.abs(_at(samples, some + k / _SCAN * wave.sps, wave.sps)) ** 2
+        table.append(float(np.mean(power**2)) / max(float(np.mean(power)) ** 2, 1e-30))
+    kurtosis = np.asarray(table)
+    top = int(np.argmin(kurtosis))
+    # a plateau (square pulses have one): its middle
+    near = kurtosis < kurtosis[top] + 0.02 * (kurtosis.max() - kurtosis[top])
+    low = high = 0
+    while near[(top - low - 1) % _SCAN] and low < _SCAN // 2:
+        low += 1
+    while near[(top + high + 1) % _SCAN] and high < _SCAN // 2:
+        high += 1
+    place = top + 0.5 * (high - low)
+    if low == high == 0:
+        left, right = kurtosis[(top - 1) % _SCAN], kurtosis[(top + 1) % _SCAN]
+        bend = left + right - 2 * kurtosis[top]
+        place += 0.5 * (left - right) / bend if bend > 0 else 0.0
+    return np.asarray(start + (place / _SCAN) % 1.0 * wave.sps + wave.sps * np.arange(max(count - 1, 0)))
+
+
+def _cleaned(values: NDArray[np.complex128], decided: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    """The values less what their decided neighbours put into them."""
+    low, high = _CLEAN_LAGS
+    lags = [lag for lag in range(low, high + 1) if lag]
+    n = values.size
+    rows = np.arange(high, n + low)
+    if rows.size < 8 * len(lags):
+        return values
+    design = np.stack([decided[rows - lag] for lag in (0, *lags)] + [np.ones(rows.size, complex)], axis=1)
+    normal = design.conj().T @ design
+    normal += 1e-6 * np.trace(normal).real / normal.shape[0] * np.eye(normal.shape[0])
+    solution = np.linalg.solve(normal, design.conj().T @ values[rows])
+    return np.asarray(values[rows] - design[:, 1:] @ solution[1:])
+
+
+# -- real waves: baseband, and the frequency behind a discriminator ------------------------------------------------------------
+
+
+def _real_wave(spectrum: Spectrum, rate: float, pulse: Pulse) -> _Wave:
+    top = (2.6 if pulse.family in ("rect", "none") else 1.15) * rate
+    per_symbol = 12.0 if pulse.family in ("rect", "none") else 4.6
+    length = fft.next_fast_len(max(math.ceil(per_symbol * rate * spectrum.size), 64))
+    length += length % 2
+    top = min(top, 0.5 if spectrum.is_real else 0.5)
+    samples = spectrum.real_wave(top, length)
+    return _Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, top / rate)
+
+
+_WEIGHTS = {"pam3": (None, np.array([0.25, 0.5, 0.25]))}
+
+
+def _pam_agreement(values: Values, scheme: Scheme) -> Agreement:
+    return max((agreement(values, scheme, weights) for weights in _WEIGHTS.get(scheme.name, (None,))), key=lambda a: a.log_likelihood)
+
+
+def pam_candidate(
+    spectrum: Spectrum, line: Line, schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None, families: tuple[str, ...]
+) -> Candidate | None:
+    """The scheme of a real wave at a symbol rate, of those given; ``pulses`` None: sought."""
+    rate = line.frequency
+    tries = pulses
+    if tries is None:
+        shapes = spectrum_shapes(spectrum, rate, None)
+        tries = tuple(dict.fromkeys([*(shape.pulse for shape in shapes[:1]), Pulse("rect"), Pulse("none")]))
+    best: tuple[float, Pulse] | None = None
+    for pulse in tries:
+        wave = _real_wave(spectrum, rate, pulse)
+        filtered = _filtered(wave, pulse)
+        instants = _timed(filtered, wave)
+        if instants.size < 100:
+            return None
+        values = _at(filtered, instants[:1024], wave.sps).real[None]
+        values = values - values.mean()
+        merit = max(_pam_agreement(values, scheme).log_likelihood for scheme in schemes) - no_structure(values)
+        if best is None or merit > best[0] + 0.05:
+            best = merit, pulse
+    assert best is not None
+    pulse = best[1]
+    result: Candidate | None = None
+    for last in (False, True):
+        wave = _real_wave(spectrum, rate, pulse)
+        filtered = _filtered(wave, pulse)
+        instants = _timed(filtered, wave)
+        values = _at(filtered, instants, wave.sps).real[None]
+        values = values - values.mean()
+        ranked = _ranked(values[0] + 0j, schemes)
+        scheme, agreed, decided, excess, n = ranked[0]
+        ranking: list[tuple[Pulse, float]] = [(pulse, 0.0)]
+        response = None
+        if agreed.error_rate < 0.1:
+            raw = _real_wave(spectrum, rate, Pulse("none"))
+            scale = raw.sps / wave.sps
+            sampled = np.stack(
+                [_at(raw.samples, (instants + (p / PHASES - 0.5) * wave.sps) * scale, raw.sps) for p in range(PHASES)]
+            )
+            response = response_of(sampled, decided[0] + 0j, min(raw.half, 0.5 * PHASES))
+            ranking = best_pulse(response, pulse, families) if pulses is None else [(pulse, 0.0)]
+        rival = ranked[1] if len(ranked) > 1 else None
+        result = Candidate(
+            scheme, rate, pulse, 0.0, line, n, excess, excess - rival[3] if rival else excess, rival[0] if rival else None,
+            _snr_db(agreed, scheme), _doubts(decided, scheme, agreed, excess, n, line), None,
+            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
+        )  # fmt: skip
+        if last or response is None or pulses is not None:
+            break
+        pulse = ranking[0][0]
+    return result
+
+
+_Ranked = tuple[Scheme, Agreement, Values, float, int]
+
+
+def _ranked(values: NDArray[np.complex128], schemes: tuple[Scheme, ...]) -> list[_Ranked]:
+    """Schemes by their excess over no structure, best first, with decisions ``(rails, n)`` in level units."""
+    found: list[_Ranked] = []
+    for scheme in schemes:
+        two = scheme.kind == "carrier"
+        rows = np.stack((values.real, values.imag)) if two else values.real[None]
+        agreed = _pam_agreement(rows, scheme)
+        decided, _ = decide(rows, scheme, agreed.gain)
+        if agreed.error_rate < 0.15:
+            d = decided[0] + (1j * decided[1] if decided.shape[0] == 2 else 0.0)
+            clean = _cleaned(values, d)
+            rows = np.stack((clean.real, clean.imag)) if two else clean.real[None]
+            agreed = _pam_agreement(rows, scheme)
+        found.append((scheme, agreed, decided, agreed.log_likelihood - no_structure(rows), rows.shape[1]))
+    # likelihoods of differently cleaned values are compared by what is left unexplained
+    return sorted(found, key=lambda item: -item[1].log_likelihood)
+
+
+def _snr_db(agreed: Agreement, scheme: Scheme) -> float:
+    per_rail = 2 if scheme.kind == "carrier" else 1
+    return 10 * math.log10(max(scheme.symbol_energy() * agreed.gain**2 / (per_rail * agreed.sigma**2), 1e-9))
+
+
+def _doubts(decided: Values, scheme: Scheme, agreed: Agreement, excess: float, n: int, line: Line) -> str:
+    if line.chance > _CHANCE:
+        return "no line in the spectrum that a symbol clock would have"
+    if excess * n < -math.log(_CHANCE):
+        return "a clock line, but the levels are not told from noise"
+    if agreed.error_rate > _BIT_ERRORS:
+        return "a clock line, but the levels are not told from noise"
+    levels = np.asarray(scheme.rail_levels)
+    classes = np.stack([np.argmin(np.abs(rail[:, None] - levels), axis=1) for rail in decided])
+    for rail in classes:
+        if np.bincount(rail, minlength=levels.size).min() < 0.35 / levels.size * rail.size:
+            return "some of the scheme's levels are hardly used"
+    number = classes[0] if classes.shape[0] == 1 else classes[0] * levels.size + classes[1]
+    points = levels.size ** classes.shape[0]
+    if scheme.name == "8psk":
+        number = np.floor(np.angle(decided[0] + 1j * decided[1]) / (2 * np.pi) * 8 % 8).astype(np.int64)
+        points = 8
+    if surprise(number, points) < _SURPRISE:
+        return "a bare tone, or a pattern that repeats, not data"
+    if repetition(decided) > _REPETITION:
+        return "a bare tone, or a pattern that repeats, not data"
+    return ""
+
+
+# -- carriers ------------------------------------------------------------------------------------------------------------------
+
+
+def _carrier_wave(spectrum: Spectrum, rate: float, centre: float, pulse: Pulse) -> _Wave:
+    half = (2.2 if pulse.family in ("rect", "none") else 1.1) * rate
+    length = fft.next_fast_len(max(math.ceil(4.6 * rate * spectrum.size), 64))
+    samples = spectrum.wave(centre, half, length)
+    return _Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, half / rate)
+
+
+def _upright(z: NDArray[np.complex128], order: int, turn: float) -> NDArray[np.complex128]:
+    """Symbol values turned by the phase that their power shows, stretch by stretch."""
+    n = np.arange(z.size)
+    z = z * np.exp(-2j * np.pi * turn * n)
+    scaled = np.abs(z) / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
+    raised = np.exp(1j * order * np.angle(z)) * np.minimum(scaled, 2.0) ** 2
+    if order > 2:
+        raised = -raised
+    block = min(512, max(z.size // 2, 1))
+    sums = np.convolve(raised, np.ones(block), mode="same")
+    angle = np.unwrap(np.angle(sums)) / order
+    return np.asarray(z * np.exp(-1j * angle))
+
+
+def _followed(z: NDArray[np.complex128], decided: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    """Values turned by the mean phase against their decisions over 129 symbols."""
+    product = np.convolve(z * np.conj(decided), np.ones(129), mode="same")
+    return np.asarray(z * np.exp(-1j * np.angle(product)))
+
+
+def carrier_candidates(
+    spectrum: Spectrum, line: Line, about: float, schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None
+) -> Candidate | None:
+    """The scheme of a carrier near ``about`` at a symbol rate."""
+    rate = line.frequency
+    shapes = spectrum_shapes(spectrum, rate, about)
+    if not shapes:
+        return None
+    centre = shapes[0].centre
+    pulse = pulses[0] if pulses is not None else shapes[0].pulse
+    result: Candidate | None = None
+    for last in (False, True):
+        wave = _carrier_wave(spectrum, rate, centre, pulse)
+        filtered = _filtered(wave, pulse)
+        instants = _timed(filtered, wave)
+        if instants.size < 100:
+            return None
+        z = _at(filtered, instants, wave.sps)
+        z = z / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
+        found: list[tuple[_Ranked, NDArray[np.complex128], float]] = []
+        for order, names in ((2, ("bpsk",)), (4, ("qpsk", "pi4dqpsk", "16qam", "64qam")), (8, ("8psk",))):
+            some = tuple(s for s in schemes if s.name in names)
+            if not some:
+                continue
+            carrier = power_line(z, order)
+            if carrier.chance > 1e-6:
+                continue
+            turn = carrier.turn
+            if order == 4:
+                rotated = abs(turn) > 1 / 16
+                some = tuple(s for s in some if (s.name == "pi4dqpsk") == rotated or len(schemes) == 1)
+            upright = _upright(z, order, turn)
+            for item in _ranked(upright, some):
+                decided = item[2][0] + (1j * item[2][1] if item[2].shape[0] == 2 else 0.0)
+                if item[1].error_rate < 0.1:
+                    upright_now = _followed(upright, decided)
+                    item = _ranked(upright_now, (item[0],))[0]
+                else:
+                    upright_now = upright
+                true_turn = turn - math.copysign(0.125, turn) if item[0].name == "pi4dqpsk" and abs(turn) > 1 / 16 else turn
+                found.append((item, upright_now, true_turn))
+        if not found:
+            return None
+        found.sort(key=lambda entry: -entry[0][1].log_likelihood)
+        (scheme, agreed, decided_rails, excess, n), upright, turn = found[0]
+        response = None
+        ranking: list[tuple[Pulse, float]] = [(pulse, 0.0)]
+        if agreed.error_rate < 0.1:
+            decided = decided_rails[0] + (1j * decided_rails[1] if decided_rails.shape[0] == 2 else 0.0)
+            # the turn that made the values upright undoes the carrier between the symbols too
+            rotation = upright * np.conj(z)
+            rotation /= np.maximum(np.abs(rotation), 1e-12)
+            slope = np.angle(np.sum(rotation[1:] * np.conj(rotation[:-1])))
+            sampled = []
+            for p in range(PHASES):
+                lead = p / PHASES - 0.5
+                sampled.append(_at(wave.samples, instants + lead * wave.sps, wave.sps) * rotation * np.exp(1j * slope * lead))
+            response = response_of(np.stack(sampled), decided, wave.half)
+            if pulses is None:
+                ranking = best_pulse(response, pulse, ("rrc", "rc", "rect"))
+        rival = found[1][0] if len(found) > 1 else None
+        result = Candidate(
+            scheme, rate, pulse, centre + turn * rate, line, n, excess,
+            agreed.log_likelihood - rival[1].log_likelihood if rival else excess, rival[0] if rival else None,
+            _snr_db(agreed, scheme), _doubts(decided_rails, scheme, agreed, excess, n, line), None,
+            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
+        )  # fmt: skip
+        if last or response is None or pulses is not None:
+            break
+        pulse = ranking[0][0]
+    return result
+
+
+def staggered_candidate(
+    spectrum: Spectrum, pair: tuple[Line, Line], scheme: Scheme, pulses: tuple[Pulse, ...] | None
+) -> Candidate | None:
+    """OQPSK from the two lines of its square, at twice the carrier less and plus the symbol rate."""
+    low, high = sorted(pair, key=lambda line: line.frequency)
+    rate, centre = 0.5 * (high.frequency - low.frequency), 0.25 * (high.frequency + low.frequency)
+    if not 1 / 2000 < rate < 0.5:
+        return None
+    weaker = max(pair, key=lambda line: line.chance)
+    line = Line(rate, min(low.ratio, high.ratio), weaker.chance)
+    shapes = spectrum_shapes(spectrum, rate, centre)
+    if not shapes:
+        return None
+    pulse = pulses[0] if pulses is not None else shapes[0].pulse
+    result: Candidate | None = None
+    for last in (False, True):
+        wave = _carrier_wave(spectrum, rate, centre, pulse)
+        filtered = _filtered(wave, pulse)
+        start, count = _busiest(filtered, wave.sps)
+        count -= 2
+        if count < 100:
+            return None
+        stretch = np.arange(int(start), int(start + count * wave.sps))
+        square = filtered[stretch] ** 2
+        turn = np.exp(-2j * np.pi * stretch / wave.sps)
+        upper, lower = np.angle(np.sum(square * turn)), np.angle(np.sum(square * np.conj(turn)))
+        theta, tau = 0.25 * (upper + lower), (lower - upper) / (4 * np.pi) * wave.sps
+        instants = start + (tau - start) % wave.sps + wave.sps * np.arange(count)
+        early = _at(filtered, instants, wave.sps) * np.exp(-1j * theta)
+        late = _at(filtered, instants + 0.5 * wave.sps, wave.sps) * np.exp(-1j * theta)
+        z = early.real + 1j * late.imag
+        z = z / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
+        scheme_, agreed, decided_rails, excess, n = _ranked(z, (scheme,))[0]
+        ranking: list[tuple[Pulse, float]] = [(pulse, 0.0)]
+        response = None
+        if agreed.error_rate < 0.1:
+            sampled = [
+                (_at(wave.samples, instants + (p / PHASES - 0.5) * wave.sps, wave.sps) * np.exp(-1j * theta)).real for p in range(PHASES)
+            ]
+            response = response_of(np.stack(sampled) + 0j, decided_rails[0] + 0j, wave.half)
+            if pulses is None:
+                ranking = best_pulse(response, pulse, ("rrc", "rc", "rect"))
+        result = Candidate(
+            scheme_, rate, pulse, centre, line, n, excess, excess, None, _snr_db(agreed, scheme),
+            _doubts(decided_rails, scheme, agreed, excess, n, line), None,
+            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
+        )  # fmt: skip
+        if last or response is None or pulses is not None:
+            break
+        pulse = ranking[0][0]
+    return result
+
+
+# -- frequency -----------------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, slots=True)
+class FrequencyRail:
+    """The frequency of a band over time as a spectrum of its own; ``step`` output samples an input sample."""
+
+    spectrum: Spectrum
+    step: float
+    middle: float
+    half: float
+
+
+def frequency_rail(spectrum: Spectrum, centre: float, half: float) -> FrequencyRail | None:
+    """Instantaneous frequency (cycles an input sample, from ``centre``) of the band."""
+    length = fft.next_fast_len(max(math.ceil(6.0 * half * spectrum.size), 1024))
+    z = spectrum.wave(centre, half, length)
+    step = length / spectrum.size
+    frequency = np.angle(z[1:] * np.conj(z[:-1])) * np.float32(step / (2 * math.pi))
+    frequency = np.clip(frequency, -1.3 * half, 1.3 * half)
+    middle = float(np.mean(frequency))
+    found = spectrum_of(np.asarray(frequency - middle, np.float32))
+    return None if found is None else FrequencyRail(found, step, centre + middle, half)
+
+
+def frequency_candidate(rail: FrequencyRail, line: Line, schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None) -> Candidate | None:
+    """Two or four frequencies at a symbol rate (``line``, cycles a sample of the rail)."""
+    levels = {s.levels for s in schemes}
+    tries = tuple(s for s in (find_scheme("pam2"), find_scheme("pam4")) if s.levels in levels)
+    families = ("rect", "gauss", "rrc")
+    found = pam_candidate(rail.spectrum, line, tries, pulses, families)
+    if found is None or found.response is None:
+        return found
+    # a long run of one symbol rests at the sum of all responses
+    total = np.sum(found.response.wave.reshape(-1, PHASES), axis=0).real
+    rate = line.frequency * rail.step
+    index = 2 * float(np.mean(total)) / rate
+    gauss = found.pulse.family == "gauss"
+    half_index = abs(index - 0.5) < 0.04
+    if found.scheme.levels == 4:
+        name = "fsk4"
+    else:
+        name = ("gmsk" if half_index else "gfsk") if gauss else ("msk" if half_index else "fsk2")
+    scheme = find_scheme(name)
+    if scheme not in schemes:
+        scheme = next(s for s in schemes if s.levels == found.scheme.levels)
+    return replace(found, scheme=scheme, rate=rate, centre=rail.middle, index=abs(index))

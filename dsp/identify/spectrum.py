@@ -1,0 +1,179 @@
+"""The spectrum of a whole stretch: its smoothed density, where it stands above the floor, and cuts of it as waves of a lower rate."""
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import fft
+
+from dsp.block import Samples
+from dsp.identify.findings import Band
+
+_CELLS = 4096
+_LEAST_CELLS = 32  # that a band should fill
+_FULL = 1.5  # times the floor, from where on a cell is more than noise
+
+Cells = NDArray[np.float64]
+
+
+def fast_length(size: int) -> int:
+    """The greatest length up to ``size`` whose transform is quick."""
+    step = max(size // 2048, 1)
+    for length in range(size, max(size - 64 * step, 0), -step):
+        if fft.next_fast_len(length) == length:
+            return length
+    return 2 ** int(math.log2(max(size, 1)))
+
+
+@dataclass(frozen=True, slots=True)
+class Spectrum:
+    """Transform of a stretch of ``size`` samples, and its power density in cells.
+
+    ``transform`` runs from -1/2 to 1/2 cycles a sample (real samples: from 0 to 1/2) in ``bins`` bins; ``density`` is its squared
+    magnitude averaged over cells of ``width`` bins. ``is_real`` says whether the samples were.
+    """
+
+    transform: NDArray[np.complex64]
+    density: Cells
+    width: int
+    size: int
+    is_real: bool
+    floor: float
+
+    @property
+    def frequencies(self) -> Cells:
+        """Middle of each cell, cycles a sample."""
+        first = 0.0 if self.is_real else -(self.size // 2) / self.size
+        return first + (np.arange(self.density.size) + 0.5) * self.width / self.size
+
+    def full(self, times: float = _FULL) -> NDArray[np.bool_]:
+        """Which cells stand above the floor."""
+        kernel = np.ones(3) / 3
+        return np.asarray(np.convolve(self.density, kernel, mode="same") > times * self.floor)
+
+    def bin_of(self, frequency: float) -> int:
+        """The bin at a frequency, unbounded."""
+        return round(frequency * self.size) + (0 if self.is_real else self.size // 2)
+
+    def wave(self, centre: float, half: float, length: int, weight: Cells | None = None) -> NDArray[np.complex64]:
+        """The band ``centre`` +- ``half`` brought to 0 as a complex wave of ``length`` samples over the same time; ``weight`` by cell.
+
+        Real samples give the analytic wave. ``length`` should be at least ``2 * half * size``.
+        """
+        return np.asarray(fft.ifft(self._placed(centre, half, length, weight)), dtype=np.complex64) * np.float32(
+            length / self.size
+        )
+
+    def real_wave(self, top: float, length: int, weight: Cells | None = None) -> NDArray[np.float32]:
+        """Real samples below ``top`` cycles a sample as a real wave of ``length`` samples over the same time."""
+        last = min(self.bin_of(top), self.transform.size - 1, length // 2)
+        part = np.zeros(length // 2 + 1, np.complex64)
+        part[:last] = self._weighted(0, last, weight)
+        return np.asarray(fft.irfft(part, length), dtype=np.float32) * np.float32(length / self.size)
+
+    def _weighted(self, first: int, stop: int, weight: Cells | None) -> NDArray[np.complex64]:
+        part = self.transform[first:stop]
+        if weight is None:
+            return part
+        return part * _by_bin(weight, self.width, first, stop)
+
+    def _placed(self, centre: float, half: float, length: int, weight: Cells | None) -> NDArray[np.complex64]:
+        middle = self.bin_of(centre)
+        reach = min(math.ceil(half * self.size), length // 2 - 1)
+        first, stop = max(middle - reach, 0), min(middle + reach, self.transform.size)
+        out = np.zeros(length, np.complex64)
+        if stop <= first:
+            return out
+        part = self._weighted(first, stop, weight)
+        positive = max(middle - first, 0)
+        out[: part.size - positive] = part[positive:]
+        if positive:
+            out[length - positive :] = part[:positive]
+        return out
+
+
+def _by_bin(cells: Cells, width: int, first: int, stop: int) -> NDArray[np.float32]:
+    low, high = first // width, min((stop - 1) // width, cells.size - 1)
+    spread = np.repeat(cells[low : high + 1].astype(np.float32), width)[first - low * width :][: stop - first]
+    return np.pad(spread, (0, stop - first - spread.size), mode="edge") if spread.size < stop - first else spread
+
+
+def spectrum_of(samples: Samples) -> Spectrum | None:
+    """The spectrum of a stretch; None for fewer than 512 samples or silence."""
+    if samples.size < 512:
+        return None
+    size = fast_length(samples.size)
+    some = samples[:size]
+    is_real = not np.iscomplexobj(some)
+    transform = fft.rfft(some) if is_real else fft.fftshift(fft.fft(some))
+    power = transform.real.astype(np.float32) ** 2 + transform.imag.astype(np.float32) ** 2
+    if not float(power.max()) > 0:
+        return None
+    cells = _CELLS // 2 if is_real else _CELLS
+    while True:
+        width = max(transform.size // cells, 4)
+        count = transform.size // width
+        density = power[: count * width].reshape(count, width).mean(axis=1, dtype=np.float64)
+        floor = max(float(np.quantile(density, 0.1)), 1e-12 * float(density.max()))
+        filled = int(np.sum(density > max(4 * floor, 0.05 * float(np.quantile(density, 1 - 8 / density.size)))))
+        if filled >= _LEAST_CELLS or width <= 16:
+            break
+        cells *= 4
+    return Spectrum(np.asarray(transform, dtype=np.complex64), density, width, size, is_real, floor)
+
+
+def segments(spectrum: Spectrum, most: int = 6) -> list[Band]:
+    """Stretches of the spectrum that stand above the floor, the most powerful first; narrow nulls within are bridged."""
+    full = spectrum.full(2.0)
+    edges = np.flatnonzero(np.diff(np.concatenate(([0], full.astype(np.int8), [0]))))
+    runs = [[int(a), int(b)] for a, b in zip(edges[::2], edges[1::2], strict=True)]
+    joined: list[list[int]] = []
+    for run in runs:
+        if joined and run[0] - joined[-1][1] <= 2 + 0.08 * max(run[1] - run[0], joined[-1][1] - joined[-1][0]):
+            joined[-1][1] = run[1]
+        else:
+            joined.append(run)
+    excess = np.maximum(spectrum.density - spectrum.floor, 0.0)
+    total = float(excess.sum())
+    ranked = sorted(joined, key=lambda run: -float(excess[run[0] : run[1]].sum()))
+    frequencies = spectrum.frequencies
+    cell = spectrum.width / spectrum.size
+    found = []
+    for low, high in ranked[:most]:
+        if float(excess[low:high].sum()) < 1e-3 * total or high - low < 4:
+            continue
+        start, stop = frequencies[low] - cell / 2, frequencies[high - 1] + cell / 2
+        found.append(Band(0.5 * (start + stop), 0.5 * (stop - start)))
+    return found
+
+
+def occupied_band(samples: Samples) -> Band | None:
+    """The band that holds 99 % of the power above the spectrum's floor; None for silence."""
+    if samples.size < 256:
+        return None
+    length = 4096 if samples.size >= 8192 else samples.size // 8
+    pieces = samples[: samples.size // length * length].reshape(-1, length)
+    if not pieces.size:
+        return None
+    density = np.zeros(length)
+    window = np.hanning(length)
+    for piece in pieces[:256]:
+        density += np.abs(np.fft.fft(piece * window)) ** 2
+    if not density.sum() > 0:
+        return None
+    if np.isrealobj(samples):
+        density = density[: length // 2]
+        frequency = np.arange(length // 2) / length
+    else:
+        density = np.fft.fftshift(density)
+        frequency = np.fft.fftshift(np.fft.fftfreq(length))
+    smooth = np.convolve(density, np.ones(9) / 9, mode="same")
+    floor = np.quantile(smooth, 0.2)
+    excess = np.where(smooth > 4 * floor, density - floor, 0.0)
+    if not excess.sum() > 0:
+        excess = density
+    share = np.cumsum(np.maximum(excess, 0.0))
+    share /= share[-1]
+    low, high = (float(np.interp(s, share, frequency)) for s in (0.005, 0.995))
+    return Band(0.5 * (low + high), max(0.5 * (high - low), 2.0 / length))
