@@ -89,7 +89,9 @@ class FrontEnd:
             else:
                 edge = front.half_band
             if passband:
-                stop = min(stop, max(2 * front.shift - front.half_band, 1.2 * front.half_band))
+                # the mirror image of a real wave lies at minus its carrier, or a sample rate above that
+                image = min(2 * front.shift, 1.0 - 2 * front.shift)
+                stop = min(stop, max(image - front.half_band, 1.2 * front.half_band))
             if self._kind == "frequency":
                 stop = min(stop, 1.5 * front.half_band)
             if stop > edge:

@@ -12,7 +12,7 @@ from dsp.link import Scheme
 Values = NDArray[np.float64]
 
 _RING_POINTS = 48
-_ROUNDS = 24
+_ROUNDS = 20
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,7 +51,7 @@ def agreement(values: Values, scheme: Scheme, weights: Values | None = None) -> 
     power = float(np.mean(np.sum(values**2, axis=0)))
     energy = float(sum(np.mean(points**2) for points in rails))
     best: tuple[float, float, float] | None = None
-    for start_db in (8.0, 16.0, 28.0):
+    for start_db in (10.0, 24.0):
         share = 1.0 / (1.0 + 10 ** (-start_db / 10))
         gain, sigma = math.sqrt(power * share / energy), math.sqrt(power * (1 - share) / len(rails))
         total = -math.inf

@@ -12,6 +12,10 @@ from dsp.identify.spectrum import Cells, Spectrum, fast_length
 _LIMIT = 3.0  # a whitened bin is held to this many times its rms: what is left of bare tones
 
 
+_BESIDE = 24  # bins about a line that its own leakage may fill
+_DEPTHS = (1e-3, 0.15)
+
+
 @dataclass(frozen=True, slots=True)
 class Line:
     """A line: cycles a sample, power over what noise of the same spectrum would put there, chance that noise did."""
@@ -21,10 +25,13 @@ class Line:
     chance: float
 
 
-def whitening(spectrum: Spectrum, low: float, high: float) -> Cells:
-    """Weight of each cell that makes the spectrum flat from ``low`` to ``high`` cycles a sample and 0 elsewhere, or near the floor."""
+def whitening(spectrum: Spectrum, low: float, high: float, depth: float) -> Cells:
+    """Weight of each cell that makes the spectrum flat from ``low`` to ``high`` cycles a sample and 0 elsewhere,
+    near the floor, and where less than ``depth`` of the greater part is left."""
     frequencies = spectrum.frequencies
     inside = (frequencies > low) & (frequencies < high) & spectrum.full()
+    if inside.any():
+        inside &= spectrum.density > depth * float(np.quantile(spectrum.density[inside], 0.9))
     return np.where(inside, 1.0 / np.sqrt(np.maximum(spectrum.density, 1e-30)), 0.0)
 
 
@@ -50,8 +57,8 @@ class Products:
     of M. Oerder and H. Meyr, IEEE Trans. Commun. 36(5), 1988.
     """
 
-    def __init__(self, spectrum: Spectrum, low: float, high: float) -> None:
-        weight = whitening(spectrum, low, high)
+    def __init__(self, spectrum: Spectrum, low: float, high: float, depth: float = 1e-3) -> None:
+        weight = whitening(spectrum, low, high, depth)
         frequencies = spectrum.frequencies
         inside = np.flatnonzero(weight)
         self.empty = inside.size < 4
@@ -144,5 +151,24 @@ class Products:
             shift = right / (middle + right) if right > left else -left / (middle + left)
             chance = min(1.0, n * math.exp(-min(float(ratio[peak]), 700.0)))
             found.append(Line(float(frequency[peak]) + shift / self._size + offset, float(ratio[peak]), chance))
-            ratio[np.arange(peak - 4, peak + 5) % n] = 0.0
+            ratio[np.arange(peak - _BESIDE, peak + _BESIDE + 1) % n] = 0.0
         return found
+
+
+def clock_lines(
+    spectrum: Spectrum, low: float, high: float, lowest: float, highest: float, depths: tuple[float, ...] = _DEPTHS
+) -> list[Line]:
+    """Lines of a symbol clock in the band ``low`` to ``high``, from ``lowest`` to ``highest`` cycles a sample, strongest first.
+
+    Sought twice, with much and with little of what stands beside the main lobe: the lobes of a square pulse take from its line what the main
+    lobe gives, and at one width of the band all of it.
+    """
+    found: list[Line] = []
+    for depth in depths:
+        for line in Products(spectrum, low, high, depth).clock_lines(lowest, highest):
+            known = next((f for f in found if abs(f.frequency - line.frequency) * spectrum.size < _BESIDE), None)
+            if known is None:
+                found.append(line)
+            elif line.ratio > known.ratio:
+                found[found.index(known)] = line
+    return sorted(found, key=lambda line: -line.ratio)

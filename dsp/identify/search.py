@@ -19,7 +19,7 @@ from dsp.identify.candidates import (
     staggered_candidate,
 )
 from dsp.identify.findings import Band, Identified, Wanted
-from dsp.identify.lines import Line, Products
+from dsp.identify.lines import Line, Products, clock_lines
 from dsp.identify.spectrum import Spectrum, segments, spectrum_of
 from dsp.link import SCHEMES, Link, Scheme
 from dsp.pulses import Pulse
@@ -27,7 +27,10 @@ from dsp.pulses import Pulse
 _WHOLE = 1 << 22  # samples whose spectrum is looked at as a whole
 _STRETCH = 2e5  # independent samples of a band that are searched for lines
 _TRIAL_SYMBOLS = 3000
+# spread of the envelope (`Spectrum.envelope_spread`): up to 0.05 for frequency schemes at 14 dB and more, from 0.09 for band-limited carriers
+_CONSTANT, _NOT_CONSTANT = 0.07, 0.2
 _NO_LINE = "no line in the spectrum that a symbol clock would have"
+_RAIL_DEPTHS = (0.03, 0.15)  # a discriminator's noise rises outwards: what is faint there is noise
 _FAMILIES = ("rrc", "rc", "rect", "none")
 
 
@@ -85,7 +88,10 @@ def scopes(spectrum: Spectrum) -> list[Band]:
         return [Band(0.25, 0.25) if spectrum.is_real else Band(0.0, 0.5)]
     if len(parts) == 1:
         return parts
-    low, high = min(b.centre - b.half for b in parts), max(b.centre + b.half for b in parts)
+    strong = [b for b in parts if spectrum.power(b) > 0.05 * spectrum.power(parts[0])]
+    if len(strong) == 1:
+        return parts[:3]
+    low, high = min(b.centre - b.half for b in strong), max(b.centre + b.half for b in strong)
     return [Band(0.5 * (low + high), 0.5 * (high - low)), *parts[:3]]
 
 
@@ -137,12 +143,16 @@ def _in_band(
 def _kinds(spectrum: Spectrum, band: Band, wanted: Wanted) -> list[str]:
     if wanted.scheme is not None:
         return [wanted.scheme.kind]
-    if not spectrum.is_real:
-        return ["frequency", "carrier"]
     low = band.centre - band.half
-    if low > 0.5 * band.half:
-        return ["frequency", "carrier"]
-    return ["baseband", "frequency", "carrier"] if low > 0.05 * band.half else ["baseband"]
+    kinds = []
+    if spectrum.is_real and low < 0.5 * band.half:
+        if low < 0.05 * band.half:
+            return ["baseband"]
+        kinds = ["baseband"]
+    spread = spectrum.envelope_spread(band.centre, 1.15 * band.half)
+    if spread > _NOT_CONSTANT:
+        return [*kinds, "carrier"]
+    return [*kinds, "frequency", "carrier"] if spread < _CONSTANT else [*kinds, "carrier", "frequency"]
 
 
 def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> Iterator[Candidate]:
@@ -162,7 +172,7 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
 
     for kind in _kinds(spectrum, band, wanted):
         if kind == "baseband":
-            lines = Products(spectrum, 0.0, high).clock_lines(1 / 2100, 0.5)
+            lines = clock_lines(spectrum, 0.0, high, 1 / 2100, 0.5)
             found = [
                 c for line in clocks(lines) if (c := pam_candidate(spectrum, line, schemes(kind), pulses, _FAMILIES)) is not None
             ]
@@ -172,24 +182,26 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
             if rail is None:
                 continue
             top = min(2.4 * band.half / rail.step, 0.5)
-            lines = Products(rail.spectrum, 0.0, top).clock_lines(1 / 2100 / rail.step, top)
+            lines = clock_lines(rail.spectrum, 0.0, top, 1 / 2100 / rail.step, top, _RAIL_DEPTHS)
             found = [
                 c for line in clocks(lines, rail.step) if (c := frequency_candidate(rail, line, schemes(kind), pulses)) is not None
             ]
             yield from _by_belief(found)
         else:
-            products = Products(spectrum, max(low, 1e-9) if spectrum.is_real else low, high)
+            edge = max(low, 1e-9) if spectrum.is_real else low
             found = []
             plain = tuple(s for s in schemes(kind) if not s.stagger)
-            about = band.centre if wanted.carrier_hz is None else wanted.carrier_hz / rate
+            within = (low, high)
+            if wanted.carrier_hz is not None:
+                within = (wanted.carrier_hz / rate - 0.1 * band.half, wanted.carrier_hz / rate + 0.1 * band.half)
             if plain:
-                lines = products.clock_lines(1 / 2100, 2.1 * band.half)
+                lines = clock_lines(spectrum, edge, high, 1 / 2100, 2.1 * band.half)
                 found = [
-                    c for line in clocks(lines) if (c := carrier_candidates(spectrum, line, about, plain, pulses)) is not None
+                    c for line in clocks(lines) if (c := carrier_candidates(spectrum, line, within, plain, pulses)) is not None
                 ]
             staggered = next((s for s in schemes(kind) if s.stagger), None)
             if staggered is not None and not any(not c.doubt for c in found):
-                squares = products.square_lines()
+                squares = Products(spectrum, edge, high).square_lines()
                 if len(squares) >= 2 and squares[1].ratio > 0.1 * squares[0].ratio:
                     c = staggered_candidate(spectrum, (squares[0], squares[1]), staggered, pulses)
                     found += [c] if c is not None else []

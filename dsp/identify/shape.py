@@ -6,13 +6,19 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from scipy.optimize import minimize_scalar
+from scipy.special import ndtr
+
 from dsp.identify.spectrum import Spectrum
+from dsp.link import Scheme
 from dsp.pulses import Pulse, receive_filter
 
 Floats = NDArray[np.float64]
 
 PHASES = 16  # a symbol, at which a response is known
 _LAGS = 10  # symbols on each side
+_TRACES = 1500
+_NEARLY = 0.01  # of an opening, within which two pulses are as good
 _ROLLOFFS = np.arange(0.05, 1.001, 0.05)
 
 
@@ -104,71 +110,89 @@ def response_of(sampled: NDArray[np.complex128], decided: NDArray[np.complex128]
     n = decided.size
     lags = np.arange(-_LAGS, _LAGS + 1)
     rows = np.arange(_LAGS, n - _LAGS)
-    design = np.stack([decided[rows - lag] for lag in lags], axis=1)
+    design = np.stack([*(decided[rows - lag] for lag in lags), np.ones(rows.size, complex)], axis=1)
     target = sampled[:, rows].T
-    normal = design.conj().T @ design + 1e-6 * n * np.mean(np.abs(decided) ** 2) * np.eye(lags.size)
+    normal = design.conj().T @ design + 1e-6 * n * np.mean(np.abs(decided) ** 2) * np.eye(lags.size + 1)
     solution = np.linalg.solve(normal, design.conj().T @ target)  # lag, phase
     noise = float(np.mean(np.abs(target - design @ solution) ** 2)) * n / max(n - lags.size, 1)
-    return Response(solution.ravel(), noise, band)
+    # a lag's values run from half a symbol before its instant to half a symbol behind: in order of time
+    return Response(solution[:-1].ravel(), noise, band)
 
 
-def behind(response: Response, pulse: Pulse) -> tuple[float, int, NDArray[np.complex128]]:
-    """MER in dB that a receiver for ``pulse`` would have, which phase is its best, and the response at symbol intervals there."""
+def behind(response: Response, pulse: Pulse, energy: float) -> tuple[float, int, NDArray[np.complex128]]:
+    """MER in dB that a receiver for ``pulse`` would have with symbols of that mean ``energy``, which phase is its best, and the response at symbol intervals there."""
     taps = np.asarray(receive_filter(pulse, float(PHASES)), dtype=np.float64)
-    wave = np.convolve(response.wave, taps, mode="same") if taps.size < response.wave.size else np.convolve(
-        taps, response.wave, mode="same"
-    )
-    if wave.size != response.wave.size:
-        excess = wave.size - response.wave.size
-        wave = wave[excess // 2 : excess // 2 + response.wave.size]
-    frame = wave.reshape(-1, PHASES)
+    size = 2 ** math.ceil(math.log2(response.wave.size + taps.size))
+    spectrum = np.fft.fft(taps, size)
+    # four times as many phases, so that the best is met
+    product = np.fft.fft(response.wave, size) * spectrum
+    fine = np.zeros(4 * size, complex)
+    fine[: size // 2], fine[-size // 2 :] = product[: size // 2], product[size // 2 :]
+    start = 4 * (taps.size // 2)
+    wave = 4 * np.fft.ifft(fine)[start : start + 4 * response.wave.size]
+    frame = wave.reshape(-1, 4 * PHASES)
     # white noise of one-sided band B symbol rates, sampled at PHASES a symbol
-    spectrum = np.abs(np.fft.fft(taps, 2048)) ** 2
-    inside = np.abs(np.fft.fftfreq(2048)) * PHASES < response.band
-    noise = response.noise * float(np.mean(spectrum[inside])) if inside.any() else response.noise
+    inside = np.abs(np.fft.fftfreq(size)) * PHASES < response.band
+    noise = response.noise * float(np.mean(np.abs(spectrum[inside]) ** 2)) if inside.any() else response.noise
     main = np.argmax(np.abs(frame), axis=0)
-    cursor = np.abs(frame[main, np.arange(PHASES)]) ** 2
+    cursor = np.abs(frame[main, np.arange(frame.shape[1])]) ** 2
     isi = np.sum(np.abs(frame) ** 2, axis=0) - cursor
-    ratio = cursor / np.maximum(isi + noise, 1e-30)
+    ratio = energy * cursor / np.maximum(energy * isi + noise, 1e-30)
     best = int(np.argmax(ratio))
     return 10 * math.log10(max(float(ratio[best]), 1e-12)), best, frame[:, best]
 
 
-def best_pulse(response: Response, first: Pulse, families: tuple[str, ...]) -> list[tuple[Pulse, float]]:
-    """Each family's pulse with the best MER behind its receive filter, best first; a roll-off or BT is sought without a grid."""
+def opening_behind(response: Response, pulse: Pulse, scheme: Scheme) -> float:
+    """Opening, 1 for a perfect eye, of a rail behind the receive filter for ``pulse``: one trace in a thousand left outside on a side.
+
+    The symbols' share is that of random symbols through the response, the noise Gaussian.
+    """
+    mer_db, _, taps = behind(response, pulse, scheme.symbol_energy())
+    main = int(np.argmax(np.abs(taps)))
+    scaled = taps / taps[main]
+    scaled[main] = 0.0
+    points = scheme.points()
+    symbols = points[np.random.default_rng(1).integers(0, points.size, _TRACES)]
+    isi = np.convolve(symbols, scaled, mode="same").real
+    distance = 0.5 * float(np.min(np.diff(np.asarray(scheme.rail_levels))))
+    # the rest of the MER is noise; half of it on a rail of a carrier
+    total = scheme.symbol_energy() * 10 ** (-mer_db / 10)
+    noise = max(total - scheme.symbol_energy() * float(np.sum(np.abs(scaled) ** 2)), 1e-9)
+    sigma = math.sqrt(noise / (2 if scheme.kind == "carrier" else 1))
+    low, high = 0.0, float(np.max(np.abs(isi))) + 5 * sigma
+    for _ in range(18):
+        middle = 0.5 * (low + high)
+        if float(np.mean(ndtr((isi - middle) / sigma))) > 1e-3:
+            low = middle
+        else:
+            high = middle
+    return 1.0 - high / distance
+
+
+def best_pulse(response: Response, scheme: Scheme, families: tuple[str, ...], expected: tuple[Pulse, ...]) -> list[tuple[Pulse, float]]:
+    """Each family's pulse whose receive filter opens the eye most, best first; a roll-off or BT is sought without a grid.
+
+    Of a family, the pulse ``expected`` from the spectrum is kept where it does nearly as well.
+    """
     found: list[tuple[Pulse, float]] = []
+    known = {pulse.family: pulse for pulse in expected}
     for family in families:
-        if family in ("rect", "none"):
-            pulse = Pulse(family)  # type: ignore[arg-type]
-            found.append((pulse, behind(response, pulse)[0]))
+        if family in ("rect", "none", "rc"):
+            pulse = known.get(family, Pulse(family, 0.5 if family == "rc" else None))  # type: ignore[arg-type]
+            found.append((pulse, opening_behind(response, pulse, scheme)))
             continue
-        low, high = (0.05, 1.0) if family in ("rrc", "rc") else (0.2, 1.5)
+        low, high = (0.05, 1.0) if family == "rrc" else (0.2, 1.5)
 
         def merit(number: float, family: str = family) -> float:
-            return behind(response, Pulse(family, number))[0]  # type: ignore[arg-type]
+            return opening_behind(response, Pulse(family, float(number)), scheme)  # type: ignore[arg-type]
 
         grid = np.linspace(low, high, 11)
-        merits = [merit(float(number)) for number in grid]
+        merits = [merit(number) for number in grid]
         top = int(np.argmax(merits))
         a, b = float(grid[max(top - 1, 0)]), float(grid[min(top + 1, 10)])
-        number = _golden(merit, a, b)
-        found.append((Pulse(family, round(number, 4)), merit(number)))  # type: ignore[arg-type]
+        number = round(float(minimize_scalar(lambda n: -merit(n), bounds=(a, b), method="bounded", options={"xatol": 2e-3}).x), 4)
+        best = Pulse(family, number), merit(number)  # type: ignore[arg-type]
+        if family in known and (kept := merit(known[family].number or 0.0)) > best[1] - _NEARLY:
+            best = known[family], kept
+        found.append(best)
     return sorted(found, key=lambda item: -item[1])
-
-
-def _golden(merit: "object", low: float, high: float, rounds: int = 12) -> float:
-    """Place of the greatest merit between two numbers, by golden section."""
-    share = (math.sqrt(5) - 1) / 2
-    a, b = low, high
-    c, d = b - share * (b - a), a + share * (b - a)
-    at_c, at_d = merit(c), merit(d)  # type: ignore[operator]
-    for _ in range(rounds):
-        if at_c > at_d:
-            b, d, at_d = d, c, at_c
-            c = b - share * (b - a)
-            at_c = merit(c)  # type: ignore[operator]
-        else:
-            a, c, at_c = c, d, at_d
-            d = a + share * (b - a)
-            at_d = merit(d)  # type: ignore[operator]
-    return 0.5 * (a + b)

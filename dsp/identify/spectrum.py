@@ -52,6 +52,23 @@ class Spectrum:
         kernel = np.ones(3) / 3
         return np.asarray(np.convolve(self.density, kernel, mode="same") > times * self.floor)
 
+    def power(self, band: Band) -> float:
+        """What stands above the floor in a band, in the unit of the density."""
+        inside = np.abs(self.frequencies - band.centre) < band.half
+        return float(np.sum(np.maximum(self.density[inside] - self.floor, 0.0)))
+
+    def densest(self, width: float, low: float, high: float) -> float:
+        """Centre of the window of ``width`` cycles a sample between ``low`` and ``high`` that holds the most power."""
+        frequencies = self.frequencies
+        cells = max(round(width * self.size / self.width), 1)
+        inside = (frequencies > low - width) & (frequencies < high + width)
+        # a bare tone or a DC offset does not decide
+        limit = 4 * float(np.median(self.density[inside])) + 2 * float(np.quantile(self.density[inside], 0.75))
+        sums = np.convolve(np.minimum(self.density, limit), np.ones(cells), mode="same")
+        sums[~((frequencies > low) & (frequencies < high))] = 0.0
+        near = np.flatnonzero(sums > 0.999 * sums.max())
+        return float(frequencies[near].mean()) - (0.5 * self.width / self.size if cells % 2 == 0 else 0.0)
+
     def bin_of(self, frequency: float) -> int:
         """The bin at a frequency, unbounded."""
         return round(frequency * self.size) + (0 if self.is_real else self.size // 2)
@@ -64,6 +81,19 @@ class Spectrum:
         return np.asarray(fft.ifft(self._placed(centre, half, length, weight)), dtype=np.complex64) * np.float32(
             length / self.size
         )
+
+    def envelope_spread(self, centre: float, half: float) -> float:
+        """Variance of a band's envelope power over its squared mean, the floor's share taken out; 0 for a constant envelope.
+
+        For a constant envelope in Gaussian noise of share ``v`` of the power the variance is ``1 - (1 - v)**2`` (derived).
+        """
+        length = fft.next_fast_len(max(math.ceil(4.4 * half * self.size), 256))
+        power = np.abs(self.wave(centre, half, length)[length // 16 : -length // 16]).astype(np.float64) ** 2
+        mean = float(np.mean(power))
+        inside = np.abs(self.frequencies - centre) < half
+        share = min(self.floor * float(np.sum(inside)) / max(float(self.density[inside].sum()), 1e-30), 0.95)
+        spread = float(np.var(power)) / max(mean, 1e-30) ** 2
+        return (spread - 1.0 + (1.0 - share) ** 2) / (1.0 - share) ** 2
 
     def real_wave(self, top: float, length: int, weight: Cells | None = None) -> NDArray[np.float32]:
         """Real samples below ``top`` cycles a sample as a real wave of ``length`` samples over the same time."""
@@ -107,17 +137,21 @@ def spectrum_of(samples: Samples) -> Spectrum | None:
     some = samples[:size]
     is_real = not np.iscomplexobj(some)
     transform = fft.rfft(some) if is_real else fft.fftshift(fft.fft(some))
+    transform[0 if is_real else size // 2] = 0.0  # a DC offset is no part of any link
     power = transform.real.astype(np.float32) ** 2 + transform.imag.astype(np.float32) ** 2
     if not float(power.max()) > 0:
         return None
-    cells = _CELLS // 2 if is_real else _CELLS
+    cells = min(_CELLS // 2 if is_real else _CELLS, max(transform.size // 64, 64))
     while True:
-        width = max(transform.size // cells, 4)
+        width = max(transform.size // cells, 16)
         count = transform.size // width
         density = power[: count * width].reshape(count, width).mean(axis=1, dtype=np.float64)
-        floor = max(float(np.quantile(density, 0.1)), 1e-12 * float(density.max()))
+        # smoothed, so that the least of many cells is not taken for the mean of all
+        steady = max(count // 64, 1)
+        smooth = density[: count // steady * steady].reshape(-1, steady).mean(axis=1)
+        floor = max(float(np.quantile(smooth, 0.1)), 1e-12 * float(density.max()))
         filled = int(np.sum(density > max(4 * floor, 0.05 * float(np.quantile(density, 1 - 8 / density.size)))))
-        if filled >= _LEAST_CELLS or width <= 16:
+        if filled >= _LEAST_CELLS or width <= 32:
             break
         cells *= 4
     return Spectrum(np.asarray(transform, dtype=np.complex64), density, width, size, is_real, floor)
