@@ -138,7 +138,9 @@ def draw_link(number: int, *, below: bool = False) -> Any:
     width = (1 + rolloff) / 2 if family in ("rrc", "rc") else 1.0 if scheme.kind != "frequency" else least / 2.6
     if passband:
         low, high = 1.15 * width * baud, RATE_HZ / 2 - 1.15 * width * baud
-        more["carrier_hz"] = float(rng.uniform(low, min(high, max(6 * low, 1.5 * low))) if high > low else 0.25 * RATE_HZ)
+        more["carrier_hz"] = float(
+            rng.uniform(low, min(high, max(6 * low, 1.5 * low))) if high > low else 0.25 * RATE_HZ
+        )
         more["passband"] = True
     elif scheme.kind != "baseband":
         room = max(RATE_HZ / 2 - width * baud, 0.0)
@@ -281,7 +283,9 @@ def _tone_pairs(rng: np.random.Generator, n: int, is_complex: bool) -> NDArray[A
     """Two tones of equal strength near each other."""
     t = np.arange(n)
     centre, apart = rng.uniform(-0.3, 0.3), np.exp(rng.uniform(math.log(1e-3), math.log(0.1)))
-    pair = np.exp(2j * np.pi * (centre + apart / 2) * t) + np.exp(2j * np.pi * ((centre - apart / 2) * t + rng.random()))
+    pair = np.exp(2j * np.pi * (centre + apart / 2) * t) + np.exp(
+        2j * np.pi * ((centre - apart / 2) * t + rng.random())
+    )
     return _noisy(rng, pair, is_complex)
 
 
@@ -319,7 +323,9 @@ def _speech(rng: np.random.Generator, n: int, is_complex: bool) -> NDArray[Any]:
         radius = math.exp(-math.pi * width / rate)
         wave = lfilter([1.0], [1, -2 * radius * math.cos(2 * math.pi * formant / rate), radius**2], wave)
     if is_complex:
-        return _noisy(rng, (wave / np.abs(wave).max()) * np.exp(2j * np.pi * rng.uniform(-0.2, 0.2) * np.arange(n)), True)
+        return _noisy(
+            rng, (wave / np.abs(wave).max()) * np.exp(2j * np.pi * rng.uniform(-0.2, 0.2) * np.arange(n)), True
+        )
     return _noisy(rng, wave, False)
 
 
@@ -331,7 +337,9 @@ def _amplitude_modulated(rng: np.random.Generator, n: int, is_complex: bool) -> 
     else:
         message = _speech(rng, n, False)
         message /= np.abs(message).max()
-    return _noisy(rng, (1 + rng.uniform(0.3, 1.0) * message) * np.exp(2j * np.pi * rng.uniform(0.02, 0.4) * t), is_complex)
+    return _noisy(
+        rng, (1 + rng.uniform(0.3, 1.0) * message) * np.exp(2j * np.pi * rng.uniform(0.02, 0.4) * t), is_complex
+    )
 
 
 def _frequency_modulated(rng: np.random.Generator, n: int, is_complex: bool) -> NDArray[Any]:
@@ -340,7 +348,9 @@ def _frequency_modulated(rng: np.random.Generator, n: int, is_complex: bool) -> 
     if rng.random() < 0.5:
         message = _speech(rng, n, False)
         message /= np.abs(message).max()
-    return _noisy(rng, np.exp(2j * np.pi * np.cumsum(rng.uniform(0.1, 0.3) + rng.uniform(0.005, 0.08) * message)), is_complex)
+    return _noisy(
+        rng, np.exp(2j * np.pi * np.cumsum(rng.uniform(0.1, 0.3) + rng.uniform(0.005, 0.08) * message)), is_complex
+    )
 
 
 def _silence(rng: np.random.Generator, n: int, is_complex: bool) -> NDArray[Any]:
@@ -422,14 +432,18 @@ def judge_non_link(number: int) -> Claim:
     kind, samples = draw_non_link(number)
     begun = time.perf_counter()
     links = survey_links(samples, RATE_HZ).links
-    found = f"{links[0].link.scheme.name} at {links[0].link.symbol_rate_hz:.6g} Bd, {links[0].link.pulse}" if links else ""
+    found = (
+        f"{links[0].link.scheme.name} at {links[0].link.symbol_rate_hz:.6g} Bd, {links[0].link.pulse}" if links else ""
+    )
     return Claim(number, kind, bool(np.iscomplexobj(samples)), found, time.perf_counter() - begun)
 
 
 # -- the whole grid ----------------------------------------------------------------------------------------------------------
 
 
-def run(links: Iterable[int], non_links: Iterable[int], below: Iterable[int], each: Callable[[Any], None]) -> dict[str, Any]:
+def run(
+    links: Iterable[int], non_links: Iterable[int], below: Iterable[int], each: Callable[[Any], None]
+) -> dict[str, Any]:
     """Judge the cases of those numbers; ``each`` is told every verdict. Returns shares in per cent and counts."""
     verdicts, claims, faint = [], [], []
     for number in links:
@@ -464,7 +478,9 @@ def summary(verdicts: list[Verdict], claims: list[Claim], faint: list[Verdict]) 
         "claimed_kinds": dict(Counter(claim.kind for claim in claims if claim.found)),
         "below_threshold": len(faint),
         "below_threshold_null": sum(v.found_scheme is None for v in faint),
-        "below_threshold_wrong": sum(v.found_scheme is not None and not (v.right_scheme and v.right_rate) for v in faint),
+        "below_threshold_wrong": sum(
+            v.found_scheme is not None and not (v.right_scheme and v.right_rate) for v in faint
+        ),
         "seconds_each": float(np.mean([v.seconds for v in verdicts])) if verdicts else None,
     }
 
@@ -472,14 +488,21 @@ def summary(verdicts: list[Verdict], claims: list[Claim], faint: list[Verdict]) 
 def _show(item: Verdict | Claim, *, all_of_them: bool) -> None:
     if isinstance(item, Claim):
         if item.found or all_of_them:
-            print(f"non-link {item.number:4d} {item.kind:20s} {'I/Q ' if item.is_complex else 'real'} {item.seconds:5.2f} s: {item.found}")
+            print(
+                f"non-link {item.number:4d} {item.kind:20s} {'I/Q ' if item.is_complex else 'real'} {item.seconds:5.2f} s: {item.found}"
+            )
         return
     good = item.right_scheme and item.right_rate and item.locked and item.right_pulse
     if good and not all_of_them:
         return
     marks = "".join(
         letter if ok else letter.upper()
-        for letter, ok in (("r", item.right_rate), ("s", item.right_scheme), ("p", item.right_pulse), ("l", item.locked))
+        for letter, ok in (
+            ("r", item.right_rate),
+            ("s", item.right_scheme),
+            ("p", item.right_pulse),
+            ("l", item.locked),
+        )
     )
     ppm = "-" if item.rate_ppm is None else f"{item.rate_ppm:.1f} ppm"
     confidence = "" if item.confidence is None else f" ({item.confidence:.2f})"
@@ -505,7 +528,10 @@ def main(arguments: list[str] | None = None) -> int:
     options = parser.parse_args(arguments)
     numbers = [options.case or [], [], []]
     if not options.case:
-        numbers = [range(options.first, options.first + n * options.step, options.step) for n in (options.links, options.non_links, options.below)]
+        numbers = [
+            range(options.first, options.first + n * options.step, options.step)
+            for n in (options.links, options.non_links, options.below)
+        ]
     kept: list[dict[str, Any]] = []
 
     def each(item: Verdict | Claim) -> None:

@@ -9,7 +9,7 @@ from scipy import fft, signal
 
 from dsp.acquisition import interpolate, power_line
 from dsp.identify.likelihood import Agreement, agreement, decide, no_structure, repetition, surprise
-from dsp.identify.lines import Line, Products
+from dsp.identify.lines import Line
 from dsp.identify.shape import PHASES, Response, Shape, best_pulse, response_of, spectrum_shapes
 from dsp.identify.spectrum import Spectrum, spectrum_of
 from dsp.interpolation import BEFORE, TAPS
@@ -37,7 +37,8 @@ class Candidate:
 
     ``rate`` in symbols a sample, ``centre`` in cycles a sample; ``line`` is the clock's; ``excess`` the log-likelihood of a symbol over
     that of no structure, ``margin`` over that of the ``rival`` scheme (nats); ``index`` the modulation index; ``noise_db`` the ratio of
-    symbol energy to noise at the decisions. ``doubt`` says why this may be none; empty if nothing speaks against it.
+    symbol energy to noise at the decisions. ``off_centre`` the carrier's distance from the spectrum's middle as a share of that at which a neighbouring
+    answer would serve as well; ``half_bits`` whether symbols come in pairs of opposite sign. ``doubt`` says why this may be none; empty if nothing speaks against it.
     """
 
     scheme: Scheme
@@ -55,6 +56,8 @@ class Candidate:
     other_pulse: Pulse | None = None
     pulse_margin: float = 0.0
     response: Response | None = None
+    off_centre: float = 0.0
+    half_bits: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,12 +77,14 @@ def _filtered(wave: _Wave, pulse: Pulse) -> NDArray[np.complex128]:
     return np.asarray(signal.oaconvolve(wave.samples, taps, mode="same"))
 
 
-def _at(samples: NDArray[np.complex128], instants: Values, sps: float) -> NDArray[np.complex128]:
+def _at(samples: NDArray[np.complex128], instants: NDArray[np.float64], sps: float) -> NDArray[np.complex128]:
     table = tables_for(sps, min(1.1, 0.4 * sps)).value
     real = interpolate(np.ascontiguousarray(samples.real, np.float32), instants, table).astype(np.float64)
-    if not np.iscomplexobj(samples) or not np.any(samples.imag):
-        return real + 0j
-    return real + 1j * interpolate(np.ascontiguousarray(samples.imag, np.float32), instants, table)
+    if not np.any(samples.imag):
+        return np.asarray(real, dtype=np.complex128)
+    return np.asarray(
+        real + 1j * interpolate(np.ascontiguousarray(samples.imag, np.float32), instants, table), dtype=np.complex128
+    )
 
 
 def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
@@ -99,7 +104,7 @@ def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
 def _timed(samples: NDArray[np.complex128], wave: _Wave, stagger: bool = False) -> Values:
     """Instants of the symbols: where the values' spread of power is least, as it is for every constellation but not between."""
     start, count = _busiest(samples, wave.sps)
-    some = start + wave.sps * np.arange(min(count, 1024))
+    some = start + wave.sps * np.arange(min(count, 1024), dtype=np.float64)
     table = []
     for k in range(_SCAN):
         power = np.abs(_at(samples, some + k / _SCAN * wave.sps, wave.sps)) ** 2
@@ -144,7 +149,7 @@ def _real_wave(spectrum: Spectrum, rate: float, pulse: Pulse) -> _Wave:
     per_symbol = 12.0 if pulse.family in ("rect", "none") else 4.6
     length = fft.next_fast_len(max(math.ceil(per_symbol * rate * spectrum.size), 64))
     length += length % 2
-    top = min(top, 0.5 if spectrum.is_real else 0.5)
+    top = min(top, 0.5)
     samples = spectrum.real_wave(top, length)
     return _Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, top / rate)
 
@@ -153,11 +158,18 @@ _WEIGHTS = {"pam3": (None, np.array([0.25, 0.5, 0.25]))}
 
 
 def _pam_agreement(values: Values, scheme: Scheme) -> Agreement:
-    return max((agreement(values, scheme, weights) for weights in _WEIGHTS.get(scheme.name, (None,))), key=lambda a: a.log_likelihood)
+    return max(
+        (agreement(values, scheme, weights) for weights in _WEIGHTS.get(scheme.name, (None,))),
+        key=lambda a: a.log_likelihood,
+    )
 
 
 def pam_candidate(
-    spectrum: Spectrum, line: Line, schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None, families: tuple[str, ...]
+    spectrum: Spectrum,
+    line: Line,
+    schemes: tuple[Scheme, ...],
+    pulses: tuple[Pulse, ...] | None,
+    families: tuple[str, ...],
 ) -> Candidate | None:
     """The scheme of a real wave at a symbol rate, of those given; ``pulses`` None: sought."""
     rate = line.frequency
@@ -198,7 +210,11 @@ def pam_candidate(
                 [_at(raw.samples, (instants + (p / PHASES - 0.5) * wave.sps) * scale, raw.sps) for p in range(PHASES)]
             )
             response = response_of(sampled, decided[0] + 0j, min(raw.half, 0.5 * PHASES))
-            ranking = best_pulse(response, scheme, families, tuple(shape.pulse for shape in shapes)) if pulses is None else [(pulse, 0.0)]
+            ranking = (
+                best_pulse(response, scheme, families, tuple(shape.pulse for shape in shapes))
+                if pulses is None
+                else [(pulse, 0.0)]
+            )
         rival = ranked[1] if len(ranked) > 1 else None
         result = Candidate(
             scheme, rate, pulse, 0.0, line, n, excess, excess - rival[3] if rival else excess, rival[0] if rival else None,
@@ -305,7 +321,11 @@ def _followed(z: NDArray[np.complex128], decided: NDArray[np.complex128]) -> NDA
 
 
 def carrier_candidates(
-    spectrum: Spectrum, line: Line, within: tuple[float, float], schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None
+    spectrum: Spectrum,
+    line: Line,
+    within: tuple[float, float],
+    schemes: tuple[Scheme, ...],
+    pulses: tuple[Pulse, ...] | None,
 ) -> Candidate | None:
     """The scheme of a carrier ``within`` two frequencies at a symbol rate."""
     rate = line.frequency
@@ -343,7 +363,9 @@ def carrier_candidates(
                     item = _ranked(upright_now, (item[0],))[0]
                 else:
                     upright_now = upright
-                true_turn = turn - math.copysign(0.125, turn) if item[0].name == "pi4dqpsk" and abs(turn) > 1 / 16 else turn
+                true_turn = (
+                    turn - math.copysign(0.125, turn) if item[0].name == "pi4dqpsk" and abs(turn) > 1 / 16 else turn
+                )
                 found.append((item, upright_now, turn, true_turn))
         if not found:
             return None
@@ -362,7 +384,9 @@ def carrier_candidates(
             sampled = []
             for p in range(PHASES):
                 lead = p / PHASES - 0.5
-                sampled.append(_at(wave.samples, instants + lead * wave.sps, wave.sps) * rotation * np.exp(1j * slope * lead))
+                sampled.append(
+                    _at(wave.samples, instants + lead * wave.sps, wave.sps) * rotation * np.exp(1j * slope * lead)
+                )
             response = response_of(np.stack(sampled), decided, wave.half)
             if pulses is None:
                 ranking = best_pulse(response, scheme, _CARRIER_FAMILIES, tuple(shape.pulse for shape in shapes))
@@ -371,7 +395,7 @@ def carrier_candidates(
             scheme, rate, pulse, centre + turn * rate, line, n, excess,
             agreed.log_likelihood - rival[1].log_likelihood if rival else excess, rival[0] if rival else None,
             _snr_db(agreed, scheme), _doubts(decided_rails, scheme, agreed, excess, n, line), None,
-            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
+            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response, min(abs(turn) * 2 * scheme.symmetry, 1.0),
         )  # fmt: skip
         if last or response is None or pulses is not None:
             break
@@ -416,7 +440,8 @@ def staggered_candidate(
         response = None
         if agreed.error_rate < 0.1:
             sampled = [
-                (_at(wave.samples, instants + (p / PHASES - 0.5) * wave.sps, wave.sps) * np.exp(-1j * theta)).real for p in range(PHASES)
+                (_at(wave.samples, instants + (p / PHASES - 0.5) * wave.sps, wave.sps) * np.exp(-1j * theta)).real
+                for p in range(PHASES)
             ]
             response = response_of(np.stack(sampled) + 0j, decided_rails[0] + 0j, wave.half)
             if pulses is None:
@@ -458,7 +483,9 @@ def frequency_rail(spectrum: Spectrum, centre: float, half: float) -> FrequencyR
     return None if found is None else FrequencyRail(found, step, centre, centre + middle, half)
 
 
-def frequency_candidate(rail: FrequencyRail, line: Line, schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None) -> Candidate | None:
+def frequency_candidate(
+    rail: FrequencyRail, line: Line, schemes: tuple[Scheme, ...], pulses: tuple[Pulse, ...] | None
+) -> Candidate | None:
     """Two or four frequencies at a symbol rate (``line``, cycles a sample of the rail)."""
     levels = {s.levels for s in schemes}
     tries = tuple(s for s in (find_scheme("pam2"), find_scheme("pam4")) if s.levels in levels)
@@ -473,8 +500,10 @@ def frequency_candidate(rail: FrequencyRail, line: Line, schemes: tuple[Scheme, 
     total = np.sum(found.response.wave.reshape(-1, PHASES), axis=0).real
     index = abs(2 * float(np.mean(total)) / rate)
     pulse, other = found.pulse, found.other_pulse
-    if pulses is None:
-        pulse, other = _frequency_pulse(found.response, found.scheme, index, rail.half / rate, (rail.middle - rail.centre) / rate)
+    if pulses is None and not found.doubt:
+        pulse, other = _frequency_pulse(
+            found.response, found.scheme, index, rail.half / rate, (rail.middle - rail.centre) / rate
+        )
     half_index = abs(index - 0.5) < 0.04
     if found.scheme.levels == 4:
         name = "fsk4"
@@ -493,14 +522,16 @@ _AS_GOOD_AS_SQUARE = 1.1  # a Gaussian filter this wide leaves no trace behind t
 _FREQUENCY_ROLLOFFS = (0.2, 0.35, 0.5, 0.75, 1.0)
 
 
-def _frequency_pulse(response: Response, scheme: Scheme, index: float, half: float, offset: float) -> tuple[Pulse, Pulse]:
+def _frequency_pulse(
+    response: Response, scheme: Scheme, index: float, half: float, offset: float
+) -> tuple[Pulse, Pulse]:
     """The pulse whose wave, behind the same band and discriminator, answers as the one received, and the next best.
 
     ``half`` and ``offset`` in symbol rates: of the band, and of its centre from the mean frequency.
     """
     rng = np.random.default_rng(1)  # symbols to try with: any will do, the same serve every time
-    sps = 2 ** math.ceil(math.log2(max(16.0, 6.0 * half)))
-    symbols = np.asarray(scheme.rail_levels)[rng.integers(0, scheme.levels, 640)]
+    sps = 2 ** math.ceil(math.log2(min(max(PHASES, 6.0 * half), 128.0)))
+    symbols = np.asarray(scheme.rail_levels)[rng.integers(0, scheme.levels, 512)]
     scored: list[tuple[float, Pulse]] = []
     for pulse in (
         Pulse("rect"), *(Pulse("gauss", bt) for bt in _TIME_BANDWIDTHS), *(Pulse("rrc", a) for a in _FREQUENCY_ROLLOFFS),
@@ -528,16 +559,18 @@ def _modelled(pulse: Pulse, symbols: Values, index: float, half: float, offset: 
     reach = 8
     t = np.arange(-reach * sps, reach * sps + 1) / sps
     number = pulse.number or 0.0
-    shape = {"rect": lambda: rectangle(t), "gauss": lambda: gaussian_rectangle(t, number), "rrc": lambda: root_raised_cosine(t, number)}[
-        pulse.family
-    ]()
+    shape = {
+        "rect": lambda: rectangle(t),
+        "gauss": lambda: gaussian_rectangle(t, number),
+        "rrc": lambda: root_raised_cosine(t, number),
+    }[pulse.family]()
     impulses = np.zeros(symbols.size * sps)
     impulses[::sps] = symbols
     frequency = signal.oaconvolve(impulses, shape / shape.sum(), mode="same") * sps * index / 2
     z = np.exp(2j * np.pi * np.cumsum(frequency) / sps)
     f = np.fft.fftfreq(z.size, 1 / sps)
     z = np.fft.ifft(np.fft.fft(z) * (np.abs(f + offset) < half))
-    found = np.angle(z[1:] * np.conj(z[:-1])) * sps / (2 * np.pi)
+    found = np.angle(np.roll(z, -1) * np.conj(z)) * sps / (2 * np.pi)
     f = np.fft.rfftfreq(found.size, 1 / sps)
     found = np.fft.irfft(np.fft.rfft(found) * (f < band), found.size)
     step = sps // PHASES
@@ -545,7 +578,7 @@ def _modelled(pulse: Pulse, symbols: Values, index: float, half: float, offset: 
     place = np.arange(symbols.size - 1)[None, :] * sps + (np.arange(PHASES) * step - sps // 2)[:, None]
     inside = slice(_EDGE, symbols.size - _EDGE)
     sampled = found[np.clip(place[:, inside], 0, found.size - 1)]
-    return np.asarray(response_of(sampled + 0j, symbols[inside] + 0j, band).wave.real)
+    return np.asarray(response_of(sampled.astype(np.complex128), symbols[inside].astype(np.complex128), band).wave.real)
 
 
 _EDGE = 16

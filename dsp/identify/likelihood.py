@@ -62,7 +62,10 @@ def agreement(values: Values, scheme: Scheme, weights: Values | None = None) -> 
                 prior = np.full(points.size, 1.0 / points.size) if weights is None or points.size == 1 else weights
                 part, responsibility = _expect(rail[:, None], gain * points, sigma, prior)
                 total_now += part
-                moments += (float(np.sum(responsibility * rail[:, None] * points)), float(np.sum(responsibility * points**2)))
+                moments += (
+                    float(np.sum(responsibility * rail[:, None] * points)),
+                    float(np.sum(responsibility * points**2)),
+                )
             gain = max(moments[0] / max(moments[1], 1e-30), 1e-15)
             residual = power * values.shape[1] - 2 * gain * moments[0] + gain**2 * moments[1]
             sigma = math.sqrt(max(residual / (values.shape[1] * len(rails)), 1e-12 * power))
@@ -118,7 +121,7 @@ def no_structure(values: Values) -> float:
     rails, _ = values.shape
     variances = np.maximum(np.mean(values**2, axis=1), 1e-30)
     pooled = float(np.mean(variances))
-    gaussian = -0.5 * rails * (math.log(2 * math.pi * pooled) + 1.0)
+    gaussian = float(-0.5 * rails * (math.log(2 * math.pi * pooled) + 1.0))
     if rails == 1:
         return gaussian
     separate = -0.5 * float(np.sum(np.log(2 * math.pi * variances) + 1.0))

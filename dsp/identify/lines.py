@@ -26,8 +26,10 @@ class Line:
 
 
 def whitening(spectrum: Spectrum, low: float, high: float, depth: float) -> Cells:
-    """Weight of each cell that makes the spectrum flat from ``low`` to ``high`` cycles a sample and 0 elsewhere,
-    near the floor, and where less than ``depth`` of the greater part is left."""
+    """Weight of each cell that makes the spectrum flat from ``low`` to ``high`` cycles a sample.
+
+    0 elsewhere, near the floor, and where less than ``depth`` of the greater part is left.
+    """
     frequencies = spectrum.frequencies
     inside = (frequencies > low) & (frequencies < high) & spectrum.full()
     if inside.any():
@@ -84,7 +86,9 @@ class Products:
             two_sided = np.concatenate((cells[: math.ceil(top / cell)][::-1], cells[: math.ceil(top / cell)]))
             self._cells = two_sided.astype(np.float64)
         else:
-            self._wave = np.asarray(fft.ifft(_limited(spectrum._placed(self.centre, half, self.length, weight))), np.complex64)
+            self._wave = np.asarray(
+                fft.ifft(_limited(spectrum._placed(self.centre, half, self.length, weight))), np.complex64
+            )
             first = int(np.searchsorted(frequencies, self.centre - half))
             stop = int(np.searchsorted(frequencies, self.centre + half))
             self._cells = cells[first:stop].astype(np.float64)
@@ -98,7 +102,9 @@ class Products:
         z = self._wave
         power = (z.real**2 + z.imag**2) if np.iscomplexobj(z) else z * z
         level = np.abs(fft.rfft(np.asarray(power, np.float32))) ** 2
-        return self._peaks(level, self._expected(level.size, mirrored=False, two_sided=False), lowest, highest, most, 0.0)
+        return self._peaks(
+            level, self._expected(level.size, mirrored=False, two_sided=False), lowest, highest, most, 0.0
+        )
 
     def square_lines(self, most: int = 6) -> list[Line]:
         """Lines of the square, strongest first; frequencies are those of the square in the input, so that a carrier's is twice its own."""
@@ -118,9 +124,13 @@ class Products:
             shift = np.arange(size)
             signed = np.where(shift < size / 2, shift, shift - size)
             place = signed / width + (self._cells.size - 1)
-            bins = np.interp(place, np.arange(2 * self._cells.size), overlap[: 2 * self._cells.size], left=0.0, right=0.0)
+            bins = np.interp(
+                place, np.arange(2 * self._cells.size), overlap[: 2 * self._cells.size], left=0.0, right=0.0
+            )
         else:
-            bins = np.interp(np.arange(size) / width, np.arange(self._cells.size + 1), overlap[: self._cells.size + 1], right=0.0)
+            bins = np.interp(
+                np.arange(size) / width, np.arange(self._cells.size + 1), overlap[: self._cells.size + 1], right=0.0
+            )
         pairs = bins * width * (2.0 if mirrored or self._real else 1.0)
         return np.maximum(pairs, 0.02 * float(pairs.max())) * 1.0
 
@@ -146,6 +156,9 @@ class Products:
             peak = int(np.argmax(ratio))
             if ratio[peak] < math.log(n) + 9.0:
                 break
+            # the local floor moves in steps: the bin that is highest in itself
+            near = np.arange(peak - 2, peak + 3) % n
+            peak = int(near[np.argmax(level[near])])
             left, middle, right = (math.sqrt(float(level[(peak + d) % n])) for d in (-1, 0, 1))
             # between two bins of a line without a window the ratio of magnitudes tells the place
             shift = right / (middle + right) if right > left else -left / (middle + left)

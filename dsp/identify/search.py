@@ -29,6 +29,9 @@ _STRETCH = 2e5  # independent samples of a band that are searched for lines
 _TRIAL_SYMBOLS = 3000
 # spread of the envelope (`Spectrum.envelope_spread`): up to 0.05 for frequency schemes at 14 dB and more, from 0.09 for band-limited carriers
 _CONSTANT, _NOT_CONSTANT = 0.07, 0.2
+_RATES_AGREE = (
+    1e-5  # of line and loops; beyond it the line is another's, or the clock wanders, and the loops are nearer
+)
 _NO_LINE = "no line in the spectrum that a symbol clock would have"
 _RAIL_DEPTHS = (0.03, 0.15)  # a discriminator's noise rises outwards: what is faint there is noise
 _FAMILIES = ("rrc", "rc", "rect", "none")
@@ -53,7 +56,9 @@ def identify(samples: Samples, sample_rate_hz: float, wanted: Wanted) -> Identif
     return found if isinstance(found, NotFound) else found.identified
 
 
-def find_link(samples: Samples, sample_rate_hz: float, wanted: Wanted, bands: list[Band] | None = None) -> Found | NotFound:
+def find_link(
+    samples: Samples, sample_rate_hz: float, wanted: Wanted, bands: list[Band] | None = None
+) -> Found | NotFound:
     """The strongest link in ``samples``, with its evidence; ``bands``: look only there."""
     if not np.any(samples):
         return NotFound("the samples are all zero")
@@ -174,7 +179,9 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
         if kind == "baseband":
             lines = clock_lines(spectrum, 0.0, high, 1 / 2100, 0.5)
             found = [
-                c for line in clocks(lines) if (c := pam_candidate(spectrum, line, schemes(kind), pulses, _FAMILIES)) is not None
+                c
+                for line in clocks(lines)
+                if (c := pam_candidate(spectrum, line, schemes(kind), pulses, _FAMILIES)) is not None
             ]
             yield from _by_belief(found)
         elif kind == "frequency":
@@ -184,7 +191,9 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
             top = min(2.4 * band.half / rail.step, 0.5)
             lines = clock_lines(rail.spectrum, 0.0, top, 1 / 2100 / rail.step, top, _RAIL_DEPTHS)
             found = [
-                c for line in clocks(lines, rail.step) if (c := frequency_candidate(rail, line, schemes(kind), pulses)) is not None
+                c
+                for line in clocks(lines, rail.step)
+                if (c := frequency_candidate(rail, line, schemes(kind), pulses)) is not None
             ]
             yield from _by_belief(found)
         else:
@@ -197,7 +206,9 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
             if plain:
                 lines = clock_lines(spectrum, edge, high, 1 / 2100, 2.1 * band.half)
                 found = [
-                    c for line in clocks(lines) if (c := carrier_candidates(spectrum, line, within, plain, pulses)) is not None
+                    c
+                    for line in clocks(lines)
+                    if (c := carrier_candidates(spectrum, line, within, plain, pulses)) is not None
                 ]
             staggered = next((s for s in schemes(kind) if s.stagger), None)
             if staggered is not None and not any(not c.doubt for c in found):
@@ -240,6 +251,10 @@ def _held(samples: Samples, candidate: Candidate, band: Band, rate: float, wante
         )
         if value is None and not (key == "carrier_hz" and scheme.kind == "baseband")
     )
+    if wanted.symbol_rate_hz is None:
+        looped = symbol_rate * front.sps / outcome.start.sps
+        if abs(looped / symbol_rate - 1.0) > _RATES_AGREE:
+            link = replace(link, symbol_rate_hz=looped)
     identified = Identified(link, centre * rate, None if half is None else half * rate, found)
     return Found(identified, candidate, outcome, band)
 
@@ -250,7 +265,9 @@ def place_of(candidate: Candidate, link: Link, band: Band) -> tuple[float, float
         return 0.0, None
     carrier = candidate.centre if link.carrier_hz is None else link.carrier_hz / link.sample_rate_hz
     if link.scheme.kind == "frequency":
-        return (band.centre if link.carrier_hz is None else carrier), min(band.half * 1.1 + 0.2 / link.samples_per_symbol, 0.45)
+        return (band.centre if link.carrier_hz is None else carrier), min(
+            band.half * 1.1 + 0.2 / link.samples_per_symbol, 0.45
+        )
     return carrier, None
 
 
@@ -265,3 +282,13 @@ def placement(link: Link, band: Band, *, is_complex: bool) -> tuple[float, float
     if is_complex:
         return carrier or 0.0, None
     return band.centre if carrier is None else carrier, None
+
+
+def band_of(found: Found) -> Band:
+    """Where a found link's own power lies."""
+    link, candidate = found.identified.link, found.candidate
+    if link.scheme.kind == "frequency":
+        return found.band
+    width = (1 + (link.pulse.number or 1.0)) / 2 if link.pulse.family in ("rrc", "rc") else 1.0
+    half = width / link.samples_per_symbol
+    return Band(0.5 * half, 0.5 * half) if link.scheme.kind == "baseband" else Band(candidate.centre, half)

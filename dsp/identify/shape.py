@@ -65,17 +65,22 @@ def spectrum_shapes(spectrum: Spectrum, rate: float, centre: float | None, reach
             for number in numbers:
                 for offset in offsets:
                     u = (f - about - offset) / rate
-                    model = np.sinc(u) ** 2 if number is None else _cosine_band(u, number) ** (1 if family == "rrc" else 2)
+                    model = (
+                        np.sinc(u) ** 2 if number is None else _cosine_band(u, number) ** (1 if family == "rrc" else 2)
+                    )
                     misfit = _misfit(model, density, weight)
                     if best is None or misfit < best.misfit:
-                        best = Shape(Pulse(family, None if number is None else float(number)), about + float(offset), misfit)
+                        best = Shape(
+                            Pulse(family, None if number is None else float(number)), about + float(offset), misfit
+                        )
             assert best is not None
             # once more, finely
             if best.pulse.number is not None:
                 numbers = list(np.clip(best.pulse.number + np.linspace(-0.04, 0.04, 5), 0.05, 1.0))
             if centre is not None:
                 offsets = (best.centre - about) + np.linspace(-0.015, 0.015, 5) * rate
-        found.append(best)
+        if best is not None:
+            found.append(best)
     return sorted(found, key=lambda shape: shape.misfit)
 
 
@@ -86,7 +91,9 @@ def _misfit(model: Floats, density: Floats, weight: Floats) -> float:
     target = weight * density
     at, bt = float(a @ target), float(b @ target)
     determinant = aa * bb - ab * ab
-    gain, floor = ((bb * at - ab * bt) / determinant, (aa * bt - ab * at) / determinant) if determinant > 0 else (0.0, 0.0)
+    gain, floor = (
+        ((bb * at - ab * bt) / determinant, (aa * bt - ab * at) / determinant) if determinant > 0 else (0.0, 0.0)
+    )
     if floor < 0 or determinant <= 0:
         gain, floor = at / max(aa, 1e-30), 0.0
     residual = target - gain * a - floor * b
@@ -116,7 +123,7 @@ def response_of(sampled: NDArray[np.complex128], decided: NDArray[np.complex128]
     solution = np.linalg.solve(normal, design.conj().T @ target)  # lag, phase
     noise = float(np.mean(np.abs(target - design @ solution) ** 2)) * n / max(n - lags.size, 1)
     # a lag's values run from half a symbol before its instant to half a symbol behind: in order of time
-    return Response(solution[:-1].ravel(), noise, band)
+    return Response(np.asarray(solution[:-1].ravel(), dtype=np.complex128), noise, band)
 
 
 def behind(response: Response, pulse: Pulse, energy: float) -> tuple[float, int, NDArray[np.complex128]]:
@@ -169,7 +176,9 @@ def opening_behind(response: Response, pulse: Pulse, scheme: Scheme) -> float:
     return 1.0 - high / distance
 
 
-def best_pulse(response: Response, scheme: Scheme, families: tuple[str, ...], expected: tuple[Pulse, ...]) -> list[tuple[Pulse, float]]:
+def best_pulse(
+    response: Response, scheme: Scheme, families: tuple[str, ...], expected: tuple[Pulse, ...]
+) -> list[tuple[Pulse, float]]:
     """Each family's pulse whose receive filter opens the eye most, best first; a roll-off or BT is sought without a grid.
 
     Of a family, the pulse ``expected`` from the spectrum is kept where it does nearly as well.
@@ -178,7 +187,8 @@ def best_pulse(response: Response, scheme: Scheme, families: tuple[str, ...], ex
     known = {pulse.family: pulse for pulse in expected}
     for family in families:
         if family in ("rect", "none", "rc"):
-            pulse = known.get(family, Pulse(family, 0.5 if family == "rc" else None))  # type: ignore[arg-type]
+            plain = Pulse(family, 0.5 if family == "rc" else None)  # type: ignore[arg-type]
+            pulse = known.get(plain.family, plain)
             found.append((pulse, opening_behind(response, pulse, scheme)))
             continue
         low, high = (0.05, 1.0) if family == "rrc" else (0.2, 1.5)
@@ -190,9 +200,12 @@ def best_pulse(response: Response, scheme: Scheme, families: tuple[str, ...], ex
         merits = [merit(number) for number in grid]
         top = int(np.argmax(merits))
         a, b = float(grid[max(top - 1, 0)]), float(grid[min(top + 1, 10)])
-        number = round(float(minimize_scalar(lambda n: -merit(n), bounds=(a, b), method="bounded", options={"xatol": 2e-3}).x), 4)
+        number = round(
+            float(minimize_scalar(lambda n: -merit(n), bounds=(a, b), method="bounded", options={"xatol": 2e-3}).x), 4
+        )
         best = Pulse(family, number), merit(number)  # type: ignore[arg-type]
-        if family in known and (kept := merit(known[family].number or 0.0)) > best[1] - _NEARLY:
-            best = known[family], kept
+        expected_one = known.get(best[0].family)
+        if expected_one is not None and (kept := merit(expected_one.number or 0.0)) > best[1] - _NEARLY:
+            best = expected_one, kept
         found.append(best)
     return sorted(found, key=lambda item: -item[1])

@@ -21,9 +21,9 @@ def fast_length(size: int) -> int:
     """The greatest length up to ``size`` whose transform is quick."""
     step = max(size // 2048, 1)
     for length in range(size, max(size - 64 * step, 0), -step):
-        if fft.next_fast_len(length) == length:
+        if int(fft.next_fast_len(length)) == length:
             return length
-    return 2 ** int(math.log2(max(size, 1)))
+    return int(2 ** math.floor(math.log2(max(size, 1))))
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,6 +56,11 @@ class Spectrum:
         """What stands above the floor in a band, in the unit of the density."""
         inside = np.abs(self.frequencies - band.centre) < band.half
         return float(np.sum(np.maximum(self.density[inside] - self.floor, 0.0)))
+
+    def total(self, band: Band) -> float:
+        """All power in a band: the sum of its bins' squared magnitudes."""
+        inside = np.abs(self.frequencies - band.centre) < band.half
+        return float(np.sum(self.density[inside])) * self.width
 
     def densest(self, width: float, low: float, high: float) -> float:
         """Centre of the window of ``width`` cycles a sample between ``low`` and ``high`` that holds the most power."""
@@ -136,7 +141,7 @@ def spectrum_of(samples: Samples) -> Spectrum | None:
     size = fast_length(samples.size)
     some = samples[:size]
     is_real = not np.iscomplexobj(some)
-    transform = fft.rfft(some) if is_real else fft.fftshift(fft.fft(some))
+    transform = fft.rfft(np.real(some)) if is_real else fft.fftshift(fft.fft(some))
     transform[0 if is_real else size // 2] = 0.0  # a DC offset is no part of any link
     power = transform.real.astype(np.float32) ** 2 + transform.imag.astype(np.float32) ** 2
     if not float(power.max()) > 0:

@@ -5,7 +5,7 @@ import pytest
 
 from dsp.acquisition import NotFound
 from dsp.errors import DspError
-from dsp.identify import Band, Identified, Wanted, identify, occupied_band, placement, rate_lines
+from dsp.identify import Band, Identified, Wanted, identify, occupied_band, placement
 from dsp.link import find_scheme
 from dsp.pulses import Pulse
 from tests.dsp.streams import BAUD, link_of, send
@@ -84,17 +84,6 @@ def test_the_occupied_band_is_where_the_power_is(centre, half):
 def test_silence_has_no_band():
     assert occupied_band(np.zeros(9000, np.float32)) is None
     assert occupied_band(np.zeros(0, np.float32)) is None
-
-
-def test_rate_lines_come_strongest_first_and_noise_has_none():
-    rng = np.random.default_rng(3)
-    n = np.arange(40_000)
-    wave = rng.standard_normal(n.size) + 0.6 * np.cos(2 * np.pi * 0.0811 * n) + 0.3 * np.cos(2 * np.pi * 0.2003 * n)
-    lines = rate_lines(wave)
-    assert [frequency for frequency, _ in lines] == pytest.approx([0.0811, 0.2003], abs=1e-5)
-    assert lines[0][1] > lines[1][1]
-    assert rate_lines(rng.standard_normal(40_000)) == []
-    assert rate_lines(np.zeros(100)) == []
 
 
 def test_placement_follows_the_band_unless_a_carrier_is_given():
