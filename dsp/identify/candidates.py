@@ -514,11 +514,11 @@ def frequency_candidate(
     scheme = find_scheme(name)
     if scheme not in schemes:
         scheme = next(s for s in schemes if s.levels == found.scheme.levels)
-    return replace(found, scheme=scheme, pulse=pulse, other_pulse=other, index=index)
+    return replace(found, scheme=scheme, pulse=pulse, other_pulse=other, index=index, centre=rail.middle + found.response.zero)
 
 
 _TIME_BANDWIDTHS = (0.2, 0.25, 0.3, 0.35, 0.4, 0.45, 0.5, 0.6, 0.7, 0.85, 1.0, 1.2)
-_AS_GOOD_AS_SQUARE = 1.1  # a Gaussian filter this wide leaves no trace behind the channel's own
+_AS_GOOD_AS_SQUARE = 1.02  # a Gaussian filter this wide leaves no trace behind the channel's own
 _FREQUENCY_ROLLOFFS = (0.2, 0.35, 0.5, 0.75, 1.0)
 
 
@@ -540,8 +540,6 @@ def _frequency_pulse(
         scored.append((_distance(response.wave.real, model), pulse))
     scored.sort(key=lambda item: item[0])
     best = scored[0][1]
-    if best.number is not None and best.family == "gauss" and best.number > _AS_GOOD_AS_SQUARE:
-        best = Pulse("rect")
     if best.family == "gauss":
         # between the bandwidths tried: the vertex of a parabola through three distances
         by_number = {pulse.number: distance for distance, pulse in scored if pulse.family == "gauss"}
@@ -551,7 +549,9 @@ def _frequency_pulse(
             bend, slope, _ = np.polyfit([1 / b for b in near], [by_number[b] for b in near], 2)
             if bend > 0:
                 best = Pulse("gauss", round(float(1 / np.clip(-slope / (2 * bend), 1 / near[2], 1 / near[0])), 4))
-    other = next(pulse for _, pulse in scored[1:] if pulse.family != best.family)
+    if best.family == "gauss" and (best.number or 0.0) > _AS_GOOD_AS_SQUARE:
+        best = Pulse("rect")
+    other = next(pulse for _, pulse in scored if pulse.family != best.family)
     return best, other
 
 

@@ -13,6 +13,7 @@ Values = NDArray[np.float64]
 
 _RING_POINTS = 48
 _ROUNDS = 20
+_STRAY = 0.02  # share of symbols that may be anything: gaps, the first of a burst
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,19 +57,19 @@ def agreement(values: Values, scheme: Scheme, weights: Values | None = None) -> 
         gain, sigma = math.sqrt(power * share / energy), math.sqrt(power * (1 - share) / len(rails))
         total = -math.inf
         for _ in range(_ROUNDS):
-            moments = np.zeros(2)
-            residual = total_now = 0.0
+            cross = own = square = count = total_now = 0.0
             for rail, points in zip(values, rails, strict=True):
                 prior = np.full(points.size, 1.0 / points.size) if weights is None or points.size == 1 else weights
-                part, responsibility = _expect(rail[:, None], gain * points, sigma, prior)
+                part, responsibility = _expect(rail[:, None], gain * points, sigma, prior, math.sqrt(power / len(rails)))
                 total_now += part
-                moments += (
-                    float(np.sum(responsibility * rail[:, None] * points)),
-                    float(np.sum(responsibility * points**2)),
-                )
-            gain = max(moments[0] / max(moments[1], 1e-30), 1e-15)
-            residual = power * values.shape[1] - 2 * gain * moments[0] + gain**2 * moments[1]
-            sigma = math.sqrt(max(residual / (values.shape[1] * len(rails)), 1e-12 * power))
+                cross += float(np.sum(responsibility * rail[:, None] * points))
+                own += float(np.sum(responsibility * points**2))
+                taken = responsibility.sum(axis=1)
+                square += float(taken @ rail**2)
+                count += float(taken.sum())
+            gain = max(cross / max(own, 1e-30), 1e-15)
+            residual = square - 2 * gain * cross + gain**2 * own
+            sigma = math.sqrt(max(residual / max(count, 1.0), 1e-12 * power))
             if abs(total_now - total) < 1e-4 * values.shape[1]:
                 total = total_now
                 break
@@ -80,13 +81,17 @@ def agreement(values: Values, scheme: Scheme, weights: Values | None = None) -> 
     return Agreement(total / values.shape[1], gain, sigma, _bit_errors(scheme, gain / sigma))
 
 
-def _expect(values: Values, points: Values, sigma: float, prior: Values) -> tuple[float, Values]:
+def _expect(values: Values, points: Values, sigma: float, prior: Values, spread: float) -> tuple[float, Values]:
+    """Log-likelihood of all values, and each point's share in each; a few values may be of no point, spread as the whole is."""
     exponent = -0.5 * ((values - points) / sigma) ** 2 + np.log(np.maximum(prior, 1e-12))
     top = exponent.max(axis=1, keepdims=True)
     weight = np.exp(exponent - top)
-    total = weight.sum(axis=1, keepdims=True)
-    log_likelihood = float(np.sum(top + np.log(total))) - values.shape[0] * math.log(sigma * math.sqrt(2 * math.pi))
-    return log_likelihood, weight / total
+    mass = weight.sum(axis=1, keepdims=True)
+    known = (top + np.log(mass))[:, 0] - math.log(sigma) + math.log(1 - _STRAY)
+    stray = -0.5 * (values[:, 0] / spread) ** 2 - math.log(spread) + math.log(_STRAY)
+    both = np.logaddexp(known, stray)
+    share = np.exp(known - both)[:, None] / mass
+    return float(np.sum(both)) - values.shape[0] * 0.5 * math.log(2 * math.pi), weight * share
 
 
 def _ring(values: Values, count: int, scheme: Scheme | None) -> Agreement:
@@ -102,10 +107,14 @@ def _ring(values: Values, count: int, scheme: Scheme | None) -> Agreement:
         top = exponent.max(axis=1, keepdims=True)
         weight = np.exp(exponent - top)
         mass = weight.sum(axis=1, keepdims=True)
-        now = float(np.sum(top + np.log(mass / count))) - z.size * math.log(2 * math.pi * sigma**2)
-        weight /= mass
-        radius = max(float(np.sum(weight * (z[:, None] * np.conj(points)).real)) / z.size, 1e-15)
-        residual = float(np.sum(weight * np.abs(z[:, None] - radius * points) ** 2)) / z.size
+        known = (top + np.log(mass / count))[:, 0] - 2 * math.log(sigma) + math.log(1 - _STRAY)
+        stray = -np.abs(z) ** 2 / power - math.log(power / 2) + math.log(_STRAY)
+        both = np.logaddexp(known, stray)
+        now = float(np.sum(both)) - z.size * math.log(2 * math.pi)
+        weight *= np.exp(known - both)[:, None] / mass
+        taken = max(float(weight.sum()), 1.0)
+        radius = max(float(np.sum(weight * (z[:, None] * np.conj(points)).real)) / taken, 1e-15)
+        residual = float(np.sum(weight * np.abs(z[:, None] - radius * points) ** 2)) / taken
         sigma = math.sqrt(max(residual / 2, 1e-12 * power))
         if abs(now - total) < 1e-4 * z.size:
             break

@@ -110,11 +110,11 @@ def _at_unit_power(samples: Samples) -> Samples:
 def _stretches(samples: Samples, band: Band) -> Iterator[Samples]:
     """What to search for lines: a long stretch, then shorter ones where the power is (bursts; clocks that wander)."""
     size = min(int(_STRETCH / (2 * band.half)), samples.size)
-    for _ in range(3):
+    while True:
         start = busiest(samples, size)
         yield samples[start : start + size]
-        size //= 8
-        if size < 4096 or size * 2 * band.half < 600:
+        size //= 4
+        if size < 1024 or size * 2 * band.half < 800:
             return
 
 
@@ -149,15 +149,13 @@ def _kinds(spectrum: Spectrum, band: Band, wanted: Wanted) -> list[str]:
     if wanted.scheme is not None:
         return [wanted.scheme.kind]
     low = band.centre - band.half
-    kinds = []
-    if spectrum.is_real and low < 0.5 * band.half:
-        if low < 0.05 * band.half:
-            return ["baseband"]
-        kinds = ["baseband"]
     spread = spectrum.envelope_spread(band.centre, 1.15 * band.half)
-    if spread > _NOT_CONSTANT:
-        return [*kinds, "carrier"]
-    return [*kinds, "frequency", "carrier"] if spread < _CONSTANT else [*kinds, "carrier", "frequency"]
+    kinds = ["carrier"] if spread > _NOT_CONSTANT else ["frequency", "carrier"] if spread < _CONSTANT else ["carrier", "frequency"]
+    if spectrum.is_real and low < 0.5 * band.half:
+        if low < 0.02 * band.half:
+            return ["baseband"]
+        kinds.insert(1 if spread < _CONSTANT else 0, "baseband")
+    return kinds
 
 
 def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> Iterator[Candidate]:

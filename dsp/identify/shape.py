@@ -18,6 +18,7 @@ Floats = NDArray[np.float64]
 PHASES = 16  # a symbol, at which a response is known
 _LAGS = 10  # symbols on each side
 _TRACES = 1500
+_LIKELY = 0.03  # of an opening, by which the family that the spectrum's shape speaks for is preferred
 _NEARLY = 0.01  # of an opening, within which two pulses are as good
 _ROLLOFFS = np.arange(0.05, 1.001, 0.05)
 
@@ -104,12 +105,14 @@ def _misfit(model: Floats, density: Floats, weight: Floats) -> float:
 class Response:
     """What one symbol puts into the wave before any receive filter, at `PHASES` a symbol, ``(2 * _LAGS + 1) * PHASES`` values.
 
-    ``noise`` is the variance of what the symbols do not explain, a sample; ``band`` the one-sided band of the wave in symbol rates.
+    ``noise`` is the variance of what the symbols do not explain, a sample; ``band`` the one-sided band of the wave in symbol rates;
+    ``zero`` the wave's middle between its levels.
     """
 
     wave: NDArray[np.complex128]
     noise: float
     band: float
+    zero: float = 0.0
 
 
 def response_of(sampled: NDArray[np.complex128], decided: NDArray[np.complex128], band: float) -> Response:
@@ -123,7 +126,7 @@ def response_of(sampled: NDArray[np.complex128], decided: NDArray[np.complex128]
     solution = np.linalg.solve(normal, design.conj().T @ target)  # lag, phase
     noise = float(np.mean(np.abs(target - design @ solution) ** 2)) * n / max(n - lags.size, 1)
     # a lag's values run from half a symbol before its instant to half a symbol behind: in order of time
-    return Response(np.asarray(solution[:-1].ravel(), dtype=np.complex128), noise, band)
+    return Response(np.asarray(solution[:-1].ravel(), dtype=np.complex128), noise, band, float(np.mean(solution[-1].real)))
 
 
 def behind(response: Response, pulse: Pulse, energy: float) -> tuple[float, int, NDArray[np.complex128]]:
@@ -208,4 +211,5 @@ def best_pulse(
         if expected_one is not None and (kept := merit(expected_one.number or 0.0)) > best[1] - _NEARLY:
             best = expected_one, kept
         found.append(best)
-    return sorted(found, key=lambda item: -item[1])
+    likely = expected[0].family if expected else None
+    return sorted(found, key=lambda item: -item[1] - (_LIKELY if item[0].family == likely else 0.0))

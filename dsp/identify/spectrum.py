@@ -12,6 +12,7 @@ from dsp.identify.findings import Band
 
 _CELLS = 4096
 _LEAST_CELLS = 32  # that a band should fill
+_DEPTH = 2e-3  # of the strong cells' density, down to which a cell belongs to a link
 _FULL = 1.5  # times the floor, from where on a cell is more than noise
 
 Cells = NDArray[np.float64]
@@ -162,9 +163,15 @@ def spectrum_of(samples: Samples) -> Spectrum | None:
     return Spectrum(np.asarray(transform, dtype=np.complex64), density, width, size, is_real, floor)
 
 
-def segments(spectrum: Spectrum, most: int = 6) -> list[Band]:
-    """Stretches of the spectrum that stand above the floor, the most powerful first; narrow nulls within are bridged."""
-    full = spectrum.full(2.0)
+def segments(spectrum: Spectrum, most: int = 6, depth: float = _DEPTH) -> list[Band]:
+    """Stretches of the spectrum that stand above the floor, the most powerful first; narrow nulls within are bridged.
+
+    What lies further below the strong cells than ``depth`` belongs to none: side lobes, images.
+    """
+    falling = np.sort(spectrum.density)[::-1]
+    power = np.cumsum(falling)
+    strong = float(falling[int(np.searchsorted(power, 0.5 * power[-1]))])
+    full = spectrum.full(2.0) & (spectrum.density > depth * strong)
     edges = np.flatnonzero(np.diff(np.concatenate(([0], full.astype(np.int8), [0]))))
     runs = [[int(a), int(b)] for a, b in zip(edges[::2], edges[1::2], strict=True)]
     joined: list[list[int]] = []
