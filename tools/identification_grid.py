@@ -23,7 +23,7 @@ from collections import Counter
 from collections.abc import Callable, Iterable
 from dataclasses import asdict, dataclass
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 if __name__ == "__main__":  # run as a script from anywhere
     sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
@@ -32,6 +32,10 @@ if __name__ == "__main__":  # run as a script from anywhere
 
 import numpy as np
 from numpy.typing import NDArray
+
+if TYPE_CHECKING:
+    from dsp.identify import Identified
+    from dsp.transmitter import TransmitSpec
 
 SYMBOLS = 20_000
 RATE_HZ = 1e6
@@ -97,7 +101,7 @@ def _frequency_threshold(scheme: str, index: float, bt: float | None) -> float:
     return base + max(narrow, 0.0) + (0.5 / bt - 0.5 if bt is not None and bt < 1 else 0.0)
 
 
-def draw_link(number: int, *, below: bool = False) -> Any:
+def draw_link(number: int, *, below: bool = False) -> TransmitSpec:
     """The ``number``-th link, as a `dsp.transmitter.TransmitSpec`; ``below``: 4 to 10 dB under its threshold instead."""
     from dsp.link import SCHEMES
     from dsp.pulses import Pulse
@@ -216,7 +220,7 @@ def judge_link(number: int, *, below: bool = False, openings: bool = True) -> Ve
     return Verdict(**verdict, locked=locked, opening_pct=opening, true_opening_pct=true, reason=reason)
 
 
-def _opening(samples: NDArray[Any], identified: Any) -> tuple[bool, float | None, str]:
+def _opening(samples: NDArray[Any], identified: Identified) -> tuple[bool, float | None, str]:
     from dsp.block import Block
     from dsp.chain import Chain, ChainOptions
     from dsp.figures import Figures

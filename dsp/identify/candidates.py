@@ -10,7 +10,7 @@ from scipy import fft, signal
 from dsp.acquisition import interpolate, power_line
 from dsp.identify.likelihood import Agreement, agreement, decide, no_structure, repetition, surprise
 from dsp.identify.lines import Line
-from dsp.identify.shape import PHASES, Response, Shape, best_pulse, response_of, spectrum_shapes
+from dsp.identify.shape import PHASES, Response, Shape, best_pulse, response_of, spectrum_shapes, trimmed_solution
 from dsp.identify.spectrum import Spectrum, spectrum_of
 from dsp.interpolation import BEFORE, TAPS
 from dsp.link import Scheme, find_scheme
@@ -35,10 +35,11 @@ Values = NDArray[np.float64]
 class Candidate:
     """One answer with its evidence.
 
-    ``rate`` in symbols a sample, ``centre`` in cycles a sample; ``line`` is the clock's; ``excess`` the log-likelihood of a symbol over
-    that of no structure, ``margin`` over that of the ``rival`` scheme (nats); ``index`` the modulation index; ``noise_db`` the ratio of
-    symbol energy to noise at the decisions. ``off_centre`` the carrier's distance from the spectrum's middle as a share of that at which a neighbouring
-    answer would serve as well; ``half_bits`` whether symbols come in pairs of opposite sign. ``doubt`` says why this may be none; empty if nothing speaks against it.
+    ``rate`` in symbols a sample, ``centre`` in cycles a sample; ``line`` is the clock's; ``excess`` the log-likelihood of a symbol
+    over that of no structure, ``margin`` over that of the ``rival`` scheme (nats), from ``symbols`` of them; ``index`` the modulation
+    index; ``snr_db`` symbol energy over noise at the decisions; ``pulse_margin`` what the ``other_pulse`` loses of the opening.
+    ``off_centre``: the carrier's distance from the spectrum's middle as a share of that at which a neighbouring answer would serve
+    as well; ``half_bits``: symbols come in pairs of opposite sign. ``doubt`` says why this may be none; empty if nothing does.
     """
 
     scheme: Scheme
@@ -135,10 +136,8 @@ def _cleaned(values: NDArray[np.complex128], decided: NDArray[np.complex128]) ->
     if rows.size < 8 * len(lags):
         return values
     design = np.stack([decided[rows - lag] for lag in (0, *lags)] + [np.ones(rows.size, complex)], axis=1)
-    normal = design.conj().T @ design
-    normal += 1e-6 * np.trace(normal).real / normal.shape[0] * np.eye(normal.shape[0])
-    solution = np.linalg.solve(normal, design.conj().T @ values[rows])
-    return np.asarray(values[rows] - design[:, 1:] @ solution[1:])
+    solution, _ = trimmed_solution(design, values[rows, None])
+    return np.asarray(values[rows] - design[:, 1:] @ solution[1:, 0])
 
 
 # -- real waves: baseband, and the frequency behind a discriminator ------------------------------------------------------------
@@ -395,7 +394,8 @@ def carrier_candidates(
             scheme, rate, pulse, centre + turn * rate, line, n, excess,
             agreed.log_likelihood - rival[1].log_likelihood if rival else excess, rival[0] if rival else None,
             _snr_db(agreed, scheme), _doubts(decided_rails, scheme, agreed, excess, n, line), None,
-            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response, min(abs(turn) * 2 * scheme.symmetry, 1.0),
+            ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
+            min(abs(turn) * 2 * scheme.symmetry, 1.0),
         )  # fmt: skip
         if last or response is None or pulses is not None:
             break
@@ -500,6 +500,8 @@ def frequency_candidate(
     total = np.sum(found.response.wave.reshape(-1, PHASES), axis=0).real
     index = abs(2 * float(np.mean(total)) / rate)
     pulse, other = found.pulse, found.other_pulse
+    if _width(found.response) < _NARROWEST:
+        return replace(found, doubt="the frequency has steps of phase, not shifts", index=index)
     if pulses is None and not found.doubt:
         pulse, other = _frequency_pulse(
             found.response, found.scheme, index, rail.half / rate, (rail.middle - rail.centre) / rate
@@ -514,9 +516,18 @@ def frequency_candidate(
     scheme = find_scheme(name)
     if scheme not in schemes:
         scheme = next(s for s in schemes if s.levels == found.scheme.levels)
-    return replace(found, scheme=scheme, pulse=pulse, other_pulse=other, index=index, centre=rail.middle + found.response.zero)
+    return replace(
+        found, scheme=scheme, pulse=pulse, other_pulse=other, index=index, centre=rail.middle + found.response.zero
+    )
 
 
+def _width(response: Response) -> float:
+    """Width of a response at half its height, in symbols."""
+    wave = np.abs(response.wave)
+    return float(np.sum(wave > 0.5 * wave.max())) / PHASES
+
+
+_NARROWEST = 0.65  # symbols: a frequency pulse is one symbol wide at half its height, or wider; that of a phase step is far narrower
 _TIME_BANDWIDTHS = (0.2, 0.25, 0.3, 0.35, 0.4, 0.45, 0.5, 0.6, 0.7, 0.85, 1.0, 1.2)
 _AS_GOOD_AS_SQUARE = 1.02  # a Gaussian filter this wide leaves no trace behind the channel's own
 _FREQUENCY_ROLLOFFS = (0.2, 0.35, 0.5, 0.75, 1.0)

@@ -60,7 +60,9 @@ def agreement(values: Values, scheme: Scheme, weights: Values | None = None) -> 
             cross = own = square = count = total_now = 0.0
             for rail, points in zip(values, rails, strict=True):
                 prior = np.full(points.size, 1.0 / points.size) if weights is None or points.size == 1 else weights
-                part, responsibility = _expect(rail[:, None], gain * points, sigma, prior, math.sqrt(power / len(rails)))
+                part, responsibility = _expect(
+                    rail[:, None], gain * points, sigma, prior, math.sqrt(power / len(rails))
+                )
                 total_now += part
                 cross += float(np.sum(responsibility * rail[:, None] * points))
                 own += float(np.sum(responsibility * points**2))
@@ -108,7 +110,7 @@ def _ring(values: Values, count: int, scheme: Scheme | None) -> Agreement:
         weight = np.exp(exponent - top)
         mass = weight.sum(axis=1, keepdims=True)
         known = (top + np.log(mass / count))[:, 0] - 2 * math.log(sigma) + math.log(1 - _STRAY)
-        stray = -np.abs(z) ** 2 / power - math.log(power / 2) + math.log(_STRAY)
+        stray = -(np.abs(z) ** 2) / power - math.log(power / 2) + math.log(_STRAY)
         both = np.logaddexp(known, stray)
         now = float(np.sum(both)) - z.size * math.log(2 * math.pi)
         weight *= np.exp(known - both)[:, None] / mass

@@ -171,10 +171,10 @@ class Products:
 def clock_lines(
     spectrum: Spectrum, low: float, high: float, lowest: float, highest: float, depths: tuple[float, ...] = _DEPTHS
 ) -> list[Line]:
-    """Lines of a symbol clock in the band ``low`` to ``high``, from ``lowest`` to ``highest`` cycles a sample, strongest first.
+    """Lines of a symbol clock in the band ``low`` to ``high``, from ``lowest`` to ``highest`` cycles a sample.
 
-    Sought twice, with much and with little of what stands beside the main lobe: the lobes of a square pulse take from its line what the main
-    lobe gives, and at one width of the band all of it.
+    Sought twice, with much and with little of what stands beside the main lobe: the lobes of a square pulse take from its line what
+    the main lobe gives, and at one width of the band all of it.
     """
     found: list[Line] = []
     for depth in depths:

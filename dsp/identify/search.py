@@ -22,12 +22,11 @@ from dsp.identify.findings import Band, Identified, Wanted
 from dsp.identify.lines import Line, Products, clock_lines
 from dsp.identify.spectrum import Spectrum, segments, spectrum_of
 from dsp.link import SCHEMES, Link, Scheme
-from dsp.pulses import Pulse
 
 _WHOLE = 1 << 22  # samples whose spectrum is looked at as a whole
 _STRETCH = 2e5  # independent samples of a band that are searched for lines
 _TRIAL_SYMBOLS = 3000
-# spread of the envelope (`Spectrum.envelope_spread`): up to 0.05 for frequency schemes at 14 dB and more, from 0.09 for band-limited carriers
+# spread of the envelope (`Spectrum.envelope_spread`): up to 0.05 for frequency schemes, from 0.09 for band-limited carriers (measured)
 _CONSTANT, _NOT_CONSTANT = 0.07, 0.2
 _RATES_AGREE = (
     1e-5  # of line and loops; beyond it the line is another's, or the clock wanders, and the loops are nearer
@@ -150,7 +149,13 @@ def _kinds(spectrum: Spectrum, band: Band, wanted: Wanted) -> list[str]:
         return [wanted.scheme.kind]
     low = band.centre - band.half
     spread = spectrum.envelope_spread(band.centre, 1.15 * band.half)
-    kinds = ["carrier"] if spread > _NOT_CONSTANT else ["frequency", "carrier"] if spread < _CONSTANT else ["carrier", "frequency"]
+    kinds = (
+        ["carrier"]
+        if spread > _NOT_CONSTANT
+        else ["frequency", "carrier"]
+        if spread < _CONSTANT
+        else ["carrier", "frequency"]
+    )
     if spectrum.is_real and low < 0.5 * band.half:
         if low < 0.02 * band.half:
             return ["baseband"]

@@ -5,7 +5,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-
 from scipy.optimize import minimize_scalar
 from scipy.special import ndtr
 
@@ -18,6 +17,7 @@ Floats = NDArray[np.float64]
 PHASES = 16  # a symbol, at which a response is known
 _LAGS = 10  # symbols on each side
 _TRACES = 1500
+_TRIM = 25.0  # times the median squared error, from where on a row is no symbol
 _LIKELY = 0.03  # of an opening, by which the family that the spectrum's shape speaks for is preferred
 _NEARLY = 0.01  # of an opening, within which two pulses are as good
 _ROLLOFFS = np.arange(0.05, 1.001, 0.05)
@@ -122,15 +122,34 @@ def response_of(sampled: NDArray[np.complex128], decided: NDArray[np.complex128]
     rows = np.arange(_LAGS, n - _LAGS)
     design = np.stack([*(decided[rows - lag] for lag in lags), np.ones(rows.size, complex)], axis=1)
     target = sampled[:, rows].T
-    normal = design.conj().T @ design + 1e-6 * n * np.mean(np.abs(decided) ** 2) * np.eye(lags.size + 1)
-    solution = np.linalg.solve(normal, design.conj().T @ target)  # lag, phase
-    noise = float(np.mean(np.abs(target - design @ solution) ** 2)) * n / max(n - lags.size, 1)
+    solution, noise = trimmed_solution(design, target)  # lag, phase
     # a lag's values run from half a symbol before its instant to half a symbol behind: in order of time
-    return Response(np.asarray(solution[:-1].ravel(), dtype=np.complex128), noise, band, float(np.mean(solution[-1].real)))
+    return Response(
+        np.asarray(solution[:-1].ravel(), dtype=np.complex128), noise, band, float(np.mean(solution[-1].real))
+    )
+
+
+def trimmed_solution(
+    design: NDArray[np.complex128], target: NDArray[np.complex128]
+) -> tuple[NDArray[np.complex128], float]:
+    """Least squares of ``target`` ``(n, k)`` on ``design`` ``(n, m)``, and the variance left.
+
+    Once more without the rows that fit worst by far: gaps and the ends of bursts are no symbols.
+    """
+    keep = np.ones(target.shape[0], bool)
+    for _ in range(2):
+        some = design[keep]
+        normal = some.conj().T @ some
+        normal += 1e-9 * np.trace(normal).real / normal.shape[0] * np.eye(normal.shape[0])
+        solution = np.linalg.solve(normal, some.conj().T @ target[keep])
+        error = np.mean(np.abs(target - design @ solution) ** 2, axis=1)
+        keep = error < _TRIM * float(np.median(error)) + 1e-18
+    noise = float(np.mean(error[keep])) * keep.sum() / max(int(keep.sum()) - design.shape[1], 1)
+    return np.asarray(solution), noise
 
 
 def behind(response: Response, pulse: Pulse, energy: float) -> tuple[float, int, NDArray[np.complex128]]:
-    """MER in dB that a receiver for ``pulse`` would have with symbols of that mean ``energy``, which phase is its best, and the response at symbol intervals there."""
+    """MER in dB of a receiver for ``pulse`` with symbols of mean ``energy``, its best phase, the response at symbol intervals there."""
     taps = np.asarray(receive_filter(pulse, float(PHASES)), dtype=np.float64)
     size = 2 ** math.ceil(math.log2(response.wave.size + taps.size))
     spectrum = np.fft.fft(taps, size)

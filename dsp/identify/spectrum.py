@@ -73,6 +73,8 @@ class Spectrum:
         sums = np.convolve(np.minimum(self.density, limit), np.ones(cells), mode="same")
         sums[~((frequencies > low) & (frequencies < high))] = 0.0
         near = np.flatnonzero(sums > 0.999 * sums.max())
+        if not near.size:
+            return 0.5 * (low + high)
         return float(frequencies[near].mean()) - (0.5 * self.width / self.size if cells % 2 == 0 else 0.0)
 
     def bin_of(self, frequency: float) -> int:
