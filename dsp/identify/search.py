@@ -263,15 +263,10 @@ def _held(samples: Samples, candidate: Candidate, band: Band, rate: float, wante
 
 
 def place_of(candidate: Candidate, link: Link, band: Band) -> tuple[float, float | None]:
-    """Centre and half band of the front end, cycles a sample."""
-    if link.scheme.kind == "baseband":
-        return 0.0, None
-    carrier = candidate.centre if link.carrier_hz is None else link.carrier_hz / link.sample_rate_hz
-    if link.scheme.kind == "frequency":
-        return (band.centre if link.carrier_hz is None else carrier), min(
-            band.half * 1.1 + 0.2 / link.samples_per_symbol, 0.45
-        )
-    return carrier, None
+    """Centre and half band of the front end, cycles a sample, for a candidate."""
+    if link.scheme.kind == "carrier" and link.carrier_hz is None:
+        return candidate.centre, None
+    return placement(link, band, is_complex=True)
 
 
 def placement(link: Link, band: Band, *, is_complex: bool) -> tuple[float, float | None]:
