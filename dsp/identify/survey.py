@@ -69,7 +69,7 @@ def _described(found: Found, spectrum: Spectrum, rate: float, wanted: Wanted) ->
         # the M-th power does not tell a carrier from one that stands 1/M of the symbol rate beside it: the spectrum's middle does
         step = link.symbol_rate_hz / (link.scheme.symmetry or 1)
         other = None if link.scheme.kind == "frequency" else value - math.copysign(step, value)
-        carrier = Guess(value, 1.0 - candidate.off_centre, other)
+        carrier = Guess(value, 1.0 - candidate.off_centre**2, other)
         if wanted.carrier_hz is not None:
             carrier = Guess(wanted.carrier_hz, 1.0)
             mirrored = _mirrored(spectrum, wanted.carrier_hz, link.symbol_rate_hz, rate)
