@@ -293,7 +293,7 @@ def _draw_small_figure(canvas: Canvas, box: Box, state: LiveState) -> None:
     for number, text in enumerate(words):
         row = Box(x, large.y + (large.height - line * len(words)) // 2 + number * line, max(0, box.right - x), line)
         canvas.write(text, row, 15.0, theme.ink, bold=number == 0)
-    _draw_opening_bar(canvas, Box(box.x, large.bottom + canvas.px(8), box.width, canvas.px(10)), opening, state)
+    _draw_opening_bar(canvas, Box(box.x, large.bottom + canvas.px(13), box.width, canvas.px(10)), opening, state)
 
 
 def _draw_opening_bar(canvas: Canvas, bar: Box, opening: float | None, state: LiveState) -> None:
