@@ -10,7 +10,7 @@ from dsp.reading import Reading
 from monitor.errors import printable
 from monitor.session import Outcome
 from monitor.version import version
-from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
+from monitor.views.wording import budget_rows, figure_groups, interval_text, plain, sentence
 
 # a value of the document; its arrays and objects hold more of them
 Json = None | bool | int | float | str | list[Any] | dict[str, Any]
@@ -133,9 +133,9 @@ def text(outcome: Outcome) -> Iterator[str]:
     interval = interval_text(reading)
     yield f"opening {plain(reading.opening_pct, 1)} %" + (f" ({interval})" if interval else "")
     if reading.verdict is not None:
-        yield printable(reading.verdict)
+        yield printable(sentence(reading.verdict))
         for remark in outcome.diagnosis.remarks if outcome.diagnosis is not None else ():
-            yield printable(remark)
+            yield printable(sentence(remark))
     rows = budget_rows(reading.budget) if reading.budget is not None else []
     if rows:
         yield "What closes the eye, points of opening:"

@@ -34,6 +34,8 @@ from monitor.views.wording import (
     interval_text,
     plain,
     power_of_ten,
+    rate_interval,
+    sentence,
     signed,
     unknown_causes,
 )
@@ -223,8 +225,8 @@ def render(facts: ReportFacts) -> str:
         opening=_opening(reading),
         interval=interval_text(reading) if reading is not None else None,
         closed=reading is not None and reading.opening_pct is not None and reading.opening_pct <= 0,
-        verdict=reading.verdict if reading is not None else None,
-        remarks=diagnosis.remarks,
+        verdict=sentence(reading.verdict) if reading is not None and reading.verdict else None,
+        remarks=[sentence(remark) for remark in diagnosis.remarks],
         balance=_balance(reading) if reading is not None and reading.budget is not None else [],
         unknown=[label.lower().replace("i/q", "I/Q") for label in unknown_causes(reading.budget)]
         if reading is not None and reading.budget is not None
@@ -341,7 +343,7 @@ def _groups(reading: Reading) -> list[tuple[str, list[tuple[str, str, str, str]]
                 continue
             interval = ""
             if figure.label == "Bit error rate" and reading.ber_low is not None and reading.ber_high is not None:
-                interval = f"{power_of_ten(reading.ber_low)} to {power_of_ten(reading.ber_high)}"
+                interval = rate_interval(reading.ber_low, reading.ber_high)
             rows.append((figure.label, figure.value, interval, definition_of(figure.label)))
         groups.append((group.title, rows))
     return groups

@@ -34,6 +34,7 @@ from monitor.views.wording import (
     budget_rows,
     figure_groups,
     plain,
+    sentence,
     signed,
     ten_to,
     unknown_causes,
@@ -103,7 +104,7 @@ def draw_causes(canvas: Canvas, box: Box, reading: Reading, diagnosis: Diagnosis
     if reading.verdict:
         y = draw_verdict(canvas, replace(box, height=box.bottom - y), reading.verdict) + canvas.px(6)
     for remark in diagnosis.remarks:
-        lines = canvas.wrap(remark, box.width - canvas.px(14), _TEXT, 3)
+        lines = canvas.wrap(sentence(remark), box.width - canvas.px(14), _TEXT, 3)
         if y + canvas.px(18) * len(lines) + needed > box.bottom:
             break
         for text in lines:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from dsp.diagnosis import Diagnosis, EqualiserTrial, ErrorCurve, Response
 from dsp.reading import Reading
-from monitor.views.wording import Figure, plain, power_of_ten, signed
+from monitor.views.wording import Figure, plain, power_of_ten, rate_interval, signed
 
 PageName = Literal["glance", "causes", "response", "errors", "decisions", "remedies", "figures"]
 PAGES: tuple[PageName, ...] = ("glance", "causes", "response", "errors", "decisions", "remedies", "figures")
@@ -128,7 +128,7 @@ def span_below(curve: ErrorCurve, ber: float) -> tuple[float, float] | None:
 def error_figures(reading: Reading, diagnosis: Diagnosis) -> list[Figure]:
     """Error rate with its interval, and the jitter's two parts; what is not known says so."""
     low, high = reading.ber_low, reading.ber_high
-    interval = "not known" if low is None or high is None else f"{power_of_ten(low)} to {power_of_ten(high)}"
+    interval = "not known" if low is None or high is None else rate_interval(low, high)
     rows = [
         Figure("Bit error rate", "not known" if reading.ber is None else power_of_ten(reading.ber)),
         Figure("… 95 %", interval),

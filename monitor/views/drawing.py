@@ -21,6 +21,7 @@ from monitor.views.wording import (
     figure_groups,
     interval_text,
     plain,
+    sentence,
     signed,
 )
 
@@ -450,7 +451,7 @@ def draw_verdict(canvas: Canvas, box: Box, verdict: str) -> int:
     """The verdict beside a bar; returns where it ends."""
     theme = canvas.theme
     indent, line = canvas.px(14), canvas.px(21)
-    lines = canvas.wrap(verdict, box.width - indent, 14.5, 3)
+    lines = canvas.wrap(sentence(verdict), box.width - indent, 14.5, 3)
     canvas.fill(Box(box.x, box.y, canvas.px(4), line * len(lines)), theme.accent)
     for number, text in enumerate(lines):
         canvas.write(text, Box(box.x + indent, box.y + number * line, box.width - indent, line), 14.5, theme.ink)

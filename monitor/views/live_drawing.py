@@ -37,7 +37,7 @@ from monitor.views.live_wording import (
     no_eye_lines,
 )
 from monitor.views.theme import Colour, ThemeName
-from monitor.views.wording import UNEXPLAINED, budget_rows, figure_groups, interval_text, plain
+from monitor.views.wording import UNEXPLAINED, figure_groups, interval_text, plain, telling_rows
 
 _TEXT, _SMALL, _LARGE = 13.0, 12.0, 19.0
 
@@ -365,7 +365,7 @@ def draw_detail(canvas: Canvas, box: Box, snapshot: Snapshot, page: PageName) ->
     y, gap = box.y + canvas.px(6), canvas.px(12)
     if reading.verdict and canvas.px(90) <= box.bottom - y:
         y = draw_verdict(canvas, Box(box.x, y, box.width, box.bottom - y), reading.verdict) + gap
-    rows = budget_rows(reading.budget) if reading.budget is not None else []
+    rows = telling_rows(reading.budget) if reading.budget is not None else []
     # two lines of figures below it: the other causes have a page of their own
     lines = (box.bottom - y - canvas.px(22 + 12 + 46)) // max(canvas.px(29), 1)
     if len(rows) > 2 * lines:

@@ -22,7 +22,7 @@ from monitor.views.diagnosis_wording import (
 from monitor.views.terminal_cells import Ink, Sheet, cells, wrap
 from monitor.views.terminal_colours import Palette
 from monitor.views.terminal_plots import draw_bars, draw_counts
-from monitor.views.wording import Figure, budget_rows, figure_groups, plain, signed, ten_to, unknown_causes
+from monitor.views.wording import Figure, budget_rows, figure_groups, plain, sentence, signed, ten_to, unknown_causes
 
 
 def draw_side_page(
@@ -112,7 +112,7 @@ def _draw_causes(
     y = _draw_bars(sheet, inks, rows, x, y, width, end - y)
     y = draw_figures(sheet, inks, cause_figures(diagnosis), x, y, width, end - y)
     for remark in diagnosis.remarks:
-        y = _draw_words(sheet, inks.text, remark, x, y, width, end - y)
+        y = _draw_words(sheet, inks.text, sentence(remark), x, y, width, end - y)
     missing = unknown_causes(budget)
     if missing:
         _draw_words(sheet, inks.dim, "Not known here: " + ", ".join(missing), x, y, width, end - y)

@@ -33,7 +33,7 @@ from monitor.views.terminal_colours import Look, Palette, palette
 from monitor.views.terminal_diagnosis import draw_budget, draw_figures, draw_side_page
 from monitor.views.terminal_digits import digit_pixels, half_blocks, hash_blocks
 from monitor.views.terminal_plots import draw_curve, draw_eye, draw_history
-from monitor.views.wording import budget_rows, figure_groups, interval_text, plain
+from monitor.views.wording import figure_groups, interval_text, plain, sentence, telling_rows
 
 LEAST_COLUMNS, LEAST_ROWS = 64, 20
 _MOST_SIDE, _LEAST_SIDE = 54, 34
@@ -161,7 +161,7 @@ def _draw_page(sheet: Sheet, inks: Palette, state: LiveState, shown: Shown) -> N
     left = columns - side - 2
     bottom = history - (1 if rows >= 28 else 0)
     if verdict and rows < 36:
-        lines = wrap(sheet.spell(verdict), columns, 2, sheet.ellipsis)
+        lines = wrap(sheet.spell(sentence(verdict)), columns, 2, sheet.ellipsis)
         bottom -= len(lines)
         for number, line in enumerate(lines):
             sheet.write(0, bottom + number, line, inks.text)
@@ -269,7 +269,7 @@ def _draw_side(
     end = top + height
     y += 1
     if with_verdict and reading.verdict:
-        lines = wrap(sheet.spell(reading.verdict), width, 4, sheet.ellipsis)
+        lines = wrap(sheet.spell(sentence(reading.verdict)), width, 4, sheet.ellipsis)
         for line in lines:
             sheet.write(x, y, line, inks.text)
             y += 1
@@ -277,7 +277,7 @@ def _draw_side(
     if reading.budget is not None:
         # in brief where there is little room: the largest causes, and the figures most looked for
         room = end - y
-        rows = budget_rows(reading.budget)
+        rows = telling_rows(reading.budget)
         y = draw_budget(sheet, inks, rows, x, y, width, len(rows) + 1 if room >= 18 else room // 2 + 1)
         y += room >= 18 and bool(rows)
     _draw_figures(sheet, inks, reading, x, y, width, end - y)
@@ -332,9 +332,8 @@ def _draw_opening(sheet: Sheet, inks: Palette, state: LiveState, x: int, y: int,
         sheet.write(x, y, word or "closed", ink, width)
         sheet.write(x, y, points, inks.strong, width, align="right")
         y += 1
-    sentences = sheet.spell(since).split(sheet.spell(" · "))
-    for sentence in sentences:
-        for line in wrap(sentence, width, 2, sheet.ellipsis):
+    for part in sheet.spell(since).split(sheet.spell(" · ")):
+        for line in wrap(part, width, 2, sheet.ellipsis):
             sheet.write(x, y, line, inks.dim)
             y += 1
     if best:

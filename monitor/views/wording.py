@@ -1,6 +1,7 @@
 """The figures of a reading as words and numbers for people; no Qt here. What is not known has no line."""
 
 import math
+import re
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
@@ -45,6 +46,11 @@ def ten_to(exponent: int) -> str:
     return f"10{str(exponent).translate(_SUPERSCRIPT)}"
 
 
+def sentence(text: str) -> str:
+    """A sentence from the figures with true minus signs."""
+    return re.sub(r"(?<![\w.])-(?=\d)", "−", text)
+
+
 def power_of_ten(value: float) -> str:
     """A rate such as ``3.1 × 10⁻⁷``; 0.01 and above in full, below 10⁻¹⁸ as that bound."""
     if value < _LEAST_BER:
@@ -56,6 +62,13 @@ def power_of_ten(value: float) -> str:
     if mantissa == "10.0":
         mantissa, exponent = "1.0", exponent + 1
     return f"{mantissa} × {ten_to(exponent)}"
+
+
+def rate_interval(low: float, high: float) -> str:
+    """An interval of error rates."""
+    if high < _LEAST_BER:
+        return power_of_ten(high)
+    return f"{power_of_ten(low)} to {power_of_ten(high)}"
 
 
 def _usable(value: float | None) -> bool:
@@ -166,6 +179,11 @@ def budget_rows(budget: Budget) -> list[tuple[str, float]]:
     rows = [(label, getattr(budget, key)) for key, label in _CAUSES]
     known = [(label, float(value)) for label, value in rows if _usable(value)]
     return sorted(known, key=lambda row: (row[0] == UNEXPLAINED, -row[1]))
+
+
+def telling_rows(budget: Budget) -> list[tuple[str, float]]:
+    """As `budget_rows`, without causes that take nothing worth telling."""
+    return [row for row in budget_rows(budget) if abs(row[1]) >= 0.05]
 
 
 def unknown_causes(budget: Budget) -> list[str]:

@@ -3,7 +3,17 @@ import dataclasses
 import pytest
 
 from dsp.reading import READING_KEYS, Budget, Reading
-from monitor.views.wording import budget_rows, figure_groups, interval_text, plain, power_of_ten, signed
+from monitor.views.wording import (
+    budget_rows,
+    figure_groups,
+    interval_text,
+    plain,
+    power_of_ten,
+    rate_interval,
+    sentence,
+    signed,
+    telling_rows,
+)
 from tests.monitor.views.synthetic_eyes import full_reading, make_eye
 
 
@@ -66,3 +76,18 @@ def test_the_budget_is_sorted_and_leaves_out_what_is_unknown():
     rows = budget_rows(Budget(isi_pct=3.0, noise_pct=9.0, unexplained_pct=-1.0))
     assert rows == [("Noise", 9.0), ("Neighbouring symbols", 3.0), ("Not explained", -1.0)]
     assert budget_rows(Budget()) == []
+
+
+def test_a_sentence_has_true_minus_signs_and_keeps_its_hyphens():
+    text = "What is left, -14.5 dB strong, from -3 to 86 %; a 5-tap equaliser of 2026-12"
+    assert sentence(text) == "What is left, −14.5 dB strong, from −3 to 86 %; a 5-tap equaliser of 2026-12"
+
+
+def test_an_interval_that_lies_below_all_that_is_told_is_told_once():
+    assert rate_interval(1e-30, 1e-25) == "below 10⁻¹⁸"
+    assert rate_interval(1e-30, 2e-9) == "below 10⁻¹⁸ to 2.0 × 10⁻⁹"
+
+
+def test_at_a_glance_causes_that_take_nothing_are_left_out():
+    rows = telling_rows(Budget(isi_pct=3.0, noise_pct=0.04, iq_pct=-0.2, unexplained_pct=0.0))
+    assert rows == [("Neighbouring symbols", 3.0), ("I/Q imbalance", -0.2)]
