@@ -143,7 +143,7 @@ class EyeSums:
         self.crossing_groups = np.zeros((rails, levels ** len(around), 3))
         self.crossing_edges = np.zeros((rails, 2, 2))
         self.unit_sums = np.zeros((3, 2))  # gain, zero by rail, weighted by symbols; last row: symbols
-        self.residual = ResidualSums(scheme)
+        self.residual = ResidualSums(scheme, small=not raster)
         self.timing_power = np.zeros(BLOCK // 2 + 1)
         self.timing_blocks = 0
         self.middle = np.zeros((rails, levels, 0 if raster else self.rows.count), np.int64)
@@ -264,7 +264,7 @@ class EyeMeter:
         self._finished = finished
         self.sums = EyeSums(scheme, phases)
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
-        self._residual = ResidualMeter(scheme, phases, LAGS)
+        self._residual = ResidualMeter(scheme, phases, LAGS, thrifty=slab >= 1024)
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th

@@ -24,6 +24,7 @@ _MEMORY = 8192.0  # symbols that the running response remembers
 _REFIT = 16384  # symbols after which it is fitted anew at the latest
 _LEAST_FIT = 384
 _LEAST_SPLIT = 2000
+_EAGER, _STRETCH, _OFTEN = 65536, 8192, 4  # symbols of a thrifty run that are all looked at; then a stretch in so many
 _PATTERN = {2: (-2, -1, 0, 1, 2), 3: (-1, 0, 1), 4: (-1, 0, 1), 8: (-1, 0, 1)}
 
 
@@ -53,34 +54,38 @@ class ResidualSums:
     power, frames
         Summed spectra of the residual (I + jQ where there are two rails), ``(FRAME,)``, and how many.
     constellation, reach
-        Decision samples counted from ``-reach`` to ``reach`` level units, ``(CELLS, CELLS)``, Q by row; two rails only.
+        Decision samples counted from ``-reach`` to ``reach`` level units, ``(CELLS, CELLS)``, Q by row; two rails only, and none where
+        only ``small`` sums are wanted.
     """
 
-    def __init__(self, scheme: Scheme) -> None:
+    def __init__(self, scheme: Scheme, *, small: bool = False) -> None:
         self.products = np.zeros((len(pairs(scheme.rails)), 10))
         self.patterns = np.zeros((scheme.rails, scheme.levels ** len(pattern_around(scheme.levels)), 2))
         self.square = np.zeros(scheme.rails)
         self.points = np.zeros((scheme.levels**2 if scheme.rails == 2 else 0, 3))
         self.power = np.zeros(FRAME)
         self.frames = 0
-        self.constellation = np.zeros((CELLS, CELLS) if scheme.rails == 2 else (0, 0), np.uint32)
+        self.constellation = np.zeros((CELLS, CELLS) if scheme.rails == 2 and not small else (0, 0), np.uint32)
         self.reach = 1.6 * max(scheme.rail_levels)
 
     def merge(self, other: "ResidualSums", sign: int = 1) -> None:
         """Add the sums of another stretch of the same link, or with ``sign`` -1 take them away."""
         self.frames += sign * other.frames
-        for name in ("products", "patterns", "square", "points", "power", "constellation"):
+        if self.constellation.size:
+            self.constellation += other.constellation
+        for name in ("products", "patterns", "square", "points", "power"):
             mine = getattr(self, name)
-            if sign > 0:
-                mine += getattr(other, name)
-            else:
-                mine -= getattr(other, name)
+            mine += sign * getattr(other, name)
 
 
 class ResidualMeter:
-    """Takes the residual of each slab of symbols against the response of those before and of its own."""
+    """Takes the residual of slabs of symbols against the response of those before and of their own.
 
-    def __init__(self, scheme: Scheme, phases: int, lags: int) -> None:
+    With ``thrifty`` only the first symbols of a run are all looked at, and then one stretch of `_OFTEN`.
+    """
+
+    def __init__(self, scheme: Scheme, phases: int, lags: int, *, thrifty: bool) -> None:
+        self._thrifty = thrifty
         self._scheme = scheme
         self._phases = phases
         self._lags = lags
@@ -100,6 +105,7 @@ class ResidualMeter:
         self._gram = np.zeros((regressors, regressors))
         self._cross = np.zeros((self._scheme.rails, regressors, len(self._wanted)))
         self._known = 0.0  # symbols in the running sums
+        self._seen = 0  # of this run
         self._since = 0
         self._fitted = 0.0
         self._rows: NDArray[np.float32] | None = None
@@ -129,7 +135,10 @@ class ResidualMeter:
         self._cross = keep * self._cross + np.moveaxis(cross[:, :, self._wanted], 0, 1)
         self._known = keep * self._known + count
         self._since += count
-        if self._known < _LEAST_FIT:
+        skipped = self._thrifty and self._seen >= _EAGER and self._seen // _STRETCH % _OFTEN != 0
+        self._seen += count
+        if self._known < _LEAST_FIT or skipped:
+            self._held = self._held[:0]
             return
         fresh = self._rows is None or self._since >= min(self._fitted, _REFIT)
         if fresh:
