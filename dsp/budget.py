@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 
 from dsp.error_rate import Decisions, Modulated, joined, spread_given
 from dsp.eye import LAGS
-from dsp.limiter import Bend, Limiter
+from dsp.limiter import POINT_SHARES, Bend, Limiter
 from dsp.link import Scheme
 from dsp.mixture import Spread, spread
 from dsp.pattern import CURSOR, Pattern
@@ -302,17 +302,33 @@ def _with_tone(reach: Spread, variance: float) -> Spread:
     if variance <= 0:
         return reach
     at = math.sqrt(2.0 * variance) * np.cos(math.pi * (np.arange(_TONE_POINTS) + 0.5) / _TONE_POINTS)
-    return _added(reach, np.sort(at))
+    return _added(reach, np.sort(at), np.full(at.size, 1.0 / at.size))
 
 
 def _bent(reach: Spread, slope: float, points: NDArray[np.float64]) -> Spread:
-    """The same behind a bend that adds ``slope`` times the ISI met and one of ``points``."""
-    return _added(Spread(reach.at * (1.0 + slope), reach.share, reach.sigma), points)
+    """The same behind a bend that adds ``slope`` times the ISI met and, below and above its mean, one of ``points`` ``(2, n)``."""
+    moved = reach.at * (1.0 + slope)
+    below = reach.at < float(reach.share @ reach.at)
+    parts = []
+    for side, here in zip(points, (below, ~below), strict=True):
+        weight = float(reach.share[here].sum())
+        if weight > 0.0:
+            sigma = reach.sigma if isinstance(reach.sigma, float) else reach.sigma[here]
+            parts.append((_added(Spread(moved[here], reach.share[here] / weight, sigma), side, POINT_SHARES), weight))
+    return _together(parts)
 
 
-def _added(reach: Spread, at: NDArray[np.float64]) -> Spread:
-    """The sum with one of the places ``at``, all as likely."""
-    share = np.full(at.size, 1.0 / at.size)
+def _together(parts: list[tuple[Spread, float]]) -> Spread:
+    """One of several spreads, each as likely as its weight."""
+    places = np.concatenate([part.at for part, _ in parts])
+    shares = np.concatenate([part.share * weight for part, weight in parts])
+    sigmas = np.concatenate([np.broadcast_to(part.sigma, part.at.shape) for part, _ in parts])
+    order = np.argsort(places)
+    return Spread(places[order], shares[order], sigmas[order])
+
+
+def _added(reach: Spread, at: NDArray[np.float64], share: NDArray[np.float64]) -> Spread:
+    """The sum with one of the places ``at``, each as likely as its ``share``."""
     if isinstance(reach.sigma, float):
         return joined(at, share, np.full(at.size, reach.sigma), reach)
     parts = []
@@ -320,11 +336,8 @@ def _added(reach: Spread, at: NDArray[np.float64]) -> Spread:
         here = reach.sigma == sigma
         weight = float(reach.share[here].sum())
         part = Spread(reach.at[here], reach.share[here] / weight, float(sigma))
-        whole = joined(at, share, np.full(at.size, float(sigma)), part)
-        parts.append((whole.at, whole.share * weight, np.full(whole.at.size, float(sigma))))
-    places, shares, sigmas = (np.concatenate(column) for column in zip(*parts, strict=True))
-    order = np.argsort(places)
-    return Spread(places[order], shares[order], sigmas[order])
+        parts.append((joined(at, share, np.full(at.size, float(sigma)), part), weight))
+    return _together(parts)
 
 
 def budget_of(model: LinkModel, split: Split | None, tail: float, opening_pct: float) -> Budget:

@@ -18,13 +18,15 @@ from dsp.link import Scheme
 from dsp.stretches import Stretches
 
 RATE = 8  # points a symbol at which the wave is put together
-_MOST = 4000  # symbols looked at
+_MOST = 6000  # symbols looked at
 _LEAST = 1500
 _RIDGE = 1e-3  # of the filter's greatest power gain, below which what it took away is left away
 _LEAST_SHARE = (
     0.03  # of what is left over, below which a bend is not worth telling of unless it stands out now and then
 )
-_POINTS = 32  # places that stand for the spread of a level
+_EDGES = np.concatenate(([0.0], 0.0005 * 2.0 ** np.arange(7), np.arange(0.0625, 0.5, 0.0625)))
+_EDGES = np.concatenate((_EDGES, [0.5], 1.0 - _EDGES[::-1]))
+POINT_SHARES = np.diff(_EDGES)  # of the places that stand for the spread of a level: finer towards either end
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,7 +40,8 @@ class Bend:
     means, slopes
         By rail and level, ``(rails, levels)``: the mean of the rest, and how it changes with the ISI met.
     points
-        What else there is, ``_POINTS`` places of equal share by rail and level, ``(rails, levels, points)``.
+        What else there is where ISI is below and where it is above its mean: places with the shares `POINT_SHARES`, by rail and level,
+        ``(rails, levels, 2, points)``.
     variance
         Of all but the linear part within the levels, ``(rails,)``.
     """
@@ -158,14 +161,14 @@ class Limiter:
             others[rail, rail * LAGS - EARLIEST] = 0.0
         isi = others.astype(np.float32) @ self._lagged[:-1]
         means, slopes = np.zeros((rails, levels)), np.zeros((rails, levels))
-        points = np.zeros((rails, levels, _POINTS))
+        points = np.zeros((rails, levels, 2, POINT_SHARES.size))
         variance = np.zeros(rails)
-        share = (np.arange(_POINTS) + 0.5) / _POINTS
+        middles = 0.5 * (_EDGES[1:] + _EDGES[:-1])
         for rail in range(rails):
             own = self._decided[rail, self._core]
             for m, level in enumerate(self._scheme.rail_levels):
                 here = np.abs(own - level) < 1e-3
-                if here.sum() < 2 * _POINTS:
+                if here.sum() < 4 * middles.size:
                     continue
                 value, about = bent[rail, here], isi[rail, here] - isi[rail, here].mean()
                 means[rail, m] = value.mean()
@@ -174,9 +177,12 @@ class Limiter:
                 spread = float(about @ about)
                 if spread > 1e-6 * here.sum():
                     slopes[rail, m] = float(value @ about) / spread
-                rest = np.sort(value - slopes[rail, m] * about)
-                points[rail, m] = np.quantile(rest, share)
-                points[rail, m, 0], points[rail, m, -1] = rest[0], rest[-1]
+                rest = value - slopes[rail, m] * about
+                for side, half in enumerate((about < 0.0, about >= 0.0)):
+                    # without ISI there are no sides
+                    some = np.sort(rest[half] if half.any() and spread > 1e-6 * here.sum() else rest)
+                    points[rail, m, side] = np.quantile(some, middles)
+                    points[rail, m, side, [0, -1]] = some[[0, -1]]
         return Bend(linear, means, slopes, points, variance)
 
     def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
