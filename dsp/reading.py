@@ -20,7 +20,11 @@ class Eye:
 
 @dataclass(frozen=True, slots=True)
 class Budget:
-    """Points of opening that each cause takes; with the opening at the target error rate they sum to 100."""
+    """Points of opening that each cause takes; with the opening at the target error rate they sum to 100.
+
+    A part is what the link would gain without that cause alone. ``unexplained_pct`` is the rest: what several causes take only together,
+    and what none of them accounts for.
+    """
 
     isi_pct: float | None = None
     noise_pct: float | None = None
