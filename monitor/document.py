@@ -15,7 +15,7 @@ from monitor.views.wording import budget_rows, figure_groups, interval_text, pla
 # a value of the document; its arrays and objects hold more of them
 Json = None | bool | int | float | str | list[Any] | dict[str, Any]
 
-_LABEL_WIDTH = 24
+_LABEL_WIDTH, _VALUE_WIDTH = 24, 18
 
 
 def document(outcome: Outcome) -> dict[str, Json]:
@@ -141,10 +141,14 @@ def text(outcome: Outcome) -> Iterator[str]:
         yield "What closes the eye, points of opening:"
         for label, points in rows:
             yield f"  {label:{_LABEL_WIDTH}}{plain(points, 1)}"
-    for group in figure_groups(reading):
+    intervals = outcome.diagnosis.intervals if outcome.diagnosis is not None else {}
+    for group in figure_groups(reading, intervals):
         yield f"{group.title}:"
         for figure in group.figures:
-            yield f"  {figure.label:{_LABEL_WIDTH}}{figure.value}"
+            if figure.label.startswith("… 95 %") and "ber" in intervals:
+                continue  # told beside the rate
+            interval = f"({figure.interval})" if figure.interval else ""
+            yield f"  {figure.label:{_LABEL_WIDTH}}{figure.value:{_VALUE_WIDTH}}{interval}".rstrip()
     worst = outcome.windows.worst
     if worst is not None and worst.opening_pct is not None:
         yield f"worst of {outcome.windows.count} windows: {plain(worst.opening_pct, 1)} % open"

@@ -243,7 +243,7 @@ def render(facts: ReportFacts) -> str:
         neighbours=strongest(diagnosis.response, 6) if diagnosis.response is not None else [],
         errors=error_figures(reading, diagnosis) if reading is not None else [],
         eyes=_eyes(reading, snapshot) if reading is not None else [],
-        groups=_groups(reading) if reading is not None else [],
+        groups=_groups(reading, diagnosis) if reading is not None else [],
         opening_definition=OPENING,
         behind=BEHIND,
         worst=_worst(facts),
@@ -333,15 +333,15 @@ def _eyes(reading: Reading, snapshot: Snapshot) -> list[tuple[str, ...]]:
     return rows
 
 
-def _groups(reading: Reading) -> list[tuple[str, list[tuple[str, str, str, str]]]]:
+def _groups(reading: Reading, diagnosis: Diagnosis) -> list[tuple[str, list[tuple[str, str, str, str]]]]:
     """Every known figure by its group: label, value, interval, definition."""
     groups = []
-    for group in figure_groups(reading):
+    for group in figure_groups(reading, diagnosis.intervals):
         rows = []
         for figure in group.figures:
             if figure.label.startswith("… 95 %"):
                 continue
-            interval = ""
+            interval = figure.interval
             if figure.label == "Bit error rate" and reading.ber_low is not None and reading.ber_high is not None:
                 interval = rate_interval(reading.ber_low, reading.ber_high)
             rows.append((figure.label, figure.value, interval, definition_of(figure.label)))

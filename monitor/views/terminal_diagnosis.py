@@ -124,14 +124,17 @@ def _draw_errors(
     figures = error_figures(reading, diagnosis)
     rows = height - len(figures) - 2
     if diagnosis.over_time is not None and diagnosis.over_time.at.size > 1 and rows >= 3:
-        _draw_curve(sheet, inks, diagnosis.over_time, x, y, width, rows)
+        target = diagnosis.jitter.at_ber if diagnosis.jitter is not None else None
+        _draw_curve(sheet, inks, diagnosis.over_time, decades([diagnosis.over_time], target), x, y, width, rows)
         y += rows + 2
     draw_figures(sheet, inks, figures, x, y, width, height)
 
 
-def _draw_curve(sheet: Sheet, inks: Palette, curve: ErrorCurve, x: int, y: int, width: int, rows: int) -> None:
+def _draw_curve(
+    sheet: Sheet, inks: Palette, curve: ErrorCurve, axis: tuple[int, int], x: int, y: int, width: int, rows: int
+) -> None:
     """The error rate over the instant as bars from the axis' foot, and the instants under them."""
-    low, high = decades([curve], None)
+    low, high = axis
     gutter = 6
     plot = width - gutter
     at = np.linspace(float(curve.at[0]), float(curve.at[-1]), plot)

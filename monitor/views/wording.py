@@ -2,7 +2,7 @@
 
 import math
 import re
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 
 from dsp.reading import Budget, Reading
@@ -13,10 +13,11 @@ _LEAST_BER = 1e-18
 
 @dataclass(frozen=True, slots=True)
 class Figure:
-    """One line of the table."""
+    """One line of the table; ``interval``: its 95 % one in words, empty where none is known."""
 
     label: str
     value: str
+    interval: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,9 +76,28 @@ def _usable(value: float | None) -> bool:
     return value is not None and math.isfinite(value)
 
 
-def _one(label: str, value: float | None, write: Callable[[float], str]) -> Iterator[Figure]:
-    if value is not None and math.isfinite(value):
-        yield Figure(label, write(value))
+@dataclass(frozen=True, slots=True)
+class _Known:
+    """A reading with the intervals of its figures by name."""
+
+    reading: Reading
+    intervals: Mapping[str, tuple[float, float]]
+
+    def line(self, label: str, key: str, write: Callable[[float], str]) -> Iterator[Figure]:
+        value = getattr(self.reading, key)
+        if value is None or not math.isfinite(value):
+            return
+        low, high = self.intervals.get(key, (math.nan, math.nan))
+        known = math.isfinite(low) and math.isfinite(high)
+        yield Figure(label, write(value), _between(write(low), write(high)) if known else "")
+
+
+def _between(low: str, high: str) -> str:
+    """Two figures as an interval, their unit once; one where both read alike and say a bound."""
+    if low == high and low.startswith("below"):
+        return low
+    start, _, unit = low.partition(" ")
+    return f"{start if unit and high.endswith(f' {unit}') and not unit.startswith('×') else low} to {high}"
 
 
 def _two(
@@ -92,61 +112,65 @@ def _unit(digits: int, unit: str, *, sign: bool = False) -> Callable[[float], st
     return lambda value: f"{number(value, digits)} {unit}"
 
 
-def _eye(reading: Reading) -> Iterator[Figure]:
-    yield from _one("Width", reading.width_ui, _unit(3, "UI"))
-    yield from _one("Noise margin", reading.noise_margin_db, _unit(1, "dB"))
-    yield from _one("Opening at target rate", reading.opening_at_ber_pct, _unit(1, "%"))
-    yield from _one("Closure", reading.closure_db, _unit(1, "dB"))
-    yield from _one("Level thickness", reading.level_rms_pct, _unit(1, "% rms"))
-    yield from _one("Level linearity", reading.level_linearity, lambda value: plain(value, 3))
-    yield from _one("Best instant", reading.best_instant_ui, _unit(3, "UI", sign=True))
-    tolerance = reading.timing_tolerance_ui
+def _eye(known: _Known) -> Iterator[Figure]:
+    yield from known.line("Width", "width_ui", _unit(3, "UI"))
+    yield from known.line("Noise margin", "noise_margin_db", _unit(1, "dB"))
+    yield from known.line("Opening at target rate", "opening_at_ber_pct", _unit(1, "%"))
+    yield from known.line("Closure", "closure_db", _unit(1, "dB"))
+    yield from known.line("Level thickness", "level_rms_pct", _unit(1, "% rms"))
+    yield from known.line("Level linearity", "level_linearity", lambda value: plain(value, 3))
+    yield from known.line("Best instant", "best_instant_ui", _unit(3, "UI", sign=True))
+    tolerance = known.reading.timing_tolerance_ui
     if tolerance is not None:
         yield from _two("1 dB worse at", *tolerance, lambda early, late: f"{signed(early, 2)}, {signed(late, 2)} UI")
-    yield from _one("Timing slope", reading.timing_slope_pct_per_ui, _unit(0, "%/UI"))
-    equaliser = reading.equaliser
+    yield from known.line("Timing slope", "timing_slope_pct_per_ui", _unit(0, "%/UI"))
+    equaliser = known.reading.equaliser
     if equaliser is not None:
-        yield from _one(f"Equalised, {equaliser.taps} taps", equaliser.opening_pct, _unit(1, "%"))
+        yield Figure(f"Equalised, {equaliser.taps} taps", _unit(1, "%")(equaliser.opening_pct))
 
 
-def _crossings(reading: Reading) -> Iterator[Figure]:
-    yield from _one("Spread", reading.crossing_rms_ui, _unit(3, "UI rms"))
-    yield from _one("Peak to peak", reading.crossing_pp_ui, _unit(3, "UI"))
-    yield from _one("Pattern part", reading.crossing_pattern_pp_ui, _unit(3, "UI"))
-    yield from _one("Random part", reading.crossing_random_rms_ui, _unit(3, "UI rms"))
-    yield from _one("Duty-cycle distortion", reading.dcd_ui, _unit(3, "UI", sign=True))
-    yield from _one("Rise 20 to 80 %", reading.rise_20_80_ui, _unit(3, "UI"))
-    yield from _one("Periodic jitter", reading.periodic_jitter_ui, _unit(3, "UI"))
-    yield from _one("… at", reading.periodic_jitter_hz, _unit(1, "Hz"))
+def _crossings(known: _Known) -> Iterator[Figure]:
+    yield from known.line("Spread", "crossing_rms_ui", _unit(3, "UI rms"))
+    yield from known.line("Peak to peak", "crossing_pp_ui", _unit(3, "UI"))
+    yield from known.line("Pattern part", "crossing_pattern_pp_ui", _unit(3, "UI"))
+    yield from known.line("Random part", "crossing_random_rms_ui", _unit(3, "UI rms"))
+    yield from known.line("Duty-cycle distortion", "dcd_ui", _unit(3, "UI", sign=True))
+    yield from known.line("Rise 20 to 80 %", "rise_20_80_ui", _unit(3, "UI"))
+    yield from known.line("Periodic jitter", "periodic_jitter_ui", _unit(3, "UI"))
+    yield from known.line("… at", "periodic_jitter_hz", _unit(1, "Hz"))
 
 
-def _errors(reading: Reading) -> Iterator[Figure]:
-    yield from _one("SNR", reading.snr_db, _unit(1, "dB"))
-    yield from _one("MER", reading.mer_db, _unit(1, "dB"))
-    yield from _one("EVM", reading.evm_pct, _unit(1, "% rms"))
-    yield from _one("Q", reading.q, lambda value: plain(value, 2))
-    yield from _one("Bit error rate", reading.ber, power_of_ten)
-    yield from _one("… 95 % from", reading.ber_low, power_of_ten)
-    yield from _one("… 95 % to", reading.ber_high, power_of_ten)
+def _errors(known: _Known) -> Iterator[Figure]:
+    yield from known.line("SNR", "snr_db", _unit(1, "dB"))
+    yield from known.line("MER", "mer_db", _unit(1, "dB"))
+    yield from known.line("EVM", "evm_pct", _unit(1, "% rms"))
+    yield from known.line("Q", "q", lambda value: plain(value, 2))
+    yield from known.line("Bit error rate", "ber", power_of_ten)
+    yield from known.line("… 95 % from", "ber_low", power_of_ten)
+    yield from known.line("… 95 % to", "ber_high", power_of_ten)
 
 
-def _clock(reading: Reading) -> Iterator[Figure]:
-    yield from _one("Clock offset", reading.clock_ppm, _unit(1, "ppm", sign=True))
-    yield from _one("Clock jitter", reading.jitter_rms_ui, _unit(4, "UI rms"))
-    yield from _one("Carrier", reading.carrier_hz, _unit(1, "Hz", sign=True))
-    yield from _one("Phase jitter", reading.phase_rms_deg, lambda value: f"{plain(value, 2)}° rms")
-    yield from _one("I/Q gain", reading.iq_gain_db, _unit(2, "dB", sign=True))
-    yield from _one("I/Q skew", reading.iq_skew_deg, lambda value: f"{signed(value, 2)}°")
-    yield from _one("DC offset", reading.dc_pct, _unit(1, "%", sign=True))
+def _clock(known: _Known) -> Iterator[Figure]:
+    yield from known.line("Clock offset", "clock_ppm", _unit(1, "ppm", sign=True))
+    yield from known.line("Clock jitter", "jitter_rms_ui", _unit(4, "UI rms"))
+    yield from known.line("Carrier", "carrier_hz", _unit(1, "Hz", sign=True))
+    yield from known.line("Phase jitter", "phase_rms_deg", lambda value: f"{plain(value, 2)}° rms")
+    yield from known.line("I/Q gain", "iq_gain_db", _unit(2, "dB", sign=True))
+    yield from known.line("I/Q skew", "iq_skew_deg", lambda value: f"{signed(value, 2)}°")
+    yield from known.line("DC offset", "dc_pct", _unit(1, "%", sign=True))
 
 
-def figure_groups(reading: Reading) -> tuple[Group, ...]:
-    """Every known figure but the opening, its interval, the symbols, the budget and the verdict; no empty group."""
+def figure_groups(reading: Reading, intervals: Mapping[str, tuple[float, float]] | None = None) -> tuple[Group, ...]:
+    """Every known figure but the opening, its interval, the symbols, the budget and the verdict; no empty group.
+
+    ``intervals``: 95 % ones by the figures' names, as a diagnosis has them.
+    """
+    known = _Known(reading, intervals or {})
     groups = (
-        Group("Eye", tuple(_eye(reading))),
-        Group("Noise and errors", tuple(_errors(reading))),
-        Group("Crossings", tuple(_crossings(reading))),
-        Group("Clock" if reading.carrier_hz is None else "Clock and carrier", tuple(_clock(reading))),
+        Group("Eye", tuple(_eye(known))),
+        Group("Noise and errors", tuple(_errors(known))),
+        Group("Crossings", tuple(_crossings(known))),
+        Group("Clock" if reading.carrier_hz is None else "Clock and carrier", tuple(_clock(known))),
     )
     return tuple(group for group in groups if group.figures)
 

@@ -145,6 +145,13 @@ def test_numbers_are_those_of_the_reading(busy):
     assert "41.2 % 88.3 %" in page.text
 
 
+def test_figures_have_the_intervals_that_are_known(busy):
+    diagnosis = replace(busy.snapshot.diagnosis, intervals={"snr_db": (24.2, 25.0), "clock_ppm": (-12.6, -12.2)})
+    page = Page(render(watched(replace(busy, snapshot=replace(busy.snapshot, diagnosis=diagnosis)))))
+    assert "SNR 24.6 dB 24.2 to 25.0 dB" in page.text
+    assert "Clock offset −12.4 ppm −12.6 to −12.2 ppm" in page.text
+
+
 def test_the_balance_adds_up_on_the_page(busy):
     html = render(watched(busy))
     body = html[html.index("<h2>What closes the eye</h2>") : html.index("<h2>What would open it</h2>")]

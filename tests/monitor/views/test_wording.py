@@ -91,3 +91,20 @@ def test_an_interval_that_lies_below_all_that_is_told_is_told_once():
 def test_at_a_glance_causes_that_take_nothing_are_left_out():
     rows = telling_rows(Budget(isi_pct=3.0, noise_pct=0.04, iq_pct=-0.2, unexplained_pct=0.0))
     assert rows == [("Neighbouring symbols", 3.0), ("I/Q imbalance", -0.2)]
+
+
+def test_a_figure_is_told_with_its_interval_and_the_unit_once():
+    reading = Reading(1000, snr_db=27.69, q=5.04, phase_rms_deg=0.747, ber=1e-7)
+    intervals = {"snr_db": (27.6, 27.78), "q": (5.02, 5.06), "phase_rms_deg": (0.65, 0.84), "ber": (1e-8, 2e-7)}
+    told = {f.label: f.interval for group in figure_groups(reading, intervals) for f in group.figures}
+    assert told == {
+        "SNR": "27.6 to 27.8 dB",
+        "Q": "5.02 to 5.06",
+        "Phase jitter": "0.65° to 0.84° rms",
+        "Bit error rate": "1.0 × 10⁻⁸ to 2.0 × 10⁻⁷",
+    }
+    assert not [
+        f for group in figure_groups(reading, {"snr_db": (float("nan"), 2.0)}) for f in group.figures if f.interval
+    ]
+    below = figure_groups(Reading(1000, ber=1e-30), {"ber": (1e-40, 1e-25)})[0].figures[0]
+    assert below.interval == "below 10⁻¹⁸"
