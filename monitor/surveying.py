@@ -180,7 +180,7 @@ def _measure_all(links: Sequence[LinkArguments], names: Sequence[str], jobs: int
                 bar.advance(len(rows))
         finally:
             stop.set()
-            pool.shutdown(wait=False, cancel_futures=True)
+            pool.shutdown(cancel_futures=True)
     return [rows[number] for number in sorted(rows)]
 
 
