@@ -387,6 +387,9 @@ class Figures:
 
     def reading(self, *, whole: bool = True) -> Reading:
         """Every figure that can be known from these sums; without ``whole`` less what takes long: equaliser, intervals, budget."""
+        return self._whole if whole else self._short()
+
+    def _short(self) -> Reading:
         opening = self.opening_pct()
         if opening is None:
             return Reading(symbols=self._sums.symbols)
@@ -395,7 +398,7 @@ class Figures:
         eyes = self._eyes()
         widths = [eye.width_ui for eye in eyes if eye.width_ui is not None]
         periodic_ui, periodic_hz = self._periodic_jitter()
-        reading = Reading(
+        return Reading(
             symbols=self._sums.symbols,
             eyes=eyes,
             width_ui=min(widths) if len(widths) == len(eyes) else None,
@@ -406,12 +409,15 @@ class Figures:
             rise_20_80_ui=rise_time(self._sums),
             periodic_jitter_ui=periodic_ui,
             periodic_jitter_hz=periodic_hz,
-            budget=self.budget() if whole else None,
             **self._numbers,
         )
-        if not whole:
+
+    @cached_property
+    def _whole(self) -> Reading:
+        reading = self._short()
+        if reading.opening_pct is None:
             return reading
-        reading = replace(reading, equaliser=self._equaliser())
+        reading = replace(reading, budget=self.budget(), equaliser=self._equaliser())
         told = sentences(reading, self._evidence)
         opening_range, ber_range = (self.interval(key) or (None, None) for key in ("opening_pct", "ber"))
         return replace(
