@@ -158,7 +158,9 @@ def draw_balance(canvas: Canvas, box: Box, reading: Reading, budget: Budget) -> 
         bold = label == largest
         a, b = sorted((plot.x(float(ends[number])), plot.x(float(ends[number + 1]))))
         bar = Box(round(a), y + canvas.px(4), max(1, round(b) - round(a)), pitch - canvas.px(8))
-        if label == UNEXPLAINED:
+        if abs(points) < 0.05:
+            pass  # told as 0.0: no bar
+        elif label == UNEXPLAINED:
             canvas.frame(Box(bar.x + 1, bar.y + 1, max(1, bar.width - 2), bar.height - 2), theme.edge)
         else:
             canvas.fill(bar, theme.edge if first else theme.accent if bold else theme.level_even)

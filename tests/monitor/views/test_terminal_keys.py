@@ -27,6 +27,8 @@ def keys_of(*parts):
         (b"\x1bOA", "Up"),
         (b"\x1b[B", "Down"),
         (b"\x1bOP", "F1"),
+        (b"\x1b[5~", "PageUp"),
+        (b"\x1b[6~", "PageDown"),
         (b"\x1b[11~", "F1"),
         # the Linux console, console_codes(4); from memory
         (b"\x1b[[A", "F1"),
