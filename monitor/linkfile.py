@@ -142,7 +142,7 @@ def _one_line(text: str) -> str:
 
 def _toml(value: str | float) -> str:
     if not isinstance(value, str):
-        return repr(value) if isinstance(value, int) or value != int(value) or abs(value) >= 1e15 else f"{value:.1f}"
+        return repr(value if isinstance(value, int) else float(value))  # numpy's numbers write themselves otherwise
     escaped = "".join(
         c if c.isprintable() and c not in '"\\' else f"\\{c}" if c in '"\\' else f"\\U{ord(c):08x}" for c in value
     )

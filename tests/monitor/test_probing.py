@@ -157,6 +157,13 @@ def test_a_rate_next_to_a_round_or_usual_one_is_taken_for_it(measured, nominal):
     assert nominal_rate(measured)[0] == pytest.approx(nominal, rel=1e-12)
 
 
+@pytest.mark.parametrize("number", [0.0, 9600.0, -12.5, 1e-5, 1e16, 1625e3 / 6, np.float64(64974.3)])
+def test_any_number_survives_the_file(tmp_path, number):
+    path = tmp_path / "l.toml"
+    path.write_text(link_file_text(LinkOptions(carrier_hz=number)))
+    assert read_link_file(path).link.carrier_hz == number
+
+
 @pytest.mark.parametrize("name", ['a "quoted" \\ name', "tab\there", "line\nbreak", "émeraude 海", "\x7f"])
 def test_any_name_survives_the_file(tmp_path, name):
     path = tmp_path / "l.toml"
