@@ -16,7 +16,7 @@ from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
 from dsp.figures import Context, Figures, window_opening
-from dsp.identify import Identified, Wanted, identify, occupied_band, placement
+from dsp.identify import Band, Identified, Wanted, band_about, identify, occupied_band, placement
 from dsp.link import SCHEMES, Link
 from dsp.picture import EyeImage
 from dsp.pulses import Pulse
@@ -251,7 +251,7 @@ def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Ide
     if wanted.scheme is not None and wanted.symbol_rate_hz is not None and wanted.pulse is not None:
         link = Link(wanted.scheme, sample_rate_hz, wanted.symbol_rate_hz, wanted.pulse, wanted.carrier_hz, wanted.name)
         is_complex = bool(np.iscomplexobj(samples))
-        band = occupied_band(samples) if link.scheme.kind != "baseband" else None
+        band = _own_band(samples, link) if link.scheme.kind != "baseband" else None
         centre, half = placement(link, band, is_complex=is_complex) if band is not None else (0.0, None)
         found = ("carrier_hz",) if wanted.carrier_hz is None and link.scheme.kind != "baseband" else ()
         return Identified(link, centre * sample_rate_hz, None if half is None else half * sample_rate_hz, found)
@@ -259,6 +259,16 @@ def settle_link(head: list[Block], sample_rate_hz: float, wanted: Wanted) -> Ide
         # refuse what cannot be measured before looking for it
         Link(SCHEMES["qpsk"], sample_rate_hz, wanted.symbol_rate_hz, Pulse("none"), wanted.carrier_hz)
     return identify(samples, sample_rate_hz, wanted)
+
+
+def _own_band(samples: Samples, link: Link) -> Band | None:
+    """What the link occupies: of a frequency link whose carrier is given its own band alone, others may lie beside it."""
+    if link.scheme.kind == "frequency" and link.carrier_hz is not None:
+        own = band_about(samples, link.carrier_hz / link.sample_rate_hz)
+        # narrower than a link can be, it is one tone of several
+        if own is not None and own.half * link.samples_per_symbol > 0.25:
+            return own
+    return occupied_band(samples)
 
 
 def _unbroken(blocks: list[Block]) -> Samples:

@@ -3,7 +3,7 @@
 from dsp.acquisition import NotFound
 from dsp.identify.findings import Band, Findings, FoundLink, Guess, Identified, Wanted
 from dsp.identify.search import identify, placement
-from dsp.identify.spectrum import occupied_band
+from dsp.identify.spectrum import band_about, occupied_band
 from dsp.identify.survey import survey_links
 
 __all__ = [
@@ -14,6 +14,7 @@ __all__ = [
     "Identified",
     "NotFound",
     "Wanted",
+    "band_about",
     "identify",
     "occupied_band",
     "placement",

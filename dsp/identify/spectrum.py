@@ -196,6 +196,14 @@ def segments(spectrum: Spectrum, most: int = 6, depth: float = _DEPTH) -> list[B
     return found
 
 
+def band_about(samples: Samples, frequency: float) -> Band | None:
+    """The stretch of the spectrum about a frequency (cycles a sample) that stands above the floor; None where nothing does."""
+    spectrum = spectrum_of(samples)
+    if spectrum is None:
+        return None
+    return next((band for band in segments(spectrum) if abs(band.centre - frequency) < band.half), None)
+
+
 def occupied_band(samples: Samples) -> Band | None:
     """The band that holds 99 % of the power above the spectrum's floor; None for silence."""
     if samples.size < 256:

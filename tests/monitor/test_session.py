@@ -13,6 +13,7 @@ from dsp.errors import DspError
 from dsp.identify import Wanted
 from dsp.link import find_scheme
 from dsp.pulses import Pulse
+from dsp.transmitter import TransmitSpec, transmit
 from monitor.document import document
 from monitor.errors import InputError
 from monitor.session import run, settle_link
@@ -213,3 +214,26 @@ def test_what_is_looked_at_has_no_gap_in_it(monkeypatch):
         Wanted(),
     )
     assert given == [2000]
+
+
+def test_a_frequency_link_with_a_given_carrier_is_measured_beside_a_stronger_neighbour():
+    def sent(scheme, pulse, seed, symbols):
+        spec = TransmitSpec(
+            scheme=scheme,
+            symbol_rate_hz=4000.0,
+            sample_rate_hz=RATE,
+            pulse=pulse,
+            symbols=symbols,
+            seed=seed,
+            snr_db=25.0,
+        )
+        return transmit(spec).samples
+
+    gmsk, neighbour = sent("gmsk", Pulse("gauss", 0.5), 2, 8000), sent("qpsk", Pulse("rrc", 0.35), 3, 8100)
+    at = np.arange(gmsk.size) / RATE
+    both = gmsk * np.exp(2j * np.pi * 9000 * at) + 3.0 * neighbour[: gmsk.size] * np.exp(-2j * np.pi * 5000 * at)
+    wanted = Wanted(find_scheme("gmsk"), 4000.0, Pulse("gauss", 0.5), 9000.0)
+    outcome = run(InMemory(*blocks_of(both.astype(np.complex64))), wanted, ChainOptions())
+    assert outcome.measured, outcome.reason
+    assert outcome.locked_pct > 98
+    assert outcome.reading.opening_pct > 0
