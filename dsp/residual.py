@@ -404,7 +404,7 @@ def pattern_means(
     variance = np.zeros(table.shape[0])
     for rail, (count, total) in enumerate(np.moveaxis(table, 2, 1)):
         n, used = float(count.sum()), int((count > 0).sum())
-        if n < 2 * used:
+        if n < max(2 * used, 1):
             continue
         mean = total / np.maximum(count, 1.0)
         explained = float(count @ mean**2)

@@ -167,3 +167,9 @@ def test_the_constellation_counts_every_symbol_where_it_stands():
 
 def test_too_few_symbols_are_not_split():
     assert split_of("qpsk", symbols=1500, snr_db=20.0) is None
+
+
+def test_where_no_pattern_was_seen_there_are_no_means():
+    means, variance = pattern_means(np.zeros((2, 4, 2)), np.zeros(2))
+    assert not means.any()
+    assert not variance.any()
