@@ -323,6 +323,8 @@ def split(
     tone = find_tone(sums.power, sums.frames, real=rails == 1)
     single = _single(products, rails, tone) if smooth else 0.0
     common, turn = _shared(products, scheme, np.sum(slopes**4, axis=1), single)
+    # no jitter is more like itself a symbol on than at once: where patterns hide it, it shows there
+    turn = max(turn, _turn_kept(products)) if rails == 2 else turn
     deviations, pattern = pattern_means(sums.patterns, sums.square)
     return Split(
         random, (common + single) * steepness, turn * others, common, single, turn, pattern, deviations, tone
@@ -365,6 +367,20 @@ def _shared(
         estimate = inner @ right[use]
         result[use] = np.maximum(_clear(estimate, np.diag(inner)), 0.0)
     return float(result[0]), float(result[1])
+
+
+def _turn_kept(products: NDArray[np.float64]) -> float:
+    """Covariance of the carrier's phase jitter from symbol to symbol: both rails' least-squares fits at lag 1."""
+    weight = total = 0.0
+    for row, (a, b, lag) in zip(products, pairs(2), strict=True):
+        if lag != 1 or a != b:
+            continue
+        gram, cross, square = _normal(row)
+        inner = np.linalg.inv(gram + 1e-9 * np.eye(3) * gram[0, 0])
+        noise = max(square / gram[0, 0], 1e-18) * float(inner[2, 2])
+        weight += 1.0 / noise
+        total += float(inner[2] @ cross) / noise
+    return max(float(_clear(np.asarray([total / weight]), np.asarray([1.0 / weight]))[0]), 0.0)
 
 
 def _single(products: NDArray[np.float64], rails: int, tone: Tone | None) -> float:
