@@ -10,7 +10,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import cho_factor, cho_solve
 from scipy.signal import oaconvolve
 
 from dsp.eye import EARLIEST, HALO, LAGS, LATEST
@@ -106,7 +105,7 @@ class Limiter:
             for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
                 self._lagged[rail * LAGS + i] = self._decided[rail, self._core - lag]
         gram = (self._lagged @ self._lagged.T).astype(np.float64)
-        self._factor = cho_factor(gram + np.eye(len(gram)) * 1e-7 * np.trace(gram) / len(gram), check_finite=False)
+        self._gram = gram + np.eye(len(gram)) * 1e-6 * np.trace(gram) / len(gram)
         wave = np.concatenate([[wave[0, HALO:-HALO] for wave in stretch.waves] for stretch in kept], axis=1)
         self.raw = raw_response(response, matched)
         reach = float(np.abs(self.raw).sum(axis=(1, 2)).max()) * max(scheme.rail_levels)
@@ -205,7 +204,7 @@ class Limiter:
     def _linear(self, waves: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Least-squares weights of the symbols for each wave ``(m, n)``, ``(k, m)``, and what they leave over, ``(m, n)``."""
         right = (self._lagged @ waves.T.astype(np.float32)).astype(np.float64)
-        weights = cho_solve(self._factor, right, check_finite=False)
+        weights = np.linalg.solve(self._gram, right)
         return weights, waves - weights.T.astype(np.float32) @ self._lagged
 
     def _weighted(self, features: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -10,7 +10,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import cho_factor, cho_solve
 from scipy.ndimage import median_filter
 from scipy.special import gammainccinv, gammaincinv
 
@@ -190,9 +189,10 @@ class ResidualMeter:
         """The rows that make value, slopes after and before, and the other rail's value of the regressors, ``(rails * parts, k)``."""
         k = self._gram.shape[0]
         rails = self._scheme.rails
-        ridge = np.eye(k) * (1e-7 * np.trace(self._gram) / k + 1e-12)
+        # above what single precision leaves of a repeating pattern's missing directions
+        ridge = np.eye(k) * (1e-6 * np.trace(self._gram) / k + 1e-12)
         right = np.moveaxis(self._cross, 1, 0).reshape(k, -1)
-        solution = cho_solve(cho_factor(self._gram + ridge), right, check_finite=False).reshape(k, rails, -1)
+        solution = np.linalg.solve(self._gram + ridge, right).reshape(k, rails, -1)
         a, b, here, d, e = (self._at(solution, step) for step in self._steps)
         step_ui = (self._steps[3] - self._steps[2]) / self._phases
         if self._phases <= 16:
@@ -363,7 +363,7 @@ def _shared(
     use[1] &= rails == 2
     result = np.zeros(2)
     if use.any():
-        inner = np.linalg.inv(matrix[np.ix_(use, use)])
+        inner = np.linalg.pinv(matrix[np.ix_(use, use)], hermitian=True)
         estimate = inner @ right[use]
         result[use] = np.maximum(_clear(estimate, np.diag(inner)), 0.0)
     return float(result[0]), float(result[1])
@@ -376,7 +376,7 @@ def _turn_kept(products: NDArray[np.float64]) -> float:
         if lag != 1 or a != b:
             continue
         gram, cross, square = _normal(row)
-        inner = np.linalg.inv(gram + 1e-9 * np.eye(3) * gram[0, 0])
+        inner = np.linalg.pinv(gram + 1e-9 * np.eye(3) * gram[0, 0], hermitian=True)
         noise = max(square / gram[0, 0], 1e-18) * float(inner[2, 2])
         weight += 1.0 / noise
         total += float(inner[2] @ cross) / noise

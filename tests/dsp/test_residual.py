@@ -5,6 +5,7 @@ import pytest
 
 from dsp.figures import Figures
 from dsp.link import find_scheme
+from dsp.pulses import raised_cosine
 from dsp.residual import FRAME, ResidualSums, Tone, find_tone, pairs, pattern_means, products_of
 from tests.dsp.streams import link_of, run, send
 
@@ -173,3 +174,19 @@ def test_where_no_pattern_was_seen_there_are_no_means():
     means, variance = pattern_means(np.zeros((2, 4, 2)), np.zeros(2))
     assert not means.any()
     assert not variance.any()
+
+
+@pytest.mark.parametrize("idle", [(1.0, -1.0), (1.0, 1.0, -1.0, -1.0), (1.0, 1.0, 1.0, -1.0)], ids=str)
+def test_a_link_that_falls_into_a_repeating_pattern_is_still_read(idle):
+    rng = np.random.default_rng(11)
+    data = np.where(rng.integers(0, 2, 4000) > 0, 1.0, -1.0)
+    symbols = np.concatenate((data, np.resize(idle, 40_000)))
+    impulses = np.zeros(4 * symbols.size)
+    impulses[::4] = symbols
+    wave = np.convolve(impulses, raised_cosine(np.arange(-32, 33) / 4, 0.5), mode="same")
+    samples = (0.3 * wave + 0.01 * rng.standard_normal(wave.size)).astype(np.float32)
+    chain = run(link_of("pam2", 4.0, "rc:0.5"), samples)
+    reading = Figures(chain.total, chain.context()).reading()
+    assert reading.opening_pct > 50.0
+    assert reading.budget is not None
+    assert all(np.isfinite(part) for part in (reading.budget.noise_pct, reading.budget.timing_pct))
