@@ -40,6 +40,8 @@ class LinkModel:
         What of ``turn`` is the carrier loop's answer to ISI.
     limiter, bend
         A bend of the amplitude and what it does to this link; None if there is none.
+    uneven
+        Variance of each level's samples beyond the mean of all, ``(rails, levels)``.
     gains, cursors
         One level unit of each rail against the mean of all, and in the wave's level units, ``(rails,)``.
     """
@@ -58,6 +60,7 @@ class LinkModel:
     turn: float
     turn_by_isi: float
     deviations: NDArray[np.float64]
+    uneven: NDArray[np.float64]
     gains: NDArray[np.float64]
     cursors: NDArray[np.float64]
     limiter: Limiter | None
@@ -69,18 +72,20 @@ class LinkModel:
 
     def opening(self, tail: float) -> float:
         """Least opening of all eyes in per cent when a share ``tail`` of each level's traces may lie outside."""
+        return float(self.openings(tail).min())
+
+    def openings(self, tail: float) -> NDArray[np.float64]:
+        """The same of every eye, shape ``(rails, levels - 1)``."""
         nominal = np.asarray(self.scheme.rail_levels)
-        spacing = np.diff(nominal)
-        least = math.inf
+        result = np.empty((self.scheme.rails, nominal.size - 1))
         for rail in range(self.scheme.rails):
             reach = self._reach(rail)
             low = [one.quantile(tail) for one in reach]
             high = [-one.mirrored().quantile(tail) for one in reach]
             if len(reach) == 1:
                 low, high = low * nominal.size, high * nominal.size
-            height = self.levels[rail, 1:] + low[1:] - self.levels[rail, :-1] - high[:-1]
-            least = min(least, float((height / spacing).min()))
-        return 100.0 * least
+            result[rail] = self.levels[rail, 1:] + low[1:] - self.levels[rail, :-1] - high[:-1]
+        return 100.0 * result / np.diff(nominal)
 
     def decisions(self, worth: NDArray[np.float64]) -> Decisions:
         """Where samples lie for whoever decides in other level units: of these, ``worth`` ``(rails,)`` is one."""
@@ -94,6 +99,14 @@ class LinkModel:
 
     def _reach(self, rail: int) -> list[Spread]:
         """How each level's samples are spread about its mean; one for all where that is the same."""
+        reach = self._even_reach(rail)
+        if self.bend is not None or not self.uneven[rail].any():
+            return reach
+        each = reach * (self.scheme.levels // len(reach))
+        return [one.wider(float(more)) for one, more in zip(each, self.uneven[rail], strict=True)]
+
+    def _even_reach(self, rail: int) -> list[Spread]:
+        """The same with noise that is alike at all levels."""
         nominal = np.asarray(self.scheme.rail_levels)
         taps, own = self.taps[rail], self.own(rail)
         jitter = (
@@ -167,7 +180,10 @@ class LinkModel:
     def without_random(self) -> "LinkModel":
         """No noise, no tone, no jitter but what other causes make."""
         nothing = np.zeros_like(self.additive)
-        return replace(self, additive=nothing, noise=nothing, tone=nothing, common=0.0, turn=self.turn_by_isi)
+        uneven = np.zeros_like(self.uneven)
+        return replace(
+            self, additive=nothing, noise=nothing, tone=nothing, uneven=uneven, common=0.0, turn=self.turn_by_isi
+        )
 
     def without_tone(self) -> "LinkModel":
         """No interfering tone."""
@@ -204,6 +220,7 @@ class LinkModel:
             compressed=np.broadcast_to(nominal, self.compressed.shape),
             limiter=None,
             bend=None,
+            uneven=np.zeros_like(self.uneven),
         )
         if self.bend is None:
             return even
@@ -226,6 +243,7 @@ def link_model(
     shares: NDArray[np.float64],
     levels: NDArray[np.float64],
     noise: NDArray[np.float64],
+    uneven: NDArray[np.float64],
     units: NDArray[np.float64],
     split: Split | None,
     limiter: Limiter | None,
@@ -234,7 +252,8 @@ def link_model(
     """The link at ``ui`` from its pattern response.
 
     ``shares`` ``(levels,)``: how often each level is sent; ``levels`` ``(rails, levels)`` and ``noise`` ``(rails,)``, all that no linear
-    response explains, in level units; ``units`` ``(rails,)``: one level unit of each rail in the signal's own unit;
+    response explains, in level units; ``uneven`` ``(rails, levels)`` what a level has of it beyond the others; ``units`` ``(rails,)``:
+    one level unit of each rail in the signal's own unit;
     ``carrier_bandwidth``: BnT of the loop, 0 where there is none.
     """
     rails = scheme.rails
@@ -270,7 +289,7 @@ def link_model(
     answered = 2.0 * carrier_bandwidth * float(np.mean(np.sum(others**2, axis=1))) * energy / scheme.symbol_energy()
     return LinkModel(
         scheme, shares, levels, compressed, taps, late, early, additive, plain, tone, common, turn, min(answered, turn), deviations,
-        gains / np.exp(np.mean(np.log(gains))), cursors, limiter, bend,
+        uneven, gains / np.exp(np.mean(np.log(gains))), cursors, limiter, bend,
     )  # fmt: skip
 
 

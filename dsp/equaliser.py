@@ -256,8 +256,8 @@ def _inner_size(parts: list[_Part]) -> int:
 
 def receive_taps(
     trial: EqualiserTrial, link: Link, *, complex_in: bool
-) -> NDArray[np.float64] | NDArray[np.complex128]:
-    """The link's receive filter and a linear equaliser as one filter, for a link whose pulse is ``taps``, ``(n,)``.
+) -> tuple[NDArray[np.float64] | NDArray[np.complex128], float]:
+    """The link's receive filter and a linear equaliser as one filter for a link whose pulse is ``taps``: ``(n,)``, and taps a symbol.
 
     At the rate at which such a link is filtered. Real where the trial's taps are. Raises DspError where the samples are too few a
     symbol.
@@ -276,6 +276,5 @@ def receive_taps(
     window = np.where(np.abs(distance) < _SINC, np.cos(np.pi / 2 * distance / _SINC) ** 2, 0.0)
     equaliser = trial.taps @ (np.sinc(distance) * window)
     taps = np.convolve(receive_filter(link.pulse, front.sps), equaliser)
-    return (
-        taps if np.iscomplexobj(taps) and np.abs(taps.imag).max() > 1e-9 * np.abs(taps).max() else np.asarray(taps.real)
-    )
+    imaginary = np.iscomplexobj(taps) and np.abs(taps.imag).max() > 1e-9 * np.abs(taps).max()
+    return (taps if imaginary else np.asarray(taps.real)), front.sps

@@ -135,6 +135,19 @@ class Decisions:
     spreads: tuple[tuple[Spread, ...], ...]
     bits: int
 
+    def openings(self, nominal: NDArray[np.float64], tail: float) -> NDArray[np.float64]:
+        """Openings in per cent of the ``nominal`` levels' spacing, a share ``tail`` of each level outside, ``(rails, levels - 1)``."""
+        result = np.empty((self.levels.shape[0], nominal.size - 1))
+        for rail, (levels, spreads) in enumerate(zip(self.levels, self.spreads, strict=True)):
+            # levels that are spread alike share one object
+            one = all(reach is spreads[0] for reach in spreads)
+            ends = [
+                (reach.quantile(tail), -reach.mirrored().quantile(tail)) for reach in (spreads[:1] if one else spreads)
+            ]
+            low, high = np.broadcast_to(ends, (nominal.size, 2)).T
+            result[rail] = levels[1:] + low[1:] - levels[:-1] - high[:-1]
+        return 100.0 * result / np.diff(nominal)
+
     def midpoints(self) -> NDArray[np.float64]:
         """Thresholds half-way between the levels, shape ``(rails, levels - 1)``."""
         return np.asarray(0.5 * (self.levels[:, 1:] + self.levels[:, :-1]))

@@ -17,7 +17,7 @@ from dsp.eye import COLUMNS, EyeSums
 from dsp.intervals import LEAST_STRETCHES, Estimate, jackknife
 from dsp.jitter import periodic_line, sample_response, split_jitter
 from dsp.limiter import RATE, Limiter, compression
-from dsp.mixture import Mixture, Spread, fit_mixture, spread
+from dsp.mixture import Mixture, Spread, fit_mixture, spread, tail_reach
 from dsp.openings import (
     between,
     corner,
@@ -74,6 +74,7 @@ class Figures:
     def __init__(self, sums: EyeSums, context: Context, *, like: "Figures | None" = None) -> None:
         self._sums = sums
         self._context = context
+        self._like = like
         self._scheme = sums.scheme
         self._nominal = np.asarray(sums.scheme.rail_levels)
         self._spacing = np.diff(self._nominal)
@@ -94,9 +95,13 @@ class Figures:
             return
         if like is not None:
             self._limiter = like._limiter
-            self._tails_counted, self._best, self._corner = like._tails_counted, like._best, like._corner
+            self._tails_counted = like._tails_counted
             if like._mixtures is not None:
                 self._fit_mixtures()
+            if self._counts_instant:
+                self._best, self._corner = like._best, like._corner
+            else:
+                self._best, self._corner = self._best_column()
             return
         errors = self._rough_error_rate()
         self._tails_counted = self._drawn >= FULL_CLASS and errors < _TAIL_WHOLE
@@ -170,11 +175,33 @@ class Figures:
 
     def _levels(self, rail: int) -> NDArray[np.float64]:
         """Level means in level units; the nominal ones where decisions are too often wrong to tell."""
-        if self._mixtures is not None:
+        if not self._levels_told:
             return self._nominal
         levels = (self._means[rail] - self._zero[rail]) / self._gain[rail]
         variance = (self._sigmas[rail] / self._gain[rail]) ** 2 / np.maximum(self._counts[rail], 1.0)
         return self._nominal + beyond_chance(levels - self._nominal, variance)
+
+    @cached_property
+    def _levels_told(self) -> bool:
+        """Whether decisions are right often enough to say where each level lies and how wide it is."""
+        if self._mixtures is None:
+            return True
+        half = 0.5 * float(self._spacing.min())
+        widest = max(
+            math.hypot(m.sigma / m.gain, math.sqrt(i)) for m, i in zip(self._mixtures, self._mixture_isi, strict=True)
+        )
+        return half > 2.3 * widest
+
+    def _uneven_noise(self, rail: int) -> NDArray[np.float64]:
+        """Variance that a level has beyond the mean of all, level units squared, ``(levels,)``; what decisions cut off allowed for."""
+        if self._scheme.levels < 3 or not self._levels_told:
+            return np.zeros(self._scheme.levels)
+        variance = (self._sigmas[rail] / self._gain[rail]) ** 2
+        gaps = np.concatenate(([np.inf], 0.5 * self._spacing, [np.inf])) / np.sqrt(variance.mean())
+        cut = [z * math.exp(-0.5 * z * z) / math.sqrt(2.0 * math.pi) if np.isfinite(z) else 0.0 for z in gaps.tolist()]
+        variance = variance / (1.0 - np.asarray(cut[1:]) - np.asarray(cut[:-1]))
+        shares = self._counts[rail] / self._counts[rail].sum()
+        return beyond_chance(variance - shares @ variance, 2.0 * variance**2 / np.maximum(self._counts[rail], 1.0))
 
     # -- the opening ---------------------------------------------------------------------------------------------------
 
@@ -185,17 +212,22 @@ class Figures:
         """
         start, stop = COLUMNS // 2, COLUMNS + COLUMNS // 2 + 1
         noise = float(self._noise(self._pattern.model(0.0)).max())
-        if self._tails_counted:
+        if self._counts_instant:
             section = self._ragged.min(axis=(0, 1))[start:stop]
-            chance = max(_QUANTILE_SPREAD * math.sqrt(2.0 * TAIL * noise / self._drawn), self._sums.rows.height)
+            chance = max(self._tail_chance(), self._sums.rows.height)
         else:
             if self._sums.phases < COLUMNS:
                 # a smooth wave has one peak: no need to look everywhere finely
                 coarse = range(start, stop, 4)
-                near = coarse[int(np.argmax([self._worst_case(_ui(column)) for column in coarse]))]
-                start, stop = max(near - 6, start), min(near + 7, stop)
-            section = np.asarray([self._worst_case(_ui(column)) for column in range(start, stop)])
-            chance = 3.0 * math.sqrt(noise / self._sums.symbols)
+                near = (
+                    round(self._like._best) if self._like is not None else coarse[int(np.argmax(self._course(coarse)))]
+                )
+                start, stop = max(near - 5, start), min(near + 6, stop)
+                section = self._course(range(start, stop))
+                chance = 1e-4  # the model's course is flat where it is flat
+            else:
+                section = np.asarray([self._worst_case(_ui(column)) for column in range(start, stop)])
+                chance = 3.0 * math.sqrt(noise / self._sums.symbols)
         top = int(np.argmax(section))
         first, last = plateau(section, top, 100.0 * chance / float(self._spacing.min()))
         sharp = corner(section, last) if last - first <= 4 else None
@@ -215,16 +247,45 @@ class Figures:
             return start + first + thin + vertex(-squares, thin), sharp
         return start + first + 0.5 * (left + right), sharp
 
-    def _worst_case(self, ui: float) -> float:
-        """Opening in per cent by peak distortion and noise: its course over time is that of the opening, and not ragged."""
-        model, at_decision = self._pattern.model(ui), self._pattern.model(0.0)
-        # near a corner what is left over is not noise but what sampling made of the corner
-        outer, z = float(self._nominal[-1]), 3.09 if self._sums.phases < COLUMNS else 0.0
-        least = math.inf
-        for rail, variance in enumerate(model.residual):
+    def _course(self, columns: range) -> NDArray[np.float64]:
+        """The opening's course over ``columns`` of a smooth wave, per cent, by the pattern model: near enough to find its peak."""
+        shares = self._counts.sum(axis=0) / self._counts.sum()
+        models = [self._pattern.model(_ui(column)) for column in columns]
+        at_decision = self._pattern.model(0.0)
+        noise = self._noise(at_decision)
+        least = np.full(len(models), math.inf)
+        for rail in range(self._scheme.rails):
             unit = max(at_decision.cursor(rail), 1e-9)
-            lost = 2.0 * (outer * float(np.abs(model.neighbours(rail)).sum()) + z * math.sqrt(float(variance)))
-            least = min(least, (model.cursor(rail) - lost / float(self._spacing.min())) / unit)
+            taps = np.asarray([model.neighbours(rail) for model in models]) / unit
+            # what is nowhere worth a hundredth of the noise's deviation cannot move the peak
+            taps = taps[:, np.abs(taps).max(axis=0) > 0.01 * math.sqrt(noise[rail])]
+            sigma = np.full(len(models), math.sqrt(noise[rail]))
+            reach = tail_reach(taps, self._nominal, shares, sigma, TAIL)
+            cursor = np.asarray([model.cursor(rail) for model in models]) / unit
+            least = np.minimum(least, cursor - 2.0 * reach / float(self._spacing.min()))
+        return 100.0 * least
+
+    @cached_property
+    def _counts_instant(self) -> bool:
+        """Whether the best instant is read off the raster: of a smooth wave the model knows it better than ragged tails do."""
+        tails = self._tails_counted if self._like is None else self._like._tails_counted
+        return tails and self._sums.phases == COLUMNS
+
+    def _tail_chance(self) -> float:
+        """Standard error of an opening whose tails are counted, level units."""
+        noise = float(self._noise(self._pattern.model(0.0)).max())
+        return _QUANTILE_SPREAD * math.sqrt(2.0 * TAIL * noise / self._drawn)
+
+    def _worst_case(self, ui: float) -> float:
+        """Opening in per cent by peak distortion: its course over time is that of the opening, and not ragged."""
+        model, at_decision = self._pattern.model(ui), self._pattern.model(0.0)
+        outer = float(self._nominal[-1])
+        least = math.inf
+        for rail in range(self._scheme.rails):
+            # near a corner what is left over is not noise but what sampling made of the corner
+            lost = 2.0 * outer * float(np.abs(model.neighbours(rail)).sum())
+            opening = (model.cursor(rail) - lost / float(self._spacing.min())) / max(at_decision.cursor(rail), 1e-9)
+            least = min(least, opening)
         return 100.0 * least
 
     @cached_property
@@ -239,10 +300,10 @@ class Figures:
     @cached_property
     def _openings(self) -> NDArray[np.float64]:
         """Of every eye at the best instant: counted where every level has enough traces for its tail, modelled otherwise."""
-        best, column = _ui(self._best), round(self._best)
-        modelled = self._modelled(best, TAIL)
+        modelled = self._decisions.openings(self._nominal, TAIL)
         if not self._tails_counted:
             return modelled
+        best, column = _ui(self._best), round(self._best)
         if not self._sums.raster:
             column = COLUMNS
             middle = self._sums.at_decision()[:, :, None]
@@ -250,7 +311,10 @@ class Figures:
         else:
             counted = self._ragged[:, :, column]
         # the curve may have its peak between two columns: the model tells what lies there
-        return counted * self._scale() + modelled - self._modelled(_ui(column), TAIL)
+        counted = counted * self._scale() + self._modelled(best, TAIL) - self._modelled(_ui(column), TAIL)
+        # ten traces beyond a level's tail make it ragged: where they do not contradict the model, they are not told from it
+        chance = 100.0 * self._tail_chance() / self._spacing
+        return modelled + beyond_chance(counted - modelled, chance**2)
 
     @cached_property
     def _curves(self) -> NDArray[np.float64]:
@@ -258,8 +322,6 @@ class Figures:
         if not self.enough:
             return self._ragged
         curves = self._ragged * self._scale()[..., None]
-        if self._tails_counted:
-            return curves
         # the curve of few traces is too open by as much as their extremes fall short of the tail
         return curves + (self._openings - between(curves, self._best))[:, :, None]
 
@@ -373,7 +435,9 @@ class Figures:
         return link_model(
             self._scheme, self._pattern, ui, shares=counts / counts.sum(),
             levels=np.asarray([self._levels(rail) for rail in range(self._scheme.rails)]),
-            noise=noise / self._worth(ui) ** 2, units=units, split=self._split, limiter=self._limiter,
+            noise=noise / self._worth(ui) ** 2,
+            uneven=np.asarray([self._uneven_noise(rail) for rail in range(self._scheme.rails)]) / self._worth(ui)[:, None] ** 2,
+            units=units, split=self._split, limiter=self._limiter,
             carrier_bandwidth=self._context.carrier_bandwidth,
         )  # fmt: skip
 
@@ -393,19 +457,22 @@ class Figures:
         opening = self.opening_pct()
         if opening is None:
             return Reading(symbols=self._sums.symbols)
-        best = _ui(self._best)
         slope, tolerance = slope_and_tolerance(self._curves.min(axis=(0, 1)), self._best, opening)
         eyes = self._eyes()
         widths = [eye.width_ui for eye in eyes if eye.width_ui is not None]
         periodic_ui, periodic_hz = self._periodic_jitter()
+        crossing = crossings(self._sums)
+        best = _ui(self._best if self._corner is None else self._corner)
         return Reading(
             symbols=self._sums.symbols,
+            best_instant_ui=self._loop_ui(best),
             eyes=eyes,
             width_ui=min(widths) if len(widths) == len(eyes) else None,
-            best_instant_ui=self._loop_ui(best if self._corner is None else _ui(self._corner)),
             timing_slope_pct_per_ui=slope,
             timing_tolerance_ui=tolerance,
-            crossing_pattern_pp_ui=crossings(self._sums).pattern_pp,
+            crossing_pattern_pp_ui=crossing.pattern_pp,
+            dcd_ui=crossing.dcd,
+            level_linearity=self._linearity(),
             rise_20_80_ui=rise_time(self._sums),
             periodic_jitter_ui=periodic_ui,
             periodic_jitter_hz=periodic_hz,
@@ -454,14 +521,12 @@ class Figures:
             "crossing_rms_ui": crossing.rms,
             "crossing_pp_ui": crossing.pp,
             "crossing_random_rms_ui": crossing.random_rms,
-            "dcd_ui": crossing.dcd,
-            "level_linearity": self._linearity(),
             "q": self._q(best),
             "snr_db": snr if mer is not None else None,
             "mer_db": mer,
             "evm_pct": 100.0 * 10 ** (-mer / 20) if mer is not None else None,
             "ber": self._error_rate(),
-            "opening_at_ber_pct": self._link.opening(self._context.target_ber),
+            "opening_at_ber_pct": float(self._decisions.openings(self._nominal, self._context.target_ber).min()),
             "clock_ppm": clock_ppm,
             "jitter_rms_ui": jitter,
             "carrier_hz": carrier,

@@ -21,6 +21,7 @@ _SHALLOW = 0.01  # share of the crossings beyond which they make up the tail
 _LEAST_TAIL = 20  # crossings beyond a place that is fitted
 _LOWEST_BIN = 3  # below it the straight line that was taken out has taken the jitter with it
 _NEAR = 40  # bins on either side that make a bin's floor
+_APART = 6  # bins beside a line that hold nothing of it: those 4 to 6 off
 _CHANCE = 1e-4  # that a whole spectrum without a line shows one
 _COMB = 5  # lines; more of them are a repeating pattern's
 
@@ -93,6 +94,9 @@ def periodic_line(power: NDArray[np.float64], blocks: int) -> Line | None:
         return None
     mean = power / blocks
     floor = median_filter(mean, 2 * _NEAR + 1, mode="nearest") * blocks / float(gammaincinv(blocks, 0.5))
+    # where a loop's wander makes the spectrum steep, the nearer bins on either side tell more than the median
+    beside = np.convolve(np.pad(mean[1:], (_APART + 1, _APART), mode="edge"), np.full(3, 1.0 / 3.0), mode="valid")
+    floor = np.maximum(floor, np.maximum(beside[: mean.size], beside[-mean.size :]))
     # neighbouring bins of the window overlap, and the floor is itself measured
     limit = 1.3 * float(gammainccinv(blocks, _CHANCE / mean.size)) / blocks
     clear = mean > limit * floor

@@ -68,6 +68,7 @@ class Pattern:
         rails, phases, n = sums.scheme.rails, sums.phases, max(sums.symbols, 1)
         self._phases = phases
         self.smooth = phases <= 16  # else the wave may have corners
+        self._models: dict[float, PatternModel] = {}
         k = sums.gram.shape[0]
         gram = sums.gram + np.eye(k) * (1e-7 * np.trace(sums.gram) / k + 1e-12)
         right = np.moveaxis(sums.cross, 0, 1).reshape(k, rails * phases)
@@ -87,6 +88,11 @@ class Pattern:
 
     def model(self, ui: float) -> PatternModel:
         """The response at ``ui``, -1 to 1."""
+        if ui not in self._models:
+            self._models[ui] = self._model(ui)
+        return self._models[ui]
+
+    def _model(self, ui: float) -> PatternModel:
         rails = self._solution.shape[0]
         each = [
             [self._along(self._solution[r, s * LAGS : (s + 1) * LAGS], ui) for s in range(rails)] for r in range(rails)

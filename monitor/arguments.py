@@ -158,6 +158,16 @@ def check_output_name(option: str, name: str, suffix: str) -> None:
         raise InputError(f"{option} {name}: is a folder; give a file's name")
 
 
+def add_taps_option(parser: argparse.ArgumentParser) -> None:
+    """Where the equaliser's taps go."""
+    parser.add_argument(
+        "--save-taps",
+        type=Path,
+        metavar="FILE",
+        help="the equaliser's taps, receive filter included; --pulse taps:FILE takes them",
+    )
+
+
 def add_journal_options(parser: argparse.ArgumentParser) -> None:
     """The journal, and who listens to it."""
     group = parser.add_argument_group("the journal")

@@ -11,6 +11,7 @@ from monitor.arguments import (
     add_measure_options,
     add_output_options,
     add_sample_options,
+    add_taps_option,
     join_negative_numbers,
     positive,
 )
@@ -95,6 +96,7 @@ def parser() -> argparse.ArgumentParser:
     add_link_options(command)
     add_measure_options(command)
     add_output_options(command)
+    add_taps_option(command)
     add_journal_options(command)
     add_capture_options(command)
     command.add_argument(

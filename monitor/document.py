@@ -22,7 +22,7 @@ def document(outcome: Outcome) -> dict[str, Json]:
     """The one JSON document of a run; figures that cannot be known are None, as is anything not finite.
 
     Beside the keys that are promised there are ``source.notes``, the source's defects in words, and ``lock.reason``, why nothing was
-    measured (None if something was).
+    measured (None if something was), and ``intervals``, 95 % ones of the reading's figures by their keys.
     """
     info, link, reading = outcome.source.info, outcome.link, outcome.reading
     locked = reading is not None
@@ -60,6 +60,9 @@ def document(outcome: Outcome) -> dict[str, Json]:
             "reason": outcome.reason or None,
         },
         "reading": reading_document(reading),
+        "intervals": {key: list(pair) for key, pair in outcome.diagnosis.intervals.items()}
+        if outcome.diagnosis
+        else {},
         "windows": {
             "count": outcome.windows.count,
             "symbols_each": outcome.windows.symbols_each,

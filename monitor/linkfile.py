@@ -63,7 +63,7 @@ class LinkFile:
 
 
 def read_pulse(text: str) -> Pulse:
-    """A pulse as typed; ``taps:FILE`` reads a .npy file or text with one tap a line. Raises DspError or InputError."""
+    """A pulse as typed; ``taps:FILE`` reads a .npy file or text with one tap a line, # begins a remark. Raises DspError or InputError."""
     if not text.startswith("taps:"):
         return Pulse.parse(text)
     path = Path(text.removeprefix("taps:"))
@@ -202,5 +202,5 @@ def _read_taps(path: Path, content: bytes) -> list[complex]:
         import numpy as np
 
         return [complex(tap) for tap in np.load(io.BytesIO(content), allow_pickle=False).ravel()]
-    lines = content.decode("utf-8").splitlines()
-    return [complex(line.replace(" ", "")) for line in lines if line.strip()]
+    lines = [line.partition("#")[0].strip() for line in content.decode("utf-8").splitlines()]
+    return [complex(line.replace(" ", "")) for line in lines if line]

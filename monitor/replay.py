@@ -17,6 +17,7 @@ from monitor.terminal import ProgressBar, SlowStartNotice
 if TYPE_CHECKING:
     from collections.abc import Sequence
     from contextlib import AbstractContextManager
+    from pathlib import Path
 
     from monitor.alarm_rules import AlarmRule
     from monitor.judging import Judged
@@ -34,8 +35,12 @@ def replay(parsed: argparse.Namespace) -> int:
     for option, name, suffix in (("--picture", parsed.picture, ".png"), ("--report", parsed.report, ".html")):
         if name is not None:
             check_output_name(option, name, suffix)
+    if parsed.save_taps is not None:
+        _check_taps(parsed.save_taps)
     links = links_of(parsed)
     if len(links) > 1:
+        if parsed.save_taps is not None:
+            raise InputError("--save-taps: taps are one link's; choose it with --channels or --link")
         from monitor.several_replay import replay_several
 
         return replay_several(parsed, links)
@@ -68,6 +73,10 @@ def replay(parsed: argparse.Namespace) -> int:
         outcome.alarms = played.alarms
         outcome.interrupted |= played.status != 0
     tell(_lines(outcome, as_json=parsed.json))
+    if parsed.save_taps is not None and outcome.measured:
+        from monitor.taps import save_taps
+
+        save_taps(outcome, parsed.save_taps)
     if parsed.picture is not None:
         from monitor.snapshots import snapshot_of
         from monitor.views.painter import save_picture
@@ -124,3 +133,10 @@ def discard_standard_output() -> None:
     """Send what is still to be written nowhere, so that the interpreter's end does not stumble over it."""
     with suppress(OSError, ValueError):
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def _check_taps(path: "Path") -> None:
+    if os.path.isdir(path):
+        raise InputError(f"--save-taps {path}: is a folder; give a file's name")
+    if not os.path.isdir(path.parent):  # false too for a name that cannot be
+        raise InputError(f"--save-taps {path}: there is no folder {path.parent}; make it first")

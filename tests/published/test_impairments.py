@@ -1,15 +1,17 @@
 """One defect at a time, each with a closed form for what it does to the eye or the constellation."""
 
+import itertools
 import math
 
 import numpy as np
 import pytest
+from scipy.stats import norm
 
 from dsp.block import Block
 from dsp.chain import Chain
 from dsp.figures import Figures
 from dsp.link import Link, find_scheme
-from dsp.pulses import Pulse
+from dsp.pulses import Pulse, raised_cosine
 from dsp.transmitter import prbs
 from tests.measuring import RATE, over_the_air, spec_for
 
@@ -25,20 +27,30 @@ def test_an_echo_one_symbol_on_takes_its_own_height(scheme, gain):
     )
     reading = over_the_air(spec).reading
     assert reading.opening_pct == pytest.approx(100 * (1 - (levels - 1) * abs(gain)), abs=2.0)
-    assert reading.mer_db == pytest.approx(-20 * math.log10(abs(gain)), abs=0.25)
+    # the closed form holds at the symbol's own instant; the eye is widest a little off it, where the echo is less than its height
+    assert -0.25 < reading.mer_db + 20 * math.log10(abs(gain)) < 0.5
     rms_level = math.sqrt(find_scheme(scheme).symbol_energy() / find_scheme(scheme).rails)
-    assert reading.level_rms_pct == pytest.approx(100 * abs(gain) * rms_level / 2, rel=0.04)
+    assert reading.level_rms_pct == pytest.approx(100 * abs(gain) * rms_level / 2, rel=0.06)
     assert reading.snr_db > 40  # what an echo does is not noise
 
 
 def test_error_rate_behind_an_echo_counts_both_distances():
-    """Two-level [1, a] in noise s: ber = (Q((1 + a)/s) + Q((1 - a)/s))/2 (derived here)."""
+    """Two-level [1, a] in noise s: mean of Q over all neighbours of the raised cosine, where that is least (derived here)."""
     gain, snr_db = 0.2, 14.0
     s = 10 ** (-snr_db / 20)
+    lags = np.arange(-5, 6)
+    neighbours = np.asarray(list(itertools.product((-1.0, 1.0), repeat=lags.size - 1)))
+    rates = []
+    for shift in np.linspace(-0.15, 0.05, 21):
+        taps = raised_cosine(lags + shift, 0.35) + gain * raised_cosine(lags + shift - 1, 0.35)
+        cursor, rest = taps[5], np.delete(taps, 5)
+        rates.append(np.mean(norm.sf((cursor + neighbours @ rest) / s)))
+    # at the symbol's own instant it is (Q((1 + a)/s) + Q((1 - a)/s))/2
     both = [0.5 * math.erfc((1 + side * gain) / s / math.sqrt(2)) for side in (-1, 1)]
+    assert rates[15] == pytest.approx(sum(both) / 2, rel=0.01)
     spec = spec_for("pam2", "rrc:0.35", 4.3, 22_000, echoes=((1.0, gain),), snr_db=snr_db, seed=31)
     reading = over_the_air(spec).reading
-    assert sum(both) / 2 / 1.6 < reading.ber < sum(both) / 2 * 1.6
+    assert min(rates) / 1.6 < reading.ber < min(rates) * 1.6
 
 
 def test_a_boxcar_matched_to_nrz_makes_a_triangle():
