@@ -223,6 +223,7 @@ class Chain:
             self.options.target_ber,
             self._filter,
             self.options.carrier_bandwidth if scheme.kind == "carrier" else 0.0,
+            self.link.pulse.number if self.link.pulse.family == "rrc" else None,
         )
 
     # -- one chunk -----------------------------------------------------------------------------------------------------

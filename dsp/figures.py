@@ -33,6 +33,7 @@ from dsp.pattern import CURSOR, Pattern, PatternModel, beyond_chance
 from dsp.picture import EyeImage
 from dsp.reading import Budget, Equaliser, Eye, Reading
 from dsp.residual import Split, pattern_means, products_of, split
+from dsp.roll_off import fitting_roll_off
 from dsp.tracking import level_units
 from dsp.verdict import Evidence, sentences
 
@@ -51,7 +52,8 @@ class Context:
     ``sps_ratio`` is the loop's nominal symbol period over the link's; ``offset_ui`` lies from the loop's instant to the decision
     instant; ``late_bias_ui`` is the timing loop's own known lateness; ``carrier_base_hz`` what was taken out before the loops;
     ``receive_filter`` the matched filter at `dsp.limiter.RATE` points a symbol, None where no linear one leads to the samples;
-    ``carrier_bandwidth`` BnT of the carrier loop, 0 where there is none.
+    ``carrier_bandwidth`` BnT of the carrier loop, 0 where there is none; ``roll_off`` that of the receive filter where it is a root
+    raised cosine.
     """
 
     symbol_rate_hz: float
@@ -63,6 +65,7 @@ class Context:
     target_ber: float = 1e-6
     receive_filter: NDArray[np.float64] | None = None
     carrier_bandwidth: float = 0.0
+    roll_off: float | None = None
 
 
 class Figures:
@@ -571,6 +574,7 @@ class Figures:
             jitter=self._jitter_split(),
             equalisers=self._equalisers.trials(),
             best_thresholds=() if circle else tuple(self._decisions.best_thresholds().ravel().tolist()),
+            fitting_roll_off=self._fitting_roll_off(),
             opening_with_3db_more_pct=evidence.opening_with_3db_more_pct,
             constellation=Constellation(residual.constellation.copy(), residual.reach)
             if self._scheme.rails == 2
@@ -580,6 +584,16 @@ class Figures:
             am_pm_deg=bent[1] if bent is not None and self._scheme.rails == 2 else None,
             remarks=sentences(self.reading(), evidence)[1:],
         )
+
+    def _fitting_roll_off(self) -> float | None:
+        """Roll-off that was sent, where it is not the receive filter's, mean of the rails that tell it."""
+        if self._context.roll_off is None:
+            return None
+        each = [
+            fitting_roll_off(*self._pattern.course(rail), self._context.roll_off) for rail in range(self._scheme.rails)
+        ]
+        known = [roll_off for roll_off in each if roll_off is not None]
+        return float(np.mean(known)) if len(known) == len(each) else None
 
     def _opening_with(self, noise: float) -> float:
         """The least opening that there would be with ``noise`` times the noise variance, all else as it is."""

@@ -110,6 +110,13 @@ class Pattern:
             settled[rail, rail, CURSOR] = taps[rail, rail, CURSOR]
         return PatternModel(settled, residual)
 
+    def course(self, rail: int) -> tuple[NDArray[np.float64], NDArray[np.float64], float]:
+        """What a rail's own symbol puts at all phases of all lags: times in UI, values, each ``(n,)``, and the variance of one."""
+        response = self._solution[rail, rail * LAGS : (rail + 1) * LAGS]
+        times = np.arange(EARLIEST, LATEST + 1)[:, None] + np.arange(self._phases) / self._phases
+        chance = float(np.mean(self._residual[rail]) * self._chance[rail])
+        return times.ravel(), np.asarray(response.ravel()), chance
+
     def slopes(self, ui: float) -> NDArray[np.float64]:
         """How fast the taps at ``ui`` change, per UI, shape ``(rails, rails, lags)``."""
         step = 0.5 / min(self._phases, 16)
