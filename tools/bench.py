@@ -4,6 +4,8 @@
     python tools/bench.py --json        the same as one JSON document on standard output
     python tools/bench.py --quick       smaller inputs, fewer rounds: about a fifth of the time
     python tools/bench.py --only NAME   that one and what it is compared with; may be repeated
+    python tools/bench.py --error-rate  estimated error rates next to counted ones, up to 1e7 symbols a link: an hour
+    python tools/bench.py --coverage N  how many of N runs' 95 % intervals held the truth, figure by figure: an hour for 400
 
 The rounds go through all benchmarks in turn, so that a slow spell of the machine hits them alike; the best round
 counts. Inputs are made before, and one call goes ahead uncounted. References run on one thread. Behind the rates come
@@ -842,13 +844,41 @@ def show(text: str) -> None:
         print("\r\x1b[2K" + text, end="", file=sys.stderr, flush=True)
 
 
+def held_against_truth(options: argparse.Namespace) -> int:
+    """The checks of error rates and intervals, a line each as it is done, or one JSON document."""
+    from error_rate_check import check, coverage
+
+    rows = check(options.quick, show) if options.error_rate else coverage(options.coverage, show)
+    done = []
+    for row in rows:
+        done.append(row)
+        if not options.json:
+            print(
+                "  ".join(
+                    f"{key} {value:.4g}" if isinstance(value, float) else f"{key} {value}" for key, value in row.items()
+                )
+            )
+            sys.stdout.flush()
+    if options.json:
+        print(json.dumps({"machine": machine(), "results": done}, indent=1))
+    return 0
+
+
 def main(arguments: Sequence[str]) -> int:
     """Run what was asked for; exit status 2 for an unknown name."""
     parser = argparse.ArgumentParser(prog="bench.py", description="Times every stage next to reference libraries.")
     parser.add_argument("--quick", action="store_true", help="smaller inputs and fewer rounds")
     parser.add_argument("--json", action="store_true", help="one JSON document on standard output")
     parser.add_argument("--only", action="append", default=[], metavar="NAME", help="this one and its reference")
+    parser.add_argument(
+        "--error-rate", action="store_true", help="estimated error rates next to counted ones, nothing else"
+    )
+    parser.add_argument(
+        "--coverage", type=int, metavar="RUNS", help="how often the intervals hold the truth, nothing else"
+    )
     options = parser.parse_args(arguments)
+    if options.error_rate or options.coverage is not None:
+        return held_against_truth(options)
     try:
         wanted: list[Entry] = chosen(options.only, (*REFERENCES, *PROJECT, *MEASUREMENTS))
     except ValueError as error:

@@ -218,7 +218,8 @@ def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] 
         values: dict[str, list[float]] = {}
         widths: dict[str, list[float]] = {}
         for seed in range(runs):
-            progress(f"{case.name}: run {seed + 1} of {runs}")
+            if seed % 50 == 0:
+                progress(f"{case.name}: run {seed + 1} of {runs}")
             figures = measured(case.spec(case.snr_db[0], symbols, seed))
             if figures is None:
                 continue
