@@ -149,6 +149,7 @@ class EyeSums:
         self.middle = np.zeros((rails, levels, 0 if raster else self.rows.count), np.int64)
         self.stretches = Stretches()
         self.groups: list[EyeSums] = []
+        self._kept: EyeSums | None = None  # what is in the groups, where they were set apart one by one
         self.clock = LineSums()
         self.carrier = LineSums()
 
@@ -203,9 +204,15 @@ class EyeSums:
         if not rest:
             return self.groups
         last = self.small()
-        for group in self.groups:
+        for group in self.groups if self._kept is None else (self._kept,):
             last._add(group, -1)
         return [*self.groups, last]
+
+    def set_apart(self) -> None:
+        """Keep the symbols since the last time as a stretch of their own."""
+        kept = self.small()
+        self.keep_apart(self.apart()[-1:])
+        self._kept = kept
 
     def keep_apart(self, parts: list[EyeSums]) -> None:
         """Keep small sums that have been added as stretches of their own; neighbours that hold the fewest symbols join."""
@@ -461,17 +468,18 @@ class EyeMeter:
         sums.symbols += count
         self._count += count
         if self._until_apart() <= 0:
-            sums.keep_apart(sums.apart()[len(sums.groups) :])
+            sums.set_apart()
 
     def _until_apart(self) -> int:
         """Symbols until the next stretch of the open window is kept apart.
 
-        Ever longer ones, so that a short recording has its stretches and a long one does not pay for them.
+        Ever longer ones at first, so that a short recording has its stretches and a long one does not pay for them.
         """
         if self._windows >= WINDOWS_APART:
             return self._window
         apart = sum(group.symbols for group in self.sums.groups)
-        return apart + max(FEWEST_APART, apart // 8) - self.sums.symbols
+        step = apart // 8 if self._windows == 0 else self._window // 6
+        return apart + max(FEWEST_APART, step) - self.sums.symbols
 
     def _keep_stretches(self, first: int, last: int) -> None:
         """Keep some of the pending symbols ``first .. last`` with their neighbours."""
