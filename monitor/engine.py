@@ -154,6 +154,7 @@ class Engine:
     def _reset_measures(self) -> None:
         self._blocks: deque[EyeSums] = deque(maxlen=BLOCKS)
         self._block: EyeSums | None = None
+        self._mixed = False  # whether the open block holds symbols from before a mark
         self._reading: Reading | None = None
         self._diagnosis: Diagnosis | None = None
         self._diagnosing: Future[Diagnosis] | None = None
@@ -468,8 +469,9 @@ class Engine:
         else:
             self._block.merge(sums)
         if self._block.symbols >= self._block_symbols:
-            self._blocks.append(self._block)
-            self._block = None
+            if not self._mixed:
+                self._blocks.append(self._block)
+            self._block, self._mixed = None, False
         measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
         due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
         if seconds >= due and measured >= min(LEAST_JUDGED, self._block_symbols):
@@ -570,9 +572,9 @@ class Engine:
         if self._opening is not None or reading is None:
             self._mark_opening = self._opening
         self._opening = None  # a change is told of what comes from now on
-        # what follows is measured on its own, not mixed with what was before the mark
+        # what follows is measured on its own, not mixed with what was before the mark: some symbols from then are still to come
         self._blocks.clear()
-        self._block = None
+        self._block, self._mixed = None, self._chain is not None and self._chain.locked
         self._emit("mark", name=name, opening_pct=reading.opening_pct if reading else None)
 
     def name_mark(self, name: str) -> None:

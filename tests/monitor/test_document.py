@@ -15,7 +15,7 @@ from monitor.session import Outcome, run
 from tests.monitor.recordings import SYMBOL_RATE, InMemory, pam2, qpsk, strict_json
 
 # what scripts rely on; a change here breaks them
-TOP = "lidwatch source link lock reading windows alarms speed"
+TOP = "lidwatch source link lock reading intervals windows alarms speed"
 SOURCE = "uri format sample_rate_hz samples seconds gaps samples_lost nonfinite clipped_pct notes"
 LINK = "scheme levels symbol_rate_hz samples_per_symbol pulse carrier_hz identified"
 LOCK = "timing carrier locked_pct slips acquired_at_s reason"
@@ -58,8 +58,12 @@ def test_the_document_has_exactly_the_promised_keys(measured, silent):
     for reading in (found["reading"], found["windows"]["worst"]):
         assert list(reading) == READING.split()
         assert [set(eye) for eye in reading["eyes"]] == [keys(EYE)] * 2
+    low, high = found["intervals"]["snr_db"]
+    assert low < found["reading"]["snr_db"] < high
+    assert set(found["intervals"]) <= set(found["reading"])
     found = document(silent)
     assert found["reading"] is None
+    assert found["intervals"] == {}
     assert found["windows"]["worst"] is None
 
 
