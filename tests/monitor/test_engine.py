@@ -266,10 +266,10 @@ def test_two_real_levels_are_watched_as_well():
 
 def test_no_more_than_one_in_twenty_marks_on_a_steady_link_shows_a_change():
     # each mark compares two disjoint windows of one steady stream; 5 % by construction, the bound by the binomial's 99.9 % point
-    window, marks = 4800, 40
-    samples = qpsk(window * (marks + 2), 16.0)
+    window, marks = 3200, 40
+    samples = qpsk(window * (marks + 2) * 7 // 4, 16.0)
     watched = Watched(window=window, rules=RULES)
-    size = 4 * window
+    size = 7 * window  # samples; a mark leaves out the block it falls into
     watched.feed(samples[: 2 * size])
     verdicts = []
     for number in range(2, marks + 2):
