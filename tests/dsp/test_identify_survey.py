@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from dsp.identify import Findings, survey_links
+from dsp.identify import Findings, band_about, survey_links
 from tests.dsp.streams import BAUD, send
 
 
@@ -40,3 +40,17 @@ def test_silence_and_noise_have_no_links_and_say_why():
     assert noise.links == ()
     assert noise.reason
     assert noise.level_dbfs == pytest.approx(0.0, abs=0.1)
+
+
+def test_the_band_about_a_frequency_is_that_of_the_link_there_alone():
+    low, high = send("qpsk", 8.0, symbols=6000, snr_db=40.0), send("bpsk", 8.0, symbols=6000, snr_db=40.0, seed=9)
+    size = min(low.samples.size, high.samples.size)
+    turn = np.exp(2j * np.pi * 0.25 * np.arange(size))
+    both = (low.samples[:size] * turn.conj() + high.samples[:size] * turn).astype(np.complex64)
+    for frequency in (-0.25, -0.22, 0.25, 0.28):
+        band = band_about(both, frequency)
+        assert band.centre == pytest.approx(np.sign(frequency) * 0.25, abs=0.01)
+        # roll-off 0.35 at 8 samples a symbol: 1.35 symbol rates wide at the most
+        assert 0.5 / 8 < band.half < 0.75 / 8
+    assert band_about(both, 0.0) is None
+    assert band_about(np.zeros(4096, np.complex64), 0.1) is None

@@ -28,6 +28,7 @@ from tests.monitor.recordings import (
     QPSK,
     RAW,
     assert_alike,
+    command,
     one_line,
     pam2,
     qpsk,
@@ -39,6 +40,7 @@ from tests.monitor.recordings import (
 )
 from tests.monitor.sending import frame
 from tests.monitor.sources.conftest import senders
+from tests.monitor.views.test_terminal import Session
 
 __all__ = ["senders"]
 PATIENCE_S = 40.0
@@ -509,3 +511,19 @@ def test_recordings_are_played_side_by_side_at_their_pace_and_then_measured(tmp_
     stops = [line for line in lines_of(journal) if line["kind"] == "stop"]
     # a recording that is played waits for the machine
     assert [(stop["samples"], stop["samples_lost"]) for stop in stops] == [(96_000, 0)] * 2
+
+
+def test_in_a_terminal_each_link_has_a_row_and_a_key_brings_the_next_to_the_front(tmp_path):
+    files = [raw(tmp_path, qpsk(120_000, snr), f"{name}.iq") for name, snr in (("east", 25.0), ("west", 15.0))]
+    terminal = Session(command("watch", *files, *RAW, *QPSK, "--view", "terminal"), 100, 30)
+    try:
+        terminal.see("east", PATIENCE_S)
+        # the worse of the two comes to the front by itself
+        terminal.see("▶ west", PATIENCE_S)
+        assert terminal.screen().splitlines()[0].startswith("  east")
+        terminal.type(b".")
+        terminal.see("■ east", PATIENCE_S)
+        terminal.type(b"\x11")
+        assert terminal.finish(PATIENCE_S) == 0
+    finally:
+        terminal.close()
