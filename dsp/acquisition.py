@@ -503,8 +503,11 @@ class _Search:
             shares = np.bincount(fit.classes[rail], minlength=self._scheme.levels) / fit.classes.shape[1]
             if shares.min() < 0.4 / self._scheme.levels:
                 return "some of the scheme's levels are hardly used"
-        alternate = decided[:, 1:] * decided[:, :-1] * (-1.0) ** np.arange(z.size - 1)
-        if abs(float(np.sum(alternate))) > 0.3 * energy:
+        products = np.sum(decided[:, 1:] * decided[:, :-1], axis=0)
+        even, odd = float(np.sum(products[0::2])), float(np.sum(products[1::2]))
+        # half-bits of a Manchester code come in pairs of opposite sign, and are data
+        twice = max(even, odd) - max(min(even, odd), 0.0) if self._scheme.kind == "baseband" else abs(even - odd)
+        if twice > 0.3 * energy:
             return "each symbol comes twice: the symbol rate is a multiple of the link's"
         floor = noise_like_mer_db(self._scheme)
         if fit.mer_db < floor + 0.8 and (chance > 1e-14 or plausibility_db(fit, self._scheme) < 6.0):

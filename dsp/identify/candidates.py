@@ -221,6 +221,7 @@ def pam_candidate(
             scheme, rate, pulse, 0.0, line, n, excess, excess - rival[3] if rival else excess, rival[0] if rival else None,
             _snr_db(agreed, scheme), _doubts(decided, scheme, agreed, excess, n, line), None,
             ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
+            half_bits=scheme.levels == 2 and min(pair_products(decided)) < -0.9,
         )  # fmt: skip
         if last or response is None or pulses is not None:
             break
@@ -261,6 +262,18 @@ def _snr_db(agreed: Agreement, scheme: Scheme) -> float:
     return 10 * math.log10(max(scheme.symbol_energy() * agreed.gain**2 / (per_rail * agreed.sigma**2), 1e-9))
 
 
+def pair_products(decided: Values) -> tuple[float, float]:
+    """Mean product of each symbol with the next, over pairs that begin at even and at odd symbols, as a share of the energy.
+
+    1 where each symbol comes twice; -1 where half-bits of opposite sign make a symbol (Manchester).
+    """
+    centred = decided - decided.mean(axis=1, keepdims=True)
+    energy = max(float(np.mean(np.sum(centred**2, axis=0))), 1e-30)
+    size = decided.shape[1] // 2 * 2 - 2
+    pairs = np.sum(centred[:, :-1] * centred[:, 1:], axis=0)[:size] / energy
+    return float(np.mean(pairs[0::2])), float(np.mean(pairs[1::2]))
+
+
 def _doubts(decided: Values, scheme: Scheme, agreed: Agreement, excess: float, n: int, line: Line) -> str:
     if line.chance > _CHANCE:
         return "no line in the spectrum that a symbol clock would have"
@@ -273,12 +286,8 @@ def _doubts(decided: Values, scheme: Scheme, agreed: Agreement, excess: float, n
     for rail in classes:
         if np.bincount(rail, minlength=levels.size).min() < 0.35 / levels.size * rail.size:
             return "some of the scheme's levels are hardly used"
-    for parity in (0, 1):
-        first, second = decided[:, parity:-1:2], decided[:, parity + 1 :: 2]
-        pairs = min(first.shape[1], second.shape[1])
-        product = float(np.sum((first[:, :pairs] - decided.mean()) * (second[:, :pairs] - decided.mean())))
-        if product > 0.5 * float(np.sum((first - decided.mean()) ** 2)):
-            return "each symbol comes twice: the symbol rate is a multiple of the link's"
+    if max(pair_products(decided)) > 0.5:
+        return "each symbol comes twice: the symbol rate is a multiple of the link's"
     number = classes[0] if classes.shape[0] == 1 else classes[0] * levels.size + classes[1]
     points = levels.size ** classes.shape[0]
     if scheme.name == "8psk":

@@ -22,6 +22,7 @@ from dsp.identify.findings import Band, Identified, Wanted
 from dsp.identify.lines import Line, Products, clock_lines
 from dsp.identify.spectrum import Spectrum, segments, spectrum_of
 from dsp.link import SCHEMES, Link, Scheme
+from dsp.pulses import Pulse
 
 _WHOLE = 1 << 22  # samples whose spectrum is looked at as a whole
 _STRETCH = 2e5  # independent samples of a band that are searched for lines
@@ -176,7 +177,11 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
         if given is not None:
             near = [line for line in lines if abs(line.frequency * step / given - 1) < 2e-3]
             return near[:1] or [Line(given / step, 0.0, 1.0)]
-        return [line for line in lines if 1 / 2000 <= line.frequency * step <= 0.5][:3]
+        usable = [line for line in lines if 1 / 2000 <= line.frequency * step <= 0.5]
+        # of a square pulse the harmonics may be the stronger lines
+        clear = [line for line in usable if line.ratio > 0.03 * usable[0].ratio]
+        lowest = min(clear, key=lambda line: line.frequency, default=None)
+        return list(dict.fromkeys([line for line in (lowest, *usable[:3]) if line is not None]))
 
     for kind in _kinds(spectrum, band, wanted):
         if kind == "baseband":
@@ -186,7 +191,7 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
                 for line in clocks(lines)
                 if (c := pam_candidate(spectrum, line, schemes(kind), pulses, _FAMILIES)) is not None
             ]
-            yield from _by_belief(found)
+            yield from _by_belief(found + _half_bits(spectrum, found, schemes(kind), pulses, given))
         elif kind == "frequency":
             rail = frequency_rail(spectrum, band.centre, 1.15 * band.half)
             if rail is None:
@@ -223,8 +228,27 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
 
 
 def _by_belief(found: list[Candidate]) -> list[Candidate]:
-    """Sound ones first, of those the one that explains most a sample."""
-    return sorted(found, key=lambda c: (bool(c.doubt), -c.excess * c.rate))
+    """Sound ones first, of those a Manchester code's half-bits, then the one that explains most a sample."""
+    return sorted(found, key=lambda c: (bool(c.doubt), not c.half_bits, -c.excess * c.rate))
+
+
+def _half_bits(
+    spectrum: Spectrum,
+    found: list[Candidate],
+    schemes: tuple[Scheme, ...],
+    pulses: tuple[Pulse, ...] | None,
+    given: float | None,
+) -> list[Candidate]:
+    """What was found again at twice its rate, if it then shows half-bits: a Manchester code's line is that of its bits."""
+    sound = [c for c in found if not c.doubt]
+    if given is not None or not sound:
+        return []
+    line = sound[0].line
+    twice = replace(line, frequency=2 * line.frequency)
+    if twice.frequency > 0.5:
+        return []
+    again = pam_candidate(spectrum, twice, schemes, pulses, _FAMILIES)
+    return [again] if again is not None and again.half_bits else []
 
 
 def _held(samples: Samples, candidate: Candidate, band: Band, rate: float, wanted: Wanted) -> Found | NotFound:

@@ -33,7 +33,7 @@ def survey_links(samples: Samples, sample_rate_hz: float, wanted: Wanted | None 
         for part in segments(spectrum):
             if len(found) >= most or spectrum.power(part) < 1e-2 * spectrum.power(band_of(first)):
                 break
-            if any(_overlap(part, band_of(other)) > 0.2 for other in found):
+            if any(_overlap(part, _taken(other)) > 0.2 for other in found):
                 continue
             more = find_link(samples, sample_rate_hz, wanted, [part])
             if isinstance(more, Found) and not any(_overlap(band_of(more), band_of(other)) > 0.2 for other in found):
@@ -56,6 +56,16 @@ def _overlap(a: Band, b: Band) -> float:
     """Share of the narrower of two bands that lies in the other."""
     common = min(a.centre + a.half, b.centre + b.half) - max(a.centre - a.half, b.centre - b.half)
     return max(common, 0.0) / max(2 * min(a.half, b.half), 1e-12)
+
+
+def _taken(found: Found) -> Band:
+    """The band in which a found link's own side lobes may pass for others: square pulses have many."""
+    band, link = band_of(found), found.identified.link
+    if link.scheme.kind == "baseband":
+        return Band(0.25, 0.25)
+    if link.scheme.kind == "carrier" and link.pulse.family == "rect":
+        return Band(band.centre, 8 * band.half)
+    return band
 
 
 def _described(found: Found, spectrum: Spectrum, rate: float, wanted: Wanted) -> FoundLink:

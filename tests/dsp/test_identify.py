@@ -94,3 +94,43 @@ def test_placement_follows_the_band_unless_a_carrier_is_given():
     centre, half = placement(link_of("fsk2", 12.0, "rect"), band, is_complex=True)
     assert centre == 0.2
     assert half > band.half
+
+
+@pytest.mark.parametrize(
+    ("scheme", "sps", "pulse", "more"),
+    [
+        ("pam3", 5.1, "rrc:0.3", {"snr_db": 20.0}),
+        ("pam8", 6.3, "rrc:0.5", {"snr_db": 30.0}),
+        ("oqpsk", 4.7, "rrc:0.4", {"snr_db": 16.0, "carrier_hz": 2400.0}),
+        ("pi4dqpsk", 5.3, "rrc:0.35", {"snr_db": 16.0, "carrier_hz": -2400.0}),
+        ("8psk", 2.6, "rrc:0.25", {"snr_db": 20.0, "carrier_hz": 1500.0}),
+        ("64qam", 4.2, "rrc:0.2", {"snr_db": 28.0, "carrier_hz": 4000.0}),
+        ("fsk4", 20.0, "rect", {"snr_db": 24.0}),
+        ("gfsk", 9.3, "gauss:0.5", {"snr_db": 20.0, "modulation_index": 0.35}),
+        ("msk", 10.0, "rect", {"snr_db": 18.0, "carrier_hz": 900.0}),
+        ("gmsk", 11.0, "gauss:0.3", {"snr_db": 20.0}),
+        ("qpsk", 12.0, "rrc:0.35", {"snr_db": 16.0, "passband": True, "carrier_hz": 41_000.0}),
+    ],
+)
+def test_every_scheme_and_its_pulse_are_found(scheme, sps, pulse, more):
+    sent = send(scheme, sps, pulse, symbols=6000, clock_ppm=-30.0, **more)
+    answer = identify(sent.samples, BAUD * sps, Wanted())
+    assert isinstance(answer, Identified)
+    assert answer.link.scheme.name == scheme
+    assert answer.link.symbol_rate_hz == pytest.approx(BAUD * (1 - 30e-6), rel=3e-5)
+    wanted = Pulse.parse(pulse)
+    assert answer.link.pulse.family == wanted.family
+    if wanted.number is not None:
+        assert answer.link.pulse.number == pytest.approx(wanted.number, abs=0.05)
+
+
+def test_what_has_a_clock_but_no_data_is_no_link():
+    """A pair of tones, and chirps that repeat: both have lines that a symbol clock might have."""
+    rng = np.random.default_rng(7)
+    n = np.arange(120_000)
+    noise = 0.03 * (rng.standard_normal(n.size) + 1j * rng.standard_normal(n.size))
+    pair = np.exp(2j * np.pi * 0.101 * n) + np.exp(2j * np.pi * 0.1352 * n)
+    chirps = np.exp(2j * np.pi * np.cumsum(0.1 + 0.15 * (n / 517.3 % 1.0)))
+    for wave in (pair, chirps):
+        for samples in ((wave + noise).astype(np.complex64), (wave + noise).real.astype(np.float32)):
+            assert isinstance(identify(samples, 48_000.0, Wanted()), NotFound)

@@ -54,3 +54,40 @@ def test_the_band_about_a_frequency_is_that_of_the_link_there_alone():
         assert 0.5 / 8 < band.half < 0.75 / 8
     assert band_about(both, 0.0) is None
     assert band_about(np.zeros(4096, np.complex64), 0.1) is None
+
+
+def test_two_links_in_one_recording_come_strongest_first():
+    near = send("qpsk", 20.0, "rrc:0.3", symbols=5000, snr_db=25.0, carrier_hz=-40_000.0, gain=0.3).samples
+    far = send("16qam", 20.0, "rrc:0.25", symbols=5000, snr_db=32.0, carrier_hz=45_000.0, gain=0.05, seed=5).samples
+    links = survey_links(near + far, 20 * BAUD).links
+    assert [link.scheme.value.name for link in links] == ["qpsk", "16qam"]
+    assert [link.carrier_hz.value for link in links] == pytest.approx([-40_000.0, 45_000.0], abs=5.0)
+    assert links[0].occupied_hz == pytest.approx(1.2 * BAUD, rel=0.15)
+    assert links[0].level_dbfs == pytest.approx(10 * np.log10(np.mean(np.abs(near) ** 2)), abs=0.5)
+
+
+def test_swapped_rails_turn_the_carrier_round():
+    sent = send("qpsk", 8.0, symbols=5000, snr_db=22.0, carrier_hz=20_000.0).samples
+    swapped = (sent.imag + 1j * sent.real).astype(np.complex64)
+    (link,) = survey_links(swapped, 8 * BAUD).links
+    assert link.carrier_hz.value == pytest.approx(-20_000.0, abs=5.0)
+    assert link.mirrored is None
+
+
+def test_line_codes_are_told_as_what_their_levels_are():
+    """Held levels at 16.3 samples a symbol: NRZI is pam2, AMI pam3, Manchester pam2 of half-bits, and says so."""
+    rng = np.random.default_rng(5)
+    bits = rng.integers(0, 2, 6000)
+    marks = np.cumsum(bits)
+    codes = {
+        "nrzi": (1 - 2 * (marks % 2), "pam2"),
+        "ami": (bits * (1 - 2 * (marks % 2)), "pam3"),
+        "manchester": (np.stack((2 * bits - 1, 1 - 2 * bits), axis=1).ravel(), "pam2"),
+    }
+    for name, (levels, scheme) in codes.items():
+        index = np.minimum(((np.arange(int(levels.size * 16.3)) + 0.3) / 16.3).astype(int), levels.size - 1)
+        wave = levels[index] + 0.08 * rng.standard_normal(index.size)
+        (link,) = survey_links(wave.astype(np.float32), 163_000.0).links
+        assert link.scheme.value.name == scheme, name
+        assert link.symbol_rate_hz.value == pytest.approx(10_000.0, rel=2e-5), name
+        assert bool(link.notes) == (name == "manchester")
