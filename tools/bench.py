@@ -876,9 +876,19 @@ def main(arguments: Sequence[str]) -> int:
     parser.add_argument(
         "--coverage", type=int, metavar="RUNS", help="how often the intervals hold the truth, nothing else"
     )
+    parser.add_argument(
+        "--identification",
+        action="store_true",
+        help="identify random links and what is no link, nothing else (hours; --quick: minutes)",
+    )
     options = parser.parse_args(arguments)
     if options.error_rate or options.coverage is not None:
         return held_against_truth(options)
+    if options.identification:
+        import identification_grid
+
+        few = ["--links", "64", "--non-links", "65", "--below", "16"] if options.quick else []
+        return identification_grid.main(few)
     try:
         wanted: list[Entry] = chosen(options.only, (*REFERENCES, *PROJECT, *MEASUREMENTS))
     except ValueError as error:

@@ -105,8 +105,8 @@ def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
 def _timed(samples: NDArray[np.complex128], wave: _Wave, stagger: bool = False) -> Values:
     """Instants of the symbols: where the values' spread of power is least, as it is for every constellation but not between."""
     start, count = _busiest(samples, wave.sps)
-    if count < 1:
-        return np.empty(0)
+    if count < _LEAST:
+        return np.zeros(0)
     some = start + wave.sps * np.arange(min(count, 1024), dtype=np.float64)
     table = []
     for k in range(_SCAN):
