@@ -138,7 +138,7 @@ def _in_band(
             if candidate.line.chance < 1e-8 and reason == _NO_LINE:
                 reason = candidate.doubt
             continue
-        outcome = _held(samples, candidate, band, rate, wanted)
+        outcome = _held(samples, candidate, band, spectrum, rate, wanted)
         if isinstance(outcome, Found):
             return outcome
         reason = outcome.reason
@@ -251,7 +251,9 @@ def _half_bits(
     return [again] if again is not None and again.half_bits else []
 
 
-def _held(samples: Samples, candidate: Candidate, band: Band, rate: float, wanted: Wanted) -> Found | NotFound:
+def _held(
+    samples: Samples, candidate: Candidate, band: Band, spectrum: Spectrum, rate: float, wanted: Wanted
+) -> Found | NotFound:
     """Whether the loops hold the candidate over its first symbols."""
     symbol_rate = candidate.rate * rate if wanted.symbol_rate_hz is None else wanted.symbol_rate_hz
     scheme = candidate.scheme
@@ -259,7 +261,8 @@ def _held(samples: Samples, candidate: Candidate, band: Band, rate: float, wante
         link = Link(scheme, rate, symbol_rate, wanted.pulse or candidate.pulse, wanted.carrier_hz, wanted.name)
     except DspError as error:
         return NotFound(str(error))
-    centre, half = place_of(candidate, link, band)
+    # a frequency discriminator suffers from all noise that it is given
+    centre, half = place_of(candidate, link, spectrum.holding(band) if scheme.kind == "frequency" else band)
     is_complex = bool(np.iscomplexobj(samples))
     front = plan(link, complex_in=is_complex, centre=centre, half_band=half)
     need = int(_TRIAL_SYMBOLS * link.samples_per_symbol)

@@ -63,6 +63,17 @@ class Spectrum:
         inside = np.abs(self.frequencies - band.centre) < band.half
         return float(np.sum(self.density[inside])) * self.width
 
+    def holding(self, band: Band, share: float = 0.99) -> Band:
+        """The part of a band that holds a ``share`` of its power above the floor, as much left out on either side."""
+        inside = np.abs(self.frequencies - band.centre) < band.half
+        sums = np.cumsum(np.maximum(self.density[inside] - self.floor, 0.0))
+        if not inside.any() or not sums[-1] > 0:
+            return band
+        edge = 0.5 * (1.0 - share)
+        low, high = np.interp((edge, 1.0 - edge), sums / sums[-1], self.frequencies[inside])
+        half = max(0.5 * float(high - low), self.width / self.size)
+        return Band(0.5 * float(low + high), half)
+
     def densest(self, width: float, low: float, high: float) -> float:
         """Centre of the window of ``width`` cycles a sample between ``low`` and ``high`` that holds the most power."""
         frequencies = self.frequencies
@@ -197,11 +208,12 @@ def segments(spectrum: Spectrum, most: int = 6, depth: float = _DEPTH) -> list[B
 
 
 def band_about(samples: Samples, frequency: float) -> Band | None:
-    """The stretch of the spectrum about a frequency (cycles a sample) that stands above the floor; None where nothing does."""
+    """What holds 99 % of the power in the stretch of the spectrum about a frequency (cycles a sample); None where nothing stands out."""
     spectrum = spectrum_of(samples)
     if spectrum is None:
         return None
-    return next((band for band in segments(spectrum) if abs(band.centre - frequency) < band.half), None)
+    about = (band for band in segments(spectrum) if abs(band.centre - frequency) < band.half)
+    return next((spectrum.holding(band) for band in about), None)
 
 
 def occupied_band(samples: Samples) -> Band | None:
