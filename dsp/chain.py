@@ -353,12 +353,11 @@ class Chain:
 
     def _track(self, rails: Rails) -> None:
         assert self._tracker is not None
-        if self.link.scheme.kind == "carrier":
-            rails = self._oscillator.push(rails)
-        track = self._tracker.push(self._matched.push(rails))
+        upright = self._oscillator.push(rails) if self.link.scheme.kind == "carrier" else rails
+        track = self._tracker.push(self._matched.push(upright))
         silence = self._guard.silent_from(track)
         if silence is not None:
-            self._fall_silent(track, silence)
+            self._fall_silent(track, silence, rails)
             return
         self._waiting.append(track)
         if not self._guard.holds(track):
@@ -390,8 +389,8 @@ class Chain:
         sample = max(self._position - round(held * self.link.samples_per_symbol), self._locked_from)
         self._end_run(sample, reason)
 
-    def _fall_silent(self, track: Track, start: int) -> None:
-        """Keep what came before the silence, less what the receive filter had of it already."""
+    def _fall_silent(self, track: Track, start: int, rails: Rails) -> None:
+        """Keep what came before the silence, less what the receive filter had of it already; look for the link behind it."""
         end = start - HALO // 2
         if end > 0:
             self._waiting.append(track.head(end))
@@ -400,7 +399,10 @@ class Chain:
             self._waiting.append(before.head(max(before.values.shape[1] + end, 0)))
         self._release(0)
         began = float(track.instants[max(start, 0)]) + min(start, 0) * self._sps
-        self._end_run(self._sample_of(track.base + began), "silence")
+        sample = self._sample_of(track.base + began)
+        self._end_run(sample, "silence")
+        rest = min(round((self._position - sample) / self._plan.decimate), rails[0].size)
+        self._kept, self._kept_samples = [tuple(rail[rail.size - rest :] for rail in rails)], rest
 
     def _sample_of(self, filtered: float) -> int:
         """Index in the stream of a filtered sample of this run, counted from the run's first."""
