@@ -557,6 +557,14 @@ class Figures:
         estimate = self.estimates.get(key)
         return None if estimate is None else estimate.interval()
 
+    def intervals(self) -> dict[str, tuple[float, float]]:
+        """The 95 % intervals of the figures by their names; without those that cannot be told."""
+        return {key: estimate.interval() for key, estimate in self.estimates.items()}
+
+    def remarks(self) -> tuple[str, ...]:
+        """Sentences on second causes, at most two."""
+        return sentences(self.reading(), self._evidence)[1:] if self.enough else ()
+
     def diagnosis(self) -> Diagnosis:
         """What stands behind the reading's budget and error rate; costs more than the reading does."""
         if not self.enough:
@@ -568,7 +576,7 @@ class Figures:
         bent = self._compression()
         return Diagnosis(
             response=evidence.response,
-            intervals={key: estimate.interval() for key, estimate in self.estimates.items()},
+            intervals=self.intervals(),
             over_time=over_time(self._errors_at, best),
             over_threshold=None if circle else self._decisions.over_threshold(int(rail), int(eye)),
             jitter=self._jitter_split(),
@@ -582,7 +590,7 @@ class Figures:
             tone_hz=evidence.tone_hz,
             compression_db=bent[0] if bent is not None else None,
             am_pm_deg=bent[1] if bent is not None and self._scheme.rails == 2 else None,
-            remarks=sentences(self.reading(), evidence)[1:],
+            remarks=self.remarks(),
         )
 
     def _fitting_roll_off(self) -> float | None:

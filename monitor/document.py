@@ -60,9 +60,7 @@ def document(outcome: Outcome) -> dict[str, Json]:
             "reason": outcome.reason or None,
         },
         "reading": reading_document(reading),
-        "intervals": {key: list(pair) for key, pair in outcome.diagnosis.intervals.items()}
-        if outcome.diagnosis
-        else {},
+        "intervals": {key: list(pair) for key, pair in outcome.intervals.items()},
         "windows": {
             "count": outcome.windows.count,
             "symbols_each": outcome.windows.symbols_each,
@@ -137,14 +135,14 @@ def text(outcome: Outcome) -> Iterator[str]:
     yield f"opening {plain(reading.opening_pct, 1)} %" + (f" ({interval})" if interval else "")
     if reading.verdict is not None:
         yield printable(sentence(reading.verdict))
-        for remark in outcome.diagnosis.remarks if outcome.diagnosis is not None else ():
+        for remark in outcome.remarks:
             yield printable(sentence(remark))
     rows = budget_rows(reading.budget) if reading.budget is not None else []
     if rows:
         yield "What closes the eye, points of opening:"
         for label, points in rows:
             yield f"  {label:{_LABEL_WIDTH}}{plain(points, 1)}"
-    intervals = outcome.diagnosis.intervals if outcome.diagnosis is not None else {}
+    intervals = outcome.intervals
     for group in figure_groups(reading, intervals):
         yield f"{group.title}:"
         for figure in group.figures:

@@ -2,8 +2,9 @@
 
 import math
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 from itertools import pairwise
 from typing import Any
 
@@ -51,8 +52,12 @@ class Outcome:
         What the link is; None if there is none that could be told.
     identified
         Keys of the link's parts that were found rather than given.
-    reading, image, diagnosis
-        Figures and eye of all symbols, and what stands behind them; None if there was never a lock.
+    reading, image
+        Figures and eye of all symbols; None if there was never a lock.
+    intervals, remarks
+        95 % intervals by the reading's keys; sentences on second causes.
+    diagnose
+        Makes what stands behind the figures; None if there was never a lock.
     windows
         The run window by window.
     events
@@ -78,7 +83,9 @@ class Outcome:
     identified: tuple[str, ...] = ()
     reading: Reading | None = None
     image: EyeImage | None = None
-    diagnosis: Diagnosis | None = None
+    intervals: Mapping[str, tuple[float, float]] = field(default_factory=dict)
+    remarks: tuple[str, ...] = ()
+    diagnose: Callable[[], Diagnosis] | None = None
     windows: Windows = field(default_factory=Windows)
     events: list[LockEvent] = field(default_factory=list)
     reason: str = ""
@@ -94,6 +101,11 @@ class Outcome:
     elapsed_s: float = 0.0
     interrupted: bool = False
     alarms: list[dict[str, Any]] = field(default_factory=list)
+
+    @cached_property
+    def diagnosis(self) -> Diagnosis | None:
+        """What stands behind the figures, made when first asked for; None if there was never a lock."""
+        return None if self.diagnose is None else self.diagnose()
 
     @property
     def seconds(self) -> float:
@@ -318,7 +330,8 @@ def _measure(
         outcome.reason = chain.last_reason
         return
     figures = Figures(chain.total, chain.context())
-    outcome.reading, outcome.image, outcome.diagnosis = figures.reading(), figures.image(), figures.diagnosis()
+    outcome.reading, outcome.image, outcome.diagnose = figures.reading(), figures.image(), figures.diagnosis
+    outcome.intervals, outcome.remarks = figures.intervals(), figures.remarks()
     if not outcome.measured:
         outcome.reason = f"{_counted(chain.total.symbols, 'symbol')} behind the lock are too few for an eye"
     outcome.coverage_pct = 100.0 * chain.total.drawn / max(chain.total.symbols, 1)
