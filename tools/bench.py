@@ -383,7 +383,7 @@ def _chain_benchmark(threads: int, every: int) -> Benchmark:
         f"chain-{threads}{more}",
         f"the whole chain, file to JSON: same stream as complex float32, all figures, {share} of traces, {hands}",
         "samples",
-        4_000_000,
+        16_000_000,
         lambda size: chain(size, threads, every),
         "symtrack",
     )
