@@ -71,13 +71,15 @@ class Context:
 class Figures:
     """Figures of one `EyeSums`; the heavier ones are computed when `reading` asks.
 
-    ``like``: taken at the same instant and by the same ways as those figures; sums without a raster need it.
+    ``like``: taken at the same instant and by the same ways as those figures; sums without a raster need it. ``after``: with
+    the bend of the amplitude that those figures, of the link shortly before, have found.
     """
 
-    def __init__(self, sums: EyeSums, context: Context, *, like: "Figures | None" = None) -> None:
+    def __init__(
+        self, sums: EyeSums, context: Context, *, like: "Figures | None" = None, after: "Figures | None" = None
+    ) -> None:
         self._sums = sums
         self._context = context
-        self._like = like
         self._scheme = sums.scheme
         self._nominal = np.asarray(sums.scheme.rail_levels)
         self._spacing = np.diff(self._nominal)
@@ -91,6 +93,8 @@ class Figures:
         self._mixture_isi = np.zeros(sums.scheme.rails)
         self.enough = sums.symbols >= LEAST_SYMBOLS and float(counts.min()) >= 3
         self._drawn = sums.drawn / max(sums.symbols, 1) * float(counts.min())  # traces of the rarest level
+        if after is not None:
+            self._limiter = after._limiter
         self._tails_counted = False
         self._best: float = COLUMNS
         self._corner: float | None = None
@@ -101,10 +105,7 @@ class Figures:
             self._tails_counted = like._tails_counted
             if like._mixtures is not None:
                 self._fit_mixtures()
-            if self._counts_instant:
-                self._best, self._corner = like._best, like._corner
-            else:
-                self._best, self._corner = self._best_column()
+            self._best, self._corner = like._best, like._corner
             return
         errors = self._rough_error_rate()
         self._tails_counted = self._drawn >= FULL_CLASS and errors < _TAIL_WHOLE
@@ -222,9 +223,7 @@ class Figures:
             if self._sums.phases < COLUMNS:
                 # a smooth wave has one peak: no need to look everywhere finely
                 coarse = range(start, stop, 4)
-                near = (
-                    round(self._like._best) if self._like is not None else coarse[int(np.argmax(self._course(coarse)))]
-                )
+                near = coarse[int(np.argmax(self._course(coarse)))]
                 start, stop = max(near - 5, start), min(near + 6, stop)
                 section = self._course(range(start, stop))
                 chance = 1e-4  # the model's course is flat where it is flat
@@ -271,8 +270,7 @@ class Figures:
     @cached_property
     def _counts_instant(self) -> bool:
         """Whether the best instant is read off the raster: of a smooth wave the model knows it better than ragged tails do."""
-        tails = self._tails_counted if self._like is None else self._like._tails_counted
-        return tails and self._sums.phases == COLUMNS
+        return self._tails_counted and self._sums.phases == COLUMNS
 
     def _tail_chance(self) -> float:
         """Standard error of an opening whose tails are counted, level units."""

@@ -34,7 +34,6 @@ BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter giv
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
 WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
-DIAGNOSIS_SECONDS = 1.0  # between two looks at what stands behind them
 TICK_SECONDS = 0.2  # in which clipped samples are counted together
 CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
@@ -156,10 +155,10 @@ class Engine:
         self._block: EyeSums | None = None
         self._mixed = False  # whether the open block holds symbols from before a mark
         self._reading: Reading | None = None
+        self._before: Figures | None = None  # of the last whole reading
         self._diagnosis: Diagnosis | None = None
         self._diagnosing: Future[Diagnosis] | None = None
         self._coverage_pct: float | None = None
-        self._next_diagnosis = 0.0
         self._opening: Estimate | None = None
         self._curve: NDArray[np.float64] | None = None
         self._base_image: EyeImage | None = None
@@ -454,6 +453,7 @@ class Engine:
             self._to_the_end = True  # the last figures stay
         elif not gained:
             self._reading, self._opening, self._diagnosis, self._diagnosing = None, None, None, None
+            self._before = None
             self._blocks.clear()
             self._block = None
 
@@ -495,17 +495,19 @@ class Engine:
         assert self._chain is not None
         merged = self._merged()
         self._coverage_pct = 100.0 * merged.drawn / max(merged.symbols, 1)
-        figures = Figures(merged, self._chain.context())
         told = seconds >= self._next_line
-        looked = self._options.display and seconds >= self._next_diagnosis
         # what takes long is read for a line, at fixed places of the stream, and once there is enough for it; in between it stands as it was
         due = seconds >= self._next_whole or (told and not self.relief)
         if due or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
+            figures = self._before = Figures(merged, self._chain.context())
             step = WHOLE_SECONDS * 2**self.relief
             self._next_whole = (seconds // step + 1) * step
             reading = figures.reading()
             self._opening = figures.estimates.get("opening_pct")
+            if self._options.display:
+                self._diagnose(figures)
         else:
+            figures = Figures(merged, self._chain.context(), after=self._before)
             reading = figures.reading(whole=False)
             if self._reading is not None:
                 before = self._reading
@@ -514,12 +516,6 @@ class Engine:
                 self._opening = self._opening.about(reading.opening_pct)
                 low, high = self._opening.interval()
                 reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
-        if looked:
-            self._next_diagnosis = seconds + DIAGNOSIS_SECONDS * 2**self.relief
-            if self._options.aside is None:
-                self._diagnosis = figures.diagnosis()
-            elif self._diagnosing is None:
-                self._diagnosing = self._options.aside.submit(figures.diagnosis)
         if self._diagnosing is not None and self._diagnosing.done():
             self._diagnosis, self._diagnosing = self._diagnosing.result(), None
         self._base_image = figures.image()
@@ -535,6 +531,13 @@ class Engine:
         if told:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
             self._emit("reading", sample=sample, **document, coverage_pct=self._coverage_pct)
+
+    def _diagnose(self, figures: Figures) -> None:
+        """What stands behind a whole reading, in the thread beside this one if there is one and it is free."""
+        if self._options.aside is None:
+            self._diagnosis = figures.diagnosis()
+        elif self._diagnosing is None:
+            self._diagnosing = self._options.aside.submit(figures.diagnosis)
 
     def _draw(self, sums: EyeSums) -> None:
         """Fold a part into the picture; what is older fades by the persistence."""

@@ -29,8 +29,10 @@ _PUBLISH_UNSEEN_S = 0.25
 _PIECE_S = 0.05  # what the engine is given at once
 _PIECE_SAMPLES = 65536
 _OLDEST_S = 0.4
-_LATE_S, _PROMPT_S = 0.15, 0.05  # so long samples wait when work is to be left out, and when it can be taken up again
-_RELIEF_S, _RECOVERY_S = 0.25, 5.0  # at most one step of either in so long
+# so long samples wait when work is to be left out, and when it can be taken up again; a whole reading takes a tenth of a second
+_LATE_S, _PROMPT_S = 0.2, 0.12
+_RELIEF_S, _RECOVERY_S = 0.25, 1.0  # at most one step of either in so long
+_MOST_RECOVERY_S = 16.0  # where work was taken up again too soon, the next try comes after twice the time
 _MOST_RELIEF = 4
 _TROUBLE_AGAIN_S, _TROUBLE_OVER_S = 60.0, 2.0  # between two notices of one trouble; before it is told to be over
 _JOIN_S = 10.0
@@ -77,6 +79,7 @@ class Watch:
         self._in_work = 0  # samples of the block that is being worked on
         self._published = 0.0
         self._late_at = self._stepped_at = 0.0  # when too much waited last; when the work was last changed for it
+        self._recovered_at, self._recovery_s = -math.inf, _RECOVERY_S
         self._quiet_since = 0.0
         self._start_fields = dict(start_fields or {})
         self._for_s = for_s
@@ -301,10 +304,12 @@ class Watch:
             self._late_at = now
         if waiting_s > _LATE_S:
             if engine.relief < _MOST_RELIEF and now - self._stepped_at >= _RELIEF_S:
+                if now - self._recovered_at < _MOST_RECOVERY_S:
+                    self._recovery_s = min(2 * self._recovery_s, _MOST_RECOVERY_S)
                 self._stepped_at = now
                 engine.relieve(engine.relief + 1)
-        elif engine.relief and now - max(self._stepped_at, self._late_at) >= _RECOVERY_S:
-            self._stepped_at = now
+        elif engine.relief and now - max(self._stepped_at, self._late_at) >= self._recovery_s:
+            self._stepped_at = self._recovered_at = now
             engine.relieve(engine.relief - 1)
 
     def _notice(self, text: str) -> None:
