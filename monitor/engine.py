@@ -500,7 +500,7 @@ class Engine:
         due = seconds >= self._next_whole or (told and not self.relief)
         if due or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
             figures = self._before = Figures(merged, self._chain.context())
-            step = WHOLE_SECONDS * 2**self.relief
+            step = WHOLE_SECONDS * 2 ** min(self.relief, 1)  # a verdict must not stand beside figures of another time
             self._next_whole = (seconds // step + 1) * step
             reading = figures.reading()
             self._opening = figures.estimates.get("opening_pct")
