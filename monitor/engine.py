@@ -160,7 +160,6 @@ class Engine:
         self._diagnosing: Future[Diagnosis] | None = None
         self._coverage_pct: float | None = None
         self._opening: Estimate | None = None
-        self._curve: NDArray[np.float64] | None = None
         self._base_image: EyeImage | None = None
         self._density: NDArray[np.float32] | None = None
         self._traces = 0.0

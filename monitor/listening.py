@@ -4,14 +4,14 @@ import math
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from types import TracebackType
-from typing import Protocol, Self
+from typing import Protocol
 
 import numpy as np
 
 from dsp.block import Block, Samples
 from monitor.errors import NothingToMeasure
 from monitor.sources import Source
+from monitor.sources.base import Closing
 from monitor.sources.ring import ThreadedReader
 from monitor.sources.stream import LiveSource
 from monitor.sources.wire import DESCRIBING, StreamEvent
@@ -44,7 +44,7 @@ class Heard:
         return self.samples.size / self.sample_rate_hz
 
 
-class Ear(Protocol):
+class Ear(Closing, Protocol):
     """Listens to one source; a context."""
 
     def listen(self, seconds: float) -> Heard:
@@ -54,14 +54,6 @@ class Ear(Protocol):
     def close(self) -> None:
         """Listen no more."""
         ...
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        self.close()
 
 
 class RecordingEar(Ear):

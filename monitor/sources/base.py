@@ -74,7 +74,23 @@ class SourceInfo:
     start: int = 0
 
 
-class Source(Protocol):
+class Closing(Protocol):
+    """A context that closes itself at its end."""
+
+    def close(self) -> None:
+        """Give back what is held."""
+        ...
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
+
+
+class Source(Closing, Protocol):
     """An open source of samples; owned by one thread, closed by ``with`` or `close`.
 
     Attributes
@@ -95,14 +111,6 @@ class Source(Protocol):
     def close(self) -> None:
         """Close what this source has opened; a stream that was handed in stays open."""
         ...
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        self.close()
 
 
 @dataclass(frozen=True, slots=True)

@@ -5,13 +5,13 @@ import time
 from collections.abc import Callable, Iterable
 from contextlib import suppress
 from dataclasses import dataclass, field
-from types import TracebackType
-from typing import TYPE_CHECKING, Any, Final, Literal, Protocol, Self, cast
+from typing import TYPE_CHECKING, Any, Final, Literal, Protocol, cast
 
 import numpy as np
 
 from dsp.block import Block, Samples
 from monitor.errors import InputError, printable
+from monitor.sources.base import Closing
 from monitor.sources.endpoint import Endpoint, is_stream, parse_endpoint
 from monitor.sources.keys import Curve, secure
 from monitor.sources.wire import EventKind, Item, StreamEvent, WireState, begin, decode
@@ -71,7 +71,7 @@ class StreamOptions:
     max_message_bytes: int = 64 << 20
 
 
-class LiveSource(Protocol):
+class LiveSource(Closing, Protocol):
     """A source of samples that come when they come; owned by one thread.
 
     Attributes
@@ -101,14 +101,6 @@ class LiveSource(Protocol):
     def close(self) -> None:
         """Give back what the source holds; may be called twice."""
         ...
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(
-        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        self.close()
 
 
 def check_rate(rate_hz: float | None) -> None:

@@ -4,8 +4,8 @@ import time
 from collections.abc import Callable
 from pathlib import Path
 
-from PySide6.QtCore import QPointF, QSize, Qt, Signal
-from PySide6.QtGui import QAction, QKeySequence, QMouseEvent, QPainter, QPaintEvent, QResizeEvent
+from PySide6.QtCore import QSize, Qt, Signal
+from PySide6.QtGui import QAction, QKeySequence, QMouseEvent, QPaintEvent, QResizeEvent
 from PySide6.QtWidgets import QVBoxLayout, QWidget
 
 from monitor.state import SeveralState
@@ -14,7 +14,15 @@ from monitor.views.history import AlarmMemory
 from monitor.views.live_layout import live_unit
 from monitor.views.theme import ThemeName
 from monitor.views.tiles import TileImage, arrange_tiles
-from monitor.views.window import LEAST_SIZE, LiveWindow, PainterInUse, PainterName, logical_rect, show_window
+from monitor.views.window import (
+    LEAST_SIZE,
+    LiveWindow,
+    PainterInUse,
+    PainterName,
+    logical_rect,
+    paint_image,
+    show_window,
+)
 
 _TILES_S = 0.2
 
@@ -55,15 +63,7 @@ class TileStrip(QWidget):
 
     def paintEvent(self, event: QPaintEvent) -> None:
         """Bring the strip to the screen."""
-        image = self.page.image
-        if image is None:
-            return
-        image.setDevicePixelRatio(self.devicePixelRatioF())
-        painter = QPainter(self)
-        painter.setClipRegion(event.region())
-        painter.drawImage(QPointF(0.0, 0.0), image)
-        painter.end()
-        image.setDevicePixelRatio(1.0)
+        paint_image(self, self.page.image, event)
 
     def mousePressEvent(self, event: QMouseEvent) -> None:
         """Bring the tile under the pointer to the front."""

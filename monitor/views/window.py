@@ -13,6 +13,7 @@ from PySide6.QtGui import (
     QCloseEvent,
     QColor,
     QHideEvent,
+    QImage,
     QKeyEvent,
     QKeySequence,
     QPainter,
@@ -67,6 +68,18 @@ _QT_KEYS = {"Enter": ("Return", "Enter"), "Escape": ("Esc",), "PageUp": ("PgUp",
 _CHECKED: tuple[ActionName, ...] = ("hold", "tone", "help")
 
 
+def paint_image(widget: QWidget, image: QImage | None, event: QPaintEvent) -> None:
+    """Bring an image of the screen's own pixels to a widget, as much of it as the event asks for."""
+    if image is None:
+        return
+    image.setDevicePixelRatio(widget.devicePixelRatioF())
+    painter = QPainter(widget)
+    painter.setClipRegion(event.region())
+    painter.drawImage(QPointF(0.0, 0.0), image)
+    painter.end()
+    image.setDevicePixelRatio(1.0)
+
+
 class Face(QWidget):
     """The page inside the window; draws the parts that changed since the last look."""
 
@@ -97,15 +110,7 @@ class Face(QWidget):
 
     def paintEvent(self, event: QPaintEvent) -> None:
         """Bring the page to the screen."""
-        image = self.page.image
-        if image is None:
-            return
-        image.setDevicePixelRatio(self.devicePixelRatioF())
-        painter = QPainter(self)
-        painter.setClipRegion(event.region())
-        painter.drawImage(QPointF(0.0, 0.0), image)
-        painter.end()
-        image.setDevicePixelRatio(1.0)
+        paint_image(self, self.page.image, event)
 
 
 class HelpSheet(QWidget):
