@@ -2,14 +2,15 @@
 
 import argparse
 import threading
+from collections import Counter
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, BinaryIO, cast
 
 from monitor.document import json_text, links_document, text
-from monitor.errors import InputError, MonitorError, NothingToMeasure, printable
+from monitor.errors import MonitorError, NothingToMeasure, printable
 from monitor.interrupt import Interrupt, Stoppable
 from monitor.judging import Judged
 from monitor.links import LinkArguments, named_file
@@ -22,6 +23,9 @@ from monitor.shared_journal import ByLink, LinkJournal
 from monitor.showing import default_view
 from monitor.snapshot import Snapshot
 from monitor.sources import SampleOptions, Source, open_source
+from monitor.sources.opening import is_stream
+from monitor.sources.stdin import StdinUntil
+from monitor.sources.tee import Tee
 from monitor.state import LiveState
 from monitor.terminal import ProgressBar, say
 from monitor.views.wording import plain
@@ -59,8 +63,6 @@ def replay_several(parsed: argparse.Namespace, several: Sequence[LinkArguments])
     """
     for one in several:
         check_pace(one.parsed)
-    if len({one.stream for one in several}) < len(several) and several[0].parsed.source == "-":
-        raise InputError("standard input can be replayed as one link only; save it to a file, or take lidwatch watch")
     links = named_links(several)
     played = play_several(parsed, links) if parsed.pace is not None else None
     found, status = measure_links(parsed, links, played)
@@ -184,10 +186,7 @@ def measure_links(
         interrupt = stack.enter_context(Interrupt())
         # of what was not played at all nothing is opened: not a sample is no stretch
         lengths = [one.seconds or None for one in played] if played is not None else [None] * len(links)
-        sources = [
-            stack.enter_context(_opened(link.arguments.parsed, seconds))
-            for link, seconds in zip(links, lengths, strict=True)
-        ]
+        sources = [stack.enter_context(source) for source in _sources(links, lengths, lambda: interrupt.asked)]
         journal: Journal | None = None
         captures: list[Capture | None] = [None] * len(links)
         if judged:
@@ -233,6 +232,23 @@ def _samples(parsed: argparse.Namespace) -> SampleOptions:
 def _opened(parsed: argparse.Namespace, seconds: float | None = None) -> Source:
     samples = _samples(parsed)
     return open_source(parsed.source, samples if seconds is None else replace(samples, duration_s=seconds))
+
+
+def _sources(
+    links: Sequence[NamedLink], lengths: Sequence[float | None], asked: Callable[[], bool]
+) -> Iterator[Source]:
+    """Each link's source, opened as it is asked for; links in one stream that can be read only once share it."""
+    streams: dict[int, Tee] = {}
+    sharing = Counter(link.arguments.stream for link in links)
+    for link, seconds in zip(links, lengths, strict=True):
+        parsed, stream = link.arguments.parsed, link.arguments.stream
+        if sharing[stream] == 1 or not is_stream(parsed.source):
+            yield _opened(parsed, seconds)
+            continue
+        if stream not in streams:
+            pipe = cast("BinaryIO", StdinUntil(asked)) if parsed.source == "-" else None
+            streams[stream] = Tee(open_source(parsed.source, _samples(parsed), pipe), sharing[stream])
+        yield streams[stream].branch()
 
 
 def _status(found: Sequence[LinkOutcome], links: Sequence[NamedLink], *, interrupted: bool) -> int:
@@ -282,6 +298,8 @@ class _Task:
             self.found.failure = error
         except Exception as error:  # noqa: BLE001  # one link's fault is not the others'
             self.found.failure = MonitorError(printable(f"the measurement failed: {error!r}"))
+        finally:
+            self.source.close()  # whoever shares its stream waits for it no more
 
     def _measured(self) -> Outcome:
         parsed, link = self.link.arguments.parsed, self.link.options

@@ -15,7 +15,7 @@ from monitor.interrupt import Interrupt, Stoppable
 from monitor.links import LinkArguments, links_of
 from monitor.running import chain_options, link_and_limits
 from monitor.survey_report import Row, document, table, text
-from monitor.terminal import ProgressBar, SlowStartNotice
+from monitor.terminal import ProgressBar, SlowStartNotice, say
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -81,6 +81,9 @@ def survey(parsed: argparse.Namespace) -> int:
         import dsp.chain  # noqa: F401  # the kernels, so that the processes find them compiled
     with Interrupt() as interrupt:
         rows = _measure_all(links, names, parsed.jobs or os.cpu_count() or 1, interrupt)
+    for row in rows:
+        if row.error:
+            say(f"lidwatch: {row.name}: {row.error}")
     if parsed.worst_first:
         rows.sort(key=lambda row: (row.opening_pct is not None, row.opening_pct or 0.0))
     from monitor.document import json_text

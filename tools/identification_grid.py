@@ -84,10 +84,12 @@ class Verdict:
 
     @property
     def right_pulse(self) -> bool:
-        """At most 3 points of opening lost; where the true pulse gives no opening either, nothing is lost."""
-        if self.opening_pct is None:
-            return self.right_scheme and self.true_opening_pct is None and self.locked
-        return self.true_opening_pct is None or self.opening_pct > self.true_opening_pct - 3.0
+        """At most 3 points of opening lost, of the right scheme; where the true pulse gives no opening either, nothing is lost."""
+        if not (self.right_scheme and self.locked):
+            return False
+        if self.true_opening_pct is None:
+            return True
+        return self.opening_pct is not None and self.opening_pct >= self.true_opening_pct - 3.0
 
 
 def _one_name(scheme: str) -> str:

@@ -52,6 +52,12 @@ def open_source(
         raise InputError(f"{uri}: cannot be read: {error.strerror or error}") from error
 
 
+def is_stream(uri: str) -> bool:
+    """Whether it can be read only once: standard input, or a named pipe."""
+    mode = None if uri == "-" or "\0" in uri else _mode(uri)
+    return uri == "-" or (mode is not None and stat.S_ISFIFO(mode))
+
+
 def _open_path(uri: str, options: SampleOptions, block_samples: int) -> Source:
     mode = _mode(uri)
     is_sigmf = uri.lower().endswith(_SIGMF_SUFFIXES)

@@ -1,11 +1,12 @@
-"""Live raw samples on standard input."""
+"""Raw samples on standard input: live, or as a stream that can be asked to end."""
 
+import io
 import os
 import select
 import sys
 import time
 from collections.abc import Callable
-from typing import BinaryIO, Final
+from typing import TYPE_CHECKING, BinaryIO, Final
 
 from dsp.block import Block
 from monitor.errors import InputError, printable
@@ -14,9 +15,13 @@ from monitor.sources.raw import partial_note
 from monitor.sources.stream import LiveSource, check_rate
 from monitor.sources.wire import Item, StreamEvent
 
+if TYPE_CHECKING:
+    from _typeshed import WriteableBuffer
+
 _READ_BYTES: Final = 1 << 20
 _FASTEST: Final = 1.01  # times the true rate: more than any sender's clock is off
 _SLACK_S: Final = 0.25
+_LOOK_S: Final = 0.1
 
 
 class StdinSource(LiveSource):
@@ -105,6 +110,35 @@ class StdinSource(LiveSource):
     def close(self) -> None:
         """Read no more; standard input stays open."""
         self.ended = True
+
+
+class StdinUntil(io.RawIOBase):
+    """Standard input, which also ends where ``asked`` says so while nothing comes: to be read elsewhere than where Ctrl-C arrives.
+
+    Raises InputError where there is none.
+    """
+
+    def __init__(self, asked: Callable[[], bool]) -> None:
+        self._fd = _descriptor(None)
+        self._asked = asked
+
+    def fileno(self) -> int:
+        """Its descriptor, which stays open."""
+        return self._fd
+
+    def readable(self) -> bool:
+        """It is."""
+        return True
+
+    def readinto(self, buffer: "WriteableBuffer") -> int:
+        """What is there, as soon as something is; 0 at the end."""
+        view = memoryview(buffer).cast("B")
+        while not self._asked():
+            if select.select([self._fd], [], [], _LOOK_S)[0]:
+                data = os.read(self._fd, len(view))
+                view[: len(data)] = data
+                return len(data)
+        return 0
 
 
 def _descriptor(stream: BinaryIO | None) -> int:

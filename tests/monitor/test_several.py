@@ -363,20 +363,24 @@ def test_what_cannot_be_at_the_start_is_one_line_and_nothing_is_left_running(cap
         time.sleep(0.01)
 
 
-def test_two_link_files_watch_two_links_in_the_samples_of_one_pipe(tmp_path):
-    journal = tmp_path / "w.jsonl"
+def two_in_one(folder):
+    """Two links in the same samples, at -6000 and 6000 Hz, and the options that name their files."""
     for name, carrier in (("low", -6000), ("high", 6000)):
-        (tmp_path / f"{name}.toml").write_text(
+        (folder / f"{name}.toml").write_text(
             f'[link]\nname = "{name}"\nscheme = "qpsk"\nsymbol_rate_hz = 6000\npulse = "rrc:0.35"\ncarrier_hz = {carrier}\n'
         )
     one = qpsk(12_000)
     at = np.arange(one.size) / 48000.0
     # every other sample missing would be another rate: the same wave twice as slow, on two carriers
     slow = np.repeat(one, 2)[: one.size]
-    both = (slow * np.exp(2j * np.pi * 6000 * at) + 0.9 * slow[::-1] * np.exp(-2j * np.pi * 6000 * at)).astype(
-        np.complex64
-    )
-    files = [word for name in ("low", "high") for word in ("--link", str(tmp_path / f"{name}.toml"))]
+    both = slow * np.exp(2j * np.pi * 6000 * at) + 0.9 * slow[::-1] * np.exp(-2j * np.pi * 6000 * at)
+    files = [word for name in ("low", "high") for word in ("--link", str(folder / f"{name}.toml"))]
+    return both.astype(np.complex64), files
+
+
+def test_two_link_files_watch_two_links_in_the_samples_of_one_pipe(tmp_path):
+    journal = tmp_path / "w.jsonl"
+    both, files = two_in_one(tmp_path)
     status, out, err = run_program(
         "watch", "-", *RAW, *files, "--view", "none", "--journal", str(journal), stdin=both.tobytes()
     )
@@ -386,6 +390,39 @@ def test_two_link_files_watch_two_links_in_the_samples_of_one_pipe(tmp_path):
     assert stops == {"low": both.size, "high": both.size}
     gained = {line["link"] for line in lines if line["kind"] == "lock" and line["state"] == "gained"}
     assert gained == {"low", "high"}
+
+
+def test_two_links_in_one_pipe_are_replayed_as_from_a_file(tmp_path):
+    both, files = two_in_one(tmp_path)
+    file = json.loads(run_program("replay", raw(tmp_path, both), *RAW, *files, "--json")[1])
+    status, out, err = run_program("replay", "-", *RAW, *files, "--json", stdin=both.tobytes())
+    assert (status, err) == (0, "")
+    piped = json.loads(out)
+    assert [link["name"] for link in piped["links"]] == ["low", "high"]
+    for own, other in zip(piped["links"], file["links"], strict=True):
+        assert own["source"]["samples"] == both.size
+        assert_alike(own["reading"], other["reading"])
+
+
+def test_ctrl_c_ends_the_replay_of_two_links_in_a_pipe_that_has_stalled(tmp_path):
+    both, files = two_in_one(tmp_path)
+    process = start_program(
+        "replay", "-", *RAW, *files, "--json", stdin=subprocess.PIPE, stdout=subprocess.PIPE, stderr=subprocess.PIPE
+    )
+    try:
+        process.stdin.write(both.tobytes())
+        process.stdin.flush()
+        time.sleep(3.0)
+        assert process.poll() is None
+        process.send_signal(signal.SIGINT)
+        # the pipe stays open: nobody is to wait for it
+        assert process.wait(PATIENCE_S) == 130
+        found = json.loads(process.stdout.read())
+        assert [link["name"] for link in found["links"]] == ["low", "high"]
+        assert process.stderr.read() == b""
+    finally:
+        process.kill()
+        process.communicate()
 
 
 def test_two_channels_are_replayed_as_two_links_with_one_document(tmp_path):
@@ -463,11 +500,6 @@ def test_the_table_of_several_links_has_a_column_for_the_link(tmp_path, capsys):
     rows = table.read_text().splitlines()
     assert rows[0] == ",".join(("link", *CSV_COLUMNS))
     assert {row.split(",")[0] for row in rows[1:]} == {"east", "west"}
-
-
-def test_standard_input_cannot_be_replayed_as_two_links(capsys):
-    assert main(["replay", "-", *RAW, "--link", "a.toml", "--link", "b.toml"]) == 2
-    assert "one link only" in one_line(capsys.readouterr().err)
 
 
 @pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])

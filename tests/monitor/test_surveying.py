@@ -208,7 +208,8 @@ def test_a_broken_limit_is_status_1_and_the_worst_first_comes_first(folder, caps
 def test_one_bad_recording_does_not_hide_the_others(folder, capsys):
     (folder / "torn.wav").write_bytes(b"RIFF")
     assert main(["survey", str(folder), *RAW, *QPSK, "--jobs", "1"]) == 2
-    out = capsys.readouterr().out
+    out, err = capsys.readouterr()
+    assert one_line(err).startswith("lidwatch: torn.wav: ")
     assert "failed: " in out
     assert "3 links" in out
     assert "2 measured; 1 failed" in out
