@@ -5,7 +5,7 @@ Everything here adds up: sums of two stretches are those of both, and none of th
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -18,6 +18,7 @@ from dsp.jitter import BLOCK, TimingSpectrum
 from dsp.link import Scheme
 from dsp.residual import ResidualMeter, ResidualSums
 from dsp.stretches import EAGER, LONGEST, OFTEN, Stretch, Stretches
+from dsp.sums import laid_out
 from dsp.tracking import Tables, Track
 
 COLUMNS = 64  # a symbol interval; the picture shows two intervals
@@ -89,12 +90,6 @@ class LineSums:
         return slope, total / count, float(np.sqrt(max(syy - slope * sxy, 0.0) / count))
 
 
-_ADDED = (
-    "gram", "cross", "square", "level_sums", "crossing_bins", "crossing_groups", "crossing_edges", "unit_sums",
-    "timing_power",
-)  # fmt: skip
-
-
 class EyeSums:
     """All sums of a stretch of symbols; see the module's first line.
 
@@ -133,23 +128,38 @@ class EyeSums:
         self.left = np.zeros((rails, COLUMNS if raster else 0, classes, self.rows.count), np.uint32)
         self.right = np.zeros_like(self.left) if not self.pair else None
         regressors = rails * LAGS + 1
-        self.gram = np.zeros((regressors, regressors))
-        self.cross = np.zeros((rails, regressors, phases))
-        self.square = np.zeros((rails, phases))
-        self.across = 0.0  # energy of a one-railed carrier's idle rail, level units squared
-        self.level_sums = np.zeros((rails, levels, 3))  # count, sum, sum of squares at the decision instant
-        self.crossing_bins = np.zeros((rails, CROSSING_BINS), np.int64)
         around = _AROUND[levels]
-        self.crossing_groups = np.zeros((rails, levels ** len(around), 3))
-        self.crossing_edges = np.zeros((rails, 2, 2))
-        self.unit_sums = np.zeros((3, 2))  # gain, zero by rail, weighted by symbols; last row: symbols
-        self.residual = ResidualSums(scheme, small=not raster)
-        self.timing_power = np.zeros(BLOCK // 2 + 1)
-        self.timing_blocks = 0
+        (
+            self._numbers,
+            (
+                self.gram,
+                self.cross,
+                self.square,
+                self.level_sums,  # count, sum, sum of squares at the decision instant
+                self.crossing_groups,
+                self.crossing_edges,
+                self.unit_sums,  # gain, zero by rail, weighted by symbols; last row: symbols
+                self.timing_power,
+            ),
+        ) = laid_out(
+            (regressors, regressors),
+            (rails, regressors, phases),
+            (rails, phases),
+            (rails, levels, 3),
+            (rails, levels ** len(around), 3),
+            (rails, 2, 2),
+            (3, 2),
+            (BLOCK // 2 + 1,),
+        )
+        self.crossing_bins = np.zeros((rails, CROSSING_BINS), np.int64)
         self.middle = np.zeros((rails, levels, 0 if raster else self.rows.count), np.int64)
+        self.across = 0.0  # energy of a one-railed carrier's idle rail, level units squared
+        self.residual = ResidualSums(scheme, small=not raster)
+        self.timing_blocks = 0
         self.stretches = Stretches()
         self.groups: list[EyeSums] = []
         self._kept: EyeSums | None = None  # what is in the groups, where they were set apart one by one
+        self._small: tuple[tuple[int, int], EyeSums] | None = None  # the last `small`, and how much had been summed
         self.clock = LineSums()
         self.carrier = LineSums()
 
@@ -162,17 +172,32 @@ class EyeSums:
             self.stretches.merge(other.stretches)
         self._add(other, 1)
 
+    @staticmethod
+    def together(parts: Sequence[EyeSums]) -> EyeSums:
+        """The sums of neighbouring stretches of one link, at least one, each of them kept apart too."""
+        first = parts[0]
+        result = EyeSums(first.scheme, first.phases)
+        result.left[...] = first.left
+        if result.right is not None and first.right is not None:
+            result.right[...] = first.right
+        result.stretches.merge(first.stretches)
+        result._add(first, 1)
+        for part in parts[1:]:
+            result.merge(part)
+        result.keep_apart([part.small() for part in parts])
+        return result
+
     def _add(self, other: EyeSums, sign: int) -> None:
         """Add the small sums of another stretch, or with ``sign`` -1 take them away."""
         self.symbols += sign * other.symbols
         self.drawn += sign * other.drawn
         self.across += sign * other.across
         self.timing_blocks += sign * other.timing_blocks
-        for name in _ADDED:
-            mine = getattr(self, name)
-            mine += sign * getattr(other, name)
+        join = np.add if sign > 0 else np.subtract
+        join(self._numbers, other._numbers, out=self._numbers)
+        join(self.crossing_bins, other.crossing_bins, out=self.crossing_bins)
         if not self.raster:
-            self.middle += sign * other.at_decision()
+            join(self.middle, other.at_decision(), out=self.middle)
         self.residual.merge(other.residual, sign)
         self.clock.merge(other.clock, sign)
         self.carrier.merge(other.carrier, sign)
@@ -187,14 +212,21 @@ class EyeSums:
         return self.histogram(range(COLUMNS, COLUMNS + 1))[:, :, 0] if self.raster else self.middle
 
     def small(self) -> EyeSums:
-        """All but raster and stretches, a copy."""
+        """All but raster and stretches. Made once, until more is summed: not to be changed."""
+        summed = self.symbols, self.timing_blocks
+        if self._small is None or self._small[0] != summed:
+            self._small = summed, self._copied()
+        return self._small[1]
+
+    def _copied(self) -> EyeSums:
+        """The small sums to be changed."""
         result = EyeSums(self.scheme, self.phases, raster=False)
         result._add(self, 1)
         return result
 
     def without(self, part: EyeSums) -> EyeSums:
         """The small sums of all but a stretch of these symbols."""
-        result = self.small()
+        result = self.small()._copied()
         result._add(part, -1)
         return result
 
@@ -203,7 +235,7 @@ class EyeSums:
         rest = self.symbols - sum(group.symbols for group in self.groups)
         if not rest:
             return self.groups
-        last = self.small()
+        last = self._copied()
         for group in self.groups if self._kept is None else (self._kept,):
             last._add(group, -1)
         return [*self.groups, last]
@@ -219,7 +251,7 @@ class EyeSums:
         groups = [*self.groups, *parts]
         while len(groups) > MOST_GROUPS:
             pair = min(range(len(groups) - 1), key=lambda i: groups[i].symbols + groups[i + 1].symbols)
-            joined = groups[pair].small()
+            joined = groups[pair]._copied()
             joined._add(groups.pop(pair + 1), 1)
             groups[pair] = joined
         self.groups = groups

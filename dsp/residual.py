@@ -15,6 +15,7 @@ from scipy.special import gammainccinv, gammaincinv
 
 from dsp._kernels import residual as kernel
 from dsp.link import Scheme
+from dsp.sums import laid_out
 
 PRODUCT_LAGS = 4  # symbols between two residuals whose products are summed, from 0 on
 FRAME = 1024  # symbols of one spectrum
@@ -58,11 +59,13 @@ class ResidualSums:
     """
 
     def __init__(self, scheme: Scheme, *, small: bool = False) -> None:
-        self.products = np.zeros((len(pairs(scheme.rails)), 10))
-        self.patterns = np.zeros((scheme.rails, scheme.levels ** len(pattern_around(scheme.levels)), 2))
-        self.square = np.zeros(scheme.rails)
-        self.points = np.zeros((scheme.levels**2 if scheme.rails == 2 else 0, 3))
-        self.power = np.zeros(FRAME)
+        self._numbers, (self.products, self.patterns, self.square, self.points, self.power) = laid_out(
+            (len(pairs(scheme.rails)), 10),
+            (scheme.rails, scheme.levels ** len(pattern_around(scheme.levels)), 2),
+            (scheme.rails,),
+            (scheme.levels**2 if scheme.rails == 2 else 0, 3),
+            (FRAME,),
+        )
         self.frames = 0
         self.constellation = np.zeros((CELLS, CELLS) if scheme.rails == 2 and not small else (0, 0), np.uint32)
         self.reach = 1.6 * max(scheme.rail_levels)
@@ -72,9 +75,8 @@ class ResidualSums:
         self.frames += sign * other.frames
         if self.constellation.size:
             self.constellation += other.constellation
-        for name in ("products", "patterns", "square", "points", "power"):
-            mine = getattr(self, name)
-            mine += sign * getattr(other, name)
+        join = np.add if sign > 0 else np.subtract
+        join(self._numbers, other._numbers, out=self._numbers)
 
 
 class ResidualMeter:
