@@ -247,13 +247,14 @@ def link_model(
     units: NDArray[np.float64],
     split: Split | None,
     limiter: Limiter | None,
+    bend: Bend | None,
     carrier_bandwidth: float,
 ) -> LinkModel:
     """The link at ``ui`` from its pattern response.
 
     ``shares`` ``(levels,)``: how often each level is sent; ``levels`` ``(rails, levels)`` and ``noise`` ``(rails,)``, all that no linear
     response explains, in level units; ``uneven`` ``(rails, levels)`` what a level has of it beyond the others; ``units`` ``(rails,)``:
-    one level unit of each rail in the signal's own unit;
+    one level unit of each rail in the signal's own unit; ``bend``: what ``limiter`` does, None: to be told of this link;
     ``carrier_bandwidth``: BnT of the loop, 0 where there is none.
     """
     rails = scheme.rails
@@ -263,9 +264,8 @@ def link_model(
     gains = units * cursors
     compressed = compressed_levels(levels, scheme)
     deviations, tone, common, turn = np.zeros((rails, 1)), np.zeros(rails), 0.0, 0.0
-    bend = None
     if limiter is not None:
-        bend = limiter.bend(taps * cursors[:, None])
+        bend = limiter.bend(taps * cursors[:, None]) if bend is None else bend
         noise = noise * limiter.rest / (limiter.rest + bend.variance)
         compressed = np.asarray(scheme.rail_levels) + bend.means / cursors[:, None]
     elif split is not None and split.deviations.any():

@@ -79,7 +79,8 @@ class Equalisers:
             windows = sliding_window_view(wave.astype(np.complex128), _SPAN)[2 * _EDGE - _MIDDLE :: 2]
             n = symbols.size - 2 * _EDGE
             reach = HALO - _EDGE
-            parts.append(_Part(windows[:n], symbols.astype(np.complex128), slice(reach, n - reach)))
+            # a copy: products of overlapping views are slow
+            parts.append(_Part(windows[:n].copy(), symbols.astype(np.complex128), slice(reach, n - reach)))
         return parts
 
     def _decide_anew(self) -> None:

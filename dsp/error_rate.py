@@ -18,7 +18,8 @@ from dsp.mixture import Spread, spread
 
 _PATTERNS = 1024  # data patterns that are told apart where the noise depends on them
 _NEGLIGIBLE = 0.01  # share of the noise variance that may as well be everywhere the same
-_CURVE = 48  # steps of a curve
+_CURVE = 32  # steps of a curve
+_NO_MORE = 1e-6  # share of what a threshold's nearer levels get wrong, below which further ones do not count
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,11 +60,8 @@ def spread_given(
     most = int(math.log(_PATTERNS) / math.log(levels.size) + 1e-9)
     told = order[:most]
     told = told[weight[told] * variance > _NEGLIGIBLE * additive]
-    patterns = np.zeros((1, 0))
-    share = np.ones(1)
-    for _ in told:
-        patterns = np.concatenate([np.insert(patterns, 0, value, axis=1) for value in levels])
-        share = np.concatenate([share * part for part in shares])
+    grid = np.indices((levels.size,) * told.size).reshape(told.size, levels.size**told.size)
+    patterns, share = levels[grid].T, np.prod(shares[grid], axis=0)
     square = np.full(share.size, additive)
     for part in modulated:
         rest = part.taps.copy()
@@ -162,9 +160,15 @@ class Decisions:
         count: int = self.levels.shape[1]
         steps = _bit_steps(count)[:, threshold]
         total = 0.0
-        for m, (level, reach) in enumerate(zip(self.levels[rail], self.spreads[rail], strict=True)):
-            distance = value - float(level)
-            total += float(steps[m]) * (reach.above(distance) if threshold >= m else reach.below(distance))
+        for side in (range(threshold, -1, -1), range(threshold + 1, count)):
+            nearer = 0.0
+            for m in side:
+                distance, reach = value - float(self.levels[rail, m]), self.spreads[rail][m]
+                beyond = reach.above(distance) if threshold >= m else reach.below(distance)
+                total += float(steps[m]) * beyond
+                nearer += beyond
+                if beyond <= _NO_MORE * nearer:
+                    break
         return total / count
 
     def best_thresholds(self) -> NDArray[np.float64]:

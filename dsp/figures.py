@@ -16,7 +16,7 @@ from dsp.error_rate import Decisions, over_time, phase_error_rate
 from dsp.eye import COLUMNS, EyeSums
 from dsp.intervals import LEAST_STRETCHES, Estimate, jackknife
 from dsp.jitter import periodic_line, sample_response, split_jitter
-from dsp.limiter import RATE, Limiter, compression
+from dsp.limiter import RATE, Bend, Limiter, compression
 from dsp.mixture import Mixture, Spread, fit_mixture, spread, tail_reach
 from dsp.openings import (
     between,
@@ -93,15 +93,19 @@ class Figures:
         self._mixture_isi = np.zeros(sums.scheme.rails)
         self.enough = sums.symbols >= LEAST_SYMBOLS and float(counts.min()) >= 3
         self._drawn = sums.drawn / max(sums.symbols, 1) * float(counts.min())  # traces of the rarest level
-        if after is not None:
+        if after is not None and after.enough:
             self._limiter = after._limiter
         self._tails_counted = False
         self._best: float = COLUMNS
         self._corner: float | None = None
+        self._bent_products: NDArray[np.float64] | None = None  # of what is left behind response and bend
+        self._met_bend: Bend | None = None  # at the best instant
         if not self.enough:
             return
         if like is not None:
             self._limiter = like._limiter
+            self._met_bend = like._link.bend
+            self._bent_products = like._bent_products
             self._tails_counted = like._tails_counted
             if like._mixtures is not None:
                 self._fit_mixtures()
@@ -353,10 +357,10 @@ class Figures:
         matched, residual = self._context.receive_filter, self._sums.residual
         if matched is None or self._mixtures is not None:
             return None
-        told = bool(pattern_means(residual.patterns, residual.square)[1].any())
+        told = bool(pattern_means(residual.patterns, residual.square, self._scheme.levels)[1].any())
         if self._scheme.rails == 2 and not told:
             table = np.stack([residual.points[:, [0, 1 + rail]] for rail in range(2)])
-            told = bool(pattern_means(table, residual.square)[1].any())
+            told = bool(pattern_means(table, residual.square, self._scheme.levels)[1].any())
         if not told:
             return None
         limiter = Limiter(self._sums.stretches, self._scheme, self._pattern.line(RATE), matched)
@@ -366,23 +370,25 @@ class Figures:
     def _split(self) -> Split | None:
         rails, limiter = self._scheme.rails, self._limiter
         late, early = (slope.reshape(rails, -1) for slope in self._pattern.flanks(0.0))
-        products = None
-        if limiter is not None:
+        if limiter is not None and self._bent_products is None:
             value = self._pattern.model(0.0).taps.reshape(rails, -1)
             other = np.stack((-value[1], value[0])) if rails == 2 and not self._scheme.stagger else np.zeros_like(value)
             rows = [part.astype(np.float32) for part in (late, early, other)]
-            products = np.sum(
+            self._bent_products = np.sum(
                 [products_of(one.errors, *(part @ one.symbols for part in rows)) for one in limiter.residuals()],
                 axis=0,
             )
         return split(
-            self._sums.residual, self._scheme, 0.5 * (late + early), smooth=self._pattern.smooth, products=products
-        )
+            self._sums.residual, self._scheme, 0.5 * (late + early),
+            smooth=self._pattern.smooth, products=self._bent_products,
+        )  # fmt: skip
 
     @cached_property
     def _link(self) -> LinkModel:
         """The link at the best instant."""
-        return self._link_at(_ui(self._best))
+        link = self._link_at(_ui(self._best))
+        self._met_bend = link.bend
+        return link
 
     def budget(self) -> Budget:
         """What closes the eye, in points of opening at the target error rate."""
@@ -438,7 +444,7 @@ class Figures:
             levels=np.asarray([self._levels(rail) for rail in range(self._scheme.rails)]),
             noise=noise / self._worth(ui) ** 2,
             uneven=np.asarray([self._uneven_noise(rail) for rail in range(self._scheme.rails)]) / self._worth(ui)[:, None] ** 2,
-            units=units, split=self._split, limiter=self._limiter,
+            units=units, split=self._split, limiter=self._limiter, bend=self._met_bend,
             carrier_bandwidth=self._context.carrier_bandwidth,
         )  # fmt: skip
 

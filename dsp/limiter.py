@@ -180,7 +180,7 @@ class Limiter:
                 for side, half in enumerate((about < 0.0, about >= 0.0)):
                     # without ISI there are no sides
                     some = np.sort(rest[half] if half.any() and spread > 1e-6 * here.sum() else rest)
-                    points[rail, m, side] = np.quantile(some, middles)
+                    points[rail, m, side] = np.interp(middles * (some.size - 1), np.arange(some.size), some)
                     points[rail, m, side, [0, -1]] = some[[0, -1]]
         return Bend(linear, means, slopes, points, variance)
 

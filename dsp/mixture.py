@@ -5,8 +5,11 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
-from scipy.special import log_ndtr, ndtr, ndtri
+from scipy.special import ndtri
+
+from dsp._kernels import mixture as kernel
+
+_FINEST = 2048  # steps that a spread's reach is at most parted into
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,11 +90,15 @@ class Spread:
 
     def below(self, limit: float) -> float:
         """Probability of a sample below ``limit``; exact in the far tail."""
-        return float(self.share @ ndtr((limit - self.at) / self.sigma))
+        return float(kernel.below(self.at, self.share, self._sigmas(), limit))
 
     def above(self, limit: float) -> float:
         """Probability of a sample above ``limit``; exact in the far tail."""
-        return float(self.share @ ndtr((self.at - limit) / self.sigma))
+        return self.mirrored().below(-limit)
+
+    def _sigmas(self) -> NDArray[np.float64]:
+        """``(n,)`` or ``(1,)``."""
+        return np.atleast_1d(np.asarray(self.sigma, dtype=np.float64))
 
     def variance(self) -> float:
         """Of the discrete part."""
@@ -107,17 +114,10 @@ class Spread:
 
     def quantile(self, share: float) -> float:
         """The value that a ``share`` of the samples lies below."""
-        reach = 1.0 - float(ndtri(share))
-        most = float(np.max(self.sigma))
-        low, high = self.at[0] - reach * most, self.at[-1] + reach * most
-        target = math.log(share)
-
-        def excess(limit: float) -> float:
-            logs = log_ndtr((limit - self.at) / self.sigma)
-            peak = logs.max()
-            return float(peak) + math.log(float(self.share @ np.exp(logs - peak)) + 1e-300) - target
-
-        return float(brentq(excess, low, high, xtol=1e-9 * (1.0 + abs(low)), rtol=1e-12))
+        sigma = self._sigmas()
+        reach = (1.0 - float(ndtri(share))) * float(sigma.max())
+        low, high = float(self.at[0]) - reach, float(self.at[-1]) + reach
+        return float(kernel.quantile(self.at, self.share, sigma, share, low, high))
 
 
 def spread(taps: NDArray[np.float64], levels: NDArray[np.float64], shares: NDArray[np.float64], sigma: float) -> Spread:
@@ -134,24 +134,16 @@ def spread(taps: NDArray[np.float64], levels: NDArray[np.float64], shares: NDArr
     small = np.asarray([float(taps[i]) for i in order[len(big) :]])
     rest = math.sqrt(sigma**2 + variance * float(small @ small))
     reach = sum(abs(t) for t in big) * outer
-    half = 2048
-    step = max(reach / half, 1e-9)
-    density = np.zeros(2 * half + 3)
-    density[half + 1] = 1.0
-    for tap in big:
-        new = np.zeros_like(density)
-        for level, share in zip(levels, shares, strict=True):
-            shift = tap * level / step
-            whole = math.floor(shift)
-            part = shift - whole
-            new += share * (1 - part) * np.roll(density, whole)
-            if part > 0:
-                new += share * part * np.roll(density, whole + 1)
-        density = new
+    # fine against the noise, which then hides the grid
+    step = max(reach / _FINEST, min(rest / 16.0, max(reach / 16.0, 1e-9)), 1e-9)
+    half = math.ceil(reach / step) + len(big) + 1
+    density = np.zeros(2 * half + 1)
+    density[half] = 1.0
+    added = kernel.spread_levels(np.asarray(big), levels, shares, step, density, np.empty_like(density))
     some = density > 1e-18
-    at = (np.flatnonzero(some) - half - 1) * step + mean * float(small.sum())
-    share = np.asarray(density[some], dtype=np.float64)
-    return Spread(np.asarray(at, dtype=np.float64), share / share.sum(), rest)
+    at = np.asarray((np.flatnonzero(some) - half) * step + mean * float(small.sum()), dtype=np.float64)
+    share = density[some]
+    return Spread(at, share / share.sum(), math.sqrt(max(rest**2 - added, 0.5 * rest**2)))
 
 
 def tail_reach(

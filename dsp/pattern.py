@@ -88,6 +88,7 @@ class Pattern:
 
     def model(self, ui: float) -> PatternModel:
         """The response at ``ui``, -1 to 1."""
+        ui = round(ui, 9)  # so that instants a step apart share their models
         if ui not in self._models:
             self._models[ui] = self._model(ui)
         return self._models[ui]

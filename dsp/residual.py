@@ -6,6 +6,7 @@ Slopes are per UI, values in level units.
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
@@ -181,7 +182,7 @@ class ResidualMeter:
         self._table = keep * self._table + table
         self._square = keep * self._square + square
         if fresh:
-            means, _ = pattern_means(self._table, self._square)
+            means, _ = pattern_means(self._table, self._square, levels)
             self._deviations = means.astype(np.float32) if means.any() else None
         if self._deviations is not None:
             for rail, error in enumerate(errors):
@@ -327,7 +328,7 @@ def split(
     common, turn = _shared(products, scheme, np.sum(slopes**4, axis=1), single)
     # no jitter is more like itself a symbol on than at once: where patterns hide it, it shows there
     turn = max(turn, _turn_kept(products)) if rails == 2 else turn
-    deviations, pattern = pattern_means(sums.patterns, sums.square)
+    deviations, pattern = pattern_means(sums.patterns, sums.square, scheme.levels)
     return Split(
         random, (common + single) * steepness, turn * others, common, single, turn, pattern, deviations, tone
     )  # fmt: skip
@@ -411,28 +412,39 @@ def _clear(estimate: NDArray[np.float64], variance: NDArray[np.float64]) -> NDAr
 
 
 def pattern_means(
-    table: NDArray[np.float64], square: NDArray[np.float64]
+    table: NDArray[np.float64], square: NDArray[np.float64], levels: int
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Mean residual of each pattern, drawn towards 0 by what chance explains, ``(rails, patterns)``, and their variance, ``(rails,)``.
+    """Mean residual of each pattern of symbols of so many ``levels``, ``(rails, patterns)``, and their variance, ``(rails,)``.
 
-    ``table`` ``(rails, patterns, 2)``: count and sum; ``square`` ``(rails,)``: sum of the residuals' squares. An analysis of variance: 0
-    where the patterns' means differ no more than chance makes them.
+    Less what is linear in the symbols, which is the response's, and drawn towards 0 by what chance explains. ``table``
+    ``(rails, patterns, 2)``: count and sum; ``square`` ``(rails,)``: sum of the residuals' squares. An analysis of variance: 0 where
+    the patterns' means differ no more than chance makes them.
     """
     means = np.zeros(table.shape[:2])
     variance = np.zeros(table.shape[0])
+    linear = _linear(levels, table.shape[1])
     for rail, (count, total) in enumerate(np.moveaxis(table, 2, 1)):
-        n, used = float(count.sum()), int((count > 0).sum())
-        if n < max(2 * used, 1):
+        n, used = float(count.sum()), int((count > 0).sum()) - linear.shape[1]
+        if n < max(2 * used, 1) or used < 1:
             continue
         mean = total / np.maximum(count, 1.0)
-        explained = float(count @ mean**2)
-        within = max(float(square[rail]) - explained, 1e-12 * n) / (n - used)
-        between = explained / n - used / n * within
+        weights = np.linalg.lstsq((linear.T * count) @ linear, linear.T @ total, rcond=1e-9)[0]
+        within = max(float(square[rail]) - float(count @ mean**2), 1e-12 * n) / (n - used)
+        mean = np.where(count > 0, mean - linear @ weights, 0.0)
+        between = float(count @ mean**2) / n - used / n * within
         # three times the sampling error of such a sum of squares
         if between > 3.0 * within * math.sqrt(2.0 * used) / n:
             variance[rail] = between
             means[rail] = mean * between / (between + within / np.maximum(count, 1e-9))
     return means, variance
+
+
+@lru_cache(maxsize=16)
+def _linear(levels: int, patterns: int) -> NDArray[np.float64]:
+    """A constant and each symbol of all patterns, ``(patterns, 1 + symbols)``."""
+    symbols = round(math.log(patterns) / math.log(levels))
+    values = 2.0 * np.indices((levels,) * symbols).reshape(symbols, -1) - (levels - 1.0)
+    return np.asarray(np.concatenate((np.ones((1, patterns)), values)).T)
 
 
 def find_tone(power: NDArray[np.float64], frames: int, *, real: bool) -> Tone | None:

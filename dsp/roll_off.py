@@ -1,11 +1,15 @@
 """Which roll-off was sent, told from the pattern response behind a root raised cosine of another one."""
 
+from functools import lru_cache
+
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import minimize
+
+from dsp.openings import vertex
 
 _BINS = 256  # of the band from 0 to one symbol rate
-_STEPS = np.arange(0.05, 1.001, 0.05)
+_STEPS = np.linspace(0.05, 1.0, 96)
+_LATE = np.linspace(-0.12, 0.12, 13)  # UI
 _DIFFERENT = 0.03  # roll-offs nearer than that are one
 _REACH = 6  # symbols on either side that are looked at
 _CLEAR = 20.0  # times the chance of the taps that the misfit must fall by
@@ -29,35 +33,38 @@ def fitting_roll_off(
     another roll-off does not explain most of what is off, or what is off is no more than chance.
     """
     near = np.abs(times) <= _REACH
-    times, response = times[near], response[near]
-    frequency = (np.arange(_BINS) + 0.5) / _BINS
-    behind = spectrum(frequency, received)
-
-    def misfit(roll_off: float, late: float) -> float:
-        return misfits(np.asarray([roll_off]), late)[0]
-
-    def misfits(roll_offs: NDArray[np.float64], late: float) -> list[float]:
-        pulse = np.cos(2 * np.pi * np.outer(times - late, frequency))
-        result = []
-        for roll_off in roll_offs.tolist():
-            shape = pulse @ (spectrum(frequency, roll_off) * behind)
-            scale = float(shape @ response) / float(shape @ shape)
-            result.append(float(np.sum((response - scale * shape) ** 2)))
-        return result
-
-    rough = np.min([misfits(_STEPS, late) for late in np.linspace(-0.1, 0.1, 5).tolist()], axis=0)
-    start = np.asarray([_STEPS[int(np.argmin(rough))], 0.0])
-
-    def other(x: NDArray[np.float64]) -> float:
-        return misfit(min(max(float(x[0]), 0.05), 1.0), float(x[1]))
-
-    def same(x: NDArray[np.float64]) -> float:
-        return misfit(received, float(x[0]))
-
-    found = minimize(other, start, method="Nelder-Mead")
-    least = float(minimize(same, np.zeros(1), method="Nelder-Mead").fun)
-    roll_off = float(np.clip(found.x[0], 0.05, 1.0))
-    explained = least - float(found.fun)
+    response = response[near]
+    shapes = _shapes(times[near].tobytes(), received)
+    misfit = float(response @ response) - (shapes @ response) ** 2
+    of_each = np.asarray([_least(row) for row in misfit[:-1]])
+    best = int(np.argmin(of_each))
+    roll_off = float(_STEPS[best] + vertex(-of_each, best) * (_STEPS[1] - _STEPS[0]))
+    least = _least(misfit[-1])
+    explained = least - _least(of_each)
     if abs(roll_off - received) < _DIFFERENT or explained < 0.6 * least or explained < _CLEAR * variance:
         return None
     return roll_off
+
+
+@lru_cache(maxsize=8)
+def _shapes(times: bytes, received: float) -> NDArray[np.float64]:
+    """Responses behind a filter of roll-off ``received``, of energy 1: of `_STEPS` and last of that filter's own, each late by `_LATE`.
+
+    ``times``: the bytes of ``(n,)`` times in UI. Shape ``(96 + 1, lates, n)``.
+    """
+    at = np.frombuffer(times)
+    frequency = (np.arange(_BINS) + 0.5) / _BINS
+    behind = spectrum(frequency, received)
+    spectra = np.asarray([spectrum(frequency, roll_off) * behind for roll_off in (*_STEPS.tolist(), received)])
+    shapes = np.stack([spectra @ np.cos(2 * np.pi * np.outer(frequency, at - late)) for late in _LATE], axis=1)
+    return np.asarray(shapes / np.linalg.norm(shapes, axis=2, keepdims=True))
+
+
+def _least(values: NDArray[np.float64]) -> float:
+    """Of a curve, between its points, by a parabola through the three that are least."""
+    top = int(np.argmin(values))
+    if not 0 < top < values.size - 1:
+        return float(values[top])
+    left, middle, right = (float(value) for value in values[top - 1 : top + 2])
+    bend = left - 2.0 * middle + right
+    return middle - 0.125 * (left - right) ** 2 / bend if bend > 0.0 else middle

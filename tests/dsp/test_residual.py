@@ -127,11 +127,22 @@ def test_patterns_that_differ_by_chance_have_no_means():
     rng = np.random.default_rng(3)
     group = rng.integers(0, 32, 20_000)
     for shift, wanted in ((0.0, 0.0), (0.2, 0.04)):
-        error = rng.standard_normal(group.size) + shift * np.where(group % 2, 1.0, -1.0)
+        # the product of two symbols: no linear response explains it
+        error = rng.standard_normal(group.size) + shift * np.where(group % 4 % 3 == 0, 1.0, -1.0)
         table = np.stack((np.bincount(group, minlength=32), np.bincount(group, error, 32)), axis=1)[None]
-        means, variance = pattern_means(table, np.asarray([float(error @ error)]))
+        means, variance = pattern_means(table, np.asarray([float(error @ error)]), 2)
         assert variance[0] == pytest.approx(wanted, rel=0.2)
         assert means.any() == (shift > 0)
+
+
+def test_what_is_linear_in_the_symbols_is_the_response_s_and_not_the_patterns():
+    rng = np.random.default_rng(3)
+    group = rng.integers(0, 64, 20_000)
+    symbols = np.asarray([-3.0, -1.0, 1.0, 3.0])
+    error = rng.standard_normal(group.size) + 0.1 * symbols[group % 4] - 0.05 * symbols[group // 16] + 0.1
+    table = np.stack((np.bincount(group, minlength=64), np.bincount(group, error, 64)), axis=1)[None]
+    means, _ = pattern_means(table, np.asarray([float(error @ error)]), 4)
+    assert not means.any()
 
 
 @pytest.mark.parametrize("cuts", [[1, 2, 3], list(range(0, 24_000, 997))], ids=len)
@@ -171,7 +182,7 @@ def test_too_few_symbols_are_not_split():
 
 
 def test_where_no_pattern_was_seen_there_are_no_means():
-    means, variance = pattern_means(np.zeros((2, 4, 2)), np.zeros(2))
+    means, variance = pattern_means(np.zeros((2, 4, 2)), np.zeros(2), 2)
     assert not means.any()
     assert not variance.any()
 
