@@ -3,7 +3,7 @@
 import math
 from collections import deque
 from collections.abc import Callable, Iterable, Mapping
-from concurrent.futures import Executor, Future
+from concurrent.futures import Executor, Future, wait
 from dataclasses import dataclass, field, replace
 from typing import Any, Protocol
 
@@ -16,7 +16,7 @@ from dsp.chain import Chain, ChainOptions, LockEvent
 from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
-from dsp.figures import Figures
+from dsp.figures import Context, Figures
 from dsp.identify import Identified, Wanted
 from dsp.intervals import LEAST_STRETCHES, Estimate, difference
 from dsp.picture import EyeImage
@@ -31,9 +31,12 @@ from monitor.snapshot import Snapshot
 from monitor.state import AlarmLine, Change, LiveState, Mark, Verdict
 
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
+_SLOW_KEYS = ("equaliser", "budget", "verdict", "ber_low", "ber_high")  # only in whole readings
 PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
 WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
+COLLECT_SECONDS = 0.1  # one is collected at the next multiple of it, a fixed place of the stream
+PATIENCE_SECONDS = 0.03  # that a live stream waits for one that is not there by then
 TICK_SECONDS = 0.2  # in which clipped samples are counted together
 CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
@@ -77,6 +80,31 @@ class EngineOptions:
     def judges(self) -> bool:
         """Whether somebody wants readings between two lines."""
         return self.display or self.history or bool(self.rules)
+
+
+class _Asked:
+    """A whole reading that was asked for: made in the thread beside while the stream goes on, or without one when it is collected."""
+
+    def __init__(self, sums: EyeSums, context: Context, seconds: float, sample: int, aside: Executor | None) -> None:
+        self.sample = sample
+        self.told = False
+        self.collected_at = (seconds // COLLECT_SECONDS + 1) * COLLECT_SECONDS
+        self.coverage_pct = 100.0 * sums.drawn / max(sums.symbols, 1)
+        self._sums, self._context = sums, context
+        self._work = aside.submit(self._read) if aside is not None else None
+
+    def _read(self) -> Figures:
+        figures = Figures(self._sums, self._context)
+        figures.reading()
+        return figures
+
+    def ready(self) -> bool:
+        """Whether it is there, or will be in a moment that the stream can wait."""
+        return self._work is None or bool(wait((self._work,), PATIENCE_SECONDS).done)
+
+    def figures(self) -> Figures:
+        """The figures, their whole reading made."""
+        return self._work.result() if self._work is not None else self._read()
 
 
 class Engine:
@@ -156,10 +184,12 @@ class Engine:
         self._mixed = False  # whether the open block holds symbols from before a mark
         self._reading: Reading | None = None
         self._before: Figures | None = None  # of the last whole reading
+        self._asked: _Asked | None = None
         self._diagnosis: Diagnosis | None = None
         self._diagnosing: Future[Diagnosis] | None = None
         self._coverage_pct: float | None = None
         self._opening: Estimate | None = None
+        self._curve: NDArray[np.float64] | None = None
         self._base_image: EyeImage | None = None
         self._density: NDArray[np.float32] | None = None
         self._traces = 0.0
@@ -439,6 +469,8 @@ class Engine:
 
     def _lock_event(self, event: LockEvent) -> None:
         gained = event.state == "gained"
+        if not gained:
+            self._collect()
         at = event.sample / self.sample_rate_hz
         self._locks.add(at, gained)
         self._last_lock_loss = None if gained else at
@@ -472,6 +504,8 @@ class Engine:
                 self._blocks.append(self._block)
             self._block, self._mixed = None, False
         measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
+        if self._asked is not None and seconds >= self._asked.collected_at and self._asked.ready():
+            self._collect()
         due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
         if seconds >= due and measured >= min(LEAST_JUDGED, self._block_symbols):
             # at fixed places of the stream, so that who watches makes no difference to the lines
@@ -495,26 +529,16 @@ class Engine:
         merged = self._merged()
         self._coverage_pct = 100.0 * merged.drawn / max(merged.symbols, 1)
         told = seconds >= self._next_line
-        # what takes long is read for a line, at fixed places of the stream, and once there is enough for it; in between it stands as it was
+        # what takes long is read for a line, at fixed places of the stream, and once there is enough for it
         due = seconds >= self._next_whole or (told and not self.relief)
         if due or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
-            figures = self._before = Figures(merged, self._chain.context())
+            self._collect()
             step = WHOLE_SECONDS * 2 ** min(self.relief, 1)  # a verdict must not stand beside figures of another time
             self._next_whole = (seconds // step + 1) * step
-            reading = figures.reading()
-            self._opening = figures.estimates.get("opening_pct")
-            if self._options.display:
-                self._diagnose(figures)
-        else:
-            figures = Figures(merged, self._chain.context(), after=self._before)
-            reading = figures.reading(whole=False)
-            if self._reading is not None:
-                before = self._reading
-                reading = replace(reading, equaliser=before.equaliser, budget=before.budget, verdict=before.verdict)
-            if reading.opening_pct is not None and self._opening is not None:
-                self._opening = self._opening.about(reading.opening_pct)
-                low, high = self._opening.interval()
-                reading = replace(reading, opening_low_pct=low, opening_high_pct=high)
+            self._asked = _Asked(merged, self._chain.context(), seconds, self._chain.position, self._options.aside)
+        # meanwhile it stands as it was
+        figures = Figures(merged, self._chain.context(), after=self._before)
+        reading = self._with_slow(figures.reading(whole=False), self._reading)
         if self._diagnosing is not None and self._diagnosing.done():
             self._diagnosis, self._diagnosing = self._diagnosing.result(), None
         self._base_image = figures.image()
@@ -524,12 +548,41 @@ class Engine:
             self._best is None or reading.opening_pct > (self._best.opening_pct or -math.inf)
         ):
             self._best, self._best_at = reading, seconds
-        sample = self._chain.position
-        document = reading_document(reading) or {}
-        self._tell_alarms(self.alarms.update(document, seconds, sample))
+        self._tell_alarms(self.alarms.update(reading_document(reading) or {}, seconds, self._chain.position))
         if told:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
-            self._emit("reading", sample=sample, **document, coverage_pct=self._coverage_pct)
+            if self._asked is not None:
+                self._asked.told = True
+            else:
+                self._tell_reading(reading, self._chain.position, self._coverage_pct)
+
+    def _collect(self) -> None:
+        """Take in the whole reading that was asked for, and write its line."""
+        asked, self._asked = self._asked, None
+        if asked is None:
+            return
+        figures = self._before = asked.figures()
+        whole = figures.reading()
+        self._opening = figures.estimates.get("opening_pct")
+        if self._reading is not None:
+            self._reading = self._with_slow(self._reading, whole)
+        if self._options.display:
+            self._diagnose(figures)
+        if asked.told:
+            self._tell_reading(whole, asked.sample, asked.coverage_pct)
+
+    def _with_slow(self, reading: Reading, slow: Reading | None) -> Reading:
+        """With what only a whole reading has, and its interval about the opening as it is now."""
+        if slow is not None:
+            reading = replace(reading, **{key: getattr(slow, key) for key in _SLOW_KEYS})
+        if reading.opening_pct is None or self._opening is None:
+            return reading
+        self._opening = self._opening.about(reading.opening_pct)
+        low, high = self._opening.interval()
+        return replace(reading, opening_low_pct=low, opening_high_pct=high)
+
+    def _tell_reading(self, reading: Reading, sample: int, coverage_pct: float) -> None:
+        self._emit("reading", sample=sample, **(reading_document(reading) or {}), coverage_pct=coverage_pct)
 
     def _diagnose(self, figures: Figures) -> None:
         """What stands behind a whole reading, in the thread beside this one if there is one and it is free."""
@@ -561,6 +614,7 @@ class Engine:
 
     def mark(self, name: str = "") -> None:
         """Note the present reading; changes are told against it from now on."""
+        self._collect()
         reading = self._reading
         self._marks.append(
             Mark(
