@@ -270,6 +270,11 @@ class EyeSums:
                 result[:, :, i] = side[:, column % COLUMNS]
         return result
 
+    def density(self) -> NDArray[np.uint32]:
+        """Traces of all levels by rail, column and row, shape ``(rails, columns, rows)``: the interval after a symbol is that before the next."""
+        interval = self.left.sum(axis=2, dtype=np.uint32)
+        return np.concatenate([interval, interval], axis=1)
+
 
 class EyeMeter:
     """Turns tracked symbols into `EyeSums`, a window at a time.

@@ -652,7 +652,7 @@ class Figures:
         column = min(max(round(self._best), 0), 2 * COLUMNS - 1)
         return EyeImage(
             ("",) if self._scheme.rails == 1 else ("I", "Q"),
-            self._histogram.sum(axis=1).astype(np.uint32),
+            self._sums.density(),
             (np.arange(2 * COLUMNS) - COLUMNS) / COLUMNS,
             self._sums.rows.centres(),
             self._curves.min(axis=(0, 1)),

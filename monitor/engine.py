@@ -595,7 +595,7 @@ class Engine:
         """Fold a part into the picture; what is older fades by the persistence."""
         if not sums.drawn and self.persistence_s == 0:
             return  # the newest traces are those before
-        density = sums.histogram().sum(axis=1).astype(np.float32)
+        density = sums.density().astype(np.float32)
         old = self.persistence_s == 0 and self._taken
         self._taken = False
         if old or self._density is None or self._density.shape != density.shape:

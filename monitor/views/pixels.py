@@ -1,4 +1,4 @@
-"""From the eye's arrays to pixels: plain numpy, no Qt."""
+"""From the eye's arrays to pixels: no Qt."""
 
 import math
 from dataclasses import dataclass
@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from dsp.picture import EyeImage
+from dsp.picture import EyeImage, between_columns, shares_per_pixel
 
 TIME_MIN_UI, TIME_MAX_UI = -1.0, 1.0
 # the opening axis ends above 100 %, so that a perfect eye's curve is clear of the frame
@@ -37,28 +37,6 @@ def visible_levels(image: EyeImage) -> tuple[float, float]:
         low = min(low, float(image.row_level[first]) - 0.1)
         high = max(high, float(image.row_level[min(last, image.row_level.size - 1)]) + 0.1)
     return math.floor(low * 2.0) / 2.0, math.ceil(high * 2.0) / 2.0
-
-
-def _row_edges(row_level: NDArray[np.float64]) -> NDArray[np.float64]:
-    step = (row_level[-1] - row_level[0]) / (row_level.size - 1) if row_level.size > 1 else 1.0
-    return np.asarray(row_level[0] - step / 2.0 + step * np.arange(row_level.size + 1))
-
-
-def shares_per_pixel(
-    counts: NDArray[np.uint32], row_level: NDArray[np.float64], low: float, high: float, height: int
-) -> NDArray[np.float64]:
-    """Share out row counts ``(..., rows)`` to ``height`` pixel rows from ``low`` to ``high``, ``(..., height)``.
-
-    A count is spread evenly over its row, so the sum over the pixels is the sum over the visible rows.
-    """
-    edges = _row_edges(row_level)
-    wanted = np.clip(np.linspace(low, high, height + 1), edges[0], edges[-1])
-    position = (wanted - edges[0]) / (edges[1] - edges[0])
-    whole = np.clip(position.astype(np.int64), 0, row_level.size - 1)
-    running = np.zeros((*counts.shape[:-1], row_level.size + 1))
-    np.cumsum(counts, axis=-1, out=running[..., 1:])
-    below = running[..., whole] + counts[..., whole] * (position - whole)
-    return np.asarray(np.diff(below, axis=-1))
 
 
 def column_tones(image: EyeImage, rail: int, low: float, high: float, height: int) -> NDArray[np.float32]:
@@ -114,58 +92,6 @@ def density_indices(
     position = np.interp(ui, image.column_ui, np.arange(image.column_ui.size))
     drawn = between_columns(tone, position, max(1, round(height * _REACH)))
     return np.asarray((drawn * np.float32(steps - 1) + np.float32(0.5)).astype(np.uint8))
-
-
-def between_columns(tone: NDArray[np.float32], position: NDArray[np.float64], reach: int) -> NDArray[np.float32]:
-    """Tones ``(rows, columns)`` at fractional column positions ``(width,)``, rising, as ``(rows, width)``.
-
-    Straight between the two columns in every row where both have traces or neither has. Where only one has, the trace
-    runs on to the nearest traced row of the other column, up to ``reach`` rows away, so that a lone steep trace stays a
-    line instead of breaking up into the columns' dots; with nothing within reach it fades.
-    """
-    rows, columns = tone.shape
-    left = np.clip(position.astype(np.int64), 0, max(columns - 2, 0))
-    weight = (position - left).astype(np.float32)
-    if columns < 2 or position.size <= columns:
-        start = tone[:, left]
-        return np.asarray(start + (tone[:, np.minimum(left + 1, columns - 1)] - start) * weight)
-    nearest = _nearest_traced_row(tone)
-    traced = tone > 0
-    sides = (tone[:, :-1].copy(), tone[:, 1:].copy())
-    moves = []
-    for here, there in ((0, 1), (1, 0)):
-        row, pair = np.nonzero(traced[:, here : columns - 1 + here] & ~traced[:, there : columns - 1 + there])
-        target = nearest[row, pair + there]
-        kept = np.abs(target - row) <= reach
-        row, pair, target = row[kept], pair[kept], target[kept]
-        moves.append((row, pair, target, tone[row, pair + here], tone[target, pair + there]))
-        sides[here][row, pair] = 0.0
-    start = sides[0][:, left]
-    drawn = start + (sides[1][:, left] - start) * weight
-    first = np.searchsorted(left, np.arange(columns))  # pair j is drawn on pixel columns first[j] to first[j + 1]
-    for (row, pair, target, own, other), share_of in zip(moves, (weight, np.float32(1.0) - weight), strict=True):
-        count = first[pair + 1] - first[pair]
-        for offset in range(int(count.max(initial=0))):
-            live = count > offset
-            pixel = first[pair[live]] + offset
-            share = share_of[pixel]
-            at = row[live] + (target[live] - row[live]) * share
-            value = own[live] + (other[live] - own[live]) * share
-            above = np.minimum(at.astype(np.int64), rows - 1)
-            part = (at - above).astype(np.float32)
-            np.maximum.at(drawn, (above, pixel), value * (1.0 - part))
-            np.maximum.at(drawn, (np.minimum(above + 1, rows - 1), pixel), value * part)
-    return np.asarray(drawn)
-
-
-def _nearest_traced_row(tone: NDArray[np.float32]) -> NDArray[np.int64]:
-    """For every pixel the row of the nearest tone above 0 in its column; far outside where the column is empty."""
-    rows = tone.shape[0]
-    index = np.arange(rows)[:, None]
-    far = 4 * rows
-    before = np.maximum.accumulate(np.where(tone > 0, index, -far), axis=0)
-    after = np.minimum.accumulate(np.where(tone > 0, index, far)[::-1], axis=0)[::-1]
-    return np.asarray(np.where(index - before <= after - index, before, after))
 
 
 def level_profiles(image: EyeImage, rail: int, low: float, high: float, height: int) -> NDArray[np.float64]:
