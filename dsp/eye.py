@@ -271,7 +271,7 @@ class EyeSums:
         return result
 
     def density(self) -> NDArray[np.uint32]:
-        """Traces of all levels by rail, column and row, shape ``(rails, columns, rows)``: the interval after a symbol is that before the next."""
+        """Traces of all levels by rail, column and row, shape ``(rails, columns, rows)``; both intervals are the same ones."""
         interval = self.left.sum(axis=2, dtype=np.uint32)
         return np.concatenate([interval, interval], axis=1)
 

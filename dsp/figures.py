@@ -68,15 +68,37 @@ class Context:
     roll_off: float | None = None
 
 
+@dataclass(frozen=True, slots=True)
+class Whole:
+    """What takes long: the whole reading, the opening with its error, the bend of the amplitude; if asked for what stands behind."""
+
+    reading: Reading
+    opening: Estimate | None
+    limiter: Limiter | None
+    diagnosis: Diagnosis | None = None
+
+
+def whole_figures(sums: EyeSums, context: Context, diagnose: bool) -> Whole:
+    """All of these sums' figures, with their diagnosis if ``diagnose``."""
+    figures = Figures(sums, context)
+    reading = figures.reading()
+    return Whole(
+        reading,
+        figures.estimates.get("opening_pct"),
+        figures._limiter if figures.enough else None,
+        figures.diagnosis() if diagnose else None,
+    )
+
+
 class Figures:
     """Figures of one `EyeSums`; the heavier ones are computed when `reading` asks.
 
     ``like``: taken at the same instant and by the same ways as those figures; sums without a raster need it. ``after``: with
-    the bend of the amplitude that those figures, of the link shortly before, have found.
+    the bend of the amplitude that those of the link shortly before have found.
     """
 
     def __init__(
-        self, sums: EyeSums, context: Context, *, like: "Figures | None" = None, after: "Figures | None" = None
+        self, sums: EyeSums, context: Context, *, like: "Figures | None" = None, after: "Whole | None" = None
     ) -> None:
         self._sums = sums
         self._context = context
@@ -93,8 +115,8 @@ class Figures:
         self._mixture_isi = np.zeros(sums.scheme.rails)
         self.enough = sums.symbols >= LEAST_SYMBOLS and float(counts.min()) >= 3
         self._drawn = sums.drawn / max(sums.symbols, 1) * float(counts.min())  # traces of the rarest level
-        if after is not None and after.enough:
-            self._limiter = after._limiter
+        if after is not None:
+            self._limiter = after.limiter
         self._tails_counted = False
         self._best: float = COLUMNS
         self._corner: float | None = None

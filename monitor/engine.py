@@ -16,7 +16,7 @@ from dsp.chain import Chain, ChainOptions, LockEvent
 from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
-from dsp.figures import Context, Figures
+from dsp.figures import Context, Figures, Whole, whole_figures
 from dsp.identify import Identified, Wanted
 from dsp.intervals import LEAST_STRETCHES, Estimate, difference
 from dsp.picture import EyeImage
@@ -45,6 +45,8 @@ RELOOK_SECONDS = 5.0  # without lock, after which a link that was identified is 
 HEAD_SECONDS, HEAD_SAMPLES = 2.0, 1 << 20  # of the newest samples that are looked at
 LONG_HEAD_SECONDS = 8.0  # at every other look: a slow link needs them
 
+_NO_WHOLE = Whole(Reading(symbols=0), None, None)
+
 Line = Callable[[str, int, float, Mapping[str, Any]], None]
 
 
@@ -62,7 +64,7 @@ class Tap(Protocol):
 class EngineOptions:
     """How to watch: ``window`` symbols of a reading (None: two seconds of them), a journal line each ``every_s``.
 
-    ``history`` keeps the opening's course where nobody looks. ``aside`` is where a link is identified, and diagnosed for the view, while
+    ``history`` keeps the opening's course where nobody looks. ``aside`` is where a link is identified and what takes long is read while
     a live stream goes on; None: at once, so that a replay repeats itself. ``first`` is a link that was identified before the stream began.
     """
 
@@ -83,28 +85,23 @@ class EngineOptions:
 
 
 class _Asked:
-    """A whole reading that was asked for: made in the thread beside while the stream goes on, or without one when it is collected."""
+    """A whole reading that was asked for: made beside the stream while it goes on, or where it can wait when it is collected."""
 
-    def __init__(self, sums: EyeSums, context: Context, seconds: float, sample: int, aside: Executor | None) -> None:
+    def __init__(self, sums: EyeSums, context: Context, seconds: float, sample: int, options: EngineOptions) -> None:
         self.sample = sample
         self.told = False
         self.collected_at = (seconds // COLLECT_SECONDS + 1) * COLLECT_SECONDS
         self.coverage_pct = 100.0 * sums.drawn / max(sums.symbols, 1)
-        self._sums, self._context = sums, context
-        self._work = aside.submit(self._read) if aside is not None else None
-
-    def _read(self) -> Figures:
-        figures = Figures(self._sums, self._context)
-        figures.reading()
-        return figures
+        self._what = sums, context, options.display
+        self._work = options.aside.submit(whole_figures, *self._what) if options.aside is not None else None
 
     def ready(self) -> bool:
         """Whether it is there, or will be in a moment that the stream can wait."""
         return self._work is None or bool(wait((self._work,), PATIENCE_SECONDS).done)
 
-    def figures(self) -> Figures:
-        """The figures, their whole reading made."""
-        return self._work.result() if self._work is not None else self._read()
+    def whole(self) -> Whole:
+        """It, made."""
+        return self._work.result() if self._work is not None else whole_figures(*self._what)
 
 
 class Engine:
@@ -183,10 +180,9 @@ class Engine:
         self._block: EyeSums | None = None
         self._mixed = False  # whether the open block holds symbols from before a mark
         self._reading: Reading | None = None
-        self._before: Figures | None = None  # of the last whole reading
+        self._before = _NO_WHOLE
         self._asked: _Asked | None = None
         self._diagnosis: Diagnosis | None = None
-        self._diagnosing: Future[Diagnosis] | None = None
         self._coverage_pct: float | None = None
         self._opening: Estimate | None = None
         self._curve: NDArray[np.float64] | None = None
@@ -483,8 +479,8 @@ class Engine:
         if not gained and self._ending == "end of stream":
             self._to_the_end = True  # the last figures stay
         elif not gained:
-            self._reading, self._opening, self._diagnosis, self._diagnosing = None, None, None, None
-            self._before = None
+            self._reading, self._opening, self._diagnosis = None, None, None
+            self._before = _NO_WHOLE
             self._blocks.clear()
             self._block = None
 
@@ -535,12 +531,10 @@ class Engine:
             self._collect()
             step = WHOLE_SECONDS * 2 ** min(self.relief, 1)  # a verdict must not stand beside figures of another time
             self._next_whole = (seconds // step + 1) * step
-            self._asked = _Asked(merged, self._chain.context(), seconds, self._chain.position, self._options.aside)
+            self._asked = _Asked(merged, self._chain.context(), seconds, self._chain.position, self._options)
         # meanwhile it stands as it was
         figures = Figures(merged, self._chain.context(), after=self._before)
         reading = self._with_slow(figures.reading(whole=False), self._reading)
-        if self._diagnosing is not None and self._diagnosing.done():
-            self._diagnosis, self._diagnosing = self._diagnosing.result(), None
         self._base_image = figures.image()
         self._reading = reading
         self._history.add(seconds, reading.opening_pct)
@@ -561,15 +555,14 @@ class Engine:
         asked, self._asked = self._asked, None
         if asked is None:
             return
-        figures = self._before = asked.figures()
-        whole = figures.reading()
-        self._opening = figures.estimates.get("opening_pct")
+        whole = asked.whole()
+        self._before = whole if whole.opening is not None else self._before
+        self._opening = whole.opening
         if self._reading is not None:
-            self._reading = self._with_slow(self._reading, whole)
-        if self._options.display:
-            self._diagnose(figures)
+            self._reading = self._with_slow(self._reading, whole.reading)
+        self._diagnosis = whole.diagnosis
         if asked.told:
-            self._tell_reading(whole, asked.sample, asked.coverage_pct)
+            self._tell_reading(whole.reading, asked.sample, asked.coverage_pct)
 
     def _with_slow(self, reading: Reading, slow: Reading | None) -> Reading:
         """With what only a whole reading has, and its interval about the opening as it is now."""
@@ -583,13 +576,6 @@ class Engine:
 
     def _tell_reading(self, reading: Reading, sample: int, coverage_pct: float) -> None:
         self._emit("reading", sample=sample, **(reading_document(reading) or {}), coverage_pct=coverage_pct)
-
-    def _diagnose(self, figures: Figures) -> None:
-        """What stands behind a whole reading, in the thread beside this one if there is one and it is free."""
-        if self._options.aside is None:
-            self._diagnosis = figures.diagnosis()
-        elif self._diagnosing is None:
-            self._diagnosing = self._options.aside.submit(figures.diagnosis)
 
     def _draw(self, sums: EyeSums) -> None:
         """Fold a part into the picture; what is older fades by the persistence."""

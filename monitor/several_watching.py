@@ -1,7 +1,6 @@
 """`lidwatch watch` with several links."""
 
 import argparse
-import sys
 import threading
 from collections import Counter
 from collections.abc import Callable, Sequence
@@ -13,11 +12,12 @@ from monitor.errors import InputError, MonitorError
 from monitor.links import LinkArguments, file_name, name_links
 from monitor.running import chain_options, link_and_limits, open_capture, open_journal, start_fields
 from monitor.shared_journal import ByLink, LinkJournal
-from monitor.showing import INTERRUPTED, SWITCH_S, Asked, Telling, default_view
+from monitor.showing import INTERRUPTED, Asked, Telling, default_view, prepared
 from monitor.terminal import say
 
 if TYPE_CHECKING:
     from monitor.alarm_rules import AlarmRule
+    from monitor.beside import Beside
     from monitor.capture import Capture
     from monitor.engine import EngineOptions
     from monitor.linkfile import LinkOptions
@@ -119,12 +119,25 @@ def attend_several(
     until: "Callable[[SeveralWatches], bool]",
 ) -> "tuple[SeveralWatches, int]":
     """What `monitor.showing.attend` does for one link, for several; an error that ends one of them is told, not raised."""
+    from monitor.sources.live import is_live
+
+    with prepared(view, beside=live and any(is_live(link.arguments.parsed.source) for link in links)) as beside:
+        return _attend(parsed, links, opener, options_of, beside, view, live, for_s, until)
+
+
+def _attend(
+    parsed: argparse.Namespace,
+    links: Sequence[NamedLink],
+    opener: "Callable[[argparse.Namespace], Callable[[], LiveSource]]",
+    options_of: "Callable[[NamedLink], EngineOptions]",
+    beside: "Beside | None",
+    view: str,
+    live: bool,
+    for_s: float | None,
+    until: "Callable[[SeveralWatches], bool]",
+) -> "tuple[SeveralWatches, int]":
     from monitor.several import SeveralWatches
 
-    if view == "window":
-        # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
-        import monitor.views.tile_window  # noqa: F401
-    sys.setswitchinterval(SWITCH_S)
     tell = Telling(to_view=view != "none")
     captures = open_captures(parsed, links, tell, live=live)
     sink = ByLink({link.name: own for link, own in zip(links, captures, strict=True) if own is not None})
@@ -134,7 +147,8 @@ def attend_several(
         try:
             for link, capture, open_source in zip(links, captures, _openers(links, opener), strict=True):
                 keeper = LinkJournal(journal, link.name, lock)
-                watches.append((link.name, _watch(link, options_of(link), open_source, keeper, capture, for_s)))
+                options = options_of(link)
+                watches.append((link.name, _watch(link, options, open_source, keeper, capture, for_s, beside)))
         except BaseException:
             for _, watch in watches:
                 watch.abandon()
@@ -166,6 +180,7 @@ def _watch(
     keeper: LinkJournal,
     capture: "Capture | None",
     for_s: float | None,
+    beside: "Beside | None",
 ) -> "Watch":
     from monitor.watch import Watch
 
@@ -179,6 +194,7 @@ def _watch(
         start_fields=start_fields(source, link.options, link.rules),
         for_s=for_s,
         tap=capture,
+        beside=beside,
     )
     if capture is not None:
         capture.picture = _picture_of(watch)

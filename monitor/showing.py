@@ -5,13 +5,15 @@ import os
 import signal
 import sys
 import threading
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager, nullcontext
 from typing import TYPE_CHECKING, Any, Protocol, Self
 
 from monitor.running import open_capture, open_journal, start_fields
 from monitor.terminal import say
 
 if TYPE_CHECKING:
+    from monitor.beside import Beside
     from monitor.engine import EngineOptions
     from monitor.linkfile import LinkOptions
     from monitor.sources.stream import LiveSource
@@ -97,12 +99,43 @@ def attend(
 
     ``live``: the samples are of this moment. ``until``: asked at each look whether to end though the view stands. Raises MonitorError.
     """
+    from monitor.sources.live import is_live
+
+    with prepared(view, beside=live and is_live(parsed.source)) as beside:
+        running, status = _attend(parsed, opener, link, options, beside, view, live, for_s, until)
+    if running.failure is not None:
+        raise running.failure
+    return running, status
+
+
+@contextmanager
+def prepared(view: str, *, beside: bool) -> "Iterator[Beside | None]":
+    """What takes long is made ready before the first sample comes: the second process, the screen. Raises MonitorError."""
+    import dsp.identify  # noqa: F401  # the forked process has it then
+    from monitor.beside import Beside
+
+    with Beside() if beside else nullcontext() as process:
+        if view == "window":
+            from monitor.views.window import prepare_screen
+
+            prepare_screen()
+        sys.setswitchinterval(SWITCH_S)
+        yield process
+
+
+def _attend(
+    parsed: argparse.Namespace,
+    opener: "Callable[[], LiveSource]",
+    link: "LinkOptions",
+    options: "EngineOptions",
+    beside: "Beside | None",
+    view: str,
+    live: bool,
+    for_s: float | None,
+    until: "Callable[[Watch], bool]",
+) -> "tuple[Watch, int]":
     from monitor.watch import Watch
 
-    if view == "window":
-        # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
-        import monitor.views.window  # noqa: F401
-    sys.setswitchinterval(SWITCH_S)
     tell = Telling(to_view=view != "none")
     capture = open_capture(parsed, tell, live=live)
     with open_journal(parsed, capture, tell) as journal:
@@ -116,6 +149,7 @@ def attend(
             for_s=for_s,
             tap=capture,
             tell=tell if view == "none" else None,
+            beside=beside,
         )
         tell.attach(running)
         if capture is not None:
@@ -128,8 +162,6 @@ def attend(
                 status = _show(running, view, parsed, asked, lambda: until(running))
         finally:
             running.stop()
-    if running.failure is not None:
-        raise running.failure
     return running, status
 
 

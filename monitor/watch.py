@@ -5,7 +5,7 @@ import queue
 import threading
 import time
 from collections.abc import Callable, Iterable, Mapping
-from concurrent.futures import ThreadPoolExecutor
+from concurrent.futures import Executor, ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -31,6 +31,7 @@ _PIECE_SAMPLES = 65536
 _OLDEST_S = 0.4
 # so long samples wait when work is to be left out, and when it can be taken up again; a whole reading takes a tenth of a second
 _LATE_S, _PROMPT_S = 0.2, 0.12
+_LOOK_S = 0.1  # what waits less than so long ago is being caught up with
 _RELIEF_S, _RECOVERY_S = 0.25, 1.0  # at most one step of either in so long
 _MOST_RECOVERY_S = 16.0  # where work was taken up again too soon, the next try comes after twice the time
 _MOST_RELIEF = 4
@@ -43,7 +44,8 @@ class Watch:
 
     What views call is safe from any thread.
 
-    ``tell`` is given, a line each, what happens to the journal, for where no view shows it.
+    ``tell`` is given, a line each, what happens to the journal, for where no view shows it. ``beside`` does what takes long, in another
+    process at best; a thread does it if none is given.
 
     ``failure`` holds what ended it if that was an error; ``at_the_end`` is true when the source ended by itself.
     ``aside`` is set by whoever shows it in little only: new states then come less often.
@@ -61,12 +63,13 @@ class Watch:
         start_fields: Mapping[str, Any] | None = None,
         for_s: float | None = None,
         tell: Callable[[str], None] | None = None,
+        beside: Executor | None = None,
     ) -> None:
         self._reader = ThreadedReader(open_source)
         self._wanted = wanted
-        self._aside = ThreadPoolExecutor(1, thread_name_prefix="lidwatch identify")
+        self._own = ThreadPoolExecutor(1, thread_name_prefix="lidwatch beside") if beside is None else None
         # what can wait is identified at once, so that a recording gives the same lines each time
-        self._options = replace(options, aside=None if self._reader.patient else self._aside)
+        self._options = replace(options, aside=None if self._reader.patient else beside or self._own)
         self._keeper = keeper
         self._tell = tell
         self._trouble_told_at: float | None = None
@@ -79,6 +82,8 @@ class Watch:
         self._in_work = 0  # samples of the block that is being worked on
         self._published = 0.0
         self._late_at = self._stepped_at = 0.0  # when too much waited last; when the work was last changed for it
+        self._looked_at = self._waited_s = 0.0
+        self._catching_up = False
         self._recovered_at, self._recovery_s = -math.inf, _RECOVERY_S
         self._quiet_since = 0.0
         self._start_fields = dict(start_fields or {})
@@ -168,7 +173,11 @@ class Watch:
     def abandon(self) -> None:
         """End without having begun: the source is closed, and there is no line in the journal."""
         self._reader.close()
-        self._aside.shutdown(wait=False, cancel_futures=True)
+        self._end_own()
+
+    def _end_own(self) -> None:
+        if self._own is not None:
+            self._own.shutdown(wait=False, cancel_futures=True)
 
     def ask_to_stop(self) -> None:
         """Let the watch end; returns at once."""
@@ -196,7 +205,7 @@ class Watch:
             self._why = str(self.failure)
         finally:
             self._reader.close()
-            self._aside.shutdown(wait=False, cancel_futures=True)
+            self._end_own()
             if self.failure is not None:
                 self._notice(str(self.failure))
             try:
@@ -302,7 +311,10 @@ class Watch:
         waiting_s = self._reader.ring.oldest_s  # by the clock: long messages are not late for being long
         if waiting_s > _PROMPT_S:
             self._late_at = now
-        if waiting_s > _LATE_S:
+        if now - self._looked_at >= _LOOK_S:
+            self._catching_up = waiting_s < self._waited_s
+            self._looked_at, self._waited_s = now, waiting_s
+        if waiting_s > _LATE_S and not self._catching_up:
             if engine.relief < _MOST_RELIEF and now - self._stepped_at >= _RELIEF_S:
                 if now - self._recovered_at < _MOST_RECOVERY_S:
                     self._recovery_s = min(2 * self._recovery_s, _MOST_RECOVERY_S)

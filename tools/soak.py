@@ -357,21 +357,24 @@ def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> 
     from dsp.link import find_scheme
     from dsp.pulses import Pulse
     from monitor.engine import EngineOptions
-    from monitor.showing import SWITCH_S
+    from monitor.showing import prepared
     from monitor.sources.stream import StreamOptions, open_stream
     from monitor.watch import Watch
 
-    if shown:  # before any thread runs: importing Qt's bindings aborts when another thread imports something meanwhile
-        from monitor.views.choices import Choices, save_choices
-    # both as `lidwatch watch` does
-    threadpool_limits(1)
-    sys.setswitchinterval(SWITCH_S)
+    threadpool_limits(1)  # as `lidwatch watch` does
     wanted = Wanted(scheme=find_scheme("qpsk"), symbol_rate_hz=rate / SPS, pulse=Pulse("rrc", 0.35))
-    with tempfile.TemporaryDirectory(prefix="soak-") as folder:
+    with (
+        tempfile.TemporaryDirectory(prefix="soak-") as folder,
+        prepared("window" if shown else "none", beside=True) as beside,
+    ):
         address = f"ipc://{folder}/samples"
         with sender(address, rate, 1.0, seconds, notches=True) as transmitter:
             running = Watch(
-                lambda: open_stream(address, StreamOptions(socket="pull")), wanted, EngineOptions(), source_text=address
+                lambda: open_stream(address, StreamOptions(socket="pull")),
+                wanted,
+                EngineOptions(),
+                source_text=address,
+                beside=beside,
             )
 
             def over() -> bool:
@@ -379,6 +382,8 @@ def latency(seconds: float, rate: float = LATENCY_RATE, shown: bool = False) -> 
 
             running.start()
             if shown:
+                from monitor.views.choices import Choices, save_choices
+
                 choices = Path(folder) / "window.ini"
                 save_choices(choices, Choices(persistence=0.0))
                 sight = follow_window(running, over, choices)

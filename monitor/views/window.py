@@ -26,6 +26,8 @@ from PySide6.QtWidgets import QApplication, QLineEdit, QMainWindow, QWidget
 
 from monitor.errors import InputError, MonitorError
 from monitor.interrupt import Interrupt
+from monitor.snapshot import Snapshot
+from monitor.state import LiveState
 from monitor.views.canvas import Canvas, qcolour
 from monitor.views.choices import load_choices, save_choices, settings_file
 from monitor.views.control import (
@@ -596,6 +598,17 @@ def _application() -> QApplication:
         raise InputError("no window: this program already has an application object of Qt's that cannot show any")
     application.setApplicationName("lidwatch")
     return application
+
+
+def prepare_screen() -> None:
+    """Make ready what takes long the first time, before samples come: Qt's application, its fonts, the loops that draw.
+
+    From the main thread, before others run: importing Qt's bindings aborts when another thread imports something meanwhile. Raises
+    InputError as `run_window` does.
+    """
+    _application()
+    width, height = FIRST_SIZE.width(), FIRST_SIZE.height()
+    LivePage().draw(View(state=LiveState(Snapshot(), searching="waiting for samples")), width, height)
 
 
 def choose_painter(painter: PainterName) -> Literal["raster", "opengl"]:

@@ -269,7 +269,9 @@ def test_no_more_than_one_in_twenty_marks_on_a_steady_link_shows_a_change():
     window, marks = 3200, 40
     samples = qpsk(window * (marks + 2) * 8 // 4, 16.0)
     watched = Watched(window=window, rules=RULES)
-    size = 8 * window  # samples; a mark leaves out the block it falls into, and a whole reading is taken in a little later
+    size = (
+        8 * window
+    )  # samples; a mark leaves out the block it falls into, and a whole reading is taken in a little later
     watched.feed(samples[: 2 * size])
     verdicts = []
     for number in range(2, marks + 2):
@@ -447,10 +449,10 @@ class Aside:
 
     def submit(self, work, *arguments):
         future = Future()
-        if arguments:
+        if work is settle_link:
             self.asked.append((arguments, future))
         else:
-            future.set_result(work())
+            future.set_result(work(*arguments))
         return future
 
     def answer(self, what):
