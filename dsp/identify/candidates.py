@@ -78,8 +78,10 @@ def _filtered(wave: _Wave, pulse: Pulse) -> NDArray[np.complex128]:
     return np.asarray(signal.oaconvolve(wave.samples, taps, mode="same"))
 
 
-def _at(samples: NDArray[np.complex128], instants: NDArray[np.float64], sps: float) -> NDArray[np.complex128]:
-    table = tables_for(sps, min(1.1, 0.4 * sps)).value
+def _at(wave: _Wave, instants: NDArray[np.float64], samples: NDArray[np.complex128] | None = None) -> NDArray[np.complex128]:
+    """The wave at any instants; ``samples``: what a filter made of it."""
+    samples = wave.samples if samples is None else samples
+    table = tables_for(wave.sps, min(wave.half, 0.4 * wave.sps)).value
     real = interpolate(np.ascontiguousarray(samples.real, np.float32), instants, table).astype(np.float64)
     if not np.any(samples.imag):
         return np.asarray(real, dtype=np.complex128)
@@ -110,7 +112,7 @@ def _timed(samples: NDArray[np.complex128], wave: _Wave, stagger: bool = False) 
     some = start + wave.sps * np.arange(min(count, 1024), dtype=np.float64)
     table = []
     for k in range(_SCAN):
-        power = np.abs(_at(samples, some + k / _SCAN * wave.sps, wave.sps)) ** 2
+        power = np.abs(_at(wave, some + k / _SCAN * wave.sps, samples)) ** 2
         table.append(float(np.mean(power**2)) / max(float(np.mean(power)) ** 2, 1e-30))
     kurtosis = np.asarray(table)
     top = int(np.argmin(kurtosis))
@@ -186,7 +188,7 @@ def pam_candidate(
         instants = _timed(filtered, wave)
         if instants.size < _LEAST:
             return None
-        values = _at(filtered, instants[:1024], wave.sps).real[None]
+        values = _at(wave, instants[:1024], filtered).real[None]
         values = values - values.mean()
         merit = max(_pam_agreement(values, scheme).log_likelihood for scheme in schemes) - no_structure(values)
         if best is None or merit > best[0] + 0.05:
@@ -198,7 +200,7 @@ def pam_candidate(
         wave = _real_wave(spectrum, rate, pulse)
         filtered = _filtered(wave, pulse)
         instants = _timed(filtered, wave)
-        values = _at(filtered, instants, wave.sps).real[None]
+        values = _at(wave, instants, filtered).real[None]
         values = values - values.mean()
         ranked = _ranked(values[0] + 0j, schemes)
         scheme, agreed, decided, excess, n = ranked[0]
@@ -208,7 +210,7 @@ def pam_candidate(
             raw = _real_wave(spectrum, rate, Pulse("none"))
             scale = raw.sps / wave.sps
             sampled = np.stack(
-                [_at(raw.samples, (instants + (p / PHASES - 0.5) * wave.sps) * scale, raw.sps) for p in range(PHASES)]
+                [_at(raw, (instants + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)]
             )
             response = response_of(sampled, decided[0] + 0j, min(raw.half, 0.5 * PHASES))
             ranking = (
@@ -223,7 +225,7 @@ def pam_candidate(
             ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
             half_bits=scheme.levels == 2 and min(pair_products(decided)) < -0.9,
         )  # fmt: skip
-        if last or response is None or pulses is not None:
+        if last or ranking[0][0] == pulse:
             break
         pulse = ranking[0][0]
     return result
@@ -304,8 +306,9 @@ def _doubts(decided: Values, scheme: Scheme, agreed: Agreement, excess: float, n
 
 
 def _carrier_wave(spectrum: Spectrum, rate: float, centre: float, pulse: Pulse) -> _Wave:
-    half = (2.2 if pulse.family in ("rect", "none") else 1.1) * rate
-    length = fft.next_fast_len(max(math.ceil(4.6 * rate * spectrum.size), 64))
+    half, per_symbol = (3.6, 12.0) if pulse.family in ("rect", "none") else (1.1, 4.6)
+    half *= rate
+    length = fft.next_fast_len(max(math.ceil(per_symbol * rate * spectrum.size), 64))
     samples = spectrum.wave(centre, half, length)
     return _Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, half / rate)
 
@@ -351,7 +354,7 @@ def carrier_candidates(
         instants = _timed(filtered, wave)
         if instants.size < _LEAST:
             return None
-        z = _at(filtered, instants, wave.sps)
+        z = _at(wave, instants, filtered)
         z = z / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
         found: list[tuple[_Ranked, NDArray[np.complex128], float, float]] = []
         for order, names in ((2, ("bpsk",)), (4, ("qpsk", "pi4dqpsk", "16qam", "64qam")), (8, ("8psk",))):
@@ -395,7 +398,7 @@ def carrier_candidates(
             for p in range(PHASES):
                 lead = p / PHASES - 0.5
                 sampled.append(
-                    _at(wave.samples, instants + lead * wave.sps, wave.sps) * rotation * np.exp(1j * slope * lead)
+                    _at(wave, instants + lead * wave.sps) * rotation * np.exp(1j * slope * lead)
                 )
             response = response_of(np.stack(sampled), decided, wave.half)
             if pulses is None:
@@ -408,7 +411,7 @@ def carrier_candidates(
             ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
             min(abs(turn) * 2 * scheme.symmetry, 1.0),
         )  # fmt: skip
-        if last or response is None or pulses is not None:
+        if last or ranking[0][0] == pulse:
             break
         pulse = ranking[0][0]
     return result
@@ -442,8 +445,8 @@ def staggered_candidate(
         upper, lower = np.angle(np.sum(square * turn)), np.angle(np.sum(square * np.conj(turn)))
         theta, tau = 0.25 * (upper + lower), (lower - upper) / (4 * np.pi) * wave.sps
         instants = start + (tau - start) % wave.sps + wave.sps * np.arange(count)
-        early = _at(filtered, instants, wave.sps) * np.exp(-1j * theta)
-        late = _at(filtered, instants + 0.5 * wave.sps, wave.sps) * np.exp(-1j * theta)
+        early = _at(wave, instants, filtered) * np.exp(-1j * theta)
+        late = _at(wave, instants + 0.5 * wave.sps, filtered) * np.exp(-1j * theta)
         z = early.real + 1j * late.imag
         z = z / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
         scheme_, agreed, decided_rails, excess, n = _ranked(z, (scheme,))[0]
@@ -451,7 +454,7 @@ def staggered_candidate(
         response = None
         if agreed.error_rate < 0.1:
             sampled = [
-                (_at(wave.samples, instants + (p / PHASES - 0.5) * wave.sps, wave.sps) * np.exp(-1j * theta)).real
+                (_at(wave, instants + (p / PHASES - 0.5) * wave.sps) * np.exp(-1j * theta)).real
                 for p in range(PHASES)
             ]
             response = response_of(np.stack(sampled) + 0j, decided_rails[0] + 0j, wave.half)
@@ -462,7 +465,7 @@ def staggered_candidate(
             _doubts(decided_rails, scheme, agreed, excess, n, line), None,
             ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
         )  # fmt: skip
-        if last or response is None or pulses is not None:
+        if last or ranking[0][0] == pulse:
             break
         pulse = ranking[0][0]
     return result

@@ -34,6 +34,7 @@ _RATES_AGREE = (
 )
 _NO_LINE = "no line in the spectrum that a symbol clock would have"
 _RAIL_DEPTHS = (0.03, 0.15)  # a discriminator's noise rises outwards: what is faint there is noise
+_AT_ZERO = 0.2  # of the greatest density
 _FAMILIES = ("rrc", "rc", "rect", "none")
 
 
@@ -159,9 +160,17 @@ def _kinds(spectrum: Spectrum, band: Band, wanted: Wanted) -> list[str]:
     )
     if spectrum.is_real and low < 0.5 * band.half:
         if low < 0.02 * band.half:
-            return ["baseband"]
+            # side lobes of a square pulse about a carrier reach down to 0, but stand far below what is about the carrier
+            return ["baseband"] if _rests_on_zero(spectrum, band) else ["baseband", *kinds]
         kinds.insert(1 if spread < _CONSTANT else 0, "baseband")
     return kinds
+
+
+def _rests_on_zero(spectrum: Spectrum, band: Band) -> bool:
+    """Whether a real band is at its strongest near 0 rather than some way up."""
+    inside = spectrum.frequencies < band.centre + band.half
+    density = np.convolve(spectrum.density[inside], np.ones(3) / 3, mode="same")
+    return bool(density.size < 8 or density[1 : 2 + density.size // 50].max() > _AT_ZERO * density.max())
 
 
 def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> Iterator[Candidate]:

@@ -20,6 +20,7 @@ _TRACES = 1500
 _TRIM = 25.0  # times the median squared error, from where on a row is no symbol
 _LIKELY = 0.03  # of an opening, by which the family that the spectrum's shape speaks for is preferred
 _NEARLY = 0.01  # of an opening, within which two pulses are as good
+_NO_OPENING = -1e3  # of a wave in which the symbols leave nothing
 _ROLLOFFS = np.arange(0.05, 1.001, 0.05)
 
 
@@ -178,6 +179,8 @@ def opening_behind(response: Response, pulse: Pulse, scheme: Scheme) -> float:
     """
     mer_db, _, taps = behind(response, pulse, scheme.symbol_energy())
     main = int(np.argmax(np.abs(taps)))
+    if not abs(taps[main]) > 0:
+        return _NO_OPENING
     scaled = taps / taps[main]
     scaled[main] = 0.0
     points = scheme.points()
