@@ -27,6 +27,9 @@ _SURPRISE = 0.4
 _REPETITION = 0.6
 _BIT_ERRORS = 0.012
 _CHANCE = 1e-8
+# cycles a symbol: on one of its tones, a quarter of the symbol rate from the middle of its spectrum, minimum shift keying is a two-phase
+# carrier. Source: F. Amoroso and J. A. Kivett, Simplified MSK signaling technique, IEEE Trans. Commun. 25(4), 1977 (from memory)
+_QUARTER = 0.2
 
 Values = NDArray[np.float64]
 
@@ -404,10 +407,13 @@ def carrier_candidates(
             if pulses is None:
                 ranking = best_pulse(response, scheme, _CARRIER_FAMILIES, tuple(shape.pulse for shape in shapes))
         rival = found[1][0] if len(found) > 1 else None
+        doubt = _doubts(decided_rails, scheme, agreed, excess, n, line)
+        if scheme.name == "bpsk" and abs(turn) > _QUARTER and len(schemes) > 1:
+            doubt = doubt or "a shift by half the symbol rate, as msk has, too faint to be told by its frequency"
         result = Candidate(
             scheme, rate, pulse, centre + turn * rate, line, n, excess,
             agreed.log_likelihood - rival[1].log_likelihood if rival else excess, rival[0] if rival else None,
-            _snr_db(agreed, scheme), _doubts(decided_rails, scheme, agreed, excess, n, line), None,
+            _snr_db(agreed, scheme), doubt, None,
             ranking[1][0] if len(ranking) > 1 else None, ranking[0][1] - ranking[1][1] if len(ranking) > 1 else 0.0, response,
             min(abs(turn) * 2 * scheme.symmetry, 1.0),
         )  # fmt: skip

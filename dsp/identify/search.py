@@ -29,6 +29,7 @@ _STRETCH = 2e5  # independent samples of a band that are searched for lines
 _TRIAL_SYMBOLS = 3000
 # spread of the envelope (`Spectrum.envelope_spread`): up to 0.05 for frequency schemes, from 0.09 for band-limited carriers (measured)
 _CONSTANT, _NOT_CONSTANT = 0.07, 0.2
+_STEADY = 0.02  # staggered phases at roll-off 1 have 0.028, minimum shift keying up to 0.015 (measured)
 _RATES_AGREE = (
     1e-5  # of line and loops; beyond it the line is another's, or the clock wanders, and the loops are nearer
 )
@@ -75,11 +76,14 @@ def find_link(
         bands = scopes(whole)
     reason = _NO_LINE
     for band in bands:
+        steady: bool | None = None  # of the envelope, as the longest stretch tells best
         for stretch in _stretches(samples, band):
             spectrum = spectrum_of(stretch)
             if spectrum is None:
                 continue
-            outcome = _in_band(samples, stretch, spectrum, band, sample_rate_hz, wanted)
+            spread = spectrum.envelope_spread(band.centre, 1.15 * band.half)
+            steady = spread < _STEADY if steady is None else steady
+            outcome = _in_band(samples, spectrum, band, sample_rate_hz, wanted, _Envelope(spread, steady))
             if isinstance(outcome, Found):
                 return outcome
             if reason == _NO_LINE:
@@ -130,11 +134,22 @@ def busiest(samples: Samples, need: int) -> int:
     return int(np.argmax(runs > 0.9 * runs.max())) * block
 
 
+@dataclass(frozen=True, slots=True)
+class _Envelope:
+    """A band's `Spectrum.envelope_spread`, and whether it is more constant than that of staggered phases with any roll-off.
+
+    (Minimum shift keying is a kind of these.)
+    """
+
+    spread: float
+    steady: bool
+
+
 def _in_band(
-    samples: Samples, stretch: Samples, spectrum: Spectrum, band: Band, rate: float, wanted: Wanted
+    samples: Samples, spectrum: Spectrum, band: Band, rate: float, wanted: Wanted, envelope: _Envelope
 ) -> Found | NotFound:
     reason = _NO_LINE
-    for candidate in _candidates(spectrum, band, rate, wanted):
+    for candidate in _candidates(spectrum, band, rate, wanted, envelope):
         if candidate.doubt:
             if candidate.line.chance < 1e-8 and reason == _NO_LINE:
                 reason = candidate.doubt
@@ -146,11 +161,10 @@ def _in_band(
     return NotFound(reason)
 
 
-def _kinds(spectrum: Spectrum, band: Band, wanted: Wanted) -> list[str]:
+def _kinds(spectrum: Spectrum, band: Band, wanted: Wanted, spread: float) -> list[str]:
     if wanted.scheme is not None:
         return [wanted.scheme.kind]
     low = band.centre - band.half
-    spread = spectrum.envelope_spread(band.centre, 1.15 * band.half)
     kinds = (
         ["carrier"]
         if spread > _NOT_CONSTANT
@@ -173,7 +187,9 @@ def _rests_on_zero(spectrum: Spectrum, band: Band) -> bool:
     return bool(density.size < 8 or density[1 : 2 + density.size // 50].max() > _AT_ZERO * density.max())
 
 
-def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> Iterator[Candidate]:
+def _candidates(
+    spectrum: Spectrum, band: Band, rate: float, wanted: Wanted, envelope: _Envelope
+) -> Iterator[Candidate]:
     """Candidates in the order in which they should be believed."""
     pulses = None if wanted.pulse is None else (wanted.pulse,)
     given = None if wanted.symbol_rate_hz is None else wanted.symbol_rate_hz / rate
@@ -192,7 +208,7 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
         lowest = min(clear, key=lambda line: line.frequency, default=None)
         return list(dict.fromkeys([line for line in (lowest, *usable[:3]) if line is not None]))
 
-    for kind in _kinds(spectrum, band, wanted):
+    for kind in _kinds(spectrum, band, wanted, envelope.spread):
         if kind == "baseband":
             lines = clock_lines(spectrum, 0.0, high, 1 / 2100, 0.5)
             found = [
@@ -232,6 +248,8 @@ def _candidates(spectrum: Spectrum, band: Band, rate: float, wanted: Wanted) -> 
                 squares = Products(spectrum, edge, high).square_lines()
                 if len(squares) >= 2 and squares[1].ratio > 0.1 * squares[0].ratio:
                     c = staggered_candidate(spectrum, (squares[0], squares[1]), staggered, pulses)
+                    if c is not None and wanted.scheme is None and not c.doubt and envelope.steady:
+                        c = replace(c, doubt="a frequency shift, as msk has, too faint to be told by its frequency")
                     found += [c] if c is not None else []
             yield from _by_belief(found)
 
