@@ -5,6 +5,7 @@ them all, then one run of the loops themselves over the stretch, whose straight 
 """
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -27,8 +28,12 @@ from dsp.tracking import (
 
 CHANCE = 1e-8  # of taking noise for a clock line, an attempt
 RATE_SPAN = 2e-3  # the symbol rate is looked for this far to either side, as a fraction
+_MOST_DRIFT = 1.2e-5  # of a carrier, cycles a symbol from one to the next
 _SCAN = 32  # instants a symbol that are tried
 
+_DRIFT_FIRST = 1024  # symbols among which a drift is looked for, the whole range of it
+_SHARPER = 1.3  # power of the line with a drift over that without, from where on there is one
+_CLEAR_DRIFT = 3e-7  # cycles a symbol from one to the next; less does no harm to a few thousand symbols
 _LINE_SHARE = 0.08  # of a noise-free carrier's line that must be left
 _PATTERN = 0.6  # share of a sequence's energy in a short pattern from which on it is no data
 
@@ -41,8 +46,9 @@ _NOISE_MER_DB = {2: 4.40, 3: 7.21, 4: 9.30, 8: 14.62}
 class Acquired:
     """A link found: where loops begin and how sure that is.
 
-    ``carrier`` is the turn taken out before the matched filter, cycles a rail sample; ``start.instant`` counts filtered samples
-    from the stretch's first; ``noise_like_db`` is the MER below which decisions say nothing; ``fit`` holds the decisions.
+    ``carrier`` is the turn taken out before the matched filter, cycles a rail sample, at the stretch's first sample, and ``drift`` how
+    much it grows a sample; ``start.instant`` counts filtered samples from the stretch's first; ``noise_like_db`` is the MER below which
+    decisions say nothing; ``fit`` holds the decisions.
     """
 
     carrier: float
@@ -51,6 +57,7 @@ class Acquired:
     mer_db: float
     noise_like_db: float
     fit: "Fit"
+    drift: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -225,6 +232,18 @@ def plausibility_db(fit: Fit, scheme: Scheme) -> float:
     return snr - noise_like_mer_db(scheme) - 40.0 * max(dependence - 0.1, 0.0) - 60.0 * max(0.75 - evenness, 0.0)
 
 
+# of the phases' variance about a line that a parabola must leave at most, to be believed; where a drift is known already
+STANDS_OUT, STILL_STANDS_OUT = 0.03, 0.15
+
+
+def parabola_through(k: NDArray[np.float64], phases: NDArray[np.float64]) -> tuple[float, float, float]:
+    """Drift of phases ``(n,)`` over ``k``: twice the parabola's bend, and the squares that a line and the parabola leave."""
+    middle = 0.5 * (k[0] + k[-1])
+    line, bent = (np.polyfit(k - middle, phases, degree) for degree in (1, 2))
+    by_line, by_parabola = (float(np.sum((phases - np.polyval(fit, k - middle)) ** 2)) for fit in (line, bent))
+    return 2.0 * float(bent[0]), by_line, by_parabola
+
+
 @dataclass(frozen=True, slots=True)
 class CarrierLine:
     """The line of a symbol sequence's power: ``turn`` (cycles a symbol), ``phase`` (cycles), its share of the energy, chance of noise."""
@@ -235,16 +254,19 @@ class CarrierLine:
     chance: float
 
 
+def _raised(values: NDArray[np.complex128], order: int) -> NDArray[np.complex128]:
+    """Unit-modulus powers weighted by the magnitude squared: outer points of a QAM carry the phase, none dominates."""
+    scaled = np.abs(values) / max(float(np.sqrt(np.mean(np.abs(values) ** 2))), 1e-30)
+    return np.asarray(np.exp(1j * order * np.angle(values)) * np.minimum(scaled, 2.0) ** 2)
+
+
 def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0) -> CarrierLine:
     """Carrier of symbol values ``(n,)`` from the line of their ``order``-th power.
 
     The phase is that of the constellation whose points to the power are negative real (order above 2) or positive (order 2).
     Source: A. J. and A. M. Viterbi, IEEE Trans. Inf. Theory 29(4), 1983, with the fourth power itself as its nonlinearity.
     """
-    scaled = values / max(float(np.sqrt(np.mean(np.abs(values) ** 2))), 1e-30)
-    magnitude = np.abs(scaled)
-    # unit-modulus powers weighted by the magnitude squared: outer points of a QAM carry the phase, none dominates
-    raised = np.exp(1j * order * np.angle(scaled)) * np.minimum(magnitude, 2.0) ** 2
+    raised = _raised(values, order)
     length = 4 * 2 ** math.ceil(math.log2(values.size))
     spectrum = np.fft.fft(raised, length)
     level = np.abs(spectrum) ** 2
@@ -262,6 +284,41 @@ def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0
     phase = (float(np.angle(line)) - reference) / (2 * math.pi * order)
     share = abs(complex(line)) ** 2 / (k * max(float(np.sum(np.abs(raised) ** 2)), 1e-300))
     return CarrierLine(frequency / order, phase, share, chance)
+
+
+def line_drift(
+    raised: NDArray[np.complex128], most: float, first: int, sharpness: Callable[[NDArray[np.complex128]], float]
+) -> tuple[float, float]:
+    """How the line in a power of a carrier ``(n,)`` drifts: cycles a value, from one to the next, at most ``most`` either way.
+
+    Also returns how much sharper the line is with the drift taken out. Tried on the ``first`` so many values, then on twice as many and so
+    on, each time about what was found.
+    """
+    found, sharper = 0.0, 1.0
+    size, reach = min(first, raised.size), most
+    while size >= 64:
+        n = np.arange(size, dtype=np.float64)
+        # half a step beside the drift the ends of the stretch are out of step by a sixteenth of a turn
+        step = 2.0 / size**2
+        count = math.ceil(reach / step)
+        drifts = found + step * np.arange(-count, count + 1)
+        levels = [sharpness(raised[:size] * np.exp(-1j * np.pi * drift * n**2)) for drift in drifts]
+        top = int(np.argmax(levels))
+        left, right = levels[max(top - 1, 0)], levels[min(top + 1, 2 * count)]
+        bend = left + right - 2 * levels[top]
+        shift = 0.5 * (left - right) / bend if bend < 0 else 0.0
+        if size <= first:
+            sharper = levels[top] / max(levels[count], 1e-300)
+        found = float(drifts[top]) + step * min(max(shift, -0.5), 0.5)
+        if size == raised.size or sharper < _SHARPER:
+            break
+        size, reach = min(2 * size, raised.size), 1.5 * step
+    return found, sharper
+
+
+def _sharpest(values: NDArray[np.complex128]) -> float:
+    """Power of the strongest line."""
+    return float(np.max(np.abs(np.fft.fft(values, 2 * 2 ** math.ceil(math.log2(values.size)))))) ** 2
 
 
 def line_share(scheme: Scheme) -> float:
@@ -297,6 +354,8 @@ class _Search:
         self._corners = wants_corners(link.scheme, link.pulse)
         self._detector: Detector = detector or ("crossing" if self._corners else "derivative")
         self._sense_ui = 0.5
+        self._bend = 0.0
+        self._drifts = False
         bandwidth = 0.5 * (1 + (link.pulse.number or 1.0)) if link.pulse.family in ("rrc", "rc") else 1.0
         self._tables = tables_for(front.sps, bandwidth)
         self._timing_bandwidth = timing_bandwidth
@@ -313,6 +372,56 @@ class _Search:
         return replace(found, start=replace(found.start, means=found.start.means * rms))
 
     def _run(self, rails: Rails) -> Acquired | NotFound:
+        if self._scheme.kind != "carrier":
+            return self._straight(rails)
+        drift, sharper = self._drift(rails)
+        found: Acquired | NotFound = NotFound("")
+        if sharper < _SHARPER:
+            found = self._straight(rails)
+            bend = self._bend if isinstance(found, Acquired) else 0.0
+            if not bend and abs(drift) < _CLEAR_DRIFT:
+                return found
+            drift = bend or drift
+        self._drifts = True
+        for _ in range(3):
+            # dense constellations tell by their decisions alone
+            other = self._straight(_dechirped(rails, drift / self._front.rail_sps**2))
+            if isinstance(other, NotFound) or (isinstance(found, Acquired) and other.mer_db < found.mer_db + 0.3):
+                break
+            found = replace(other, drift=drift / self._front.rail_sps**2)
+            if not self._bend:
+                break
+            drift += self._bend
+        return other if isinstance(found, NotFound) else found
+
+    def _drift(self, rails: Rails) -> tuple[float, float]:
+        """How the carrier seems to drift, cycles a symbol from one to the next, and how much sharper that makes its power's line."""
+        filtered = self._filter(rails, self._coarse_carrier(rails))
+        sps = self._front.sps
+        if not self._scheme.stagger:
+            line = self._clock(rails, filtered)
+            instants = self._instants(filtered[0].size, line.crest, 1.0 / line.frequency, self._filter_reach())
+            if line.chance > CHANCE or instants.size < 64:
+                return 0.0, 1.0
+            order = self._scheme.symmetry
+            raised = _raised(self._complex(filtered, instants), order)
+            drift, sharper = line_drift(raised, _MOST_DRIFT * order, _DRIFT_FIRST, _sharpest)
+            return drift / order, sharper
+        # without its carrier the clock is not seen: the square of all samples, with lines beside the carrier's
+
+        def joint(values: NDArray[np.complex128]) -> float:
+            n = np.arange(values.size)
+            length = 2 * 2 ** math.ceil(math.log2(values.size))
+            upper, lower = (np.fft.fft(values * np.exp(sign * 2j * np.pi * n / sps), length) for sign in (-1, 1))
+            near = np.abs(np.fft.fftfreq(length)) < 0.2 / sps
+            return float(np.max(np.abs(upper[near] * lower[near])))
+
+        z = (filtered[0] + 1j * filtered[1]).astype(np.complex128)
+        drift, sharper = line_drift(z * z, 2 * _MOST_DRIFT / sps**2, round(_DRIFT_FIRST * sps), joint)
+        return drift / 2 * sps**2, sharper
+
+    def _straight(self, rails: Rails) -> Acquired | NotFound:
+        """Look for a link whose carrier stays."""
         carrier = self._coarse_carrier(rails) if self._scheme.kind == "carrier" else 0.0
         filtered = self._filter(rails, carrier)
         line = self._clock(rails, filtered)
@@ -353,6 +462,7 @@ class _Search:
         reason = self._doubt(fit, line.chance)
         if reason:
             return NotFound(reason)
+        self._bend = self._bent(filtered, start, fit) if self._scheme.kind == "carrier" else 0.0
         return Acquired(carrier, start, line.chance, fit.mer_db, noise_like_mer_db(self._scheme), fit)
 
     def _filter_reach(self) -> float:
@@ -533,6 +643,25 @@ class _Search:
         slope, intercept = np.polyfit(centres, angles, 1) if sums.size > 2 else (0.0, float(angles.mean()))
         return turn + float(slope), float(intercept)
 
+    def _bent(self, filtered: Rails, start: TrackStart, fit: Fit) -> float:
+        """How the carrier still drifts, cycles a symbol from one to the next, by the phases against the decisions; 0: not at all."""
+        k = np.arange(fit.values.shape[1], dtype=np.float64)
+        instants = start.instant + (start.offset_ui + k) * start.sps
+        if self._scheme.rails == 1:
+            z = self._complex(filtered, instants) * np.exp(-2j * np.pi * (start.phase + start.turn * k))
+            product = z * (fit.decided[0] - fit.decided[0].mean())
+        else:
+            middle = fit.means.mean(axis=1)
+            z = (fit.values[0] - middle[0]) + 1j * (fit.values[1] - middle[1])
+            product = z * (fit.decided[0] - 1j * fit.decided[1])
+        block = max(k.size // 32, 1)
+        count = k.size // block
+        phases = np.unwrap(np.angle(product[: count * block].reshape(count, block).sum(axis=1))) / (2 * math.pi)
+        drift, line, parabola = parabola_through(block * np.arange(count, dtype=np.float64), phases)
+        # of a carrier that is known to drift, less of a bend is believed
+        most = STILL_STANDS_OUT if self._drifts else STANDS_OUT
+        return drift if parabola < most * line and abs(drift) > _CLEAR_DRIFT else 0.0
+
     def _start(
         self, filtered: Rails, instants: NDArray[np.float64], phase: float, turn: float, sps: float, fit: Fit
     ) -> TrackStart:
@@ -686,6 +815,12 @@ def _first_sound(fit: Fit, floor_db: float) -> int:
     if poor[n // 2 :].any() or not poor.any():
         return 0
     return size * (int(np.flatnonzero(poor)[-1]) + 1)
+
+
+def _dechirped(rails: Rails, drift: float) -> Rails:
+    n = np.arange(rails[0].size, dtype=np.float64)
+    z = (rails[0] + 1j * rails[1]) * np.exp(-2j * np.pi * np.mod(0.5 * drift * n**2, 1.0))
+    return np.ascontiguousarray(z.real, np.float32), np.ascontiguousarray(z.imag, np.float32)
 
 
 def _power(rails: Rails) -> NDArray[np.float32]:

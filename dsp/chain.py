@@ -3,7 +3,7 @@
 import math
 from collections import deque
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal, Protocol
 
 import numpy as np
@@ -12,11 +12,11 @@ from dsp.acquisition import Acquired, acquire
 from dsp.block import Block, Samples
 from dsp.eye import HALO, EyeMeter, EyeSums
 from dsp.figures import Context
-from dsp.filters import Oscillator
 from dsp.frontend import FrontEnd, matched_filter, plan, wants_corners
 from dsp.limiter import RATE
 from dsp.link import Link, Scheme
 from dsp.pulses import receive_filter
+from dsp.steering import PART, Steering
 from dsp.tracking import Detector, Rails, Track, Tracker, tables_for
 
 FIRST_TRY, LAST_TRY = 512, 16384  # symbols an acquisition takes, doubling from one attempt to the next
@@ -340,7 +340,14 @@ class Chain:
             timing_bandwidth=options.timing_bandwidth,
             carrier_bandwidth=options.carrier_bandwidth,
         )
-        self._oscillator = Oscillator(found.carrier)
+        self._steering = Steering(
+            found.carrier,
+            found.drift,
+            rail_sps=front.rail_sps,
+            interpolate=front.interpolate,
+            delay=filters.delay,
+            rotation=scheme.rotation,
+        )
         self._guard = LockGuard(
             max(200, round(0.025 * self.link.symbol_rate_hz)),
             min(found.noise_like_db + 0.8, found.mer_db - 3.0),
@@ -352,19 +359,36 @@ class Chain:
         self._track(rails)
 
     def _track(self, rails: Rails) -> None:
+        carrier = self.link.scheme.kind == "carrier"
+        size = rails[0].size
+        at = 0
+        while at < size:
+            # a carrier that drifts is followed in short steps
+            step = round(PART * self._plan.rail_sps) if carrier and self._steering.active else size
+            part = rails if step >= size else tuple(rail[at : at + step] for rail in rails)
+            at += step
+            if not self._track_part(part, rails, max(size - at, 0)):
+                return
+
+    def _track_part(self, rails: Rails, chunk: Rails, left: int) -> bool:
+        """Follow the link through part of a chunk, behind which ``left`` rail samples are to come; False where lock ended."""
         assert self._tracker is not None
-        upright = self._oscillator.push(rails) if self.link.scheme.kind == "carrier" else rails
+        carrier = self.link.scheme.kind == "carrier"
+        upright = self._steering.push(rails) if carrier else rails
         track = self._tracker.push(self._matched.push(upright))
+        if carrier:
+            track = replace(track, steered=self._steering.follow(track))
         silence = self._guard.silent_from(track)
         if silence is not None:
-            self._fall_silent(track, silence, rails)
-            return
+            self._fall_silent(track, silence, chunk)
+            return False
         self._waiting.append(track)
         if not self._guard.holds(track):
-            self._lose("the levels are no longer told from noise")
-            return
+            self._lose("the levels are no longer told from noise", left)
+            return False
         # what waits for its proof must not make a slow link's picture old
         self._release(min(self._guard.window, max(round(0.2 * self.link.symbol_rate_hz), 32)))
+        return True
 
     def _release(self, held: int) -> None:
         """Hand on what has proved good: all but the last ``held`` symbols."""
@@ -383,10 +407,11 @@ class Chain:
                 waves = meter.resample(track)
                 self._lane.do(lambda meter=meter, track=track, waves=waves: meter.push(track, waves))  # type: ignore[misc]
 
-    def _lose(self, reason: str) -> None:
-        """Forget what came in since the lock may have gone, and look for the link again."""
+    def _lose(self, reason: str, left: int) -> None:
+        """Forget what came in since the lock may have gone, and look for the link again; ``left`` rail samples were not followed."""
         held = sum(track.values.shape[1] for track in self._waiting)
-        sample = max(self._position - round(held * self.link.samples_per_symbol), self._locked_from)
+        behind = round(held * self.link.samples_per_symbol) + left * self._plan.decimate
+        sample = max(self._position - behind, self._locked_from)
         self._end_run(sample, reason)
 
     def _fall_silent(self, track: Track, start: int, rails: Rails) -> None:

@@ -154,6 +154,7 @@ class EyeSums:
         self.crossing_bins = np.zeros((rails, CROSSING_BINS), np.int64)
         self.middle = np.zeros((rails, levels, 0 if raster else self.rows.count), np.int64)
         self.across = 0.0  # energy of a one-railed carrier's idle rail, level units squared
+        self.steered = 0.0  # turn of a drifting carrier that was taken out on the way, cycles
         self.residual = ResidualSums(scheme, small=not raster)
         self.timing_blocks = 0
         self.stretches = Stretches()
@@ -192,6 +193,7 @@ class EyeSums:
         self.symbols += sign * other.symbols
         self.drawn += sign * other.drawn
         self.across += sign * other.across
+        self.steered += sign * other.steered
         self.timing_blocks += sign * other.timing_blocks
         join = np.add if sign > 0 else np.subtract
         join(self._numbers, other._numbers, out=self._numbers)
@@ -320,7 +322,7 @@ class EyeMeter:
         self._capacity = 0
         self._pending = 0
         self._waves: list[NDArray[np.float32]] = []
-        self._loops = np.zeros((7, 0))
+        self._loops = np.zeros((8, 0))
         self._decided = np.zeros((2, 0), np.float32)
         self._classes = np.zeros((2, 0), np.int8)
 
@@ -387,7 +389,7 @@ class EyeMeter:
         decided, classes = np.zeros((2, capacity), np.float32), np.zeros((2, capacity), np.int8)
         decided[:, : self._pending] = self._decided[:, : self._pending]
         classes[:, : self._pending] = self._classes[:, : self._pending]
-        loops = np.zeros((7, capacity))
+        loops = np.zeros((8, capacity))
         loops[:, : self._pending] = self._loops[:, : self._pending]
         self._waves, self._decided, self._classes, self._loops, self._capacity = (
             waves,
@@ -413,6 +415,7 @@ class EyeMeter:
         rows[2:4], rows[4:6] = track.gain[:, None], track.zero[:, None]
         if self._scheme.kind == "carrier" and self._scheme.rails == 1:
             rows[6] = track.values[1].astype(np.float64) ** 2
+        rows[7] = 0.0 if track.steered is None else track.steered
         self._seen += n
 
     def _add_loops(self, first: int, last: int) -> None:
@@ -426,6 +429,7 @@ class EyeMeter:
         self.sums.unit_sums[:2] += self._loops[2:6, first:last].sum(axis=1).reshape(2, 2)
         self.sums.unit_sums[2] += last - first
         self.sums.across += float(self._loops[6, first:last].sum())
+        self.sums.steered += float(self._loops[7, first:last].sum())
 
     def _settle(self) -> None:
         """Sum all pending symbols that have their neighbours, window by window."""

@@ -819,6 +819,7 @@ class Figures:
         if line is None:
             return None, None
         slope, _, rms = line
+        slope += self._sums.steered / max(float(self._sums.unit_sums[2, 0]), 1.0)
         return base + slope * self._context.symbol_rate_hz, 360.0 * rms
 
     def _dc_pct(self) -> float | None:

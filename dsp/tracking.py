@@ -102,6 +102,8 @@ class Track:
         The filtered rails that the instants point into.
     base
         Stream position of ``samples[.][0]``, in filtered samples.
+    steered
+        Shape ``(n,)``, cycles a symbol: how much of the carrier's turn was taken out on the way because it drifts; None: nothing.
     """
 
     instants: NDArray[np.float64]
@@ -114,6 +116,7 @@ class Track:
     zero: NDArray[np.float64]
     samples: Rails
     base: int
+    steered: NDArray[np.float64] | None = None
 
     def head(self, count: int) -> "Track":
         """Its first ``count`` symbols."""
@@ -125,6 +128,7 @@ class Track:
             decided=self.decided[:, :count],
             slopes=self.slopes[:, :count],
             classes=self.classes[:, :count],
+            steered=None if self.steered is None else self.steered[:count],
         )
 
 

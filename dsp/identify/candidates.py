@@ -81,7 +81,9 @@ def _filtered(wave: _Wave, pulse: Pulse) -> NDArray[np.complex128]:
     return np.asarray(signal.oaconvolve(wave.samples, taps, mode="same"))
 
 
-def _at(wave: _Wave, instants: NDArray[np.float64], samples: NDArray[np.complex128] | None = None) -> NDArray[np.complex128]:
+def _at(
+    wave: _Wave, instants: NDArray[np.float64], samples: NDArray[np.complex128] | None = None
+) -> NDArray[np.complex128]:
     """The wave at any instants; ``samples``: what a filter made of it."""
     samples = wave.samples if samples is None else samples
     table = tables_for(wave.sps, min(wave.half, 0.4 * wave.sps)).value
@@ -212,9 +214,7 @@ def pam_candidate(
         if agreed.error_rate < 0.1:
             raw = _real_wave(spectrum, rate, Pulse("none"))
             scale = raw.sps / wave.sps
-            sampled = np.stack(
-                [_at(raw, (instants + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)]
-            )
+            sampled = np.stack([_at(raw, (instants + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)])
             response = response_of(sampled, decided[0] + 0j, min(raw.half, 0.5 * PHASES))
             ranking = (
                 best_pulse(response, scheme, families, tuple(shape.pulse for shape in shapes))
@@ -400,9 +400,7 @@ def carrier_candidates(
             sampled = []
             for p in range(PHASES):
                 lead = p / PHASES - 0.5
-                sampled.append(
-                    _at(wave, instants + lead * wave.sps) * rotation * np.exp(1j * slope * lead)
-                )
+                sampled.append(_at(wave, instants + lead * wave.sps) * rotation * np.exp(1j * slope * lead))
             response = response_of(np.stack(sampled), decided, wave.half)
             if pulses is None:
                 ranking = best_pulse(response, scheme, _CARRIER_FAMILIES, tuple(shape.pulse for shape in shapes))
@@ -460,8 +458,7 @@ def staggered_candidate(
         response = None
         if agreed.error_rate < 0.1:
             sampled = [
-                (_at(wave, instants + (p / PHASES - 0.5) * wave.sps) * np.exp(-1j * theta)).real
-                for p in range(PHASES)
+                (_at(wave, instants + (p / PHASES - 0.5) * wave.sps) * np.exp(-1j * theta)).real for p in range(PHASES)
             ]
             response = response_of(np.stack(sampled) + 0j, decided_rails[0] + 0j, wave.half)
             if pulses is None:
