@@ -158,21 +158,7 @@ def tail_reach(
     The leading term of the saddlepoint approximation, a few per cent off: good to compare sets by. Source: H. E. Daniels, Annals
     of Mathematical Statistics 25, 1954 (from memory).
     """
-    sigma = np.maximum(sigma, 1e-3)
-    # the saddlepoint lies where the Gaussian part alone would have it, or below
-    low, high = np.full(sigma.size, 1e-3), 10.0 / sigma
-    moved = taps[..., None] * (levels - shares @ levels)
-    for _ in range(24):
-        s = np.sqrt(low * high)
-        weight = s[:, None, None] * moved
-        top = weight.max(axis=2, keepdims=True)
-        weight = shares * np.exp(weight - top)
-        total = weight.sum(axis=2)
-        first = (weight * moved).sum(axis=2) / total
-        second = (weight * moved**2).sum(axis=2) / total - first**2
-        k0 = (np.log(total) + top[..., 0]).sum(axis=1) + 0.5 * (s * sigma) ** 2
-        k1 = first.sum(axis=1) + s * sigma**2
-        k2 = second.sum(axis=1) + sigma**2
-        rare = k0 - s * k1 - np.log(s * np.sqrt(2.0 * np.pi * k2)) < math.log(tail)
-        low, high = np.where(rare, low, s), np.where(rare, s, high)
-    return np.asarray(k1)
+    reach = np.empty(sigma.size)
+    about = levels - float(shares @ levels)
+    kernel.tail_reach(np.ascontiguousarray(taps), about, shares, np.maximum(sigma, 1e-3), math.log(tail), reach)
+    return reach

@@ -32,7 +32,7 @@ from monitor.state import AlarmLine, Change, LiveState, Mark, Verdict
 
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 _SLOW_KEYS = ("equaliser", "budget", "verdict", "ber_low", "ber_high")  # only in whole readings
-PART_SECONDS = 0.04  # how much of the stream one step of the picture takes in
+PART_SECONDS = 0.03  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
 WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
 COLLECT_SECONDS = 0.1  # one is collected at the next multiple of it, a fixed place of the stream
@@ -189,7 +189,7 @@ class Engine:
         self._base_image: EyeImage | None = None
         self._density: NDArray[np.float32] | None = None
         self._traces = 0.0
-        self._taken = False  # whether the picture as it is now was handed out
+        self._offered = self._taken = False  # whether the picture as it is now was handed out, and seen
         self._next_judge = 0.0
         self._next_line = 0.0
         self._next_whole = 0.0
@@ -200,6 +200,11 @@ class Engine:
     def seconds(self) -> float:
         """Length of the stream so far, lost samples included."""
         return self._position / self.sample_rate_hz
+
+    @property
+    def drawn(self) -> bool:
+        """Whether the picture has grown since it was handed out last."""
+        return self._density is not None and not self._offered
 
     @property
     def identified(self) -> Identified | None:
@@ -583,7 +588,7 @@ class Engine:
             return  # the newest traces are those before
         density = sums.density().astype(np.float32)
         old = self.persistence_s == 0 and self._taken
-        self._taken = False
+        self._offered = self._taken = False
         if old or self._density is None or self._density.shape != density.shape:
             self._density, self._traces = density, float(sums.drawn)
             return
@@ -624,6 +629,10 @@ class Engine:
         if self._marks:
             self._marks[-1] = replace(self._marks[-1], name=name)
             self._emit("mark", name=name, opening_pct=self._marks[-1].opening_pct)
+
+    def seen(self) -> None:
+        """The newest state has been looked at: where traces do not stay, those that come now replace its own."""
+        self._taken = self._offered
 
     def clear(self) -> None:
         """Empty the picture and the window."""
@@ -698,7 +707,7 @@ class Engine:
         )
 
     def _image(self) -> EyeImage | None:
-        self._taken = True
+        self._offered = True
         base = self._base_image
         if base is None or self._density is None or self._density.shape != base.density.shape:
             return base

@@ -24,7 +24,8 @@ from monitor.sources.wire import DESCRIBING, StreamEvent
 from monitor.state import AlarmLine, LiveState
 
 _POLL_S = 0.05
-_PUBLISH_S = 0.033  # a new state for the views at most so often
+# a new state for the views at most so often: with a new picture, without, and where nobody looks
+_PUBLISH_DRAWN_S, _PUBLISH_S = 0.02, 0.033
 _PUBLISH_UNSEEN_S = 0.25
 _PIECE_S = 0.05  # what the engine is given at once
 _PIECE_SAMPLES = 65536
@@ -82,7 +83,8 @@ class Watch:
         self._in_work = 0  # samples of the block that is being worked on
         self._published = 0.0
         self._late_at = self._stepped_at = 0.0  # when too much waited last; when the work was last changed for it
-        self._looked_at = self._waited_s = 0.0
+        self._looked: LiveState | None = None
+        self._balanced_at = self._waited_s = 0.0
         self._catching_up = False
         self._recovered_at, self._recovery_s = -math.inf, _RECOVERY_S
         self._quiet_since = 0.0
@@ -128,7 +130,8 @@ class Watch:
 
     def state(self) -> LiveState:
         """The newest state."""
-        return self._state
+        self._looked = self._state
+        return self._looked
 
     def mark(self, name: str = "") -> None:
         """Note the present reading."""
@@ -254,6 +257,8 @@ class Watch:
                 return
             n = min(step, size - at)
             so_far = block.clipped * (at + n) // max(size, 1)
+            if self._looked is self._state:
+                engine.seen()
             lost = self._owed + (0 if at else block.lost)
             self._owed = 0
             engine.feed(
@@ -299,7 +304,10 @@ class Watch:
         now = time.monotonic()
         if engine is not None and not self._reader.patient:
             self._balance(engine, now)
-        if now - self._published >= (_PUBLISH_S if self._options.display and not self.aside else _PUBLISH_UNSEEN_S):
+        least_s = _PUBLISH_UNSEEN_S
+        if self._options.display and not self.aside:
+            least_s = _PUBLISH_DRAWN_S if engine is not None and engine.drawn else _PUBLISH_S
+        if now - self._published >= least_s:
             self._published = now
             self._publish()
 
@@ -311,9 +319,9 @@ class Watch:
         waiting_s = self._reader.ring.oldest_s  # by the clock: long messages are not late for being long
         if waiting_s > _PROMPT_S:
             self._late_at = now
-        if now - self._looked_at >= _LOOK_S:
+        if now - self._balanced_at >= _LOOK_S:
             self._catching_up = waiting_s < self._waited_s
-            self._looked_at, self._waited_s = now, waiting_s
+            self._balanced_at, self._waited_s = now, waiting_s
         if waiting_s > _LATE_S and not self._catching_up:
             if engine.relief < _MOST_RELIEF and now - self._stepped_at >= _RELIEF_S:
                 if now - self._recovered_at < _MOST_RECOVERY_S:

@@ -8,6 +8,7 @@ import math
 from numba import njit, types
 
 _F64 = types.Array(types.float64, 1, "A", readonly=True)
+_F64_2 = types.Array(types.float64, 2, "C", readonly=True)
 _ROOT_HALF = math.sqrt(0.5)
 _DENSITY = 1.0 / math.sqrt(2.0 * math.pi)
 
@@ -90,3 +91,36 @@ def quantile(at, share, sigma, target, low, high):
             return next_x
         x = next_x
     return x
+
+
+@njit(types.void(_F64_2, _F64, _F64, _F64, types.float64, types.float64[::1]), nogil=True, cache=True)
+def tail_reach(taps, levels, shares, sigma, log_tail, reach):
+    """`dsp.mixture.tail_reach`: the saddlepoint by halving its logarithm, one set of taps after the other; levels about their mean."""
+    for n in range(taps.shape[0]):
+        # it lies where the Gaussian part alone would have it, or below
+        low, high = 1e-3, 10.0 / sigma[n]
+        for _ in range(24):
+            s = math.sqrt(low * high)
+            k0 = 0.5 * (s * sigma[n]) ** 2
+            k1 = s * sigma[n] ** 2
+            k2 = sigma[n] ** 2
+            for tap in taps[n]:
+                top = -math.inf
+                for level in levels:
+                    top = max(top, s * tap * level)
+                total = first = second = 0.0
+                for i in range(levels.size):
+                    moved = tap * levels[i]
+                    weight = shares[i] * math.exp(s * moved - top)
+                    total += weight
+                    first += weight * moved
+                    second += weight * moved * moved
+                first /= total
+                k0 += math.log(total) + top
+                k1 += first
+                k2 += second / total - first * first
+            if k0 - s * k1 - math.log(s * math.sqrt(2.0 * math.pi * k2)) < log_tail:
+                high = s
+            else:
+                low = s
+        reach[n] = k1

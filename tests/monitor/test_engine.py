@@ -339,6 +339,7 @@ def test_persistence_shows_what_came_since_the_last_look_all_of_it_or_a_fading_s
         watched = Watched(display=True)
         watched.engine.persistence_s = persistence
         watched.feed(samples[:last]).engine.state()
+        watched.engine.seen()
         traces[persistence] = watched.feed(samples[last:]).engine.state().snapshot.image.traces
     assert 0.03 * SYMBOL_RATE < traces[0.0] < 0.2 * SYMBOL_RATE
     # all but what the lock guard still holds back
@@ -438,6 +439,7 @@ def test_with_few_traces_drawn_the_newest_of_them_stay_until_there_are_newer():
     for at in range(24_000, samples.size, 2400):
         watched.feed(samples[at : at + 2400])
         traces.append(watched.engine.state().snapshot.image.traces)
+        watched.engine.seen()
     assert min(traces) > 0
 
 
