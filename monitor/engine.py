@@ -32,7 +32,7 @@ from monitor.state import AlarmLine, Change, LiveState, Mark, Verdict
 
 BLOCKS = 8  # the sliding window is made of so many, whose openings' scatter gives the interval
 _SLOW_KEYS = ("equaliser", "budget", "verdict", "ber_low", "ber_high")  # only in whole readings
-PART_SECONDS = 0.03  # how much of the stream one step of the picture takes in
+PART_SECONDS = 0.025  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
 WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
 COLLECT_SECONDS = 0.1  # one is collected at the next multiple of it, a fixed place of the stream

@@ -32,7 +32,7 @@ _PIECE_SAMPLES = 65536
 _OLDEST_S = 0.4
 # so long samples wait when work is to be left out, and when it can be taken up again; a whole reading takes a tenth of a second
 _LATE_S, _PROMPT_S = 0.2, 0.12
-_LOOK_S = 0.1  # what waits less than so long ago is being caught up with
+_LOOK_S = 0.1  # between two looks at what waits
 _RELIEF_S, _RECOVERY_S = 0.25, 1.0  # at most one step of either in so long
 _MOST_RECOVERY_S = 16.0  # where work was taken up again too soon, the next try comes after twice the time
 _MOST_RELIEF = 4
@@ -85,7 +85,7 @@ class Watch:
         self._late_at = self._stepped_at = 0.0  # when too much waited last; when the work was last changed for it
         self._looked: LiveState | None = None
         self._balanced_at = self._waited_s = 0.0
-        self._catching_up = False
+        self._falling_behind = False
         self._recovered_at, self._recovery_s = -math.inf, _RECOVERY_S
         self._quiet_since = 0.0
         self._start_fields = dict(start_fields or {})
@@ -320,9 +320,10 @@ class Watch:
         if waiting_s > _PROMPT_S:
             self._late_at = now
         if now - self._balanced_at >= _LOOK_S:
-            self._catching_up = waiting_s < self._waited_s
+            # one long piece of work, as the search for the lock is, is caught up with by itself
+            self._falling_behind = min(self._waited_s, waiting_s) > _LATE_S and waiting_s >= self._waited_s
             self._balanced_at, self._waited_s = now, waiting_s
-        if waiting_s > _LATE_S and not self._catching_up:
+        if self._falling_behind:
             if engine.relief < _MOST_RELIEF and now - self._stepped_at >= _RELIEF_S:
                 if now - self._recovered_at < _MOST_RECOVERY_S:
                     self._recovery_s = min(2 * self._recovery_s, _MOST_RECOVERY_S)

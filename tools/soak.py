@@ -313,31 +313,20 @@ def follow_window(running: Any, over: Callable[[], bool], choices: Path) -> Sigh
     from monitor.views.painter import ensure_application
     from monitor.views.window import LiveWindow, choose_painter
 
-    class Asking:
-        """The watched side, that remembers what was handed out last."""
-
-        last: Any = None
-
-        def state(self) -> Any:  # noqa: ANN401
-            self.last = running.state()
-            return self.last
-
-        def __getattr__(self, name: str) -> Any:  # noqa: ANN401
-            return getattr(running, name)
-
     class Painted(QObject):
         """Looks when a paint is done."""
 
         def eventFilter(self, watched: QObject, event: QEvent) -> bool:
-            if event.type() == QEvent.Type.Paint:
-                QTimer.singleShot(0, lambda: sight.see(asking.last))
+            view = window.face.view
+            if event.type() == QEvent.Type.Paint and view is not None:
+                QTimer.singleShot(0, lambda: sight.see(view.state))
             return False
 
     ensure_application()
     application = QApplication.instance()
     assert application is not None
-    sight, asking, painted = Sight(), Asking(), Painted()
-    window = LiveWindow(asking, title="soak", painter=choose_painter("auto"), choices=choices, until=over)
+    sight, painted = Sight(), Painted()
+    window = LiveWindow(running, title="soak", painter=choose_painter("auto"), choices=choices, until=over)
     window.face.installEventFilter(painted)
     window.resize(1280, 800)
     window.show()
