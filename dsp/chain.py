@@ -36,14 +36,15 @@ class ChainOptions:
     """How to measure.
 
     ``detector`` None: the derivative detector, or the crossing detector where waves have corners. Bandwidths are BnT. ``window`` is
-    the symbols of a reading (None: enough that every level's tail can be counted), ``every`` draws one of so many traces into the
-    raster. ``keep_total`` False: windows only, for streams without end.
+    the symbols of a reading (None: enough that every level's tail can be counted), ``part`` those of a part of it (None: all), ``every``
+    draws one of so many traces into the raster. ``keep_total`` False: windows only, for streams without end.
     """
 
     detector: Detector | None = None
     timing_bandwidth: float = 0.005
     carrier_bandwidth: float = 0.005
     window: int | None = None
+    part: int | None = None
     every: int = 1
     target_ber: float = 1e-6
     keep_total: bool = True
@@ -83,8 +84,8 @@ class Chain:
     """Measures one link in a stream of blocks, however the stream is cut.
 
     Samples are worked on in chunks of fixed length, counted from the stream's start or last gap. ``on_window`` gets the sums of each
-    full window, in the lane, ``on_event`` each gain or loss of lock as it happens, ``on_track`` the symbols that go into the sums;
-    `total` holds all of the sums once `finish` returned.
+    full window and ``on_part`` those of the open one at each part of it, in the lane, ``on_event`` each gain or loss of lock as it
+    happens, ``on_track`` the symbols that go into the sums; `total` holds all of the sums once `finish` returned.
     """
 
     def __init__(
@@ -97,6 +98,7 @@ class Chain:
         options: ChainOptions | None = None,
         lane: Lane | None = None,
         on_window: Callable[[EyeSums], None] | None = None,
+        on_part: Callable[[EyeSums], None] | None = None,
         on_event: Callable[[LockEvent], None] | None = None,
         on_track: Callable[[Track], None] | None = None,
     ) -> None:
@@ -115,6 +117,7 @@ class Chain:
         self._every = self.options.every
         self._lane = lane or AtOnce()
         self._on_window = on_window
+        self._on_part = on_part
         self._on_event = on_event
         self._on_track = on_track
         # 20 ms, so that a fast link is shown soon; longer for slow ones, where each call would cost more than its samples
@@ -177,6 +180,11 @@ class Chain:
         self._lane.wait()
         if self._meter is not None and self._meter.sums.symbols:
             self._merge(self._meter.sums)
+
+    def restart_window(self) -> None:
+        """Forget the open window's sums."""
+        if self._meter is not None:
+            self._meter.restart_window()
 
     def draw_every(self, n: int) -> None:
         """From now on draw one of ``n`` traces only, in runs; what is not drawn is measured all the same."""
@@ -329,6 +337,8 @@ class Chain:
                 window=self.window,
                 every=self._every,
                 finished=self._window_full,
+                part=self.options.part,
+                grown=self._on_part,
             )
         self._meter.offset_ui = found.start.offset_ui
         assert self._carrier is not None

@@ -273,15 +273,15 @@ class EyeSums:
         return result
 
     def density(self) -> NDArray[np.uint32]:
-        """Traces of all levels by rail, column and row, shape ``(rails, columns, rows)``; both intervals are the same ones."""
-        interval = self.left.sum(axis=2, dtype=np.uint32)
-        return np.concatenate([interval, interval], axis=1)
+        """Traces of all levels by rail, column of one interval and row, shape ``(rails, 64, rows)``."""
+        return np.asarray(self.left.sum(axis=2, dtype=np.uint32))
 
 
 class EyeMeter:
     """Turns tracked symbols into `EyeSums`, a window at a time.
 
-    Symbols wait until ``slab`` of them have their neighbours; ``finished`` is called with the sums of each full window.
+    Symbols wait until ``slab`` of them have their neighbours; ``finished`` is called with the sums of each full window, ``grown`` with
+    those of the open one at each ``part`` of it.
     The first and last 16 symbols of an unbroken run serve as neighbours only.
     """
 
@@ -297,6 +297,8 @@ class EyeMeter:
         window: int,
         every: int,
         finished: Callable[[EyeSums], None],
+        part: int | None = None,
+        grown: Callable[[EyeSums], None] | None = None,
     ) -> None:
         self._scheme = scheme
         self._tables = tables
@@ -308,6 +310,8 @@ class EyeMeter:
         self._window = window
         self.every = every  # may be changed at any time
         self._finished = finished
+        self._part = part or window
+        self._grown = grown
         self.sums = EyeSums(scheme, phases)
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
         self._residual = ResidualMeter(scheme, phases, LAGS, thrifty=slab >= 1024)
@@ -372,12 +376,16 @@ class EyeMeter:
         """The run of symbols breaks off here: sum what has its neighbours, forget the rest; without ``keep`` the open window too."""
         self._settle()
         if not keep:
-            self.sums = EyeSums(self._scheme, self._phases)
+            self.restart_window()
         self._residual.restart()
         self._spectrum.restart()
         self._pending = 0
         self._segment += 1
         self._seen = 0
+
+    def restart_window(self) -> None:
+        """Forget the open window's sums."""
+        self.sums = EyeSums(self._scheme, self._phases)
 
     def _reserve(self, wanted: int) -> None:
         if wanted <= self._capacity:
@@ -435,9 +443,12 @@ class EyeMeter:
         """Sum all pending symbols that have their neighbours, window by window."""
         first = HALO
         while (ready := self._pending - HALO - first) > 0:
-            count = min(ready, self._window - self.sums.symbols, self._until_apart())
+            symbols = self.sums.symbols
+            count = min(ready, self._window - symbols, self._part - symbols % self._part, self._until_apart())
             self._sum(first, count)
             first += count
+            if self._grown is not None and self.sums.symbols % self._part == 0:
+                self._grown(self.sums)
             if self.sums.symbols == self._window:
                 self._windows += 1
                 self._finished(self.sums)

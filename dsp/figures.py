@@ -674,7 +674,7 @@ class Figures:
         column = min(max(round(self._best), 0), 2 * COLUMNS - 1)
         return EyeImage(
             ("",) if self._scheme.rails == 1 else ("I", "Q"),
-            self._sums.density(),
+            np.concatenate([self._sums.density()] * 2, axis=1),
             (np.arange(2 * COLUMNS) - COLUMNS) / COLUMNS,
             self._sums.rows.centres(),
             self._curves.min(axis=(0, 1)),

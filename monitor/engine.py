@@ -84,20 +84,32 @@ class EngineOptions:
         return self.display or self.history or bool(self.rules)
 
 
+@dataclass(frozen=True, slots=True)
+class _Folded:
+    """How far a block's traces are in the picture."""
+
+    of: EyeSums
+    density: NDArray[np.uint32]
+    drawn: int
+    symbols: int
+
+
 class _Asked:
     """A whole reading that was asked for: made beside the stream while it goes on, or where it can wait when it is collected."""
 
     def __init__(self, sums: EyeSums, context: Context, seconds: float, sample: int, options: EngineOptions) -> None:
         self.sample = sample
         self.told = False
+        self._patience = PATIENCE_SECONDS
         self.collected_at = (seconds // COLLECT_SECONDS + 1) * COLLECT_SECONDS
         self.coverage_pct = 100.0 * sums.drawn / max(sums.symbols, 1)
         self._what = sums, context, options.display
         self._work = options.aside.submit(whole_figures, *self._what) if options.aside is not None else None
 
     def ready(self) -> bool:
-        """Whether it is there, or will be in a moment that the stream can wait."""
-        return self._work is None or bool(wait((self._work,), PATIENCE_SECONDS).done)
+        """Whether it is there, or will be in a moment that the stream can wait, which it does once."""
+        patience, self._patience = self._patience, 0.0
+        return self._work is None or bool(wait((self._work,), patience).done)
 
     def whole(self) -> Whole:
         """It, made."""
@@ -187,7 +199,8 @@ class Engine:
         self._opening: Estimate | None = None
         self._curve: NDArray[np.float64] | None = None
         self._base_image: EyeImage | None = None
-        self._density: NDArray[np.float32] | None = None
+        self._density: NDArray[np.float32] | None = None  # of one interval
+        self._folded: _Folded | None = None
         self._traces = 0.0
         self._offered = self._taken = False  # whether the picture as it is now was handed out, and seen
         self._next_judge = 0.0
@@ -444,18 +457,20 @@ class Engine:
             return
         self._identified, self._looks, self._found_none = found, 0, ""
         link = found.link
-        window = self._options.window or int(min(max(2.0 * link.symbol_rate_hz, 2000), 200_000))
-        self._block_symbols = max(window // BLOCKS, 64)
-        part = max(min(round(PART_SECONDS * link.symbol_rate_hz), self._block_symbols), 32)
+        wanted = self._options.window or int(min(max(2.0 * link.symbol_rate_hz, 2000), 200_000))
+        least = max(wanted // BLOCKS, 64)
+        part = max(min(round(PART_SECONDS * link.symbol_rate_hz), least), 32)
         # whole parts to a block
-        part = max(self._block_symbols // max(round(self._block_symbols / part), 1), 32)
+        parts = max(round(least / part), 1)
+        part = max(least // parts, 32)
+        self._block_symbols = window = part * parts
         self._chain = Chain(
             link,
             complex_in=self._complex,
             centre_hz=found.centre_hz,
             half_band_hz=found.half_band_hz,
-            options=replace(self._options.chain, window=part, keep_total=False),
-            on_window=self._part,
+            options=replace(self._options.chain, window=window, part=part, keep_total=False),
+            on_part=self._part,
             on_event=self._lock_event,
         )
         self.relieve(self.relief)
@@ -496,10 +511,7 @@ class Engine:
         seconds = self._chain.position / self.sample_rate_hz
         if self._options.display:
             self._draw(sums)
-        if self._block is None:
-            self._block = sums
-        else:
-            self._block.merge(sums)
+        self._block = sums
         if self._block.symbols >= self._block_symbols:
             if not self._mixed:
                 self._blocks.append(self._block)
@@ -532,7 +544,9 @@ class Engine:
         told = seconds >= self._next_line
         # what takes long is read for a line, at fixed places of the stream, and once there is enough for it
         due = seconds >= self._next_whole or (told and not self.relief)
-        if due or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES):
+        due = due or (self._opening is None and len(self._blocks) >= LEAST_STRETCHES)
+        asks = due and (self._asked is None or self._asked.ready())
+        if asks:
             self._collect()
             step = WHOLE_SECONDS * 2 ** min(self.relief, 1)  # a verdict must not stand beside figures of another time
             self._next_whole = (seconds // step + 1) * step
@@ -540,7 +554,8 @@ class Engine:
         # meanwhile it stands as it was
         figures = Figures(merged, self._chain.context(), after=self._before)
         reading = self._with_slow(figures.reading(whole=False), self._reading)
-        self._base_image = figures.image()
+        if self._options.display:
+            self._base_image = figures.image()
         self._reading = reading
         self._history.add(seconds, reading.opening_pct)
         if reading.opening_pct is not None and (
@@ -550,7 +565,7 @@ class Engine:
         self._tell_alarms(self.alarms.update(reading_document(reading) or {}, seconds, self._chain.position))
         if told:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
-            if self._asked is not None:
+            if asks and self._asked is not None:
                 self._asked.told = True
             else:
                 self._tell_reading(reading, self._chain.position, self._coverage_pct)
@@ -583,23 +598,27 @@ class Engine:
         self._emit("reading", sample=sample, **(reading_document(reading) or {}), coverage_pct=coverage_pct)
 
     def _draw(self, sums: EyeSums) -> None:
-        """Fold a part into the picture; what is older fades by the persistence."""
-        if not sums.drawn and self.persistence_s == 0:
+        """Fold what has come to a block into the picture; what is older fades by the persistence."""
+        before, self._folded = self._folded, _Folded(sums, sums.density(), sums.drawn, sums.symbols)
+        density, drawn, symbols = self._folded.density.astype(np.float32), sums.drawn, sums.symbols
+        if before is not None and before.of is sums:
+            density -= before.density
+            drawn, symbols = drawn - before.drawn, symbols - before.symbols
+        if not drawn and self.persistence_s == 0:
             return  # the newest traces are those before
-        density = sums.density().astype(np.float32)
         old = self.persistence_s == 0 and self._taken
         self._offered = self._taken = False
         if old or self._density is None or self._density.shape != density.shape:
-            self._density, self._traces = density, float(sums.drawn)
+            self._density, self._traces = density, float(drawn)
             return
         if self.persistence_s:
             assert self._chain is not None
-            age = sums.symbols / self._chain.link.symbol_rate_hz
+            age = symbols / self._chain.link.symbol_rate_hz
             fade = math.exp(-age / self.persistence_s)
             self._density *= np.float32(fade)
             self._traces *= fade
         self._density += density
-        self._traces += sums.drawn
+        self._traces += drawn
 
     # -- the user ------------------------------------------------------------------------------------------------------
 
@@ -620,8 +639,8 @@ class Engine:
             self._mark_opening = self._opening
         self._opening = None  # a change is told of what comes from now on
         # what follows is measured on its own, not mixed with what was before the mark: some symbols from then are still to come
-        self._blocks.clear()
-        self._block, self._mixed = None, self._chain is not None and self._chain.locked
+        self._restart_window()
+        self._mixed = self._chain is not None and self._chain.locked
         self._emit("mark", name=name, opening_pct=reading.opening_pct if reading else None)
 
     def name_mark(self, name: str) -> None:
@@ -637,8 +656,13 @@ class Engine:
     def clear(self) -> None:
         """Empty the picture and the window."""
         self._density = None
+        self._restart_window()
+
+    def _restart_window(self) -> None:
         self._blocks.clear()
         self._block = None
+        if self._chain is not None:
+            self._chain.restart_window()
 
     def acknowledge(self) -> None:
         """Acknowledge every alarm."""
@@ -709,10 +733,11 @@ class Engine:
     def _image(self) -> EyeImage | None:
         self._offered = True
         base = self._base_image
-        if base is None or self._density is None or self._density.shape != base.density.shape:
+        if base is None or self._density is None or 2 * self._density.shape[1] != base.density.shape[1]:
             return base
         # a level's traces are counted whole or, faded, in tenths: the painter wants integers
-        return replace(base, density=np.rint(self._density * 4.0).astype(np.uint32), traces=round(self._traces))
+        interval = np.rint(self._density * 4.0).astype(np.uint32)
+        return replace(base, density=np.concatenate([interval, interval], axis=1), traces=round(self._traces))
 
     def _change(self) -> Change | None:
         before, now = self._mark_opening, self._opening
