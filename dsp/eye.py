@@ -13,7 +13,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dsp._kernels import raster as kernel
-from dsp.interpolation import expander
+from dsp._kernels.lanes import LANES, SPAN
+from dsp.interpolation import expander, spread_weights
 from dsp.jitter import BLOCK, TimingSpectrum
 from dsp.link import Scheme
 from dsp.residual import ResidualMeter, ResidualSums
@@ -316,6 +317,9 @@ class EyeMeter:
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
         self._residual = ResidualMeter(scheme, phases, LAGS, thrifty=slab >= 1024)
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
+        self._spread = None  # weights of a symbol's eight points at once, where they can be told by the same samples on all rails
+        if tables.band and phases == LANES and not scheme.stagger:
+            self._spread = spread_weights(tables.band, sps / LANES, LANES, SPAN)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
         self._stretches = 0  # that there were since then
@@ -335,7 +339,14 @@ class EyeMeter:
         shift = self.offset_ui * self._sps
         scale, zero = 1.0 / track.gain, track.zero
         n = track.values.shape[1]
-        waves = tuple(np.empty((self._phases, n), np.float32) for _ in range(self._scheme.rails))
+        rails = self._scheme.rails
+        waves = tuple(np.empty((self._phases, n), np.float32) for _ in track.samples)
+        if self._spread is not None:
+            kernel.resample_eight(
+                track.samples[0], track.samples[-1], self._spread, track.instants, shift, track.phases, self.offset_ui,
+                len(waves) == 2, scale[0], scale[1], zero[0], zero[1], waves[0], waves[-1],
+            )  # fmt: skip
+            return waves[:rails]
         if self._scheme.kind != "carrier":
             kernel.resample_real(
                 track.samples[0], self._tables.value, track.instants, shift, scale[0], zero[0], waves[0]
@@ -348,9 +359,9 @@ class EyeMeter:
         kernel.resample_turned(
             track.samples[0], track.samples[1], self._tables.value, track.instants, shift,
             self._scheme.stagger * self._sps, np.cos(angle), np.sin(angle), np.cos(turn), np.sin(turn),
-            scale[0], scale[1], zero[0], zero[1], self._scheme.rails == 2, waves[0], waves[-1],
+            scale[0], scale[1], zero[0], zero[1], rails == 2, waves[0], waves[-1],
         )  # fmt: skip
-        return waves
+        return waves[:rails]
 
     def push(self, track: Track, waves: tuple[NDArray[np.float32], ...]) -> None:
         """Take the next symbols of the run with their waves as `resample` made them."""

@@ -4,10 +4,12 @@ A table has shape ``(PHASES + 1, TAPS)``, float32; row ``p`` weighs the samples 
 wanted instant, for the fraction ``p / PHASES``.
 """
 
-from functools import cache
+from functools import cache, lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
+
+from dsp.errors import DspError
 
 PHASES = 512
 TAPS = 8
@@ -22,13 +24,13 @@ def weights(band: float) -> NDArray[np.float32]:
     Source: T. I. Laakso et al., Splitting the unit delay, IEEE Signal Processing Magazine 13(1), 1996, sec. on
     general least squares (from memory).
     """
-    return np.ascontiguousarray(_solve(band, derivative=False), dtype=np.float32)
+    return np.ascontiguousarray(_solve(band, np.arange(PHASES + 1) / PHASES, derivative=False), dtype=np.float32)
 
 
 @cache
 def slope_weights(band: float) -> NDArray[np.float32]:
     """As `weights`, for the derivative per sample."""
-    return np.ascontiguousarray(_solve(band, derivative=True), dtype=np.float32)
+    return np.ascontiguousarray(_solve(band, np.arange(PHASES + 1) / PHASES, derivative=True), dtype=np.float32)
 
 
 @cache
@@ -58,6 +60,25 @@ def cubic_slope_weights() -> NDArray[np.float32]:
     return np.ascontiguousarray(table, dtype=np.float32)
 
 
+@lru_cache(maxsize=8)
+def spread_weights(band: float, step: float, count: int, span: int) -> NDArray[np.float32]:
+    """Weights of ``count`` points ``step`` samples apart, of which the first is the wanted instant; flat ``(PHASES + 1, span, count)``.
+
+    They weigh the samples from -3 on about the one at or before the wanted instant; ``band`` as in `weights`. Raises DspError where
+    ``span`` samples do not reach.
+    """
+    places = np.arange(PHASES + 1)[:, None] / PHASES + step * np.arange(count)
+    whole = np.floor(places).astype(np.int64)
+    if int(whole.max()) + TAPS > span:
+        raise DspError(f"{count} points {step:.3g} samples apart need more than {span} samples")
+    each = _solve(band, (places - whole).reshape(-1), derivative=False).reshape(PHASES + 1, count, TAPS)
+    table = np.zeros((PHASES + 1, span, count), np.float32)
+    row, point = np.indices(whole.shape)
+    for tap in range(TAPS):
+        table[row, whole + tap, point] = each[:, :, tap]
+    return table.reshape(-1)
+
+
 @cache
 def expander(factor: int, band: float) -> NDArray[np.float32]:
     """Weights that put ``factor`` points into each sample interval, shape ``(factor, TAPS)``: rows of `weights` or cubic (band 0)."""
@@ -65,12 +86,12 @@ def expander(factor: int, band: float) -> NDArray[np.float32]:
     return np.ascontiguousarray(table[:: PHASES // factor][:factor])
 
 
-def _solve(band: float, *, derivative: bool) -> NDArray[np.float64]:
+def _solve(band: float, fractions: NDArray[np.float64], *, derivative: bool) -> NDArray[np.float64]:
     taps = np.arange(TAPS) - BEFORE
     edge = 2 * np.pi * band
     gram = edge * np.sinc(2 * band * (taps[:, None] - taps[None, :]))
     gram += 1e-9 * edge * np.eye(TAPS)
-    distance = np.arange(PHASES + 1)[:, None] / PHASES - taps[None, :]
+    distance = fractions[:, None] - taps[None, :]
     if derivative:
         near = np.abs(distance) < 1e-9
         safe = np.where(near, 1.0, distance)

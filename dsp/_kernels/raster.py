@@ -3,9 +3,12 @@
 A rail's wave is kept symbol by symbol, phase by phase: ``wave[phase, symbol]``, so that every inner loop runs along symbols.
 """
 
+import math
+
 import numpy as np
 from numba import njit, types
 
+from dsp._kernels.lanes import turn_over, weigh
 from dsp._kernels.tracking import _at
 
 _F32 = types.Array(types.float32, 1, "C", readonly=True)
@@ -18,6 +21,9 @@ _OUT2 = types.float32[:, ::1]
 _FAST = {"contract", "nsz", "reassoc"}
 _FINITE = {"contract", "nsz", "reassoc", "nnan", "ninf"}  # samples are finite: sources see to it
 _TILE = 512
+_NEAR = 256
+_COSINE = tuple(np.float32((-1) ** i * (2 * math.pi) ** (2 * i) / math.factorial(2 * i)) for i in range(7))
+_SINE = tuple(np.float32((-1) ** i * (2 * math.pi) ** (2 * i + 1) / math.factorial(2 * i + 1)) for i in range(6))
 
 
 @njit(types.void(_F32, _F32_2, _F64, types.float64, types.float32, types.float32, _OUT2),
@@ -67,6 +73,70 @@ def resample_turned(x_i, x_q, table, instants, shift, stagger, cos, sin, step_co
                 b = _at(x_q, where, table)
                 wave_q[p, k] = (b * c - a * s - zero_q) * scale_q
                 c, s = c * dc - s * ds, s * dc + c * ds
+
+
+@njit(nogil=True, cache=True, inline="always", fastmath=_FINITE)
+def _turn_of(cycles):
+    """Cosine and sine of so many cycles, float32: power series over a quarter turn either way."""
+    half_turns = math.floor(2.0 * cycles + 0.5)
+    x = types.float32(cycles - 0.5 * half_turns)
+    sign = types.float32(1.0 - 2.0 * (half_turns - 2.0 * math.floor(0.5 * half_turns)))
+    y = x * x
+    c, s = _COSINE, _SINE
+    cosine = c[0] + y * (c[1] + y * (c[2] + y * (c[3] + y * (c[4] + y * (c[5] + y * c[6])))))
+    sine = x * (s[0] + y * (s[1] + y * (s[2] + y * (s[3] + y * (s[4] + y * s[5])))))
+    return sign * cosine, sign * sine
+
+
+@njit(types.void(_F32, _F32, _F32, _F64, types.float64, _F64, types.float64, types.boolean, types.float32, types.float32,
+                 types.float32, types.float32, _OUT2, _OUT2),
+      nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
+def resample_eight(x_i, x_q, weights, instants, shift, phases, ahead, turned, scale_i, scale_q, zero_i, zero_q,
+                   wave_i, wave_q):  # fmt: skip
+    """Put eight points a symbol from ``instants[k] + shift`` on into ``wave[:, k]``, scaled about zero, by `spread_weights`.
+
+    ``turned``: by the carrier, ``phases`` in cycles, whose phase ``ahead`` of a symbol after the instant is that of the first point.
+    A real rail is given twice.
+    """
+    n = instants.size - 1
+    lines_i, lines_q = np.empty(64, np.float32), np.empty(64, np.float32)
+    cos, sin = np.empty(_NEAR, np.float32), np.empty(_NEAR, np.float32)
+    step_cos, step_sin = np.empty(_NEAR, np.float32), np.empty(_NEAR, np.float32)
+    for tile in range(0, n, _NEAR):
+        size = min(_NEAR, n - tile)
+        for at in range(tile, tile + size, 8):
+            some = min(8, tile + size - at)
+            for m in range(some):
+                t = instants[at + m] + shift
+                i = int(t)
+                row = types.uint64((t - i) * 512.0 + 0.5)
+                weigh(x_i, x_q, types.uint64(i - 3), weights, row, lines_i, lines_q, types.uint64(8 * m))
+            if some == 8:
+                turn_over(lines_i, wave_i, at)
+                turn_over(lines_q, wave_q, at)
+            else:
+                for m in range(some):
+                    for p in range(8):
+                        wave_i[p, at + m] = lines_i[8 * m + p]
+                        wave_q[p, at + m] = lines_q[8 * m + p]
+        if turned:
+            here = phases[tile : tile + size + 1]
+            for m in range(size):
+                step = here[m + 1] - here[m]
+                cos[m], sin[m] = _turn_of(here[m] + step * ahead)
+                step_cos[m], step_sin[m] = _turn_of(0.125 * step)
+        for p in range(8):
+            to_i, to_q = wave_i[p, tile : tile + size], wave_q[p, tile : tile + size]
+            if not turned:
+                for m in range(size):
+                    to_i[m] = (to_i[m] - zero_i) * scale_i
+                continue
+            for m in range(size):
+                a, b, c, s = to_i[m], to_q[m], cos[m], sin[m]
+                to_i[m] = (a * c + b * s - zero_i) * scale_i
+                to_q[m] = (b * c - a * s - zero_q) * scale_q
+                cos[m] = c * step_cos[m] - s * step_sin[m]
+                sin[m] = s * step_cos[m] + c * step_sin[m]
 
 
 @njit(types.void(_F32_2, types.int64, types.int64, _F32_2, _U64, _U64, types.boolean, types.int64, types.float32,
