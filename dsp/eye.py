@@ -317,7 +317,9 @@ class EyeMeter:
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
         self._residual = ResidualMeter(scheme, phases, LAGS, thrifty=slab >= 1024)
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
-        self._spread = None  # weights of a symbol's eight points at once, where they can be told by the same samples on all rails
+        self._spread = (
+            None  # weights of a symbol's eight points at once, where they can be told by the same samples on all rails
+        )
         if tables.band and phases == LANES and not scheme.stagger:
             self._spread = spread_weights(tables.band, sps / LANES, LANES, SPAN)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
@@ -499,7 +501,7 @@ class EyeMeter:
             self._classes[:rails], first,
         )  # fmt: skip
         levels, rows = self._scheme.levels, sums.rows
-        height = np.uint64(rows.count)
+        height = np.int32(rows.count)
         runs = self._drawn_runs(count)
         for rail in range(rails):
             wave = self._waves[rail]
@@ -507,10 +509,10 @@ class EyeMeter:
             sums.cross[rail] += cross[:, rail]
             sums.square[rail] += np.einsum("pk,pk->p", part, part)
             classes = self._classes[rail]
-            here = classes[first:last].astype(np.uint64)
-            after = classes[first + 1 : last + 1].astype(np.uint64)
+            here = classes[first:last].astype(np.int32)
+            after = classes[first + 1 : last + 1].astype(np.int32)
             if sums.pair:
-                base_left, base_right = (here * np.uint64(levels) + after) * height, after
+                base_left, base_right = (here * np.int32(levels) + after) * height, after
             else:
                 base_left, base_right = here * height, after * height
             left = sums.left[rail].reshape(COLUMNS, -1)

@@ -24,13 +24,13 @@ def weights(band: float) -> NDArray[np.float32]:
     Source: T. I. Laakso et al., Splitting the unit delay, IEEE Signal Processing Magazine 13(1), 1996, sec. on
     general least squares (from memory).
     """
-    return np.ascontiguousarray(_solve(band, np.arange(PHASES + 1) / PHASES, derivative=False), dtype=np.float32)
+    return np.ascontiguousarray(_solve(band, np.arange(PHASES + 1.0) / PHASES, derivative=False), dtype=np.float32)
 
 
 @cache
 def slope_weights(band: float) -> NDArray[np.float32]:
     """As `weights`, for the derivative per sample."""
-    return np.ascontiguousarray(_solve(band, np.arange(PHASES + 1) / PHASES, derivative=True), dtype=np.float32)
+    return np.ascontiguousarray(_solve(band, np.arange(PHASES + 1.0) / PHASES, derivative=True), dtype=np.float32)
 
 
 @cache
@@ -71,7 +71,9 @@ def spread_weights(band: float, step: float, count: int, span: int) -> NDArray[n
     whole = np.floor(places).astype(np.int64)
     if int(whole.max()) + TAPS > span:
         raise DspError(f"{count} points {step:.3g} samples apart need more than {span} samples")
-    each = _solve(band, (places - whole).reshape(-1), derivative=False).reshape(PHASES + 1, count, TAPS)
+    each = _solve(band, np.asarray(places - whole, np.float64).reshape(-1), derivative=False).reshape(
+        PHASES + 1, count, TAPS
+    )
     table = np.zeros((PHASES + 1, span, count), np.float32)
     row, point = np.indices(whole.shape)
     for tap in range(TAPS):
@@ -81,17 +83,21 @@ def spread_weights(band: float, step: float, count: int, span: int) -> NDArray[n
 
 @cache
 def expander(factor: int, band: float) -> NDArray[np.float32]:
-    """Weights that put ``factor`` points into each sample interval, shape ``(factor, TAPS)``: rows of `weights` or cubic (band 0)."""
-    table = weights(band) if band > 0 else cubic_weights()
-    return np.ascontiguousarray(table[:: PHASES // factor][:factor])
+    """Weights that put ``factor`` points into each sample interval, shape ``(factor, 6)``, for the samples at -2 .. +3.
+
+    As `weights` for signals up to ``band`` cycles a sample, below -70 dB for 0.13; for ``band`` 0 as `cubic_weights`.
+    """
+    if band > 0:
+        return np.ascontiguousarray(_solve(band, np.arange(0.0, factor) / factor, derivative=False, taps=6), np.float32)
+    return np.ascontiguousarray(cubic_weights()[:: PHASES // factor, 1:7][:factor])
 
 
-def _solve(band: float, fractions: NDArray[np.float64], *, derivative: bool) -> NDArray[np.float64]:
-    taps = np.arange(TAPS) - BEFORE
+def _solve(band: float, fractions: NDArray[np.float64], *, derivative: bool, taps: int = TAPS) -> NDArray[np.float64]:
+    places = np.arange(taps) - (taps // 2 - 1)
     edge = 2 * np.pi * band
-    gram = edge * np.sinc(2 * band * (taps[:, None] - taps[None, :]))
-    gram += 1e-9 * edge * np.eye(TAPS)
-    distance = fractions[:, None] - taps[None, :]
+    gram = edge * np.sinc(2 * band * (places[:, None] - places[None, :]))
+    gram += 1e-9 * edge * np.eye(taps)
+    distance = fractions[:, None] - places[None, :]
     if derivative:
         near = np.abs(distance) < 1e-9
         safe = np.where(near, 1.0, distance)

@@ -34,14 +34,13 @@ def _mask(*places: int) -> Any:
     return ir.Constant(ir.VectorType(ir.IntType(32), LANES), list(places))
 
 
-@intrinsic  # type: ignore[untyped-decorator]
-def weigh(typing_context, samples, others, first, weights, row, out, outs, at):  # type: ignore[no-untyped-def]
+def _weigh(typing_context, samples, others, first, weights, row, out, outs, at):
     """``out[at + p] = sum over m of samples[first + m] * weights[row, m, p]`` for eight p; ``others`` to ``outs`` likewise.
 
     ``weights`` is flat, of `SPAN` rows of eight an entry.
     """
 
-    def generate(context, builder, signature, args):  # type: ignore[no-untyped-def]
+    def generate(context, builder, signature, args):
         kinds = signature.args
         rails = [_start(context, builder, args[n], kinds[n], args[2]) for n in (0, 1)]
         size = ir.Constant(_INDEX, SPAN * LANES)
@@ -65,11 +64,10 @@ def weigh(typing_context, samples, others, first, weights, row, out, outs, at): 
     return types.void(samples, others, index, weights, index, out, outs, index), generate
 
 
-@intrinsic  # type: ignore[untyped-decorator]
-def turn_over(typing_context, lines, wave, column):  # type: ignore[no-untyped-def]
+def _turn_over(typing_context, lines, wave, column):
     """``wave[p, column + m] = lines[8 m + p]`` for eight p and m; ``wave`` has eight rows."""
 
-    def generate(context, builder, signature, args):  # type: ignore[no-untyped-def]
+    def generate(context, builder, signature, args):
         kinds = signature.args
         begin = _start(context, builder, args[0], kinds[0], _ZERO)
         rows = [_load(builder, begin, ir.Constant(_INDEX, LANES * m)) for m in range(LANES)]
@@ -88,3 +86,7 @@ def turn_over(typing_context, lines, wave, column):  # type: ignore[no-untyped-d
         return context.get_dummy_value()
 
     return types.void(lines, wave, types.int64), generate
+
+
+weigh: Any = intrinsic(_weigh)
+turn_over: Any = intrinsic(_turn_over)

@@ -15,13 +15,13 @@ _F32 = types.Array(types.float32, 1, "C", readonly=True)
 _F32_2 = types.Array(types.float32, 2, "C", readonly=True)
 _F64 = types.Array(types.float64, 1, "C", readonly=True)
 _I32 = types.Array(types.int32, 1, "C", readonly=True)
-_U64 = types.Array(types.uint64, 1, "C", readonly=True)
 _I8 = types.Array(types.int8, 1, "C", readonly=True)
 _OUT2 = types.float32[:, ::1]
 _FAST = {"contract", "nsz", "reassoc"}
 _FINITE = {"contract", "nsz", "reassoc", "nnan", "ninf"}  # samples are finite: sources see to it
 _TILE = 512
 _NEAR = 256
+_SLAB = 4096
 _COSINE = tuple(np.float32((-1) ** i * (2 * math.pi) ** (2 * i) / math.factorial(2 * i)) for i in range(7))
 _SINE = tuple(np.float32((-1) ** i * (2 * math.pi) ** (2 * i + 1) / math.factorial(2 * i + 1)) for i in range(6))
 
@@ -139,7 +139,19 @@ def resample_eight(x_i, x_q, weights, instants, shift, phases, ahead, turned, sc
                 sin[m] = s * step_cos[m] + c * step_sin[m]
 
 
-@njit(types.void(_F32_2, types.int64, types.int64, _F32_2, _U64, _U64, types.boolean, types.int64, types.float32,
+@njit(nogil=True, cache=True, inline="always")
+def _count(places, n, counts):
+    """Count the first ``n`` places, from both halves in turn: neighbours often meet in one counter and would wait for it."""
+    half = n // 2
+    near, far = places[:half], places[half : 2 * half]
+    for k in range(half):
+        counts[types.uint64(near[k])] += types.uint32(1)
+        counts[types.uint64(far[k])] += types.uint32(1)
+    if 2 * half < n:
+        counts[types.uint64(places[n - 1])] += types.uint32(1)
+
+
+@njit(types.void(_F32_2, types.int64, types.int64, _F32_2, _I32, _I32, types.boolean, types.int64, types.float32,
                  types.float32, types.uint32[:, ::1], types.uint32[:, ::1]),
       nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
 def fill(wave, first, count, expand, base_left, base_right, both, n_rows, row_scale, row_zero, left, right):
@@ -150,40 +162,55 @@ def fill(wave, first, count, expand, base_left, base_right, both, n_rows, row_sc
     """
     n_phases = wave.shape[0]
     factor = expand.shape[0]
-    line = np.empty(_TILE, np.uint64)
+    # a column's counters stay near while a whole slab is counted into them
+    places, others = np.empty((factor, _SLAB), np.uint16), np.empty((factor if both else 0, _SLAB), np.uint16)
     top = types.float32(n_rows) - types.float32(0.5)
-    for tile in range(0, count, _TILE):
-        n = min(_TILE, count - tile)
-        at = first + tile
+    nought = types.float32(0.0)
+    for slab in range(0, count, _SLAB):
+        whole = min(_SLAB, count - slab)
         for q in range(n_phases):
-            x0 = wave[(q - 3) % n_phases, at + (q - 3) // n_phases : at + (q - 3) // n_phases + n]
-            x1 = wave[(q - 2) % n_phases, at + (q - 2) // n_phases : at + (q - 2) // n_phases + n]
-            x2 = wave[(q - 1) % n_phases, at + (q - 1) // n_phases : at + (q - 1) // n_phases + n]
-            x3 = wave[q, at : at + n]
-            x4 = wave[(q + 1) % n_phases, at + (q + 1) // n_phases : at + (q + 1) // n_phases + n]
-            x5 = wave[(q + 2) % n_phases, at + (q + 2) // n_phases : at + (q + 2) // n_phases + n]
-            x6 = wave[(q + 3) % n_phases, at + (q + 3) // n_phases : at + (q + 3) // n_phases + n]
-            x7 = wave[(q + 4) % n_phases, at + (q + 4) // n_phases : at + (q + 4) // n_phases + n]
+            for tile in range(slab, slab + whole, _TILE):
+                n = min(_TILE, slab + whole - tile)
+                at = first + tile
+                x0 = wave[(q - 2) % n_phases, at + (q - 2) // n_phases : at + (q - 2) // n_phases + n]
+                x1 = wave[(q - 1) % n_phases, at + (q - 1) // n_phases : at + (q - 1) // n_phases + n]
+                x2 = wave[q, at : at + n]
+                x3 = wave[(q + 1) % n_phases, at + (q + 1) // n_phases : at + (q + 1) // n_phases + n]
+                x4 = wave[(q + 2) % n_phases, at + (q + 2) // n_phases : at + (q + 2) // n_phases + n]
+                x5 = wave[(q + 3) % n_phases, at + (q + 3) // n_phases : at + (q + 3) // n_phases + n]
+                bl, br = base_left[tile : tile + n], base_right[tile : tile + n]
+                for s in range(factor):
+                    w = expand[s]
+                    w0, w1, w2 = w[0] * row_scale, w[1] * row_scale, w[2] * row_scale
+                    w3, w4, w5 = w[3] * row_scale, w[4] * row_scale, w[5] * row_scale
+                    to = places[s, tile - slab : tile - slab + n]
+                    if both:
+                        too = others[s, tile - slab : tile - slab + n]
+                        for k in range(n):
+                            v = (
+                                row_zero
+                                + (w0 * x0[k] + w1 * x1[k] + w2 * x2[k])
+                                + (w3 * x3[k] + w4 * x4[k] + w5 * x5[k])
+                            )
+                            row = types.int32(min(max(v, nought), top))
+                            to[k] = types.uint16(row + bl[k])
+                            too[k] = types.uint16(row + br[k])
+                    elif factor == 1:
+                        for k in range(n):
+                            v = row_zero + row_scale * x2[k]
+                            to[k] = types.uint16(types.int32(min(max(v, nought), top)) + bl[k])
+                    else:
+                        for k in range(n):
+                            v = (
+                                row_zero
+                                + (w0 * x0[k] + w1 * x1[k] + w2 * x2[k])
+                                + (w3 * x3[k] + w4 * x4[k] + w5 * x5[k])
+                            )
+                            to[k] = types.uint16(types.int32(min(max(v, nought), top)) + bl[k])
             for s in range(factor):
-                w = expand[s]
-                for k in range(n):
-                    v = (w[0] * x0[k] + w[1] * x1[k] + w[2] * x2[k] + w[3] * x3[k]) + (
-                        w[4] * x4[k] + w[5] * x5[k] + w[6] * x6[k] + w[7] * x7[k]
-                    )
-                    line[k] = types.uint64(types.int32(min(max(v * row_scale + row_zero, types.float32(0.0)), top)))
-                column = q * factor + s
-                counts = left[column]
-                bl = base_left[tile : tile + n]
-                # unsigned sums: an index that may be negative costs a test each
+                _count(places[s], whole, left[q * factor + s])
                 if both:
-                    br = base_right[tile : tile + n]
-                    others = right[column]
-                    for k in range(n):
-                        counts[bl[k] + line[k]] += types.uint32(1)
-                        others[br[k] + line[k]] += types.uint32(1)
-                else:
-                    for k in range(n):
-                        counts[bl[k] + line[k]] += types.uint32(1)
+                    _count(others[s], whole, right[q * factor + s])
 
 
 @njit(nogil=True, cache=True, inline="always", fastmath=_FAST)
@@ -209,48 +236,94 @@ def _crossing(wave, k, p, n_phases):
 
 @njit(types.int64(_F32_2, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
                   types.float64[:, ::1], types.float64[:, ::1]),
-      nogil=True, cache=True)  # fmt: skip
+      nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
 def crossings(wave, first, count, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
     """Times at which traces between mirror-image levels cross 0, in UI from the left symbol; return how many.
 
-    Looks at the symbols ``first .. first + count``.
+    Looks at the symbols ``first .. first + count``. ``wave`` has a power of two of phases, at least 4.
     ``classes`` is aligned with the columns of ``wave``. ``bins`` counts times over one UI; ``groups[g]`` = count, sum, sum of squares
     (about ``origin``) for the pattern of classes at the offsets ``around``; ``edges[rising]`` = count, sum.
     """
     n_phases = wave.shape[0]
     n_bins = bins.size
+    lowest, highest = np.empty(_TILE, np.int32), np.empty(_TILE, np.int32)
+    pattern, chosen = np.empty(_TILE, np.int32), np.empty(_TILE, np.int32)
+    y = np.empty((4, _TILE), np.float32)
+    y0, y1, y2, y3 = y[0], y[1], y[2], y[3]
+    time = np.empty(_TILE, np.float32)
     found = 0
-    for k in range(first, first + count):
-        left = classes[k]
-        if left + classes[k + 1] != n_levels - 1 or left == classes[k + 1]:
-            continue
-        low = -1
-        high = -1
-        before = wave[0, k]
+    nought, one, two, three = types.float32(0.0), types.float32(1.0), types.float32(2.0), types.float32(3.0)
+    half, third, sixth = types.float32(0.5), types.float32(1 / 3), types.float32(1 / 6)
+    n_rises, rises, n_falls, falls = 0, 0.0, 0, 0.0
+    for tile in range(first, first + count, _TILE):
+        n = min(_TILE, first + count - tile)
+        low, high = lowest[:n], highest[:n]
+        low[:] = n_phases
+        high[:] = -1
         for p in range(n_phases):
-            after = wave[p + 1, k] if p + 1 < n_phases else wave[0, k + 1]
-            if (before > 0.0) != (after > 0.0):
-                if low < 0:
-                    low = p
-                high = p
-            before = after
-        if low < 0:
-            continue
-        time = _crossing(wave, k, low, n_phases)
-        if high != low:
-            time = 0.5 * (time + _crossing(wave, k, high, n_phases))
-        bins[min(max(int(time * n_bins), 0), n_bins - 1)] += 1
-        group = 0
+            last = p + 1 == n_phases
+            before = wave[p, tile : tile + n]
+            after = wave[0, tile + 1 : tile + 1 + n] if last else wave[p + 1, tile : tile + n]
+            place = types.int32(p)
+            for k in range(n):
+                crossed = (before[k] > nought) != (after[k] > nought)
+                low[k] = min(low[k], place) if crossed else low[k]
+                high[k] = place if crossed else high[k]
+        codes = pattern[:n]
+        codes[:] = 0
         for offset in around:
-            group = group * n_levels + classes[k + offset]
-        about = time - origin
-        groups[group, 0] += 1.0
-        groups[group, 1] += about
-        groups[group, 2] += about * about
-        rising = 1 if classes[k + 1] > left else 0
-        edges[rising, 0] += 1.0
-        edges[rising, 1] += time
-        found += 1
+            there = classes[tile + offset : tile + offset + n]
+            for k in range(n):
+                codes[k] = codes[k] * types.int32(n_levels) + types.int32(there[k])
+        left, right = classes[tile : tile + n], classes[tile + 1 : tile + 1 + n]
+        some = 0
+        for k in range(n):
+            chosen[some] = k
+            mirrored = (types.int64(left[k]) + right[k] == n_levels - 1) & (left[k] != right[k])
+            some += types.int64(mirrored & (low[k] < n_phases))
+        for m in range(some):
+            k = chosen[m]
+            at = low[k]
+            # the phase before may be the last of the symbol before, those after the first of the next
+            y0[m] = wave[at - 1, tile + k] if at > 0 else wave[n_phases - 1, tile + k - 1]
+            y1[m] = wave[at, tile + k]
+            y2[m] = wave[at + 1, tile + k] if at + 1 < n_phases else wave[0, tile + k + 1]
+            y3[m] = wave[at + 2, tile + k] if at + 2 < n_phases else wave[at + 2 - n_phases, tile + k + 1]
+        for m in range(some):
+            c1 = y2[m] - third * y0[m] - half * y1[m] - sixth * y3[m]
+            c2 = half * (y0[m] + y2[m]) - y1[m]
+            c3 = sixth * (y3[m] - y0[m]) + half * (y1[m] - y2[m])
+            chord = y2[m] - y1[m]
+            u = -y1[m] / chord
+            for _ in range(3):
+                slope = c1 + u * (two * c2 + three * u * c3)
+                step = (y1[m] + u * (c1 + u * (c2 + u * c3))) / slope
+                nearer = min(max(u - step, nought), one)
+                # a step must go on crossing in the direction of the chord
+                u = nearer if slope * chord > nought else u
+            time[m] = u
+        for m in range(some):
+            k = chosen[m]
+            at = (low[k] + types.float64(time[m])) / n_phases
+            if high[k] != low[k]:
+                at = 0.5 * (at + _crossing(wave, tile + k, high[k], n_phases))
+            bins[types.uint64(min(max(types.int64(at * n_bins), 0), n_bins - 1))] += 1
+            about = at - origin
+            row = groups[types.uint64(codes[k])]
+            row[0] += 1.0
+            row[1] += about
+            row[2] += about * about
+            if right[k] > left[k]:
+                n_rises += 1
+                rises += at
+            else:
+                n_falls += 1
+                falls += at
+        found += some
+    edges[0, 0] += n_falls
+    edges[0, 1] += falls
+    edges[1, 0] += n_rises
+    edges[1, 1] += rises
     return found
 
 

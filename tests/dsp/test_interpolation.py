@@ -3,6 +3,7 @@
 import numpy as np
 import pytest
 
+from dsp.errors import DspError
 from dsp.interpolation import (
     BEFORE,
     PHASES,
@@ -11,6 +12,7 @@ from dsp.interpolation import (
     cubic_weights,
     expander,
     slope_weights,
+    spread_weights,
     weights,
 )
 
@@ -63,10 +65,28 @@ def test_the_last_row_reads_the_sample_after_that_of_the_first(table):
 @pytest.mark.parametrize("band", [0.0, 0.15])
 def test_an_expander_puts_even_points_into_each_interval(factor, band):
     table = expander(factor, band)
-    assert table.shape == (factor, TAPS)
-    wave = np.exp(2j * np.pi * 0.05 * (np.arange(TAPS) - BEFORE))
+    assert table.shape == (factor, 6)
+    wave = np.exp(2j * np.pi * 0.05 * np.arange(-2, 4))
     exact = np.exp(2j * np.pi * 0.05 * np.arange(factor) / factor)
     np.testing.assert_allclose(table @ wave, exact, atol=4e-3)
+
+
+def test_spread_weights_read_each_point_as_the_plain_weights_do():
+    step, count, span = 0.53, 8, 16
+    table = spread_weights(0.2, step, count, span).reshape(PHASES + 1, span, count)
+    samples = np.random.default_rng(1).standard_normal(span)
+    for row in (0, 100, PHASES):
+        for point in range(count):
+            place = row / PHASES + point * step
+            near = round((place - int(place)) * PHASES)
+            expected = weights(0.2)[near] @ samples[int(place) : int(place) + TAPS]
+            # the plain ones round to the nearest 512th of a sample
+            assert table[row, :, point] @ samples == pytest.approx(expected, abs=5e-3)
+
+
+def test_spread_weights_refuse_points_beyond_their_samples():
+    with pytest.raises(DspError, match="need more than 16 samples"):
+        spread_weights(0.2, 1.2, 8, 16)
 
 
 def test_tables_are_float32_rows_ready_for_the_kernels():

@@ -5,7 +5,8 @@ import pytest
 from scipy.optimize import brentq
 
 from dsp._kernels import raster as kernel
-from dsp.interpolation import expander, weights
+from dsp._kernels.lanes import SPAN
+from dsp.interpolation import expander, spread_weights, weights
 
 ROWS, SCALE, ZERO = 256, 61.803398875, 128.271828
 
@@ -56,6 +57,27 @@ def test_resample_turned_takes_the_carrier_out_at_each_point(stagger):
         np.testing.assert_allclose(wave_q[p], (tones(1.37 * late / 1.4 + 5) + 0.2) * 0.5, atol=0.5 * 6e-3)
 
 
+@pytest.mark.parametrize("turned", [False, True])
+@pytest.mark.parametrize("count", [0, 5, 600])
+@pytest.mark.parametrize("sps", [4.0, 5.37, 7.99])
+def test_resample_eight_puts_eight_even_points_into_each_symbol(turned, count, sps):
+    instants = 20.0 + np.cumsum(np.full(count + 1, sps) + 0.01 * np.sin(np.arange(count + 1)))
+    n = np.arange(int(instants[-1]) + 30)
+    turn = 0.0123 if turned else 0.0
+    z = (tones(n) + 1j * tones(1.37 * n / 1.4 + 5)) * np.exp(2j * np.pi * (turn * n + 0.11 * turned))
+    rails = [np.ascontiguousarray(part, dtype=np.float32) for part in (z.real, z.imag)]
+    cycles = turn * instants + 0.11 * turned
+    wave_i, wave_q = np.full((8, count), np.nan, np.float32), np.full((8, count), np.nan, np.float32)
+    weigh = spread_weights(0.25, sps / 8, 8, SPAN)
+    shift = 0.3 * sps
+    kernel.resample_eight(*rails, weigh, instants, shift, cycles, 0.3, turned, 2.0, 0.5, 0.1, -0.2, wave_i, wave_q)
+    for p in range(8):
+        at = instants[:-1] + shift + p / 8 * sps
+        np.testing.assert_allclose(wave_i[p], (tones(at) - 0.1) * 2.0, atol=2.0 * 6e-3)
+        if turned:
+            np.testing.assert_allclose(wave_q[p], (tones(1.37 * at / 1.4 + 5) + 0.2) * 0.5, atol=0.5 * 6e-3)
+
+
 # -- the class raster ---------------------------------------------------------------------------------------------------
 
 
@@ -67,7 +89,7 @@ def expected_positions(wave, first, count, expand):
     for q in range(n_phases):
         for s in range(factor):
             at = np.arange(first, first + count) * n_phases + q
-            value = sum(float(expand[s, m]) * line[at + m - 3] for m in range(8))
+            value = sum(float(expand[s, m]) * line[at + m - 2] for m in range(6))
             rows.append(value * SCALE + ZERO)
     return np.array(rows)
 
@@ -75,17 +97,17 @@ def expected_positions(wave, first, count, expand):
 @pytest.mark.parametrize(("n_phases", "factor"), [(8, 8), (64, 1)])
 @pytest.mark.parametrize("both", [False, True])
 def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, factor, both):
-    first, count, classes = 5, 1301, 4  # more than two tiles
+    first, count, classes = 5, 5301, 4  # more than two tiles, more than a slab
     rng = np.random.default_rng(n_phases)
     wave = rng.uniform(-1.6, 1.6, (n_phases, first + count + 5)).astype(np.float32)
     wave[0, 40], wave[0, 43] = 50.0, -50.0  # beyond either end of the raster
     expand = expander(factor, 0.19)
-    label = rng.integers(0, classes, count).astype(np.uint64)
-    other = rng.integers(0, classes, count).astype(np.uint64)
+    label = rng.integers(0, classes, count).astype(np.int32)
+    other = rng.integers(0, classes, count).astype(np.int32)
     left = np.zeros((n_phases * factor, classes * ROWS), np.uint32)
     right = np.zeros_like(left)
     kernel.fill(
-        wave, first, count, expand, label * np.uint64(ROWS), other * np.uint64(ROWS), both,
+        wave, first, count, expand, label * np.int32(ROWS), other * np.int32(ROWS), both,
         ROWS, SCALE, ZERO, left, right,
     )  # fmt: skip
     position = np.clip(expected_positions(wave, first, count, expand), 0.25, ROWS - 0.75)
