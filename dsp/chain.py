@@ -8,6 +8,7 @@ from typing import Literal, Protocol
 
 import numpy as np
 
+from dsp._kernels import guard as kernel
 from dsp.acquisition import Acquired, acquire
 from dsp.block import Block, Samples
 from dsp.eye import HALO, EyeMeter, EyeSums
@@ -121,8 +122,12 @@ class Chain:
         self._on_event = on_event
         self._on_track = on_track
         # 20 ms, so that a fast link is shown soon; longer for slow ones, where each call would cost more than its samples
-        self._chunk = 2 ** min(max(round(math.log2(rate * 0.02)), min(math.floor(math.log2(rate * 0.1)), 12), 9), 15)
-        self._buffer = np.empty(self._chunk, np.complex64 if complex_in else np.float32)
+        near = 2 ** min(max(round(math.log2(rate * 0.02)), min(math.floor(math.log2(rate * 0.1)), 12), 9), 15)
+        # where nobody waits for a window, longer ones once the link is found: each call costs less of the whole
+        far = max(near, 2 ** min(math.floor(math.log2(rate * 0.1)), 16)) if self.options.keep_total else near
+        self._chunks = near, far
+        self._chunk = near
+        self._buffer = np.empty(far, np.complex64 if complex_in else np.float32)
         self._filled = 0
         self._position = 0  # stream index of the buffer's first sample
         self.events: list[LockEvent] = []
@@ -172,7 +177,7 @@ class Chain:
             at += n
             if self._filled == self._chunk:
                 # a copy: a front end with nothing to do hands the samples on as they are, and acquisition keeps them
-                self._work(self._buffer.copy())
+                self._work(self._buffer[: self._chunk].copy())
 
     def finish(self) -> None:
         """The stream has ended: use what is left."""
@@ -240,6 +245,7 @@ class Chain:
         """A new run: everything with memory starts afresh."""
         self._front = FrontEnd(self.link, self._plan)
         self._tracker: Tracker | None = None
+        self._chunk = self._chunks[0]
         self._run_began = self._position
         self._search()
 
@@ -268,6 +274,7 @@ class Chain:
                 self._look_back()
         if self._tracker is None and self._held_from is not None and self._position - self._run_began > self._hold:
             self._let_go()
+        self._chunk = self._chunks[self._tracker is not None]
 
     def _look_back(self) -> None:
         """Try the newest samples alone: a link that has just come stands behind a long stretch of none."""
@@ -411,11 +418,8 @@ class Chain:
                 self._on_track(track)
             meter = self._meter
             assert meter is not None
-            if meter.every > 1:  # the lane has time to spare
-                self._lane.do(lambda meter=meter, track=track: meter.push(track, meter.resample(track)))  # type: ignore[misc]
-            else:
-                waves = meter.resample(track)
-                self._lane.do(lambda meter=meter, track=track, waves=waves: meter.push(track, waves))  # type: ignore[misc]
+            waves = meter.resample(track)
+            self._lane.do(lambda meter=meter, track=track, waves=waves: meter.push(track, waves))  # type: ignore[misc]
 
     def _lose(self, reason: str, left: int) -> None:
         """Forget what came in since the lock may have gone, and look for the link again; ``left`` rail samples were not followed."""
@@ -524,35 +528,25 @@ class LockGuard:
         inner = min(abs(level) for level in scheme.rail_levels)
         self._quiet = 0.1 * inner * inner * scheme.rails
         self._rails = scheme.rails
-        self._powers = np.zeros(0, np.float32)  # of the last symbols, fewer than SILENT
+        self._powers = np.zeros(0)  # of the last symbols, fewer than SILENT
 
     def silent_from(self, track: Track) -> int | None:
         """Index in the track at which a silence began (negative: in the track before); None if there is none."""
-        values = track.values[: self._rails]
-        power = np.einsum("rk,rk->k", values, values)
-        held = self._powers.size
-        powers = np.concatenate((self._powers, power))
+        n = track.values.shape[1]
+        powers = np.empty(self._powers.size + n)
+        powers[: self._powers.size] = self._powers
+        start = int(kernel.silence(track.values, self._rails, self._quiet, self.SILENT, powers))
         self._powers = powers[-self.SILENT + 1 :]
-        if powers.size < self.SILENT or not self._quiet:
-            return None
-        sums = np.concatenate(([0.0], np.cumsum(powers, dtype=np.float64)))
-        quiet = sums[self.SILENT :] - sums[: -self.SILENT] < self._quiet * self.SILENT
-        if not quiet.any():
-            return None
-        start = int(np.argmax(quiet))
-        while powers[start] >= self._quiet:
-            start += 1
-        return start - held
+        return start if start < n and self._quiet else None
 
     def holds(self, track: Track) -> bool:
         """Take the next symbols; False as soon as a whole window falls below the floor."""
-        error = track.values - track.decided
-        at, size = 0, error.shape[1]
+        at, size = 0, track.values.shape[1]
         while at < size:
             n = min(self._part - self._count, size - at)
-            for levels, rest in zip(track.decided, error, strict=True):
-                self._signal += float(levels[at : at + n] @ levels[at : at + n])
-                self._noise += float(rest[at : at + n] @ rest[at : at + n])
+            signal, noise = kernel.powers(track.values, track.decided, at, at + n)
+            self._signal += signal
+            self._noise += noise
             self._count += n
             at += n
             if self._count == self._part:
@@ -588,16 +582,16 @@ class SlipCounter:
         n = track.values.shape[1]
         if n == 0:
             return 0
-        absolute = track.base + track.instants[:n]
         if self._start is None:
-            self._start = float(absolute[0])
-        drift = (absolute - self._start) / sps - np.arange(self._symbols, self._symbols + n)
-        self._symbols += n
+            self._start = track.base + float(track.instants[0])
         slips = 0
         at = 0
         while at < n:
             m = min(self._block - self._count, n - at)
-            self._sum += float(drift[at : at + m].sum())
+            instants = kernel.total_of(track.instants, at, at + m) + m * (track.base - self._start)
+            # less the numbers of the symbols
+            self._sum += instants / sps - m * (self._symbols + 0.5 * (m - 1))
+            self._symbols += m
             self._count += m
             at += m
             if self._count == self._block:

@@ -5,6 +5,7 @@ Everything here adds up: sums of two stretches are those of both, and none of th
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from typing import Any
@@ -332,7 +333,8 @@ class EyeMeter:
         self._capacity = 0
         self._pending = 0
         self._waves: list[NDArray[np.float32]] = []
-        self._loops = np.zeros((8, 0))
+        self._units: deque[tuple[int, NDArray[np.float64]]] = deque()  # a track's last symbol + 1, gain and zero
+        self._loops = np.zeros((4, 0))
         self._decided = np.zeros((2, 0), np.float32)
         self._classes = np.zeros((2, 0), np.int8)
 
@@ -395,6 +397,7 @@ class EyeMeter:
         self._pending = 0
         self._segment += 1
         self._seen = 0
+        self._units.clear()
 
     def restart_window(self) -> None:
         """Forget the open window's sums."""
@@ -410,7 +413,7 @@ class EyeMeter:
         decided, classes = np.zeros((2, capacity), np.float32), np.zeros((2, capacity), np.int8)
         decided[:, : self._pending] = self._decided[:, : self._pending]
         classes[:, : self._pending] = self._classes[:, : self._pending]
-        loops = np.zeros((8, capacity))
+        loops = np.zeros((4, capacity))
         loops[:, : self._pending] = self._loops[:, : self._pending]
         self._waves, self._decided, self._classes, self._loops, self._capacity = (
             waves,
@@ -423,7 +426,7 @@ class EyeMeter:
     def _follow(self, track: Track, n: int) -> None:
         """What the loops say of the next symbols.
 
-        How late they are against the first one's clock (UI), carrier (cycles), level unit and middle by rail, the idle rail's energy.
+        How late they are against the first one's clock (UI), carrier (cycles), the idle rail's energy; level unit and middle by rail.
         """
         k = np.arange(self._seen, self._seen + n, dtype=np.float64)
         absolute = track.base + track.instants[:n]
@@ -433,11 +436,11 @@ class EyeMeter:
         rows[0] = (absolute - self._origin) / self._sps - k
         if self._scheme.kind == "carrier":
             rows[1] = track.phases[:n] + (self.extra_turn - self._scheme.rotation) * k
-        rows[2:4], rows[4:6] = track.gain[:, None], track.zero[:, None]
         if self._scheme.kind == "carrier" and self._scheme.rails == 1:
-            rows[6] = track.values[1].astype(np.float64) ** 2
-        rows[7] = 0.0 if track.steered is None else track.steered
+            rows[2] = track.values[1].astype(np.float64) ** 2
+        rows[3] = 0.0 if track.steered is None else track.steered
         self._seen += n
+        self._units.append((self._seen, np.stack((track.gain, track.zero))))
 
     def _add_loops(self, first: int, last: int) -> None:
         late, turned = self._loops[:2, first:last]
@@ -447,10 +450,18 @@ class EyeMeter:
         self.sums.clock.add(self._segment, k, late)
         if self._scheme.kind == "carrier":
             self.sums.carrier.add(self._segment, k, turned)
-        self.sums.unit_sums[:2] += self._loops[2:6, first:last].sum(axis=1).reshape(2, 2)
+            self.sums.across += float(self._loops[2, first:last].sum())
+        begin, end = before + first, before + last
+        while self._units[0][0] <= begin:
+            self._units.popleft()
+        for stop, unit in self._units:
+            n = min(stop, end) - begin
+            self.sums.unit_sums[:2] += n * unit
+            begin += n
+            if begin == end:
+                break
         self.sums.unit_sums[2] += last - first
-        self.sums.across += float(self._loops[6, first:last].sum())
-        self.sums.steered += float(self._loops[7, first:last].sum())
+        self.sums.steered += float(self._loops[3, first:last].sum())
 
     def _settle(self) -> None:
         """Sum all pending symbols that have their neighbours, window by window."""
@@ -475,65 +486,66 @@ class EyeMeter:
             self._pending = rest
 
     def _sum(self, first: int, count: int) -> None:
-        sums, rails = self.sums, self._scheme.rails
+        sums, rails, levels = self.sums, self._scheme.rails, self._scheme.levels
         last = first + count
         self._add_loops(first, last)
-        lagged = np.empty((rails * LAGS + 1, count), np.float32)
-        for rail in range(rails):
-            for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
-                lagged[rail * LAGS + i] = self._decided[rail, first - lag : last - lag]
-        lagged[-1] = 1.0
-        gram = np.zeros_like(sums.gram)
-        gram[-1] = lagged @ lagged[-1]
-        gram[:-1, -1] = gram[-1, :-1]
-        for i in range(rails):
-            for j in range(i, rails):
-                block = np.zeros((LAGS, LAGS))
-                kernel.add_gram(self._decided[i], self._decided[j], first, last, EARLIEST, LAGS, i == j, block)
-                gram[i * LAGS : (i + 1) * LAGS, j * LAGS : (j + 1) * LAGS] = block
-                if i != j:
-                    gram[j * LAGS : (j + 1) * LAGS, i * LAGS : (i + 1) * LAGS] = block.T
+        gram, cross = self._normal_equations(first, last)
         sums.gram += gram
-        together = np.concatenate([self._waves[rail][:, first:last] for rail in range(rails)])
-        cross = (lagged @ together.T).reshape(-1, rails, self._phases)
+        sums.cross += cross
         self._residual.push(
-            sums.residual, gram, cross, lagged, together.reshape(rails, self._phases, count)[:, 0],
-            self._classes[:rails], first,
+            sums.residual, gram, cross, lambda: self._regressors(first, last),
+            np.stack([wave[0, first:last] for wave in self._waves]), self._classes[:rails], first,
         )  # fmt: skip
-        levels, rows = self._scheme.levels, sums.rows
-        height = np.int32(rows.count)
-        runs = self._drawn_runs(count)
-        for rail in range(rails):
-            wave = self._waves[rail]
-            part = together[rail * self._phases : (rail + 1) * self._phases]
-            sums.cross[rail] += cross[:, rail]
-            sums.square[rail] += np.einsum("pk,pk->p", part, part)
-            classes = self._classes[rail]
-            here = classes[first:last].astype(np.int32)
-            after = classes[first + 1 : last + 1].astype(np.int32)
-            if sums.pair:
-                base_left, base_right = (here * np.int32(levels) + after) * height, after
-            else:
-                base_left, base_right = here * height, after * height
+        pieces = self._drawn_pieces(first, count)
+        rows = sums.rows
+        for rail, (wave, classes) in enumerate(zip(self._waves, self._classes, strict=False)):
             left = sums.left[rail].reshape(COLUMNS, -1)
             right = left if sums.right is None else sums.right[rail].reshape(COLUMNS, -1)
-            for start, size in runs:
-                run = slice(start, start + size)
-                kernel.fill(
-                    wave, first + start, size, self._expand, base_left[run], base_right[run], not sums.pair,
-                    rows.count, rows.scale, rows.zero, left, right,
-                )  # fmt: skip
-                kernel.crossings(
-                    wave, first + start, size, classes, self._around, levels, 0.5,
-                    sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
-                )  # fmt: skip
-            kernel.add_levels(part[0], classes[first:last], sums.level_sums[rail])
+            kernel.fill(
+                wave, pieces, classes, levels, sums.pair, self._expand, rows.count, rows.scale, rows.zero, left, right
+            )
+            kernel.crossings(
+                wave, pieces, classes, self._around, levels, 0.5,
+                sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
+            )  # fmt: skip
+            kernel.add_levels(wave[0, first:last], classes[first:last], sums.level_sums[rail])
         self._keep_stretches(first, last)
-        sums.drawn += sum(size for _, size in runs)
+        sums.drawn += int(pieces[:, 1].sum())
         sums.symbols += count
         self._count += count
         if self._until_apart() <= 0:
             sums.set_apart()
+
+    def _normal_equations(self, first: int, last: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """The pattern response's, of the pending symbols ``first .. last``; the wave's own energy goes into the sums."""
+        rails = self._scheme.rails
+        gram, cross = np.zeros_like(self.sums.gram), np.zeros_like(self.sums.cross)
+        gram[-1, -1] = last - first
+        for i in range(rails):
+            one = slice(i * LAGS, (i + 1) * LAGS)
+            kernel.add_lagged(self._decided[i], first, last, EARLIEST, gram[-1, one])
+            gram[one, -1] = gram[-1, one]
+            for j in range(i, rails):
+                other = slice(j * LAGS, (j + 1) * LAGS)
+                kernel.add_gram(
+                    self._decided[i], self._decided[j], first, last, EARLIEST, LAGS, i == j, gram[one, other]
+                )
+                if i != j:
+                    gram[other, one] = gram[one, other].T
+            for j, wave in enumerate(self._waves):
+                kernel.add_cross(wave, self._decided[i], first, last, EARLIEST, LAGS, cross[j, one])
+            kernel.add_means(self._waves[i], first, last, cross[i, -1], self.sums.square[i])
+        return gram, cross
+
+    def _regressors(self, first: int, last: int) -> NDArray[np.float32]:
+        """Decided levels at all lags and a constant, ``(k, n)``, of the pending symbols ``first .. last``."""
+        rails = self._scheme.rails
+        lagged = np.empty((rails * LAGS + 1, last - first), np.float32)
+        for rail in range(rails):
+            for i, lag in enumerate(range(EARLIEST, LATEST + 1)):
+                lagged[rail * LAGS + i] = self._decided[rail, first - lag : last - lag]
+        lagged[-1] = 1.0
+        return lagged
 
     def _until_apart(self) -> int:
         """Symbols until the next stretch of the open window is kept apart.
@@ -555,13 +567,12 @@ class EyeMeter:
                 self.sums.stretches.offer(Stretch(waves, self._decided[: self._scheme.rails, place].copy()))
             self._stretches += 1
 
-    def _drawn_runs(self, count: int) -> list[tuple[int, int]]:
-        """Start and length of the stretches to draw among the next ``count`` symbols: one of ``every`` runs of `RUN` symbols."""
+    def _drawn_pieces(self, first: int, count: int) -> NDArray[np.int64]:
+        """First symbol and length of what is drawn of the next ``count``: one of ``every`` runs of `RUN` symbols."""
         if self.every == 1:
-            return [(0, count)]
-        runs = []
-        for run in range(self._count // RUN, (self._count + count - 1) // RUN + 1):
-            if run % self.every == 0:
-                start = max(run * RUN - self._count, 0)
-                runs.append((start, min((run + 1) * RUN - self._count, count) - start))
-        return runs
+            starts = np.arange(0, count, 2 * RUN)
+            return np.stack((first + starts, np.minimum(2 * RUN, count - starts)), axis=1)
+        runs = np.arange(self._count // RUN, (self._count + count - 1) // RUN + 1)
+        runs = runs[runs % self.every == 0]
+        starts = np.maximum(runs * RUN - self._count, 0)
+        return np.stack((first + starts, np.minimum((runs + 1) * RUN - self._count, count) - starts), axis=1)

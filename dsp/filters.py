@@ -123,16 +123,6 @@ class Oscillator:
             return rails
         x_i, x_q = rails
         out_i, out_q = np.empty(x_i.size, np.float32), np.empty(x_i.size, np.float32)
-        at = 0
-        while at < x_i.size:
-            # runs begin at fixed stream positions, so that rounding does not depend on the cuts
-            offset = self._position % self._RUN
-            n = min(self._RUN - offset, x_i.size - at)
-            cycles = math.fmod(self._frequency * (self._position - offset), 1.0)
-            first = np.complex64(complex(math.cos(2 * math.pi * cycles), -math.sin(2 * math.pi * cycles)))
-            part = slice(at, at + n)
-            turns = self._turns[offset : offset + n]
-            kernel.turn(x_i[part], x_q[part], first, turns, out_i[part], out_q[part])
-            self._position += n
-            at += n
+        kernel.turn(x_i, x_q, self._frequency, self._position, self._turns, out_i, out_q)
+        self._position += x_i.size
         return out_i, out_q

@@ -5,6 +5,7 @@ import math
 import numpy as np
 from numpy.typing import NDArray
 
+from dsp._kernels import raster as kernel
 from dsp.eye import COLUMNS, Rows
 from dsp.mixture import Spread
 
@@ -17,20 +18,11 @@ def quantile(histogram: NDArray[np.int64], *shares: float) -> tuple[NDArray[np.f
     Linear within its row; in a row that alone holds many times the tail, at the row's middle: nothing is known of where in
     it so narrow a level stands.
     """
-    cumulative = np.cumsum(histogram, axis=-1)
-    return tuple(_quantile(histogram, cumulative, share) for share in shares)
-
-
-def _quantile(histogram: NDArray[np.int64], cumulative: NDArray[np.int64], share: float) -> NDArray[np.float64]:
-    counts = cumulative[..., -1]
-    wanted = share * counts
-    index = np.minimum(np.sum(cumulative < wanted[..., None], axis=-1), histogram.shape[-1] - 1)
-    here = np.take_along_axis(histogram, index[..., None], axis=-1)[..., 0]
-    below = np.take_along_axis(cumulative, index[..., None], axis=-1)[..., 0] - here
-    part = np.clip((wanted - below) / np.maximum(here, 1), 0.0, 1.0)
-    tail = np.maximum(min(share, 1.0 - share) * counts, 1.0)
-    narrow = np.clip((here / tail - 2.0) / 8.0, 0.0, 1.0)
-    return np.where(counts > 0, index + part + (0.5 - part) * narrow, np.nan)
+    *shape, rows = histogram.shape
+    flat = np.ascontiguousarray(histogram, np.int64).reshape(-1, rows)
+    places = np.empty((len(shares), flat.shape[0]))
+    kernel.quantiles(flat, np.asarray(shares, np.float64), places)
+    return tuple(places.reshape(-1, *shape))
 
 
 def opening_curves(

@@ -5,6 +5,7 @@ Slopes are per UI, values in level units.
 """
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
@@ -120,21 +121,22 @@ class ResidualMeter:
         self,
         sums: ResidualSums,
         gram: NDArray[np.float64],
-        cross: NDArray[np.float32],
-        lagged: NDArray[np.float32],
+        cross: NDArray[np.float64],
+        regressors: Callable[[], NDArray[np.float32]],
         values: NDArray[np.float32],
         classes: NDArray[np.int8],
         first: int,
     ) -> None:
         """Take a slab.
 
-        ``gram`` ``(k, k)`` and ``cross`` ``(k, rails, phases)`` are its normal equations, ``lagged`` ``(k, n)`` its regressors, ``values``
-        ``(rails, n)`` the wave at the decision instants, ``classes`` ``(rails, m)`` the levels decided, of which ``first`` is the slab's.
+        ``gram`` ``(k, k)`` and ``cross`` ``(rails, k, phases)`` are its normal equations, ``regressors`` makes its regressors ``(k, n)``;
+        ``values`` ``(rails, n)`` is the wave at the decision instants, ``classes`` ``(rails, m)`` the levels decided, of which ``first``
+        is the slab's.
         """
-        count = lagged.shape[1]
+        count = values.shape[1]
         keep = min(_MEMORY / max(self._known, 1.0), 1.0)
         self._gram = keep * self._gram + gram
-        self._cross = keep * self._cross + np.moveaxis(cross[:, :, self._wanted], 0, 1)
+        self._cross = keep * self._cross + cross[:, :, self._wanted]
         self._known = keep * self._known + count
         self._since += count
         skipped = self._thrifty and self._seen >= _EAGER and self._seen // _STRETCH % _OFTEN != 0
@@ -147,7 +149,7 @@ class ResidualMeter:
             self._fit()
         assert self._rows is not None
         rails = self._scheme.rails
-        waves = self._rows @ lagged
+        waves = self._rows @ regressors()
         parts = waves.reshape(rails, -1, count)
         errors = values - parts[:, 0]
         late, early = parts[:, 1], parts[:, 2]

@@ -291,10 +291,12 @@ def class_raster(size: int) -> Callable[[], Any]:
 
     count = size // 64
     wave = np.random.default_rng(3).uniform(-1.2, 1.2, (8, count + 16)).astype(np.float32)
-    bases = np.random.default_rng(4).integers(0, 4, count).astype(np.int32) * np.int32(1024)
+    classes = np.random.default_rng(4).integers(0, 2, count + 16).astype(np.int8)
+    starts = np.arange(0, count, 512)
+    pieces = np.stack((8 + starts, np.minimum(512, count - starts)), axis=1)
     counts = np.zeros((64, 4 * 1024), np.uint32)
     weigh = expander(8, 0.2)
-    return lambda: fill(wave, 8, count, weigh, bases, bases, False, 1024, 200.0, 512.0, counts, counts)
+    return lambda: fill(wave, pieces, classes, 2, True, weigh, 1024, 200.0, 512.0, counts, counts)
 
 
 def loops(size: int) -> Callable[[], Any]:

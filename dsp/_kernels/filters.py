@@ -3,6 +3,8 @@
 Slices rather than offsets in the inner loops: they spare the compiler its test for negative indices, and it vectorises.
 """
 
+import math
+
 from numba import njit, types
 
 _F32 = types.Array(types.float32, 1, "C", readonly=True)
@@ -58,15 +60,28 @@ def fir_decimate(samples, taps, factor, out):
         out[i] = total
 
 
-@njit(types.void(_F32, _F32, types.complex64, _C64, _OUT, _OUT), nogil=True, cache=True, fastmath={"contract", "nsz"})
-def turn(x_i, x_q, first, turns, out_i, out_q):
-    """``out = (x_i + j x_q) first turns[i]``; ``turns`` has at least as many entries."""
-    for i in range(x_i.size):
-        t = turns[i]
-        cr = first.real * t.real - first.imag * t.imag
-        ci = first.real * t.imag + first.imag * t.real
-        out_i[i] = x_i[i] * cr - x_q[i] * ci
-        out_q[i] = x_i[i] * ci + x_q[i] * cr
+@njit(types.void(_F32, _F32, types.float64, types.int64, _C64, _OUT, _OUT), nogil=True, cache=True,
+      fastmath={"contract", "nsz"})  # fmt: skip
+def turn(x_i, x_q, frequency, position, turns, out_i, out_q):
+    """``out = (x_i + j x_q) exp(-2 pi j frequency (position + i))``; ``turns`` holds the first such factors.
+
+    Runs begin at whole multiples of ``turns.size``, so that rounding does not depend on where a stream is cut.
+    """
+    at = 0
+    while at < x_i.size:
+        offset = (position + at) % turns.size
+        n = min(turns.size - offset, x_i.size - at)
+        cycles = (frequency * (position + at - offset)) % 1.0
+        first_i = types.float32(math.cos(2 * math.pi * cycles))
+        first_q = types.float32(-math.sin(2 * math.pi * cycles))
+        near = turns[offset : offset + n]
+        from_i, from_q, to_i, to_q = x_i[at : at + n], x_q[at : at + n], out_i[at : at + n], out_q[at : at + n]
+        for i in range(n):
+            c = first_i * near[i].real - first_q * near[i].imag
+            s = first_i * near[i].imag + first_q * near[i].real
+            to_i[i] = from_i[i] * c - from_q[i] * s
+            to_q[i] = from_i[i] * s + from_q[i] * c
+        at += n
 
 
 @njit(types.void(_C64, _OUT, _OUT), nogil=True, cache=True)

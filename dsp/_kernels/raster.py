@@ -15,12 +15,14 @@ _F32 = types.Array(types.float32, 1, "C", readonly=True)
 _F32_2 = types.Array(types.float32, 2, "C", readonly=True)
 _F64 = types.Array(types.float64, 1, "C", readonly=True)
 _I32 = types.Array(types.int32, 1, "C", readonly=True)
+_PIECES = types.Array(types.int64, 2, "C", readonly=True)
 _I8 = types.Array(types.int8, 1, "C", readonly=True)
 _OUT2 = types.float32[:, ::1]
 _FAST = {"contract", "nsz", "reassoc"}
 _FINITE = {"contract", "nsz", "reassoc", "nnan", "ninf"}  # samples are finite: sources see to it
-_TILE = 512
+_TILE = 512  # symbols of a piece
 _NEAR = 256
+_NEARER = 1024
 _SLAB = 4096
 _COSINE = tuple(np.float32((-1) ** i * (2 * math.pi) ** (2 * i) / math.factorial(2 * i)) for i in range(7))
 _SINE = tuple(np.float32((-1) ** i * (2 * math.pi) ** (2 * i + 1) / math.factorial(2 * i + 1)) for i in range(6))
@@ -151,41 +153,54 @@ def _count(places, n, counts):
         counts[types.uint64(places[n - 1])] += types.uint32(1)
 
 
-@njit(types.void(_F32_2, types.int64, types.int64, _F32_2, _I32, _I32, types.boolean, types.int64, types.float32,
+@njit(types.void(_F32_2, _PIECES, _I8, types.int64, types.boolean, _F32_2, types.int64, types.float32,
                  types.float32, types.uint32[:, ::1], types.uint32[:, ::1]),
       nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
-def fill(wave, first, count, expand, base_left, base_right, both, n_rows, row_scale, row_zero, left, right):
-    """Count the traces of symbols ``first .. first + count`` of ``wave`` column by column.
+def fill(wave, pieces, classes, n_levels, pairs, expand, n_rows, row_scale, row_zero, left, right):
+    """Count the traces from each symbol of the ``pieces`` (first symbol, how many: at most 512) to the next, column by column.
 
-    Between two phases of the wave ``expand`` puts its points. ``left[column, base_left[k] + row]`` counts the trace from
-    symbol k to k + 1; if ``both``, ``right[column, base_right[k] + row]`` does too.
+    Between two phases of the wave ``expand`` puts its points. ``classes`` is aligned with the columns of ``wave``.
+    ``left[column, class * n_rows + row]`` counts traces by the pair of classes that they join where ``pairs``, else by the class
+    that they leave; then ``right`` counts them by the one they come to.
     """
     n_phases = wave.shape[0]
     factor = expand.shape[0]
     # a column's counters stay near while a whole slab is counted into them
-    places, others = np.empty((factor, _SLAB), np.uint16), np.empty((factor if both else 0, _SLAB), np.uint16)
+    places, others = np.empty((factor, _SLAB), np.uint16), np.empty((0 if pairs else factor, _SLAB), np.uint16)
+    base_left, base_right = np.empty(_SLAB, np.int32), np.empty(_SLAB, np.int32)
     top = types.float32(n_rows) - types.float32(0.5)
     nought = types.float32(0.0)
-    for slab in range(0, count, _SLAB):
-        whole = min(_SLAB, count - slab)
+    rows, levels = types.int32(n_rows), types.int32(n_levels)
+    done = 0
+    while done < pieces.shape[0]:
+        last, whole = done, 0
+        while last < pieces.shape[0] and whole + pieces[last, 1] <= _SLAB:
+            first, n = pieces[last]
+            here, after = classes[first : first + n], classes[first + 1 : first + 1 + n]
+            bl, br = base_left[whole : whole + n], base_right[whole : whole + n]
+            for k in range(n):
+                bl[k] = (here[k] * levels + after[k]) * rows if pairs else here[k] * rows
+                br[k] = after[k] * rows
+            whole += n
+            last += 1
         for q in range(n_phases):
-            for tile in range(slab, slab + whole, _TILE):
-                n = min(_TILE, slab + whole - tile)
-                at = first + tile
+            to_first = 0
+            for piece in range(done, last):
+                at, n = pieces[piece]
                 x0 = wave[(q - 2) % n_phases, at + (q - 2) // n_phases : at + (q - 2) // n_phases + n]
                 x1 = wave[(q - 1) % n_phases, at + (q - 1) // n_phases : at + (q - 1) // n_phases + n]
                 x2 = wave[q, at : at + n]
                 x3 = wave[(q + 1) % n_phases, at + (q + 1) // n_phases : at + (q + 1) // n_phases + n]
                 x4 = wave[(q + 2) % n_phases, at + (q + 2) // n_phases : at + (q + 2) // n_phases + n]
                 x5 = wave[(q + 3) % n_phases, at + (q + 3) // n_phases : at + (q + 3) // n_phases + n]
-                bl, br = base_left[tile : tile + n], base_right[tile : tile + n]
+                bl, br = base_left[to_first : to_first + n], base_right[to_first : to_first + n]
                 for s in range(factor):
                     w = expand[s]
                     w0, w1, w2 = w[0] * row_scale, w[1] * row_scale, w[2] * row_scale
                     w3, w4, w5 = w[3] * row_scale, w[4] * row_scale, w[5] * row_scale
-                    to = places[s, tile - slab : tile - slab + n]
-                    if both:
-                        too = others[s, tile - slab : tile - slab + n]
+                    to = places[s, to_first : to_first + n]
+                    if not pairs:
+                        too = others[s, to_first : to_first + n]
                         for k in range(n):
                             v = (
                                 row_zero
@@ -207,10 +222,12 @@ def fill(wave, first, count, expand, base_left, base_right, both, n_rows, row_sc
                                 + (w3 * x3[k] + w4 * x4[k] + w5 * x5[k])
                             )
                             to[k] = types.uint16(types.int32(min(max(v, nought), top)) + bl[k])
+                to_first += n
             for s in range(factor):
                 _count(places[s], whole, left[q * factor + s])
-                if both:
+                if not pairs:
                     _count(others[s], whole, right[q * factor + s])
+        done = last
 
 
 @njit(nogil=True, cache=True, inline="always", fastmath=_FAST)
@@ -234,13 +251,13 @@ def _crossing(wave, k, p, n_phases):
     return (p + u) / n_phases
 
 
-@njit(types.int64(_F32_2, types.int64, types.int64, _I8, _I32, types.int64, types.float64, types.int64[::1],
+@njit(types.int64(_F32_2, _PIECES, _I8, _I32, types.int64, types.float64, types.int64[::1],
                   types.float64[:, ::1], types.float64[:, ::1]),
       nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
-def crossings(wave, first, count, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
+def crossings(wave, pieces, classes, around, n_levels, origin, bins, groups, edges):  # fmt: skip
     """Times at which traces between mirror-image levels cross 0, in UI from the left symbol; return how many.
 
-    Looks at the symbols ``first .. first + count``. ``wave`` has a power of two of phases, at least 4.
+    Looks at the symbols of the ``pieces`` (first symbol, how many: at most 512). ``wave`` has at least 4 phases.
     ``classes`` is aligned with the columns of ``wave``. ``bins`` counts times over one UI; ``groups[g]`` = count, sum, sum of squares
     (about ``origin``) for the pattern of classes at the offsets ``around``; ``edges[rising]`` = count, sum.
     """
@@ -255,8 +272,8 @@ def crossings(wave, first, count, classes, around, n_levels, origin, bins, group
     nought, one, two, three = types.float32(0.0), types.float32(1.0), types.float32(2.0), types.float32(3.0)
     half, third, sixth = types.float32(0.5), types.float32(1 / 3), types.float32(1 / 6)
     n_rises, rises, n_falls, falls = 0, 0.0, 0, 0.0
-    for tile in range(first, first + count, _TILE):
-        n = min(_TILE, first + count - tile)
+    for piece in range(pieces.shape[0]):
+        tile, n = pieces[piece]
         low, high = lowest[:n], highest[:n]
         low[:] = n_phases
         high[:] = -1
@@ -355,6 +372,74 @@ def add_gram(a, b, first, last, earliest, n_lags, same, gram):
             value += a[first - 1 - lag_i] * b[first - 1 - lag_j] - a[last - 1 - lag_i] * b[last - 1 - lag_j]
 
 
+@njit(types.void(_F32_2, _F32, types.int64, types.int64, types.int64, types.int64, types.float64[:, :]),
+      nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
+def add_cross(wave, levels, first, last, earliest, n_lags, cross):
+    """``cross[i, p] += sum over k in first .. last of levels[k - lag i] wave[p, k]``; ``levels`` has all lags beyond either end.
+
+    A multiple of 3 lags and of 4 phases: so many sums at once need fewest reads.
+    """
+    for tile in range(first, last, _NEARER):
+        n = min(_NEARER, last - tile)
+        for p in range(0, wave.shape[0], 4):
+            w0, w1 = wave[p, tile : tile + n], wave[p + 1, tile : tile + n]
+            w2, w3 = wave[p + 2, tile : tile + n], wave[p + 3, tile : tile + n]
+            for i in range(0, n_lags, 3):
+                at = tile - earliest - i
+                a, b, c = levels[at : at + n], levels[at - 1 : at - 1 + n], levels[at - 2 : at - 2 + n]
+                a0 = a1 = a2 = a3 = b0 = b1 = b2 = b3 = c0 = c1 = c2 = c3 = types.float32(0.0)
+                for k in range(n):
+                    a0 += a[k] * w0[k]
+                    a1 += a[k] * w1[k]
+                    a2 += a[k] * w2[k]
+                    a3 += a[k] * w3[k]
+                    b0 += b[k] * w0[k]
+                    b1 += b[k] * w1[k]
+                    b2 += b[k] * w2[k]
+                    b3 += b[k] * w3[k]
+                    c0 += c[k] * w0[k]
+                    c1 += c[k] * w1[k]
+                    c2 += c[k] * w2[k]
+                    c3 += c[k] * w3[k]
+                for row, (s0, s1, s2, s3) in (
+                    (i, (a0, a1, a2, a3)),
+                    (i + 1, (b0, b1, b2, b3)),
+                    (i + 2, (c0, c1, c2, c3)),
+                ):
+                    cross[row, p] += s0
+                    cross[row, p + 1] += s1
+                    cross[row, p + 2] += s2
+                    cross[row, p + 3] += s3
+
+
+@njit(types.void(_F32_2, types.int64, types.int64, types.float64[:], types.float64[:]),
+      nogil=True, cache=True, fastmath=_FINITE)  # fmt: skip
+def add_means(wave, first, last, sums, squares):
+    """Sum and sum of squares of each phase over the symbols from ``first`` to before ``last``."""
+    for tile in range(first, last, _NEARER):
+        n = min(_NEARER, last - tile)
+        for p in range(wave.shape[0]):
+            w = wave[p, tile : tile + n]
+            total = square = types.float32(0.0)
+            for k in range(n):
+                total += w[k]
+                square += w[k] * w[k]
+            sums[p] += total
+            squares[p] += square
+
+
+@njit(types.void(_F32, types.int64, types.int64, types.int64, types.float64[:]), nogil=True, cache=True, fastmath=_FAST)
+def add_lagged(levels, first, last, earliest, sums):
+    """``sums[i] += sum over k in first .. last of levels[k - lag i]``: the first in full, each later one a symbol on."""
+    begin, end = first - earliest, last - earliest
+    total = 0.0
+    for value in levels[begin:end]:
+        total += value
+    for i in range(sums.size):
+        sums[i] += total
+        total += types.float64(levels[begin - 1 - i]) - levels[end - 1 - i]
+
+
 @njit(types.void(_F32, _I8, types.float64[:, ::1]), nogil=True, cache=True)
 def add_levels(values, classes, sums):
     """Count, sum and sum of squares of ``values`` by class into ``sums[class]``."""
@@ -364,3 +449,29 @@ def add_levels(values, classes, sums):
         row[0] += 1.0
         row[1] += value
         row[2] += value * value
+
+
+@njit(types.void(types.Array(types.int64, 2, "C", readonly=True), _F64, types.float64[:, ::1]), nogil=True, cache=True)
+def quantiles(histograms, shares, places):
+    """Row positions below which each of ``shares`` of the counts lies, ``(shares, n)``, of ``histograms`` ``(n, rows)``."""
+    n_rows = histograms.shape[1]
+    for h in range(histograms.shape[0]):
+        counts = histograms[h]
+        total = 0
+        for row in range(n_rows):
+            total += counts[row]
+        for s in range(shares.size):
+            if total == 0:
+                places[s, h] = np.nan
+                continue
+            wanted = shares[s] * total
+            row = 0
+            below = 0
+            while row < n_rows - 1 and below + counts[row] < wanted:
+                below += counts[row]
+                row += 1
+            here = counts[row]
+            part = min(max((wanted - below) / max(here, 1), 0.0), 1.0)
+            tail = max(min(shares[s], 1.0 - shares[s]) * total, 1.0)
+            narrow = min(max((here / tail - 2.0) / 8.0, 0.0), 1.0)
+            places[s, h] = row + part + (0.5 - part) * narrow

@@ -50,14 +50,14 @@ def test_fir_decimate_keeps_every_nth_output(factor, n_taps):
     np.testing.assert_allclose(out, expected, atol=10 * n_taps * EPS)
 
 
-def test_turn_multiplies_by_the_first_factor_and_by_each_turn():
-    rng = np.random.default_rng(7)
+@pytest.mark.parametrize("frequency", [0.0123, -0.31])
+def test_turn_takes_a_frequency_out_at_each_sample_s_place_in_the_stream(frequency):
     x_i, x_q = noise(8, 300), noise(9, 300)
-    turns = np.exp(1j * rng.uniform(0, 2 * np.pi, 400)).astype(np.complex64)
-    first = np.complex64(np.exp(0.7j))
+    turns = np.exp(-2j * np.pi * frequency * np.arange(128)).astype(np.complex64)
     out_i, out_q = np.empty(300, np.float32), np.empty(300, np.float32)
-    kernel.turn(x_i, x_q, first, turns, out_i, out_q)
-    expected = (x_i + 1j * x_q).astype(np.complex128) * first * turns[:300]
+    position = 1_000_003
+    kernel.turn(x_i, x_q, frequency, position, turns, out_i, out_q)
+    expected = (x_i + 1j * x_q).astype(np.complex128) * np.exp(-2j * np.pi * frequency * (position + np.arange(300)))
     np.testing.assert_allclose(out_i + 1j * out_q, expected, atol=20 * EPS)
 
 

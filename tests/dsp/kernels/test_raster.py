@@ -81,6 +81,11 @@ def test_resample_eight_puts_eight_even_points_into_each_symbol(turned, count, s
 # -- the class raster ---------------------------------------------------------------------------------------------------
 
 
+def pieces(first, count):
+    starts = np.arange(0, count, 512)
+    return np.stack((first + starts, np.minimum(512, count - starts)), axis=1)
+
+
 def expected_positions(wave, first, count, expand):
     """Row position of every point, shape (columns, count), by explicit sums in float64."""
     n_phases, factor = wave.shape[0], expand.shape[0]
@@ -95,29 +100,27 @@ def expected_positions(wave, first, count, expand):
 
 
 @pytest.mark.parametrize(("n_phases", "factor"), [(8, 8), (64, 1)])
-@pytest.mark.parametrize("both", [False, True])
-def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, factor, both):
+@pytest.mark.parametrize("pairs", [False, True])
+def test_fill_is_the_two_dimensional_histogram_of_the_drawn_traces(n_phases, factor, pairs):
     first, count, classes = 5, 5301, 4  # more than two tiles, more than a slab
     rng = np.random.default_rng(n_phases)
     wave = rng.uniform(-1.6, 1.6, (n_phases, first + count + 5)).astype(np.float32)
     wave[0, 40], wave[0, 43] = 50.0, -50.0  # beyond either end of the raster
     expand = expander(factor, 0.19)
-    label = rng.integers(0, classes, count).astype(np.int32)
-    other = rng.integers(0, classes, count).astype(np.int32)
-    left = np.zeros((n_phases * factor, classes * ROWS), np.uint32)
+    symbols = rng.integers(0, classes, wave.shape[1]).astype(np.int8)
+    label, other = symbols[first : first + count], symbols[first + 1 : first + 1 + count]
+    label = label.astype(int) * classes + other if pairs else label
+    left = np.zeros((n_phases * factor, classes * (classes if pairs else 1) * ROWS), np.uint32)
     right = np.zeros_like(left)
-    kernel.fill(
-        wave, first, count, expand, label * np.int32(ROWS), other * np.int32(ROWS), both,
-        ROWS, SCALE, ZERO, left, right,
-    )  # fmt: skip
+    kernel.fill(wave, pieces(first, count), symbols, classes, pairs, expand, ROWS, SCALE, ZERO, left, right)
     position = np.clip(expected_positions(wave, first, count, expand), 0.25, ROWS - 0.75)
     # float32 sums may fall on the other side of a row's edge only within this distance of it
     clear = np.abs(position - np.round(position)) > 2e-3
     assert clear.mean() > 0.99
     column = np.broadcast_to(np.arange(position.shape[0])[:, None], position.shape)
-    edges = (np.arange(position.shape[0] + 1) - 0.5, np.arange(classes * ROWS + 1))
+    edges = (np.arange(position.shape[0] + 1) - 0.5, np.arange(left.shape[1] + 1))
     for counts, kind in ((left, label), (right, other)):
-        if counts is right and not both:
+        if counts is right and pairs:
             assert not right.any()
             continue
         flat = position + kind.astype(float) * ROWS
@@ -143,7 +146,7 @@ def test_crossings_are_those_that_a_root_finder_sees():
     classes = (wave[0] > 0).astype(np.int8)
     around = np.array([-2, -1, 2], np.int32)
     bins, groups, edges = np.zeros(500, np.int64), np.zeros((8, 3)), np.zeros((2, 2))
-    found = kernel.crossings(wave, first, count, classes, around, 2, 0.5, bins, groups, edges)
+    found = kernel.crossings(wave, pieces(first, count), classes, around, 2, 0.5, bins, groups, edges)
     times, group, rising, several = [], [], [], 0
     for k in range(first, first + count):
         if classes[k] == classes[k + 1]:
@@ -176,7 +179,7 @@ def test_crossings_of_several_levels_are_those_between_mirror_images():
         wave[:, k] = levels[k] + (levels[k + 1] - levels[k]) * np.arange(8) / 8
     wave[:, 11] = levels[11]
     bins, groups, edges = np.zeros(64, np.int64), np.zeros((4, 3)), np.zeros((2, 2))
-    found = kernel.crossings(wave, 1, 9, classes, np.array([0], np.int32), 4, 0.5, bins, groups, edges)
+    found = kernel.crossings(wave, pieces(1, 9), classes, np.array([0], np.int32), 4, 0.5, bins, groups, edges)
     # from symbol 1 on: 1-2 and 3-0 are mirror images: symbols 2 (1 to 2), 6 (3 to 0) and 9 (1 to 2)
     assert found == 3
     np.testing.assert_array_equal(groups[:, 0], [0, 2, 0, 1])
@@ -198,6 +201,36 @@ def test_add_gram_is_every_lagged_product(same):
     k = np.arange(first, last)
     design_a, design_b = a[k[:, None] - lags].astype(float), b[k[:, None] - lags].astype(float)
     np.testing.assert_array_equal(gram - 1, design_a.T @ design_b)  # whole numbers: exact
+
+
+def test_add_cross_and_its_companions_are_every_lagged_product():
+    rng = np.random.default_rng(6)
+    levels = rng.choice(np.array([-3, -1, 1, 3], np.float32), 2900)
+    wave = rng.standard_normal((8, 2900)).astype(np.float32)
+    first, last, earliest, n_lags = 40, 2871, -8, 21
+    k, lags = np.arange(first, last), np.arange(earliest, earliest + n_lags)
+    design, part = levels[k[:, None] - lags].astype(float), wave[:, k].astype(float)
+    cross = np.ones((n_lags, 8))
+    kernel.add_cross(wave, levels, first, last, earliest, n_lags, cross)
+    np.testing.assert_allclose(cross - 1, design.T @ part.T, atol=1e-2)
+    sums, squares = np.ones(8), np.ones(8)
+    kernel.add_means(wave, first, last, sums, squares)
+    np.testing.assert_allclose(sums - 1, part.sum(axis=1), atol=2e-3)
+    np.testing.assert_allclose(squares - 1, np.sum(part**2, axis=1), rtol=1e-5)
+    shifted = np.ones(n_lags)
+    kernel.add_lagged(levels, first, last, earliest, shifted)
+    np.testing.assert_array_equal(shifted - 1, design.sum(axis=0))
+
+
+def test_quantiles_are_where_the_cumulative_counts_reach_their_share():
+    counts = np.zeros((3, 64), np.int64)
+    counts[0, 10:60] = 100  # even: linear within a row
+    counts[1, 30] = 1000  # a single row: its middle
+    places = np.empty((3, 3))
+    kernel.quantiles(counts, np.array([0.04, 0.5, 0.96]), places)
+    np.testing.assert_allclose(places[:, 0], [12.0, 35.0, 58.0], atol=1e-9)
+    np.testing.assert_allclose(places[:, 1], [30.5, 30.5, 30.5], atol=1e-9)
+    assert np.isnan(places[:, 2]).all()
 
 
 def test_add_levels_counts_and_sums_each_class():
