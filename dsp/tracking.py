@@ -160,7 +160,7 @@ class Tracker:
         timing_bandwidth: float,
         carrier_bandwidth: float,
     ) -> None:
-        delay = kernel.AHEAD if start.detector in ("derivative", "crossing") else 0
+        delay = kernel.LATE if start.detector in ("derivative", "crossing") else 0
         timing = exact_gains(timing_bandwidth, delay)
         carrier = exact_gains(carrier_bandwidth)
         self._complex = scheme.kind == "carrier"

@@ -64,6 +64,21 @@ def _weigh(typing_context, samples, others, first, weights, row, out, outs, at):
     return types.void(samples, others, index, weights, index, out, outs, index), generate
 
 
+def _dot(typing_context, a, at, b, from_):
+    """Sum over m of eight ``a[at + m] * b[from_ + m]``, in any order; the arrays' entries counted as they lie in memory."""
+
+    def generate(context, builder, signature, args):
+        kinds = signature.args
+        left, right = (_load(builder, _start(context, builder, args[n], kinds[n], args[n + 1]), _ZERO) for n in (0, 2))
+        products = builder.fmul(left, right)
+        for step in (4, 2, 1):
+            shifted = builder.shuffle_vector(products, _UNSET, _mask(*((lane + step) % LANES for lane in range(LANES))))
+            products = builder.fadd(products, shifted)
+        return builder.extract_element(products, ir.Constant(ir.IntType(32), 0))
+
+    return types.float32(a, types.uint64, b, types.uint64), generate
+
+
 def _turn_over(typing_context, lines, wave, column):
     """``wave[p, column + m] = lines[8 m + p]`` for eight p and m; ``wave`` has eight rows."""
 
@@ -89,4 +104,5 @@ def _turn_over(typing_context, lines, wave, column):
 
 
 weigh: Any = intrinsic(_weigh)
+dot: Any = intrinsic(_dot)
 turn_over: Any = intrinsic(_turn_over)

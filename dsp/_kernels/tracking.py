@@ -5,7 +5,10 @@
 
 import math
 
+import numpy as np
 from numba import njit, types
+
+from dsp._kernels.lanes import dot
 
 # state
 INSTANT, RATE, PREVIOUS, PHASE, TURN, OLD_I, OLD_Q, MID_I, MID_Q, OLD_A_I, OLD_A_Q = range(11)
@@ -35,6 +38,9 @@ PAM, BPSK, QAM, PSK8 = 0.0, 1.0, 2.0, 3.0
 
 TEMPLATE = 16  # taps of the pattern-noise template, for symbols -8 .. +7 about the one in hand
 AHEAD = 8
+# symbols by which a detector that takes its pattern noise out answers late: the newest decision but one is the last it waits for,
+# so that no symbol waits for the one before
+LATE = AHEAD + 1
 
 _F32 = types.Array(types.float32, 1, "C", readonly=True)
 _TABLE = types.Array(types.float32, 2, "C", readonly=True)
@@ -47,13 +53,21 @@ _FAST = {"contract", "nsz", "reassoc", "arcp"}
 @njit(types.float32(_F32, types.float64, _TABLE), nogil=True, cache=True, fastmath=_FAST, inline="always")
 def _at(samples, instant, table):
     i = int(instant)
-    # unsigned: an index that may be negative costs a test each
     row = types.uint64((instant - i) * 512.0 + 0.5)
-    first = types.uint64(i - 3)
-    total = types.float32(0.0)
-    for m in range(types.uint64(8)):
-        total += table[row, m] * samples[first + m]
-    return total
+    return dot(samples, types.uint64(i - 3), table, types.uint64(8) * row)
+
+
+@njit(nogil=True, cache=True, inline="always", fastmath=_FAST)
+def _pattern(decided, k, older, late_tap, last_tap):
+    """What the `TEMPLATE` symbols before the ``k``-th put into the slope of the one `LATE` before it."""
+    first = k - types.uint64(TEMPLATE + 2)
+    eight = types.uint64(8)
+    total = dot(decided, first, older, types.uint64(0)) + dot(decided, first + eight, older, eight)
+    return (
+        total
+        + late_tap * decided[first + types.uint64(TEMPLATE)]
+        + last_tap * decided[first + types.uint64(TEMPLATE + 1)]
+    )
 
 
 @njit(nogil=True, cache=True, inline="always")
@@ -113,6 +127,14 @@ def track(
     bias = setup[TIMING_BIAS]
     sense = setup[SENSE] * sps
     slope = setup[SLOPE]
+    # a template that ends three symbols back: what has just been stored is slow to load with what stands before it
+    older = np.zeros(TEMPLATE, np.float32)
+    older[2:] = template[:-2]
+    late_tap, last_tap = template[TEMPLATE - 2], template[TEMPLATE - 1]
+    pair = n_levels == 2
+    low_i, high_i, low_q, high_q = means[0, 0], means[0, 1], means[1, 0], means[1, 1]
+    bottom, top = nominal[0], nominal[1]
+    sense_slope = 1.0 / slope
     # nor move a level by more than a neighbour's distance counts
     far_i, far_q = 2.0 * gain[0], 2.0 * gain[1]
     t, rate, t_old = state[INSTANT], state[RATE], state[PREVIOUS]
@@ -127,9 +149,13 @@ def track(
     carrier_scale = 1.0 / setup[ENERGY]
     last = x_i.size - 6.0 - 2.0 * sps - abs(offset)
     room = instants.size
+    decided_i, decided_q = decided[0], decided[1]
+    slopes_i, slopes_q = slopes[0], slopes[1]
+    values_i, values_q = values[0], values[1]
+    classes_i, classes_q = classes[0], classes[1]
     n = 0
     while t < last and n < room:
-        k = history + n
+        k = types.uint64(history + n)
         # the sample that is decided, turned upright
         where = t + offset
         y_i = _at(x_i, where, table)
@@ -148,21 +174,37 @@ def track(
         else:
             z_i = y_i
 
-        m_i = _slot(z_i, means[0], n_levels)
-        a_i = nominal[m_i]
         m_q = 0
         a_q = 0.0
-        if shape == QAM:
-            m_q = _slot(z_q, means[1], n_levels)
-            a_q = nominal[m_q]
-        elif shape == PSK8:
-            wide = abs(z_i * scale_i) > abs(z_q * scale_q)
-            m_i = (3 if wide else 2) if z_i > 0 else (0 if wide else 1)
-            m_q = (2 if wide else 3) if z_q > 0 else (1 if wide else 0)
-            a_i, a_q = nominal[m_i], nominal[m_q]
-        means[0, m_i] += level_step * min(max(z_i - means[0, m_i], -far_i), far_i)
-        if shape >= QAM:
-            means[1, m_q] += level_step * min(max(z_q - means[1, m_q], -far_q), far_q)
+        if pair:
+            # as below, with nothing to look up
+            up_i = z_i > 0.5 * (low_i + high_i)
+            m_i = 1 if up_i else 0
+            a_i = top if up_i else bottom
+            move = level_step * min(max(z_i - (high_i if up_i else low_i), -far_i), far_i)
+            high_i += move if up_i else 0.0
+            low_i += 0.0 if up_i else move
+            if shape == QAM:
+                up_q = z_q > 0.5 * (low_q + high_q)
+                m_q = 1 if up_q else 0
+                a_q = top if up_q else bottom
+                move = level_step * min(max(z_q - (high_q if up_q else low_q), -far_q), far_q)
+                high_q += move if up_q else 0.0
+                low_q += 0.0 if up_q else move
+        else:
+            m_i = _slot(z_i, means[0], n_levels)
+            a_i = nominal[m_i]
+            if shape == QAM:
+                m_q = _slot(z_q, means[1], n_levels)
+                a_q = nominal[m_q]
+            elif shape == PSK8:
+                wide = abs(z_i * scale_i) > abs(z_q * scale_q)
+                m_i = (3 if wide else 2) if z_i > 0 else (0 if wide else 1)
+                m_q = (2 if wide else 3) if z_q > 0 else (1 if wide else 0)
+                a_i, a_q = nominal[m_i], nominal[m_q]
+            means[0, m_i] += level_step * min(max(z_i - means[0, m_i], -far_i), far_i)
+            if shape >= QAM:
+                means[1, m_q] += level_step * min(max(z_q - means[1, m_q], -far_q), far_q)
 
         # timing error, late positive once the slope is taken out
         error = 0.0
@@ -211,15 +253,11 @@ def track(
             old_i, old_q = here_i, here_q
             a_old_i, a_old_q = a_i, a_q
         elif detector == CROSSING:
-            slopes[0, k] = (_at(x_i, t - sense, table) - zero[0]) * scale_i
-            decided[0, k] = a_i
+            slopes_i[k] = (_at(x_i, t - sense, table) - zero[0]) * scale_i
             # a transition's height where it crosses, less what its decided neighbours put there
-            centre = k - AHEAD
-            past = decided[0, k - TEMPLATE + 1 : k + 1]
-            total = types.float32(0.0)
-            for m in range(TEMPLATE):
-                total += template[m] * past[m]
-            error = (decided[0, centre] - decided[0, centre - 1]) * (slopes[0, centre] - total)
+            centre = k - types.uint64(LATE)
+            total = _pattern(decided_i, k, older, late_tap, last_tap)
+            error = (decided_i[centre] - decided_i[centre - types.uint64(1)]) * (slopes_i[centre] - total)
         else:
             d_i = _at(x_i, t, slope_table)
             if complex_in:
@@ -230,31 +268,21 @@ def track(
                     y_i = _at(x_i, t + stagger, slope_table)
                     y_q = _at(x_q, t + stagger, slope_table)
                     d_q = y_q * cos - y_i * sin
-            slopes[0, k] = d_i * scale_i * sps
-            slopes[1, k] = d_q * scale_q * sps
-            decided[0, k] = a_i
-            decided[1, k] = a_q
-            # pattern noise of the symbol AHEAD back: everything that its decided neighbours put into its slope
-            centre = k - AHEAD
-            past = decided[0, k - TEMPLATE + 1 : k + 1]
-            total = types.float32(0.0)
-            for m in range(TEMPLATE):
-                total += template[m] * past[m]
-            error = decided[0, centre] * (slopes[0, centre] - total)
+            slopes_i[k] = d_i * scale_i * sps
+            slopes_q[k] = d_q * scale_q * sps
+            # pattern noise of a symbol some time back: everything that its decided neighbours put into its slope
+            centre = k - types.uint64(LATE)
+            error = decided_i[centre] * (slopes_i[centre] - _pattern(decided_i, k, older, late_tap, last_tap))
             if shape >= QAM:
-                past = decided[1, k - TEMPLATE + 1 : k + 1]
-                total = types.float32(0.0)
-                for m in range(TEMPLATE):
-                    total += template[m] * past[m]
-                error += decided[1, centre] * (slopes[1, centre] - total)
+                error += decided_q[centre] * (slopes_q[centre] - _pattern(decided_q, k, older, late_tap, last_tap))
         # an impulse must not throw the clock: what a detector may say is bounded, in UI
-        error = min(max((error - bias) / slope, -2.0), 2.0)
-        decided[0, k] = a_i
-        decided[1, k] = a_q
-        values[0, k] = (z_i - zero[0]) * scale_i
-        values[1, k] = (z_q - zero[1]) * scale_q
-        classes[0, k] = m_i
-        classes[1, k] = m_q
+        error = min(max((error - bias) * sense_slope, -2.0), 2.0)
+        decided_i[k] = a_i
+        decided_q[k] = a_q
+        values_i[k] = (z_i - zero[0]) * scale_i
+        values_q[k] = (z_q - zero[1]) * scale_q
+        classes_i[k] = m_i
+        classes_q[k] = m_q
         instants[n] = t
         phases[n] = phase
 
@@ -276,6 +304,8 @@ def track(
                 cos, sin = cos * rot_c - sin * rot_s, sin * rot_c + cos * rot_s
             cos, sin = cos * dc - sin * ds, sin * dc + cos * ds
         n += 1
+    if pair:
+        means[0, 0], means[0, 1], means[1, 0], means[1, 1] = low_i, high_i, low_q, high_q
     state[INSTANT], state[RATE], state[PREVIOUS] = t, rate, t_old
     state[PHASE], state[TURN] = phase, freq
     state[OLD_I], state[OLD_Q] = old_i, old_q

@@ -8,7 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import signal
 
-from dsp._kernels.tracking import AHEAD
+from dsp._kernels.tracking import LATE as ANSWERS_LATE
 from dsp.acquisition import acquire
 from dsp.filters import Oscillator
 from dsp.frontend import FrontEnd, matched_filter, plan
@@ -58,7 +58,7 @@ def mean_output(sent, scheme, detector, late_ui, rolloff, scale=1.0):
     tracker = tracker_for(sent, scheme, start, rolloff)
     rails = tuple(rail * np.float32(scale) for rail in rails_of(sent.samples))
     count = tracker.push(rails).values.shape[1]
-    integral = exact_gains(0.005, AHEAD if detector == "derivative" else 0).integral / slope
+    integral = exact_gains(0.005, ANSWERS_LATE if detector == "derivative" else 0).integral / slope
     return -tracker.rate / (integral * count)
 
 
