@@ -124,7 +124,7 @@ class Chain:
         # 20 ms, so that a fast link is shown soon; longer for slow ones, where each call would cost more than its samples
         near = 2 ** min(max(round(math.log2(rate * 0.02)), min(math.floor(math.log2(rate * 0.1)), 12), 9), 15)
         # where nobody waits for a window, longer ones once the link is found: each call costs less of the whole
-        far = max(near, 2 ** min(math.floor(math.log2(rate * 0.1)), 16)) if self.options.keep_total else near
+        far = max(near, 2 ** min(math.floor(math.log2(rate * 0.1)), 15)) if self.options.keep_total else near
         self._chunks = near, far
         self._chunk = near
         self._buffer = np.empty(far, np.complex64 if complex_in else np.float32)

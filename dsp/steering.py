@@ -46,31 +46,38 @@ class Steering:
     def push(self, rails: Rails) -> Rails:
         """Turn the next samples."""
         out = self._oscillator.push(rails)
-        at = np.arange(self._position, self._position + out[0].size, dtype=np.float64)
-        self._position += out[0].size
-        if not self.active or not at.size:
+        size = out[0].size
+        self._position += size
+        if not self.active or not size:
             return out
+        at = np.arange(self._position - size, self._position, dtype=np.float64)
         turns = np.exp(-2j * np.pi * np.mod(self._along(at)[0], 1.0)).astype(np.complex64)
         out_i, out_q = np.empty_like(out[0]), np.empty_like(out[1])
-        kernel.turn(out[0], out[1], np.complex64(1.0), turns, out_i, out_q)
+        kernel.turn_each(out[0], out[1], turns, out_i, out_q)
         return out_i, out_q
 
     def follow(self, track: Track) -> Floats | None:
         """Take the loops' next phases; returns what of their turn the oscillator took, cycles a symbol, ``(n,)``; None: nothing."""
         n = track.values.shape[1]
-        places = (track.base + track.instants[:n]) / self._interpolate - self._delay
-        phases, turns = self._along(places) if self.active else (np.zeros(n), None)
-        k = np.arange(self._symbols, self._symbols + n)
-        chosen = k % _EVERY == 0
-        total = track.phases[:n] - self._rotation * k + phases
+        chosen = slice(-self._symbols % _EVERY, n, _EVERY)
+        k = np.arange(self._symbols, self._symbols + n)[chosen]
+        places, total = self._places_of(track, chosen), track.phases[:n][chosen] - self._rotation * k
+        turns = None
+        if self.active:
+            phases, turns = self._along(self._places_of(track, slice(n)))
+            total += phases[chosen]
         self._symbols += n
-        self._places = np.concatenate((self._places, places[chosen]))[-_LOOKED_AT:]
-        self._phases = np.concatenate((self._phases, total[chosen]))[-_LOOKED_AT:]
-        self._new += int(chosen.sum())
+        self._places = np.concatenate((self._places, places))[-_LOOKED_AT:]
+        self._phases = np.concatenate((self._phases, total))[-_LOOKED_AT:]
+        self._new += k.size
         if self._new >= PART // _EVERY:
             self._new = 0
             self._learn()
         return turns
+
+    def _places_of(self, track: Track, chosen: slice) -> Floats:
+        """Rail samples on which some of the symbols are centred."""
+        return np.asarray((track.base + track.instants[:-1][chosen]) / self._interpolate - self._delay)
 
     def _along(self, places: Floats) -> tuple[Floats, Floats]:
         """Phase (cycles) that the oscillator has run along by at rail samples, and its turn there, cycles a symbol."""

@@ -84,6 +84,15 @@ def turn(x_i, x_q, frequency, position, turns, out_i, out_q):
         at += n
 
 
+@njit(types.void(_F32, _F32, _C64, _OUT, _OUT), nogil=True, cache=True, fastmath={"contract", "nsz"})
+def turn_each(x_i, x_q, turns, out_i, out_q):
+    """``out = (x_i + j x_q) turns[i]``."""
+    for i in range(x_i.size):
+        t = turns[i]
+        out_i[i] = x_i[i] * t.real - x_q[i] * t.imag
+        out_q[i] = x_i[i] * t.imag + x_q[i] * t.real
+
+
 @njit(types.void(_C64, _OUT, _OUT), nogil=True, cache=True)
 def split(samples, out_i, out_q):
     """Split I/Q samples into rails."""

@@ -61,6 +61,14 @@ def test_turn_takes_a_frequency_out_at_each_sample_s_place_in_the_stream(frequen
     np.testing.assert_allclose(out_i + 1j * out_q, expected, atol=20 * EPS)
 
 
+def test_turn_each_multiplies_by_each_turn():
+    x_i, x_q = noise(8, 300), noise(9, 300)
+    turns = np.exp(1j * np.random.default_rng(7).uniform(0, 2 * np.pi, 300)).astype(np.complex64)
+    out_i, out_q = np.empty(300, np.float32), np.empty(300, np.float32)
+    kernel.turn_each(x_i, x_q, turns, out_i, out_q)
+    np.testing.assert_allclose(out_i + 1j * out_q, (x_i + 1j * x_q) * turns, atol=20 * EPS)
+
+
 def test_split_tells_i_from_q():
     samples = (noise(10, 50) + 1j * noise(11, 50)).astype(np.complex64)
     out_i, out_q = np.empty(50, np.float32), np.empty(50, np.float32)
