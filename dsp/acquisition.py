@@ -238,10 +238,16 @@ STANDS_OUT, STILL_STANDS_OUT = 0.03, 0.15
 
 def parabola_through(k: NDArray[np.float64], phases: NDArray[np.float64]) -> tuple[float, float, float]:
     """Drift of phases ``(n,)`` over ``k``: twice the parabola's bend, and the squares that a line and the parabola leave."""
-    middle = 0.5 * (k[0] + k[-1])
-    line, bent = (np.polyfit(k - middle, phases, degree) for degree in (1, 2))
-    by_line, by_parabola = (float(np.sum((phases - np.polyval(fit, k - middle)) ** 2)) for fit in (line, bent))
-    return 2.0 * float(bent[0]), by_line, by_parabola
+    half = 0.5 * float(k[-1] - k[0])
+    # each power less what the ones before it explain
+    x = (k - k.mean()) / half
+    square = x * x
+    square -= square.mean() + float(square @ x) / float(x @ x) * x
+    rest = phases - phases.mean()
+    rest -= float(rest @ x) / float(x @ x) * x
+    bend = float(rest @ square) / float(square @ square)
+    last = rest - bend * square
+    return 2.0 * bend / half**2, float(rest @ rest), float(last @ last)
 
 
 @dataclass(frozen=True, slots=True)

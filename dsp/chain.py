@@ -366,7 +366,7 @@ class Chain:
             rotation=scheme.rotation,
         )
         self._guard = LockGuard(
-            max(200, round(0.015 * self.link.symbol_rate_hz)),
+            max(250, round(0.015 * self.link.symbol_rate_hz)),
             min(found.noise_like_db + 0.8, found.mer_db - 3.0),
             scheme,
         )
