@@ -3,7 +3,7 @@
 import math
 from collections import deque
 from collections.abc import Callable, Iterable, Mapping
-from concurrent.futures import Executor, Future, wait
+from concurrent.futures import Executor, Future
 from dataclasses import dataclass, field, replace
 from typing import Any, Protocol
 
@@ -35,8 +35,9 @@ _SLOW_KEYS = ("equaliser", "budget", "verdict", "ber_low", "ber_high")  # only i
 PART_SECONDS = 0.025  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
 WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
-COLLECT_SECONDS = 0.1  # one is collected at the next multiple of it, a fixed place of the stream
-PATIENCE_SECONDS = 0.03  # that a live stream waits for one that is not there by then
+COLLECT_SECONDS = (
+    0.25  # so much later one is collected, at a fixed place of the stream; where it is not there yet, when it is
+)
 TICK_SECONDS = 0.2  # in which clipped samples are counted together
 CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
@@ -100,16 +101,14 @@ class _Asked:
     def __init__(self, sums: EyeSums, context: Context, seconds: float, sample: int, options: EngineOptions) -> None:
         self.sample = sample
         self.told = False
-        self._patience = PATIENCE_SECONDS
-        self.collected_at = (seconds // COLLECT_SECONDS + 1) * COLLECT_SECONDS
+        self.collected_at = seconds + COLLECT_SECONDS
         self.coverage_pct = 100.0 * sums.drawn / max(sums.symbols, 1)
         self._what = sums, context, options.display
         self._work = options.aside.submit(whole_figures, *self._what) if options.aside is not None else None
 
     def ready(self) -> bool:
-        """Whether it is there, or will be in a moment that the stream can wait, which it does once."""
-        patience, self._patience = self._patience, 0.0
-        return self._work is None or bool(wait((self._work,), patience).done)
+        """Whether it is there, or can be made."""
+        return self._work is None or self._work.done()
 
     def whole(self) -> Whole:
         """It, made."""
@@ -184,6 +183,7 @@ class Engine:
         self._best_at = 0.0
         self.persistence_s: float | None = 2.0
         self._stalled = stalled
+        self._late: deque[_Asked] = deque()
         self._last_lock_loss: float | None = None
         self._reset_measures()
 
@@ -340,6 +340,7 @@ class Engine:
                 self._chain.finish()
         except DspError as error:
             self._cannot(str(error))
+        self._tell_late(all_of_them=True)
 
     def changed(self, *, sample_rate_hz: float | None = None, complex_in: bool | None = None, why: str) -> None:
         """The sender restarted or changed what it sends: begin anew with the link as given."""
@@ -485,8 +486,12 @@ class Engine:
 
     def _lock_event(self, event: LockEvent) -> None:
         gained = event.state == "gained"
-        if not gained:
-            self._collect()
+        if not gained and self._asked is not None:
+            if self._ending is not None or self._asked.ready():
+                self._collect()
+            elif self._asked.told:
+                self._late.append(self._asked)
+            self._asked = None
         at = event.sample / self.sample_rate_hz
         self._locks.add(at, gained)
         self._last_lock_loss = None if gained else at
@@ -519,6 +524,7 @@ class Engine:
         measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
         if self._asked is not None and seconds >= self._asked.collected_at and self._asked.ready():
             self._collect()
+        self._tell_late()
         due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
         if seconds >= due and measured >= min(LEAST_JUDGED, self._block_symbols):
             # at fixed places of the stream, so that who watches makes no difference to the lines
@@ -583,6 +589,12 @@ class Engine:
         self._diagnosis = whole.diagnosis
         if asked.told:
             self._tell_reading(whole.reading, asked.sample, asked.coverage_pct)
+
+    def _tell_late(self, *, all_of_them: bool = False) -> None:
+        """The lines whose whole readings were not there when lock was lost."""
+        while self._late and (all_of_them or self._late[0].ready()):
+            asked = self._late.popleft()
+            self._tell_reading(asked.whole().reading, asked.sample, asked.coverage_pct)
 
     def _with_slow(self, reading: Reading, slow: Reading | None) -> Reading:
         """With what only a whole reading has, and its interval about the opening as it is now."""

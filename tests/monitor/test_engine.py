@@ -56,7 +56,7 @@ def test_the_lines_are_the_same_whether_somebody_watches_or_not():
 
 @pytest.mark.parametrize("rule", ["opening_low_pct < 60", "equaliser.opening_pct < 60"])
 def test_alarms_over_what_takes_long_to_read_are_the_same_whether_somebody_watches_or_not(rule):
-    samples = stretches(25.0, 13.0)
+    samples = stretches(25.0, 13.0, 13.0)
     options = {"rules": rules(rule), "every_s": 5.0, "window": 4800}
     plain = Watched(display=False, **options).feed(samples).finish().lines
     assert Watched(display=True, **options).feed(samples).finish().lines == plain
@@ -267,11 +267,11 @@ def test_two_real_levels_are_watched_as_well():
 def test_no_more_than_one_in_twenty_marks_on_a_steady_link_shows_a_change():
     # each mark compares two disjoint windows of one steady stream; 5 % by construction, the bound by the binomial's 99.9 % point
     window, marks = 3200, 40
-    samples = qpsk(window * (marks + 2) * 8 // 4, 16.0)
-    watched = Watched(window=window, rules=RULES)
     size = (
-        8 * window
+        10 * window
     )  # samples; a mark leaves out the block it falls into, and a whole reading is taken in a little later
+    samples = qpsk(size * (marks + 2) // 4, 16.0)
+    watched = Watched(window=window, rules=RULES)
     watched.feed(samples[: 2 * size])
     verdicts = []
     for number in range(2, marks + 2):
