@@ -67,7 +67,7 @@ class LineSums:
 
     def add(self, segment: int, k: NDArray[np.float64], d: NDArray[np.float64]) -> None:
         """Add points of one segment, shapes ``(n,)``."""
-        row = np.array([k.size, k.sum(), d.sum(), k @ k, k @ d, d @ d], dtype=np.float64)
+        row = np.array([k.size, np.add.reduce(k), np.add.reduce(d), k @ k, k @ d, d @ d])
         self.sums[segment] = self.sums.get(segment, np.zeros(6)) + row
 
     def merge(self, other: LineSums, sign: int = 1) -> None:

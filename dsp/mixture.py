@@ -102,7 +102,7 @@ class Spread:
 
     def variance(self) -> float:
         """Of the discrete part."""
-        return float(self.share @ self.at**2) - float(self.share @ self.at) ** 2
+        return max(float(self.share @ self.at**2) - float(self.share @ self.at) ** 2, 0.0)
 
     def grouped(self, count: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """The discrete part as ``count`` points or fewer of about equal share: values and shares, each ``(m,)``."""

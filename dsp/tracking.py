@@ -208,10 +208,10 @@ class Tracker:
         """Take the next filtered samples, one float32 array ``(m,)`` a rail, and return the symbols they complete."""
         samples = tuple(np.concatenate((rest, new)) for rest, new in zip(self._rest, rails, strict=True))
         room = int(samples[0].size / self._setup[kernel.SPS] * 1.2) + 2
-        instants = np.empty(room)
-        phases = np.empty(room)
-        decided, slopes, values = (np.zeros((2, HISTORY + room), np.float32) for _ in range(3))
-        classes = np.zeros((2, HISTORY + room), np.int8)
+        instants, phases = np.empty(room + 1), np.empty(room + 1)
+        decided, values = (np.empty((2, HISTORY + room), np.float32) for _ in range(2))
+        slopes = np.zeros((2, HISTORY + room), np.float32)  # of the rails and detectors that have them
+        classes = np.empty((2, HISTORY + room), np.int8)
         outputs: tuple[NDArray[Any], ...] = (decided, slopes, values, classes)
         for array, past in zip(outputs, self._past, strict=True):
             array[:, :HISTORY] = past
@@ -219,14 +219,15 @@ class Tracker:
         n = kernel.track(
             samples[0], samples[-1], self._complex, self._tables.value, self._tables.slope, self._setup,
             self._means, gain, zero, self._nominal, self._template, self._state, HISTORY,
-            instants, phases, decided, slopes, values, classes,
+            instants[:-1], phases[:-1], decided, slopes, values, classes,
         )  # fmt: skip
+        instants[n], phases[n] = self._state[kernel.INSTANT], self._state[kernel.PHASE]
         self._past = tuple(array[:, n : n + HISTORY].copy() for array in outputs)
         self._seen += n
         self._slow += (self._means - self._slow) * min(n / min(self._seen, self.UNIT_SYMBOLS), 1.0)
         track = Track(
-            np.append(instants[:n], self._state[kernel.INSTANT]),
-            np.append(phases[:n], self._state[kernel.PHASE]),
+            instants[: n + 1],
+            phases[: n + 1],
             values[:, HISTORY : HISTORY + n],
             decided[:, HISTORY : HISTORY + n],
             slopes[:, HISTORY : HISTORY + n],
@@ -273,7 +274,8 @@ def level_units(
     means: NDArray[np.float64], nominal: NDArray[np.float64]
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Least-squares scale and middle, each ``(rails,)``, that bring nominal levels ``(levels,)`` onto ``means`` ``(rails, levels)``."""
-    centred = nominal - nominal.mean()
-    gain = means @ centred / (centred @ centred)
-    zero = means.mean(axis=1) - gain * nominal.mean()
+    centred = nominal - nominal.sum() / nominal.size
+    scale = centred / (centred @ centred)
+    gain = means @ scale
+    zero = means @ (1.0 / nominal.size - scale * (nominal.sum() / nominal.size))
     return np.where(gain > 0, gain, 1e-12), zero
