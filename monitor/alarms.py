@@ -420,13 +420,11 @@ class _Alarm:
         parts = []
         if state == "shelved":
             parts.append(f"until {self.shelved_until_s:.0f} s")
-        if state == "returned":
-            parts.append("over")
-        elif state == "latched":
-            parts.append("over, held until acknowledged")
-        elif self._value is not None:
+        if state == "latched":
+            parts.append("held until acknowledged")
+        elif state != "returned" and self._value is not None:
             parts.append(f"now {self._with_unit(self._value)}")
-        elif isinstance(self, _FigureAlarm):
+        elif state != "returned" and isinstance(self, _FigureAlarm):
             parts.append("now unknown")
         if self.limit is not None:
             parts.append(f"limit {self._with_unit(self.limit)}")

@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from monitor.state import AlarmLine, HistoryPoint
+from monitor.state import AlarmLine, HistoryPoint, SeveralState
 
 _TIME_STEPS = (1, 2, 5, 10, 15, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200, 10800, 21600, 43200, 86400)
 _LEAST_SPAN_PCT = 30.0
@@ -162,3 +162,26 @@ class AlarmMemory:
     def spans(self) -> tuple[AlarmSpan, ...]:
         """All that are remembered, those that stand last."""
         return (*self._passed, *self._standing.values())
+
+
+class LinkMemories:
+    """The memories of several links, and which link is in front; one thread.
+
+    Attributes
+    ----------
+    front
+        Number of the link that was in front at the last look; None before.
+    """
+
+    def __init__(self, links: int) -> None:
+        self.front: int | None = None
+        self._each = [AlarmMemory() for _ in range(links)]
+
+    def look(self, several: SeveralState) -> AlarmMemory | None:
+        """Take the newest states; the memory of the link in front, if that is another one than before."""
+        for memory, link in zip(self._each, several.links, strict=True):
+            memory.tell(link.state.alarms, link.state.seconds)
+        if several.front == self.front:
+            return None
+        self.front = several.front
+        return self._each[several.front]

@@ -9,7 +9,7 @@ import numpy as np
 
 from monitor.state import LinkState, SeveralState
 from monitor.views.control import WatchedLinks, link_action_for
-from monitor.views.history import AlarmMemory, history_runs, lost_spans, value_range
+from monitor.views.history import LinkMemories, history_runs, lost_spans, value_range
 from monitor.views.live_wording import by_urgency, calls
 from monitor.views.terminal import TerminalView, run_terminal
 from monitor.views.terminal_cells import Screen, Sheet, cells
@@ -85,18 +85,15 @@ class TilesTerminalView(TerminalView):
     def __init__(self, watched: WatchedLinks, look: Look, now: Callable[[], float], pictures: Path) -> None:
         super().__init__(watched, look, now, pictures)
         self._links = watched
-        self._memories = [AlarmMemory() for _ in watched.several().links]
-        self._front: int | None = None
+        self._memories = LinkMemories(len(watched.several().links))
         self._shown = replace(self._shown, several=True)
 
     def picture(self, columns: int, rows: int) -> Screen:
         """The rows of all links over the page of the one in front; where there is no room for both, the page has less of it."""
         several = self._links.several()
-        for memory, link in zip(self._memories, several.links, strict=True):
-            memory.tell(link.state.alarms, link.state.seconds)
-        if several.front != self._front:
-            self._front = several.front
-            self.show_another(self._memories[several.front])
+        memory = self._memories.look(several)
+        if memory is not None:
+            self.show_another(memory)
         count = len(several.links)
         spare = rows - LEAST_ROWS if columns >= LEAST_COLUMNS else 0
         taken = min(count, max(spare, min(_LEAST_ROWS_OF_LINKS, rows)))

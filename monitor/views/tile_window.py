@@ -10,7 +10,7 @@ from PySide6.QtWidgets import QVBoxLayout, QWidget
 
 from monitor.state import SeveralState
 from monitor.views.control import ACTIONS, LINK_ACTIONS, LinkActionName, WatchedLinks
-from monitor.views.history import AlarmMemory
+from monitor.views.history import LinkMemories
 from monitor.views.live_layout import live_unit
 from monitor.views.theme import ThemeName
 from monitor.views.tiles import TileImage, arrange_tiles
@@ -91,8 +91,7 @@ class TileWindow(LiveWindow):
     ) -> None:
         super().__init__(watched, title=title, painter=painter, choices=choices, pictures=pictures, until=until)
         self._links = watched
-        self._memories = [AlarmMemory() for _ in watched.several().links]
-        self._front: int | None = None
+        self._memories = LinkMemories(len(watched.several().links))
         self._tiles_due = 0.0
         self.setMinimumSize(QSize(LEAST_SIZE.width(), LEAST_SIZE.height() + 150))
         self.strip = TileStrip(self)
@@ -141,7 +140,7 @@ class TileWindow(LiveWindow):
     def _peek(self) -> None:
         """Look if there is a reason to: the link in front has a new state, or its turn has passed, or the tiles' time has come."""
         now = time.monotonic()
-        if now >= self._tiles_due or self._links.several().front != self._front:
+        if now >= self._tiles_due or self._links.several().front != self._memories.front:
             self.refresh()
         else:
             super()._peek()
@@ -150,11 +149,9 @@ class TileWindow(LiveWindow):
         """Take the newest states, and show the one in front."""
         self._tiles_due = time.monotonic() + _TILES_S
         several = self._links.several()
-        for memory, link in zip(self._memories, several.links, strict=True):
-            memory.tell(link.state.alarms, link.state.seconds)
-        if several.front != self._front:
-            self._front = several.front
-            self.show_another(self._memories[several.front])
+        memory = self._memories.look(several)
+        if memory is not None:
+            self.show_another(memory)
         super().refresh()
         self.strip.look(several, self.theme, self.zoom)
 

@@ -46,7 +46,7 @@ def make_states():
         locks=((0.8, True), (100.0, False), (130.0, True)),
         alarms=(
             AlarmLine("opening_pct < 70", "high", "unacknowledged", 388.2, "now 66.1 %, limit 70 %"),
-            AlarmLine("clipping", "medium", "returned", 300.0, "over"),
+            AlarmLine("clipping", "medium", "returned", 300.0, "limit 0.01 %"),
             AlarmLine("samples lost", "low", "acknowledged", 390.0, "now 0"),
         ),
         change=Change(4.2, 2.9, 5.5, "better"),
