@@ -460,7 +460,9 @@ class Engine:
         link = found.link
         wanted = self._options.window or int(min(max(2.0 * link.symbol_rate_hz, 2000), 200_000))
         least = max(wanted // BLOCKS, 64)
-        part = max(min(round(PART_SECONDS * link.symbol_rate_hz), least), 32)
+        # no shorter than what the chain works on at once
+        part_s = min(max(PART_SECONDS, 4096 / self.sample_rate_hz), 0.1)
+        part = max(min(round(part_s * link.symbol_rate_hz), least), 32)
         # whole parts to a block
         parts = max(round(least / part), 1)
         part = max(least // parts, 32)
