@@ -34,6 +34,7 @@ _SCAN = 32  # instants a symbol that are tried
 _DRIFT_FIRST = 1024  # symbols among which a drift is looked for, the whole range of it
 _SHARPER = 1.3  # power of the line with a drift over that without, from where on there is one
 _CLEAR_DRIFT = 3e-7  # cycles a symbol from one to the next; less does no harm to a few thousand symbols
+_LEAST_SLOPE = 0.1  # that a detector is taken to have
 _LINE_SHARE = 0.08  # of a noise-free carrier's line that must be left
 _PATTERN = 0.6  # share of a sequence's energy in a short pattern from which on it is no data
 
@@ -359,6 +360,7 @@ class _Search:
         self._front = front
         self._corners = wants_corners(link.scheme, link.pulse)
         self._detector: Detector = detector or ("crossing" if self._corners else "derivative")
+        self._detector_given = detector is not None
         self._sense_ui = 0.5
         self._bend = 0.0
         self._drifts = False
@@ -460,6 +462,10 @@ class _Search:
         if self._scheme.kind == "carrier":
             turn, phase = self._aided_carrier(filtered, instants, fit, turn)
         start = self._start(filtered, instants, phase, turn, sps, fit)
+        if self._detector == "derivative" and not self._detector_given and start.detector_slope == -_LEAST_SLOPE:
+            # beside the corner of a square pulse's triangle, where an echo may have put the best instant, its slope does not change
+            self._detector = "gardner"
+            start = self._start(filtered, instants, phase, turn, sps, fit)
         for _ in range(2):
             refined = self._rehearse(filtered, start, skip)
             if isinstance(refined, NotFound):
@@ -703,7 +709,7 @@ class _Search:
 
             slope = (cleaned(step) - cleaned(-step)) / (2 * step)
             sign = 1.0 if self._detector == "crossing" else -1.0
-            return sign * max(sign * slope, 0.1), template
+            return sign * max(sign * slope, _LEAST_SLOPE), template
 
         def mean_output(shift: float) -> float:
             at = instants + shift * sps

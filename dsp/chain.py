@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from typing import Literal, Protocol
 
 import numpy as np
+from numpy.typing import NDArray
 
 from dsp._kernels import guard as kernel
 from dsp.acquisition import Acquired, acquire
@@ -511,10 +512,15 @@ class Chain:
 
 
 class LockGuard:
-    """Says how far decisions can be trusted: MER over the last ``window`` symbols against a floor in dB, and no silence.
+    """Says how far decisions can be trusted: MER over the last ``window`` symbols against a floor in dB, carrier phase, and no silence.
 
-    Silence is `SILENT` symbols in a row whose mean square stays below a tenth of the innermost level's.
+    A constellation that turns beside its carrier loop agrees with its decisions better than noise does; but the power of its points that
+    takes the data away is then 0 on the mean (`power_mean`), which is told from `UPRIGHT` times its mean without noise. Silence is
+    `SILENT` symbols in a row whose mean square stays below a tenth of the innermost level's.
     """
+
+    UPRIGHT = 0.15
+    LOOKED_AT = 64  # symbols of each quarter of a window whose phase is looked at; more would cost more than they tell
 
     SILENT = 24
 
@@ -522,8 +528,11 @@ class LockGuard:
         self.window = window
         self._part = max(window // 4, 1)
         self._floor = 10 ** (floor_db / 10)
-        self._parts: deque[tuple[float, float]] = deque(maxlen=4)
-        self._signal = self._noise = 0.0
+        self._parts: deque[tuple[float, float, float]] = deque(maxlen=4)
+        self._signal = self._noise = self._upright = 0.0
+        self._scheme = scheme
+        self._step = max(self._part // self.LOOKED_AT, 1)
+        self._least = self.UPRIGHT * float(np.mean(power_mean(scheme.points(), scheme))) if scheme.symmetry else 0.0
         self._count = 0
         inner = min(abs(level) for level in scheme.rail_levels)
         self._quiet = 0.1 * inner * inner * scheme.rails
@@ -547,17 +556,35 @@ class LockGuard:
             signal, noise = kernel.powers(track.values, track.decided, at, at + n)
             self._signal += signal
             self._noise += noise
+            if self._least:
+                looked_at = slice(at + -self._count % self._step, at + n, self._step)
+                z = track.values[0, looked_at] + 1j * track.values[1, looked_at]
+                self._upright += float(np.sum(power_mean(z, self._scheme) - self._least))
             self._count += n
             at += n
             if self._count == self._part:
-                self._parts.append((self._signal, self._noise))
-                self._signal = self._noise = 0.0
+                self._parts.append((self._signal, self._noise, self._upright))
+                self._signal = self._noise = self._upright = 0.0
                 self._count = 0
                 if len(self._parts) == 4:
-                    total, rest = (sum(column) for column in zip(*self._parts, strict=True))
-                    if not total > self._floor * rest:  # false for NaN too
+                    total, rest, upright = (sum(column) for column in zip(*self._parts, strict=True))
+                    if not (total > self._floor * rest and upright >= 0.0):  # false for NaN too
                         return False
         return True
+
+
+def power_mean(z: NDArray[np.complexfloating], scheme: Scheme) -> NDArray[np.floating]:
+    """The power of points ``(n,)`` in level units that takes the data away, as `dsp.acquisition.power_line` weighs it.
+
+    1 where a constellation of phases stands upright, 0 on the mean where it turns.
+    """
+    size = np.abs(z)
+    unit = z / np.maximum(size, np.float32(1e-12))
+    power = unit * unit
+    for _ in range(int(math.log2(scheme.symmetry)) - 1):
+        power = power * power
+    sign = 1.0 if scheme.symmetry == 2 else -1.0
+    return np.asarray(sign * power.real * np.minimum(size * size / np.float32(scheme.symbol_energy()), 4.0))
 
 
 class SlipCounter:

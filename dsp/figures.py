@@ -150,7 +150,7 @@ class Figures:
         for rail, counts in enumerate(column):
             noise = max(math.sqrt(float(model.residual[rail])), 1e-3 * float(self._gain[rail]))
             reach = self._isi(rail, model, noise / max(model.cursor(rail), 1e-9))
-            isi.append(reach.variance())
+            isi.append(max(reach.variance(), 0.0))  # rounding may leave it below
             # as many points as keep their distance below half the noise's deviation
             points = min(math.ceil(6.0 * math.sqrt(isi[-1]) * float(self._gain[rail]) / noise), 24)
             shift, share = reach.grouped(points) if points > 1 else (None, None)

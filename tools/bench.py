@@ -881,7 +881,7 @@ def main(arguments: Sequence[str]) -> int:
     parser.add_argument(
         "--identification",
         action="store_true",
-        help="identify random links and what is no link, nothing else (hours; --quick: minutes)",
+        help="identify random links next to textbook estimators, and what is no link, nothing else (half an hour; --quick: minutes)",
     )
     options = parser.parse_args(arguments)
     if options.error_rate or options.coverage is not None:
@@ -890,7 +890,7 @@ def main(arguments: Sequence[str]) -> int:
         import identification_grid
 
         few = ["--links", "64", "--non-links", "65", "--below", "16"] if options.quick else []
-        return identification_grid.main(few)
+        return identification_grid.main(["--references", *few])
     try:
         wanted: list[Entry] = chosen(options.only, (*REFERENCES, *PROJECT, *MEASUREMENTS))
     except ValueError as error:

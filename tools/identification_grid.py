@@ -14,6 +14,7 @@ to 40 dB; an echo stands at least 5 dB further below the signal than the thresho
 from __future__ import annotations
 
 import argparse
+import itertools
 import json
 import math
 import os
@@ -35,7 +36,7 @@ from numpy.typing import NDArray
 
 if TYPE_CHECKING:
     from dsp.identify import Identified
-    from dsp.transmitter import TransmitSpec
+    from dsp.transmitter import Transmission, TransmitSpec
 
 SYMBOLS = 20_000
 RATE_HZ = 1e6
@@ -50,6 +51,22 @@ THRESHOLD_DB = {
 FREQUENCY = ("fsk2", "fsk4", "gfsk", "msk", "gmsk")
 # the same wave by two names: no samples can tell them apart
 TWINS = {"msk": "fsk2", "gmsk": "gfsk"}
+
+
+@dataclass(frozen=True)
+class Accuracy:
+    """How near identification and textbook estimators came to a root-raised-cosine link, and the bound of any estimator.
+
+    Rates in ppm; carriers in symbol rates, None for baseband. The references are told the link's band, and for the carrier its scheme,
+    pulse and every instant; what they cannot tell (multiples of the symbol rate over the symmetry) is forgiven.
+    """
+
+    rate_ppm: float
+    square_law_ppm: float
+    rate_bound_ppm: float
+    carrier: float | None
+    power_law: float | None
+    carrier_bound: float
 
 
 @dataclass(frozen=True)
@@ -71,6 +88,8 @@ class Verdict:
     true_opening_pct: float | None = None
     reason: str = ""
     seconds: float = 0.0
+    sure: dict[str, float] | None = None
+    accuracy: Accuracy | None = None
 
     @property
     def right_scheme(self) -> bool:
@@ -186,13 +205,14 @@ def draw_link(number: int, *, below: bool = False) -> TransmitSpec:
     return replace(spec, gain=Sender(spec).gain * 10 ** float(rng.uniform(-3.0, 0.0)))
 
 
-def judge_link(number: int, *, below: bool = False, openings: bool = True) -> Verdict:
+def judge_link(number: int, *, below: bool = False, openings: bool = True, references: bool = False) -> Verdict:
     """Make one link, identify it, and compare."""
     from dsp.identify import survey_links
     from dsp.transmitter import transmit
 
     spec = draw_link(number, below=below)
-    samples = transmit(spec).samples
+    sent = transmit(spec)
+    samples = sent.samples
     shown = ("carrier_hz", "passband", "echoes", "dc", "modulation_index")
     verdict = {
         "number": number, "scheme": spec.scheme, "pulse": str(spec.pulse), "sps": spec.samples_per_symbol, "snr_db": spec.snr_db,
@@ -208,7 +228,14 @@ def judge_link(number: int, *, below: bool = False, openings: bool = True) -> Ve
     verdict |= {
         "found_scheme": best.link.scheme.name, "found_pulse": str(best.link.pulse), "confidence": best.scheme.confidence,
         "rate_ppm": (best.link.symbol_rate_hz / true_rate - 1) * 1e6,
+        "sure": {
+            "scheme": best.scheme.confidence, "rate": best.symbol_rate_hz.confidence, "pulse": best.pulse.confidence,
+            **({"carrier": best.carrier_hz.confidence} if best.carrier_hz is not None else {}),
+        },
     }  # fmt: skip
+    if references and spec.pulse.family == "rrc" and spec.scheme not in FREQUENCY:
+        found_hz = None if best.carrier_hz is None else best.carrier_hz.value
+        verdict["accuracy"] = _accuracy(sent, spec, verdict["rate_ppm"], found_hz)
     head = samples[: int(JUDGED_SYMBOLS * RATE_HZ / best.link.symbol_rate_hz)]
     locked, opening, reason = _opening(head, best.identified)
     true = None
@@ -223,6 +250,30 @@ def judge_link(number: int, *, below: bool = False, openings: bool = True) -> Ve
         )
         true = _opening(head, given)[1]
     return Verdict(**verdict, locked=locked, opening_pct=opening, true_opening_pct=true, reason=reason)
+
+
+def _accuracy(sent: Transmission, spec: TransmitSpec, rate_ppm: float, found_hz: float | None) -> Accuracy:
+    import identification_references as references
+
+    from dsp.link import find_scheme
+
+    scheme = find_scheme(spec.scheme)
+    true_rate = spec.symbol_rate_hz * (1 + 1e-6 * spec.clock_ppm)
+    wave = references.analytic(sent.samples, spec)
+    square = (references.square_law_rate(wave) * RATE_HZ / true_rate - 1) * 1e6
+    own = power = None
+    if scheme.kind == "carrier":
+        if found_hz is not None:
+            own = (found_hz - spec.carrier_hz) / true_rate
+        if not scheme.stagger:
+            # the wave stands about the true carrier; pi/4-DQPSK turns by an eighth on top
+            turn = references.power_law_carrier(references.symbols_of(wave, sent, spec), scheme.symmetry) - scheme.rotation
+            power = (turn + 0.5 / scheme.symmetry) % (1 / scheme.symmetry) - 0.5 / scheme.symmetry
+    rolloff = spec.pulse.number or 1.0
+    return Accuracy(
+        rate_ppm, square, references.rate_bound_ppm(rolloff, SYMBOLS, spec.snr_db or math.inf),
+        own, power, references.carrier_bound(SYMBOLS, spec.snr_db or math.inf),
+    )  # fmt: skip
 
 
 def _opening(samples: NDArray[Any], identified: Identified) -> tuple[bool, float | None, str]:
@@ -451,12 +502,17 @@ def judge_non_link(number: int) -> Claim:
 
 
 def run(
-    links: Iterable[int], non_links: Iterable[int], below: Iterable[int], each: Callable[[Any], None]
+    links: Iterable[int],
+    non_links: Iterable[int],
+    below: Iterable[int],
+    each: Callable[[Any], None],
+    *,
+    references: bool = False,
 ) -> dict[str, Any]:
     """Judge the cases of those numbers; ``each`` is told every verdict. Returns shares in per cent and counts."""
     verdicts, claims, faint = [], [], []
     for number in links:
-        verdicts.append(judge_link(number))
+        verdicts.append(judge_link(number, references=references))
         each(verdicts[-1])
     for number in non_links:
         claims.append(judge_non_link(number))
@@ -491,7 +547,51 @@ def summary(verdicts: list[Verdict], claims: list[Claim], faint: list[Verdict]) 
             v.found_scheme is not None and not (v.right_scheme and v.right_rate) for v in faint
         ),
         "seconds_each": float(np.mean([v.seconds for v in verdicts])) if verdicts else None,
+        "accuracy": accuracy([v.accuracy for v in verdicts if v.accuracy is not None]),
+        "calibration": calibration(verdicts),
     }
+
+
+def accuracy(found: list[Accuracy]) -> dict[str, Any] | None:
+    """Identification next to the textbook estimators: shares of links within 20 ppm and 1e-4 symbol rates, median error over the bound.
+
+    An estimator without a bias that reaches the bound has a median error of 0.67 of it.
+    """
+    if not found:
+        return None
+
+    def told(errors: list[tuple[float | None, float]], within: float) -> dict[str, float]:
+        known = [(abs(error), bound) for error, bound in errors if error is not None]
+        return {
+            "links": len(known),
+            "right_pct": 100.0 * float(np.mean([error <= within for error, _ in known])),
+            "median_error_over_bound": float(np.median([error / bound for error, bound in known])),
+        }
+
+    return {
+        "rate": told([(a.rate_ppm, a.rate_bound_ppm) for a in found], 20.0),
+        "rate by square-law line": told([(a.square_law_ppm, a.rate_bound_ppm) for a in found], 20.0),
+        "carrier": told([(a.carrier, a.carrier_bound) for a in found], 1e-4),
+        "carrier by power-law line": told([(a.power_law, a.carrier_bound) for a in found], 1e-4),
+    }
+
+
+def calibration(verdicts: list[Verdict]) -> dict[str, list[dict[str, float]]]:
+    """How many were right of those said to be so sure, by part and by class of confidence."""
+    right: dict[str, Callable[[Verdict], bool]] = {
+        "scheme": lambda v: v.right_scheme, "rate": lambda v: v.right_rate, "pulse": lambda v: v.right_pulse,
+    }  # fmt: skip
+    edges = (0.0, 0.5, 0.8, 0.9, 0.97, 1.001)
+    table: dict[str, list[dict[str, float]]] = {}
+    for part, judge in right.items():
+        rows = []
+        for low, high in itertools.pairwise(edges):
+            those = [v for v in verdicts if v.sure is not None and low <= v.sure[part] < high]
+            if those:
+                said = float(np.mean([v.sure[part] for v in those if v.sure is not None]))
+                rows.append({"links": len(those), "said_pct": 100 * said, "right_pct": 100 * float(np.mean([judge(v) for v in those]))})
+        table[part] = rows
+    return table
 
 
 def _show(item: Verdict | Claim, *, all_of_them: bool) -> None:
@@ -532,6 +632,7 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("--first", type=int, default=0, help="number of the first case")
     parser.add_argument("--step", type=int, default=1, help="take each so-manieth case")
     parser.add_argument("--case", type=int, action="append", help="this link only")
+    parser.add_argument("--references", action="store_true", help="textbook estimators on the same links, and the bounds")
     parser.add_argument("--all", action="store_true", help="show the good ones too")
     parser.add_argument("--json", metavar="FILE", help="every verdict, as JSON lines")
     options = parser.parse_args(arguments)
@@ -547,7 +648,7 @@ def main(arguments: list[str] | None = None) -> int:
         _show(item, all_of_them=options.all or bool(options.case))
         kept.append(asdict(item))
 
-    figures = run(*numbers, each)
+    figures = run(*numbers, each, references=options.references)
     if options.json:
         with Path(options.json).open("w", encoding="utf-8") as file:
             file.writelines(json.dumps(item, default=str) + "\n" for item in kept)

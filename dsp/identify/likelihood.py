@@ -13,6 +13,7 @@ Values = NDArray[np.float64]
 
 _RING_POINTS = 48
 _ROUNDS = 20
+_NONE = -1e9  # log-likelihood of anything in values that are all 0
 _STRAY = 0.02  # share of symbols that may be anything: gaps, the first of a burst
 
 
@@ -50,6 +51,8 @@ def agreement(values: Values, scheme: Scheme, weights: Values | None = None) -> 
     if rails is None:
         return _ring(values, 8, scheme)
     power = float(np.mean(np.sum(values**2, axis=0)))
+    if not power > 0:
+        return Agreement(_NONE, 1.0, 1.0, 0.5)
     energy = float(sum(np.mean(points**2) for points in rails))
     best: tuple[float, float, float] | None = None
     for start_db in (10.0, 24.0):
@@ -99,6 +102,8 @@ def _expect(values: Values, points: Values, sigma: float, prior: Values, spread:
 def _ring(values: Values, count: int, scheme: Scheme | None) -> Agreement:
     z = values[0] + 1j * values[1]
     power = float(np.mean(np.abs(z) ** 2))
+    if not power > 0:
+        return Agreement(_NONE, 1.0, 1.0, 0.5)
     points = np.exp(2j * np.pi * (np.arange(count) + 0.5) / count)
     spread = float(np.var(np.abs(z) ** 2)) / power**2
     noise = 1.0 - math.sqrt(max(1.0 - spread, 1e-6)) if spread < 1 else 0.9

@@ -9,6 +9,10 @@ from dsp.filters import Oscillator
 from dsp.steering import Steering
 from tests.dsp.streams import BAUD, link_of, run, send
 
+# Es/N0 2 to 3 dB above that of a bit error rate of 1e-3: Proakis and Salehi, Digital Communications, 5th ed., sec. 4.3
+NEAR_THRESHOLD = [
+    ("bpsk", 9.0), ("qpsk", 12.0), ("oqpsk", 12.0), ("pi4dqpsk", 12.0), ("8psk", 17.0), ("16qam", 19.0), ("64qam", 25.0),
+]  # fmt: skip
 SCHEMES = ("bpsk", "qpsk", "oqpsk", "pi4dqpsk", "8psk", "16qam", "64qam")
 
 
@@ -94,3 +98,47 @@ def test_a_parabola_and_a_line():
     assert drift == pytest.approx(3e-4)
     assert line > 1e-3
     assert parabola < 1e-20
+
+
+# -- where the carrier may be, and that it is found again -----------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("offset", [0.25, -0.25, 0.5])
+@pytest.mark.parametrize(("scheme", "snr_db"), NEAR_THRESHOLD)
+def test_a_carrier_half_a_symbol_rate_beside_the_middle_is_found_near_the_threshold(scheme, snr_db, offset):
+    chain = run(link_of(scheme), send(scheme, symbols=4000, snr_db=snr_db, carrier_hz=offset * BAUD).samples)
+    assert [event.state for event in chain.events] == ["gained", "lost"]
+    reading = Figures(chain.total, chain.context()).reading()
+    assert reading.carrier_hz == pytest.approx(offset * BAUD, abs=1e-4 * BAUD)
+    assert reading.snr_db == pytest.approx(snr_db, abs=0.5)
+
+
+@pytest.mark.parametrize("jump", [0.005, -0.1, 0.3])
+@pytest.mark.parametrize(("scheme", "snr_db"), NEAR_THRESHOLD)
+def test_after_a_jump_of_the_carrier_the_link_is_found_again_and_nothing_false_is_measured(scheme, snr_db, jump):
+    """A constellation that turns agrees with its nearest points by 7 dB (QPSK), 13 dB (8PSK): nothing that noise would."""
+    before = send(scheme, symbols=4000, snr_db=snr_db).samples
+    behind = send(scheme, symbols=4000, snr_db=snr_db, carrier_hz=jump * BAUD, seed=2).samples
+    chain = run(link_of(scheme), np.concatenate((before, behind)))
+    states = [event.state for event in chain.events]
+    assert states in (["gained", "lost", "gained", "lost"], ["gained", "lost"])
+    if len(states) == 2:  # the loop itself has caught it
+        assert abs(jump) < 0.01
+    assert chain.total.symbols > 6200
+    assert Figures(chain.total, chain.context()).reading().snr_db == pytest.approx(snr_db, abs=0.4)
+
+
+@pytest.mark.parametrize(("scheme", "snr_db"), [("qpsk", 8.0), ("8psk", 13.0), ("16qam", 14.0), ("64qam", 20.0)])
+def test_a_link_below_its_threshold_keeps_its_lock_all_the_same(scheme, snr_db):
+    chain = run(link_of(scheme), send(scheme, symbols=20_000, snr_db=snr_db).samples)
+    assert [event.reason for event in chain.events[1:]] == ["end of stream"]
+
+
+@pytest.mark.parametrize(("scheme", "snr_db"), [(scheme, snr_db + 3) for scheme, snr_db in NEAR_THRESHOLD])
+def test_phase_noise_of_a_third_of_a_degree_a_symbol_is_followed(scheme, snr_db):
+    chain = run(link_of(scheme), send(scheme, symbols=12_000, snr_db=snr_db, phase_noise_deg=0.3).samples)
+    assert [event.reason for event in chain.events[1:]] == ["end of stream"]
+    assert chain.slips == 0
+    reading = Figures(chain.total, chain.context()).reading()
+    assert reading.snr_db == pytest.approx(snr_db, abs=0.6)
+    assert reading.phase_rms_deg > 2.0
