@@ -261,7 +261,7 @@ class CarrierLine:
     chance: float
 
 
-def _raised(values: NDArray[np.complex128], order: int) -> NDArray[np.complex128]:
+def raised_power(values: NDArray[np.complex128], order: int) -> NDArray[np.complex128]:
     """Unit-modulus powers weighted by the magnitude squared: outer points of a QAM carry the phase, none dominates."""
     scaled = np.abs(values) / max(float(np.sqrt(np.mean(np.abs(values) ** 2))), 1e-30)
     return np.asarray(np.exp(1j * order * np.angle(values)) * np.minimum(scaled, 2.0) ** 2)
@@ -273,7 +273,7 @@ def power_line(values: NDArray[np.complex128], order: int, searched: float = 1.0
     The phase is that of the constellation whose points to the power are negative real (order above 2) or positive (order 2).
     Source: A. J. and A. M. Viterbi, IEEE Trans. Inf. Theory 29(4), 1983, with the fourth power itself as its nonlinearity.
     """
-    raised = _raised(values, order)
+    raised = raised_power(values, order)
     length = 4 * 2 ** math.ceil(math.log2(values.size))
     spectrum = np.fft.fft(raised, length)
     level = np.abs(spectrum) ** 2
@@ -412,7 +412,7 @@ class _Search:
             if line.chance > CHANCE or instants.size < 64:
                 return 0.0, 1.0
             order = self._scheme.symmetry
-            raised = _raised(self._complex(filtered, instants), order)
+            raised = raised_power(self._complex(filtered, instants), order)
             drift, sharper = line_drift(raised, _MOST_DRIFT * order, _DRIFT_FIRST, _sharpest)
             return drift / order, sharper
         # without its carrier the clock is not seen: the square of all samples, with lines beside the carrier's

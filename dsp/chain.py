@@ -520,7 +520,8 @@ class LockGuard:
     """
 
     UPRIGHT = 0.15
-    LOOKED_AT = 64  # symbols of each quarter of a window whose phase is looked at; more would cost more than they tell
+    LOOKED_AT = 256  # symbols of each quarter of a window whose phase is looked at; more would cost more than they tell
+    CERTAIN = 7.0  # standard deviations: so far above what is asked for an upright constellation stands over what is looked at
 
     SILENT = 24
 
@@ -528,11 +529,18 @@ class LockGuard:
         self.window = window
         self._part = max(window // 4, 1)
         self._floor = 10 ** (floor_db / 10)
-        self._parts: deque[tuple[float, float, float]] = deque(maxlen=4)
+        self._parts: deque[tuple[float, float]] = deque(maxlen=4)
         self._signal = self._noise = self._upright = 0.0
         self._scheme = scheme
         self._step = max(self._part // self.LOOKED_AT, 1)
-        self._least = self.UPRIGHT * float(np.mean(power_mean(scheme.points(), scheme))) if scheme.symmetry else 0.0
+        self._least = 0.0
+        self._phases: deque[float] = deque(maxlen=4)
+        if scheme.symmetry:
+            powers = power_mean(scheme.points(), scheme)
+            self._least = self.UPRIGHT * float(np.mean(powers))
+            # of dense constellations a window tells too little
+            need = (self.CERTAIN * float(np.std(powers)) / ((1 - self.UPRIGHT) * float(np.mean(powers)))) ** 2
+            self._phases = deque(maxlen=max(math.ceil(need * self._step / self._part), 4))
         self._count = 0
         inner = min(abs(level) for level in scheme.rail_levels)
         self._quiet = 0.1 * inner * inner * scheme.rails
@@ -563,12 +571,15 @@ class LockGuard:
             self._count += n
             at += n
             if self._count == self._part:
-                self._parts.append((self._signal, self._noise, self._upright))
+                self._parts.append((self._signal, self._noise))
+                self._phases.append(self._upright)
                 self._signal = self._noise = self._upright = 0.0
                 self._count = 0
                 if len(self._parts) == 4:
-                    total, rest, upright = (sum(column) for column in zip(*self._parts, strict=True))
-                    if not (total > self._floor * rest and upright >= 0.0):  # false for NaN too
+                    total, rest = (sum(column) for column in zip(*self._parts, strict=True))
+                    if not total > self._floor * rest:  # false for NaN too
+                        return False
+                    if len(self._phases) == self._phases.maxlen and not sum(self._phases) >= 0.0:
                         return False
         return True
 

@@ -267,7 +267,9 @@ def _accuracy(sent: Transmission, spec: TransmitSpec, rate_ppm: float, found_hz:
             own = (found_hz - spec.carrier_hz) / true_rate
         if not scheme.stagger:
             # the wave stands about the true carrier; pi/4-DQPSK turns by an eighth on top
-            turn = references.power_law_carrier(references.symbols_of(wave, sent, spec), scheme.symmetry) - scheme.rotation
+            turn = (
+                references.power_law_carrier(references.symbols_of(wave, sent, spec), scheme.symmetry) - scheme.rotation
+            )
             power = (turn + 0.5 / scheme.symmetry) % (1 / scheme.symmetry) - 0.5 / scheme.symmetry
     rolloff = spec.pulse.number or 1.0
     return Accuracy(
@@ -589,7 +591,13 @@ def calibration(verdicts: list[Verdict]) -> dict[str, list[dict[str, float]]]:
             those = [v for v in verdicts if v.sure is not None and low <= v.sure[part] < high]
             if those:
                 said = float(np.mean([v.sure[part] for v in those if v.sure is not None]))
-                rows.append({"links": len(those), "said_pct": 100 * said, "right_pct": 100 * float(np.mean([judge(v) for v in those]))})
+                rows.append(
+                    {
+                        "links": len(those),
+                        "said_pct": 100 * said,
+                        "right_pct": 100 * float(np.mean([judge(v) for v in those])),
+                    }
+                )
         table[part] = rows
     return table
 
@@ -632,7 +640,9 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("--first", type=int, default=0, help="number of the first case")
     parser.add_argument("--step", type=int, default=1, help="take each so-manieth case")
     parser.add_argument("--case", type=int, action="append", help="this link only")
-    parser.add_argument("--references", action="store_true", help="textbook estimators on the same links, and the bounds")
+    parser.add_argument(
+        "--references", action="store_true", help="textbook estimators on the same links, and the bounds"
+    )
     parser.add_argument("--all", action="store_true", help="show the good ones too")
     parser.add_argument("--json", metavar="FILE", help="every verdict, as JSON lines")
     options = parser.parse_args(arguments)

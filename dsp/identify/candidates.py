@@ -65,7 +65,7 @@ class Candidate:
 
 
 @dataclass(frozen=True, slots=True)
-class _Wave:
+class Wave:
     """A wave at some 4.6 to 9 samples a symbol with the instants of its busiest stretch: ``tau`` in samples, ``count`` symbols."""
 
     samples: NDArray[np.complex128]
@@ -74,15 +74,15 @@ class _Wave:
     half: float  # band in symbol rates
 
 
-def _filtered(wave: _Wave, pulse: Pulse) -> NDArray[np.complex128]:
+def _filtered(wave: Wave, pulse: Pulse) -> NDArray[np.complex128]:
     taps = receive_filter(pulse, wave.sps)
     if taps.size == 1:
         return wave.samples
     return np.asarray(signal.oaconvolve(wave.samples, taps, mode="same"))
 
 
-def _at(
-    wave: _Wave, instants: NDArray[np.float64], samples: NDArray[np.complex128] | None = None
+def value_at(
+    wave: Wave, instants: NDArray[np.float64], samples: NDArray[np.complex128] | None = None
 ) -> NDArray[np.complex128]:
     """The wave at any instants; ``samples``: what a filter made of it."""
     samples = wave.samples if samples is None else samples
@@ -109,7 +109,7 @@ def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
     return max(first * block, margin), min(_SYMBOLS, int((samples.size - margin - first * block) / sps) - 2)
 
 
-def _timed(samples: NDArray[np.complex128], wave: _Wave, stagger: bool = False) -> Values:
+def _timed(samples: NDArray[np.complex128], wave: Wave, stagger: bool = False) -> Values:
     """Instants of the symbols: where the values' spread of power is least, as it is for every constellation but not between."""
     start, count = _busiest(samples, wave.sps)
     if count < _LEAST:
@@ -117,7 +117,7 @@ def _timed(samples: NDArray[np.complex128], wave: _Wave, stagger: bool = False) 
     some = start + wave.sps * np.arange(min(count, 1024), dtype=np.float64)
     table = []
     for k in range(_SCAN):
-        power = np.abs(_at(wave, some + k / _SCAN * wave.sps, samples)) ** 2
+        power = np.abs(value_at(wave, some + k / _SCAN * wave.sps, samples)) ** 2
         table.append(float(np.mean(power**2)) / max(float(np.mean(power)) ** 2, 1e-30))
     kurtosis = np.asarray(table)
     top = int(np.argmin(kurtosis))
@@ -152,14 +152,14 @@ def _cleaned(values: NDArray[np.complex128], decided: NDArray[np.complex128]) ->
 # -- real waves: baseband, and the frequency behind a discriminator ------------------------------------------------------------
 
 
-def _real_wave(spectrum: Spectrum, rate: float, pulse: Pulse) -> _Wave:
+def _real_wave(spectrum: Spectrum, rate: float, pulse: Pulse) -> Wave:
     top = (2.6 if pulse.family in ("rect", "none") else 1.15) * rate
     per_symbol = 12.0 if pulse.family in ("rect", "none") else 4.6
     length = fft.next_fast_len(max(math.ceil(per_symbol * rate * spectrum.size), 64))
     length += length % 2
     top = min(top, 0.5)
     samples = spectrum.real_wave(top, length)
-    return _Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, top / rate)
+    return Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, top / rate)
 
 
 _WEIGHTS = {"pam3": (None, np.array([0.25, 0.5, 0.25]))}
@@ -193,7 +193,7 @@ def pam_candidate(
         instants = _timed(filtered, wave)
         if instants.size < _LEAST:
             return None
-        values = _at(wave, instants[:1024], filtered).real[None]
+        values = value_at(wave, instants[:1024], filtered).real[None]
         values = values - values.mean()
         merit = max(_pam_agreement(values, scheme).log_likelihood for scheme in schemes) - no_structure(values)
         if best is None or merit > best[0] + 0.05:
@@ -205,7 +205,7 @@ def pam_candidate(
         wave = _real_wave(spectrum, rate, pulse)
         filtered = _filtered(wave, pulse)
         instants = _timed(filtered, wave)
-        values = _at(wave, instants, filtered).real[None]
+        values = value_at(wave, instants, filtered).real[None]
         values = values - values.mean()
         ranked = _ranked(values[0] + 0j, schemes)
         scheme, agreed, decided, excess, n = ranked[0]
@@ -214,7 +214,9 @@ def pam_candidate(
         if agreed.error_rate < 0.1:
             raw = _real_wave(spectrum, rate, Pulse("none"))
             scale = raw.sps / wave.sps
-            sampled = np.stack([_at(raw, (instants + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)])
+            sampled = np.stack(
+                [value_at(raw, (instants + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)]
+            )
             response = response_of(sampled, decided[0] + 0j, min(raw.half, 0.5 * PHASES))
             ranking = (
                 best_pulse(response, scheme, families, tuple(shape.pulse for shape in shapes))
@@ -308,12 +310,12 @@ def _doubts(decided: Values, scheme: Scheme, agreed: Agreement, excess: float, n
 # -- carriers ------------------------------------------------------------------------------------------------------------------
 
 
-def _carrier_wave(spectrum: Spectrum, rate: float, centre: float, pulse: Pulse) -> _Wave:
+def _carrier_wave(spectrum: Spectrum, rate: float, centre: float, pulse: Pulse) -> Wave:
     half, per_symbol = (3.6, 12.0) if pulse.family in ("rect", "none") else (1.1, 4.6)
     half *= rate
     length = fft.next_fast_len(max(math.ceil(per_symbol * rate * spectrum.size), 64))
     samples = spectrum.wave(centre, half, length)
-    return _Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, half / rate)
+    return Wave(samples.astype(np.complex128), length / (rate * spectrum.size), rate, half / rate)
 
 
 def _upright(z: NDArray[np.complex128], order: int, turn: float) -> NDArray[np.complex128]:
@@ -348,7 +350,7 @@ def carrier_candidates(
     shapes = spectrum_shapes(spectrum, rate, spectrum.densest(rate, *within))
     if not shapes:
         return None
-    centre = shapes[0].centre
+    centre = spectrum.nearest(shapes[0].centre)
     pulse = pulses[0] if pulses is not None else shapes[0].pulse
     result: Candidate | None = None
     for last in (False, True):
@@ -357,7 +359,7 @@ def carrier_candidates(
         instants = _timed(filtered, wave)
         if instants.size < _LEAST:
             return None
-        z = _at(wave, instants, filtered)
+        z = value_at(wave, instants, filtered)
         z = z / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
         found: list[tuple[_Ranked, NDArray[np.complex128], float, float]] = []
         for order, names in ((2, ("bpsk",)), (4, ("qpsk", "pi4dqpsk", "16qam", "64qam")), (8, ("8psk",))):
@@ -400,7 +402,7 @@ def carrier_candidates(
             sampled = []
             for p in range(PHASES):
                 lead = p / PHASES - 0.5
-                sampled.append(_at(wave, instants + lead * wave.sps) * rotation * np.exp(1j * slope * lead))
+                sampled.append(value_at(wave, instants + lead * wave.sps) * rotation * np.exp(1j * slope * lead))
             response = response_of(np.stack(sampled), decided, wave.half)
             if pulses is None:
                 ranking = best_pulse(response, scheme, _CARRIER_FAMILIES, tuple(shape.pulse for shape in shapes))
@@ -449,8 +451,8 @@ def staggered_candidate(
         upper, lower = np.angle(np.sum(square * turn)), np.angle(np.sum(square * np.conj(turn)))
         theta, tau = 0.25 * (upper + lower), (lower - upper) / (4 * np.pi) * wave.sps
         instants = start + (tau - start) % wave.sps + wave.sps * np.arange(count)
-        early = _at(wave, instants, filtered) * np.exp(-1j * theta)
-        late = _at(wave, instants + 0.5 * wave.sps, filtered) * np.exp(-1j * theta)
+        early = value_at(wave, instants, filtered) * np.exp(-1j * theta)
+        late = value_at(wave, instants + 0.5 * wave.sps, filtered) * np.exp(-1j * theta)
         z = early.real + 1j * late.imag
         z = z / max(math.sqrt(float(np.mean(np.abs(z) ** 2))), 1e-30)
         scheme_, agreed, decided_rails, excess, n = _ranked(z, (scheme,))[0]
@@ -458,7 +460,8 @@ def staggered_candidate(
         response = None
         if agreed.error_rate < 0.1:
             sampled = [
-                (_at(wave, instants + (p / PHASES - 0.5) * wave.sps) * np.exp(-1j * theta)).real for p in range(PHASES)
+                (value_at(wave, instants + (p / PHASES - 0.5) * wave.sps) * np.exp(-1j * theta)).real
+                for p in range(PHASES)
             ]
             response = response_of(np.stack(sampled) + 0j, decided_rails[0] + 0j, wave.half)
             if pulses is None:
@@ -472,6 +475,16 @@ def staggered_candidate(
             break
         pulse = ranking[0][0]
     return result
+
+
+def symbol_wave(spectrum: Spectrum, candidate: Candidate) -> tuple[Wave, NDArray[np.complex128], Values]:
+    """The wave of a candidate that has no stagger, the same behind its receive filter, and the first of its instants there."""
+    if candidate.scheme.kind == "carrier":
+        wave = _carrier_wave(spectrum, candidate.rate, candidate.centre, candidate.pulse)
+    else:
+        wave = _real_wave(spectrum, candidate.rate, candidate.pulse)
+    filtered = _filtered(wave, candidate.pulse)
+    return wave, filtered, _timed(filtered, wave)
 
 
 # -- frequency -----------------------------------------------------------------------------------------------------------------

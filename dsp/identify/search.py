@@ -20,6 +20,7 @@ from dsp.identify.candidates import (
 )
 from dsp.identify.findings import Band, Identified, Wanted
 from dsp.identify.lines import Line, Products, clock_lines
+from dsp.identify.refining import refined
 from dsp.identify.spectrum import Spectrum, segments, spectrum_of
 from dsp.link import SCHEMES, Link, Scheme
 from dsp.pulses import Pulse
@@ -298,6 +299,15 @@ def _held(
     outcome = acquire(link, front, rails, detector=None, timing_bandwidth=0.005, carrier_bandwidth=0.005)
     if not isinstance(outcome, Acquired):
         return outcome
+    if wanted.symbol_rate_hz is None:
+        looped = symbol_rate * front.sps / outcome.start.sps
+        if abs(looped / symbol_rate - 1.0) > _RATES_AGREE:
+            link = replace(link, symbol_rate_hz=looped)
+        else:
+            candidate = refined(spectrum, candidate)
+            link = replace(link, symbol_rate_hz=candidate.rate * rate)
+            if link.scheme.kind == "carrier" and link.carrier_hz is None:
+                centre = candidate.centre
     found = tuple(
         key
         for key, value in (
@@ -308,10 +318,6 @@ def _held(
         )
         if value is None and not (key == "carrier_hz" and scheme.kind == "baseband")
     )
-    if wanted.symbol_rate_hz is None:
-        looped = symbol_rate * front.sps / outcome.start.sps
-        if abs(looped / symbol_rate - 1.0) > _RATES_AGREE:
-            link = replace(link, symbol_rate_hz=looped)
     identified = Identified(link, centre * rate, None if half is None else half * rate, found)
     return Found(identified, candidate, outcome, band)
 

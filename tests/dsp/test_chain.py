@@ -354,6 +354,33 @@ def test_the_guard_lets_go_within_a_window_of_the_loss_however_cut(cut):
     assert start < 1200
 
 
+# Es/N0 of a bit error rate of about 1e-2: Proakis and Salehi, Digital Communications, 5th ed., sec. 4.3
+@pytest.mark.parametrize(
+    ("scheme", "snr_db"), [("bpsk", 4.3), ("qpsk", 7.3), ("8psk", 11.5), ("16qam", 13.9), ("64qam", 19.6)]
+)
+def test_the_guard_tells_a_constellation_that_turns_from_one_with_many_errors(scheme, snr_db):
+    kind, rng, n = find_scheme(scheme), np.random.default_rng(6), 200_000
+    sent = rng.choice(kind.points(), n)
+    noise_rms = np.sqrt(kind.symbol_energy() * 10 ** (-snr_db / 10) / 2)
+    noise = noise_rms * (rng.standard_normal(n) + 1j * rng.standard_normal(n))
+
+    def decided(z):
+        points = kind.points()
+        index = np.concatenate([np.argmin(np.abs(part[:, None] - points), axis=1) for part in np.array_split(z, 100)])
+        return points[index]
+
+    for turn, holds in ((0.0, True), (0.003, False), (0.1, False)):
+        z = sent * np.exp(2j * np.pi * turn * np.arange(n)) + noise
+        values, levels = (np.stack((x.real, x.imag)).astype(np.float32) for x in (z, decided(z)))
+        guard = LockGuard(200, -50.0, kind)  # by its phase alone
+        at = next(
+            (k for k in range(0, n, 100) if not guard.holds(track_of(values[:, k : k + 100], levels[:, k : k + 100]))),
+            n,
+        )
+        assert (at == n) is holds
+        assert holds or at < (5000 if scheme == "64qam" else 2500)
+
+
 def test_the_guard_is_not_fooled_by_nan():
     values, decided = symbols(np.random.default_rng(3), 400, 0.1)
     values[0, 300] = np.nan
