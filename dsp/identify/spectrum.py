@@ -99,7 +99,8 @@ class Spectrum:
     def wave(self, centre: float, half: float, length: int, weight: Cells | None = None) -> NDArray[np.complex64]:
         """The band ``centre`` +- ``half``, brought to 0 as a complex wave of ``length`` samples over the same time.
 
-        The bin `nearest` to the centre becomes 0. ``weight`` by cell. Real samples give the analytic wave. ``length`` should be at least ``2 * half * size``.
+        The bin `nearest` to the centre becomes 0. ``weight`` by cell. Real samples give the analytic wave.
+        ``length`` should be at least ``2 * half * size``.
         """
         return np.asarray(fft.ifft(self._placed(centre, half, length, weight)), dtype=np.complex64) * np.float32(
             length / self.size
