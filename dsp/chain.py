@@ -4,7 +4,7 @@ import math
 from collections import deque
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Literal, Protocol
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,6 +15,7 @@ from dsp.block import Block, Samples
 from dsp.eye import HALO, EyeMeter, EyeSums
 from dsp.figures import Context
 from dsp.frontend import FrontEnd, matched_filter, plan, wants_corners
+from dsp.lane import AtOnce, Lane
 from dsp.limiter import RATE
 from dsp.link import Link, Scheme
 from dsp.pulses import receive_filter
@@ -61,33 +62,13 @@ class LockEvent:
     reason: str
 
 
-class Lane(Protocol):
-    """Where the eye's share of the work is done: at once, or by another thread in order."""
-
-    def do(self, work: Callable[[], None]) -> None:
-        """Do ``work`` after everything given before."""
-
-    def wait(self) -> None:
-        """Return when everything given is done; raise what it raised."""
-
-
-class AtOnce:
-    """A lane that works in the caller's thread."""
-
-    def do(self, work: Callable[[], None]) -> None:
-        """Do it now."""
-        work()
-
-    def wait(self) -> None:
-        """Nothing is ever left to do."""
-
-
 class Chain:
     """Measures one link in a stream of blocks, however the stream is cut.
 
-    Samples are worked on in chunks of fixed length, counted from the stream's start or last gap. ``on_window`` gets the sums of each
-    full window and ``on_part`` those of the open one at each part of it, in the lane, ``on_event`` each gain or loss of lock as it
-    happens, ``on_track`` the symbols that go into the sums; `total` holds all of the sums once `finish` returned.
+    Samples are worked on in chunks of fixed length, counted from the stream's start or last gap. The eye is summed in the ``lane``, part
+    of that ``aside`` of it. ``on_window`` gets the sums of each full window and ``on_part`` those of the open one at each part of it,
+    in the lane, ``on_event`` each gain or loss of lock as it happens, ``on_track`` the symbols that go into the sums; `total` holds all
+    of the sums once `finish` returned.
     """
 
     def __init__(
@@ -99,6 +80,7 @@ class Chain:
         half_band_hz: float | None = None,
         options: ChainOptions | None = None,
         lane: Lane | None = None,
+        aside: Lane | None = None,
         on_window: Callable[[EyeSums], None] | None = None,
         on_part: Callable[[EyeSums], None] | None = None,
         on_event: Callable[[LockEvent], None] | None = None,
@@ -118,6 +100,7 @@ class Chain:
         self._look_every = round(max(LOOK_BACK, 0.04 * link.symbol_rate_hz) * self._plan.rail_sps)
         self._every = self.options.every
         self._lane = lane or AtOnce()
+        self._aside = aside or AtOnce()
         self._on_window = on_window
         self._on_part = on_part
         self._on_event = on_event
@@ -125,7 +108,7 @@ class Chain:
         # 20 ms, so that a fast link is shown soon; longer for slow ones, where each call would cost more than its samples
         near = 2 ** min(max(round(math.log2(rate * 0.02)), min(math.floor(math.log2(rate * 0.1)), 12), 9), 15)
         # where nobody waits for a window, longer ones once the link is found: each call costs less of the whole
-        far = max(near, 2 ** min(math.floor(math.log2(rate * 0.1)), 15)) if self.options.keep_total else near
+        far = max(near, 2 ** min(math.floor(math.log2(rate * 0.2)), 15)) if self.options.keep_total else near
         self._chunks = near, far
         self._chunk = near
         self._buffer = np.empty(far, np.complex64 if complex_in else np.float32)
@@ -347,6 +330,7 @@ class Chain:
                 finished=self._window_full,
                 part=self.options.part,
                 grown=self._on_part,
+                aside=self._aside,
             )
         self._meter.offset_ui = found.start.offset_ui
         assert self._carrier is not None

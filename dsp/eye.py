@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -17,6 +18,7 @@ from dsp._kernels import raster as kernel
 from dsp._kernels.lanes import LANES, SPAN
 from dsp.interpolation import expander, spread_weights
 from dsp.jitter import BLOCK, TimingSpectrum
+from dsp.lane import AtOnce, Lane
 from dsp.link import Scheme
 from dsp.residual import ResidualMeter, ResidualSums
 from dsp.stretches import EAGER, LONGEST, OFTEN, Stretch, Stretches
@@ -284,7 +286,7 @@ class EyeMeter:
 
     Symbols wait until ``slab`` of them have their neighbours; ``finished`` is called with the sums of each full window, ``grown`` with
     those of the open one at each ``part`` of it.
-    The first and last 16 symbols of an unbroken run serve as neighbours only.
+    The first and last 16 symbols of an unbroken run serve as neighbours only. About half of the work may be done ``aside``.
     """
 
     def __init__(
@@ -301,6 +303,7 @@ class EyeMeter:
         finished: Callable[[EyeSums], None],
         part: int | None = None,
         grown: Callable[[EyeSums], None] | None = None,
+        aside: Lane | None = None,
     ) -> None:
         self._scheme = scheme
         self._tables = tables
@@ -314,6 +317,7 @@ class EyeMeter:
         self._finished = finished
         self._part = part or window
         self._grown = grown
+        self._aside = aside or AtOnce()
         self.sums = EyeSums(scheme, phases)
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
         self._residual = ResidualMeter(scheme, phases, LAGS, thrifty=slab >= 1024)
@@ -380,12 +384,23 @@ class EyeMeter:
         self._classes[:rails, self._pending : self._pending + n] = track.classes[:rails]
         self._follow(track, n)
         late = self._loops[0, self._pending : self._pending + n]
-        for power in self._spectrum.push(late, waves, track.decided[:rails]):
-            self.sums.timing_power += power
-            self.sums.timing_blocks += 1
+        sums = self.sums
+        self._aside.do(lambda: self._add_spectrum(sums, late, waves, track.decided[:rails]))
         self._pending += n
         if self._pending - 2 * HALO >= self._slab:
             self._settle()
+        self._aside.wait()
+
+    def _add_spectrum(
+        self,
+        sums: EyeSums,
+        late: NDArray[np.float64],
+        waves: tuple[NDArray[np.float32], ...],
+        decided: NDArray[np.float32],
+    ) -> None:
+        for power in self._spectrum.push(late, waves, decided):
+            sums.timing_power += power
+            sums.timing_blocks += 1
 
     def end_segment(self, *, keep: bool = True) -> None:
         """The run of symbols breaks off here: sum what has its neighbours, forget the rest; without ``keep`` the open window too."""
@@ -486,35 +501,43 @@ class EyeMeter:
             self._pending = rest
 
     def _sum(self, first: int, count: int) -> None:
-        sums, rails, levels = self.sums, self._scheme.rails, self._scheme.levels
+        sums, rails = self.sums, self._scheme.rails
         last = first + count
         self._add_loops(first, last)
         gram, cross = self._normal_equations(first, last)
         sums.gram += gram
         sums.cross += cross
-        self._residual.push(
-            sums.residual, gram, cross, lambda: self._regressors(first, last),
-            np.stack([wave[0, first:last] for wave in self._waves]), self._classes[:rails], first,
-        )  # fmt: skip
         pieces = self._drawn_pieces(first, count)
-        rows = sums.rows
-        for rail, (wave, classes) in enumerate(zip(self._waves, self._classes, strict=False)):
-            left = sums.left[rail].reshape(COLUMNS, -1)
-            right = left if sums.right is None else sums.right[rail].reshape(COLUMNS, -1)
-            kernel.fill(
-                wave, pieces, classes, levels, sums.pair, self._expand, rows.count, rows.scale, rows.zero, left, right
+        values = np.stack([wave[0, first:last] for wave in self._waves])
+        self._aside.do(
+            lambda: self._residual.push(
+                sums.residual, gram, cross, lambda: self._regressors(first, last), values, self._classes[:rails], first
             )
-            kernel.crossings(
-                wave, pieces, classes, self._around, levels, 0.5,
-                sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
-            )  # fmt: skip
-            kernel.add_levels(wave[0, first:last], classes[first:last], sums.level_sums[rail])
+        )
+        for rail in range(1, rails):
+            self._aside.do(partial(self._count_rail, sums, rail, pieces, slice(first, last)))
+        self._count_rail(sums, 0, pieces, slice(first, last))
+        self._aside.wait()
         self._keep_stretches(first, last)
         sums.drawn += int(pieces[:, 1].sum())
         sums.symbols += count
         self._count += count
         if self._until_apart() <= 0:
             sums.set_apart()
+
+    def _count_rail(self, sums: EyeSums, rail: int, pieces: NDArray[np.int64], place: slice) -> None:
+        """Count a rail's traces, crossings and levels."""
+        wave, classes, levels, rows = self._waves[rail], self._classes[rail], self._scheme.levels, sums.rows
+        left = sums.left[rail].reshape(COLUMNS, -1)
+        right = left if sums.right is None else sums.right[rail].reshape(COLUMNS, -1)
+        kernel.fill(
+            wave, pieces, classes, levels, sums.pair, self._expand, rows.count, rows.scale, rows.zero, left, right
+        )
+        kernel.crossings(
+            wave, pieces, classes, self._around, levels, 0.5,
+            sums.crossing_bins[rail], sums.crossing_groups[rail], sums.crossing_edges[rail],
+        )  # fmt: skip
+        kernel.add_levels(wave[0, place], classes[place], sums.level_sums[rail])
 
     def _normal_equations(self, first: int, last: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """The pattern response's, of the pending symbols ``first .. last``; the wave's own energy goes into the sums."""

@@ -12,7 +12,7 @@ import numpy as np
 
 from dsp.acquisition import NotFound
 from dsp.block import Block, Samples
-from dsp.chain import AtOnce, Chain, ChainOptions, LockEvent
+from dsp.chain import Chain, ChainOptions, LockEvent
 from dsp.diagnosis import Diagnosis
 from dsp.errors import DspError
 from dsp.eye import EyeSums
@@ -29,6 +29,7 @@ from monitor.sources import Source
 _HEAD_SYMBOLS = 20_000  # what identification looks at, if the symbol rate is known
 _HEAD_SECONDS = 4.0
 _HEAD_SAMPLES = 1 << 20
+BESIDE_FROM_BD = 50_000.0  # symbol rate from which the eye is summed in threads of its own
 
 
 @dataclass(frozen=True, slots=True)
@@ -183,7 +184,7 @@ def run(
     wanted, options
         What is known of the link, and how to measure.
     threads
-        1 or 2: with 2 the eye's sums are made in a thread of their own.
+        1 or 2: with 2 a fast link's eye is summed in threads of their own, which two processors have enough to do with.
     progress
         Is told the samples taken so far.
     observe
@@ -307,14 +308,17 @@ def _measure(
     outcome: Outcome, identified: Identified, stream: Iterator[Block], options: ChainOptions, threads: int
 ) -> None:
     worst = _Worst()
-    lane = ThreadLane() if threads > 1 else None
+    # of a slow link the threads would hand over more than they do
+    beside = threads > 1 and identified.link.symbol_rate_hz >= BESIDE_FROM_BD
+    lane, aside = (ThreadLane(), ThreadLane()) if beside else (None, None)
     chain = Chain(
         identified.link,
         complex_in=outcome.source.info.complex_samples,
         centre_hz=identified.centre_hz,
         half_band_hz=identified.half_band_hz,
         options=options,
-        lane=lane or AtOnce(),
+        lane=lane,
+        aside=aside,
         on_window=lambda sums: worst.take(sums, chain.context()),
     )
     try:
@@ -322,8 +326,9 @@ def _measure(
             chain.push(block)
         chain.finish()
     finally:
-        if lane is not None:
-            lane.close()
+        for one in (lane, aside):
+            if one is not None:
+                one.close()
     outcome.events = chain.events
     outcome.slips, outcome.locked_samples, outcome.acquired_at = chain.slips, chain.locked_samples, chain.acquired_at
     if chain.total is None:

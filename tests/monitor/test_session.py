@@ -50,7 +50,8 @@ def test_what_is_not_given_is_found_and_named():
 
 
 @pytest.mark.parametrize("threads", [1, 2])
-def test_cuts_and_threads_change_no_figure(threads):
+def test_cuts_and_threads_change_no_figure(threads, monkeypatch):
+    monkeypatch.setattr("monitor.session.BESIDE_FROM_BD", 0.0)
     whole = run(InMemory(*blocks_of(qpsk())), GIVEN, ChainOptions(window=500), threads=1)
     cut = run(InMemory(*blocks_of(qpsk(), (1, 1, 700, 6001, 9999))), GIVEN, ChainOptions(window=500), threads=threads)
     left, right = document(whole), document(cut)
@@ -146,7 +147,9 @@ def test_a_symbol_rate_that_the_samples_cannot_carry_is_refused(rate):
             run(InMemory(*blocks_of(qpsk())), wanted, ChainOptions())
 
 
-def test_an_error_leaves_no_thread_behind():
+def test_an_error_leaves_no_thread_behind(monkeypatch):
+    monkeypatch.setattr("monitor.session.BESIDE_FROM_BD", 0.0)
+
     class Broken(InMemory):
         def blocks(self):
             yield from super().blocks()
