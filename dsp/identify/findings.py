@@ -40,7 +40,12 @@ class Identified:
 
 @dataclass(frozen=True, slots=True)
 class Guess(Generic[T]):
-    """One part of an answer: its value, how sure that is (0 to 1; 1 where it was given), and the next best; None: no other came near."""
+    """One part of an answer: its value, how sure that is (0 to 1; 1 where it was given), and the next best; None: no other came near.
+
+    The confidence is the share of answers with such evidence that were right among random links in white noise with an echo: the scheme by
+    name, the symbol rate within 20 ppm, the pulse within 3 points of opening of the transmitter's own, the carrier not another that the
+    constellation would allow. A link unlike these, such as one beside strong interference, is told more surely than it should be.
+    """
 
     value: T
     confidence: float

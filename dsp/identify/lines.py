@@ -10,10 +10,9 @@ from scipy import fft
 from dsp.identify.spectrum import Cells, Spectrum, fast_length
 
 _LIMIT = 3.0  # a whitened bin is held to this many times its rms: what is left of bare tones
-
-
 _BESIDE = 24  # bins about a line that its own leakage may fill
 _DEPTHS = (1e-3, 0.15)
+_FILLED = 0.25  # of a band that must stand out from the floor
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,7 +62,8 @@ class Products:
         weight = whitening(spectrum, low, high, depth)
         frequencies = spectrum.frequencies
         inside = np.flatnonzero(weight)
-        self.empty = inside.size < 4
+        # cells that stand out here and there are noise without a band
+        self.empty = inside.size < 4 or inside.size < _FILLED * (inside[-1] - inside[0] + 1)
         if self.empty:
             return
         cell = spectrum.width / spectrum.size

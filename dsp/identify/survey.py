@@ -11,10 +11,15 @@ from dsp.identify.findings import Band, Findings, FoundLink, Guess, Wanted
 from dsp.identify.search import Found, band_of, find_link
 from dsp.identify.spectrum import Spectrum, segments, spectrum_of
 
-# Scales of the confidences, which are 1 - exp(-evidence / scale). On the grid of tools/identification_grid.py
-_LINE = 60.0  # height of the clock's line over noise
-_LIKELIHOOD = 0.15  # nats a symbol over the next scheme
-_OPENING = 0.02  # of the eye, over the next pulse family
+# Errors among what is claimed, by evidence, as (those that no evidence rules out, those more without any, scale of the evidence). Roughly
+# fitted on 271 random links of tools/identification_grid.py with their signal to noise ratio from 10 dB below the threshold of a bit error
+# rate of 1e-3 to 12 dB above: 233 were found, the scheme was wrong in 1, the rate by more than 20 ppm in none, and 1 pulse lost more than 3
+# points of opening.
+_Errors = tuple[float, float, float]
+_RATE: _Errors = (0.005, 0.05, 100.0)  # evidence: height of the clock's line over noise
+_SCHEME: _Errors = (0.005, 0.10, 0.1)  # nats a symbol over the next scheme
+_PULSE: _Errors = (0.01, 0.06, 0.01)  # of the eye's opening, over the next family
+_CARRIER = 0.45  # error where the carrier stands half-way to the next frequency that would serve
 _MIRRORED = 0.1  # of a symbol rate, within which a band stands at minus the carrier given
 
 
@@ -70,8 +75,11 @@ def _taken(found: Found) -> Band:
 
 def _described(found: Found, spectrum: Spectrum, rate: float, wanted: Wanted) -> FoundLink:
     candidate, link = found.candidate, found.identified.link
-    line = _confidence(candidate.line.ratio, _LINE)
-    scheme = _confidence(candidate.margin, _LIKELIHOOD)
+    line = _confidence(candidate.line.ratio, _RATE)
+    # of few symbols chance alone may make as much
+    scheme = _confidence(candidate.margin, _SCHEME) - 0.5 * math.exp(
+        -max(candidate.margin, 0.0) * candidate.symbols / 4
+    )
     carrier = None
     mirrored = None
     if link.scheme.kind != "baseband":
@@ -79,7 +87,7 @@ def _described(found: Found, spectrum: Spectrum, rate: float, wanted: Wanted) ->
         # the M-th power does not tell a carrier from one that stands 1/M of the symbol rate beside it: the spectrum's middle does
         step = link.symbol_rate_hz / (link.scheme.symmetry or 1)
         other = None if link.scheme.kind == "frequency" else value - math.copysign(step, value)
-        carrier = Guess(value, 1.0 - candidate.off_centre**2, other)
+        carrier = Guess(value, 1.0 - _SCHEME[0] - _CARRIER * candidate.off_centre**4, other)
         if wanted.carrier_hz is not None:
             carrier = Guess(wanted.carrier_hz, 1.0)
             mirrored = _mirrored(spectrum, wanted.carrier_hz, link.symbol_rate_hz, rate)
@@ -89,10 +97,10 @@ def _described(found: Found, spectrum: Spectrum, rate: float, wanted: Wanted) ->
     return FoundLink(
         found.identified,
         Guess(link.symbol_rate_hz, 1.0 if wanted.symbol_rate_hz is not None else line),
-        Guess(link.scheme, 1.0) if wanted.scheme is not None else Guess(link.scheme, scheme, candidate.rival),
+        Guess(link.scheme, 1.0) if wanted.scheme is not None else Guess(link.scheme, max(scheme, 0.0), candidate.rival),
         Guess(link.pulse, 1.0)
         if wanted.pulse is not None
-        else Guess(link.pulse, _confidence(candidate.pulse_margin, _OPENING), candidate.other_pulse),
+        else Guess(link.pulse, _confidence(candidate.pulse_margin, _PULSE), candidate.other_pulse),
         carrier,
         candidate.snr_db,
         0.5 * (low + high) * rate,
@@ -104,8 +112,9 @@ def _described(found: Found, spectrum: Spectrum, rate: float, wanted: Wanted) ->
     )
 
 
-def _confidence(evidence: float, scale: float) -> float:
-    return 1.0 - math.exp(-max(evidence, 0.0) / scale)
+def _confidence(evidence: float, errors: _Errors) -> float:
+    least, without, scale = errors
+    return 1.0 - least - without * math.exp(-max(evidence, 0.0) / scale)
 
 
 def _notes(found: Found) -> tuple[str, ...]:

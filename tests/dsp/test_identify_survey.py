@@ -91,3 +91,11 @@ def test_line_codes_are_told_as_what_their_levels_are():
         assert link.scheme.value.name == scheme, name
         assert link.symbol_rate_hz.value == pytest.approx(10_000.0, rel=2e-5), name
         assert bool(link.notes) == (name == "manchester")
+
+
+@pytest.mark.parametrize("seed", range(4))
+@pytest.mark.parametrize("size", [25_000, 200_000])
+def test_white_noise_has_no_clock_line_at_all(seed, size):
+    rng = np.random.default_rng(seed)
+    noise = (rng.standard_normal(size) + 1j * rng.standard_normal(size)).astype(np.complex64)
+    assert survey_links(noise, 1e6).reason.startswith("no line in the spectrum")
