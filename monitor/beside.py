@@ -63,7 +63,7 @@ def _serve(pipe: Connection, other: Connection) -> None:
     for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP) if os.name == "posix" else (signal.SIGINT,):
         signal.signal(number, signal.SIG_IGN)  # a terminal sends them to all its processes; the watch decides
     with suppress(OSError, AttributeError):
-        os.nice(15)  # the stream goes first
+        os.nice(5)  # the stream goes first
     while True:
         try:
             work, args, more = pipe.recv()

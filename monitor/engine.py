@@ -100,7 +100,7 @@ class _Asked:
 
     def __init__(self, sums: EyeSums, context: Context, seconds: float, sample: int, options: EngineOptions) -> None:
         self.sample = sample
-        self.told = False
+        self.short: Reading | None = None  # of the same sums, where it has a line
         self.collected_at = seconds + COLLECT_SECONDS
         self.coverage_pct = 100.0 * sums.drawn / max(sums.symbols, 1)
         self._what = sums, context, options.display
@@ -183,7 +183,6 @@ class Engine:
         self._best_at = 0.0
         self.persistence_s: float | None = 2.0
         self._stalled = stalled
-        self._late: deque[_Asked] = deque()
         self._last_lock_loss: float | None = None
         self._reset_measures()
 
@@ -340,7 +339,6 @@ class Engine:
                 self._chain.finish()
         except DspError as error:
             self._cannot(str(error))
-        self._tell_late(all_of_them=True)
 
     def changed(self, *, sample_rate_hz: float | None = None, complex_in: bool | None = None, why: str) -> None:
         """The sender restarted or changed what it sends: begin anew with the link as given."""
@@ -491,9 +489,9 @@ class Engine:
         if not gained and self._asked is not None:
             if self._ending is not None or self._asked.ready():
                 self._collect()
-            elif self._asked.told:
-                self._late.append(self._asked)
-            self._asked = None
+            else:
+                self._tell_short(self._asked)
+                self._asked = None
         at = event.sample / self.sample_rate_hz
         self._locks.add(at, gained)
         self._last_lock_loss = None if gained else at
@@ -526,7 +524,6 @@ class Engine:
         measured = sum(block.symbols for block in self._blocks) + (self._block.symbols if self._block else 0)
         if self._asked is not None and seconds >= self._asked.collected_at and self._asked.ready():
             self._collect()
-        self._tell_late()
         due = min(self._next_judge, self._next_line) if self._options.judges else self._next_line
         if seconds >= due and measured >= min(LEAST_JUDGED, self._block_symbols):
             # at fixed places of the stream, so that who watches makes no difference to the lines
@@ -574,8 +571,10 @@ class Engine:
         if told:
             self._next_line = (seconds // self._options.every_s + 1) * self._options.every_s
             if asks and self._asked is not None:
-                self._asked.told = True
+                self._asked.short = reading
             else:
+                if self._asked is not None:
+                    self._tell_short(self._asked)
                 self._tell_reading(reading, self._chain.position, self._coverage_pct)
 
     def _collect(self) -> None:
@@ -589,14 +588,14 @@ class Engine:
         if self._reading is not None:
             self._reading = self._with_slow(self._reading, whole.reading)
         self._diagnosis = whole.diagnosis
-        if asked.told:
+        if asked.short is not None:
             self._tell_reading(whole.reading, asked.sample, asked.coverage_pct)
 
-    def _tell_late(self, *, all_of_them: bool = False) -> None:
-        """The lines whose whole readings were not there when lock was lost."""
-        while self._late and (all_of_them or self._late[0].ready()):
-            asked = self._late.popleft()
-            self._tell_reading(asked.whole().reading, asked.sample, asked.coverage_pct)
+    def _tell_short(self, asked: _Asked) -> None:
+        """Its line without what takes long, which is too late for it."""
+        if asked.short is not None:
+            self._tell_reading(asked.short, asked.sample, asked.coverage_pct)
+            asked.short = None
 
     def _with_slow(self, reading: Reading, slow: Reading | None) -> Reading:
         """With what only a whole reading has, and its interval about the opening as it is now."""
