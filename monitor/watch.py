@@ -346,7 +346,7 @@ class Watch:
     def _happened(self, event: StreamEvent) -> None:
         if event.kind in DESCRIBING and event.rate_hz is not None and event.format is not None:
             complex_in = event.format.startswith("c")
-            source_text = f"{self._source_text} · {event.encoding or event.format} · {event.rate_hz:g} Hz"
+            source_text = f"{self._source_text} · {event.encoding or event.format} · {event.rate_hz:.10g} Hz"
             if self._tap is not None:
                 self._tap.describe(event.rate_hz, complex_in=complex_in, centre_hz=event.centre_hz)
             if self._engine is None:
