@@ -322,9 +322,8 @@ class EyeMeter:
         self._expand = expander(COLUMNS // phases, tables.band / (phases / sps) if tables.band else 0.0)
         self._residual = ResidualMeter(scheme, phases, LAGS, thrifty=slab >= 1024)
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
-        self._spread = (
-            None  # weights of a symbol's eight points at once, where they can be told by the same samples on all rails
-        )
+        # weights of a symbol's eight points at once, where the same samples tell them on all rails
+        self._spread: NDArray[np.float32] | None = None
         if tables.band and phases == LANES and not scheme.stagger:
             self._spread = spread_weights(tables.band, sps / LANES, LANES, SPAN)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)

@@ -52,7 +52,7 @@ class Benchmark:
     what
         What is timed, with its settings.
     unit
-        What is counted: ``samples``, ``outputs`` or ``points``.
+        What is counted: ``samples``, ``outputs``, ``points`` or ``products``.
     size
         How many of them a call handles; ``--quick`` takes an eighth.
     prepare
@@ -284,6 +284,54 @@ def interpolate(size: int) -> Callable[[], Any]:
     return lambda: resample_real(x, table, at, 0.0, 1.0, 0.0, out)
 
 
+def interpolate_eight(size: int) -> Callable[[], Any]:
+    """Eight points a symbol of both rails, the carrier taken out: what the eye is made from."""
+    from dsp._kernels.lanes import LANES, SPAN
+    from dsp._kernels.raster import resample_eight
+    from dsp.interpolation import spread_weights
+
+    count = size // (2 * LANES)
+    x_i, x_q = real_noise(8 * count + 64)[: 4 * count + 64], real_noise(8 * count + 64)[4 * count :]
+    at = 8.3 + 4.0003 * np.arange(count + 1)
+    cycles = 1e-4 * np.arange(count + 1)
+    table = spread_weights(0.18, 0.5, LANES, SPAN)
+    waves = [np.empty((LANES, count), np.float32) for _ in range(2)]
+    one, nought = np.float32(1.0), np.float32(0.0)
+    return lambda: resample_eight(x_i, x_q, table, at, 0.0, cycles, 0.0, True, one, one, nought, nought, *waves)
+
+
+def lagged_sums(size: int) -> Callable[[], Any]:
+    """21 lags of decided levels with 8 phases of the wave, as a matrix product with copies of every lag."""
+    levels, wave = lagged_inputs(size)
+    lags = range(21)
+
+    sums = np.empty((21, 8), np.float32)
+
+    def call() -> None:
+        for at in range(0, wave.shape[1] - 20, 4096):
+            part = wave[:, at : min(at + 4096, wave.shape[1] - 20)]
+            copies = np.stack([levels[at + lag : at + lag + part.shape[1]] for lag in lags])
+            np.matmul(copies, part.T, out=sums)
+
+    return call
+
+
+def lagged_inputs(size: int) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """Two-level symbols and a wave of 8 phases a symbol, ``size`` products of 21 lags."""
+    count = size // (21 * 8)
+    levels = np.random.default_rng(5).choice(np.array([-1.0, 1.0], np.float32), count + 20)
+    return levels, np.ascontiguousarray(real_noise(8 * (count + 20)).reshape(8, -1))
+
+
+def pattern_sums(size: int) -> Callable[[], Any]:
+    """The same sums by the kernel."""
+    from dsp._kernels.raster import add_cross
+
+    levels, wave = lagged_inputs(size)
+    sums = np.zeros((21, 8))
+    return lambda: add_cross(wave, levels, 20, wave.shape[1], 0, 21, sums)
+
+
 def class_raster(size: int) -> Callable[[], Any]:
     """Traces of two-level symbols: 8 phases a symbol interpolated to 64 columns, 4 classes, 1024 rows."""
     from dsp._kernels.raster import fill
@@ -405,6 +453,24 @@ PROJECT: tuple[Benchmark, ...] = (
     Benchmark("decimator", "dsp.filters: same filter, every 4th output", "samples", 4_000_000, decimator, "upfirdn"),
     Benchmark(
         "resample", "dsp: eight taps, real, one output a sample, float32", "outputs", 2_000_000, interpolate, "interp"
+    ),
+    Benchmark(
+        "resample-eight",
+        "dsp: eight points a symbol, two rails, carrier taken out, float32",
+        "outputs",
+        2_000_000,
+        interpolate_eight,
+        "interp",
+    ),
+    Benchmark(
+        "lagged-product",
+        "numpy: 21 lags with 8 phases, matrix product of stacked copies, one thread",
+        "products",
+        80_000_000,
+        lagged_sums,
+    ),
+    Benchmark(
+        "pattern-sums", "dsp: the same sums without copies", "products", 80_000_000, pattern_sums, "lagged-product"
     ),
     Benchmark(
         "raster",
