@@ -35,9 +35,7 @@ _SLOW_KEYS = ("equaliser", "budget", "verdict", "ber_low", "ber_high")  # only i
 PART_SECONDS = 0.025  # how much of the stream one step of the picture takes in
 JUDGE_SECONDS = 0.2  # between two readings that alarms are judged by
 WHOLE_SECONDS = 1.0  # between two readings of what takes long, where nobody asks for a line
-COLLECT_SECONDS = (
-    0.25  # so much later one is collected, at a fixed place of the stream; where it is not there yet, when it is
-)
+COLLECT_SECONDS = 0.25  # so much later one is collected, at a fixed place of the stream; a late one when it is there
 TICK_SECONDS = 0.2  # in which clipped samples are counted together
 CLIPPED_PCT = 0.01  # more of a tick is clipping
 LEAST_JUDGED = 1000  # symbols
@@ -486,12 +484,8 @@ class Engine:
 
     def _lock_event(self, event: LockEvent) -> None:
         gained = event.state == "gained"
-        if not gained and self._asked is not None:
-            if self._ending is not None or self._asked.ready():
-                self._collect()
-            else:
-                self._tell_short(self._asked)
-                self._asked = None
+        if not gained:
+            self._collect_now(wait=self._ending is not None)
         at = event.sample / self.sample_rate_hz
         self._locks.add(at, gained)
         self._last_lock_loss = None if gained else at
@@ -591,6 +585,13 @@ class Engine:
         if asked.short is not None:
             self._tell_reading(whole.reading, asked.sample, asked.coverage_pct)
 
+    def _collect_now(self, *, wait: bool = False) -> None:
+        """What comes is another stretch: take in the whole reading of this one if it is there, else its line goes without."""
+        if self._asked is not None and not wait and not self._asked.ready():
+            self._tell_short(self._asked)
+            self._asked = None
+        self._collect()
+
     def _tell_short(self, asked: _Asked) -> None:
         """Its line without what takes long, which is too late for it."""
         if asked.short is not None:
@@ -637,7 +638,7 @@ class Engine:
 
     def mark(self, name: str = "") -> None:
         """Note the present reading; changes are told against it from now on."""
-        self._collect()
+        self._collect_now()
         reading = self._reading
         self._marks.append(
             Mark(

@@ -30,7 +30,7 @@ _PUBLISH_UNSEEN_S = 0.25
 _PIECE_S = 0.05  # what the engine is given at once
 _PIECE_SAMPLES = 65536
 _OLDEST_S = 0.4
-# so long samples wait when work is to be left out, and when it can be taken up again; a whole reading takes a tenth of a second
+# so long samples wait when work is to be left out, and when it can be taken up again
 _LATE_S, _PROMPT_S = 0.2, 0.12
 _LOOK_S = 0.1  # between two looks at what waits
 _RELIEF_S, _RECOVERY_S = 0.25, 1.0  # at most one step of either in so long
