@@ -64,7 +64,7 @@ def test_liquid_dsp_streams_of_any_rate_are_open(tmp_path, scheme, sps, carrier)
 
 
 @pytest.mark.parametrize(("sps", "carrier"), PLACES)
-@pytest.mark.parametrize("scheme", ["bpsk", "qpsk", "16qam"])
+@pytest.mark.parametrize("scheme", LIQUID_OPENING)
 def test_liquid_dsp_streams_are_identified(tmp_path, scheme, sps, carrier):
     sent = liquid_stream(scheme, sps, carrier=carrier, symbols=12000 if sps < 10 else 5000)
     outcome = replay(sent, tmp_path, given=False)
@@ -72,7 +72,7 @@ def test_liquid_dsp_streams_are_identified(tmp_path, scheme, sps, carrier):
     check(outcome, sent, opening=90)
 
 
-KOMM_OPENING = {"pam2": 95, "pam4": 95, "qpsk": 95, "16qam": 95, "64qam": 95}
+KOMM_OPENING = {"pam2": 95, "pam4": 95, "pam8": 90, "bpsk": 95, "qpsk": 95, "8psk": 88, "16qam": 95, "64qam": 95}
 
 
 @pytest.mark.parametrize("pulse", ["rrc:0.35", "rc:0.35"])
@@ -89,7 +89,7 @@ def test_komm_s_rectangles_are_open(tmp_path, scheme):
 
 
 @pytest.mark.parametrize("pulse", ["rrc:0.35", "rc:0.35", "rect"])
-@pytest.mark.parametrize("scheme", ["pam2", "pam4", "qpsk", "16qam"])
+@pytest.mark.parametrize("scheme", KOMM_OPENING)
 def test_komm_streams_are_identified(tmp_path, scheme, pulse):
     sent = komm_stream(scheme, 8 if pulse == "rect" else 4, pulse)
     check(replay(sent, tmp_path, given=False), sent, opening=60)
@@ -105,23 +105,20 @@ def test_minimodem_s_tones_are_open(tmp_path, baud, rate, given):
     assert outcome.reading.carrier_hz == pytest.approx(np.mean(sent.tones_hz), abs=0.02 * sent.symbol_rate_hz)
 
 
+@pytest.mark.parametrize("given", [True, False], ids=["given", "found"])
 @pytest.mark.parametrize("is_complex", [True, False], ids=["iq", "real"])
 @pytest.mark.parametrize("levels", [2, 4])
-def test_codec2_s_tones_are_open(tmp_path, levels, is_complex):
+def test_codec2_s_tones_are_open(tmp_path, levels, is_complex, given):
     sent = codec2_fsk(tmp_path, levels, is_complex)
-    outcome = replay(sent, tmp_path)
+    outcome = replay(sent, tmp_path, given=given)
     check(outcome, sent, opening=60, carrier=False)
     assert outcome.reading.carrier_hz == pytest.approx(sent.carrier_hz, abs=0.02 * sent.symbol_rate_hz)
 
 
-def test_codec2_s_two_tones_in_audio_are_identified(tmp_path):
-    sent = codec2_fsk(tmp_path, 2, is_complex=False)
-    check(replay(sent, tmp_path, given=False), sent, opening=75, carrier=False)
-
-
-def test_liquid_dsp_s_gmsk_is_open(tmp_path):
+@pytest.mark.parametrize("given", [True, False], ids=["given", "found"])
+def test_liquid_dsp_s_gmsk_is_open(tmp_path, given):
     sent = liquid_gmsk(8, 0.5)
-    check(replay(sent, tmp_path), sent, opening=45, carrier=False)
+    check(replay(sent, tmp_path, given=given), sent, opening=45, carrier=False)
 
 
 @pytest.mark.parametrize("given", [True, False], ids=["given", "found"])

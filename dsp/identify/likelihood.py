@@ -14,6 +14,7 @@ Values = NDArray[np.float64]
 _RING_POINTS = 48
 _ROUNDS = 20
 _NONE = -1e9  # log-likelihood of anything in values that are all 0
+_RAIL_FLOOR = 1e-3  # of the power of both, that each rail is taken to have
 _STRAY = 0.02  # share of symbols that may be anything: gaps, the first of a burst
 
 
@@ -135,7 +136,9 @@ def _ring(values: Values, count: int, scheme: Scheme | None) -> Agreement:
 def no_structure(values: Values) -> float:
     """Mean log-likelihood of a symbol (nats) under the best of what is no constellation: Gaussian rails, or a ring without phase."""
     rails, _ = values.shape
-    variances = np.maximum(np.mean(values**2, axis=1), 1e-30)
+    variances = np.mean(values**2, axis=1)
+    # a rail without noise is no sign of anything
+    variances = np.maximum(variances, max(_RAIL_FLOOR * float(np.mean(variances)), 1e-30))
     pooled = float(np.mean(variances))
     gaussian = float(-0.5 * rails * (math.log(2 * math.pi * pooled) + 1.0))
     if rails == 1:

@@ -290,8 +290,9 @@ def _held(
     except DspError as error:
         return NotFound(str(error))
     # a frequency discriminator suffers from all noise that it is given
-    centre, half = place_of(candidate, link, spectrum.holding(band) if scheme.kind == "frequency" else band)
     is_complex = bool(np.iscomplexobj(samples))
+    own = spectrum.holding(band) if scheme.kind == "frequency" else band
+    centre, half = place_of(candidate, link, own, is_complex=is_complex)
     front = plan(link, complex_in=is_complex, centre=centre, half_band=half)
     need = int(_TRIAL_SYMBOLS * link.samples_per_symbol)
     start = busiest(samples, need)
@@ -322,11 +323,11 @@ def _held(
     return Found(identified, candidate, outcome, band)
 
 
-def place_of(candidate: Candidate, link: Link, band: Band) -> tuple[float, float | None]:
+def place_of(candidate: Candidate, link: Link, band: Band, *, is_complex: bool) -> tuple[float, float | None]:
     """Centre and half band of the front end, cycles a sample, for a candidate."""
     if link.scheme.kind == "carrier" and link.carrier_hz is None:
         return candidate.centre, None
-    return placement(link, band, is_complex=True)
+    return placement(link, band, is_complex=is_complex or link.scheme.kind == "carrier")
 
 
 def placement(link: Link, band: Band, *, is_complex: bool) -> tuple[float, float | None]:
@@ -336,7 +337,11 @@ def placement(link: Link, band: Band, *, is_complex: bool) -> tuple[float, float
         return 0.0, None
     if link.scheme.kind == "frequency":
         centre = band.centre if carrier is None else carrier
-        return centre, min(band.half * 1.2 + 0.35 / link.samples_per_symbol, 0.45)
+        half = min(band.half * 1.2 + 0.35 / link.samples_per_symbol, 0.45)
+        if not is_complex:
+            # beyond 0 and half the sample rate lies the mirror image of a real wave, its faint edge first
+            half = min(half, max(min(centre, 0.5 - centre) + 0.25 / link.samples_per_symbol, band.half))
+        return centre, half
     if is_complex:
         return carrier or 0.0, None
     return band.centre if carrier is None else carrier, None
