@@ -388,7 +388,6 @@ class EyeMeter:
         self._pending += n
         if self._pending - 2 * HALO >= self._slab:
             self._settle()
-        self._aside.wait()
 
     def _add_spectrum(
         self,
@@ -404,6 +403,7 @@ class EyeMeter:
     def end_segment(self, *, keep: bool = True) -> None:
         """The run of symbols breaks off here: sum what has its neighbours, forget the rest; without ``keep`` the open window too."""
         self._settle()
+        self._aside.wait()
         if not keep:
             self.restart_window()
         self._residual.restart()
@@ -486,13 +486,16 @@ class EyeMeter:
             self._sum(first, count)
             first += count
             if self._grown is not None and self.sums.symbols % self._part == 0:
+                self._aside.wait()
                 self._grown(self.sums)
             if self.sums.symbols == self._window:
+                self._aside.wait()
                 self._windows += 1
                 self._finished(self.sums)
                 self.sums = EyeSums(self._scheme, self._phases)
         keep = first - HALO
         if keep > 0:
+            self._aside.wait()
             rest = self._pending - keep
             pending: tuple[NDArray[Any], ...] = (*self._waves, self._decided, self._classes, self._loops)
             for array in pending:
@@ -516,12 +519,12 @@ class EyeMeter:
         for rail in range(1, rails):
             self._aside.do(partial(self._count_rail, sums, rail, pieces, slice(first, last)))
         self._count_rail(sums, 0, pieces, slice(first, last))
-        self._aside.wait()
         self._keep_stretches(first, last)
         sums.drawn += int(pieces[:, 1].sum())
         sums.symbols += count
         self._count += count
         if self._until_apart() <= 0:
+            self._aside.wait()
             sums.set_apart()
 
     def _count_rail(self, sums: EyeSums, rail: int, pieces: NDArray[np.int64], place: slice) -> None:
