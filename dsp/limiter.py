@@ -10,7 +10,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import oaconvolve
 
 from dsp.eye import EARLIEST, HALO, LAGS, LATEST
 from dsp.link import Scheme
@@ -186,6 +185,8 @@ class Limiter:
 
     def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
         """Powers of the wave ahead of the filter, behind the filter: ``(features, n)``, of I/Q real over imaginary parts."""
+        from scipy.signal import oaconvolve  # slow to import, and seldom needed
+
         rails, n = self._decided.shape
         impulses = np.zeros((rails, n * RATE), np.float32)
         impulses[:, ::RATE] = self._decided

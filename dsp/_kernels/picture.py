@@ -30,7 +30,7 @@ def share_rows(counts, edges, pixels):
             last = now
 
 
-@njit(types.void(types.float32[:, ::1], types.int64, types.int64, types.float32, types.float32), nogil=True)
+@njit(types.void(types.float32[:, ::1], types.int64, types.int64, types.float32, types.float32), nogil=True, cache=True)
 def _raise(drawn, row, pixel, part, value):
     above = min(row, drawn.shape[0] - 1)
     below = min(row + 1, drawn.shape[0] - 1)
@@ -38,7 +38,7 @@ def _raise(drawn, row, pixel, part, value):
     drawn[below, pixel] = max(drawn[below, pixel], value * part)
 
 
-@njit(types.void(_F32_2, types.int64, types.int64[::1]), nogil=True)
+@njit(types.void(_F32_2, types.int64, types.int64[::1]), nogil=True, cache=True)
 def _nearest(tone, column, nearest):
     """For every row that of the nearest tone above 0 in this column; far outside where there is none. Of two as near, the one before."""
     rows = tone.shape[0]

@@ -5,7 +5,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import fft, signal
+from scipy import fft
 
 from dsp.acquisition import interpolate, power_line
 from dsp.identify.likelihood import Agreement, agreement, decide, no_structure, repetition, surprise
@@ -75,6 +75,8 @@ class Wave:
 
 
 def _filtered(wave: Wave, pulse: Pulse) -> NDArray[np.complex128]:
+    from scipy import signal  # slow to import; a link that is given needs it not
+
     taps = receive_filter(pulse, wave.sps)
     if taps.size == 1:
         return wave.samples
@@ -597,6 +599,8 @@ def _frequency_pulse(
 
 
 def _modelled(pulse: Pulse, symbols: Values, index: float, half: float, offset: float, sps: int, band: float) -> Values:
+    from scipy import signal  # slow to import; a link that is given needs it not
+
     reach = 8
     t = np.arange(-reach * sps, reach * sps + 1) / sps
     number = pulse.number or 0.0
