@@ -20,6 +20,7 @@ from dsp.tracking import tables_for
 _SYMBOLS = 4096  # that are looked at
 _JUDGED = 1536  # of them, by which likelihoods are compared
 _SCAN = 32
+_REACH = 64  # symbols, beyond which no receive filter reaches
 _CARRIER_FAMILIES = ("rrc", "rc", "rect")
 _LEAST = 200  # symbols, below which nothing is claimed
 _CLEAN_LAGS = (-6, 10)
@@ -72,6 +73,7 @@ class Wave:
     sps: float
     rate: float
     half: float  # band in symbol rates
+    start: int = 0  # place of the first sample in the whole wave
 
 
 def _filtered(wave: Wave, pulse: Pulse) -> NDArray[np.complex128]:
@@ -88,13 +90,16 @@ def value_at(
 ) -> NDArray[np.complex128]:
     """The wave at any instants; ``samples``: what a filter made of it."""
     samples = wave.samples if samples is None else samples
+    if not instants.size:
+        return np.zeros(0, np.complex128)
+    first = max(math.floor(float(instants.min())) - BEFORE, 0)
+    part = samples[first : math.ceil(float(instants.max())) + TAPS]
     table = tables_for(wave.sps, min(wave.half, 0.4 * wave.sps)).value
-    real = interpolate(np.ascontiguousarray(samples.real, np.float32), instants, table).astype(np.float64)
-    if not np.any(samples.imag):
+    real = interpolate(np.ascontiguousarray(part.real, np.float32), instants - first, table).astype(np.float64)
+    if not np.any(part.imag):
         return np.asarray(real, dtype=np.complex128)
-    return np.asarray(
-        real + 1j * interpolate(np.ascontiguousarray(samples.imag, np.float32), instants, table), dtype=np.complex128
-    )
+    imag = interpolate(np.ascontiguousarray(part.imag, np.float32), instants - first, table)
+    return np.asarray(real + 1j * imag, dtype=np.complex128)
 
 
 def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
@@ -109,6 +114,16 @@ def _busiest(samples: NDArray[np.complex128], sps: float) -> tuple[float, int]:
     runs = np.convolve(power, np.ones(8), mode="valid")
     first = int(np.argmax(runs > 0.9 * runs.max()))
     return max(first * block, margin), min(_SYMBOLS, int((samples.size - margin - first * block) / sps) - 2)
+
+
+def _looked_at(wave: Wave) -> Wave:
+    """The part of a wave that is looked at, and what filters reach beyond it."""
+    start, count = _busiest(wave.samples, wave.sps)
+    reach = _REACH * wave.sps
+    if wave.samples.size < (count + 3 * _REACH) * wave.sps:
+        return wave
+    first = max(int(start - reach), 0)
+    return replace(wave, samples=wave.samples[first : int(start + count * wave.sps + reach)], start=first)
 
 
 def _timed(samples: NDArray[np.complex128], wave: Wave, stagger: bool = False) -> Values:
@@ -190,7 +205,7 @@ def pam_candidate(
         tries = tuple(dict.fromkeys([*(shape.pulse for shape in shapes[:1]), Pulse("rect"), Pulse("none")]))
     best: tuple[float, Pulse] | None = None
     for pulse in tries:
-        wave = _real_wave(spectrum, rate, pulse)
+        wave = _looked_at(_real_wave(spectrum, rate, pulse))
         filtered = _filtered(wave, pulse)
         instants = _timed(filtered, wave)
         if instants.size < _LEAST:
@@ -204,7 +219,7 @@ def pam_candidate(
     pulse = best[1]
     result: Candidate | None = None
     for last in (False, True):
-        wave = _real_wave(spectrum, rate, pulse)
+        wave = _looked_at(_real_wave(spectrum, rate, pulse))
         filtered = _filtered(wave, pulse)
         instants = _timed(filtered, wave)
         values = value_at(wave, instants, filtered).real[None]
@@ -217,7 +232,7 @@ def pam_candidate(
             raw = _real_wave(spectrum, rate, Pulse("none"))
             scale = raw.sps / wave.sps
             sampled = np.stack(
-                [value_at(raw, (instants + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)]
+                [value_at(raw, (instants + wave.start + (p / PHASES - 0.5) * wave.sps) * scale) for p in range(PHASES)]
             )
             response = response_of(sampled, decided[0] + 0j, min(raw.half, 0.5 * PHASES))
             ranking = (
@@ -356,7 +371,7 @@ def carrier_candidates(
     pulse = pulses[0] if pulses is not None else shapes[0].pulse
     result: Candidate | None = None
     for last in (False, True):
-        wave = _carrier_wave(spectrum, rate, centre, pulse)
+        wave = _looked_at(_carrier_wave(spectrum, rate, centre, pulse))
         filtered = _filtered(wave, pulse)
         instants = _timed(filtered, wave)
         if instants.size < _LEAST:
