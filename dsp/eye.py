@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from dsp._kernels import raster as kernel
 from dsp._kernels.lanes import LANES, SPAN
-from dsp.interpolation import expander, spread_weights
+from dsp.interpolation import TAPS, expander, spread_weights
 from dsp.jitter import BLOCK, TimingSpectrum
 from dsp.lane import AtOnce, Lane
 from dsp.link import Scheme
@@ -324,7 +324,8 @@ class EyeMeter:
         self._spectrum = TimingSpectrum(phases, corners=not tables.band)
         # weights of a symbol's eight points at once, where the same samples tell them on all rails
         self._spread: NDArray[np.float32] | None = None
-        if tables.band and phases == LANES and not scheme.stagger:
+        reached = int(1 + sps / LANES * (LANES - 1)) + TAPS <= SPAN
+        if tables.band and phases == LANES and not scheme.stagger and reached:
             self._spread = spread_weights(tables.band, sps / LANES, LANES, SPAN)
         self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th

@@ -7,6 +7,7 @@ from dsp.eye import COLUMNS, EARLIEST, HALO, LAGS, LATEST, RUN, EyeMeter, EyeSum
 from dsp.link import SCHEMES, find_scheme
 from dsp.pulses import raised_cosine
 from dsp.tracking import Track, tables_for
+from tests.dsp.streams import link_of, run, send
 
 SPS = 4.0
 ROLLOFF = 0.5
@@ -244,3 +245,9 @@ def test_a_line_needs_three_points_that_differ():
     assert sums.line() is None
     sums.add(1, np.array([7.0]), np.array([3.0]))
     assert sums.line()[0] == pytest.approx(1.0)
+
+
+@pytest.mark.parametrize("sps", [8.5, 10.0, 15.9])
+def test_square_pulses_on_a_carrier_are_met_at_any_rate_that_their_corners_ask_for(sps):
+    chain = run(link_of("qpsk", sps, "rect"), send("qpsk", sps, pulse="rect", symbols=3000, snr_db=30.0).samples)
+    assert chain.total.symbols > 2900
