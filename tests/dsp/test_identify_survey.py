@@ -99,3 +99,16 @@ def test_white_noise_has_no_clock_line_at_all(seed, size):
     rng = np.random.default_rng(seed)
     noise = (rng.standard_normal(size) + 1j * rng.standard_normal(size)).astype(np.complex64)
     assert survey_links(noise, 1e6).reason.startswith("no line in the spectrum")
+
+
+@pytest.mark.parametrize("scheme", ["bpsk", "pi4dqpsk", "8psk", "16qam", "64qam"])
+def test_rate_and_carrier_come_near_the_bound_of_what_can_be_known(scheme):
+    """Modified Cramér-Rao bounds: D'Andrea, Mengali and Reggiannini, IEEE Trans. Commun. 42, 1994; the rate's is that of a line's slope."""
+    symbols, snr, rolloff = 12_000, 10**2.6, 0.35
+    sent = send(scheme, 4.3, symbols=symbols, snr_db=26.0, clock_ppm=40.0, carrier_hz=321.0)
+    found = survey_links(sent.samples, 4.3 * BAUD).links[0]
+    xi = 1 / 12 + rolloff**2 * (1 / 4 - 2 / np.pi**2)
+    rate_bound = np.sqrt(12 / (symbols**3 * 8 * np.pi**2 * xi * snr))
+    carrier_bound = np.sqrt(3 / (2 * np.pi**2 * symbols**3 * snr))
+    assert found.symbol_rate_hz.value / BAUD - 1 == pytest.approx(40e-6, abs=5 * rate_bound)
+    assert found.carrier_hz.value == pytest.approx(321.0, abs=5 * carrier_bound * BAUD)
