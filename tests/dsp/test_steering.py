@@ -124,7 +124,7 @@ def test_after_a_jump_of_the_carrier_the_link_is_found_again_and_nothing_false_i
     assert states in (["gained", "lost", "gained", "lost"], ["gained", "lost"])
     if len(states) == 2:  # the loop itself has caught it
         assert abs(jump) < 0.01
-    assert chain.total.symbols > 6200
+    assert chain.total.symbols > 5000  # what a chunk and an attempt hold is given up
     assert Figures(chain.total, chain.context()).reading().snr_db == pytest.approx(snr_db, abs=0.4)
 
 
