@@ -518,6 +518,7 @@ class LockGuard:
         self._scheme = scheme
         self._step = max(self._part // self.LOOKED_AT, 1)
         self._least = 0.0
+        self._energy = scheme.symbol_energy()
         self._phases: deque[float] = deque(maxlen=4)
         if scheme.symmetry:
             powers = power_mean(scheme.points(), scheme)
@@ -549,9 +550,11 @@ class LockGuard:
             self._signal += signal
             self._noise += noise
             if self._least:
-                looked_at = slice(at + -self._count % self._step, at + n, self._step)
-                z = track.values[0, looked_at] + 1j * track.values[1, looked_at]
-                self._upright += float(np.sum(power_mean(z, self._scheme) - self._least))
+                first = at + -self._count % self._step
+                power, looked_at = kernel.upright(
+                    track.values, first, at + n, self._step, self._scheme.symmetry, self._energy
+                )
+                self._upright += power - self._least * looked_at
             self._count += n
             at += n
             if self._count == self._part:

@@ -59,3 +59,29 @@ def total_of(values, first, last):
     for k in range(part.size):
         total += part[k]
     return total
+
+
+@njit(
+    types.Tuple((types.float64, types.int64))(
+        _F32_2, types.int64, types.int64, types.int64, types.int64, types.float64
+    ),
+    nogil=True, cache=True, fastmath=_FAST,
+)  # fmt: skip
+def upright(values, first, last, step, symmetry, energy):
+    """Sum of `dsp.chain.power_mean` over every ``step``-th value of ``(2, n)`` from ``first`` to before ``last``, and of how many."""
+    total = 0.0
+    count = 0
+    for k in range(first, last, step):
+        re, im = types.float64(values[0, k]), types.float64(values[1, k])
+        size = re * re + im * im
+        weight = min(size / energy, 4.0)
+        left = symmetry
+        while left > 1:
+            re, im = re * re - im * im, 2.0 * re * im
+            # kept at length 1
+            length = max(size, 1e-24)
+            re, im, size = re / length, im / length, 1.0
+            left //= 2
+        total += re * weight
+        count += 1
+    return (total if symmetry == 2 else -total), count

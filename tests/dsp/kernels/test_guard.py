@@ -4,6 +4,8 @@ import numpy as np
 import pytest
 
 from dsp._kernels import guard as kernel
+from dsp.chain import power_mean
+from dsp.link import find_scheme
 
 
 def test_powers_are_those_of_levels_and_errors():
@@ -33,3 +35,14 @@ def test_silence_begins_with_the_first_quiet_value(rails, begin):
 def test_a_total_is_the_sum_of_its_part():
     values = np.random.default_rng(3).standard_normal(500)
     assert kernel.total_of(values, 20, 470) == pytest.approx(values[20:470].sum())
+
+
+@pytest.mark.parametrize("name", ["bpsk", "qpsk", "8psk", "64qam"])
+def test_the_power_that_takes_the_data_away_is_summed_as_it_is_for_points(name):
+    scheme = find_scheme(name)
+    values = np.random.default_rng(3).standard_normal((2, 1000)).astype(np.float32)
+    looked_at = slice(3, 990, 7)
+    points = power_mean(values[0, looked_at] + 1j * values[1, looked_at], scheme)
+    total, count = kernel.upright(values, 3, 990, 7, scheme.symmetry, scheme.symbol_energy())
+    assert count == points.size
+    assert total == pytest.approx(float(points.sum()), abs=1e-3)
