@@ -19,8 +19,9 @@ def frame(samples, sample, *, stream="west", rate=RATE):
     return [FrameHeader(stream, sample, rate, name).to_bytes(), samples.tobytes()]
 
 
-def send_all(socket, samples, *, start=0, step=2400, **more):
+def send_all(socket, samples, *, start=0, step=2400, pace_s=0.0, **more):
     for at in range(0, samples.size, step):
+        time.sleep(pace_s)
         socket.send_multipart(frame(samples[at : at + step], start + at, **more))
 
 
