@@ -14,8 +14,23 @@ from dsp.mixture import Spread, spread
 from dsp.pattern import CURSOR, Pattern
 from dsp.reading import Budget
 from dsp.residual import Split, pattern_around
+from dsp.tracking import Tracker
 
+_PATTERNS_LEFT = 0.1  # share of the data's error that a timing detector which cancels patterns still follows, as measured
+_UNTOLD = 0.03  # of a bend's power, what the wave that is put together from decisions does not tell, as measured
 _TONE_POINTS = 24  # places that stand for a sinusoid's amplitudes
+
+
+@dataclass(frozen=True, slots=True)
+class Answers:
+    """What the receiver's loops make of each unit of variance that data put beside a symbol, which no noise is to be blamed for.
+
+    ``timing`` in UI squared, ``turn`` in radians squared, ``level`` (of the level unit's wander) in level units squared.
+    """
+
+    timing: float
+    turn: float
+    level: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,8 +51,8 @@ class LinkModel:
         Variances of timing jitter shared by neighbours, UI squared, and of phase jitter, radians squared.
     deviations
         What patterns of a rail's own symbols add beyond the response where there is no telling why, ``(rails, patterns)``.
-    turn_by_isi
-        What of ``turn`` is the carrier loop's answer to ISI.
+    answers
+        What of the jitter and noise comes with ISI, imbalance and bend.
     limiter, bend
         A bend of the amplitude and what it does to this link; None if there is none.
     uneven
@@ -58,7 +73,7 @@ class LinkModel:
     tone: NDArray[np.float64]
     common: float
     turn: float
-    turn_by_isi: float
+    answers: Answers
     deviations: NDArray[np.float64]
     uneven: NDArray[np.float64]
     gains: NDArray[np.float64]
@@ -164,25 +179,59 @@ class LinkModel:
 
     # -- without one cause ---------------------------------------------------------------------------------------------
 
+    def _disturbed(self) -> tuple[float, float, NDArray[np.float64]]:
+        """What the loops would make of the data: jitter in time and phase, and the level unit's wander with what a bend is not told of."""
+        others = self.taps.copy()
+        for rail in range(self.scheme.rails):
+            others[rail, self.own(rail)] = 0.0
+        energy = float(self.shares @ np.square(self.scheme.rail_levels))
+        bent = np.zeros(self.scheme.rails) if self.bend is None else self.bend.variance / self.cursors**2
+        beside = energy * np.sum(others**2, axis=1) + bent
+        mean = float(beside.mean())
+        return self.answers.timing * mean, self.answers.turn * mean, self.answers.level * beside + _UNTOLD * bent
+
+    def answered(self) -> tuple[float, float, NDArray[np.float64]]:
+        """What of ``common``, ``turn`` and ``noise`` comes with the data."""
+        timing, turn, level = self._disturbed()
+        return min(self.common, timing), min(self.turn, turn), np.minimum(self.noise, level)
+
+    def _without_answers(self, less: "LinkModel") -> "LinkModel":
+        """``less``, which is this link without a cause, also without what came with that."""
+        had, still = self._disturbed(), less._disturbed()
+        kept = [np.minimum(now / np.maximum(before, 1e-18), 1.0) for now, before in zip(still, had, strict=True)]
+        common, turn, level = self.answered()
+        gone = level * (1.0 - kept[2])
+        return replace(
+            less,
+            common=less.common - common * float(1.0 - kept[0]),
+            turn=less.turn - turn * float(1.0 - kept[1]),
+            additive=np.maximum(less.additive - gone, 0.0),
+            noise=np.maximum(less.noise - gone, 0.0),
+        )
+
     def without_isi(self) -> "LinkModel":
         """Every symbol by itself."""
         places = np.arange(self.scheme.rails) * LAGS + CURSOR
         alone = np.zeros_like(self.taps)
         alone[:, places] = self.taps[:, places]
-        quiet = replace(
-            self, deviations=np.zeros_like(self.deviations), turn=self.turn - self.turn_by_isi, turn_by_isi=0.0
-        )
+        quiet = replace(self, deviations=np.zeros_like(self.deviations))
         if self.limiter is None:
-            return replace(quiet, taps=alone)
+            return self._without_answers(replace(quiet, taps=alone))
         matrix = (self.taps * self.cursors[:, None])[:, places]
-        return quiet._meeting(alone, self.limiter.pulses(matrix))
+        return self._without_answers(quiet._meeting(alone, self.limiter.pulses(matrix)))
 
     def without_random(self) -> "LinkModel":
         """No noise, no tone, no jitter but what other causes make."""
         nothing = np.zeros_like(self.additive)
-        uneven = np.zeros_like(self.uneven)
+        common, turn, level = self.answered()
         return replace(
-            self, additive=nothing, noise=nothing, tone=nothing, uneven=uneven, common=0.0, turn=self.turn_by_isi
+            self,
+            additive=level,
+            noise=level,
+            tone=nothing,
+            uneven=np.zeros_like(self.uneven),
+            common=common,
+            turn=turn,
         )
 
     def without_tone(self) -> "LinkModel":
@@ -192,16 +241,32 @@ class LinkModel:
     def without_imbalance(self) -> "LinkModel":
         """Rails of the same gain, a quarter turn apart."""
         places = np.arange(self.scheme.rails) * LAGS + CURSOR
-        apart = self.taps.copy()
-        across = ~np.eye(self.scheme.rails, dtype=bool)
-        for rail in range(self.scheme.rails):
-            apart[rail, places[across[rail]]] = 0.0
-        even = replace(self, additive=self.additive * self.gains**2, tone=self.tone * self.gains**2)
+        met = self.taps * self.gains[:, None]
+        mixed = met[:, places]
+        # rails that were mixed keep their power
+        unit = float(np.linalg.norm(mixed)) / math.sqrt(2.0)
+        undo = np.linalg.inv(mixed)
+        sent = _unmixed(met, undo, first=True)
+        at_first = _widely(sent) <= _widely(_unmixed(met, undo, first=False))
+        taps, late, early = (
+            _unmixed(part * self.gains[:, None], undo, first=at_first) for part in (self.taps, self.late, self.early)
+        )
+        scale = np.square(self.gains / unit)
+        even = replace(
+            self,
+            late=late,
+            early=early,
+            additive=self.additive * scale,
+            noise=self.noise * scale,
+            tone=self.tone * scale,
+            gains=np.ones_like(self.gains),
+        )
         if self.limiter is None:
-            return replace(even, taps=apart)
-        matrix = (self.taps * self.cursors[:, None])[:, places]
-        crossed = self.limiter.pulses(np.where(across, matrix, 0.0))
-        return even._meeting(apart, None if crossed is None else self.limiter.raw - crossed)
+            return self._without_answers(replace(even, taps=taps))
+        mixed = (self.taps * self.cursors[:, None])[:, places]
+        raw = _unmixed(self.limiter.raw, np.linalg.inv(mixed), first=at_first)
+        raw = raw * float(np.linalg.norm(mixed)) / math.sqrt(2.0)
+        return self._without_answers(even._meeting(taps, raw))
 
     def _meeting(self, taps: NDArray[np.float64], raw: NDArray[np.float64] | None) -> "LinkModel":
         """The link of other ``taps``, whose wave ahead of the filter has the response ``raw``."""
@@ -223,12 +288,11 @@ class LinkModel:
             uneven=np.zeros_like(self.uneven),
         )
         if self.bend is None:
-            return even
-        # its linear part is known less well than the rest: no more is taken than makes less ISI
+            return self._without_answers(even)
         clean = self.taps - self.bend.taps / self.cursors[:, None]
         for rail in range(self.scheme.rails):
             clean[rail] /= max(float(clean[rail, self.own(rail)]), 0.2)
-        return replace(even, taps=np.where(np.abs(clean) < np.abs(self.taps), clean, self.taps))
+        return self._without_answers(replace(even, taps=clean))
 
     def with_even_levels(self) -> "LinkModel":
         """Levels uneven by no more than a limiter makes them."""
@@ -248,6 +312,8 @@ def link_model(
     split: Split | None,
     limiter: Limiter | None,
     bend: Bend | None,
+    symbols: int,
+    timing_bandwidth: float,
     carrier_bandwidth: float,
 ) -> LinkModel:
     """The link at ``ui`` from its pattern response.
@@ -255,7 +321,7 @@ def link_model(
     ``shares`` ``(levels,)``: how often each level is sent; ``levels`` ``(rails, levels)`` and ``noise`` ``(rails,)``, all that no linear
     response explains, in level units; ``uneven`` ``(rails, levels)`` what a level has of it beyond the others; ``units`` ``(rails,)``:
     one level unit of each rail in the signal's own unit; ``bend``: what ``limiter`` does, None: to be told of this link;
-    ``carrier_bandwidth``: BnT of the loop, 0 where there is none.
+    ``symbols`` there are; ``timing_bandwidth`` and ``carrier_bandwidth``: BnT of the loops, 0 where there is none.
     """
     rails = scheme.rails
     model = pattern.model(ui)
@@ -281,16 +347,38 @@ def link_model(
         shared = split.timing * common / max(common + split.single, 1e-18)
         additive = np.maximum(noise * (1.0 - (shared + split.phase) / random) - tone, 0.01 * noise)
         plain = np.clip(noise * (1.0 - (split.timing + split.phase) / random) - tone, 0.0, additive)
-    others = taps.copy()
-    places = np.arange(rails) * LAGS + CURSOR
-    others[:, places] = 0.0
     energy = float(shares @ np.square(scheme.rail_levels))
-    # a decision-directed loop averages the error across the carrier, and that of ISI is as good as white
-    answered = 2.0 * carrier_bandwidth * float(np.mean(np.sum(others**2, axis=1))) * energy / scheme.symbol_energy()
+    # decision-directed loops average the error that they see, and that of ISI is as good as white
+    steepness = energy * float(np.sum(np.square(late)))
+    answers = Answers(
+        timing=_PATTERNS_LEFT * 2.0 * timing_bandwidth / max(steepness, 1e-9),
+        turn=2.0 * carrier_bandwidth / scheme.symbol_energy(),
+        level=_unit_wander(symbols),
+    )
     return LinkModel(
-        scheme, shares, levels, compressed, taps, late, early, additive, plain, tone, common, turn, min(answered, turn), deviations,
+        scheme, shares, levels, compressed, taps, late, early, additive, plain, tone, common, turn, answers, deviations,
         uneven, gains / np.exp(np.mean(np.log(gains))), cursors, limiter, bend,
     )  # fmt: skip
+
+
+def _unit_wander(symbols: int) -> float:
+    """Variance of gain and middle of the level unit, both averages over all symbols from the first on, over that of a sample."""
+    first, most = Tracker.UNIT_FIRST, Tracker.UNIT_SYMBOLS
+    n = min(max(symbols, first), most)
+    return 2.0 * (1.0 + math.log(n / first)) / n
+
+
+def _unmixed(response: NDArray[np.float64], undo: NDArray[np.float64], *, first: bool) -> NDArray[np.float64]:
+    """A response ``(rails, rails * lags)`` or ``(rails, rails, n)`` with a mixture of the rails undone: ahead of the rest or behind it."""
+    each = response.reshape(response.shape[0], response.shape[0], -1)
+    clean = np.einsum("rsl,st->rtl" if first else "rtl,sr->stl", each, undo)
+    return np.asarray(clean.reshape(response.shape))
+
+
+def _widely(response: NDArray[np.float64]) -> float:
+    """Energy of what a response ``(2, 2 * lags)`` does to the conjugate of its symbols, which only an imbalance makes."""
+    each = response.reshape(2, 2, -1)
+    return float(np.sum((each[0, 0] - each[1, 1]) ** 2 + (each[0, 1] + each[1, 0]) ** 2))
 
 
 def _level_means(deviations: NDArray[np.float64], scheme: Scheme) -> NDArray[np.float64]:
@@ -368,11 +456,11 @@ def budget_of(model: LinkModel, split: Split | None, tail: float, opening_pct: f
     whole = model.opening(tail)
     scheme = model.scheme
     random = model.without_random().opening(tail) - whole
-    shares = random_shares(split, model.turn_by_isi)
+    shares = random_shares(split, model)
     timing, phase = random * shares[0], random * shares[1]
     isi = model.without_isi().opening(tail) - whole
     levels = model.with_even_levels().opening(tail) - whole if scheme.levels > 2 else 0.0
-    iq = model.without_imbalance().opening(tail) - whole if scheme.rails == 2 else None
+    iq = model.without_imbalance().opening(tail) - whole if scheme.rails == 2 and not scheme.stagger else None
     bent = model.bend is not None or not np.allclose(model.compressed, scheme.rail_levels)
     clipping = model.without_clipping().opening(tail) - whole if bent else 0.0
     parts = Budget(
@@ -383,16 +471,18 @@ def budget_of(model: LinkModel, split: Split | None, tail: float, opening_pct: f
     return replace(parts, unexplained_pct=100.0 - opening_pct - sum(known))
 
 
-def random_shares(split: Split | None, turn_by_isi: float) -> tuple[float, float]:
+def random_shares(split: Split | None, model: LinkModel) -> tuple[float, float]:
     """Of all that is random, the share of timing jitter and that of phase jitter, on the rail that has more of it.
 
-    ``turn_by_isi``: variance of phase jitter that has another cause.
+    What loops make of the data is none of them.
     """
     if split is None:
         return 0.0, 0.0
     rail = int(np.argmax(split.random))
-    caused = float(split.phase[rail]) * min(turn_by_isi / max(split.turn, 1e-18), 1.0)
-    total = max(float(split.random[rail]) - caused, 1e-18)
-    timing, phase = float(split.timing[rail]) / total, (float(split.phase[rail]) - caused) / total
-    scale = 1.0 / max(timing + phase, 1.0)
+    common, turn, level = model.answered()
+    timing = float(split.timing[rail]) * (1.0 - min(common / max(split.common + split.single, 1e-18), 1.0))
+    phase = float(split.phase[rail]) * (1.0 - min(turn / max(split.turn, 1e-18), 1.0))
+    answered = float(split.timing[rail] + split.phase[rail]) - timing - phase
+    total = max(float(split.random[rail]) - answered - float(level[rail]), 1e-18)
+    scale = 1.0 / max(timing + phase, total)
     return timing * scale, phase * scale

@@ -221,6 +221,7 @@ class Chain:
             self._filter,
             self.options.carrier_bandwidth if scheme.kind == "carrier" else 0.0,
             self.link.pulse.number if self.link.pulse.family == "rrc" else None,
+            self.options.timing_bandwidth,
         )
 
     # -- one chunk -----------------------------------------------------------------------------------------------------

@@ -89,13 +89,21 @@ def rise_time(sums: EyeSums) -> float | None:
     times = []
     for left, right, sign in ((0, 1, 1.0), (1, 0, -1.0)):
         trace = sign * (pairs[:, left, right] @ centres) / pairs[:, left, right].sum(axis=1)
-        low, high = trace.min(), trace.max()
-        at = []
-        for share in (0.2, 0.8):
-            level = low + share * (high - low)
-            index = int(np.argmax(trace > level))
-            if index == 0:
-                return None
-            at.append(index - 1 + (level - trace[index - 1]) / (trace[index] - trace[index - 1]))
-        times.append((at[1] - at[0]) / COLUMNS)
+        time = rise_of(trace)
+        if time is None:
+            return None
+        times.append(time)
     return float(np.mean(times))
+
+
+def rise_of(trace: NDArray[np.float64]) -> float | None:
+    """From 20 to 80 % of a rising transition that takes one symbol's evenly spaced points ``(n,)``, in UI."""
+    low, high = trace.min(), trace.max()
+    at = []
+    for share in (0.2, 0.8):
+        level = low + share * (high - low)
+        index = int(np.argmax(trace > level))
+        if index == 0:
+            return None
+        at.append(index - 1 + (level - trace[index - 1]) / (trace[index] - trace[index - 1]))
+    return float((at[1] - at[0]) / trace.size)

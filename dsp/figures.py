@@ -1,6 +1,7 @@
 """From the sums of a window to its reading. Definitions stand beside the code that computes them."""
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Any
@@ -9,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from dsp.budget import LinkModel, budget_of, link_model
-from dsp.crossings import crossings, rise_time
+from dsp.crossings import crossings, rise_of, rise_time
 from dsp.diagnosis import Constellation, Diagnosis, JitterSplit
 from dsp.equaliser import Equalisers
 from dsp.error_rate import Decisions, over_time, phase_error_rate
@@ -19,13 +20,16 @@ from dsp.jitter import periodic_line, sample_response, split_jitter
 from dsp.limiter import RATE, Bend, Limiter, compression
 from dsp.mixture import Mixture, Spread, fit_mixture, spread, tail_reach
 from dsp.openings import (
+    Falls,
     between,
     corner,
+    falls_of,
     modelled_openings,
     opening_curves,
     peak,
     plateau,
     slope_and_tolerance,
+    tail_errors,
     vertex,
     width,
 )
@@ -40,6 +44,8 @@ from dsp.verdict import Evidence, sentences
 TAIL = 1e-3  # the share of a level's traces that the opening leaves outside
 FULL_CLASS = 10.0 / TAIL  # symbols a level needs for its tail to be counted rather than modelled
 LEAST_SYMBOLS = 100
+_EARLY_LATE = ("timing_tolerance_early_ui", "timing_tolerance_late_ui")  # names of both ends' estimates
+_CREST = 2.0  # columns between which a crest is looked for once more
 _DECISIONS_RIGHT = 2e-4  # bit error rate below which what decisions hide does not count
 _TAIL_WHOLE = 5e-5  # and below which it does not even bend the tail of a level
 _QUANTILE_SPREAD = 1.0 / 0.00337  # 1 / the normal density at its TAIL quantile, for the standard error of that quantile
@@ -52,7 +58,7 @@ class Context:
     ``sps_ratio`` is the loop's nominal symbol period over the link's; ``offset_ui`` lies from the loop's instant to the decision
     instant; ``late_bias_ui`` is the timing loop's own known lateness; ``carrier_base_hz`` what was taken out before the loops;
     ``receive_filter`` the matched filter at `dsp.limiter.RATE` points a symbol, None where no linear one leads to the samples;
-    ``carrier_bandwidth`` BnT of the carrier loop, 0 where there is none; ``roll_off`` that of the receive filter where it is a root
+    ``carrier_bandwidth`` and ``timing_bandwidth`` BnT of the loops, 0 where there is none; ``roll_off`` that of the receive filter where it is a root
     raised cosine.
     """
 
@@ -66,6 +72,7 @@ class Context:
     receive_filter: NDArray[np.float64] | None = None
     carrier_bandwidth: float = 0.0
     roll_off: float | None = None
+    timing_bandwidth: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -132,6 +139,10 @@ class Figures:
             if like._mixtures is not None:
                 self._fit_mixtures()
             self._best, self._corner = like._best, like._corner
+            if self._corner is not None:
+                self._corner = self._corner_near(self._corner)
+            elif self._pattern.smooth:
+                self._best += self._crest(self._best)
             return
         errors = self._rough_error_rate()
         self._tails_counted = self._drawn >= FULL_CLASS and errors < _TAIL_WHOLE
@@ -275,7 +286,20 @@ class Figures:
             return start + first + thin + vertex(-squares, thin), sharp
         return start + first + 0.5 * (left + right), sharp
 
-    def _course(self, columns: range) -> NDArray[np.float64]:
+    def _crest(self, near: float) -> float:
+        """How far from the column ``near`` a smooth wave's opening is greatest, by the pattern model."""
+        return _CREST * vertex(self._course([near - _CREST, near, near + _CREST]), 1)
+
+    def _corner_near(self, near: float) -> float:
+        """The corner about the column ``near``, by the pattern model; there itself if the model shows none."""
+        start = round(near) - 7
+        columns = range(start, start + 15)
+        smooth = self._sums.phases < COLUMNS
+        section = self._course(columns) if smooth else np.asarray([self._worst_case(_ui(c)) for c in columns])
+        found = corner(section, 7)
+        return near if found is None else start + found
+
+    def _course(self, columns: Sequence[float]) -> NDArray[np.float64]:
         """The opening's course over ``columns`` of a smooth wave, per cent, by the pattern model: near enough to find its peak."""
         shares = self._counts.sum(axis=0) / self._counts.sum()
         models = [self._pattern.model(_ui(column)) for column in columns]
@@ -467,6 +491,7 @@ class Figures:
             noise=noise / self._worth(ui) ** 2,
             uneven=np.asarray([self._uneven_noise(rail) for rail in range(self._scheme.rails)]) / self._worth(ui)[:, None] ** 2,
             units=units, split=self._split, limiter=self._limiter, bend=self._met_bend,
+            symbols=self._sums.symbols, timing_bandwidth=self._context.timing_bandwidth,
             carrier_bandwidth=self._context.carrier_bandwidth,
         )  # fmt: skip
 
@@ -489,22 +514,13 @@ class Figures:
         slope, tolerance = slope_and_tolerance(self._curves.min(axis=(0, 1)), self._best, opening)
         eyes = self._eyes()
         widths = [eye.width_ui for eye in eyes if eye.width_ui is not None]
-        periodic_ui, periodic_hz = self._periodic_jitter()
-        crossing = crossings(self._sums)
-        best = _ui(self._best if self._corner is None else self._corner)
         return Reading(
             symbols=self._sums.symbols,
-            best_instant_ui=self._loop_ui(best),
             eyes=eyes,
             width_ui=min(widths) if len(widths) == len(eyes) else None,
             timing_slope_pct_per_ui=slope,
             timing_tolerance_ui=tolerance,
-            crossing_pattern_pp_ui=crossing.pattern_pp,
-            dcd_ui=crossing.dcd,
-            level_linearity=self._linearity(),
             rise_20_80_ui=rise_time(self._sums),
-            periodic_jitter_ui=periodic_ui,
-            periodic_jitter_hz=periodic_hz,
             **self._numbers,
         )
 
@@ -540,6 +556,7 @@ class Figures:
         clock_ppm, jitter = self._clock()
         carrier, phase_rms = self._carrier()
         iq_gain, iq_skew = self._iq(model)
+        periodic_ui, periodic_hz = self._periodic_jitter()
         return {
             "opening_pct": opening,
             "closure_db": 20 * math.log10(100.0 / opening) if opening > 0 else None,
@@ -549,6 +566,12 @@ class Figures:
             "level_rms_pct": self._thickness_pct(best),
             "crossing_rms_ui": crossing.rms,
             "crossing_pp_ui": crossing.pp,
+            "crossing_pattern_pp_ui": crossing.pattern_pp,
+            "dcd_ui": crossing.dcd,
+            "level_linearity": self._linearity(),
+            "periodic_jitter_ui": periodic_ui,
+            "periodic_jitter_hz": periodic_hz,
+            "best_instant_ui": self._loop_ui(_ui(self._best if self._corner is None else self._corner)),
             "crossing_random_rms_ui": crossing.random_rms,
             "q": self._q(best),
             "snr_db": snr if mer is not None else None,
@@ -575,8 +598,51 @@ class Figures:
         if not all(figures.enough for figures in without):
             return {}
         whole = Figures(self._sums.small(), self._context, like=self)
-        found = jackknife(whole._numbers, [figures._numbers for figures in without], [part.symbols for part in parts])
-        return {key: estimate.about(self._numbers[key]) for key, estimate in found.items()}
+        falls = falls_of(self._curves.min(axis=(0, 1)), self._best)
+        first = None if falls is None else whole._course(falls.places().tolist())
+        numbers = [figures._smooth_numbers(falls, first, whole._best) for figures in (whole, *without)]
+        found = jackknife(numbers[0], numbers[1:], [part.symbols for part in parts])
+        if falls is not None:
+            found = self._with_counts(found, falls)
+        reading = self._short()
+        known = {key: getattr(reading, key) for key in found if key not in _EARLY_LATE}
+        if reading.timing_tolerance_ui is not None:
+            ends = zip(_EARLY_LATE, reading.timing_tolerance_ui, strict=True)
+            known |= {key: value for key, value in ends if key in found}
+        # what does not move at all is held by a plateau, of whose ends small sums do not tell
+        return {key: found[key].about(value) for key, value in known.items() if value is not None and found[key].error > 0}
+
+    def _smooth_numbers(
+        self, falls: Falls | None, first: NDArray[np.float64] | None, best: float
+    ) -> dict[str, float | None]:
+        """The figures that small sums tell, and those read off the opening's curve by how it changes at its ``falls``.
+
+        ``first``: the curve there by the pattern model of all symbols, whose ``best`` instant it is.
+        """
+        numbers = self._numbers
+        if self._sums.scheme.levels == 2 and self._sums.scheme.kind != "carrier":
+            numbers = numbers | {"rise_20_80_ui": rise_of(self._pattern.rise())}
+        if falls is None or first is None:
+            return numbers
+        return numbers | falls.figures(self._course(falls.places().tolist()) - first, self._best - best)
+
+    def _with_counts(self, found: dict[str, Estimate], falls: Falls) -> dict[str, Estimate]:
+        """What is read off the curve as counted, with the chance of the counts in it."""
+        places = falls.places()
+        chance = np.zeros(places.size)
+        for i, place in enumerate(places[1:].tolist(), 1):
+            column = min(max(round(place), 0), 2 * COLUMNS - 1)
+            here = self._histogram[:, :, column : column + 1]
+            errors = tail_errors(here, self._sums.rows, self._gain, self._spacing, TAIL)[:, :, 0]
+            chance[i] = errors.ravel()[int(np.argmin(self._curves[:, :, column]))]
+        still = falls.figures(np.zeros(places.size), 0.0)
+        moved = [falls.figures(row, 0.0) for row in np.diag(chance)]
+        for key, value in still.items():
+            if key in found and value is not None:
+                others = [one[key] for one in moved]
+                variance = sum((other - value) ** 2 for other in others if other is not None)
+                found[key] = found[key].with_more(variance)
+        return found
 
     def interval(self, key: str) -> tuple[float, float] | None:
         """The 95 % interval of the figure of that name; None where it cannot be told."""

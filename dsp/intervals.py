@@ -24,6 +24,15 @@ class Estimate:
         """The same error about a value that was found in another way."""
         return self if value is None else replace(self, value=float(value))
 
+    def with_more(self, variance: float) -> "Estimate":
+        """With the variance of something else beside, which is known well."""
+        total = self.error**2 + variance
+        if variance <= 0.0:
+            return self
+        # Satterthwaite's degrees of freedom; see `difference`
+        freedom = min(self.freedom * (total / self.error**2) ** 2, 1e6) if self.error > 0.0 else 1e6
+        return replace(self, error=math.sqrt(total), freedom=freedom)
+
     def interval(self) -> tuple[float, float]:
         """The 95 % interval, by Student's t."""
         reach = float(stdtrit(self.freedom, 0.975)) * self.error

@@ -1,7 +1,7 @@
 """What a limiter or another bend of the amplitude, ahead of the receive filter, does to the samples that are decided.
 
-The wave ahead of the filter is put together again from the decisions and the pattern response; powers of it, behind the filter, are
-what the linear response's residual is searched for.
+The wave ahead of the filter is put together again from the decisions and the pattern response; what of it lies beyond some amplitudes
+is, behind the filter, what the linear response's residual is searched for.
 """
 
 import math
@@ -22,6 +22,8 @@ _RIDGE = 1e-3  # of the filter's greatest power gain, below which what it took a
 _LEAST_SHARE = (
     0.03  # of what is left over, below which a bend is not worth telling of unless it stands out now and then
 )
+_KNOTS = np.linspace(0.35, 0.95, 6)  # amplitudes at which the bend may change, of one that the wave rarely exceeds
+_RARELY = 0.001
 _EDGES = np.concatenate(([0.0], 0.0005 * 2.0 ** np.arange(7), np.arange(0.0625, 0.5, 0.0625)))
 _EDGES = np.concatenate((_EDGES, [0.5], 1.0 - _EDGES[::-1]))
 POINT_SHARES = np.diff(_EDGES)  # of the places that stand for the spread of a level: finer towards either end
@@ -34,7 +36,7 @@ class Bend:
     Attributes
     ----------
     taps
-        The part of it that a linear response takes in, ``(rails, rails * lags)``.
+        The part of it that a linear response takes in, ``(rails, rails * lags)``, as far as chance leaves it known.
     means, slopes
         By rail and level, ``(rails, levels)``: the mean of the rest, and how it changes with the ISI met.
     points
@@ -107,11 +109,11 @@ class Limiter:
         self._gram = gram + np.eye(len(gram)) * 1e-6 * np.trace(gram) / len(gram)
         wave = np.concatenate([[wave[0, HALO:-HALO] for wave in stretch.waves] for stretch in kept], axis=1)
         self.raw = raw_response(response, matched)
-        reach = float(np.abs(self.raw).sum(axis=(1, 2)).max()) * max(scheme.rail_levels)
-        self._scale = 2.5 / max(reach, 1e-9)
+        ahead = self._ahead(self.raw)
+        self._tops = tuple(float(np.quantile(np.abs(part), 1.0 - _RARELY)) for part in (ahead.real, ahead))
         weights, rest = self._linear(np.concatenate((wave, self._features(self.raw))))
         error, free = rest[:rails], rest[rails:]
-        self._weights = _fit(error, free)
+        self._weights, inverse = _fit(error, free)
         explained = self._weighted(free)
         self._met = self._weighted(weights[:, rails:].T)[:, :-1], explained
         self._left = error - explained
@@ -121,6 +123,12 @@ class Limiter:
         rare = float(np.abs(explained).max()) > math.sqrt(noise)
         self.found = beyond > (0.0 if rare else _LEAST_SHARE * noise * error.size)
         self.rest = np.mean(self._left**2, axis=1)
+        linear = weights[:, rails:].T
+        if rails == 2:
+            linear = linear[: self._weights.size] + 1j * linear[self._weights.size :]
+        chance = float(np.einsum("fk,fg,gk->", linear.conj(), inverse.conj(), linear).real) * float(self.rest.sum())
+        size = float(np.sum(self._met[0] ** 2))
+        self.sure = max(1.0 - 2.0 * chance / max(size, 1e-18), 0.0)
 
     def residuals(self) -> list[Residual]:
         """What neither response nor bend explains, stretch by stretch."""
@@ -181,10 +189,10 @@ class Limiter:
                     some = np.sort(rest[half] if half.any() and spread > 1e-6 * here.sum() else rest)
                     points[rail, m, side] = np.interp(middles * (some.size - 1), np.arange(some.size), some)
                     points[rail, m, side, [0, -1]] = some[[0, -1]]
-        return Bend(linear, means, slopes, points, variance)
+        return Bend(linear * self.sure, means, slopes, points, variance)
 
-    def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
-        """Powers of the wave ahead of the filter, behind the filter: ``(features, n)``, of I/Q real over imaginary parts."""
+    def _ahead(self, raw: NDArray[np.float64]) -> NDArray[Any]:
+        """The wave ahead of the filter, `RATE` points a symbol, ``(n,)``, complex where there are two rails."""
         from scipy.signal import oaconvolve  # slow to import, and seldom needed
 
         rails, n = self._decided.shape
@@ -195,12 +203,17 @@ class Limiter:
             sum(oaconvolve(impulses[s], raw[r, s])[start : start + n * RATE] for s in range(rails))
             for r in range(rails)
         ]
-        wave = np.asarray(sent[0] + 1j * sent[1] if rails == 2 else sent[0]) * np.float32(self._scale)
-        bent = _powers(wave)
+        return np.asarray(sent[0] + 1j * sent[1] if rails == 2 else sent[0])
+
+    def _features(self, raw: NDArray[np.float64]) -> NDArray[np.float64]:
+        """The wave beyond each amplitude, behind the filter, ``(features, n)``, of I/Q real over imaginary parts."""
+        from scipy.signal import oaconvolve  # slow to import, and seldom needed
+
+        bent = _beyond(self._ahead(raw), *self._tops)
         if self._matched.size > 1:
             bent = oaconvolve(bent, self._matched[None, :].astype(np.float32), mode="same", axes=1)
         taken = bent[:, self._core * RATE]
-        return np.concatenate((taken.real, taken.imag)) if rails == 2 else np.asarray(taken)
+        return np.concatenate((taken.real, taken.imag)) if self._scheme.rails == 2 else np.asarray(taken)
 
     def _linear(self, waves: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Least-squares weights of the symbols for each wave ``(m, n)``, ``(k, m)``, and what they leave over, ``(m, n)``."""
@@ -217,23 +230,30 @@ class Limiter:
         return np.stack((bent.real, bent.imag))
 
 
-def _powers(v: NDArray[Any]) -> NDArray[Any]:
-    """Odd powers up to the seventh of a wave, ``(powers, n)``.
+def _beyond(wave: NDArray[Any], rail_top: float, top: float) -> NDArray[Any]:
+    """What of a wave ``(n,)`` lies beyond each of `_KNOTS` times a top, ``(features, n)``: any odd bend is a sum of such.
 
-    For I/Q all that a bend of each rail or of the envelope makes, however turned.
+    For I/Q of each rail by itself, as converters clip, and of the envelope, as amplifiers do.
     """
-    square = (v * np.conj(v)).real
-    fourth = square * square
-    own = [v * square, v * fourth, v * square * fourth]
-    if not np.iscomplexobj(v):
-        return np.asarray(own)
-    third, fifth = np.conj(v * v * v), v * v * v * v * v
-    back = [third, third * square, third * fourth]
-    return np.asarray([*own, *back, fifth, fifth * square, np.conj(v * v * fifth)])
+    if not np.iscomplexobj(wave):
+        return np.stack([np.sign(wave) * np.maximum(np.abs(wave) - knot * rail_top, 0.0) for knot in _KNOTS])
+    size = np.abs(wave)
+    unit = wave / np.maximum(size, 1e-9 * top)
+    rails = [
+        np.sign(wave.real) * np.maximum(np.abs(wave.real) - knot, 0.0)
+        + 1j * np.sign(wave.imag) * np.maximum(np.abs(wave.imag) - knot, 0.0)
+        for knot in _KNOTS * rail_top
+    ]
+    return np.stack([*rails, *(unit * np.maximum(size - knot, 0.0) for knot in _KNOTS * top)])
 
 
-def _fit(error: NDArray[np.float64], free: NDArray[np.float64]) -> NDArray[np.complex128]:
-    """Least-squares weights of features, complex ones as real over imaginary parts, for errors ``(rails, n)``."""
+def _fit(
+    error: NDArray[np.float64], free: NDArray[np.float64]
+) -> tuple[NDArray[np.complex128], NDArray[np.complex128]]:
+    """Least-squares weights of features, complex ones as real over imaginary parts, for errors ``(rails, n)``.
+
+    And what the errors' variance is multiplied with to give the weights', ``(features, features)``.
+    """
     if error.shape[0] == 2:
         half = free.shape[0] // 2
         basis, target = free[:half] + 1j * free[half:], error[0] + 1j * error[1]
@@ -241,8 +261,8 @@ def _fit(error: NDArray[np.float64], free: NDArray[np.float64]) -> NDArray[np.co
         basis, target = free.astype(np.complex128), error[0].astype(np.complex128)
     norm = np.sqrt(np.maximum(np.sum(np.abs(basis) ** 2, axis=1), 1e-300))
     gram = (basis.conj() @ basis.T) / np.outer(norm, norm)
-    weights = np.linalg.lstsq(gram, (basis.conj() @ target) / norm, rcond=1e-7)[0] / norm
-    return np.asarray(weights, dtype=np.complex128)
+    inverse = np.linalg.pinv(gram, rcond=1e-7, hermitian=True) / np.outer(norm, norm)
+    return np.asarray(inverse @ (basis.conj() @ target)), np.asarray(inverse)
 
 
 def compression(

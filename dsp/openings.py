@@ -1,6 +1,7 @@
 """The opening curve of an eye and what is read off it: best instant, width, slope, tolerance. Columns are of the class raster."""
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,6 +11,8 @@ from dsp.eye import COLUMNS, Rows
 from dsp.mixture import Spread
 
 Curve = NDArray[np.float64]
+_ONE_DB = 10 ** (-1 / 20)
+_BESIDE = 2.0  # columns on either side between which a curve's rate is taken
 
 
 def quantile(histogram: NDArray[np.int64], *shares: float) -> tuple[NDArray[np.float64], ...]:
@@ -127,7 +130,7 @@ def slope_and_tolerance(curve: Curve, best: float, opening: float) -> tuple[floa
         return None, None
     halves = [_fall(curve, best, 0.5 * top, step) for step in (-1, 1)]
     rates = [0.5 * top / distance for distance in halves if distance]
-    early, late = (_fall(curve, best, top * 10 ** (-1 / 20), step) for step in (-1, 1))
+    early, late = (_fall(curve, best, top * _ONE_DB, step) for step in (-1, 1))
     tolerance = (-early, late) if early is not None and late is not None else None
     return (max(rates) if rates else None), tolerance
 
@@ -144,3 +147,70 @@ def _fall(curve: Curve, best: float, level: float, step: int) -> float | None:
         before, value = float(at), here
         at += step
     return None
+
+
+@dataclass(frozen=True, slots=True)
+class Falls:
+    """Where an opening curve has fallen to nothing, to half and by 1 dB, early and late: what width, slope and tolerance hang on.
+
+    ``best`` in columns and ``top`` there; ``at`` ``(3, 2)`` columns and ``rate`` ``(3, 2)`` of the curve a column, NaN where it never
+    falls so far or lies wider than a symbol.
+    """
+
+    best: float
+    top: float
+    at: NDArray[np.float64]
+    rate: NDArray[np.float64]
+
+    def places(self) -> NDArray[np.float64]:
+        """Columns at which a change of the curve tells: the best, then ``at`` row by row, where there is none the best again, ``(7,)``."""
+        return np.concatenate(([self.best], np.where(np.isfinite(self.at), self.at, self.best).ravel()))
+
+    def figures(self, change: NDArray[np.float64], later: float) -> dict[str, float | None]:
+        """Width, slope and tolerance of a curve that lies higher by ``change`` ``(7,)`` at `places` and has its best ``later``."""
+        shares = np.asarray([[0.0], [0.5], [_ONE_DB]])
+        at = self.at + (shares * change[0] - change[1:].reshape(3, 2)) / self.rate
+        distance = np.abs(at - self.best - later) / COLUMNS
+        known = np.where(np.isfinite(self.at[1]), np.abs(self.at[1] - self.best), np.inf)
+        slope = 0.5 * (self.top + change[0]) / distance[1, int(np.argmin(known))]
+        values = {
+            "width_ui": distance[0].sum(),
+            "timing_slope_pct_per_ui": slope,
+            "timing_tolerance_early_ui": -distance[2, 0],
+            "timing_tolerance_late_ui": distance[2, 1],
+        }
+        return {key: float(value) if np.isfinite(value) else None for key, value in values.items()}
+
+
+def falls_of(curve: Curve, best: float) -> Falls | None:
+    """The falls of a curve about ``best``; None where it is closed there."""
+    top = float(between(curve, best))
+    if not top > 0:
+        return None
+    at, rate = np.full((3, 2), math.nan), np.full((3, 2), math.nan)
+    for row, share in enumerate((0.0, 0.5, _ONE_DB)):
+        for side, step in enumerate((-1, 1)):
+            far = _fall(curve, best, share * top, step)
+            if far is None:
+                continue
+            place = best + step * far * COLUMNS
+            before, after = between(curve, place - _BESIDE), between(curve, place + _BESIDE)
+            slope = float(after - before) / (2.0 * _BESIDE)
+            if slope * step < 0:
+                at[row, side], rate[row, side] = place, slope
+    if at[0, 1] - at[0, 0] > COLUMNS:
+        at[0] = math.nan
+    return Falls(best, top, at, rate)
+
+
+def tail_errors(histogram: NDArray[np.int64], rows: Rows, gain: Curve, spacing: Curve, tail: float) -> NDArray[np.float64]:
+    """Standard errors of `opening_curves` by the count of traces in the tails, in per cent of spacing, ``(rails, eyes, columns)``.
+
+    A quantile's error is that of its share over the density there, which its distance to a quantile further in tells. Source: H. A.
+    David, H. N. Nagaraja, Order Statistics, 3rd ed., sec. 10.2 (from memory).
+    """
+    outer_low, inner_low, inner_high, outer_high = quantile(histogram, tail, 4.0 * tail, 1.0 - 4.0 * tail, 1.0 - tail)
+    met = np.sqrt(np.maximum(tail * histogram.sum(axis=-1), 1.0)) * math.log(4.0)
+    low, high = (inner_low - outer_low) / met, (outer_high - inner_high) / met
+    error = np.hypot(low[:, 1:], high[:, :-1]) / rows.scale / gain[:, None, None]
+    return np.asarray(100.0 * error / spacing[None, :, None])

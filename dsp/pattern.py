@@ -84,6 +84,7 @@ class Pattern:
         )
         self._chance = 1.0 / (n * np.maximum(self._variance, 1e-9))  # variance of a tap over that of the residual
         self._common = sums.cross[:, :-1] / n - middle[:, None] * means[None, :, None]
+        self._covariance = sums.gram[:LAGS, :LAGS] / n - np.outer(means[:LAGS], means[:LAGS])
         self._total = sums.square / n - middle**2
 
     def model(self, ui: float) -> PatternModel:
@@ -117,6 +118,13 @@ class Pattern:
         times = np.arange(EARLIEST, LATEST + 1)[:, None] + np.arange(self._phases) / self._phases
         chance = float(np.mean(self._residual[rail]) * self._chance[rail])
         return times.ravel(), np.asarray(response.ravel()), chance
+
+    def rise(self) -> NDArray[np.float64]:
+        """The mean wave from a symbol of the first rail at -1 to the next at 1, other symbols as they came, ``(phases,)``."""
+        both = [CURSOR, CURSOR - 1]
+        square = self._covariance[np.ix_(both, both)]
+        weights = np.linalg.solve(square + np.eye(2) * 1e-9, self._common[0, both])
+        return np.asarray(weights[1] - weights[0])
 
     def slopes(self, ui: float) -> NDArray[np.float64]:
         """How fast the taps at ``ui`` change, per UI, shape ``(rails, rails, lags)``."""

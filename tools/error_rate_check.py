@@ -212,7 +212,7 @@ def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] 
         long = measured(case.spec(case.snr_db[0], LONG * symbols, 999_999))
         if long is None:
             continue
-        truth = long.reading(whole=False)
+        truth = {key: estimate.value for key, estimate in long.estimates.items()}
         held: dict[str, int] = {}
         told: dict[str, int] = {}
         values: dict[str, list[float]] = {}
@@ -226,7 +226,7 @@ def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] 
             for key, estimate in figures.estimates.items():
                 low, high = estimate.interval()
                 told[key] = told.get(key, 0) + 1
-                held[key] = held.get(key, 0) + (low <= getattr(truth, key) <= high)
+                held[key] = held.get(key, 0) + (low <= truth.get(key, math.nan) <= high)
                 values.setdefault(key, []).append(estimate.value)
                 widths.setdefault(key, []).append(high - low)
         for key, count in told.items():
@@ -235,7 +235,7 @@ def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] 
                 "figure": key,
                 "runs": count,
                 "held_pct": 100.0 * held[key] / count,
-                "truth": getattr(truth, key),
+                "truth": truth.get(key),
                 "mean": float(np.mean(values[key])),
                 "spread": float(np.std(values[key])),
                 "width": float(np.mean(widths[key])),
