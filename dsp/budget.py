@@ -16,7 +16,9 @@ from dsp.reading import Budget
 from dsp.residual import Split, pattern_around
 from dsp.tracking import Tracker
 
-_PATTERNS_LEFT = 0.1  # share of the data's error that a timing detector which cancels patterns still follows, as measured
+_PATTERNS_LEFT = (
+    0.1  # share of the data's error that a timing detector which cancels patterns still follows, as measured
+)
 _UNTOLD = 0.03  # of a bend's power, what the wave that is put together from decisions does not tell, as measured
 _TONE_POINTS = 24  # places that stand for a sinusoid's amplitudes
 
@@ -198,13 +200,12 @@ class LinkModel:
     def _without_answers(self, less: "LinkModel") -> "LinkModel":
         """``less``, which is this link without a cause, also without what came with that."""
         had, still = self._disturbed(), less._disturbed()
-        kept = [np.minimum(now / np.maximum(before, 1e-18), 1.0) for now, before in zip(still, had, strict=True)]
         common, turn, level = self.answered()
-        gone = level * (1.0 - kept[2])
+        gone = level * (1.0 - np.minimum(still[2] / np.maximum(had[2], 1e-18), 1.0))
         return replace(
             less,
-            common=less.common - common * float(1.0 - kept[0]),
-            turn=less.turn - turn * float(1.0 - kept[1]),
+            common=less.common - common * (1.0 - min(still[0] / max(had[0], 1e-18), 1.0)),
+            turn=less.turn - turn * (1.0 - min(still[1] / max(had[1], 1e-18), 1.0)),
             additive=np.maximum(less.additive - gone, 0.0),
             noise=np.maximum(less.noise - gone, 0.0),
         )
@@ -245,7 +246,7 @@ class LinkModel:
         mixed = met[:, places]
         # rails that were mixed keep their power
         unit = float(np.linalg.norm(mixed)) / math.sqrt(2.0)
-        undo = np.linalg.inv(mixed)
+        undo = np.asarray(np.linalg.inv(mixed), dtype=np.float64)
         sent = _unmixed(met, undo, first=True)
         at_first = _widely(sent) <= _widely(_unmixed(met, undo, first=False))
         taps, late, early = (
@@ -264,7 +265,7 @@ class LinkModel:
         if self.limiter is None:
             return self._without_answers(replace(even, taps=taps))
         mixed = (self.taps * self.cursors[:, None])[:, places]
-        raw = _unmixed(self.limiter.raw, np.linalg.inv(mixed), first=at_first)
+        raw = _unmixed(self.limiter.raw, np.asarray(np.linalg.inv(mixed), dtype=np.float64), first=at_first)
         raw = raw * float(np.linalg.norm(mixed)) / math.sqrt(2.0)
         return self._without_answers(even._meeting(taps, raw))
 

@@ -2,11 +2,12 @@
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
 
-from dsp.eye import COLUMNS, CROSSING_BINS, EyeSums
+from dsp.eye import COLUMNS, CROSSING_AROUND, CROSSING_BINS, EyeSums
 from dsp.openings import quantile
 
 TAIL = 1e-3  # share of the crossings beyond either end of the peak-to-peak spread
@@ -51,13 +52,28 @@ def _of_rail(sums: EyeSums, rail: int) -> tuple[float, float, float | None, floa
     mean = float(groups[:, 1].sum()) / total
     rms = math.sqrt(max(float(groups[:, 2].sum()) / total - mean**2, 0.0))
     low, high = (float(edge) for edge in quantile(sums.crossing_bins[rail], TAIL, 1.0 - TAIL))
-    return rms, (high - low) / CROSSING_BINS, *_pattern_part(groups, mean)
+    return rms, (high - low) / CROSSING_BINS, *_pattern_part(groups, _slants(sums.scheme.levels))
 
 
-def _pattern_part(groups: NDArray[np.float64], mean: float) -> tuple[float | None, float | None]:
+@lru_cache(maxsize=4)
+def _slants(levels: int) -> NDArray[np.float64]:
+    """What moves a crossing to first order, for each group of symbols: direction, and each other symbol on the crossing's own scale.
+
+    ``(groups, 1 + symbols)``, the first of them a constant.
+    """
+    around = CROSSING_AROUND[levels]
+    symbols = 2.0 * np.indices((levels,) * len(around)).reshape(len(around), -1) - (levels - 1.0)
+    own = symbols[around.index(0)]
+    scale = np.where(own == 0.0, 1.0, own)
+    others = [row / scale for offset, row in zip(around, symbols, strict=True) if offset]
+    return np.stack([np.ones_like(own), np.sign(own), *others], axis=1)
+
+
+def _pattern_part(groups: NDArray[np.float64], slants: NDArray[np.float64]) -> tuple[float | None, float | None]:
     """Spread of the pattern groups' mean crossing times (0.1 to 99.9 % of the crossings), and the rms within groups.
 
-    Group means carry noise of their own: each is drawn towards the common mean by what an analysis of variance makes of it.
+    Group means carry noise of their own: each is drawn towards what is linear in its symbols by what an analysis of variance makes of
+    the rest.
     """
     some = groups[:, 0] >= 2
     n, total, square = groups[some].T
@@ -66,11 +82,13 @@ def _pattern_part(groups: NDArray[np.float64], mean: float) -> tuple[float | Non
         return None, None
     means = total / n
     within = max(float(np.sum(square - n * means**2)), 0.0) / (count - n.size)
-    between = 0.0
-    if n.size > 1:
+    x = slants[some]
+    line = x @ np.linalg.lstsq((x.T * n) @ x, (x.T * n) @ means, rcond=1e-9)[0]
+    between, free = 0.0, n.size - x.shape[1]
+    if free > 0:
         spare = (count - np.sum(n**2) / count) / (n.size - 1)
-        between = max((float(np.sum(n * (means - mean) ** 2)) / (n.size - 1) - within) / spare, 0.0)
-    shrunk = mean + (means - mean) * (between / (between + within / n) if between > 0 else 0.0)
+        between = max((float(np.sum(n * (means - line) ** 2)) / free - within) / spare, 0.0)
+    shrunk = line + (means - line) * (between / (between + within / n) if between > 0 else 0.0)
     order = np.argsort(shrunk)
     share = np.cumsum(n[order]) / count
     low = shrunk[order][int(np.searchsorted(share, TAIL))]
@@ -89,15 +107,15 @@ def rise_time(sums: EyeSums) -> float | None:
     times = []
     for left, right, sign in ((0, 1, 1.0), (1, 0, -1.0)):
         trace = sign * (pairs[:, left, right] @ centres) / pairs[:, left, right].sum(axis=1)
-        time = rise_of(trace)
+        time = rise_of(trace, COLUMNS)
         if time is None:
             return None
         times.append(time)
     return float(np.mean(times))
 
 
-def rise_of(trace: NDArray[np.float64]) -> float | None:
-    """From 20 to 80 % of a rising transition that takes one symbol's evenly spaced points ``(n,)``, in UI."""
+def rise_of(trace: NDArray[np.float64], points: int) -> float | None:
+    """From 20 to 80 % of a rising transition ``(n,)`` of so many points a symbol, in UI."""
     low, high = trace.min(), trace.max()
     at = []
     for share in (0.2, 0.8):
@@ -106,4 +124,4 @@ def rise_of(trace: NDArray[np.float64]) -> float | None:
         if index == 0:
             return None
         at.append(index - 1 + (level - trace[index - 1]) / (trace[index] - trace[index - 1]))
-    return float((at[1] - at[0]) / trace.size)
+    return float((at[1] - at[0]) / points)

@@ -34,7 +34,7 @@ MOST_GROUPS = 10  # stretches of a window whose small sums are kept apart, for t
 FEWEST_APART = 256  # symbols of such a stretch
 WINDOWS_APART = 8  # windows of a run that are kept apart in stretches; each later one is a stretch itself
 RUN = 256  # symbols in a row that are drawn, or left out, where not all are
-_AROUND = {2: (-5, -4, -3, -2, -1, 0, 2, 3), 3: (-2, -1, 0, 2), 4: (-2, -1, 0, 2), 8: (-1, 0, 2)}
+CROSSING_AROUND = {2: (-5, -4, -3, -2, -1, 0, 2, 3), 3: (-2, -1, 0, 2), 4: (-2, -1, 0, 2), 8: (-1, 0, 2)}
 
 
 @dataclass(frozen=True, slots=True)
@@ -132,7 +132,7 @@ class EyeSums:
         self.left = np.zeros((rails, COLUMNS if raster else 0, classes, self.rows.count), np.uint32)
         self.right = np.zeros_like(self.left) if not self.pair else None
         regressors = rails * LAGS + 1
-        around = _AROUND[levels]
+        around = CROSSING_AROUND[levels]
         (
             self._numbers,
             (
@@ -327,7 +327,7 @@ class EyeMeter:
         reached = int(1 + sps / LANES * (LANES - 1)) + TAPS <= SPAN
         if tables.band and phases == LANES and not scheme.stagger and reached:
             self._spread = spread_weights(tables.band, sps / LANES, LANES, SPAN)
-        self._around = np.asarray(_AROUND[scheme.levels], dtype=np.int32)
+        self._around = np.asarray(CROSSING_AROUND[scheme.levels], dtype=np.int32)
         self._count = 0  # symbols summed since the link was found, for the raster's every-n-th
         self._stretches = 0  # that there were since then
         self._windows = 0

@@ -28,7 +28,6 @@ from dsp.openings import (
     opening_curves,
     peak,
     plateau,
-    slope_and_tolerance,
     tail_errors,
     vertex,
     width,
@@ -45,6 +44,8 @@ TAIL = 1e-3  # the share of a level's traces that the opening leaves outside
 FULL_CLASS = 10.0 / TAIL  # symbols a level needs for its tail to be counted rather than modelled
 LEAST_SYMBOLS = 100
 _EARLY_LATE = ("timing_tolerance_early_ui", "timing_tolerance_late_ui")  # names of both ends' estimates
+_UNTOLD = 0.5  # of the counts' chance, by which the curve may be off where counts do not contradict the model
+_APART = 10.0  # columns beyond which a curve's counts are independent of those at the best instant
 _CREST = 2.0  # columns between which a crest is looked for once more
 _DECISIONS_RIGHT = 2e-4  # bit error rate below which what decisions hide does not count
 _TAIL_WHOLE = 5e-5  # and below which it does not even bend the tail of a level
@@ -58,8 +59,8 @@ class Context:
     ``sps_ratio`` is the loop's nominal symbol period over the link's; ``offset_ui`` lies from the loop's instant to the decision
     instant; ``late_bias_ui`` is the timing loop's own known lateness; ``carrier_base_hz`` what was taken out before the loops;
     ``receive_filter`` the matched filter at `dsp.limiter.RATE` points a symbol, None where no linear one leads to the samples;
-    ``carrier_bandwidth`` and ``timing_bandwidth`` BnT of the loops, 0 where there is none; ``roll_off`` that of the receive filter where it is a root
-    raised cosine.
+    ``carrier_bandwidth`` and ``timing_bandwidth`` BnT of the loops, 0 where there is none; ``roll_off`` that of the receive filter
+    where it is a root raised cosine.
     """
 
     symbol_rate_hz: float
@@ -95,6 +96,15 @@ def whole_figures(sums: EyeSums, context: Context, diagnose: bool) -> Whole:
         figures._limiter if figures.enough else None,
         figures.diagnosis() if diagnose else None,
     )
+
+
+@dataclass(frozen=True, slots=True)
+class _Settled:
+    """How far an opening curve lies higher at its falls than counted, ``(7,)`` and of each eye ``(rails, eyes, 7)``, and its chance."""
+
+    change: NDArray[np.float64]
+    each: NDArray[np.float64]
+    chance: NDArray[np.float64]
 
 
 class Figures:
@@ -376,6 +386,48 @@ class Figures:
         # the curve of few traces is too open by as much as their extremes fall short of the tail
         return curves + (self._openings - between(curves, self._best))[:, :, None]
 
+    @cached_property
+    def _falls(self) -> Falls | None:
+        """Where the least opening's curve falls off from the best instant."""
+        falls = falls_of(self._curves.min(axis=(0, 1)), self._best)
+        if falls is None or not self._pattern.smooth:
+            return falls
+        # few traces make a ragged curve: the model knows its slopes
+        beside = np.concatenate((falls.places()[1:] - _CREST, falls.places()[1:] + _CREST))
+        before, after = self._course(beside.tolist()).reshape(2, 3, 2)
+        rate = (after - before) / (2.0 * _CREST)
+        return replace(falls, rate=np.where(rate * falls.rate > 0, rate, falls.rate))
+
+    @cached_property
+    def _settled(self) -> _Settled:
+        """The curve at its falls, counted and modelled as `_openings` is: how much higher it lies than `_curves`."""
+        falls = self._falls
+        assert falls is not None
+        places = falls.places()
+        columns = np.clip(np.rint(places).astype(np.int64), 0, 2 * COLUMNS - 1)
+        chance = tail_errors(self._histogram[:, :, columns], self._sums.rows, self._gain, self._spacing, TAIL)
+        drawn = np.stack([between(self._curves, place) for place in places.tolist()], axis=2)
+        if not self._pattern.smooth:
+            least = np.argmin(drawn.reshape(-1, places.size), axis=0)
+            still = chance.reshape(-1, places.size)[least, np.arange(places.size)]
+            still[0] = 0.0
+            return _Settled(np.zeros(places.size), np.zeros_like(drawn), still)
+        modelled = np.stack(
+            [self._modelled(_ui(place), TAIL) * self._worth(_ui(place))[:, None] for place in places.tolist()], axis=2
+        )
+        modelled += self._openings[..., None] - modelled[..., :1]
+        kept = beyond_chance(drawn - modelled, chance**2)
+        settled = (modelled + kept).reshape(-1, places.size)
+        least = np.argmin(settled, axis=0)
+        every = np.arange(places.size)
+        # what counts cannot tell from the model may still be there; near the best instant both move alike
+        share = np.maximum(np.abs(kept) / np.maximum(np.abs(drawn - modelled), 1e-12), _UNTOLD)
+        share *= np.sqrt(np.minimum(np.abs(places - places[0]) / _APART, 1.0))
+        still = (share * chance).reshape(-1, places.size)[least, every]
+        change = settled[least, every] - drawn.min(axis=(0, 1))
+        change[0], still[0] = 0.0, 0.0
+        return _Settled(change, (modelled + kept) - drawn, still)
+
     def _scale(self) -> NDArray[np.float64]:
         """From level units of the decision instant to those of the best instant, shape ``(rails, 1)``."""
         scale = self._pattern.own(0.0) / np.maximum(self._pattern.own(_ui(self._best)), 1e-9)
@@ -511,15 +563,17 @@ class Figures:
         opening = self.opening_pct()
         if opening is None:
             return Reading(symbols=self._sums.symbols)
-        slope, tolerance = slope_and_tolerance(self._curves.min(axis=(0, 1)), self._best, opening)
         eyes = self._eyes()
         widths = [eye.width_ui for eye in eyes if eye.width_ui is not None]
+        falls = self._falls
+        read = {} if falls is None or opening <= 0 else falls.figures(self._settled.change, 0.0)
+        early, late = (read.get(key) for key in _EARLY_LATE)
         return Reading(
             symbols=self._sums.symbols,
             eyes=eyes,
             width_ui=min(widths) if len(widths) == len(eyes) else None,
-            timing_slope_pct_per_ui=slope,
-            timing_tolerance_ui=tolerance,
+            timing_slope_pct_per_ui=read.get("timing_slope_pct_per_ui"),
+            timing_tolerance_ui=None if early is None or late is None else (early, late),
             rise_20_80_ui=rise_time(self._sums),
             **self._numbers,
         )
@@ -567,7 +621,7 @@ class Figures:
             "crossing_rms_ui": crossing.rms,
             "crossing_pp_ui": crossing.pp,
             "crossing_pattern_pp_ui": crossing.pattern_pp,
-            "dcd_ui": crossing.dcd,
+            "dcd_ui": self._duty(crossing.dcd),
             "level_linearity": self._linearity(),
             "periodic_jitter_ui": periodic_ui,
             "periodic_jitter_hz": periodic_hz,
@@ -598,19 +652,36 @@ class Figures:
         if not all(figures.enough for figures in without):
             return {}
         whole = Figures(self._sums.small(), self._context, like=self)
-        falls = falls_of(self._curves.min(axis=(0, 1)), self._best)
+        falls = self._falls
         first = None if falls is None else whole._course(falls.places().tolist())
         numbers = [figures._smooth_numbers(falls, first, whole._best) for figures in (whole, *without)]
         found = jackknife(numbers[0], numbers[1:], [part.symbols for part in parts])
         if falls is not None:
             found = self._with_counts(found, falls)
+        self._without_vain(found)
         reading = self._short()
         known = {key: getattr(reading, key) for key in found if key not in _EARLY_LATE}
         if reading.timing_tolerance_ui is not None:
             ends = zip(_EARLY_LATE, reading.timing_tolerance_ui, strict=True)
             known |= {key: value for key, value in ends if key in found}
         # what does not move at all is held by a plateau, of whose ends small sums do not tell
-        return {key: found[key].about(value) for key, value in known.items() if value is not None and found[key].error > 0}
+        return {
+            key: found[key].about(value) for key, value in known.items() if value is not None and found[key].error > 0
+        }
+
+    def _duty(self, dcd: float | None) -> float | None:
+        """Duty-cycle distortion about the middle of the levels as they are: the tracked one lags behind."""
+        rise = rise_of(self._pattern.rise(), self._sums.phases) if dcd is not None else None
+        if dcd is None or rise is None:
+            return dcd
+        # what the middle is off moves rising and falling crossings apart, by the transition's mean slope of 1.2 level units a rise
+        return dcd - 2.0 * float(self._zero[0] / self._gain[0]) * rise / 1.2
+
+    def _without_vain(self, found: dict[str, Estimate]) -> None:
+        """Logarithms of what may as well be nothing have no error that can be told."""
+        if "opening_pct" in found and found["opening_pct"].interval()[0] <= 0.0:
+            for key in ("closure_db", "noise_margin_db"):
+                found.pop(key, None)
 
     def _smooth_numbers(
         self, falls: Falls | None, first: NDArray[np.float64] | None, best: float
@@ -621,21 +692,15 @@ class Figures:
         """
         numbers = self._numbers
         if self._sums.scheme.levels == 2 and self._sums.scheme.kind != "carrier":
-            numbers = numbers | {"rise_20_80_ui": rise_of(self._pattern.rise())}
+            numbers = numbers | {"rise_20_80_ui": rise_of(self._pattern.rise(), self._sums.phases)}
         if falls is None or first is None:
             return numbers
         return numbers | falls.figures(self._course(falls.places().tolist()) - first, self._best - best)
 
     def _with_counts(self, found: dict[str, Estimate], falls: Falls) -> dict[str, Estimate]:
-        """What is read off the curve as counted, with the chance of the counts in it."""
-        places = falls.places()
-        chance = np.zeros(places.size)
-        for i, place in enumerate(places[1:].tolist(), 1):
-            column = min(max(round(place), 0), 2 * COLUMNS - 1)
-            here = self._histogram[:, :, column : column + 1]
-            errors = tail_errors(here, self._sums.rows, self._gain, self._spacing, TAIL)[:, :, 0]
-            chance[i] = errors.ravel()[int(np.argmin(self._curves[:, :, column]))]
-        still = falls.figures(np.zeros(places.size), 0.0)
+        """What is read off the curve as far as it is counted, with the chance of the counts in it."""
+        chance = self._settled.chance
+        still = falls.figures(np.zeros(chance.size), 0.0)
         moved = [falls.figures(row, 0.0) for row in np.diag(chance)]
         for key, value in still.items():
             if key in found and value is not None:
@@ -719,7 +784,7 @@ class Figures:
         for rail in range(self._scheme.rails):
             for eye, spacing in enumerate(self._spacing):
                 opening = float(self._openings[rail, eye])
-                ends = width(self._curves[rail, eye], self._best) if opening > 0 else None
+                ends = self._ends(rail, eye) if opening > 0 else None
                 eyes.append(
                     Eye(
                         opening,
@@ -730,6 +795,14 @@ class Figures:
                     )
                 )
         return tuple(eyes)
+
+    def _ends(self, rail: int, eye: int) -> tuple[float, float] | None:
+        """Where one eye's curve falls to nothing, in UI about the decision instant."""
+        ends = width(self._curves[rail, eye], self._best)
+        if ends is None or self._falls is None or not np.isfinite(self._falls.at[0]).all():
+            return ends
+        early, late = -self._settled.each[rail, eye, 1:3] / self._falls.rate[0] / COLUMNS
+        return ends[0] + float(early), ends[1] + float(late)
 
     def _loop_ui(self, ui: float) -> float:
         """From UI about the decision instant to UI about the loop's instant, its known lateness taken out."""

@@ -121,20 +121,6 @@ def width(curve: Curve, best: float) -> tuple[float, float] | None:
     return (float(first) - COLUMNS) / COLUMNS, (float(last) - COLUMNS) / COLUMNS
 
 
-def slope_and_tolerance(curve: Curve, best: float, opening: float) -> tuple[float | None, tuple[float, float] | None]:
-    """Timing slope (per cent a UI, the steeper mean rate down to half the opening) and tolerance (UI, noise margin 1 dB down)."""
-    if opening <= 0:
-        return None, None
-    top = float(between(curve, best))
-    if not top > 0:
-        return None, None
-    halves = [_fall(curve, best, 0.5 * top, step) for step in (-1, 1)]
-    rates = [0.5 * top / distance for distance in halves if distance]
-    early, late = (_fall(curve, best, top * _ONE_DB, step) for step in (-1, 1))
-    tolerance = (-early, late) if early is not None and late is not None else None
-    return (max(rates) if rates else None), tolerance
-
-
 def _fall(curve: Curve, best: float, level: float, step: int) -> float | None:
     """Distance in UI from ``best`` to where the curve has fallen to ``level``, going by ``step``; None if it never does."""
     at = math.floor(best) if step < 0 else math.ceil(best)
@@ -152,6 +138,8 @@ def _fall(curve: Curve, best: float, level: float, step: int) -> float | None:
 @dataclass(frozen=True, slots=True)
 class Falls:
     """Where an opening curve has fallen to nothing, to half and by 1 dB, early and late: what width, slope and tolerance hang on.
+
+    Slope: per cent a UI, the steeper mean rate down to half the opening. Tolerance: UI, to where the noise margin is 1 dB down.
 
     ``best`` in columns and ``top`` there; ``at`` ``(3, 2)`` columns and ``rate`` ``(3, 2)`` of the curve a column, NaN where it never
     falls so far or lies wider than a symbol.
@@ -196,14 +184,17 @@ def falls_of(curve: Curve, best: float) -> Falls | None:
             place = best + step * far * COLUMNS
             before, after = between(curve, place - _BESIDE), between(curve, place + _BESIDE)
             slope = float(after - before) / (2.0 * _BESIDE)
-            if slope * step < 0:
-                at[row, side], rate[row, side] = place, slope
+            if not slope * step < 0:
+                slope = (share - 1.0) * top / (place - best)
+            at[row, side], rate[row, side] = place, slope
     if at[0, 1] - at[0, 0] > COLUMNS:
         at[0] = math.nan
     return Falls(best, top, at, rate)
 
 
-def tail_errors(histogram: NDArray[np.int64], rows: Rows, gain: Curve, spacing: Curve, tail: float) -> NDArray[np.float64]:
+def tail_errors(
+    histogram: NDArray[np.int64], rows: Rows, gain: Curve, spacing: Curve, tail: float
+) -> NDArray[np.float64]:
     """Standard errors of `opening_curves` by the count of traces in the tails, in per cent of spacing, ``(rails, eyes, columns)``.
 
     A quantile's error is that of its share over the density there, which its distance to a quantile further in tells. Source: H. A.

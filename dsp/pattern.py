@@ -120,10 +120,12 @@ class Pattern:
         return times.ravel(), np.asarray(response.ravel()), chance
 
     def rise(self) -> NDArray[np.float64]:
-        """The mean wave from a symbol of the first rail at -1 to the next at 1, other symbols as they came, ``(phases,)``."""
+        """The mean wave from a symbol of the first rail at -1 to the next at 1, other symbols as they came, ``(phases + 1,)``."""
         both = [CURSOR, CURSOR - 1]
         square = self._covariance[np.ix_(both, both)]
-        weights = np.linalg.solve(square + np.eye(2) * 1e-9, self._common[0, both])
+        # at the end stands the next symbol's own instant
+        right = np.concatenate((self._common[0, both], self._common[0, [CURSOR + 1, CURSOR], :1]), axis=1)
+        weights = np.linalg.solve(square + np.eye(2) * 1e-9, right)
         return np.asarray(weights[1] - weights[0])
 
     def slopes(self, ui: float) -> NDArray[np.float64]:

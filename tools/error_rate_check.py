@@ -15,7 +15,9 @@ from scipy.special import betaincinv
 
 from dsp.block import Block
 from dsp.chain import Chain, ChainOptions
+from dsp.eye import EyeSums
 from dsp.figures import Figures
+from dsp.intervals import Estimate
 from dsp.link import Link, find_scheme
 from dsp.pulses import Pulse
 from dsp.reading import Reading
@@ -191,6 +193,7 @@ COVERED = (
     (Case("two levels", "pam2", (18.0,) * 3, more={"echoes": ((1.0, 0.2),)}), 30000),
     (Case("jitter and phase noise", "16qam", (24.0,) * 3, more={"jitter_rms_ui": 0.02, "phase_noise_deg": 0.2}), 10000),
 )
+BLOCKS = 8
 LONG = 100  # runs' worth of symbols that the truth is taken from
 
 
@@ -204,6 +207,68 @@ def measured(spec: TransmitSpec) -> Figures | None:
     return None if chain.total is None else Figures(chain.total, chain.context())
 
 
+class _Tally:
+    """How often intervals held the truth, figure by figure."""
+
+    def __init__(self) -> None:
+        self._values: dict[str, list[float]] = {}
+        self._widths: dict[str, list[float]] = {}
+        self._held: dict[str, int] = {}
+        self._truth: dict[str, float] = {}
+
+    def take(self, estimates: dict[str, Estimate], truth: dict[str, float | None]) -> None:
+        """One run's estimates of the figures whose ``truth`` is known."""
+        for key, true in truth.items():
+            if true is None or key not in estimates:
+                continue
+            low, high = estimates[key].interval()
+            self._truth[key] = true
+            self._held[key] = self._held.get(key, 0) + (low <= true <= high)
+            self._values.setdefault(key, []).append(estimates[key].value)
+            self._widths.setdefault(key, []).append(high - low)
+
+    def rows(self, case: str) -> Iterator[dict[str, Any]]:
+        """A row a figure."""
+        for key, values in self._values.items():
+            yield {
+                "case": case,
+                "figure": key,
+                "runs": len(values),
+                "held_pct": 100.0 * self._held[key] / len(values),
+                "truth": self._truth[key],
+                "mean": float(np.mean(values)),
+                "spread": float(np.std(values)),
+                "width": float(np.mean(self._widths[key])),
+            }
+
+
+OF_THE_RUN = ("best_instant_ui", "rise_20_80_ui")  # figures against the instant that a run's own loop holds
+
+
+def windows(spec: TransmitSpec, symbols: int) -> tuple[list[dict[str, Estimate]], Reading]:
+    """Estimates of each window of a run, made of `BLOCKS` blocks as a watch makes them, and the reading of all of it."""
+    link = Link(find_scheme(spec.scheme), spec.sample_rate_hz, spec.symbol_rate_hz, spec.pulse)
+    blocks: list[EyeSums] = []
+    found: list[dict[str, Estimate]] = []
+
+    def take(sums: EyeSums) -> None:
+        blocks.append(sums)
+        if len(blocks) == BLOCKS:
+            window = EyeSums(sums.scheme, sums.phases)
+            for block in blocks:
+                window.merge(block)
+                window.keep_apart([block.small()])
+            found.append(Figures(window, chain.context()).estimates)
+            blocks.clear()
+
+    chain = Chain(link, complex_in=not spec.real, options=ChainOptions(window=symbols // BLOCKS), on_window=take)
+    for part in transmit_blocks(spec):
+        chain.push(Block(part.samples, part.start))
+    chain.finish()
+    assert chain.total is not None
+    return found, Figures(chain.total, chain.context()).reading(whole=False)
+
+
 def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] = ()) -> Iterator[dict[str, Any]]:
     """Share of the runs of each link whose interval held the truth, figure by figure."""
     for case, symbols in COVERED:
@@ -212,31 +277,16 @@ def coverage(runs: int, progress: Callable[[str], None], names: tuple[str, ...] 
         long = measured(case.spec(case.snr_db[0], LONG * symbols, 999_999))
         if long is None:
             continue
-        truth = {key: estimate.value for key, estimate in long.estimates.items()}
-        held: dict[str, int] = {}
-        told: dict[str, int] = {}
-        values: dict[str, list[float]] = {}
-        widths: dict[str, list[float]] = {}
+        truth = {key: estimate.value for key, estimate in long.estimates.items() if key not in OF_THE_RUN}
+        tally = _Tally()
         for seed in range(runs):
             if seed % 50 == 0:
                 progress(f"{case.name}: run {seed + 1} of {runs}")
             figures = measured(case.spec(case.snr_db[0], symbols, seed))
-            if figures is None:
-                continue
-            for key, estimate in figures.estimates.items():
-                low, high = estimate.interval()
-                told[key] = told.get(key, 0) + 1
-                held[key] = held.get(key, 0) + (low <= truth.get(key, math.nan) <= high)
-                values.setdefault(key, []).append(estimate.value)
-                widths.setdefault(key, []).append(high - low)
-        for key, count in told.items():
-            yield {
-                "case": case.name,
-                "figure": key,
-                "runs": count,
-                "held_pct": 100.0 * held[key] / count,
-                "truth": truth.get(key),
-                "mean": float(np.mean(values[key])),
-                "spread": float(np.std(values[key])),
-                "width": float(np.mean(widths[key])),
-            }
+            if figures is not None:
+                tally.take(figures.estimates, truth)
+        progress(f"{case.name}: windows of one run")
+        each, whole = windows(case.spec(case.snr_db[0], runs * symbols, 999_998), symbols)
+        for estimates in each:
+            tally.take(estimates, {key: getattr(whole, key) for key in OF_THE_RUN})
+        yield from tally.rows(case.name)
