@@ -72,7 +72,7 @@ class Diagnosis:
 
     ``over_time``: BER against the sampling instant, UI about the best one; ``over_threshold``: against the worst eye's
     threshold, level units. ``remarks``: sentences on second causes, at most two; the first sentence is the reading's verdict.
-    ``intervals``: 95 % ones of the reading's figures, by name.
+    ``intervals``: 95 % ones of the reading's figures, by name. ``opening_pct``: of this window, to set the others against.
     """
 
     response: Response | None = None
@@ -83,6 +83,7 @@ class Diagnosis:
     equalisers: tuple[EqualiserTrial, ...] = ()
     best_thresholds: tuple[float, ...] = ()
     fitting_roll_off: float | None = None
+    opening_pct: float | None = None
     opening_with_3db_more_pct: float | None = None
     tone_hz: float | None = None
     compression_db: float | None = None

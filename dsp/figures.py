@@ -740,6 +740,7 @@ class Figures:
             equalisers=self._equalisers.trials(),
             best_thresholds=() if circle else tuple(self._decisions.best_thresholds().ravel().tolist()),
             fitting_roll_off=self._fitting_roll_off(),
+            opening_pct=self.opening_pct(),
             opening_with_3db_more_pct=evidence.opening_with_3db_more_pct,
             constellation=Constellation(residual.constellation.copy(), residual.reach)
             if self._scheme.rails == 2

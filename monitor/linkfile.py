@@ -104,7 +104,12 @@ def read_link_file(path: Path) -> LinkFile:
         raise InputError(f"{where}: [link] must be a table")
     if not isinstance(alarms, list) or not all(isinstance(alarm, dict) for alarm in alarms):
         raise InputError(f"{where}: alarms must be tables; write each as [[alarm]]")
-    return LinkFile(_link_of(table, path, where), tuple(alarms))
+    link = _link_of(table, path, where)
+    try:
+        link.wanted()
+    except InputError as error:
+        raise InputError(f"{where}: {error}") from None
+    return LinkFile(link, tuple(alarms))
 
 
 def link_file_text(

@@ -61,7 +61,10 @@ class Asked:
 
     def __enter__(self) -> Self:
         if threading.current_thread() is threading.main_thread():
-            for number in (signal.SIGTERM, signal.SIGINT) if self._noted else (signal.SIGTERM,):
+            numbers = [signal.SIGTERM, signal.SIGINT] if self._noted else [signal.SIGTERM]
+            if hasattr(signal, "SIGHUP") and signal.getsignal(signal.SIGHUP) == signal.SIG_DFL:
+                numbers.append(signal.SIGHUP)  # who wants the watch to outlive the terminal has it ignored, or caught
+            for number in numbers:
                 self._before[number] = signal.signal(number, self._ask)
         return self
 

@@ -71,7 +71,7 @@ def remedies(reading: Reading, diagnosis: Diagnosis) -> list[Remedy]:
     trials = chosen_trials(reading, diagnosis)
     rows = [Remedy(equaliser_words(trial), trial.before_pct, trial.opening_pct) for trial in trials]
     if diagnosis.opening_with_3db_more_pct is not None:
-        rows.append(Remedy("3 dB more signal", reading.opening_pct, diagnosis.opening_with_3db_more_pct))
+        rows.append(Remedy("3 dB more signal", diagnosis.opening_pct, diagnosis.opening_with_3db_more_pct))
     if diagnosis.fitting_roll_off is not None:
         rows.append(Remedy(f"A matched filter of roll-off {plain(diagnosis.fitting_roll_off, 2)} would fit better"))
     if diagnosis.best_thresholds:

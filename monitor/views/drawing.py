@@ -463,7 +463,7 @@ def draw_budget(canvas: Canvas, box: Box, rows: Sequence[tuple[str, float]]) -> 
     theme = canvas.theme
     title = Box(box.x, box.y, box.width, canvas.px(22))
     canvas.write("What closes it", title, _TEXT, theme.ink, bold=True)
-    canvas.write("points of opening", title, _SMALL, theme.dim, align="right")
+    canvas.write("points of opening, at the target error rate", title, _SMALL, theme.dim, align="right")
     gap, line, bar_height = canvas.px(24), canvas.px(29), canvas.px(5)
     width = (box.width - gap) // 2
     half = (len(rows) + 1) // 2

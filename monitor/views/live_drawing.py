@@ -288,6 +288,8 @@ def _draw_small_figure(canvas: Canvas, box: Box, state: LiveState) -> None:
         end = canvas.write(f"{plain(opening, 1)} %", large, 42.0, theme.ink).right
     x = end + canvas.px(18)
     verdict, points, _ = change_lines(state)
+    if canvas.text_width(verdict, 15.0, bold=True) > box.right - x:
+        verdict = verdict.replace("significant ", "")
     words = [verdict, points] if verdict else ["eye closed"] if opening is not None and opening <= 0 else []
     line = canvas.px(21)
     for number, text in enumerate(words):

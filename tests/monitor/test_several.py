@@ -502,7 +502,7 @@ def test_the_table_of_several_links_has_a_column_for_the_link(tmp_path, capsys):
     assert {row.split(",")[0] for row in rows[1:]} == {"east", "west"}
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
+@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
 def test_a_wish_to_end_leaves_a_stop_line_of_every_link(tmp_path, number):
     journal = tmp_path / "w.jsonl"
     uris = [f"ipc://{tmp_path}/{name}" for name in ("a", "b")]

@@ -89,7 +89,7 @@ def test_it_ends_by_itself_after_the_time_asked_for_though_nobody_sends(tmp_path
     assert lines_of(journal)[-1]["why"] == "watched for 0.2 s"
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
+@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
 def test_a_wish_to_end_leaves_the_stop_line_and_130(tmp_path, number):
     journal = tmp_path / "w.jsonl"
     program = start_program(
