@@ -462,8 +462,11 @@ def draw_budget(canvas: Canvas, box: Box, rows: Sequence[tuple[str, float]]) -> 
     """What each cause takes from the opening, largest first, down two columns of bars; returns where it ends."""
     theme = canvas.theme
     title = Box(box.x, box.y, box.width, canvas.px(22))
-    canvas.write("What closes it", title, _TEXT, theme.ink, bold=True)
-    canvas.write("points of opening, at the target error rate", title, _SMALL, theme.dim, align="right")
+    end = canvas.write("What closes it", title, _TEXT, theme.ink, bold=True).right
+    unit = "points of opening, at the target error rate"
+    if end + canvas.px(12) + canvas.text_width(unit, _SMALL) > title.right:
+        unit = "points of opening"
+    canvas.write(unit, title, _SMALL, theme.dim, align="right")
     gap, line, bar_height = canvas.px(24), canvas.px(29), canvas.px(5)
     width = (box.width - gap) // 2
     half = (len(rows) + 1) // 2

@@ -75,6 +75,7 @@ def make_diagnosis(rails=2, *, seed=3):
         ),
         best_thresholds=(0.012,),
         fitting_roll_off=0.25,
+        opening_pct=41.2,
         opening_with_3db_more_pct=47.7,
         tone_hz=50.0,
         compression_db=0.42,
